@@ -1,0 +1,237 @@
+"""Customer ids as 64-bit keys: the same id gives the same key however and wherever it is stored.
+
+Whole numbers go through the finaliser of splitmix64, which no two numbers leave alike. Text goes by its UTF-8
+bytes, eight at a time: each word, offset by its place, goes through the same finaliser, and so does their
+sum together with the length. The key is no protection of the id: see the notes on privacy.
+"""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+import pyarrow as pa
+from numpy.typing import NDArray
+
+from journeys.errors import LogError
+from journeys.intake.arrays import indices_of, is_missing, is_text, numbers, plain, whole_numbers
+
+N_BUCKETS = 200
+_GOLDEN = 0x9E3779B97F4A7C15
+_FIRST, _SECOND = np.uint64(0xBF58476D1CE4E5B9), np.uint64(0x94D049BB133111EB)
+_QUOTIENT, _REST = divmod(2**64, N_BUCKETS)
+# Words of a text that are mixed for all rows at once; the rest of longer texts goes row by row.
+_WORDS_AT_ONCE = 64
+_BLOCK = 32_768
+_TAIL_MASKS = np.array([(1 << 8 * n) - 1 for n in range(9)], dtype=np.uint64)
+_FIX = (
+    "give customers whole numbers that fit in int64, or text: column.astype(str), "
+    "or CAST(column AS VARCHAR) in SQL"
+)
+_KINDS = {"integer": "whole numbers", "text": "text"}
+
+
+def mix(values: NDArray[np.uint64]) -> NDArray[np.uint64]:
+    """Finaliser of splitmix64: a bijection of 64-bit words that scatters them.
+
+    Parameters
+    ----------
+    values : ndarray of uint64, shape (n,)
+
+    Returns
+    -------
+    ndarray of uint64, shape (n,)
+
+    References
+    ----------
+    Steele, Lea and Flood (2014), Fast splittable pseudorandom number generators, OOPSLA; constants of
+    variant 13 of D. Stafford.
+
+    Examples
+    --------
+    >>> hex(mix(np.array([0x9E3779B97F4A7C15], dtype="u8"))[0])
+    '0xe220a8397b1dcdaf'
+    """
+    out = np.array(values, dtype=np.uint64)
+    for start in range(0, len(out), _BLOCK):
+        # Blocks stay in the processor's cache through all eight passes.
+        block = out[start : start + _BLOCK]
+        block ^= block >> np.uint64(30)
+        block *= _FIRST
+        block ^= block >> np.uint64(27)
+        block *= _SECOND
+        block ^= block >> np.uint64(31)
+    return out
+
+
+def customer_keys(array: pa.Array, kind: str | None = None) -> tuple[NDArray[np.uint64], str | None]:
+    """64-bit keys of customer ids, and the kind of ids.
+
+    Parameters
+    ----------
+    array : pyarrow.Array
+        Whole numbers of any width (also as floats, if all are whole), or text or bytes in any encoding.
+    kind : {"integer", "text"} or None
+        Kind of the ids seen before; None if none were.
+
+    Returns
+    -------
+    keys : ndarray of uint64, shape (n_rows,)
+        Meaningless where the id is missing.
+    kind : {"integer", "text"} or None
+        None if every id so far is missing.
+
+    Raises
+    ------
+    LogError
+        If the ids are of another type, do not fit in int64, or change kind.
+
+    Examples
+    --------
+    >>> keys, kind = customer_keys(pa.array([7, 8, 7]))
+    >>> bool(keys[0] == keys[2]), bool(keys[0] == keys[1]), kind
+    (True, False, 'integer')
+    """
+    array = plain(array)
+    is_dictionary = pa.types.is_dictionary(array.type)
+    values = array.dictionary if is_dictionary else array
+    missing = is_missing(values)
+    if pa.types.is_null(values.type) or (missing is not None and missing.all()) or not len(values):
+        return np.zeros(len(array), dtype=np.uint64), kind
+    now = "text" if is_text(values.type) else "integer"
+    if kind is not None and now != kind:
+        raise LogError(f"customer ids change from {_KINDS[kind]} to {_KINDS[now]} within the log; {_FIX}")
+    if now == "text":
+        keys = _text_keys(values)
+    else:
+        keys = mix(whole_numbers(values, "customer id", _FIX).view(np.uint64))
+    return (keys[indices_of(array)] if is_dictionary else keys), now
+
+
+def bucket_of(key64: NDArray[np.uint64]) -> NDArray[np.int16]:
+    """Bucket of each customer, from 0 to 199: what uncertainty is judged by.
+
+    Parameters
+    ----------
+    key64 : ndarray of uint64, shape (n,)
+        As `customer_keys` gives them.
+
+    Returns
+    -------
+    ndarray of int16, shape (n,)
+    """
+    return (key64 % np.uint64(N_BUCKETS)).astype(np.int16)
+
+
+def bucket_major(key64: NDArray[np.uint64]) -> NDArray[np.uint64]:
+    """Keys renumbered so that sorting by them puts buckets side by side; no two become one.
+
+    Parameters
+    ----------
+    key64 : ndarray of uint64, shape (n,)
+
+    Returns
+    -------
+    ndarray of uint64, shape (n,)
+
+    Examples
+    --------
+    >>> keys = np.array([0, 1, 200, 2**64 - 1], dtype="u8")
+    >>> bool((from_bucket_major(bucket_major(keys)) == keys).all())
+    True
+    """
+    above, bucket = np.divmod(key64, np.uint64(N_BUCKETS))
+    first: NDArray[np.uint64] = _first_of(bucket) + above
+    return first
+
+
+def from_bucket_major(keys: NDArray[np.uint64]) -> NDArray[np.uint64]:
+    """Undo `bucket_major`.
+
+    Parameters
+    ----------
+    keys : ndarray of uint64, shape (n,)
+
+    Returns
+    -------
+    ndarray of uint64, shape (n,)
+    """
+    bucket = bucket_of_major(keys).astype(np.uint64)
+    return (keys - _first_of(bucket)) * np.uint64(N_BUCKETS) + bucket
+
+
+def bucket_of_major(keys: NDArray[np.uint64]) -> NDArray[np.int16]:
+    """Bucket of bucket-major keys.
+
+    Parameters
+    ----------
+    keys : ndarray of uint64, shape (n,)
+
+    Returns
+    -------
+    ndarray of int16, shape (n,)
+    """
+    firsts = _first_of(np.arange(N_BUCKETS, dtype=np.uint64))
+    return (np.searchsorted(firsts, keys, side="right") - 1).astype(np.int16)
+
+
+def _first_of(bucket: NDArray[np.uint64]) -> NDArray[np.uint64]:
+    """First bucket-major key of each bucket; the first buckets hold one key more."""
+    return bucket * np.uint64(_QUOTIENT) + np.minimum(bucket, np.uint64(_REST))
+
+
+def _text_keys(array: pa.Array) -> NDArray[np.uint64]:
+    """Keys of plain text or bytes, from the buffers themselves."""
+    starts, lengths, data = _text_buffers(array)
+    total = np.zeros(len(lengths), dtype=np.uint64)
+    words = (lengths + 7) // 8
+    most = int(words.max(initial=0))
+    for place in range(min(most, _WORDS_AT_ONCE)):
+        active = None if (words > place).all() else np.flatnonzero(words > place)
+        at, left = (starts, lengths) if active is None else (starts[active], lengths[active])
+        piece = _mixed_words(data, at + 8 * place, left - 8 * place, place)
+        if active is None:
+            total += piece
+        else:
+            total[active] += piece
+    for row in np.flatnonzero(words > _WORDS_AT_ONCE):
+        for place in range(_WORDS_AT_ONCE, int(words[row]), _BLOCK):
+            places = np.arange(place, min(place + _BLOCK, int(words[row])))
+            piece = _mixed_words(data, starts[row] + 8 * places, lengths[row] - 8 * places, places)
+            total[row] += piece.sum(dtype=np.uint64)
+    # The length keeps "a" from "a\0"; the constant keeps the empty sum from being zero.
+    total += mix(lengths.astype(np.uint64) ^ np.uint64(_GOLDEN))
+    return mix(total)
+
+
+def _mixed_words(
+    data: NDArray[np.uint8], at: NDArray[Any], left: NDArray[Any], place: NDArray[np.int64] | int
+) -> NDArray[np.uint64]:
+    """Words of eight bytes at the given offsets, padded with zeros, mixed with their place in the text."""
+    # A view with a stride of one byte reads a word from any offset without copying the buffer.
+    view: NDArray[np.uint64] = np.ndarray((len(data) - 7,), dtype="<u8", buffer=data, strides=(1,))
+    words = view[at].astype(np.uint64, copy=False)
+    words &= _TAIL_MASKS[np.minimum(left, 8)]
+    steps = np.atleast_1d(np.asarray(place, dtype=np.uint64)) + np.uint64(1)
+    words += steps * np.uint64(_GOLDEN)
+    return mix(words)
+
+
+def _text_buffers(array: pa.Array) -> tuple[NDArray[np.int64], NDArray[np.int64], NDArray[np.uint8]]:
+    """Start and length of each text, and the bytes, with eight to spare at the end."""
+    wide = pa.types.is_large_string(array.type) or pa.types.is_large_binary(array.type)
+    _, offset_buffer, data_buffer = array.buffers()
+    offsets = np.frombuffer(offset_buffer, dtype=np.int64 if wide else np.int32)
+    offsets = offsets[array.offset : array.offset + len(array) + 1]
+    starts: NDArray[np.int64] = offsets[:-1].astype(np.int64)
+    lengths: NDArray[np.int64] = np.diff(offsets).astype(np.int64)
+    if array.null_count:
+        lengths[~numbers(array.is_valid())] = 0
+    first, last = int(offsets[0]), int(offsets[-1])
+    size = 0 if data_buffer is None else data_buffer.size
+    if size >= last + 8:
+        return starts, lengths, np.frombuffer(data_buffer, dtype=np.uint8)
+    data = np.zeros(last - first + 8, dtype=np.uint8)
+    if size:
+        data[: last - first] = np.frombuffer(data_buffer, dtype=np.uint8)[first:last]
+    return starts - first, lengths, data

@@ -1,0 +1,184 @@
+"""First look at the time column alone: when the log begins and ends, and whether a clock was wrong."""
+
+from __future__ import annotations
+
+import time
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from journeys.checks import DAY_US, instant_text
+from journeys.errors import LogError
+from journeys.intake.read import LogSource
+from journeys.intake.rules import JourneyRules
+from journeys.intake.times import TimeReader
+
+_FEW_ROWS = 0.001
+
+
+@dataclass(frozen=True, slots=True)
+class Look:
+    """What the time column alone says.
+
+    Attributes
+    ----------
+    first_us, last_us : int
+        First and last usable time between the log's two dates, in microseconds since 1970 UTC.
+    n_rows : int
+        Rows read, usable or not.
+    whole_days : bool
+        The column holds dates without a time.
+    n_later_than_now : int
+        Rows dated in the future, `as_of` or not.
+    """
+
+    first_us: int
+    last_us: int
+    n_rows: int
+    whole_days: bool
+    n_later_than_now: int
+
+
+@dataclass(frozen=True, slots=True)
+class _Days:
+    """Rows per day that has any, with the exact first and last time of each day."""
+
+    day: NDArray[np.int64]
+    n: NDArray[np.int64]
+    first: NDArray[np.int64]
+    last: NDArray[np.int64]
+
+    def __add__(self, other: _Days) -> _Days:
+        day, place = np.unique(np.concatenate([self.day, other.day]), return_inverse=True)
+        n = np.zeros(len(day), dtype=np.int64)
+        np.add.at(n, place, np.concatenate([self.n, other.n]))
+        first = np.full(len(day), np.iinfo(np.int64).max)
+        np.minimum.at(first, place, np.concatenate([self.first, other.first]))
+        last = np.full(len(day), np.iinfo(np.int64).min)
+        np.maximum.at(last, place, np.concatenate([self.last, other.last]))
+        return _Days(day, n, first, last)
+
+    def part(self, begin: int, end: int) -> _Days:
+        """Days from one position up to another."""
+        piece = slice(begin, end)
+        return _Days(self.day[piece], self.n[piece], self.first[piece], self.last[piece])
+
+
+def first_look(source: LogSource, rules: JourneyRules, *, now_us: int | None = None) -> Look:
+    """First and last time of a log, unless a clock was plainly wrong.
+
+    Parameters
+    ----------
+    source : LogSource
+    rules : JourneyRules
+    now_us : int, optional
+        What counts as the future; left out, the clock of this computer.
+
+    Returns
+    -------
+    Look
+
+    Raises
+    ------
+    LogError
+        If there is no usable time, or fewer than 0.1 % of the rows lie beyond a hole longer than `silence`
+        and than half the span of the rest, at an end whose date the rules do not give.
+
+    Examples
+    --------
+    >>> import pandas as pd
+    >>> from journeys.intake.read import open_log
+    >>> frame = pd.DataFrame({"when": pd.to_datetime(["1970-01-01", "1970-01-03"], utc=True)})
+    >>> look = first_look(open_log(frame, ["when"]), JourneyRules("who", "when", "what", silence="1d"))
+    >>> look.last_us // DAY_US, look.n_rows, look.whole_days
+    (2, 2, False)
+    """
+    now = time.time_ns() // 1_000 if now_us is None else now_us
+    reader, n_rows, n_later = TimeReader(rules.time), 0, 0
+    empty = np.empty(0, dtype=np.int64)
+    days = _Days(empty, empty, empty, empty)
+    for batch in source.batches([rules.time]):
+        n_rows += batch.num_rows
+        times = reader.read(batch.column(0))
+        us = times.us[times.usable()]
+        n_later += int(np.count_nonzero(us > now))
+        us = _between(us, rules)
+        if len(us):
+            days += _per_day(us)
+    if not len(days.day):
+        if rules.log_start_us is not None and rules.as_of_us is not None:
+            # A part of a log, or a day on which nothing happened: its span is known all the same.
+            return Look(rules.log_start_us, rules.as_of_us, n_rows, bool(reader.whole_days), n_later)
+        between = " between log_start and as_of" if rules.log_start or rules.as_of else ""
+        raise LogError(f"column {rules.time!r} of {source.describe()} holds no usable time{between}")
+    if fixes := _clock_faults(days, rules):
+        raise LogError(f"column {rules.time!r}: " + "; ".join(fixes))
+    return Look(int(days.first[0]), int(days.last[-1]), n_rows, bool(reader.whole_days), n_later)
+
+
+def _between(us: NDArray[np.int64], rules: JourneyRules) -> NDArray[np.int64]:
+    """Keep the times between the log's two dates, as far as the rules give them."""
+    if rules.log_start_us is not None:
+        us = us[us >= rules.log_start_us]
+    if rules.as_of_us is not None:
+        us = us[us <= rules.as_of_us]
+    return us
+
+
+def _per_day(us: NDArray[np.int64]) -> _Days:
+    """Rows per day of one batch; runs of a day are gathered first, since logs mostly come in order."""
+    day = us // DAY_US
+    begin = np.flatnonzero(np.diff(day, prepend=day[0] - 1))
+    empty = np.empty(0, dtype=np.int64)
+    runs = _Days(
+        day[begin],
+        np.diff(begin, append=len(us)),
+        np.minimum.reduceat(us, begin),
+        np.maximum.reduceat(us, begin),
+    )
+    return runs + _Days(empty, empty, empty, empty)
+
+
+def _clock_faults(days: _Days, rules: JourneyRules) -> list[str]:
+    """Say which dates to set where a few rows lie far beyond the rest; both ends are looked at in turn."""
+    total, fixes, rest = int(days.n.sum()), [], days
+    while True:
+        early = None if rules.log_start else _early_hole(rest, total, rules.silence_us or 0)
+        if early is not None:
+            n = int(rest.n[:early].sum())
+            rest = rest.part(early, len(rest.day))
+            fixes.append(
+                f"{n} of {total} rows lie long before all others, as a wrong clock would put them: "
+                f'set log_start="{instant_text(int(rest.first[0]))}" to leave them out, '
+                f'or log_start="{instant_text(int(days.first[0]))}" if they are right'
+            )
+        late = None if rules.as_of else _late_hole(rest, total, rules.silence_us or 0)
+        if late is not None:
+            n = int(rest.n[late:].sum())
+            rest = rest.part(0, late)
+            fixes.append(
+                f"{n} of {total} rows lie long after all others, as a wrong clock would put them: "
+                f'set as_of="{instant_text(int(rest.last[-1]))}" to leave them out, '
+                f'or as_of="{instant_text(int(days.last[-1]))}" if they are right'
+            )
+        if early is None and late is None:
+            return fixes
+
+
+def _late_hole(days: _Days, total: int, silence_us: int) -> int | None:
+    """Position of the first day beyond such a hole, or None."""
+    holes = days.first[1:] - days.last[:-1]
+    beyond = np.cumsum(days.n[::-1])[::-1][1:]
+    span = days.last[:-1] - days.first[0]
+    found = np.flatnonzero((beyond < _FEW_ROWS * total) & (holes > silence_us) & (2 * holes > span))
+    return int(found[0]) + 1 if len(found) else None
+
+
+def _early_hole(days: _Days, total: int, silence_us: int) -> int | None:
+    """Position of the last first day after such a hole, or None."""
+    holes = days.first[1:] - days.last[:-1]
+    beyond = np.cumsum(days.n)[:-1]
+    span = days.last[-1] - days.first[1:]
+    found = np.flatnonzero((beyond < _FEW_ROWS * total) & (holes > silence_us) & (2 * holes > span))
+    return int(found[-1]) + 1 if len(found) else None

@@ -1,0 +1,250 @@
+"""Batches of a log turned into `Rows`: what cannot be used is left out and counted."""
+
+from __future__ import annotations
+
+import numpy as np
+import pyarrow as pa
+from numpy.typing import NDArray
+
+from journeys.checks import DAY_US
+from journeys.errors import LogError
+from journeys.intake.arrays import indices_of, is_missing, numbers, plain, whole_numbers
+from journeys.intake.columns import as_text, decoded, event_names, is_in
+from journeys.intake.findings import UNREADABLE, Findings
+from journeys.intake.identity import bucket_major, customer_keys
+from journeys.intake.rows import EventCodes, Rows
+from journeys.intake.rule_checks import RESERVED
+from journeys.intake.rules import JourneyRules
+from journeys.intake.times import TimeReader, Times
+
+Mask = NDArray[np.bool_]
+_UNNUMBERED = np.iinfo(np.int64).max
+
+
+class Normaliser:
+    """Turns the batches of one pass over a log, in order, into blocks of kept rows.
+
+    A row is counted under the first reason that leaves it out: excluded, missing customer, time, event,
+    time out of range, before the log's start, after `as_of`, event dropped by the rules.
+
+    Parameters
+    ----------
+    rules : JourneyRules
+    log_start_us, as_of_us : int, optional
+        First and last instant to keep, both included; left out, those of the rules, if any.
+
+    Attributes
+    ----------
+    findings : Findings
+        What was found so far.
+    codes : EventCodes
+        Events seen so far.
+    targets : list of str or None
+        State or outcome of each event code; None where dropped.
+    n_rows, n_kept : int
+        Rows read, rows kept.
+
+    Examples
+    --------
+    >>> rules = JourneyRules("who", "when", "what", silence="30d")
+    >>> when = pa.array([0, None, 5], pa.timestamp("us", "UTC"))
+    >>> batch = pa.record_batch({"who": [1, 1, 2], "when": when, "what": ["visit"] * 3})
+    >>> normaliser = Normaliser(rules)
+    >>> normaliser.rows(batch).row.tolist(), normaliser.findings
+    ([0, 2], Findings(missing_time 1))
+    """
+
+    def __init__(
+        self,
+        rules: JourneyRules,
+        *,
+        log_start_us: int | None = None,
+        as_of_us: int | None = None,
+    ) -> None:
+        self.rules = rules
+        self.codes = EventCodes()
+        self.targets: list[str | None] = []
+        self.n_rows = 0
+        self.n_kept = 0
+        self._log_start_us = rules.log_start_us if log_start_us is None else log_start_us
+        self._as_of_us = rules.as_of_us if as_of_us is None else as_of_us
+        self._times = TimeReader(rules.time)
+        self._found = Findings()
+        self._customer_kind: str | None = None
+        self._all_midnight = True
+
+    @property
+    def whole_days(self) -> bool:
+        """Whether the log holds dates without a time."""
+        return bool(self._times.whole_days)
+
+    @property
+    def findings(self) -> Findings:
+        """What was found so far, among it whether every time is a midnight."""
+        extra = Findings()
+        if self.n_kept > 1 and self._all_midnight and not self.whole_days:
+            extra.add("midnight_times", self.rules.time, self.n_kept)
+        return self._found + extra
+
+    @property
+    def unreadable_share(self) -> float:
+        """Share of the rows read that lack a readable customer, time or event; what `limits` is about."""
+        return sum(self._found.n(code) for code in UNREADABLE) / max(self.n_rows, 1)
+
+    def rows(self, batch: pa.RecordBatch) -> Rows:
+        """Kept rows of the next batch.
+
+        Parameters
+        ----------
+        batch : pyarrow.RecordBatch
+            With the columns of the rules.
+
+        Returns
+        -------
+        Rows
+
+        Raises
+        ------
+        LogError
+            If a column is of a type that cannot be read, changes kind, or an event has a reserved name.
+        """
+        rules, first = self.rules, self.n_rows
+        self.n_rows += batch.num_rows
+        kept = _Kept(batch.num_rows, first, self._found)
+        for column, values in rules.exclude.items():
+            kept.drop("excluded", column, is_in(batch.column(column), values, column))
+        customer = plain(batch.column(rules.customer))
+        kept.drop("missing_customer", rules.customer, is_missing(customer))
+        key64, self._customer_kind = customer_keys(customer, self._customer_kind)
+        times = self._times.read(batch.column(rules.time))
+        kept.drop("missing_time", rules.time, times.missing)
+        event = event_names(batch.column(rules.event), rules.event)
+        kept.drop("missing_event", rules.event, is_missing(event))
+        self._drop_times(kept, times)
+        events = self._codes(event, kept)
+        sequence = self._sequence(batch, kept)
+        ended = self._ended(batch, kept)
+        self._note_times(kept, times)
+        rows = kept.take(bucket_major(key64), times.us, events, sequence, ended)
+        self.n_kept += len(rows)
+        self._all_midnight = self._all_midnight and not (rows.time % DAY_US).any()
+        return rows
+
+    def _drop_times(self, kept: _Kept, times: Times) -> None:
+        """Leave out what lies outside the calendar or outside the log's two dates."""
+        column = self.rules.time
+        kept.drop("out_of_range_time", column, times.out_of_range)
+        if self._log_start_us is not None:
+            kept.drop("before_log_start", column, times.us < self._log_start_us)
+        if self._as_of_us is not None:
+            kept.drop("after_as_of", column, times.us > self._as_of_us)
+
+    def _note_times(self, kept: _Kept, times: Times) -> None:
+        """Count oddities of the times of kept rows."""
+        column = self.rules.time
+        if times.naive:
+            self._found.add("naive_times", column, kept.n)
+        kept.note("sub_microsecond", column, times.sub_microsecond)
+
+    def _codes(self, event: pa.DictionaryArray, kept: _Kept) -> NDArray[np.int32]:
+        """Codes of the events, those of rows left out being 0; drops what the rules drop."""
+        names = event.dictionary.to_pylist()
+        index = indices_of(event)
+        if not names:
+            return np.zeros(len(index), dtype=np.int32)
+        used = np.bincount(index if kept.mask is None else index[kept.mask], minlength=len(names)) > 0
+        positions = np.flatnonzero(used)
+        codes = np.zeros(len(names), dtype=np.int32)
+        codes[positions] = self.codes.encode([as_text(names[i]) for i in positions])
+        for name in self.codes.names[len(self.targets) :]:
+            self.targets.append(self._target(name))
+        events = codes[index]
+        dropped = np.array([target is None for target in self.targets], dtype=bool)
+        if dropped.any():
+            kept.drop("unmapped_event", self.rules.event, dropped[events])
+        return events
+
+    def _target(self, name: str) -> str | None:
+        """State or outcome of an event; refused where that is a name the package keeps for itself."""
+        target = self.rules.target(name)
+        if target in RESERVED:
+            column = self.rules.event
+            raise LogError(
+                f"column {column!r} holds an event called {target!r}, which means something else here; "
+                f'give it another in the rules: states = {{"{target}" = "{_OTHER_NAMES[target]}"}}'
+            )
+        return target
+
+    def _sequence(self, batch: pa.RecordBatch, kept: _Kept) -> NDArray[np.int64] | None:
+        """Sequence numbers; a missing one sorts last."""
+        column = self.rules.sequence
+        if column is None:
+            return None
+        array = decoded(batch.column(column))
+        numbered = whole_numbers(array, column, "wanted whole numbers that order rows of the same time")
+        missing = is_missing(array)
+        kept.note("missing_sequence", column, missing)
+        return numbered if missing is None else np.where(missing, _UNNUMBERED, numbered)
+
+    def _ended(self, batch: pa.RecordBatch, kept: _Kept) -> Mask | None:
+        """Read the ended_before column: true or false, or 1 and 0."""
+        column = self.rules.ended_before
+        if column is None:
+            return None
+        array = decoded(batch.column(column))
+        wanted = "wanted true and false (or 1 and 0): whether the customer had ended before the log begins"
+        missing = is_missing(array)
+        kept.note("missing_ended_before", column, missing)
+        if pa.types.is_boolean(array.type):
+            return np.asarray(numbers(array, missing=False), dtype=bool)
+        values = whole_numbers(array, column, wanted)
+        if not np.isin(values, (0, 1)).all():
+            raise LogError(f"column {column!r} holds other numbers than 0 and 1; {wanted}")
+        return np.asarray(values == 1)
+
+
+_OTHER_NAMES = {"entry": "entered", "lapsed": "went quiet", "open": "opened", "unknown": "not known"}
+
+
+class _Kept:
+    """Rows of a batch not yet left out, and the counting of those that are."""
+
+    def __init__(self, n_rows: int, first: int, findings: Findings) -> None:
+        self.mask: Mask | None = None  # None: all of them
+        self.n = n_rows
+        self._n_rows, self._first, self._findings = n_rows, first, findings
+
+    def _still(self, mask: Mask | None) -> Mask | None:
+        """Part of the mask that is among the kept rows; None if empty."""
+        if mask is None or not mask.any():
+            return None
+        still: Mask = mask if self.mask is None else mask & self.mask
+        return still if bool(still.any()) else None
+
+    def drop(self, code: str, column: str, mask: Mask | None) -> None:
+        """Leave out the marked rows and count them."""
+        still = self._still(mask)
+        if still is None:
+            return
+        self._findings.add(code, column, np.flatnonzero(still) + self._first)
+        self.mask = ~still if self.mask is None else self.mask & ~still
+        self.n = int(np.count_nonzero(self.mask))
+
+    def note(self, code: str, column: str, mask: Mask | None) -> None:
+        """Count the marked rows and keep them."""
+        still = self._still(mask)
+        if still is not None:
+            self._findings.add(code, column, np.flatnonzero(still) + self._first)
+
+    def take(
+        self,
+        key: NDArray[np.uint64],
+        times: NDArray[np.int64],
+        events: NDArray[np.int32],
+        sequence: NDArray[np.int64] | None,
+        ended: Mask | None,
+    ) -> Rows:
+        """Kept rows of the batch."""
+        number = np.arange(self._first, self._first + self._n_rows, dtype=np.int64)
+        rows = Rows(key, times, events, number, sequence, ended)
+        return rows if self.mask is None else rows.take(self.mask)

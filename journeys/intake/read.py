@@ -1,0 +1,123 @@
+"""The one gate for event logs: whatever holds the rows, batches of Arrow columns come out."""
+
+from __future__ import annotations
+
+import itertools
+import os
+from collections.abc import Iterable, Sequence
+from pathlib import Path
+from typing import Any
+
+import pandas as pd
+import pyarrow as pa
+
+from journeys.errors import LogError
+from journeys.intake.read_files import find_files
+from journeys.intake.sources import FileSource, LogSource, PandasSource, StreamSource, TableSource
+
+__all__ = ["LogSource", "open_log"]
+
+_WANTED = (
+    "wanted the path of a Parquet, CSV or Arrow file or of a folder of them, a data frame, an Arrow table or "
+    "reader, or an iterator of record batches"
+)
+
+
+def open_log(source: Any, columns: Sequence[str], *, text: Sequence[str] = ()) -> LogSource:
+    """Log behind whatever the caller holds.
+
+    Parameters
+    ----------
+    source : path, sequence of paths, data frame, Arrow data, iterator of record batches or cursor
+        Parquet, CSV or Arrow files or a folder of them; pandas frame; anything with `__arrow_c_stream__`
+        (polars frames, duckdb relations, Arrow tables and readers); an iterator of record batches; an object
+        with `fetch_record_batch`.
+    columns : sequence of str
+        Columns it must have.
+    text : sequence of str
+        Those of them that hold names: a CSV file is not to guess that "007" is a number there.
+
+    Returns
+    -------
+    LogSource
+
+    Raises
+    ------
+    TypeError
+        If it is nothing of the kind.
+    LogError
+        If it cannot be read or lacks a column.
+
+    Examples
+    --------
+    >>> log = open_log(pd.DataFrame({"who": [1, 2], "what": ["visit", "visit"], "notes": ["", ""]}), ["who"])
+    >>> log.describe(), [batch.to_pydict() for batch in log.batches(["who"])]
+    ('pandas frame, 2 rows', [{'who': [1, 2]}])
+    """
+    log = _source(source, tuple(text))
+    log.check(columns)
+    log.needed = tuple(columns)
+    return log
+
+
+def _source(source: Any, text: tuple[str, ...]) -> LogSource:
+    """Pick the adapter for what the caller holds."""
+    if isinstance(source, LogSource):
+        return source
+    if isinstance(source, str | os.PathLike):
+        return FileSource(find_files(source), text, Path(source).name)
+    if _all_are(source, str | os.PathLike):
+        return FileSource(find_files(source), text, Path(source[0]).name)
+    if isinstance(source, pd.DataFrame):
+        return PandasSource(source)
+    if isinstance(source, pa.RecordBatch):
+        return TableSource(pa.Table.from_batches([source]), "Arrow record batch")
+    if isinstance(source, pa.Table):
+        return TableSource(source, "Arrow table")
+    return _stream(source)
+
+
+def _stream(source: Any) -> LogSource:
+    """Pick the adapter for what gives batches."""
+    module, name = type(source).__module__.partition(".")[0], type(source).__name__
+    if name == "LazyFrame":
+        raise TypeError(f"got a {module} LazyFrame; call .collect() on it, or write it with .sink_parquet(path)")
+    if hasattr(source, "__arrow_c_stream__"):
+        try:
+            reader = pa.RecordBatchReader.from_stream(source)
+        except (pa.ArrowInvalid, pa.ArrowTypeError, TypeError):
+            raise TypeError(f"got a {name}, which is no stream of rows with named columns; {_WANTED}") from None
+        if module == "polars":
+            return TableSource(reader.read_all(), "polars frame")
+        return StreamSource(reader.schema, reader, f"{module} {name}")
+    if hasattr(source, "fetch_record_batch"):
+        reader = source.fetch_record_batch()
+        return StreamSource(reader.schema, reader, f"{module} {name}")
+    if isinstance(source, Iterable) and not isinstance(source, str | bytes | dict):
+        return _batch_iterator(source, name)
+    raise TypeError(f"got a {name}; {_WANTED}" + _hint(source))
+
+
+def _all_are(source: Any, kind: Any) -> bool:
+    """Return whether it is a list of at least one thing, all of a kind."""
+    return isinstance(source, list | tuple) and len(source) > 0 and all(isinstance(one, kind) for one in source)
+
+
+def _batch_iterator(source: Any, name: str) -> LogSource:
+    """Adapter for an iterator, whose first item tells the columns."""
+    if _all_are(source, pa.RecordBatch):
+        if all(batch.schema == source[0].schema for batch in source):
+            return TableSource(pa.Table.from_batches(source), "list of record batches")
+        return StreamSource(source[0].schema, iter(source), "list of record batches")
+    batches = iter(source)
+    first = next(batches, None)
+    if first is None:
+        raise LogError(f"the {name} is empty; wanted at least one record batch, which may have no rows")
+    if not isinstance(first, pa.RecordBatch):
+        raise TypeError(f"got a {name} of {type(first).__name__}; {_WANTED}" + _hint(source))
+    return StreamSource(first.schema, itertools.chain([first], batches), f"{name} of record batches")
+
+
+def _hint(source: Any) -> str:
+    """Return what to do with rows in plain Python."""
+    return "; make it a frame: pandas.DataFrame(rows)" if isinstance(source, dict | list | tuple) else ""

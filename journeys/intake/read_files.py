@@ -1,0 +1,241 @@
+"""Files of a log: which there are, in what order, and their batches."""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+from urllib.parse import unquote
+
+import pyarrow as pa
+import pyarrow.parquet as pq
+
+from journeys.errors import LogError
+from journeys.intake.read_csv import csv_batches, csv_schema
+
+KINDS = {
+    ".parquet": "Parquet", ".pq": "Parquet",
+    ".csv": "CSV", ".csv.gz": "CSV", ".tsv": "TSV", ".tsv.gz": "TSV",
+    ".arrow": "Arrow", ".feather": "Arrow", ".ipc": "Arrow",
+}  # fmt: skip
+ROWS_AT_ONCE = 1 << 20
+_HIVE_NULL = "__HIVE_DEFAULT_PARTITION__"
+_WANTED = f"wanted one of {', '.join(KINDS)}"
+
+
+@dataclass(frozen=True, slots=True)
+class LogFile:
+    """One file of a log.
+
+    Attributes
+    ----------
+    path : Path
+    kind : str
+        Parquet, CSV, TSV or Arrow.
+    partition : tuple of (str, str or None)
+        Columns that its folders give, `key=value`.
+    """
+
+    path: Path
+    kind: str
+    partition: tuple[tuple[str, str | None], ...] = ()
+
+
+def find_files(source: str | os.PathLike[str] | Sequence[str | os.PathLike[str]]) -> list[LogFile]:
+    """Files of a path, a folder or a list of paths, in the order in which their rows count.
+
+    Parameters
+    ----------
+    source : path or sequence of paths
+        A folder is read with all below it, by path; names that start with "." or "_" are passed over. A list
+        is read by file name.
+
+    Returns
+    -------
+    list of LogFile
+
+    Raises
+    ------
+    LogError
+        If there is none, one is missing, or they are of several kinds.
+    """
+    if isinstance(source, str | os.PathLike):
+        path = Path(source)
+        if path.is_dir():
+            return _one_kind(_in_folder(path), str(path))
+        paths = [path]
+    else:
+        paths = sorted((Path(item) for item in source), key=lambda item: (item.name, item.as_posix()))
+        if not paths:
+            raise LogError("the list of files is empty; wanted at least one path")
+    for path in paths:
+        if path.is_dir():
+            raise LogError(f"{path} is a folder in a list of files; give a folder by itself")
+        if not path.exists():
+            raise LogError(f"{path}: no such file")
+    if len({path.resolve() for path in paths}) < len(paths):
+        raise LogError("the list of files names a file twice; its rows would count twice: take one out")
+    return _one_kind([LogFile(path, _kind(path)) for path in paths], "the list of files")
+
+
+def file_schema(file: LogFile, text: Sequence[str]) -> pa.Schema:
+    """Columns of a file, partition columns not included.
+
+    Parameters
+    ----------
+    file : LogFile
+    text : sequence of str
+        Columns that a CSV file is to be read as text in.
+
+    Returns
+    -------
+    pyarrow.Schema
+
+    Raises
+    ------
+    LogError
+        If the file is empty or damaged.
+    """
+    try:
+        if file.kind == "Parquet":
+            return pq.read_schema(file.path)
+        if file.kind == "Arrow":
+            return _open_arrow(file.path).schema
+        return csv_schema(file.path, text)
+    except (pa.ArrowInvalid, pa.ArrowNotImplementedError, OSError) as fault:
+        raise LogError(_damaged(file, fault)) from None
+
+
+def file_batches(file: LogFile, columns: Sequence[str], text: Sequence[str]) -> Iterator[pa.RecordBatch]:
+    """Batches of some columns of a file.
+
+    Parameters
+    ----------
+    file : LogFile
+    columns : sequence of str
+        All of them in the file.
+    text : sequence of str
+        Columns that hold names: read as text from CSV, as dictionaries from Parquet.
+
+    Yields
+    ------
+    pyarrow.RecordBatch
+
+    Raises
+    ------
+    LogError
+        If the file is damaged, or a CSV column changes kind.
+    """
+    if file.kind in ("CSV", "TSV"):
+        yield from csv_batches(file.path, columns, text)
+        return
+    batches = (_parquet_batches if file.kind == "Parquet" else _arrow_batches)(file, columns, text)
+    while True:
+        try:
+            batch = next(batches, None)
+        except (pa.ArrowInvalid, pa.ArrowNotImplementedError, OSError) as fault:
+            raise LogError(_damaged(file, fault)) from None
+        if batch is None:
+            return
+        yield batch
+
+
+def partition_types(files: Sequence[LogFile]) -> dict[str, pa.DataType]:
+    """Types of the columns that folders give: int64 where every value is a plain whole number, else text.
+
+    Parameters
+    ----------
+    files : sequence of LogFile
+
+    Returns
+    -------
+    dict of str to pyarrow.DataType
+
+    Raises
+    ------
+    LogError
+        If the files lie under different keys.
+    """
+    keys = {tuple(key for key, _ in file.partition) for file in files}
+    if len(keys) > 1:
+        raise LogError("files lie under folders with different keys (key=value); give those with the same")
+    types = {}
+    for place, key in enumerate(next(iter(keys), ())):
+        values = {file.partition[place][1] for file in files} - {None}
+        types[key] = pa.int64() if all(value and _is_plain_int(value) for value in values) else pa.string()
+    return types
+
+
+def _is_plain_int(text: str) -> bool:
+    """Return whether text is how a whole number of int64 is written."""
+    digits = text.removeprefix("-")
+    return digits.isascii() and digits.isdigit() and str(int(text)) == text and abs(int(text)) < 2**63
+
+
+def _in_folder(folder: Path) -> list[LogFile]:
+    """Files below a folder, by path."""
+    found = []
+    for path in sorted(folder.rglob("*"), key=lambda item: item.relative_to(folder).parts):
+        parts = path.relative_to(folder).parts
+        if path.is_file() and not any(part.startswith((".", "_")) for part in parts):
+            pairs = [part.partition("=") for part in parts[:-1] if "=" in part]
+            partition = tuple(
+                (unquote(key), None if value == _HIVE_NULL else unquote(value)) for key, _, value in pairs
+            )
+            found.append(LogFile(path, _kind(path), partition))
+    if not found:
+        raise LogError(f"folder {folder} holds no file to read; {_WANTED}")
+    return found
+
+
+def _one_kind(files: list[LogFile], where: str) -> list[LogFile]:
+    """Files, if they are all of one kind."""
+    kinds = sorted({file.kind for file in files})
+    if len(kinds) > 1:
+        raise LogError(f"{where} holds files of several kinds ({', '.join(kinds)}); give those of one kind")
+    return files
+
+
+def _kind(path: Path) -> str:
+    """Kind of a file by the end of its name."""
+    name = path.name.lower()
+    for suffix, kind in KINDS.items():
+        if name.endswith(suffix):
+            return kind
+    raise LogError(f"{path}: files ending in {path.suffix or 'nothing'!r} are not read; {_WANTED}")
+
+
+def _parquet_batches(file: LogFile, columns: Sequence[str], text: Sequence[str]) -> Iterator[pa.RecordBatch]:
+    """Batches across row groups; names come as dictionaries, as most files store them."""
+    schema = pq.read_schema(file.path)
+    kinds = (pa.string(), pa.large_string())
+    names = [name for name in text if name in columns and schema.field(name).type in kinds]
+    with pq.ParquetFile(file.path, read_dictionary=names) as parquet:
+        yield from parquet.iter_batches(batch_size=ROWS_AT_ONCE, columns=list(columns))
+
+
+def _open_arrow(path: Path, options: Any = None) -> Any:
+    """Reader of an Arrow file in either of its two forms."""
+    with path.open("rb") as file:
+        is_file = file.read(6) == b"ARROW1"
+    source = pa.memory_map(str(path)) if path.stat().st_size else pa.BufferReader(b"")
+    return (pa.ipc.open_file if is_file else pa.ipc.open_stream)(source, options=options)
+
+
+def _arrow_batches(file: LogFile, columns: Sequence[str], text: Sequence[str]) -> Iterator[pa.RecordBatch]:
+    """Batches of an Arrow file or stream."""
+    names = _open_arrow(file.path).schema.names
+    options = pa.ipc.IpcReadOptions(included_fields=[names.index(column) for column in columns])
+    reader = _open_arrow(file.path, options)
+    if isinstance(reader, pa.ipc.RecordBatchFileReader):
+        for number in range(reader.num_record_batches):
+            yield reader.get_batch(number)
+    else:
+        yield from reader
+
+
+def _damaged(file: LogFile, fault: Exception) -> str:
+    """Say what is wrong with a file, without the cells that Arrow's own messages quote."""
+    return f"{file.path}: not a whole {file.kind} file ({type(fault).__name__}); write it again"

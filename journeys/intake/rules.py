@@ -1,0 +1,314 @@
+"""The rules a log is read by: which columns, what a journey is, how it ends, what is left out."""
+
+from __future__ import annotations
+
+import difflib
+import tomllib
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, fields
+from pathlib import Path
+from typing import Any, Self
+
+from journeys.checks import Duration, Instant, duration_us, instant_us
+from journeys.errors import RulesError
+from journeys.intake.frozen import FrozenMap, toml_text
+from journeys.intake.rule_checks import LIMITS, NOT_GIVEN, NotGiven, canonical
+
+
+@dataclass(frozen=True, slots=True, init=False, repr=False)
+class JourneyRules:
+    """Rules a log is read by, checked when made; equal rules compare equal however they were written.
+
+    Parameters
+    ----------
+    customer, time, event : str
+        Columns with the customer's id, the time and the name of the event.
+    converted, churned : str or list of str
+        Events that end a journey well or badly, named after `states` has mapped them.
+    silence : str, timedelta or None
+        Must be given. A customer quiet for longer has lapsed, at the last event plus `silence`; a gap equal
+        to it is no lapse. None: nothing lapses.
+    after_outcome : {"reopen", "stop"}
+        Whether an event after an outcome begins another journey, or a customer's story ends there. "stop"
+        needs `complete_history` or `ended_before`.
+    same_outcome_within : str or timedelta
+        The same outcome again within this time, with nothing between, is a repeat: counted and merged.
+    states : mapping of str to str, optional
+        Event to the state (or outcome) it counts as; None (false in TOML) drops the event.
+    unmapped : str
+        What becomes of events that neither `states` nor the outcomes name: "keep", "drop", or the name of a
+        state to gather them under.
+    repeats : {"keep", "merge"}
+        Whether a run of the same state is several visits or one.
+    sequence : str, optional
+        Column of whole numbers that orders a customer's rows of the same time.
+    duplicates : {"keep", "drop"}
+        What becomes of rows equal to an earlier one in all the columns of the rules.
+    exclude : mapping of str to list
+        Column to the values that leave a row out (staff, tests).
+    as_of, log_start : str, datetime, date or Timestamp, optional
+        Last and first instant of the log, both included; found in the log if left out. No zone: UTC.
+    complete_history : bool
+        The log holds each customer's whole past.
+    ended_before : str, optional
+        Boolean column: the customer had ended before the log begins.
+    horizons : list of str or timedelta
+        Further times since entry at which shares are to be exact.
+    limits : mapping of str to float
+        "unreadable": largest share of rows that may lack a readable customer, time or event.
+
+    Raises
+    ------
+    RulesError
+        Naming everything that is wrong at once.
+
+    Examples
+    --------
+    >>> rules = JourneyRules("member", "happened", "event", converted=["joined"], silence="30d")
+    >>> rules.columns, rules.silence_us // 86_400_000_000
+    (('member', 'happened', 'event'), 30)
+    >>> rules == JourneyRules("member", "happened", "event", converted="joined", silence="720h")
+    True
+    >>> JourneyRules("member", "happened", "event", silence="1s", repeats="count")
+    Traceback (most recent call last):
+    ...
+    journeys.errors.RulesError: repeats: got 'count'; wanted one of 'keep', 'merge'
+    """
+
+    customer: str
+    time: str
+    event: str
+    converted: tuple[str, ...]
+    churned: tuple[str, ...]
+    silence: str | None
+    after_outcome: str
+    same_outcome_within: str
+    states: FrozenMap[str | None] | None
+    unmapped: str
+    repeats: str
+    sequence: str | None
+    duplicates: str
+    exclude: FrozenMap[tuple[str | int | bool, ...]]
+    as_of: str | None
+    log_start: str | None
+    complete_history: bool
+    ended_before: str | None
+    horizons: tuple[str, ...]
+    limits: FrozenMap[float]
+
+    def __init__(
+        self,
+        customer: str,
+        time: str,
+        event: str,
+        *,
+        converted: str | Iterable[str] = (),
+        churned: str | Iterable[str] = (),
+        silence: Duration | NotGiven | None = NOT_GIVEN,
+        after_outcome: str = "reopen",
+        same_outcome_within: Duration = "1h",
+        states: Mapping[str, str | None] | None = None,
+        unmapped: str = "keep",
+        repeats: str = "keep",
+        sequence: str | None = None,
+        duplicates: str = "keep",
+        exclude: Mapping[str, Any] = FrozenMap(),  # noqa: B008 - immutable
+        as_of: Instant | None = None,
+        log_start: Instant | None = None,
+        complete_history: bool = False,
+        ended_before: str | None = None,
+        horizons: str | Iterable[Duration] = (),
+        limits: Mapping[str, float] = FrozenMap(LIMITS),  # noqa: B008 - immutable
+    ) -> None:
+        given = locals()
+        settings, problems = canonical({field.name: given[field.name] for field in fields(self)})
+        if problems:
+            raise RulesError("\n".join(problems))
+        for name, value in settings.items():
+            object.__setattr__(self, name, value)
+
+    @property
+    def silence_us(self) -> int | None:
+        """Silence in microseconds, or None."""
+        return None if self.silence is None else duration_us(self.silence, "silence")
+
+    @property
+    def same_outcome_us(self) -> int:
+        """Time within which the same outcome is a repeat, in microseconds."""
+        return duration_us(self.same_outcome_within, "same_outcome_within")
+
+    @property
+    def as_of_us(self) -> int | None:
+        """Last instant of the log in microseconds since 1970, or None if it is to be found."""
+        return None if self.as_of is None else instant_us(self.as_of, "as_of")
+
+    @property
+    def log_start_us(self) -> int | None:
+        """First instant of the log in microseconds since 1970, or None if it is to be found."""
+        return None if self.log_start is None else instant_us(self.log_start, "log_start")
+
+    @property
+    def horizons_us(self) -> tuple[int, ...]:
+        """Horizons in microseconds, rising."""
+        return tuple(duration_us(horizon, "horizons") for horizon in self.horizons)
+
+    @property
+    def outcomes(self) -> tuple[str, ...]:
+        """Outcomes named by the rules: the converted ones, then the churned ones."""
+        return self.converted + self.churned
+
+    @property
+    def columns(self) -> tuple[str, ...]:
+        """Columns the log must have, each once."""
+        roles = (self.customer, self.time, self.event, self.sequence, self.ended_before)
+        named = [column for column in roles if column is not None]
+        return tuple(dict.fromkeys([*named, *self.exclude]))
+
+    def target(self, event: str) -> str | None:
+        """State or outcome an event counts as; None if the rules drop it.
+
+        Parameters
+        ----------
+        event : str
+            As written in the log.
+
+        Returns
+        -------
+        str or None
+
+        Examples
+        --------
+        >>> rules = JourneyRules(
+        ...     "who", "when", "what", silence=None, states={"view": "seen"}, unmapped="other"
+        ... )
+        >>> rules.target("view"), rules.target("seen"), rules.target("click")
+        ('seen', 'seen', 'other')
+        """
+        if self.states is None or self.unmapped == "keep":
+            return event if self.states is None else self.states.get(event, event)
+        if event in self.states:
+            return self.states[event]
+        if event in self.outcomes or event in self.states.values():
+            return event
+        return None if self.unmapped == "drop" else self.unmapped
+
+    @classmethod
+    def from_dict(cls, settings: Mapping[str, Any]) -> Self:
+        """Rules from a mapping with the names of the parameters as keys.
+
+        Parameters
+        ----------
+        settings : mapping
+
+        Returns
+        -------
+        JourneyRules
+
+        Raises
+        ------
+        RulesError
+            If a key is unknown or missing, or a value is wrong.
+
+        Examples
+        --------
+        >>> JourneyRules.from_dict({"customer": "who", "time": "when", "event": "what", "silense": "30d"})
+        Traceback (most recent call last):
+        ...
+        journeys.errors.RulesError: 'silense' is no setting of the rules; did you mean 'silence'?
+        """
+        known = [field.name for field in fields(cls)]
+        problems = []
+        for name in settings:
+            if name not in known:
+                close = difflib.get_close_matches(str(name), known, n=1)
+                hint = f"did you mean {close[0]!r}?" if close else f"there are {', '.join(known)}"
+                problems.append(f"{name!r} is no setting of the rules; {hint}")
+        problems += [
+            f'{name}: not given; wanted the name of a column, such as {name} = "{name}"'
+            for name in known[:3]
+            if name not in settings
+        ]
+        if problems:
+            raise RulesError("\n".join(problems))
+        return cls(**settings)
+
+    @classmethod
+    def from_toml(cls, path: str | Path) -> Self:
+        """Rules from a TOML file with the names of the parameters as keys.
+
+        Parameters
+        ----------
+        path : str or Path
+
+        Returns
+        -------
+        JourneyRules
+
+        Raises
+        ------
+        RulesError
+            If the file cannot be read, or what it says is wrong.
+        """
+        file = Path(path)
+        try:
+            settings = tomllib.loads(file.read_text(encoding="utf-8"))
+        except OSError as fault:
+            raise RulesError(f"rules file {file}: {fault.strerror or 'cannot be read'}") from None
+        except (tomllib.TOMLDecodeError, UnicodeDecodeError) as fault:
+            raise RulesError(f"rules file {file}: not TOML ({fault})") from None
+        try:
+            return cls.from_dict(settings)
+        except RulesError as fault:
+            raise RulesError(f"rules file {file}: {fault}") from None
+
+    def to_dict(self) -> dict[str, Any]:
+        """Rules as plain values that JSON can hold; `from_dict` makes equal rules of them.
+
+        Returns
+        -------
+        dict
+
+        Examples
+        --------
+        >>> rules = JourneyRules("who", "when", "what", silence=None, horizons=["7d"])
+        >>> JourneyRules.from_dict(rules.to_dict()) == rules
+        True
+        """
+        return {field.name: _plain(getattr(self, field.name)) for field in fields(self)}
+
+    def to_toml(self) -> str:
+        """Rules as the text of a TOML file that `from_toml` makes equal rules of.
+
+        Returns
+        -------
+        str
+
+        Examples
+        --------
+        >>> print(JourneyRules("who", "when", "what", silence=None).to_toml()[:45])
+        customer = "who"
+        time = "when"
+        event = "what"
+        """
+        settings = self.to_dict()
+        settings["silence"] = self.silence or "none"
+        if self.states is not None:
+            settings["states"] = {event: state or False for event, state in self.states.items()}
+        return toml_text({name: value for name, value in settings.items() if value is not None})
+
+    def __repr__(self) -> str:
+        """Write the call that makes it, without the settings left as they come."""
+        standard = JourneyRules(self.customer, self.time, self.event, silence=None)
+        shown = [f"{name}={getattr(self, name)!r}" for name in ("customer", "time", "event")]
+        for field in fields(self)[3:]:
+            value = getattr(self, field.name)
+            if field.name == "silence" or value != getattr(standard, field.name):
+                shown.append(f"{field.name}={value!r}")
+        return f"JourneyRules({', '.join(shown)})"
+
+
+def _plain(value: Any) -> Any:
+    """Tuples as lists, mappings as dicts."""
+    if isinstance(value, Mapping):
+        return {key: _plain(item) for key, item in value.items()}
+    return list(value) if isinstance(value, tuple) else value

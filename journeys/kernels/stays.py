@@ -1,0 +1,121 @@
+"""Stays in states, what is estimated from them, and the same stays by bucket of customers."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from journeys.kernels.arrays import FloatArray, IntArray
+
+
+@dataclass(frozen=True, eq=False)
+class Stays:
+    """Binned stays of many states, in coordinates.
+
+    Attributes
+    ----------
+    n_states, n_targets, n_bins : int
+        Rows, columns (states first, then outcomes) and dwell bins.
+    state, target, bin : int arrays, shape (n_cells,)
+        Where the ended stays are; no (state, target, bin) comes twice.
+    n, total : float arrays, shape (n_cells,)
+        Ended stays of a cell, and their summed dwell in days.
+    lower, upper : float arrays, shape (n_bins,)
+        Edges of the bins in days.
+    open_state, open_bin, open_n : arrays, shape (n_open,)
+        Stays still open, by the bin of their age.
+    survivor_n : float array, shape (n_states,)
+        Stays that lapsed at the end of the last bin.
+    survivor_target : int or None
+        Column to which what survives the last bin goes; None: to no column.
+    survivor_dwell : float
+        Dwell of such a stay in days.
+    """
+
+    n_states: int
+    n_targets: int
+    n_bins: int
+    state: IntArray
+    target: IntArray
+    bin: IntArray
+    n: FloatArray
+    total: FloatArray
+    lower: FloatArray
+    upper: FloatArray
+    open_state: IntArray
+    open_bin: IntArray
+    open_n: FloatArray
+    survivor_n: FloatArray
+    survivor_target: int | None = None
+    survivor_dwell: float = 0.0
+
+
+@dataclass(frozen=True, eq=False)
+class StayFit:
+    """Estimates from `fit_stays`.
+
+    Attributes
+    ----------
+    hazard, q, tau, tau2 : float arrays, shape (n_cells,)
+        Hazard of the cell in its bin, probability of the cell, mean dwell (days) and
+        mean squared dwell (days squared) in it.
+    survival_before, hazard_all, at_risk : float arrays, shape (n_states, n_bins)
+        Share of stays that outlive the bins before, hazard of any end, stays at risk.
+    survival_end : float array, shape (n_states,)
+        Share of stays that outlive the last bin; 1 in a state with no stays.
+    move_state, move_target : int arrays, shape (n_moves,)
+        The moves that occur, sorted by (state, target).
+    probability, mean, second : float arrays, shape (n_moves,)
+        Probability of the move; dwell and squared dwell, each times the probability.
+    cell_move : int array, shape (n_cells,)
+        The move each cell belongs to.
+    survivor_move : int array, shape (n_states,)
+        The move that takes what survives the last bin; -1 where there is none.
+    open_weight : float
+        Share of a bin's open stays that are not at risk in it.
+    """
+
+    hazard: FloatArray
+    q: FloatArray
+    tau: FloatArray
+    tau2: FloatArray
+    survival_before: FloatArray
+    hazard_all: FloatArray
+    at_risk: FloatArray
+    survival_end: FloatArray
+    move_state: IntArray
+    move_target: IntArray
+    probability: FloatArray
+    mean: FloatArray
+    second: FloatArray
+    cell_move: IntArray
+    survivor_move: IntArray
+    open_weight: float
+
+
+@dataclass(frozen=True, eq=False)
+class BucketStays:
+    """The stays of a `Stays`, split by bucket of customers.
+
+    Attributes
+    ----------
+    n_buckets : int
+        Number of buckets.
+    bucket, cell, n : arrays, shape (n_ended,)
+        Ended stays: bucket, index into the cells of the `Stays`, number of stays.
+    open_bucket, open_state, open_bin, open_n : arrays, shape (n_open,)
+        Open stays.
+    survivor_bucket, survivor_state, survivor_n : arrays, shape (n_survivors,)
+        Stays that lapsed at the end of the last bin.
+    """
+
+    n_buckets: int
+    bucket: IntArray
+    cell: IntArray
+    n: FloatArray
+    open_bucket: IntArray
+    open_state: IntArray
+    open_bin: IntArray
+    open_n: FloatArray
+    survivor_bucket: IntArray
+    survivor_state: IntArray
+    survivor_n: FloatArray

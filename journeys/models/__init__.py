@@ -1,0 +1,1 @@
+"""The spec of a chain, its fit to a tally, and known chains."""

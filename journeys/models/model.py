@@ -1,0 +1,193 @@
+"""The spec of a fit, and the way from a tally to it."""
+
+from __future__ import annotations
+
+import warnings
+from dataclasses import dataclass
+
+import numpy as np
+
+from journeys import checks
+from journeys.errors import EndNotSeenWarning, JourneysWarning, LogError, ShortLogWarning
+from journeys.kernels.arrays import BoolArray
+from journeys.kernels.counting import FIRST_OUTCOME
+from journeys.kernels.sojourn import StayFit, fit_stays, move_influence
+from journeys.kernels.stays import Stays
+from journeys.models.fit import Influence, JourneyFit, with_dead_ends
+from journeys.models.stays import move_stays, nodes_of, without_open
+from journeys.tally.tally import Tally
+
+END_NOT_SEEN = "end not seen"
+FEW_AT_END = "few seen to the end"
+COMPLETED_ONLY = "completed moves only"
+# Below this many stays at risk just before the silence, the share that lapses rests on few (a judgement).
+ENOUGH_AT_END = 20
+
+
+@dataclass(frozen=True)
+class JourneyModel:
+    """Choices of a fit.
+
+    Parameters
+    ----------
+    open_moves : {"censored", "ignored"}
+        "censored" keeps stays still open at the end of the log, as lasting at least that long
+        (Aalen-Johansen); "ignored" counts completed moves only, which overstates quick moves.
+
+    Notes
+    -----
+    The chain is first-order: what comes next depends on the state a customer is in. The probabilities are
+    Aalen-Johansen estimates on binned stays, open ones right-censored; intervals come from the influence of
+    200 buckets of customers (infinitesimal jackknife), so the journeys of one customer may be alike.
+
+    References
+    ----------
+    P. K. Andersen, O. Borgan, R. D. Gill, N. Keiding, Statistical Models Based on Counting Processes,
+    Springer 1993, section IV.4. B. Efron, The Jackknife, the Bootstrap and Other Resampling Plans, SIAM 1982.
+
+    Examples
+    --------
+    >>> JourneyModel().open_moves
+    'censored'
+    """
+
+    open_moves: str = "censored"
+
+    def __post_init__(self) -> None:
+        """Check the choices."""
+        checks.one_of(self.open_moves, ("censored", "ignored"), "open_moves")
+
+    def fit(self, tally: Tally) -> JourneyFit:
+        """Fit the chain to a tally.
+
+        Parameters
+        ----------
+        tally : Tally
+            From `journeys.tally`.
+
+        Returns
+        -------
+        JourneyFit
+            A new, frozen object.
+
+        Raises
+        ------
+        LogError
+            If the log is no longer than the silence, no journey has a sure entry, or none of the outcomes
+            named in the rules was ever seen.
+
+        Warns
+        -----
+        ShortLogWarning
+            If the log is shorter than one and a half silences.
+        EndNotSeenWarning
+            If stays of a state were never seen to their end.
+        DeadEndWarning
+            If no move out of a state was seen.
+        """
+        refuse(tally)
+        nodes = nodes_of(tally)
+        stays, by_bucket = move_stays(tally, censored=self.open_moves == "censored")
+        weight = 0.0 if tally.whole_days else 0.5
+        found = fit_stays(stays, weight)
+        row_flags: dict[str, str] = {}
+        if tally.rules.silence_us is None:
+            unended = (found.survival_end > 1e-12) & _has_open(stays)
+            if unended.any():
+                # Nobody knows when the rest would leave: only what was completed can be counted.
+                stays, by_bucket = without_open(stays, by_bucket, unended)
+                found = fit_stays(stays, weight)
+                _flag(row_flags, nodes.labels, unended, COMPLETED_ONLY)
+                _warn_rows(nodes.labels, unended, "the longest stay in {} is still open, so only completed "
+                           "moves are counted there; give a silence to keep open stays", JourneysWarning)
+        else:
+            self._look_at_ends(tally, stays, found, nodes.labels, row_flags)
+        d_probability, d_mean, d_second = move_influence(found, stays, by_bucket)
+        completed = np.bincount(found.cell_move, stays.n, len(found.probability))
+        lapses = found.survivor_move >= 0
+        np.add.at(completed, found.survivor_move[lapses], stays.survivor_n[lapses])
+        state, target, columns, kept = with_dead_ends(
+            nodes, found.move_state, found.move_target,
+            [found.probability, found.mean, found.second, completed], row_flags)
+        pad = kept < 0
+        influence = Influence(*(np.where(pad, 0.0, part[:, kept]) for part in (d_probability, d_mean, d_second)))
+        return JourneyFit(
+            nodes=nodes, converted=tally.rules.converted, move_state=state, move_target=target,
+            probability=columns[0], mean=columns[1], second=columns[2], n_moves=columns[3],
+            row_flags=row_flags, open_moves=self.open_moves, tally=tally, influence=influence,
+        )
+
+    def _look_at_ends(
+        self, tally: Tally, stays: Stays, found: StayFit, labels: tuple[str, ...], row_flags: dict[str, str]
+    ) -> None:
+        """Flag the rows whose stays were not, or hardly, seen as long as the silence."""
+        if self.open_moves == "ignored":
+            return
+        seen_to_end = np.maximum(stays.survivor_n, _lapse_counts(tally, stays))
+        unseen = (found.survival_end > 1e-12) & (seen_to_end == 0) & _has_stays(stays)
+        if tally.rules.repeats == "merge":
+            unseen = (found.survival_end > 1e-12) & _has_stays(stays)
+        unseen[0] = False
+        few = ~unseen & (seen_to_end > 0) & (seen_to_end < ENOUGH_AT_END) & _has_open(stays)
+        _flag(row_flags, labels, unseen, END_NOT_SEEN)
+        _flag(row_flags, labels, few, FEW_AT_END)
+        if unseen.any():
+            _warn_rows(labels, unseen, "no stay in {} was seen as long as the silence: the share that lapses "
+                       "there is an upper bound", EndNotSeenWarning)
+
+
+def refuse(tally: Tally) -> None:
+    """Raise a LogError where no fit can be had; warn where the log is short."""
+    rules = tally.rules
+    if rules.silence_us is not None:
+        silence_days = rules.silence_us / 86_400e6
+        if tally.as_of_us - tally.log_start_us <= rules.silence_us:
+            msg = (f"the log is {tally.days:.1f} days long, no longer than the silence of {silence_days:g} days, so "
+                   "nobody can be seen to lapse; wanted a longer log or a shorter silence")
+            raise LogError(msg)
+        if tally.days < 1.5 * silence_days:
+            warnings.warn(f"the log of {tally.days:.1f} days is shorter than one and a half silences: times given "
+                          "conversion will be too narrow in their intervals", ShortLogWarning, stacklevel=3)
+    if not (tally.entries["sure"] == 1).any():
+        msg = (f"none of {tally.n_journeys:,} journeys has a sure entry (all may have begun before the log); wanted a "
+               "log that starts earlier, or complete_history=true if it holds each customer's whole past")
+        raise LogError(msg)
+    refuse_without_outcome(tally)
+
+
+def refuse_without_outcome(tally: Tally) -> None:
+    """Raise a LogError if none of the outcomes named in the rules was ever seen."""
+    rules = tally.rules
+    named = FIRST_OUTCOME + np.arange(len(rules.outcomes))
+    if len(named) and not np.isin(tally.journeys["outcome"], named).any():
+        msg = (f"no outcome was ever seen: wanted at least one of {', '.join(map(repr, rules.outcomes))} among the "
+               "events; look at the spelling in `converted` and `churned`")
+        raise LogError(msg)
+
+
+def _has_stays(stays: Stays) -> BoolArray:
+    ended = np.bincount(stays.state, stays.n, stays.n_states) + stays.survivor_n
+    return (ended > 0) | _has_open(stays)
+
+
+def _has_open(stays: Stays) -> BoolArray:
+    return np.bincount(stays.open_state, stays.open_n, stays.n_states) > 0
+
+
+def _lapse_counts(tally: Tally, stays: Stays) -> np.ndarray:
+    """Return the lapses that are counted as a cause (merged visits), by row."""
+    if stays.survivor_target is None:
+        return np.zeros(stays.n_states)
+    mine = stays.target == stays.survivor_target
+    return np.bincount(stays.state[mine], stays.n[mine], stays.n_states)
+
+
+def _flag(row_flags: dict[str, str], labels: tuple[str, ...], rows: BoolArray, text: str) -> None:
+    for row in np.flatnonzero(rows):
+        row_flags[labels[row]] = text
+
+
+def _warn_rows(labels: tuple[str, ...], rows: BoolArray, text: str, kind: type[Warning]) -> None:
+    names = [labels[row] for row in np.flatnonzero(rows)]
+    shown = ", ".join(names[:5]) + (f" and {len(names) - 5} more" if len(names) > 5 else "")
+    warnings.warn(text.format(shown), kind, stacklevel=4)

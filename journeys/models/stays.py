@@ -1,0 +1,174 @@
+"""From the tables of a tally to the stays that the kernel estimates moves from."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from journeys.kernels.arrays import FloatArray, IntArray
+from journeys.kernels.bins import DAY_US, bin_bounds_days, bin_of, dwell_edges, elapsed_edges
+from journeys.kernels.counting import FIRST_OUTCOME, LAPSED, OPEN
+from journeys.kernels.stays import BucketStays, Stays
+from journeys.tally.accumulate import join_limbs
+from journeys.tally.tally import Tally
+
+
+@dataclass(frozen=True)
+class Nodes:
+    """Positions of entry, states and outcomes in the arrays of a fit: entry is 0, then the states, then ends."""
+
+    states: tuple[str, ...]
+    outcomes: tuple[str, ...]
+
+    @property
+    def labels(self) -> tuple[str, ...]:
+        """Names of all nodes."""
+        return ("entry", *self.states, *self.outcomes)
+
+    @property
+    def n_rows(self) -> int:
+        """Entry and the states."""
+        return 1 + len(self.states)
+
+    @property
+    def n_nodes(self) -> int:
+        """Rows and outcomes."""
+        return self.n_rows + len(self.outcomes)
+
+
+def nodes_of(tally: Tally) -> Nodes:
+    """Return the nodes of a tally's chain: its states and outcomes, and lapsed where a silence is given."""
+    lapsed = () if tally.rules.silence_us is None else ("lapsed",)
+    return Nodes(tally.states, (*tally.rules.outcomes, *lapsed))
+
+
+def live_buckets(tally: Tally) -> IntArray:
+    """Return, for each bucket, its place among the non-empty ones, -1 for an empty one."""
+    live = tally.customers["people"] > 0
+    return np.where(live, np.cumsum(live) - 1, -1)
+
+
+def move_stays(tally: Tally, *, censored: bool) -> tuple[Stays, BucketStays]:
+    """Return the stays in entry and every state, in all and by bucket.
+
+    Parameters
+    ----------
+    tally : Tally
+        The counts.
+    censored : bool
+        Keep open stays, right-censored at the end of the log; False leaves them out.
+
+    Returns
+    -------
+    stays : Stays
+        Row 0 is entry, from sure entries only; its moves take no time.
+    by_bucket : BucketStays
+        The same stays by non-empty bucket.
+    """
+    nodes, rules, moves = nodes_of(tally), tally.rules, tally.moves
+    edges = dwell_edges(rules.silence_us, tally.whole_days)
+    bucket = live_buckets(tally)
+    place = _node_of_code(tally, nodes)
+    lapse_survives = rules.silence_us is not None and rules.repeats == "keep"
+    n_bins = int(moves["bin"].max()) + 1 if len(moves["n"]) else 1
+    if rules.silence_us is not None and lapse_survives:
+        n_bins = int(bin_of(np.array([rules.silence_us]), edges)[0]) + 1
+    lower, upper = bin_bounds_days(edges, n_bins)
+
+    is_open = moves["next"] == OPEN
+    survives = (moves["next"] == LAPSED) & lapse_survives
+    ended = ~is_open & ~survives
+    sure = tally.entries["sure"] == 1
+    row = place[moves["state"]]
+    whose = np.concatenate([bucket[tally.entries["bucket"][sure]], bucket[moves["bucket"][ended]]])
+    state = np.concatenate([np.zeros(int(sure.sum()), np.int64), row[ended]])
+    target = np.concatenate([place[tally.entries["state"][sure]], place[moves["next"][ended]]])
+    at = np.concatenate([np.zeros(int(sure.sum()), np.int64), moves["bin"][ended]])
+    n = np.concatenate([tally.entries["n"][sure], moves["n"][ended]]).astype(np.float64)
+    dwell = join_limbs(moves, "dwell")[ended] / DAY_US
+    total = np.concatenate([np.zeros(int(sure.sum())), dwell])
+    key = (state * nodes.n_nodes + target) * n_bins + at
+    cells, cell = np.unique(key, return_inverse=True)
+    kept = is_open & censored
+    stays = Stays(
+        n_states=nodes.n_rows, n_targets=nodes.n_nodes, n_bins=n_bins,
+        state=cells // n_bins // nodes.n_nodes, target=cells // n_bins % nodes.n_nodes, bin=cells % n_bins,
+        n=np.bincount(cell, n, len(cells)), total=np.bincount(cell, total, len(cells)), lower=lower, upper=upper,
+        open_state=row[kept], open_bin=moves["bin"][kept], open_n=moves["n"][kept].astype(np.float64),
+        survivor_n=np.bincount(row[survives], moves["n"][survives], nodes.n_rows).astype(np.float64),
+        survivor_target=None if rules.silence_us is None else nodes.n_nodes - 1,
+        survivor_dwell=float(upper[-1]),
+    )
+    by_bucket = BucketStays(
+        n_buckets=int(bucket.max()) + 1, bucket=whose, cell=cell, n=n,
+        open_bucket=bucket[moves["bucket"][kept]], open_state=stays.open_state, open_bin=stays.open_bin,
+        open_n=stays.open_n, survivor_bucket=bucket[moves["bucket"][survives]], survivor_state=row[survives],
+        survivor_n=moves["n"][survives].astype(np.float64),
+    )
+    return stays, by_bucket
+
+
+def without_open(stays: Stays, by_bucket: BucketStays, rows: np.ndarray) -> tuple[Stays, BucketStays]:
+    """Return the same stays with the open ones of some rows (a mask over rows) left out."""
+    keep = ~rows[stays.open_state]
+    mine = ~rows[by_bucket.open_state]
+    return (
+        replace(stays, open_state=stays.open_state[keep], open_bin=stays.open_bin[keep], open_n=stays.open_n[keep]),
+        replace(by_bucket, open_bucket=by_bucket.open_bucket[mine], open_state=by_bucket.open_state[mine],
+                open_bin=by_bucket.open_bin[mine], open_n=by_bucket.open_n[mine]),
+    )
+
+
+def journey_stays(tally: Tally) -> tuple[Stays, BucketStays]:
+    """Return whole journeys with a sure entry as stays in one state, ended by their outcome or still open.
+
+    Returns
+    -------
+    stays : Stays
+        One state; column c is the outcome with code c + 1 (lapsed is column 1, see `outcome_column`).
+    by_bucket : BucketStays
+        The same by non-empty bucket.
+    """
+    table, rules = tally.journeys, tally.rules
+    edges = elapsed_edges(rules.silence_us, tally.whole_days, rules.horizons_us)
+    bucket = live_buckets(tally)
+    sure = table["sure"] == 1
+    is_open = sure & (table["outcome"] == OPEN)
+    ended = sure & (table["outcome"] != OPEN)
+    n_bins = int(table["bin"].max()) + 1 if len(table["n"]) else 1
+    lower, upper = bin_bounds_days(edges, n_bins)
+    target = outcome_column(table["outcome"][ended])
+    cells, cell = np.unique(target * n_bins + table["bin"][ended], return_inverse=True)
+    n = table["n"][ended].astype(np.float64)
+    total = join_limbs(table, "elapsed")[ended] / DAY_US
+    none = np.zeros(0, np.int64)
+    zeros = np.zeros(int(is_open.sum()), np.int64)
+    open_n: FloatArray = table["n"][is_open].astype(np.float64)
+    stays = Stays(
+        n_states=1, n_targets=outcome_column(FIRST_OUTCOME + len(rules.outcomes)), n_bins=n_bins,
+        state=np.zeros(len(cells), np.int64), target=cells // n_bins, bin=cells % n_bins,
+        n=np.bincount(cell, n, len(cells)), total=np.bincount(cell, total, len(cells)), lower=lower, upper=upper,
+        open_state=zeros, open_bin=table["bin"][is_open], open_n=open_n, survivor_n=np.zeros(1),
+    )
+    by_bucket = BucketStays(
+        n_buckets=int(bucket.max()) + 1, bucket=bucket[table["bucket"][ended]], cell=cell, n=n,
+        open_bucket=bucket[table["bucket"][is_open]], open_state=zeros, open_bin=stays.open_bin, open_n=open_n,
+        survivor_bucket=none, survivor_state=none, survivor_n=np.zeros(0),
+    )
+    return stays, by_bucket
+
+
+def outcome_column(code: IntArray | int) -> IntArray | int:
+    """Return the column of `journey_stays` for an outcome's code (column 0 is the journey itself)."""
+    return code + 1
+
+
+def _node_of_code(tally: Tally, nodes: Nodes) -> IntArray:
+    """Return the node of each code in the tally's tables; -1 where there is none."""
+    place = np.full(len(tally.labels), -1)
+    n_outcomes = len(tally.rules.outcomes)
+    place[LAPSED] = nodes.n_nodes - 1 if tally.rules.silence_us is not None else -1
+    place[FIRST_OUTCOME : FIRST_OUTCOME + n_outcomes] = nodes.n_rows + np.arange(n_outcomes)
+    place[tally.first_state :] = 1 + np.arange(len(tally.states))
+    return place

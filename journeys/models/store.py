@@ -1,0 +1,84 @@
+"""A fit on disk: its moves and influence if the chain is known, else the tally and the choices of the fit."""
+
+from __future__ import annotations
+
+import json
+import os
+from typing import TYPE_CHECKING
+
+import pyarrow as pa
+import pyarrow.parquet as pq
+
+from journeys.errors import StoreError
+from journeys.files import written_whole
+from journeys.models.model import JourneyModel
+from journeys.models.stays import Nodes
+from journeys.tally import store as tally_store
+
+if TYPE_CHECKING:
+    from journeys.models.fit import JourneyFit
+
+FORMAT_VERSION = 1
+HEAD = b"journeys fit"
+_COLUMNS = ("move_state", "move_target", "n_moves", "probability", "mean", "second")
+
+
+def save(fit: JourneyFit, path: str | os.PathLike[str]) -> None:
+    """Write a fit to one Parquet file: small, since it holds counts and never rows.
+
+    Parameters
+    ----------
+    fit : JourneyFit
+        What to keep.
+    path : str or path-like
+        Where.
+    """
+    if fit.tally is not None:
+        tally_store.save(fit.tally, path, {HEAD: json.dumps({"open_moves": fit.open_moves}).encode()})
+        return
+    head = {"format_version": FORMAT_VERSION, "states": fit.states, "outcomes": fit.outcomes,
+            "converted": fit.converted, "row_flags": fit.row_flags}
+    table = pa.table({name: getattr(fit, name) for name in _COLUMNS})
+    with written_whole(path) as part:
+        pq.write_table(table.replace_schema_metadata({HEAD: json.dumps(head).encode()}), part)
+
+
+def load(path: str | os.PathLike[str]) -> JourneyFit:
+    """Read a saved fit.
+
+    Parameters
+    ----------
+    path : str or path-like
+        A file written by `save`.
+
+    Returns
+    -------
+    JourneyFit
+        With the same numbers as the one saved.
+
+    Raises
+    ------
+    StoreError
+        If the file is missing, damaged or no fit.
+    """
+    from journeys.models.fit import JourneyFit
+
+    try:
+        head = json.loads((pq.read_schema(path).metadata or {})[HEAD])
+        if "open_moves" in head:
+            return JourneyModel(open_moves=head["open_moves"]).fit(tally_store.load(path))
+        table = pq.read_table(path)
+        columns = {name: table[name].to_numpy() for name in _COLUMNS}
+    except FileNotFoundError:
+        msg = f"no fit at {os.fspath(path)!r}; wanted a file written by fit.save"
+        raise StoreError(msg) from None
+    except (KeyError, ValueError, pa.ArrowException, OSError) as error:
+        if isinstance(error, StoreError):
+            raise
+        msg = f"{os.fspath(path)!r} is not a whole fit; wanted a file written by fit.save: fit it again"
+        raise StoreError(msg) from None
+    if head.get("format_version") != FORMAT_VERSION:
+        msg = f"{os.fspath(path)!r} has format version {head.get('format_version')}; this program reads {FORMAT_VERSION}"
+        raise StoreError(msg)
+    return JourneyFit(nodes=Nodes(tuple(head["states"]), tuple(head["outcomes"])),
+                      converted=tuple(head["converted"]), row_flags=head["row_flags"], open_moves="known", **columns)

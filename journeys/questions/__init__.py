@@ -1,0 +1,1 @@
+"""What is asked of a fit: functions that return frozen results."""

@@ -1,0 +1,173 @@
+"""Can this log carry the model: what was left out of it, and what it is too short or too thin for."""
+
+from __future__ import annotations
+
+import warnings
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import pandas as pd
+
+from journeys.errors import JourneysWarning, LogError
+from journeys.intake.findings import UNREADABLE
+from journeys.intake.rules import JourneyRules
+from journeys.kernels.counting import FIRST_OUTCOME, OPEN
+from journeys.models.model import JourneyModel, refuse_without_outcome
+from journeys.tally.count import count_log
+from journeys.tally.tally import Tally
+
+GOOD, CARE, NO = "good", "with care", "no"
+
+
+@dataclass(frozen=True, eq=False)
+class Audit:
+    """Findings and verdicts on one log.
+
+    Attributes
+    ----------
+    tally : Tally
+        The counts looked at.
+    checks : DataFrame
+        One row per check: check_name, value, verdict ("good", "with care", "no"), note.
+    """
+
+    tally: Tally
+    checks: pd.DataFrame
+
+    @property
+    def findings(self) -> pd.DataFrame:
+        """Rows left out and oddities: code, column, n, rows, message."""
+        return self.tally.findings
+
+    @property
+    def carries_model(self) -> bool:
+        """Whether a model can be fitted at all."""
+        return bool((self.checks["verdict"] != NO).all())
+
+    def to_frame(self) -> pd.DataFrame:
+        """Return the checks, one tidy row each."""
+        return self.checks.copy()
+
+    def summary(self) -> str:
+        """Return checks and findings as plain text."""
+        found = self.findings[["code", "column", "n", "message"]]
+        rows = found.to_string(index=False) if len(found) else "none"
+        return f"{self!r}\n\n{self.checks.to_string(index=False)}\n\nFindings\n{rows}"
+
+    def __repr__(self) -> str:
+        """Return one line."""
+        says = "can carry the model" if self.carries_model else "cannot carry the model"
+        return f"<Audit: the log {says}; {len(self.findings)} kinds of findings>"
+
+    def _repr_html_(self) -> str:
+        return str(self.checks.to_html(index=False) + self.findings.to_html(index=False))
+
+
+def audit(source: Any, rules: JourneyRules | None = None, *, progress: bool = False) -> Audit:
+    """Return what was left out of a log and whether it can carry the model.
+
+    Parameters
+    ----------
+    source : log or Tally
+        Anything `journeys.tally` reads, or a tally.
+    rules : JourneyRules, optional
+        What a journey is; not needed for a tally.
+    progress : bool
+        Show a progress bar on stderr.
+
+    Returns
+    -------
+    Audit
+        Findings and checks.
+
+    Raises
+    ------
+    LogError
+        If the log cannot be read, or no outcome named in the rules was ever seen.
+    TypeError
+        If a log comes without rules.
+
+    Examples
+    --------
+    >>> import pandas as pd
+    >>> days = pd.to_datetime(["2025-01-01", "2025-01-02", "2025-04-01"], utc=True)
+    >>> log = pd.DataFrame({"member": [1, 1, 2], "event": ["visit", "joined", "visit"], "happened": days})
+    >>> rules = JourneyRules("member", "happened", "event", converted=["joined"], silence="30d",
+    ...                      complete_history=True)
+    >>> audit(log, rules).carries_model
+    True
+    """
+    if isinstance(source, Tally):
+        tally = source
+    elif rules is None:
+        msg = "rules are missing; wanted a JourneyRules beside a log"
+        raise TypeError(msg)
+    else:
+        tally = count_log(source, rules, progress=progress)
+    refuse_without_outcome(tally)
+    rows = [_unreadable(tally), _length(tally), _sure(tally), _undecided(tally), *_outcomes(tally), *_fit(tally)]
+    return Audit(tally, pd.DataFrame(rows, columns=["check_name", "value", "verdict", "note"]))
+
+
+def _unreadable(tally: Tally) -> tuple[str, str, str, str]:
+    n = sum(tally.record.n(code) for code in UNREADABLE)
+    share, limit = n / max(tally.n_rows, 1), tally.rules.limits["unreadable"]
+    verdict = GOOD if share <= limit else NO
+    return "unreadable rows", f"{n:,} of {tally.n_rows:,} ({share:.2%})", verdict, f"limit {limit:.2%}"
+
+
+def _length(tally: Tally) -> tuple[str, str, str, str]:
+    value = f"{tally.days:.1f} days"
+    if tally.rules.silence_us is None:
+        return "length of the log", value, GOOD, "no silence given: nothing lapses"
+    silences = tally.days / (tally.rules.silence_us / 86_400e6)
+    value += f", {silences:.1f} silences"
+    if silences <= 1:
+        return "length of the log", value, NO, "nobody can be seen to lapse: wanted more than one silence"
+    if silences < 1.5:
+        return "length of the log", value, CARE, "under one and a half silences: times given conversion are shaky"
+    return "length of the log", value, GOOD, ""
+
+
+def _sure(tally: Tally) -> tuple[str, str, str, str]:
+    sure = int(tally.entries["n"][tally.entries["sure"] == 1].sum())
+    share = sure / max(tally.n_journeys, 1)
+    verdict = NO if not sure else GOOD if share >= 0.5 else CARE
+    note = "the others may have begun before the log" if share < 1 else ""
+    return "journeys whose start was seen", f"{sure:,} of {tally.n_journeys:,} ({share:.1%})", verdict, note
+
+
+def _undecided(tally: Tally) -> tuple[str, str, str, str]:
+    n = int(tally.journeys["n"][tally.journeys["outcome"] == OPEN].sum())
+    share = n / max(tally.n_journeys, 1)
+    return ("journeys undecided yet", f"{n:,} of {tally.n_journeys:,} ({share:.1%})",
+            GOOD if share < 0.5 else CARE, "a plain count treats them as lost")
+
+
+def _outcomes(tally: Tally) -> list[tuple[str, str, str, str]]:
+    rows = []
+    for code, name in enumerate(tally.rules.outcomes, start=FIRST_OUTCOME):
+        n = int(tally.journeys["n"][tally.journeys["outcome"] == code].sum())
+        note = "" if n else "never seen: look at its spelling in the rules"
+        rows.append((f"journeys ended by {name}", f"{n:,}", GOOD if n >= 20 else CARE, note))
+    bare = tally.record.n("outcome_without_states")
+    share = bare / max(int(np.sum(tally.journeys["n"][tally.journeys["outcome"] >= FIRST_OUTCOME])), 1)
+    rows.append(("outcomes with nothing before them", f"{bare:,} ({share:.1%} of outcomes)",
+                 GOOD if share < 0.2 else CARE, "are their earlier events missing from the log?" if bare else ""))
+    return rows
+
+
+def _fit(tally: Tally) -> list[tuple[str, str, str, str]]:
+    """Fit once and tell what the rows of the matrix say of themselves."""
+    try:
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore", JourneysWarning)
+            fit = JourneyModel().fit(tally)
+    except LogError as error:
+        return [("a model can be fitted", "no", NO, str(error))]
+    rows = [("a model can be fitted", "yes", GOOD, "")]
+    for text in dict.fromkeys(fit.row_flags.values()):
+        names = [name for name, flag in fit.row_flags.items() if flag == text]
+        rows.append((text, ", ".join(names), CARE, f"answers that lean on these states are flagged {text!r}"))
+    return rows

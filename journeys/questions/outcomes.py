@@ -1,0 +1,93 @@
+"""Where journeys end: the probability of each outcome from entry and from every state."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import ClassVar
+
+import numpy as np
+import pandas as pd
+
+from journeys import checks
+from journeys.kernels.absorption import passage
+from journeys.models.fit import JourneyFit
+from journeys.questions.linear import TOO_FEW, leaning, probabilities, spread, starts_counted
+from journeys.results import LOGIT, Estimates, Result, joined_flags
+
+UNREACHABLE = "cannot be reached"
+
+
+@dataclass(frozen=True, eq=False)
+class OutcomesResult(Result):
+    """Outcome probabilities by start state and outcome."""
+
+    title: ClassVar[str] = "Where journeys end"
+
+
+def outcomes(fit: JourneyFit, *, confidence_level: float = 0.95) -> OutcomesResult:
+    """Return the probability of each outcome, from entry and from every state.
+
+    Parameters
+    ----------
+    fit : JourneyFit
+        The chain.
+    confidence_level : float
+        Between 0 and 1.
+
+    Returns
+    -------
+    OutcomesResult
+        One row per (start_state, outcome); the outcomes of a start sum to 1 unless some walks never end.
+
+    Raises
+    ------
+    ValueError
+        If the level is not between 0 and 1, or the chain has no outcomes.
+
+    Notes
+    -----
+    The hitting probabilities h = N P_o with N = (I - P_tt)^-1; intervals on the logit scale from the
+    linearised cluster variance, dh_s/dP_ij = N_si h_j.
+
+    References
+    ----------
+    J. G. Kemeny, J. L. Snell, Finite Markov Chains, Van Nostrand 1960, chapter III.
+
+    Examples
+    --------
+    >>> import pandas as pd
+    >>> chain = pd.DataFrame([[0.5, 0.3, 0.2]], index=["basket"], columns=["basket", "joined", "declined"])
+    >>> outcomes(JourneyFit.from_matrix(chain)).to_frame()[["start_state", "outcome", "estimate"]].round(3).values.tolist()
+    [['entry', 'joined', 0.6], ['entry', 'declined', 0.4], ['basket', 'joined', 0.6], ['basket', 'declined', 0.4]]
+    """
+    level = checks.confidence_level(confidence_level)
+    nodes = fit.nodes
+    if not nodes.outcomes:
+        msg = "this chain has no outcomes; ask first_passage to a state instead"
+        raise ValueError(msg)
+    parts, unreachable = [], []
+    p, trials = fit.probability, starts_counted(fit)
+    nothing = np.zeros((nodes.n_rows, len(p)))
+    for outcome in nodes.outcomes:
+        to = passage(nodes.n_rows, nodes.n_nodes, fit.move_state, fit.move_target, p, p, p, fit.target_mask(outcome))
+        if fit.influence is None:
+            derivative = nothing
+        else:
+            derivative = np.stack([to.gradients(s)["probability"][0] for s in range(nodes.n_rows)])
+        std_error, df = spread(fit, derivative, nothing, nothing)
+        parts.append(probabilities(fit, to.probability, std_error, df, trials, LOGIT))
+        unreachable.append(np.isnan(to.mean_given))
+    joined = Estimates.joined(parts)
+    lean = [(np.tile(mask, len(nodes.outcomes)), text) for text, mask in leaning(fit).items()]
+    n = len(joined.value)
+    flag = joined_flags([(np.concatenate(unreachable), UNREACHABLE), (joined.few, TOO_FEW), *lean], n)
+    # Computed outcome by outcome, told start by start.
+    order = np.arange(n).reshape(len(nodes.outcomes), nodes.n_rows).T.ravel()
+    keys = pd.DataFrame({
+        "start_state": np.repeat(np.array(nodes.labels[: nodes.n_rows], dtype=object), len(nodes.outcomes)),
+        "outcome": np.tile(np.array(nodes.outcomes, dtype=object), nodes.n_rows),
+    })
+    return OutcomesResult(
+        keys=keys, estimates=joined.take(order), flag=flag[order],
+        counts={"n_effective": joined.n_effective[order]}, confidence_level=level,
+    )

@@ -1,0 +1,210 @@
+"""The main job's answer: every headline number of a log with its interval, beside what a plain count says."""
+
+from __future__ import annotations
+
+from collections.abc import Collection
+from dataclasses import dataclass
+
+import numpy as np
+import pandas as pd
+
+from journeys import checks
+from journeys.errors import LogError
+from journeys.kernels.counting import FIRST_OUTCOME, LAPSED, OPEN
+from journeys.models.fit import JourneyFit
+from journeys.questions.first_passage import FirstPassageResult, first_passage
+from journeys.questions.linear import leaning
+from journeys.questions.moves import MovesResult, moves
+from journeys.questions.outcomes import OutcomesResult, outcomes
+from journeys.questions.time_to_convert import IN_THE_END, SO_FAR, TimeToConvertResult, time_to_convert
+from journeys.tally.tally import Tally
+
+KEY_COLUMNS = ("section", "start_state", "state", "next_state", "outcome", "measure", "horizon", "basis")
+
+
+@dataclass(frozen=True)
+class PlainCount:
+    """What a plain count of the log says.
+
+    Attributes
+    ----------
+    n_people, n_journeys : int
+        Customers, and journeys begun.
+    n_sure : int
+        Journeys whose start was seen.
+    n_undecided : int
+        Journeys still open.
+    n_by_outcome : dict of str to int
+        Journeys ended so far, by outcome.
+    n_converted : int
+        Of these, the conversions.
+    """
+
+    n_people: int
+    n_journeys: int
+    n_sure: int
+    n_undecided: int
+    n_by_outcome: dict[str, int]
+    n_converted: int
+
+
+@dataclass(frozen=True, eq=False)
+class Overview:
+    """All parts of the summary of one fit.
+
+    Attributes
+    ----------
+    fit : JourneyFit
+        What was asked.
+    plain : PlainCount
+        The plain count of the same log.
+    conversion : TimeToConvertResult
+        Share converted by horizon and in the end; mean steps and days.
+    endings : OutcomesResult
+        Where journeys end.
+    steps, days : FirstPassageResult
+        From entry and every state to conversion.
+    matrix : MovesResult
+        Every move.
+    """
+
+    fit: JourneyFit
+    plain: PlainCount
+    conversion: TimeToConvertResult
+    endings: OutcomesResult
+    steps: FirstPassageResult
+    days: FirstPassageResult
+    matrix: MovesResult
+
+    def reconciliation(self) -> pd.DataFrame:
+        """Return how the expected share comes out of the plain one, line by line.
+
+        Returns
+        -------
+        DataFrame
+            Columns line, n, of, estimate, low, high, note.
+        """
+        plain = self.plain
+        decided = plain.n_journeys - plain.n_undecided
+        frame = self.conversion.to_frame()
+        frame = frame[frame.measure == "converted"].set_index("horizon")
+        so_far, end = frame.loc[SO_FAR], frame.loc[IN_THE_END]
+        rows = [
+            ("plain count: converted so far, of all journeys", plain.n_converted, plain.n_journeys, so_far.estimate,
+             so_far.low, so_far.high, "too low: the undecided count as lost"),
+            ("converted so far, of decided journeys only", plain.n_converted, decided,
+             plain.n_converted / decided if decided else np.nan, np.nan, np.nan,
+             "off: a conversion is seen at once, a loss only after the silence"),
+            ("undecided yet", plain.n_undecided, plain.n_journeys, plain.n_undecided / plain.n_journeys, np.nan,
+             np.nan, "kept, as lasting at least as long as they were seen"),
+            ("may have begun before the log", plain.n_journeys - plain.n_sure, plain.n_journeys,
+             1 - plain.n_sure / plain.n_journeys, np.nan, np.nan,
+             "their moves count, their first event is not taken for an entry"),
+            ("expected in the end, of all who come in", np.nan, np.nan, end.estimate, end.low, end.high, end.flag),
+        ]
+        return pd.DataFrame(rows, columns=["line", "n", "of", "estimate", "low", "high", "note"])
+
+    def notes(self) -> list[tuple[str, str]]:
+        """Return what the matrix says of itself: pairs of a flag and the states it concerns."""
+        flags = self.fit.row_flags
+        told = [(text, ", ".join(name for name, flag in flags.items() if flag == text))
+                for text in dict.fromkeys(flags.values())]
+        return [(text, names) for text, names in told if leaning(self.fit)[text][0]]
+
+    def to_frame(self) -> pd.DataFrame:
+        """Return every number of the summary, one tidy row each.
+
+        Returns
+        -------
+        DataFrame
+            Columns section, the keys of all sections, estimate, std_error, low, high, confidence_level,
+            counts, flag.
+        """
+        sections = {"time_to_convert": self.conversion, "outcomes": self.endings,
+                    "first_passage_steps": self.steps, "first_passage_days": self.days, "moves": self.matrix}
+        frames = [result.to_frame().assign(section=name) for name, result in sections.items()]
+        whole = pd.concat([self._counts(), *frames], ignore_index=True)
+        return whole[[*(key for key in KEY_COLUMNS if key in whole),
+                      *(column for column in whole if column not in KEY_COLUMNS)]]
+
+    def _counts(self) -> pd.DataFrame:
+        plain = self.plain
+        counts = {"people": plain.n_people, "journeys": plain.n_journeys, "sure entries": plain.n_sure,
+                  "undecided": plain.n_undecided}
+        rows = [(name, None, n) for name, n in counts.items()]
+        rows += [("ended", outcome, n) for outcome, n in plain.n_by_outcome.items()]
+        frame = pd.DataFrame(rows, columns=["measure", "outcome", "estimate"])
+        return frame.assign(section="counts", basis="log", estimate=frame.estimate.astype(float), flag="",
+                            std_error=np.nan, low=np.nan, high=np.nan, confidence_level=np.nan)
+
+    def __repr__(self) -> str:
+        """Return one line."""
+        return f"<Overview: {self.plain.n_journeys:,} journeys of {self.plain.n_people:,} people>"
+
+    def _repr_html_(self) -> str:
+        return str(self.reconciliation().to_html(index=False))
+
+
+def summarise(
+    fit: JourneyFit, horizons: Collection[checks.Duration] | None = None, *, confidence_level: float = 0.95
+) -> Overview:
+    """Return the summary of a fit: counts, conversion, times, endings, moves, and the plain count beside.
+
+    Parameters
+    ----------
+    fit : JourneyFit
+        A fit to a tally.
+    horizons : collection of durations, optional
+        As in `time_to_convert`.
+    confidence_level : float
+        Between 0 and 1.
+
+    Returns
+    -------
+    Overview
+        Its `to_frame` is what the command writes.
+
+    Raises
+    ------
+    LogError
+        If the fit is a known chain without a log.
+    ValueError
+        If a horizon is not a duration, or the level is not between 0 and 1.
+    """
+    if fit.tally is None:
+        msg = "this chain was given, not fitted to a log; ask outcomes or first_passage instead"
+        raise LogError(msg)
+    level = checks.confidence_level(confidence_level)
+    return Overview(
+        fit=fit, plain=plain_count(fit.tally),
+        conversion=time_to_convert(fit, horizons, confidence_level=level),
+        endings=outcomes(fit, confidence_level=level),
+        steps=first_passage(fit, clock="steps", confidence_level=level),
+        days=first_passage(fit, clock="time", confidence_level=level),
+        matrix=moves(fit, confidence_level=level),
+    )
+
+
+def plain_count(tally: Tally) -> PlainCount:
+    """Return the plain counts of a tally.
+
+    Parameters
+    ----------
+    tally : Tally
+        The counts.
+
+    Returns
+    -------
+    PlainCount
+        Journeys by what became of them so far.
+    """
+    n, outcome = tally.journeys["n"], tally.journeys["outcome"]
+    ended = {name: int(n[outcome == code].sum())
+             for code, name in enumerate(tally.rules.outcomes, start=FIRST_OUTCOME)}
+    if tally.rules.silence_us is not None:
+        ended["lapsed"] = int(n[outcome == LAPSED].sum())
+    return PlainCount(
+        n_people=tally.n_people, n_journeys=tally.n_journeys,
+        n_sure=int(n[tally.journeys["sure"] == 1].sum()), n_undecided=int(n[outcome == OPEN].sum()),
+        n_by_outcome=ended, n_converted=sum(ended[name] for name in tally.rules.converted),
+    )

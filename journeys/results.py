@@ -1,0 +1,165 @@
+"""What every answer has in common: tidy frames, intervals at any level, one-line and notebook display."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field, fields
+from typing import ClassVar
+
+import numpy as np
+import pandas as pd
+
+from journeys import checks
+from journeys.kernels.arrays import BoolArray, FloatArray
+from journeys.kernels.intervals import clopper_pearson, log_interval, logit_interval
+
+# How an interval is made from an estimate and its standard error.
+LOGIT, LOG, CELL, KNOWN = "logit", "log", "cell", "known"
+
+
+@dataclass(frozen=True, eq=False)
+class Estimates:
+    """Numbers with what their intervals need, one array element per number.
+
+    Attributes
+    ----------
+    value, std_error, df : ndarray, shape (n,)
+        Estimate, standard error on its own scale and degrees of freedom of its t quantile.
+    scale : ndarray of str, shape (n,)
+        "logit" for probabilities, "log" for times, "cell" for single moves (Clopper-Pearson at `n_effective`),
+        "known" for numbers without uncertainty.
+    n_effective : ndarray, shape (n,)
+        Independent trials that would carry the same information; NaN where that has no meaning.
+    few : ndarray of bool, shape (n,)
+        Too few events for a two-sided interval: one exact bound for a probability, none for a time.
+    """
+
+    value: FloatArray
+    std_error: FloatArray
+    df: FloatArray
+    scale: np.ndarray
+    n_effective: FloatArray
+    few: BoolArray
+
+    def bounds(self, confidence_level: float) -> tuple[FloatArray, FloatArray]:
+        """Return the lower and upper bounds at a level.
+
+        Parameters
+        ----------
+        confidence_level : float
+            Between 0 and 1.
+
+        Returns
+        -------
+        low, high : ndarray, shape (n,)
+            NaN where there is no bound to give.
+        """
+        low, high = np.full(len(self.value), np.nan), np.full(len(self.value), np.nan)
+        share = np.isin(self.scale, (LOGIT, CELL))
+        one_sided = share & self.few
+        for mask, (lower, upper) in (
+            ((self.scale == LOGIT) & ~self.few,
+             logit_interval(self.value, self.std_error, self.df, confidence_level)),
+            ((self.scale == LOG) & ~self.few, log_interval(self.value, self.std_error, self.df, confidence_level)),
+            ((self.scale == CELL) & ~self.few, self._exact(confidence_level, "both")),
+            (one_sided & (self.value <= 0.5), self._exact(confidence_level, "upper")),
+            (one_sided & (self.value > 0.5), self._exact(confidence_level, "lower")),
+            ((self.scale == KNOWN) & np.isfinite(self.value), (self.value, self.value)),
+        ):
+            low[mask], high[mask] = lower[mask], upper[mask]
+        return low, high
+
+    def _exact(self, confidence_level: float, side: str) -> tuple[FloatArray, FloatArray]:
+        share = np.where(np.isin(self.scale, (LOGIT, CELL)), np.clip(self.value, 0.0, 1.0), np.nan)
+        trials = np.nan_to_num(self.n_effective)
+        return clopper_pearson(share * trials, trials, confidence_level, side)  # type: ignore[arg-type]
+
+    @classmethod
+    def joined(cls, parts: list[Estimates]) -> Estimates:
+        """Return several one after another."""
+        return cls(*(np.concatenate([getattr(part, f.name) for part in parts]) for f in fields(cls)))
+
+    def take(self, index: np.ndarray) -> Estimates:
+        """Return those at `index`."""
+        return Estimates(*(getattr(self, f.name)[index] for f in fields(self)))
+
+
+@dataclass(frozen=True, eq=False)
+class Result:
+    """An answer: keys, estimates, counts and flags of equal length.
+
+    Attributes
+    ----------
+    keys : DataFrame
+        What each number is about.
+    estimates : Estimates
+        The numbers.
+    counts : mapping of str to ndarray
+        Further columns, named for what they count.
+    flag : ndarray of str
+        What to know before using the number; empty where there is nothing.
+    confidence_level : float
+        Level that `to_frame` shows.
+    """
+
+    title: ClassVar[str] = "Result"
+
+    keys: pd.DataFrame
+    estimates: Estimates
+    flag: np.ndarray
+    counts: Mapping[str, np.ndarray] = field(default_factory=dict)
+    confidence_level: float = 0.95
+
+    def to_frame(self) -> pd.DataFrame:
+        """Return one tidy row per estimate.
+
+        Returns
+        -------
+        DataFrame
+            The keys, then estimate, std_error, low, high, confidence_level, counts, flag.
+        """
+        low, high = self.estimates.bounds(self.confidence_level)
+        frame = self.keys.assign(estimate=self.estimates.value, std_error=self.estimates.std_error, low=low,
+                                 high=high, confidence_level=self.confidence_level)
+        return frame.assign(**dict(self.counts), flag=self.flag)
+
+    def confidence_interval(self, confidence_level: float = 0.95) -> pd.DataFrame:
+        """Return the intervals at another level, without computing the answer again.
+
+        Parameters
+        ----------
+        confidence_level : float
+            Between 0 and 1.
+
+        Returns
+        -------
+        DataFrame
+            The keys, then low, high, confidence_level.
+
+        Raises
+        ------
+        ValueError
+            If the level is not between 0 and 1.
+        """
+        level = checks.confidence_level(confidence_level)
+        low, high = self.estimates.bounds(level)
+        return self.keys.assign(low=low, high=high, confidence_level=level)
+
+    def summary(self) -> str:
+        """Return the answer as a plain text table."""
+        return f"{self.title}\n{self.to_frame().to_string(index=False)}"
+
+    def __repr__(self) -> str:
+        """Return one line."""
+        return f"<{type(self).__name__}: {len(self.keys)} rows at {self.confidence_level:.0%} confidence>"
+
+    def _repr_html_(self) -> str:
+        return str(self.to_frame().to_html(index=False, escape=True))
+
+
+def joined_flags(parts: list[tuple[BoolArray, str]], n: int) -> np.ndarray:
+    """Return, for each of `n` rows, the texts whose masks hold there, joined by semicolons."""
+    flag = np.full(n, "", dtype=object)
+    for mask, text in parts:
+        flag = np.where(mask, np.where(flag == "", text, flag + "; " + text), flag)
+    return flag

@@ -1,0 +1,50 @@
+"""The key of a tally row packed into one whole number, so that one sort serves all its parts."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+Ints = NDArray[np.int64]
+
+_BIN_BITS, _CODE_BITS = 22, 16
+MOST_CODES = 1 << _CODE_BITS
+MOST_BINS = 1 << _BIN_BITS
+
+
+@dataclass(frozen=True)
+class KeyParts:
+    """Bucket, two codes, a bin and a flag; unused parts are zero."""
+
+    bucket: Ints
+    first: Ints
+    second: Ints
+    bin: Ints
+    flag: Ints
+
+
+def pack(bucket: Ints, first: Ints, second: Ints | int = 0, bins: Ints | int = 0, flag: Ints | int = 0) -> Ints:
+    """Pack the parts of a key, the bucket in front."""
+    key = bucket.astype(np.int64) << _CODE_BITS
+    key |= first
+    key <<= _CODE_BITS
+    key |= second
+    key <<= _BIN_BITS
+    key |= bins
+    key <<= 1
+    key |= flag
+    return key
+
+
+def unpack(key: Ints) -> KeyParts:
+    """Take a packed key apart."""
+    code = MOST_CODES - 1
+    return KeyParts(
+        bucket=key >> (2 * _CODE_BITS + _BIN_BITS + 1),
+        first=(key >> (_CODE_BITS + _BIN_BITS + 1)) & code,
+        second=(key >> (_BIN_BITS + 1)) & code,
+        bin=(key >> 1) & (MOST_BINS - 1),
+        flag=key & 1,
+    )

@@ -1,0 +1,129 @@
+"""A tally on disk: one Parquet file, its head (format, rules, span, checksum) in the file's metadata."""
+
+from __future__ import annotations
+
+import json
+import os
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+import pyarrow as pa
+import pyarrow.parquet as pq
+
+from journeys.errors import JourneysError, StoreError
+from journeys.files import written_whole
+from journeys.intake.findings import Findings
+from journeys.intake.rules import JourneyRules
+from journeys.tally.tally import CUSTOMER_SUMS, KEYS, SUMS, Tally
+
+if TYPE_CHECKING:
+    from journeys.tally.accumulate import Columns
+
+FORMAT_VERSION = 1
+HEAD = b"journeys"
+_TABLES = (*KEYS, "customers")
+
+
+def columns_of(table: str) -> tuple[str, ...]:
+    """Return the columns of a table in their order."""
+    if table == "customers":
+        return ("bucket", *CUSTOMER_SUMS, "largest_events")
+    return (*(part for part in KEYS[table] if part != "-"), *SUMS[table])
+
+
+def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | None = None) -> None:
+    """Write a tally to one Parquet file, whole or not at all.
+
+    Parameters
+    ----------
+    tally : Tally
+        What to keep.
+    path : str or path-like
+        Where.
+    more : dict of bytes to bytes, optional
+        Further entries of the file's metadata.
+
+    Notes
+    -----
+    All tables stand in one file, told apart by the column `table`; a column that a table lacks is null there.
+    """
+    parts = []
+    every = list(dict.fromkeys(column for table in _TABLES for column in columns_of(table)))
+    for name in _TABLES:
+        held = getattr(tally, name)
+        size = len(held["bucket"])
+        label = pa.DictionaryArray.from_arrays(pa.array(np.zeros(size, np.int8)), pa.array([name]))
+        parts.append(pa.table({"table": label.cast(pa.string())} | {
+            column: pa.array(held[column]) if column in held else pa.nulls(size, pa.int64()) for column in every
+        }))
+    head = {
+        "format_version": FORMAT_VERSION, "rules": tally.rules.to_dict(), "states": tally.states,
+        "log_start_us": tally.log_start_us, "as_of_us": tally.as_of_us, "whole_days": tally.whole_days,
+        "n_rows": tally.n_rows, "findings": tally.record.to_dict(), "checksum": tally.checksum,
+    }
+    whole = pa.concat_tables(parts).replace_schema_metadata({HEAD: json.dumps(head).encode(), **(more or {})})
+    with written_whole(path) as part:
+        pq.write_table(whole, part, compression="zstd")
+
+
+def is_tally(path: str | os.PathLike[str]) -> bool:
+    """Tell whether a path is a saved tally (as against an event log)."""
+    try:
+        return Path(path).is_file() and HEAD in (pq.read_schema(path).metadata or {})
+    except (pa.ArrowInvalid, OSError):
+        return False
+
+
+def load(path: str | os.PathLike[str]) -> Tally:
+    """Read a saved tally.
+
+    Parameters
+    ----------
+    path : str or path-like
+        A file that `save` has written.
+
+    Returns
+    -------
+    Tally
+        Equal to the one saved.
+
+    Raises
+    ------
+    StoreError
+        If the file is missing, not a tally, of another format version, or damaged.
+    """
+    try:
+        table = pq.read_table(path)
+        head = json.loads((table.schema.metadata or {})[HEAD])
+    except FileNotFoundError:
+        msg = f"no tally at {os.fspath(path)!r}; wanted a file written by tally.save"
+        raise StoreError(msg) from None
+    except (KeyError, pa.ArrowException, OSError, ValueError):
+        msg = f"{os.fspath(path)!r} is not a whole tally; wanted a file written by tally.save: make it again from the log"
+        raise StoreError(msg) from None
+    if head.get("format_version") != FORMAT_VERSION:
+        msg = (f"{os.fspath(path)!r} has format version {head.get('format_version')}, this program reads "
+               f"{FORMAT_VERSION}; count the log again")
+        raise StoreError(msg)
+    try:
+        tally = _from_parts(table, head)
+        whole = tally.checksum == head["checksum"]
+    except (KeyError, TypeError, ValueError, AttributeError, pa.ArrowException, JourneysError):
+        whole = False
+    if not whole:
+        msg = f"{os.fspath(path)!r} is damaged (its checksum does not fit); count the log again"
+        raise StoreError(msg)
+    return tally
+
+
+def _from_parts(table: pa.Table, head: dict[str, Any]) -> Tally:
+    which = np.asarray(table["table"].to_pandas(), dtype=str)
+    held: dict[str, Columns] = {}
+    for name in _TABLES:
+        rows = table.filter(pa.array(which == name))
+        held[name] = {column: rows[column].to_numpy().astype(np.int64) for column in columns_of(name)}
+    return Tally(
+        JourneyRules.from_dict(head["rules"]), tuple(head["states"]), head["log_start_us"], head["as_of_us"],
+        head["whole_days"], head["n_rows"], *(held[name] for name in _TABLES), Findings.from_dict(head["findings"]),
+    )

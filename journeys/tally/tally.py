@@ -1,0 +1,262 @@
+"""The tally: what one pass over the log leaves behind. Small, additive, without a customer id."""
+
+from __future__ import annotations
+
+import json
+import os
+from collections.abc import Mapping
+from dataclasses import dataclass
+from functools import cached_property
+from hashlib import blake2b
+from typing import TYPE_CHECKING
+
+import numpy as np
+import pandas as pd
+
+from journeys.errors import JourneysError
+from journeys.intake.findings import Findings
+from journeys.intake.rules import JourneyRules
+from journeys.kernels.counting import FIRST_OUTCOME, LAPSED, OPEN
+from journeys.tally.accumulate import Columns, add_up, exact_limbs
+from journeys.tally.keys import pack, unpack
+
+if TYPE_CHECKING:
+    from typing import Self
+
+N_BUCKETS = 200
+
+# The parts of each table's key, in the order they are packed, and what is summed under it.
+KEYS: dict[str, tuple[str, ...]] = {
+    "moves": ("bucket", "state", "next", "bin", "busy"),
+    "entries": ("bucket", "state", "-", "-", "sure"),
+    "journeys": ("bucket", "state", "outcome", "bin", "sure"),
+}
+SUMS: dict[str, tuple[str, ...]] = {
+    "moves": ("n", "dwell_high", "dwell_low"),
+    "entries": ("n",),
+    "journeys": ("n", "steps", "steps_squared", "elapsed_high", "elapsed_low"),
+}
+CUSTOMER_SUMS = ("people", "j", "jj", "jx", "x", "xx")
+_CODED = ("state", "next", "outcome")
+
+
+def split_key(name: str, key: np.ndarray, sums: Mapping[str, np.ndarray]) -> Columns:
+    """Return a table's columns with its packed key taken apart."""
+    parts = unpack(key)
+    values = (parts.bucket, parts.first, parts.second, parts.bin, parts.flag)
+    return {part: value for part, value in zip(KEYS[name], values, strict=True) if part != "-"} | dict(sums)
+
+
+def join_key(name: str, table: Mapping[str, np.ndarray]) -> np.ndarray:
+    """Return the packed key of a table's rows."""
+    nothing = np.zeros(len(table["n"]), np.int64)
+    return pack(*(nothing if part == "-" else table[part] for part in KEYS[name]))
+
+
+@dataclass(frozen=True, eq=False)
+class Tally:
+    """Counts and sums of one event log, read by `rules`; made by `journeys.tally`.
+
+    Parameters
+    ----------
+    rules : JourneyRules
+        How the log was read.
+    states : tuple of str
+        The states seen, in alphabetical order.
+    log_start_us, as_of_us : int
+        The span of the log, microseconds UTC.
+    whole_days : bool
+        True where the log holds dates without a time.
+    n_rows : int
+        Rows read, whatever became of them.
+    moves, entries, journeys, customers : mapping of str to ndarray
+        The tables, one array per column, sorted by their keys; states and outcomes as positions in `labels`.
+    record : Findings
+        What was left out or looked odd.
+    """
+
+    rules: JourneyRules
+    states: tuple[str, ...]
+    log_start_us: int
+    as_of_us: int
+    whole_days: bool
+    n_rows: int
+    moves: Columns
+    entries: Columns
+    journeys: Columns
+    customers: Columns
+    record: Findings
+
+    @property
+    def labels(self) -> tuple[str, ...]:
+        """Names of the codes in the tables: lapsed, open, the outcomes, the states."""
+        return ("lapsed", "open", *self.rules.outcomes, *self.states)
+
+    @property
+    def first_state(self) -> int:
+        """Position of the first state in `labels`."""
+        return FIRST_OUTCOME + len(self.rules.outcomes)
+
+    @property
+    def findings(self) -> pd.DataFrame:
+        """Rows left out and oddities: code, column, n, rows (up to 10 row numbers), message."""
+        return self.record.to_frame()
+
+    @property
+    def n_people(self) -> int:
+        """Customers with at least one journey."""
+        return int(self.customers["people"].sum())
+
+    @property
+    def n_journeys(self) -> int:
+        """Journeys begun, sure and unsure."""
+        return int(self.journeys["n"].sum())
+
+    @property
+    def as_of(self) -> pd.Timestamp:
+        """The moment the log is read at."""
+        return pd.Timestamp(self.as_of_us, unit="us", tz="UTC")
+
+    @property
+    def log_start(self) -> pd.Timestamp:
+        """The moment the log starts."""
+        return pd.Timestamp(self.log_start_us, unit="us", tz="UTC")
+
+    @property
+    def days(self) -> float:
+        """Length of the log in days."""
+        return (self.as_of_us - self.log_start_us) / 86_400e6
+
+    def table(self, name: str) -> pd.DataFrame:
+        """Return one table with names in place of codes and exact sums in microseconds.
+
+        Parameters
+        ----------
+        name : {"moves", "entries", "journeys", "customers"}
+            Which table.
+
+        Returns
+        -------
+        DataFrame
+            One row per key.
+
+        Raises
+        ------
+        ValueError
+            If there is no table of that name.
+        """
+        tables = {"moves": self.moves, "entries": self.entries, "journeys": self.journeys,
+                  "customers": self.customers}
+        if name not in tables:
+            msg = f"table {name!r} is not known; wanted one of {', '.join(tables)}"
+            raise ValueError(msg)
+        columns = tables[name]
+        labels = np.array(self.labels, dtype=object)
+        frame = {}
+        for column, values in columns.items():
+            if column.endswith("_high"):
+                total = column.removesuffix("_high")
+                frame[total] = pd.Series(exact_limbs(columns, total), dtype=object)
+            elif column.endswith("_low"):
+                continue
+            elif column in _CODED:
+                frame[column] = labels[values]
+            else:
+                frame[column] = values.astype(bool) if column in ("sure", "busy") else values
+        return pd.DataFrame(frame)
+
+    @cached_property
+    def checksum(self) -> str:
+        """Hexadecimal digest of the tables, the rules and the span; equal tallies have equal checksums."""
+        head = [self.rules.to_dict(), self.states, self.log_start_us, self.as_of_us, self.whole_days, self.n_rows]
+        digest = blake2b(json.dumps(head, sort_keys=True).encode(), digest_size=16)
+        for table in (self.moves, self.entries, self.journeys, self.customers):
+            for name, column in table.items():
+                digest.update(name.encode())
+                digest.update(np.ascontiguousarray(column, dtype="<i8").tobytes())
+        return digest.hexdigest()
+
+    def __eq__(self, other: object) -> bool:
+        """Tell whether the counts, the rules and the span are the same (findings' row numbers aside)."""
+        return self.checksum == other.checksum if isinstance(other, Tally) else NotImplemented
+
+    def __hash__(self) -> int:
+        """Hash by the checksum."""
+        return hash(self.checksum)
+
+    def __add__(self, other: Tally) -> Tally:
+        """Add the tally of other customers, read by the same rules over the same span.
+
+        Raises
+        ------
+        JourneysError
+            If rules, span or kind of times differ.
+        """
+        if not isinstance(other, Tally):
+            return NotImplemented
+        for what, mine, theirs in (
+            ("rules", self.rules, other.rules),
+            ("as_of", self.as_of, other.as_of),
+            ("log_start", self.log_start, other.log_start),
+            ("kind of times (dates or moments)", self.whole_days, other.whole_days),
+        ):
+            if mine != theirs:
+                msg = (f"tallies with different {what} cannot be added"
+                       + ("" if what == "rules" else f" ({mine} and {theirs})")
+                       + "; give both parts the same rules with as_of and log_start set")
+                raise JourneysError(msg)
+        states = tuple(sorted({*self.states, *other.states}))
+        mine, theirs = self._recoded(states), other._recoded(states)
+        people = {name: np.maximum(a, b) if name == "largest_events" else a + b
+                  for (name, a), b in zip(self.customers.items(), other.customers.values(), strict=True)}
+        people["bucket"] = self.customers["bucket"]
+        return Tally(
+            self.rules, states, self.log_start_us, self.as_of_us, self.whole_days, self.n_rows + other.n_rows,
+            *(_added(name, mine[name], theirs[name]) for name in KEYS), people, self.record + other.record,
+        )
+
+    def _recoded(self, states: tuple[str, ...]) -> dict[str, Columns]:
+        """Return the keyed tables with codes of the longer list of states."""
+        new = np.arange(len(self.labels))
+        place = {name: self.first_state + i for i, name in enumerate(states)}
+        new[self.first_state:] = [place[name] for name in self.states]
+        return {
+            name: {column: new[values] if column in _CODED else values for column, values in table.items()}
+            for name, table in (("moves", self.moves), ("entries", self.entries), ("journeys", self.journeys))
+        }
+
+    def save(self, path: str | os.PathLike[str]) -> None:
+        """Write the tally to one Parquet file (see `journeys.tally.store.save`)."""
+        from journeys.tally.store import save
+
+        save(self, path)
+
+    @classmethod
+    def load(cls, path: str | os.PathLike[str]) -> Self:
+        """Read a tally back (see `journeys.tally.store.load`)."""
+        from journeys.tally.store import load
+
+        return load(path)  # type: ignore[return-value]
+
+    def summary(self) -> str:
+        """Return the size of the tally in words."""
+        ended = self.journeys["outcome"] != OPEN
+        lapsed = self.journeys["outcome"] == LAPSED
+        n = self.journeys["n"]
+        return (f"{self.n_rows:,} rows from {self.log_start:%Y-%m-%d} to {self.as_of:%Y-%m-%d}: "
+                f"{self.n_journeys:,} journeys of {self.n_people:,} people through {len(self.states)} states; "
+                f"{int(n[ended & ~lapsed].sum()):,} ended in an outcome, {int(n[lapsed].sum()):,} lapsed, "
+                f"{int(n[~ended].sum()):,} open")
+
+    def __repr__(self) -> str:
+        """Return one line."""
+        return f"<Tally: {self.summary()}>"
+
+    def _repr_html_(self) -> str:
+        return f"<p>Tally: {self.summary()}</p>"
+
+
+def _added(name: str, mine: Columns, theirs: Columns) -> Columns:
+    key = np.concatenate([join_key(name, mine), join_key(name, theirs)])
+    sums = {column: np.concatenate([mine[column], theirs[column]]) for column in SUMS[name]}
+    return split_key(name, *add_up(key, sums))

@@ -1,0 +1,343 @@
+"""A slow, obvious second reading of the rules: one customer at a time, one event at a time, plain Python.
+
+Nothing here is shared with the package. Times are whole microseconds. A reader can hold each step against
+the rules it is named for; the tests hold the package against the outcome.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass, field
+from types import SimpleNamespace
+from typing import Any
+
+HOUR_US = 3_600_000_000
+DAY_US = 24 * HOUR_US
+
+# The arguments of `read_log` under their own names.
+Rules = SimpleNamespace
+# (customer, time, event, sequence, ended before the log, further columns), in input order.
+LogRow = tuple[Any, Any, Any, Any, Any, dict[str, Any]]
+
+
+@dataclass
+class SlowTally:
+    """The tables of counts and exact sums, keyed by plain tuples."""
+
+    moves: dict[tuple[int, str, str, int, bool], tuple[int, ...]] = field(default_factory=dict)
+    entries: dict[tuple[int, str, bool], int] = field(default_factory=dict)
+    journeys: dict[tuple[int, str, str, int, bool], tuple[int, ...]] = field(default_factory=dict)
+    customers: dict[int, tuple[int, ...]] = field(default_factory=dict)
+    findings: dict[str, int] = field(default_factory=dict)
+
+
+@dataclass
+class Row:
+    """One row that was not left out. ``name`` is the state or outcome after mapping."""
+
+    customer: Any
+    time: int
+    event: str
+    name: str
+    sequence: Any
+    ended: bool
+    place: int
+
+
+@dataclass
+class Journey:
+    """A journey that is running, and the visit it is in."""
+
+    entry_state: str
+    start: int
+    sure: bool
+    visits: int
+    visit_state: str
+    visit_start: int
+
+
+def read_log(
+    rows: Sequence[LogRow],
+    *,
+    converted: Sequence[str],
+    churned: Sequence[str],
+    silence_us: int | None,
+    after_outcome: str = "reopen",
+    same_outcome_us: int = HOUR_US,
+    states: Mapping[str, str | None] | None = None,
+    unmapped: str = "keep",
+    repeats: str = "keep",
+    duplicates: str = "keep",
+    exclude: Mapping[str, Sequence[Any]] | None = None,
+    as_of_us: int,
+    log_start_us: int,
+    complete_history: bool = False,
+    whole_days: bool = False,
+    bucket_of: Callable[[Any], int],
+    dwell_bin: Callable[[int], int],
+    elapsed_bin: Callable[[int], int],
+    busy_after: int = 1000,
+) -> SlowTally:
+    """Return the tally of a log; with ``whole_days`` a bin is the number of days."""
+    rules = Rules(**locals())
+    rules.outcomes = {*converted, *churned}
+    rules.exclude = exclude or {}
+    if whole_days:
+        rules.dwell_bin = rules.elapsed_bin = days_of
+    tally = SlowTally()
+    by_customer: dict[Any, list[Row]] = {}
+    for place, raw in enumerate(rows):
+        reason = reason_to_leave_out(raw, rules)
+        if reason is not None:
+            found(tally, reason)
+            continue
+        customer, time, event, sequence, ended, _ = raw
+        name = mapped(event, rules)
+        assert name is not None
+        row = Row(customer, time, event, name, sequence, bool(ended), place)
+        by_customer.setdefault(customer, []).append(row)
+    for customer_rows in by_customer.values():
+        history = put_in_order(customer_rows)
+        history = without_duplicates(history, rules, tally)
+        history = without_ended_before(history, tally)
+        history = without_after_outcome(history, rules, tally)
+        if history:
+            CustomerReader(history, rules, tally).read()
+    return tally
+
+
+def days_of(microseconds: int) -> int:
+    """Return the bin of a log of dates."""
+    return microseconds // DAY_US
+
+
+def is_missing(value: Any) -> bool:
+    """Say whether a cell holds nothing: null, NaN or NaT (unequal to themselves), or empty text."""
+    if value is None or value == "":
+        return True
+    return bool(value != value)
+
+
+def found(tally: SlowTally, code: str, n: int = 1) -> None:
+    """Count a finding."""
+    if n:
+        tally.findings[code] = tally.findings.get(code, 0) + n
+
+
+def add(table: dict[Any, tuple[int, ...]], key: Any, *amounts: int) -> None:
+    """Add amounts to a row of a table."""
+    before = table.get(key, (0,) * len(amounts))
+    table[key] = tuple(old + new for old, new in zip(before, amounts, strict=True))
+
+
+def reason_to_leave_out(raw: LogRow, rules: Rules) -> str | None:
+    """Return the first reason for leaving a row out, None for a row that stays."""
+    customer, time, event, _, _, columns = raw
+    if any(columns[column] in values for column, values in rules.exclude.items()):
+        return "excluded"
+    if is_missing(customer):
+        return "missing_customer"
+    if is_missing(time):
+        return "missing_time"
+    if is_missing(event):
+        return "missing_event"
+    if time < rules.log_start_us:
+        return "before_log_start"
+    if time > rules.as_of_us:
+        return "after_as_of"
+    if mapped(event, rules) is None:
+        return "unmapped_event"
+    return None
+
+
+def mapped(event: str, rules: Rules) -> str | None:
+    """Return the state or outcome an event counts as, None for an event that is dropped.
+
+    An event that already carries the name of an outcome, or of a state that others are mapped to, needs no
+    mapping. One mapped to None is dropped like an unmapped one.
+    """
+    if rules.states is None:
+        return event
+    states: Mapping[str, str | None] = rules.states
+    if event in states:
+        return states[event]
+    named = event in rules.outcomes or event in states.values()
+    if named or rules.unmapped == "keep":
+        return event
+    if rules.unmapped == "drop":
+        return None
+    return str(rules.unmapped)
+
+
+def put_in_order(history: list[Row]) -> list[Row]:
+    """Return one customer's rows by time, then sequence (a missing one comes last), then input order."""
+
+    def position(row: Row) -> tuple[Any, ...]:
+        has_none = row.sequence is None
+        return row.time, has_none, 0 if has_none else row.sequence, row.place
+
+    return sorted(history, key=position)
+
+
+def without_duplicates(history: list[Row], rules: Rules, tally: SlowTally) -> list[Row]:
+    """Count rows equal in customer, time, event as recorded and sequence; drop the later ones if asked."""
+    seen = set()
+    first_ones = []
+    for row in history:
+        cells = (row.customer, row.time, row.event, row.sequence)
+        if cells in seen:
+            found(tally, "duplicate")
+        else:
+            seen.add(cells)
+            first_ones.append(row)
+    return first_ones if rules.duplicates == "drop" else history
+
+
+def without_ended_before(history: list[Row], tally: SlowTally) -> list[Row]:
+    """Leave out a customer whose first row says that the story had ended before the log."""
+    if history[0].ended:
+        found(tally, "ended_before", len(history))
+        return []
+    return history
+
+
+def without_after_outcome(history: list[Row], rules: Rules, tally: SlowTally) -> list[Row]:
+    """With ``after_outcome="stop"`` leave out what follows the first outcome."""
+    if rules.after_outcome != "stop":
+        return history
+    for position, row in enumerate(history):
+        if row.name in rules.outcomes:
+            found(tally, "after_outcome", len(history) - position - 1)
+            return history[: position + 1]
+    return history
+
+
+class CustomerReader:
+    """Reads one customer's ordered rows into the tally."""
+
+    def __init__(self, history: list[Row], rules: Rules, tally: SlowTally) -> None:
+        self.history = history
+        self.rules = rules
+        self.tally = tally
+        self.bucket = rules.bucket_of(history[0].customer)
+        self.journey: Journey | None = None
+        self.n_decided = 0
+        self.n_converted = 0
+
+    def read(self) -> None:
+        """Read every row, then what can be said at ``as_of``."""
+        for position in range(len(self.history)):
+            self.read_row(position)
+        self.read_end()
+        self.count_customer()
+
+    def is_outcome(self, row: Row) -> bool:
+        """Say whether a row is a converted or churned outcome."""
+        return bool(row.name in self.rules.outcomes)
+
+    def read_row(self, position: int) -> None:
+        """Read one row. ``position`` is also the number of this customer's kept rows before it."""
+        row = self.history[position]
+        if position == 0:
+            self.start_journey(row, first_row=True)
+            return
+        prev = self.history[position - 1]
+        gap = row.time - prev.time
+
+        repeats_outcome = self.is_outcome(row) and row.name == prev.name and gap <= self.rules.same_outcome_us
+        if repeats_outcome:
+            found(self.tally, "repeated_outcome")
+            return
+
+        if self.is_outcome(prev):
+            self.start_journey(row, first_row=False)
+            return
+
+        silent = self.rules.silence_us is not None and gap > self.rules.silence_us
+        if silent:
+            self.lapse(prev, n_rows_before=position)
+            self.start_journey(row, first_row=False)
+            return
+
+        self.go_on(row, prev, n_rows_before=position)
+
+    def start_journey(self, row: Row, *, first_row: bool) -> None:
+        """Open a journey at a row, and end it at once where the row is an outcome."""
+        sure = self.rules.complete_history or not first_row
+        if self.rules.silence_us is not None and row.time >= self.rules.log_start_us + self.rules.silence_us:
+            sure = True
+        key = (self.bucket, row.name, sure)
+        self.tally.entries[key] = self.tally.entries.get(key, 0) + 1
+        self.journey = Journey(row.name, row.time, sure, 0, row.name, row.time)
+        if self.is_outcome(row):
+            found(self.tally, "outcome_without_states")
+            self.end_journey(row.name, row.time)
+        else:
+            self.journey.visits = 1
+
+    def go_on(self, row: Row, prev: Row, *, n_rows_before: int) -> None:
+        """Go on with the running journey: the same visit, a move to a state, or a move to an outcome."""
+        assert self.journey is not None
+        if self.rules.repeats == "merge" and row.name == prev.name:
+            return
+        self.move(row.name, row.time, n_rows_before)
+        if self.is_outcome(row):
+            self.end_journey(row.name, row.time)
+        else:
+            self.journey.visits += 1
+            self.journey.visit_state = row.name
+            self.journey.visit_start = row.time
+
+    def lapse(self, last: Row, *, n_rows_before: int) -> None:
+        """End the running journey one silence after its last event."""
+        assert self.rules.silence_us is not None
+        at = last.time + self.rules.silence_us
+        self.move("lapsed", at, n_rows_before)
+        self.end_journey("lapsed", at)
+
+    def read_end(self) -> None:
+        """At ``as_of`` a journey still running has lapsed, or is open."""
+        last = self.history[-1]
+        if self.is_outcome(last):
+            return
+        n_rows = len(self.history)
+        if self.rules.silence_us is not None and self.rules.as_of_us - last.time >= self.rules.silence_us:
+            self.lapse(last, n_rows_before=n_rows)
+        else:
+            self.move("open", self.rules.as_of_us, n_rows)
+            self.end_journey("open", self.rules.as_of_us)
+
+    def move(self, to: str, at: int, n_rows_before: int) -> None:
+        """Count a move out of the present visit, its dwell reckoned from the visit's start."""
+        assert self.journey is not None
+        first_visit = self.journey.visits == 1
+        if self.rules.repeats == "merge" and first_visit and not self.journey.sure:
+            # The visit may have begun before the log: how long it lasted is not known.
+            found(self.tally, "first_visit_of_unsure_journey")
+            return
+        dwell = at - self.journey.visit_start
+        busy = n_rows_before >= self.rules.busy_after
+        key = (self.bucket, self.journey.visit_state, to, self.rules.dwell_bin(dwell), busy)
+        add(self.tally.moves, key, 1, dwell)
+
+    def end_journey(self, outcome: str, at: int) -> None:
+        """Count the journey with its steps and elapsed time; an open one is counted as far as it got."""
+        journey = self.journey
+        assert journey is not None
+        elapsed = at - journey.start
+        steps = journey.visits if outcome == "open" else journey.visits + 1
+        key = (self.bucket, journey.entry_state, outcome, self.rules.elapsed_bin(elapsed), journey.sure)
+        add(self.tally.journeys, key, 1, steps, steps * steps, elapsed)
+        if outcome != "open":
+            self.n_decided += 1
+        if outcome in self.rules.converted:
+            self.n_converted += 1
+        self.journey = None
+
+    def count_customer(self) -> None:
+        """Add the customer to the sums of its bucket; the event count is merged by its largest."""
+        j, x = self.n_decided, self.n_converted
+        *sums, largest = self.tally.customers.get(self.bucket, (0,) * 7)
+        new = (1, j, j * j, j * x, x, x * x)
+        added = [old + more for old, more in zip(sums, new, strict=True)]
+        self.tally.customers[self.bucket] = (*added, max(largest, len(self.history)))

@@ -1,0 +1,145 @@
+"""The tally against the slow, obvious reading of the same rules: all tables and findings, to the last unit.
+
+`JOURNEYS_SLOW_LOGS` sets how many seeded logs are read (1,500 if it is not set).
+"""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Callable
+from functools import cache
+from typing import Any
+
+import numpy as np
+import pandas as pd
+import pyarrow as pa
+import pytest
+from hypothesis import HealthCheck, given, settings
+from hypothesis import strategies as st
+from random_logs import RandomLog, logs, random_log
+from slow_rules import SlowTally, read_log
+
+from journeys.intake import identity
+from journeys.intake.rules import JourneyRules
+from journeys.kernels.bins import dwell_edges, elapsed_edges
+from journeys.tally import count_log
+
+N_LOGS = int(os.environ.get("JOURNEYS_SLOW_LOGS", "1500"))
+N_SHARES = 6
+
+Table = dict[Any, tuple[int, ...]]
+
+FINDING_CODES = (
+    "excluded",
+    "missing_customer",
+    "missing_time",
+    "missing_event",
+    "before_log_start",
+    "after_as_of",
+    "unmapped_event",
+    "duplicate",
+    "ended_before",
+    "after_outcome",
+    "repeated_outcome",
+    "outcome_without_states",
+    "first_visit_of_unsure_journey",
+)
+
+
+@cache
+def bucket_of(customer: int | str) -> int:
+    """Return the bucket of one customer."""
+    keys, _ = identity.customer_keys(pa.array([customer]))
+    return int(identity.bucket_of(keys)[0])
+
+
+def bin_from(edges: np.ndarray | None) -> Callable[[int], int]:
+    """Return the bin of a duration: how many upper edges lie below it."""
+    if edges is None:
+        return lambda duration: -1  # a log of dates: the slow reading counts days itself
+    upper = [int(edge) for edge in edges]
+    return lambda duration: sum(edge < duration for edge in upper)
+
+
+@cache
+def bins(silence_us: int | None, whole_days: bool) -> tuple[Callable[[int], int], Callable[[int], int]]:
+    """Return the bins of dwell and of elapsed time, each duration worked out once."""
+    dwell = bin_from(dwell_edges(silence_us, whole_days))
+    elapsed = bin_from(elapsed_edges(silence_us, whole_days, ()))
+    return cache(dwell), cache(elapsed)
+
+
+def slow_tally(log: RandomLog) -> SlowTally:
+    """Return the slow reading of a log."""
+    dwell_bin, elapsed_bin = bins(log.slow["silence_us"], log.slow["whole_days"])
+    return read_log(log.rows, **log.slow, bucket_of=bucket_of, dwell_bin=dwell_bin, elapsed_bin=elapsed_bin)
+
+
+def source_of(log: RandomLog, chunk: int) -> pd.DataFrame | pa.RecordBatchReader:
+    """Return the log as one frame, or as a stream of batches of `chunk` rows."""
+    if not chunk:
+        return log.frame
+    table = pa.Table.from_pandas(log.frame, preserve_index=False)
+    return pa.RecordBatchReader.from_batches(table.schema, table.to_batches(max_chunksize=chunk))
+
+
+def keyed(table: pd.DataFrame, keys: list[str], sums: list[str]) -> Table:
+    """Return a table as key → sums, all plain Python values."""
+    columns = [table[name].tolist() for name in (*keys, *sums)]
+    rows = list(zip(*columns, strict=True))
+    result = {row[: len(keys)]: row[len(keys) :] for row in rows}
+    assert len(result) == len(rows), "keys are not unique"
+    return result
+
+
+def compare(log: RandomLog, chunk: int) -> None:
+    """Hold every table and every finding of the package against the slow reading."""
+    slow = slow_tally(log)
+    tally = count_log(source_of(log, chunk), JourneyRules(**log.rules))
+    moves = keyed(tally.table("moves"), ["bucket", "state", "next", "bin", "busy"], ["n", "dwell"])
+    assert moves == slow.moves
+    entries = keyed(tally.table("entries"), ["bucket", "state", "sure"], ["n"])
+    assert entries == {key: (n,) for key, n in slow.entries.items()}
+    journeys = keyed(
+        tally.table("journeys"),
+        ["bucket", "state", "outcome", "bin", "sure"],
+        ["n", "steps", "steps_squared", "elapsed"],
+    )
+    assert journeys == slow.journeys
+    people = tally.table("customers")
+    people = people[people["people"] > 0]
+    customers = keyed(people, ["bucket"], ["people", "j", "jj", "jx", "x", "xx", "largest_events"])
+    assert customers == {(bucket,): sums for bucket, sums in slow.customers.items()}
+    counted = tally.findings.groupby("code")["n"].sum().to_dict()
+    assert {code: counted[code] for code in FINDING_CODES if counted.get(code)} == slow.findings
+
+
+@pytest.mark.parametrize("share", range(N_SHARES))
+def test_seeded_random_logs(share: int) -> None:
+    for seed in range(share, N_LOGS, N_SHARES):
+        rng = np.random.default_rng([20240927, seed])
+        log = random_log(rng)
+        chunk = int(rng.integers(0, 8))
+        try:
+            compare(log, chunk)
+        except AssertionError as fault:
+            pytest.fail(f"seed {seed}, chunk {chunk}, rules {log.rules}, rows {log.rows}\n{fault}")
+
+
+def test_busy_customers() -> None:
+    n_busy = 0
+    for seed in range(8):
+        log = random_log(np.random.default_rng([77, seed]), n_rows=3_500)
+        n_busy += any(busy for *_, busy in slow_tally(log).moves)
+        compare(log, 0 if seed % 2 else 170)
+    assert n_busy >= 4
+
+
+@settings(
+    max_examples=150,
+    deadline=None,
+    suppress_health_check=[HealthCheck.too_slow, HealthCheck.data_too_large],
+)
+@given(log=logs(), chunk=st.integers(0, 7))
+def test_drawn_logs(log: RandomLog, chunk: int) -> None:
+    compare(log, chunk)
