@@ -58,9 +58,14 @@ class Estimates:
         share = np.isin(self.scale, (LOGIT, CELL))
         one_sided = share & self.few
         for mask, (lower, upper) in (
-            ((self.scale == LOGIT) & ~self.few,
-             logit_interval(self.value, self.std_error, self.df, confidence_level)),
-            ((self.scale == LOG) & ~self.few, log_interval(self.value, self.std_error, self.df, confidence_level)),
+            (
+                (self.scale == LOGIT) & ~self.few,
+                logit_interval(self.value, self.std_error, self.df, confidence_level),
+            ),
+            (
+                (self.scale == LOG) & ~self.few,
+                log_interval(self.value, self.std_error, self.df, confidence_level),
+            ),
             ((self.scale == CELL) & ~self.few, self._exact(confidence_level, "both")),
             (one_sided & (self.value <= 0.5), self._exact(confidence_level, "upper")),
             (one_sided & (self.value > 0.5), self._exact(confidence_level, "lower")),
@@ -119,8 +124,13 @@ class Result:
             The keys, then estimate, std_error, low, high, confidence_level, counts, flag.
         """
         low, high = self.estimates.bounds(self.confidence_level)
-        frame = self.keys.assign(estimate=self.estimates.value, std_error=self.estimates.std_error, low=low,
-                                 high=high, confidence_level=self.confidence_level)
+        frame = self.keys.assign(
+            estimate=self.estimates.value,
+            std_error=self.estimates.std_error,
+            low=low,
+            high=high,
+            confidence_level=self.confidence_level,
+        )
         return frame.assign(**dict(self.counts), flag=self.flag)
 
     def confidence_interval(self, confidence_level: float = 0.95) -> pd.DataFrame:

@@ -27,6 +27,8 @@ MESSAGES = {
     "after_outcome": 'left out: after the customer\'s first outcome; after_outcome="reopen" counts them',
     "repeated_outcome": "the same outcome again within same_outcome_within: counted once",
     "outcome_without_states": "an outcome with nothing before it: a journey of one event; are events lost?",
+    "began_after_outcome": "a journey begun after an outcome of the same customer; "
+    'after_outcome="stop" leaves such rows out',
     "first_visit_of_unsure_journey": "first visit of a journey whose start was not seen: its length is "
     "unknown, so its move is not counted",
     "tied_times": "same customer and time as the row before: ordered as they came in; `sequence` orders them",

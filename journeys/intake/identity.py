@@ -101,10 +101,8 @@ def customer_keys(array: pa.Array, kind: str | None = None) -> tuple[NDArray[np.
     now = "text" if is_text(values.type) else "integer"
     if kind is not None and now != kind:
         raise LogError(f"customer ids change from {_KINDS[kind]} to {_KINDS[now]} within the log; {_FIX}")
-    if now == "text":
-        keys = _text_keys(values)
-    else:
-        keys = mix(whole_numbers(values, "customer id", _FIX).view(np.uint64))
+    is_words = now == "text"
+    keys = _text_keys(values) if is_words else mix(whole_numbers(values, "customer id", _FIX).view(np.uint64))
     return (keys[indices_of(array)] if is_dictionary else keys), now
 
 
@@ -140,9 +138,13 @@ def bucket_major(key64: NDArray[np.uint64]) -> NDArray[np.uint64]:
     >>> bool((from_bucket_major(bucket_major(keys)) == keys).all())
     True
     """
-    above, bucket = np.divmod(key64, np.uint64(N_BUCKETS))
-    first: NDArray[np.uint64] = _first_of(bucket) + above
-    return first
+    out = np.empty_like(key64)
+    for start in range(0, len(out), _BLOCK):
+        block = key64[start : start + _BLOCK]
+        # Division by a constant is fast in numpy, divmod is not.
+        above = block // np.uint64(N_BUCKETS)
+        out[start : start + _BLOCK] = _first_of(block - above * np.uint64(N_BUCKETS)) + above
+    return out
 
 
 def from_bucket_major(keys: NDArray[np.uint64]) -> NDArray[np.uint64]:
@@ -183,6 +185,17 @@ def _first_of(bucket: NDArray[np.uint64]) -> NDArray[np.uint64]:
 def _text_keys(array: pa.Array) -> NDArray[np.uint64]:
     """Keys of plain text or bytes, from the buffers themselves."""
     starts, lengths, data = _text_buffers(array)
+    out = np.empty(len(lengths), dtype=np.uint64)
+    for start in range(0, len(out), _BLOCK):
+        rows = slice(start, start + _BLOCK)
+        out[rows] = _block_keys(starts[rows], lengths[rows], data)
+    return out
+
+
+def _block_keys(
+    starts: NDArray[np.int64], lengths: NDArray[np.int64], data: NDArray[np.uint8]
+) -> NDArray[np.uint64]:
+    """Keys of the texts that begin at the given offsets."""
     total = np.zeros(len(lengths), dtype=np.uint64)
     words = (lengths + 7) // 8
     most = int(words.max(initial=0))
@@ -198,7 +211,7 @@ def _text_keys(array: pa.Array) -> NDArray[np.uint64]:
         for place in range(_WORDS_AT_ONCE, int(words[row]), _BLOCK):
             places = np.arange(place, min(place + _BLOCK, int(words[row])))
             piece = _mixed_words(data, starts[row] + 8 * places, lengths[row] - 8 * places, places)
-            total[row] += piece.sum(dtype=np.uint64)
+            total[row : row + 1] += piece.sum(dtype=np.uint64, keepdims=True)
     # The length keeps "a" from "a\0"; the constant keeps the empty sum from being zero.
     total += mix(lengths.astype(np.uint64) ^ np.uint64(_GOLDEN))
     return mix(total)
@@ -211,9 +224,9 @@ def _mixed_words(
     # A view with a stride of one byte reads a word from any offset without copying the buffer.
     view: NDArray[np.uint64] = np.ndarray((len(data) - 7,), dtype="<u8", buffer=data, strides=(1,))
     words = view[at].astype(np.uint64, copy=False)
-    words &= _TAIL_MASKS[np.minimum(left, 8)]
-    steps = np.atleast_1d(np.asarray(place, dtype=np.uint64)) + np.uint64(1)
-    words += steps * np.uint64(_GOLDEN)
+    if left.min() < 8:
+        words &= _TAIL_MASKS[np.minimum(left, 8)]
+    words += (np.atleast_1d(np.asarray(place, dtype=np.uint64)) + np.uint64(1)) * np.uint64(_GOLDEN)
     return mix(words)
 
 

@@ -21,6 +21,8 @@ _WANTED = (
     "wanted the path of a Parquet, CSV or Arrow file or of a folder of them, a data frame, an Arrow table or "
     "reader, or an iterator of record batches"
 )
+# What database drivers call the method that gives a result as a reader of record batches.
+_CURSOR_METHODS = ("fetch_record_batch", "to_arrow_reader")
 
 
 def open_log(source: Any, columns: Sequence[str], *, text: Sequence[str] = ()) -> LogSource:
@@ -81,18 +83,19 @@ def _stream(source: Any) -> LogSource:
     """Pick the adapter for what gives batches."""
     module, name = type(source).__module__.partition(".")[0], type(source).__name__
     if name == "LazyFrame":
-        raise TypeError(f"got a {module} LazyFrame; call .collect() on it, or write it with .sink_parquet(path)")
+        raise TypeError(f"got a {module} LazyFrame; call .collect() on it, or .sink_parquet(path)")
     if hasattr(source, "__arrow_c_stream__"):
         try:
             reader = pa.RecordBatchReader.from_stream(source)
         except (pa.ArrowInvalid, pa.ArrowTypeError, TypeError):
-            raise TypeError(f"got a {name}, which is no stream of rows with named columns; {_WANTED}") from None
+            raise TypeError(f"got a {name}, which has no rows with named columns; {_WANTED}") from None
         if module == "polars":
             return TableSource(reader.read_all(), "polars frame")
         return StreamSource(reader.schema, reader, f"{module} {name}")
-    if hasattr(source, "fetch_record_batch"):
-        reader = source.fetch_record_batch()
-        return StreamSource(reader.schema, reader, f"{module} {name}")
+    for method in _CURSOR_METHODS:
+        if hasattr(source, method):
+            reader = getattr(source, method)()
+            return StreamSource(reader.schema, reader, f"{module} {name}")
     if isinstance(source, Iterable) and not isinstance(source, str | bytes | dict):
         return _batch_iterator(source, name)
     raise TypeError(f"got a {name}; {_WANTED}" + _hint(source))
@@ -100,7 +103,7 @@ def _stream(source: Any) -> LogSource:
 
 def _all_are(source: Any, kind: Any) -> bool:
     """Return whether it is a list of at least one thing, all of a kind."""
-    return isinstance(source, list | tuple) and len(source) > 0 and all(isinstance(one, kind) for one in source)
+    return isinstance(source, list | tuple) and bool(source) and all(isinstance(one, kind) for one in source)
 
 
 def _batch_iterator(source: Any, name: str) -> LogSource:

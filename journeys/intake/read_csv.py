@@ -123,8 +123,8 @@ def _fault(
         )
     if change := re.search(r"In CSV column #(\d+).*conversion error to ([a-z]+\d*)", told):
         return (
-            f"{path}: {where}, column {_name_of(path, int(change[1]))}, is not of the type {change[2]} of the "
-            "rows before it; write the whole column in one form, or the log as Parquet"
+            f"{path}: {where}, column {_name_of(path, int(change[1]))}, is not {change[2]} as the rows "
+            "before it are; write the whole column in one form, or the log as Parquet"
         )
     return f"{path}: not readable as CSV; wanted UTF-8 text with one line of column names and rows below"
 

@@ -110,7 +110,8 @@ class FileSource(LogSource):
 
     def __init__(self, files: list[LogFile], text: tuple[str, ...], where: str) -> None:
         self._files, self._text = files, text
-        self.kind = f"{files[0].kind} file {where}" if len(files) == 1 else f"{len(files)} {files[0].kind} files"
+        kind = files[0].kind
+        self.kind = f"{kind} file {where}" if len(files) == 1 else f"{len(files)} {kind} files"
         self._partition = partition_types(files)
         self._names = self._names_in(files[0])
 
@@ -225,7 +226,7 @@ class StreamSource(LogSource):
     def _read(self, columns: list[str]) -> Iterator[pa.RecordBatch]:
         """Hand the batches on, once."""
         if self._was_read:
-            raise LogError(f"{self.kind} can be read only once, and was; make it anew, or pass a table or a file")
+            raise LogError(f"{self.kind} can be read only once, and was; pass a table or a file instead")
         self._was_read = True
         return self._checked(columns)
 
@@ -233,7 +234,8 @@ class StreamSource(LogSource):
         """Batches, each having the columns."""
         for number, batch in enumerate(self._batches):
             if not isinstance(batch, pa.RecordBatch):
-                raise TypeError(f"{self.kind}: item {number} is a {type(batch).__name__}; wanted record batches")
+                got = type(batch).__name__
+                raise TypeError(f"{self.kind}: item {number} is a {got}; wanted record batches")
             check_columns(batch.schema.names, columns, f"batch {number} of {self.kind}")
             yield batch
 
@@ -279,7 +281,7 @@ def _from_pandas(values: pd.Series | pd.Index, name: str) -> pa.Array:
         array = pa.array(values, from_pandas=True)
     except (pa.ArrowInvalid, pa.ArrowTypeError, pa.ArrowNotImplementedError):
         raise LogError(
-            f"pandas frame: column {name!r} (dtype {values.dtype}) holds values of several kinds, or of a kind "
-            "that Arrow does not know; make it one kind: frame[column].astype(str), or pandas.to_datetime"
+            f"pandas frame: column {name!r} (dtype {values.dtype}) holds values of several kinds, or of "
+            "one that Arrow does not know; make it one kind: frame[column].astype(str), or pandas.to_datetime"
         ) from None
     return array.combine_chunks() if isinstance(array, pa.ChunkedArray) else array

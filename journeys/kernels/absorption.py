@@ -134,9 +134,19 @@ class _Moves:
         return sum_at(self.target[inside], (row[self.state] * weights)[inside], self.n_states)
 
     def solve(self, right: FloatArray) -> FloatArray:
-        """Solve x = right + P x on the states that are left open; 0 elsewhere."""
+        """Solve x = right + P x on the states that are left open; 0 elsewhere.
+
+        NaN in `right` stands for what is not known: NaN comes back from wherever it can be met.
+        """
         x = np.zeros(self.n_states)
-        x[self.solve_on] = self._solve(right[self.solve_on], False)
+        unknown = np.isnan(right[self.solve_on])
+        x[self.solve_on] = self._solve(np.where(unknown, 0.0, right[self.solve_on]), False)
+        if unknown.any():
+            here = np.zeros(len(self.is_target), dtype=np.bool_)
+            here[self.solve_on[unknown]] = True
+            used = (self.p > 0) & ~self.is_target[self.state]
+            met = can_reach(len(here), self.state[used], self.target[used], here)
+            x[self.solve_on[met[self.solve_on]]] = np.nan
         return x
 
     def solve_back(self, row: FloatArray) -> FloatArray:
@@ -240,7 +250,9 @@ def passage(
     certain = _certain(v, open_states, n_nodes)
     h = v.solve(v.pull(p * is_target[move_target]))
     h = np.where(certain | at_target, 1.0, np.clip(h, 0.0, 1.0))
-    g = v.solve(v.pull(mean * v.over_nodes(h, 1.0)[move_target]))
+    # what happens on moves that lead away for good, known or not, is no part of the way there
+    leads = v.over_nodes(h, 1.0)[move_target]
+    g = v.solve(v.pull(np.where(leads > 0, mean, 0.0) * leads))
     mu = np.divide(g, h, out=np.full(n_states, np.nan), where=h > 0)
 
     # spread about the mean: each move adds the square of its dwell and of the change in mean
@@ -248,7 +260,7 @@ def passage(
     change = jump[move_target] - jump[move_state]
     dwell = np.divide(mean, p, out=np.zeros(len(p)), where=used)
     own = np.maximum(second - mean * dwell, 0.0)
-    square = (own + p * (dwell + change) ** 2) * v.over_nodes(h, 1.0)[move_target]
+    square = np.where(leads > 0, own + p * (dwell + change) ** 2, 0.0) * leads
     spread = np.maximum(v.solve(v.pull(square)), 0.0)
     variance = np.divide(spread, h, out=np.full(n_states, np.nan), where=h > 0)
     variance[at_target] = 0.0

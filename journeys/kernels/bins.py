@@ -84,13 +84,11 @@ def elapsed_edges(
 def bin_of(duration_us: NDArray[np.int64], edges: NDArray[np.int64] | None) -> NDArray[np.int64]:
     """Return the bin of each duration (whole days where `edges` is None)."""
     if edges is None:
-        return duration_us // DAY_US
-    return np.searchsorted(edges, duration_us, side="left")
+        return np.asarray(duration_us // DAY_US, np.int64)
+    return np.asarray(np.searchsorted(edges, duration_us, side="left"), np.int64)
 
 
-def bin_bounds_days(
-    edges: NDArray[np.int64] | None, n_bins: int
-) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+def bin_bounds_days(edges: NDArray[np.int64] | None, n_bins: int) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Return lower and upper bounds in days of the first `n_bins` bins, each of shape (n_bins,)."""
     if edges is None:
         days = np.arange(n_bins, dtype=np.float64)

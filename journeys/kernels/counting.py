@@ -1,135 +1,16 @@
-"""From rows in order to moves, entries and journeys: array operations only, no loop over rows or customers."""
+"""From rows in order to moves, entries and journeys: array operations, no loop over rows or customers."""
 
 from __future__ import annotations
 
 from dataclasses import dataclass, fields, replace
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-Ints = NDArray[np.int64]
-Bools = NDArray[np.bool_]
-
-# Codes of what a row or a move can lead to: these two, then the outcomes, then the states.
-LAPSED = 0
-OPEN = 1
-FIRST_OUTCOME = 2
-
-
-@dataclass(frozen=True)
-class Reading:
-    """The rules of reading as plain numbers.
-
-    `n_outcomes` outcomes have the codes 2 to 1 + n_outcomes, the first `n_converted` of them are
-    conversions, and states come after. Times are microseconds.
-    """
-
-    n_outcomes: int
-    n_converted: int
-    silence_us: int | None
-    same_outcome_us: int
-    merge_repeats: bool
-    log_start_us: int
-    as_of_us: int
-    complete_history: bool
-    busy_after: int = 1_000
-
-    @property
-    def first_state(self) -> int:
-        """Code of the first state."""
-        return FIRST_OUTCOME + self.n_outcomes
-
-
-@dataclass(frozen=True)
-class Carried:
-    """One record per customer seen: what the next row of that customer needs. Sorted by `key`."""
-
-    key: NDArray[np.uint64]
-    time: Ints
-    code: NDArray[np.int32]
-    visit_start: Ints
-    journey_start: Ints
-    first_code: NDArray[np.int32]
-    steps: Ints
-    sure: Bools
-    n_events: Ints
-    decided: Ints
-    converted: Ints
-    story_over: Bools
-
-    @classmethod
-    def none(cls) -> Carried:
-        """Return a table without customers."""
-        kinds = {"key": np.uint64, "code": np.int32, "first_code": np.int32, "sure": bool, "story_over": bool}
-        return cls(**{f.name: np.empty(0, kinds.get(f.name, np.int64)) for f in fields(cls)})
-
-    def take(self, index: Ints | Bools) -> Carried:
-        """Return the records at `index`."""
-        return Carried(**{f.name: getattr(self, f.name)[index] for f in fields(self)})
-
-    def find(self, key: NDArray[np.uint64]) -> Ints:
-        """Return the position of each key, -1 where it is not carried."""
-        if not len(self.key):
-            return np.full(len(key), -1)
-        at = np.minimum(np.searchsorted(self.key, key), len(self.key) - 1)
-        return np.where(self.key[at] == key, at, -1)
-
-    def updated(self, new: Carried, at: Ints) -> Carried:
-        """Return the table with `new` in place of the records at `at`, and added where `at` is -1."""
-        old, fresh = at >= 0, at < 0
-        where = np.searchsorted(self.key, new.key[fresh])
-        columns = {}
-        for f in fields(self):
-            column, values = getattr(self, f.name), getattr(new, f.name)
-            if old.any():
-                column = column.copy()
-                column[at[old]] = values[old]
-            columns[f.name] = np.insert(column, where, values[fresh]) if fresh.any() else column
-        return Carried(**columns)
-
-
-@dataclass(frozen=True)
-class Moves:
-    """One element per move: whose, from which state, to what, after how long (microseconds)."""
-
-    key: NDArray[np.uint64]
-    state: NDArray[np.int32]
-    next_code: NDArray[np.int32]
-    dwell: Ints
-    busy: Bools
-
-
-@dataclass(frozen=True)
-class Entries:
-    """One element per journey begun."""
-
-    key: NDArray[np.uint64]
-    state: NDArray[np.int32]
-    sure: Bools
-
-
-@dataclass(frozen=True)
-class Ends:
-    """One element per journey ended (or, at the end of the log, still open)."""
-
-    key: NDArray[np.uint64]
-    state: NDArray[np.int32]
-    outcome: NDArray[np.int32]
-    sure: Bools
-    steps: Ints
-    elapsed: Ints
-
-
-@dataclass(frozen=True)
-class Counted:
-    """What one block of rows adds; `repeated`, `bare` are masks of rows, `unsure_visits` a count."""
-
-    moves: tuple[Moves, ...]
-    entries: Entries | None
-    ends: tuple[Ends, ...]
-    repeated: Bools
-    bare: Bools
-    unsure_visits: int
+from journeys.kernels.arrays import BoolArray as Bools
+from journeys.kernels.arrays import IntArray as Ints
+from journeys.kernels.records import FIRST_OUTCOME, LAPSED, OPEN, Carried, Counted, Ends, Entries, Moves, Reading
 
 
 @dataclass(frozen=True)
@@ -144,11 +25,12 @@ class _Story:
 
     def before(self, first: Bools, carried: Carried, at: Ints) -> _Story:
         """Shift by one row; the first row of a customer takes what was carried."""
-        return _Story(**{f.name: shifted(getattr(self, f.name), first, getattr(carried, f.name), at)
-                         for f in fields(self)})
+        return _Story(
+            **{f.name: shifted(getattr(self, f.name), first, getattr(carried, f.name), at) for f in fields(self)}
+        )
 
 
-def shifted(column: NDArray, first: Bools, carried: NDArray, at: Ints) -> NDArray:  # type: ignore[type-arg]
+def shifted(column: NDArray[Any], first: Bools, carried: NDArray[Any], at: Ints) -> NDArray[Any]:
     """Return each row's value in the row before; the first row of customer c takes carried[at[c]]."""
     out = np.empty_like(column)
     out[1:] = column[:-1]
@@ -207,7 +89,9 @@ def count_rows(
 
     story = _story(time, code, begins, visit, known, start_of, block, carried, at, reading)
     before = story.before(first, carried, at)
-    ordinal = np.arange(n) - start_of[block] + 1 + np.where(seen, carried.n_events[at] if len(carried.key) else 0, 0)[block]
+    ordinal = (
+        np.arange(n) - start_of[block] + 1 + np.where(seen, carried.n_events[at] if len(carried.key) else 0, 0)[block]
+    )
     busy = ordinal > reading.busy_after
 
     # The first visit of an unsure journey may have begun before the log: its dwell is unknown once repeats merge.
@@ -226,10 +110,22 @@ def count_rows(
 
     ended = outcome & ~repeated
     ends = (
-        Ends(key[ended], story.first_code[ended], code[ended], story.sure[ended], story.steps[ended],
-             (time - story.journey_start)[ended]),
-        Ends(key[silent], before.first_code[silent], np.full(silent.sum(), LAPSED, np.int32), before.sure[silent],
-             before.steps[silent] + 1, (prev_time + (reading.silence_us or 0) - before.journey_start)[silent]),
+        Ends(
+            key[ended],
+            story.first_code[ended],
+            code[ended],
+            story.sure[ended],
+            story.steps[ended],
+            (time - story.journey_start)[ended],
+        ),
+        Ends(
+            key[silent],
+            before.first_code[silent],
+            np.full(silent.sum(), LAPSED, np.int32),
+            before.sure[silent],
+            before.steps[silent] + 1,
+            (prev_time + (reading.silence_us or 0) - before.journey_start)[silent],
+        ),
     )
     counted = Counted(
         moves=tuple(moves),
@@ -237,6 +133,7 @@ def count_rows(
         ends=ends,
         repeated=repeated,
         bare=begins & outcome,
+        again=begins & after_outcome,
         unsure_visits=int(((moved | silent) & unseen_start).sum()),
     )
     won = ended & (code < FIRST_OUTCOME + reading.n_converted)
@@ -245,8 +142,16 @@ def count_rows(
 
 
 def _story(
-    time: Ints, code: NDArray[np.int32], begins: Bools, visit: Bools, known: Bools, start_of: Ints, block: Ints,
-    carried: Carried, at: Ints, reading: Reading,
+    time: Ints,
+    code: NDArray[np.int32],
+    begins: Bools,
+    visit: Bools,
+    known: Bools,
+    start_of: Ints,
+    block: Ints,
+    carried: Carried,
+    at: Ints,
+    reading: Reading,
 ) -> _Story:
     """Find, for each row, the visit and the journey it stands in."""
     index = np.arange(len(time))
@@ -254,13 +159,13 @@ def _story(
     journey_row = np.maximum.accumulate(np.where(begins, index, -1))
     here = visit_row >= start_of[block]
     begun_here = journey_row >= start_of[block]
-    visits = np.cumsum(visit)
-    visits_before_block = (visits - visit)[start_of]
+    visits: Ints = np.cumsum(visit)
+    visits_before_block: Ints = (visits - visit)[start_of]
     sure_now = known | reading.complete_history
     if reading.silence_us is not None:
         sure_now |= time >= reading.log_start_us + reading.silence_us
 
-    def value(now: NDArray, held: NDArray, in_block: Bools) -> NDArray:  # type: ignore[type-arg]
+    def value(now: NDArray[Any], held: NDArray[Any], in_block: Bools) -> NDArray[Any]:
         if in_block.all():
             return now
         return np.where(in_block, now, held[at][block])
@@ -276,21 +181,37 @@ def _story(
 
 
 def _latest(
-    key: NDArray[np.uint64], time: Ints, code: NDArray[np.int32], story: _Story, ordinal: Ints, start_of: Ints,
-    decided: Ints, won: Bools, carried: Carried, at: Ints,
+    key: NDArray[np.uint64],
+    time: Ints,
+    code: NDArray[np.int32],
+    story: _Story,
+    ordinal: Ints,
+    start_of: Ints,
+    decided: Ints,
+    won: Bools,
+    carried: Carried,
+    at: Ints,
 ) -> Carried:
     """Return one record per customer of these rows, as of its last row."""
     last = np.append(start_of[1:], len(key)) - 1
     held = at >= 0
 
-    def total(column: NDArray, before: Ints) -> Ints:  # type: ignore[type-arg]
+    def total(column: NDArray[Any], before: Ints) -> Ints:
         return np.add.reduceat(column.astype(np.int64), start_of) + np.where(held, before[at] if len(before) else 0, 0)
 
     return Carried(
-        key=key[last], time=time[last], code=code[last], visit_start=story.visit_start[last],
-        journey_start=story.journey_start[last], first_code=story.first_code[last], steps=story.steps[last],
-        sure=story.sure[last], n_events=ordinal[last], decided=total(decided, carried.decided),
-        converted=total(won, carried.converted), story_over=np.zeros(len(last), bool),
+        key=key[last],
+        time=time[last],
+        code=code[last],
+        visit_start=story.visit_start[last],
+        journey_start=story.journey_start[last],
+        first_code=story.first_code[last],
+        steps=story.steps[last],
+        sure=story.sure[last],
+        n_events=ordinal[last],
+        decided=total(decided, carried.decided),
+        converted=total(won, carried.converted),
+        story_over=np.zeros(len(last), bool),
     )
 
 
@@ -327,8 +248,13 @@ def close_log(carried: Carried, reading: Reading) -> tuple[Moves, Ends, int, Car
     keep = np.ones(len(held.key), bool)
     if reading.merge_repeats:
         keep = ~((held.steps == 1) & ~held.sure)
-    moves = Moves(held.key[keep], held.code[keep], next_code[keep], (until - held.visit_start)[keep],
-                  (held.n_events >= reading.busy_after)[keep])
+    moves = Moves(
+        held.key[keep],
+        held.code[keep],
+        next_code[keep],
+        (until - held.visit_start)[keep],
+        (held.n_events >= reading.busy_after)[keep],
+    )
     ends = Ends(held.key, held.first_code, next_code, held.sure, held.steps + lapsed, until - held.journey_start)
     decided = carried.decided.copy()
     decided[running] += lapsed

@@ -86,8 +86,11 @@ class JourneyFit:
         dense = np.zeros((self.nodes.n_rows, self.nodes.n_nodes))
         dense[self.move_state, self.move_target] = self.probability
         labels = self.nodes.labels
-        return pd.DataFrame(dense[:, 1:], index=pd.Index(labels[: self.nodes.n_rows], name="state"),
-                            columns=pd.Index(labels[1:], name="next_state"))
+        return pd.DataFrame(
+            dense[:, 1:],
+            index=pd.Index(labels[: self.nodes.n_rows], name="state"),
+            columns=pd.Index(labels[1:], name="next_state"),
+        )
 
     @cached_property
     def classes(self) -> Classes:
@@ -180,8 +183,9 @@ def with_dead_ends(
     state, target = np.concatenate([state, rows]), np.concatenate([target, rows])
     order = np.lexsort((target, state))
     kept = np.concatenate([np.arange(len(columns[0])), np.full(len(rows), -1)])[order]
-    grown = [np.concatenate([column, np.full(len(rows), 1.0 if i == 0 else 0.0)])[order]
-             for i, column in enumerate(columns)]
+    grown = [
+        np.concatenate([column, np.full(len(rows), 1.0 if i == 0 else 0.0)])[order] for i, column in enumerate(columns)
+    ]
     return state[order], target[order], grown, kept
 
 

@@ -37,6 +37,8 @@ def from_matrix(frame: pd.DataFrame, dwell: Any = None, entry: Any = None) -> Jo
 
     Raises
     ------
+    TypeError
+        If `frame` is no DataFrame, or `dwell` or `entry` is of another kind than above.
     ValueError
         If names repeat or are reserved, numbers are not probabilities, a row does not sum to 1, or `dwell`
         or `entry` name something unknown.
@@ -60,15 +62,26 @@ def from_matrix(frame: pd.DataFrame, dwell: Any = None, entry: Any = None) -> Jo
     mean, second = _dwell_moments(nodes, state, target, dwell)
     flags: dict[str, str] = {}
     state, target, columns, kept = with_dead_ends(
-        nodes, state, target, [probability, probability * mean, probability * second], flags)
+        nodes, state, target, [probability, probability * mean, probability * second], flags
+    )
     return JourneyFit(
-        nodes=nodes, converted=outcomes if len(outcomes) == 1 else (), move_state=state, move_target=target,
-        n_moves=np.full(len(kept), np.nan), probability=columns[0], mean=columns[1], second=columns[2],
-        row_flags=flags, open_moves="known",
+        nodes=nodes,
+        converted=outcomes if len(outcomes) == 1 else (),
+        move_state=state,
+        move_target=target,
+        n_moves=np.full(len(kept), np.nan),
+        probability=columns[0],
+        mean=columns[1],
+        second=columns[2],
+        row_flags=flags,
+        open_moves="known",
     )
 
 
 def _checked(frame: pd.DataFrame) -> tuple[tuple[str, ...], tuple[str, ...], FloatArray]:
+    if not isinstance(frame, pd.DataFrame):
+        msg = f"frame: got {type(frame).__name__}; wanted a pandas DataFrame of probabilities, one row a state"
+        raise TypeError(msg)
     states = tuple(str(name) for name in frame.index)
     columns = tuple(str(name) for name in frame.columns)
     for names, where in ((states, "index"), (columns, "columns")):
@@ -97,23 +110,29 @@ def _checked(frame: pd.DataFrame) -> tuple[tuple[str, ...], tuple[str, ...], Flo
         raise ValueError(msg)
     off = np.flatnonzero(np.abs(cells.sum(axis=1) - 1) > ROW_SUM_TOLERANCE)
     if len(off):
-        msg = (f"frame: the row of {states[off[0]]!r} sums to {cells[off[0]].sum():.12g}; wanted rows that sum to 1 "
-               "(add an outcome for what is missing)")
+        msg = (
+            f"frame: the row of {states[off[0]]!r} sums to {cells[off[0]].sum():.12g}; wanted rows that sum to 1 "
+            "(add an outcome for what is missing)"
+        )
         raise ValueError(msg)
     return states, outcomes, cells / cells.sum(axis=1, keepdims=True)
 
 
 def _entry_probabilities(states: tuple[str, ...], entry: Any) -> FloatArray:
+    if entry is not None and not isinstance(entry, str | Mapping):
+        msg = f"entry: got {entry!r}; wanted a state or a mapping from state to probability"
+        raise TypeError(msg)
     shares = {states[0]: 1.0} if entry is None else {entry: 1.0} if isinstance(entry, str) else dict(entry)
     unknown = [name for name in shares if name not in states]
     if unknown:
         msg = f"entry: {unknown[0]!r} is not a state; wanted one of {', '.join(map(repr, states[:12]))}"
         raise ValueError(msg)
-    begin = np.array([float(shares.get(name, 0.0)) for name in states])
-    if (begin < 0).any() or abs(begin.sum() - 1) > ROW_SUM_TOLERANCE:
+    begin = np.array([_number(shares.get(name, 0.0)) for name in states])
+    # Written so that NaN is refused too.
+    if not ((begin >= 0).all() and abs(begin.sum() - 1) <= ROW_SUM_TOLERANCE):
         msg = f"entry: the probabilities are {shares}; wanted numbers from 0 that sum to 1"
         raise ValueError(msg)
-    return begin / begin.sum()
+    return np.asarray(begin / begin.sum(), dtype=np.float64)
 
 
 def _dwell_moments(nodes: Nodes, state: np.ndarray, target: np.ndarray, dwell: Any) -> tuple[FloatArray, FloatArray]:
@@ -145,8 +164,16 @@ def _moments(value: Any, move: tuple[str, str]) -> tuple[float, float]:
         mean, square = float(value.mean()), float(value.var()) + float(value.mean()) ** 2
         low = float(value.support()[0])
     else:
-        mean, square, low = float(value), np.nan, float(value)
+        mean, square, low = _number(value), np.nan, _number(value)
     if not np.isfinite(mean) or low < 0:
         msg = f"dwell of {move[0]!r} to {move[1]!r}: got {value!r}; wanted days from 0 with a finite mean"
         raise ValueError(msg)
     return mean, square
+
+
+def _number(value: Any) -> float:
+    """Return a float; NaN, which no check lets pass, for what is no number."""
+    try:
+        return float(value) if not isinstance(value, str) else np.nan
+    except (TypeError, ValueError):
+        return np.nan

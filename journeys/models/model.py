@@ -9,8 +9,8 @@ import numpy as np
 
 from journeys import checks
 from journeys.errors import EndNotSeenWarning, JourneysWarning, LogError, ShortLogWarning
-from journeys.kernels.arrays import BoolArray
-from journeys.kernels.counting import FIRST_OUTCOME
+from journeys.kernels.arrays import BoolArray, FloatArray, sum_at
+from journeys.kernels.records import FIRST_OUTCOME
 from journeys.kernels.sojourn import StayFit, fit_stays, move_influence
 from journeys.kernels.stays import Stays
 from journeys.models.fit import Influence, JourneyFit, with_dead_ends
@@ -98,23 +98,41 @@ class JourneyModel:
                 stays, by_bucket = without_open(stays, by_bucket, unended)
                 found = fit_stays(stays, weight)
                 _flag(row_flags, nodes.labels, unended, COMPLETED_ONLY)
-                _warn_rows(nodes.labels, unended, "the longest stay in {} is still open, so only completed "
-                           "moves are counted there; give a silence to keep open stays", JourneysWarning)
+                _warn_rows(
+                    nodes.labels,
+                    unended,
+                    "the longest stay in {} is still open, so only completed "
+                    "moves are counted there; give a silence to keep open stays",
+                    JourneysWarning,
+                )
         else:
             self._look_at_ends(tally, stays, found, nodes.labels, row_flags)
         d_probability, d_mean, d_second = move_influence(found, stays, by_bucket)
-        completed = np.bincount(found.cell_move, stays.n, len(found.probability))
+        completed = sum_at(found.cell_move, stays.n, len(found.probability))
         lapses = found.survivor_move >= 0
         np.add.at(completed, found.survivor_move[lapses], stays.survivor_n[lapses])
         state, target, columns, kept = with_dead_ends(
-            nodes, found.move_state, found.move_target,
-            [found.probability, found.mean, found.second, completed], row_flags)
+            nodes,
+            found.move_state,
+            found.move_target,
+            [found.probability, found.mean, found.second, completed],
+            row_flags,
+        )
         pad = kept < 0
         influence = Influence(*(np.where(pad, 0.0, part[:, kept]) for part in (d_probability, d_mean, d_second)))
         return JourneyFit(
-            nodes=nodes, converted=tally.rules.converted, move_state=state, move_target=target,
-            probability=columns[0], mean=columns[1], second=columns[2], n_moves=columns[3],
-            row_flags=row_flags, open_moves=self.open_moves, tally=tally, influence=influence,
+            nodes=nodes,
+            converted=tally.rules.converted,
+            move_state=state,
+            move_target=target,
+            probability=columns[0],
+            mean=columns[1],
+            second=columns[2],
+            n_moves=columns[3],
+            row_flags=row_flags,
+            open_moves=self.open_moves,
+            tally=tally,
+            influence=influence,
         )
 
     def _look_at_ends(
@@ -123,7 +141,7 @@ class JourneyModel:
         """Flag the rows whose stays were not, or hardly, seen as long as the silence."""
         if self.open_moves == "ignored":
             return
-        seen_to_end = np.maximum(stays.survivor_n, _lapse_counts(tally, stays))
+        seen_to_end = np.maximum(stays.survivor_n, _lapse_counts(stays))
         unseen = (found.survival_end > 1e-12) & (seen_to_end == 0) & _has_stays(stays)
         if tally.rules.repeats == "merge":
             unseen = (found.survival_end > 1e-12) & _has_stays(stays)
@@ -132,8 +150,12 @@ class JourneyModel:
         _flag(row_flags, labels, unseen, END_NOT_SEEN)
         _flag(row_flags, labels, few, FEW_AT_END)
         if unseen.any():
-            _warn_rows(labels, unseen, "no stay in {} was seen as long as the silence: the share that lapses "
-                       "there is an upper bound", EndNotSeenWarning)
+            _warn_rows(
+                labels,
+                unseen,
+                "no stay in {} was seen as long as the silence: the share that lapses there is an upper bound",
+                EndNotSeenWarning,
+            )
 
 
 def refuse(tally: Tally) -> None:
@@ -142,15 +164,23 @@ def refuse(tally: Tally) -> None:
     if rules.silence_us is not None:
         silence_days = rules.silence_us / 86_400e6
         if tally.as_of_us - tally.log_start_us <= rules.silence_us:
-            msg = (f"the log is {tally.days:.1f} days long, no longer than the silence of {silence_days:g} days, so "
-                   "nobody can be seen to lapse; wanted a longer log or a shorter silence")
+            msg = (
+                f"the log is {tally.days:.1f} days long, no longer than the silence of {silence_days:g} days, so "
+                "nobody can be seen to lapse; wanted a longer log or a shorter silence"
+            )
             raise LogError(msg)
         if tally.days < 1.5 * silence_days:
-            warnings.warn(f"the log of {tally.days:.1f} days is shorter than one and a half silences: times given "
-                          "conversion will be too narrow in their intervals", ShortLogWarning, stacklevel=3)
+            warnings.warn(
+                f"the log of {tally.days:.1f} days is shorter than one and a half silences: times given "
+                "conversion will be too narrow in their intervals",
+                ShortLogWarning,
+                stacklevel=3,
+            )
     if not (tally.entries["sure"] == 1).any():
-        msg = (f"none of {tally.n_journeys:,} journeys has a sure entry (all may have begun before the log); wanted a "
-               "log that starts earlier, or complete_history=true if it holds each customer's whole past")
+        msg = (
+            f"none of {tally.n_journeys:,} journeys has a sure entry (all may have begun before the log); wanted a "
+            "log that starts earlier, or complete_history=true if it holds each customer's whole past"
+        )
         raise LogError(msg)
     refuse_without_outcome(tally)
 
@@ -160,26 +190,28 @@ def refuse_without_outcome(tally: Tally) -> None:
     rules = tally.rules
     named = FIRST_OUTCOME + np.arange(len(rules.outcomes))
     if len(named) and not np.isin(tally.journeys["outcome"], named).any():
-        msg = (f"no outcome was ever seen: wanted at least one of {', '.join(map(repr, rules.outcomes))} among the "
-               "events; look at the spelling in `converted` and `churned`")
+        msg = (
+            f"no outcome was ever seen: wanted at least one of {', '.join(map(repr, rules.outcomes))} among the "
+            "events; look at the spelling in `converted` and `churned`"
+        )
         raise LogError(msg)
 
 
 def _has_stays(stays: Stays) -> BoolArray:
-    ended = np.bincount(stays.state, stays.n, stays.n_states) + stays.survivor_n
+    ended = sum_at(stays.state, stays.n, stays.n_states) + stays.survivor_n
     return (ended > 0) | _has_open(stays)
 
 
 def _has_open(stays: Stays) -> BoolArray:
-    return np.bincount(stays.open_state, stays.open_n, stays.n_states) > 0
+    return sum_at(stays.open_state, stays.open_n, stays.n_states) > 0
 
 
-def _lapse_counts(tally: Tally, stays: Stays) -> np.ndarray:
+def _lapse_counts(stays: Stays) -> FloatArray:
     """Return the lapses that are counted as a cause (merged visits), by row."""
     if stays.survivor_target is None:
         return np.zeros(stays.n_states)
     mine = stays.target == stays.survivor_target
-    return np.bincount(stays.state[mine], stays.n[mine], stays.n_states)
+    return sum_at(stays.state[mine], stays.n[mine], stays.n_states)
 
 
 def _flag(row_flags: dict[str, str], labels: tuple[str, ...], rows: BoolArray, text: str) -> None:

@@ -6,9 +6,9 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from journeys.kernels.arrays import FloatArray, IntArray
+from journeys.kernels.arrays import FloatArray, IntArray, sum_at
 from journeys.kernels.bins import DAY_US, bin_bounds_days, bin_of, dwell_edges, elapsed_edges
-from journeys.kernels.counting import FIRST_OUTCOME, LAPSED, OPEN
+from journeys.kernels.records import FIRST_OUTCOME, LAPSED, OPEN
 from journeys.kernels.stays import BucketStays, Stays
 from journeys.tally.accumulate import join_limbs
 from journeys.tally.tally import Tally
@@ -92,18 +92,34 @@ def move_stays(tally: Tally, *, censored: bool) -> tuple[Stays, BucketStays]:
     cells, cell = np.unique(key, return_inverse=True)
     kept = is_open & censored
     stays = Stays(
-        n_states=nodes.n_rows, n_targets=nodes.n_nodes, n_bins=n_bins,
-        state=cells // n_bins // nodes.n_nodes, target=cells // n_bins % nodes.n_nodes, bin=cells % n_bins,
-        n=np.bincount(cell, n, len(cells)), total=np.bincount(cell, total, len(cells)), lower=lower, upper=upper,
-        open_state=row[kept], open_bin=moves["bin"][kept], open_n=moves["n"][kept].astype(np.float64),
-        survivor_n=np.bincount(row[survives], moves["n"][survives], nodes.n_rows).astype(np.float64),
+        n_states=nodes.n_rows,
+        n_targets=nodes.n_nodes,
+        n_bins=n_bins,
+        state=cells // n_bins // nodes.n_nodes,
+        target=cells // n_bins % nodes.n_nodes,
+        bin=cells % n_bins,
+        n=sum_at(cell, n, len(cells)),
+        total=sum_at(cell, total, len(cells)),
+        lower=lower,
+        upper=upper,
+        open_state=row[kept],
+        open_bin=moves["bin"][kept],
+        open_n=moves["n"][kept].astype(np.float64),
+        survivor_n=sum_at(row[survives], moves["n"][survives], nodes.n_rows),
         survivor_target=None if rules.silence_us is None else nodes.n_nodes - 1,
         survivor_dwell=float(upper[-1]),
     )
     by_bucket = BucketStays(
-        n_buckets=int(bucket.max()) + 1, bucket=whose, cell=cell, n=n,
-        open_bucket=bucket[moves["bucket"][kept]], open_state=stays.open_state, open_bin=stays.open_bin,
-        open_n=stays.open_n, survivor_bucket=bucket[moves["bucket"][survives]], survivor_state=row[survives],
+        n_buckets=int(bucket.max()) + 1,
+        bucket=whose,
+        cell=cell,
+        n=n,
+        open_bucket=bucket[moves["bucket"][kept]],
+        open_state=stays.open_state,
+        open_bin=stays.open_bin,
+        open_n=stays.open_n,
+        survivor_bucket=bucket[moves["bucket"][survives]],
+        survivor_state=row[survives],
         survivor_n=moves["n"][survives].astype(np.float64),
     )
     return stays, by_bucket
@@ -115,8 +131,13 @@ def without_open(stays: Stays, by_bucket: BucketStays, rows: np.ndarray) -> tupl
     mine = ~rows[by_bucket.open_state]
     return (
         replace(stays, open_state=stays.open_state[keep], open_bin=stays.open_bin[keep], open_n=stays.open_n[keep]),
-        replace(by_bucket, open_bucket=by_bucket.open_bucket[mine], open_state=by_bucket.open_state[mine],
-                open_bin=by_bucket.open_bin[mine], open_n=by_bucket.open_n[mine]),
+        replace(
+            by_bucket,
+            open_bucket=by_bucket.open_bucket[mine],
+            open_state=by_bucket.open_state[mine],
+            open_bin=by_bucket.open_bin[mine],
+            open_n=by_bucket.open_n[mine],
+        ),
     )
 
 
@@ -146,20 +167,38 @@ def journey_stays(tally: Tally) -> tuple[Stays, BucketStays]:
     zeros = np.zeros(int(is_open.sum()), np.int64)
     open_n: FloatArray = table["n"][is_open].astype(np.float64)
     stays = Stays(
-        n_states=1, n_targets=outcome_column(FIRST_OUTCOME + len(rules.outcomes)), n_bins=n_bins,
-        state=np.zeros(len(cells), np.int64), target=cells // n_bins, bin=cells % n_bins,
-        n=np.bincount(cell, n, len(cells)), total=np.bincount(cell, total, len(cells)), lower=lower, upper=upper,
-        open_state=zeros, open_bin=table["bin"][is_open], open_n=open_n, survivor_n=np.zeros(1),
+        n_states=1,
+        n_targets=FIRST_OUTCOME + len(rules.outcomes) + 1,
+        n_bins=n_bins,
+        state=np.zeros(len(cells), np.int64),
+        target=cells // n_bins,
+        bin=cells % n_bins,
+        n=sum_at(cell, n, len(cells)),
+        total=sum_at(cell, total, len(cells)),
+        lower=lower,
+        upper=upper,
+        open_state=zeros,
+        open_bin=table["bin"][is_open],
+        open_n=open_n,
+        survivor_n=np.zeros(1),
     )
     by_bucket = BucketStays(
-        n_buckets=int(bucket.max()) + 1, bucket=bucket[table["bucket"][ended]], cell=cell, n=n,
-        open_bucket=bucket[table["bucket"][is_open]], open_state=zeros, open_bin=stays.open_bin, open_n=open_n,
-        survivor_bucket=none, survivor_state=none, survivor_n=np.zeros(0),
+        n_buckets=int(bucket.max()) + 1,
+        bucket=bucket[table["bucket"][ended]],
+        cell=cell,
+        n=n,
+        open_bucket=bucket[table["bucket"][is_open]],
+        open_state=zeros,
+        open_bin=stays.open_bin,
+        open_n=open_n,
+        survivor_bucket=none,
+        survivor_state=none,
+        survivor_n=np.zeros(0),
     )
     return stays, by_bucket
 
 
-def outcome_column(code: IntArray | int) -> IntArray | int:
+def outcome_column(code: IntArray) -> IntArray:
     """Return the column of `journey_stays` for an outcome's code (column 0 is the journey itself)."""
     return code + 1
 

@@ -36,8 +36,13 @@ def save(fit: JourneyFit, path: str | os.PathLike[str]) -> None:
     if fit.tally is not None:
         tally_store.save(fit.tally, path, {HEAD: json.dumps({"open_moves": fit.open_moves}).encode()})
         return
-    head = {"format_version": FORMAT_VERSION, "states": fit.states, "outcomes": fit.outcomes,
-            "converted": fit.converted, "row_flags": fit.row_flags}
+    head = {
+        "format_version": FORMAT_VERSION,
+        "states": fit.states,
+        "outcomes": fit.outcomes,
+        "converted": fit.converted,
+        "row_flags": fit.row_flags,
+    }
     table = pa.table({name: getattr(fit, name) for name in _COLUMNS})
     with written_whole(path) as part:
         pq.write_table(table.replace_schema_metadata({HEAD: json.dumps(head).encode()}), part)
@@ -78,7 +83,14 @@ def load(path: str | os.PathLike[str]) -> JourneyFit:
         msg = f"{os.fspath(path)!r} is not a whole fit; wanted a file written by fit.save: fit it again"
         raise StoreError(msg) from None
     if head.get("format_version") != FORMAT_VERSION:
-        msg = f"{os.fspath(path)!r} has format version {head.get('format_version')}; this program reads {FORMAT_VERSION}"
+        msg = (
+            f"{os.fspath(path)!r} has format version {head.get('format_version')}; this program reads {FORMAT_VERSION}"
+        )
         raise StoreError(msg)
-    return JourneyFit(nodes=Nodes(tuple(head["states"]), tuple(head["outcomes"])),
-                      converted=tuple(head["converted"]), row_flags=head["row_flags"], open_moves="known", **columns)
+    return JourneyFit(
+        nodes=Nodes(tuple(head["states"]), tuple(head["outcomes"])),
+        converted=tuple(head["converted"]),
+        row_flags=head["row_flags"],
+        open_moves="known",
+        **columns,
+    )

@@ -12,7 +12,7 @@ import pandas as pd
 from journeys.errors import JourneysWarning, LogError
 from journeys.intake.findings import UNREADABLE
 from journeys.intake.rules import JourneyRules
-from journeys.kernels.counting import FIRST_OUTCOME, OPEN
+from journeys.kernels.records import FIRST_OUTCOME, OPEN
 from journeys.models.model import JourneyModel, refuse_without_outcome
 from journeys.tally.count import count_log
 from journeys.tally.tally import Tally
@@ -106,7 +106,14 @@ def audit(source: Any, rules: JourneyRules | None = None, *, progress: bool = Fa
     else:
         tally = count_log(source, rules, progress=progress)
     refuse_without_outcome(tally)
-    rows = [_unreadable(tally), _length(tally), _sure(tally), _undecided(tally), *_outcomes(tally), *_fit(tally)]
+    rows = [
+        _unreadable(tally),
+        _length(tally),
+        _sure(tally),
+        _undecided(tally),
+        *_outcomes(tally),
+        *_fit(tally),
+    ]
     return Audit(tally, pd.DataFrame(rows, columns=["check_name", "value", "verdict", "note"]))
 
 
@@ -126,7 +133,12 @@ def _length(tally: Tally) -> tuple[str, str, str, str]:
     if silences <= 1:
         return "length of the log", value, NO, "nobody can be seen to lapse: wanted more than one silence"
     if silences < 1.5:
-        return "length of the log", value, CARE, "under one and a half silences: times given conversion are shaky"
+        return (
+            "length of the log",
+            value,
+            CARE,
+            "under one and a half silences: times given conversion are shaky",
+        )
     return "length of the log", value, GOOD, ""
 
 
@@ -141,8 +153,12 @@ def _sure(tally: Tally) -> tuple[str, str, str, str]:
 def _undecided(tally: Tally) -> tuple[str, str, str, str]:
     n = int(tally.journeys["n"][tally.journeys["outcome"] == OPEN].sum())
     share = n / max(tally.n_journeys, 1)
-    return ("journeys undecided yet", f"{n:,} of {tally.n_journeys:,} ({share:.1%})",
-            GOOD if share < 0.5 else CARE, "a plain count treats them as lost")
+    return (
+        "journeys undecided yet",
+        f"{n:,} of {tally.n_journeys:,} ({share:.1%})",
+        GOOD if share < 0.5 else CARE,
+        "a plain count treats them as lost",
+    )
 
 
 def _outcomes(tally: Tally) -> list[tuple[str, str, str, str]]:
@@ -153,8 +169,14 @@ def _outcomes(tally: Tally) -> list[tuple[str, str, str, str]]:
         rows.append((f"journeys ended by {name}", f"{n:,}", GOOD if n >= 20 else CARE, note))
     bare = tally.record.n("outcome_without_states")
     share = bare / max(int(np.sum(tally.journeys["n"][tally.journeys["outcome"] >= FIRST_OUTCOME])), 1)
-    rows.append(("outcomes with nothing before them", f"{bare:,} ({share:.1%} of outcomes)",
-                 GOOD if share < 0.2 else CARE, "are their earlier events missing from the log?" if bare else ""))
+    rows.append(
+        (
+            "outcomes with nothing before them",
+            f"{bare:,} ({share:.1%} of outcomes)",
+            GOOD if share < 0.2 else CARE,
+            "are their earlier events missing from the log?" if bare else "",
+        )
+    )
     return rows
 
 

@@ -100,15 +100,21 @@ def first_passage(
     level = checks.confidence_level(confidence_level)
     nodes, p = fit.nodes, fit.probability
     mean, second = (p, p) if clock == "steps" else (fit.mean, fit.second)
-    found = passage(nodes.n_rows, nodes.n_nodes, fit.move_state, fit.move_target, p, mean, second,
-                    fit.target_mask(to))
+    found = passage(nodes.n_rows, nodes.n_nodes, fit.move_state, fit.move_target, p, mean, second, fit.target_mask(to))
     scale = 1.0 if clock == "steps" else UNIT_DAYS[unit]
     spreads = _spreads(fit, found, steps=clock == "steps")
     share = probabilities(fit, found.probability, *spreads["probability"], starts_counted(fit), LOGIT)
     at_target = fit.target_mask(to)[: nodes.n_rows]
     share = _without_doubt(share, at_target)
-    parts, flags = [share], [joined_flags([(np.isnan(found.mean_given) & (found.probability == 0), UNREACHABLE),
-                                           (share.few, TOO_FEW)], nodes.n_rows)]
+    parts, flags = (
+        [share],
+        [
+            joined_flags(
+                [(np.isnan(found.mean_given) & (found.probability == 0), UNREACHABLE), (share.few, TOO_FEW)],
+                nodes.n_rows,
+            )
+        ],
+    )
     for measure in MEASURES[1:]:
         part, flag = _moment(fit, found, share, measure, spreads[_MOMENT[measure]], scale, at_target)
         parts.append(part)
@@ -118,14 +124,19 @@ def first_passage(
     for mask, text in lean:
         flag = np.where(mask, np.where(flag == "", text, flag + "; " + text), flag)
     order = np.arange(len(flag)).reshape(len(MEASURES), nodes.n_rows).T.ravel()
-    keys = pd.DataFrame({
-        "start_state": np.repeat(np.array(nodes.labels[: nodes.n_rows], dtype=object), len(MEASURES)),
-        "measure": np.tile(np.array(MEASURES, dtype=object), nodes.n_rows),
-    })
+    keys = pd.DataFrame(
+        {
+            "start_state": np.repeat(np.array(nodes.labels[: nodes.n_rows], dtype=object), len(MEASURES)),
+            "measure": np.tile(np.array(MEASURES, dtype=object), nodes.n_rows),
+        }
+    )
     return FirstPassageResult(
-        keys=keys, estimates=joined.take(order), flag=flag[order],
+        keys=keys,
+        estimates=joined.take(order),
+        flag=flag[order],
         counts={"n_effective": np.tile(share.n_effective, (len(MEASURES), 1)).T.ravel()},
-        confidence_level=level, unit=clock if clock == "steps" else unit,
+        confidence_level=level,
+        unit=clock if clock == "steps" else unit,
     )
 
 
@@ -147,8 +158,13 @@ def _spreads(fit: JourneyFit, found: Passage, *, steps: bool) -> dict[str, tuple
 
 
 def _moment(
-    fit: JourneyFit, found: Passage, share: Estimates, measure: str, spreads: tuple[FloatArray, FloatArray],
-    scale: float, at_target: np.ndarray,
+    fit: JourneyFit,
+    found: Passage,
+    share: Estimates,
+    measure: str,
+    spreads: tuple[FloatArray, FloatArray],
+    scale: float,
+    at_target: np.ndarray,
 ) -> tuple[Estimates, np.ndarray]:
     """Return one kind of mean or spread from every start, with its flags."""
     n = len(at_target)
@@ -163,20 +179,36 @@ def _moment(
     std_error = np.where(np.isfinite(value), std_error, np.nan)
     known = fit.influence is None
     events = np.nan_to_num(share.n_effective) * share.value
-    few = np.zeros(n, bool) if known else (
-        (df < ENOUGH_DF) | (events < ENOUGH_EVENTS) | ~(std_error > 0)) & np.isfinite(value) & ~at_target
+    few = (
+        np.zeros(n, bool)
+        if known
+        else ((df < ENOUGH_DF) | (events < ENOUGH_EVENTS) | ~(std_error > 0)) & np.isfinite(value) & ~at_target
+    )
     estimates = _without_doubt(
-        Estimates(value, std_error, df, np.full(n, KNOWN if known else LOG, dtype=object),
-                  share.n_effective, few), at_target)
+        Estimates(value, std_error, df, np.full(n, KNOWN if known else LOG, dtype=object), share.n_effective, few),
+        at_target,
+    )
     absent = NO_DWELL if measure != "sd" or np.isnan(found.mean_given[reached & ~at_target]).any() else NO_SPREAD
-    flag = joined_flags([(~reached & ~never, UNREACHABLE), (never & ~reached, UNREACHABLE),
-                         (never & reached, SOME_NEVER), (unknown, absent), (few, TOO_FEW)], n)
+    flag = joined_flags(
+        [
+            (~reached & ~never, UNREACHABLE),
+            (never & ~reached, UNREACHABLE),
+            (never & reached, SOME_NEVER),
+            (unknown, absent),
+            (few, TOO_FEW),
+        ],
+        n,
+    )
     return estimates, flag
 
 
 def _without_doubt(estimates: Estimates, mask: np.ndarray) -> Estimates:
     """Return the same with the numbers under `mask` known for certain."""
     return Estimates(
-        estimates.value, np.where(mask, 0.0, estimates.std_error), estimates.df,
-        np.where(mask, KNOWN, estimates.scale), estimates.n_effective, estimates.few & ~mask,
+        estimates.value,
+        np.where(mask, 0.0, estimates.std_error),
+        estimates.df,
+        np.where(mask, KNOWN, estimates.scale),
+        estimates.n_effective,
+        estimates.few & ~mask,
     )

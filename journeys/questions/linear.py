@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from journeys.kernels.absorption import passage
-from journeys.kernels.arrays import BoolArray, FloatArray
+from journeys.kernels.arrays import BoolArray, FloatArray, sum_at
 from journeys.kernels.intervals import variance_from_buckets
 from journeys.models.fit import JourneyFit
 from journeys.results import KNOWN, Estimates
@@ -17,7 +17,9 @@ LEANS = 0.01
 TOO_FEW = "too few"
 
 
-def spread(fit: JourneyFit, by_p: FloatArray, by_mean: FloatArray, by_second: FloatArray) -> tuple[FloatArray, FloatArray]:
+def spread(
+    fit: JourneyFit, by_p: FloatArray, by_mean: FloatArray, by_second: FloatArray
+) -> tuple[FloatArray, FloatArray]:
     """Return standard error and degrees of freedom of answers from their derivatives.
 
     Parameters
@@ -42,7 +44,7 @@ def spread(fit: JourneyFit, by_p: FloatArray, by_mean: FloatArray, by_second: Fl
 
 def starts_counted(fit: JourneyFit) -> FloatArray:
     """Return the completed stays of entry and each state: trials behind a probability of exactly 0 or 1."""
-    return np.bincount(fit.move_state, fit.n_moves, fit.nodes.n_rows)
+    return sum_at(fit.move_state, fit.n_moves, fit.nodes.n_rows)
 
 
 def probabilities(
@@ -62,8 +64,14 @@ def probabilities(
     """
     n = len(value)
     if fit.influence is None:
-        return Estimates(value, np.zeros(n), np.full(n, np.inf), np.full(n, KNOWN, dtype=object),
-                         np.full(n, np.nan), np.zeros(n, bool))
+        return Estimates(
+            value,
+            np.zeros(n),
+            np.full(n, np.inf),
+            np.full(n, KNOWN, dtype=object),
+            np.full(n, np.nan),
+            np.zeros(n, bool),
+        )
     variance = std_error**2
     effective = np.divide(value * (1 - value), variance, out=trials.astype(float).copy(), where=variance > 0)
     if scale == "cell":

@@ -87,7 +87,9 @@ def moves(fit: JourneyFit, *, confidence_level: float = 0.95) -> MovesResult:
     row_flag = np.array([fit.row_flags.get(name, "") for name in nodes.labels[: nodes.n_rows]], dtype=object)
     flags = [(row_flag[row] == text, text) for text in dict.fromkeys(fit.row_flags.values())]
     return MovesResult(
-        keys=pd.DataFrame({"state": labels[row], "next_state": labels[column]}), estimates=estimates,
+        keys=pd.DataFrame({"state": labels[row], "next_state": labels[column]}),
+        estimates=estimates,
         flag=joined_flags([(estimates.few, TOO_FEW), *flags], len(row)),
-        counts={"n_moves": n_moves, "n_effective": estimates.n_effective}, confidence_level=level,
+        counts={"n_moves": n_moves, "n_effective": estimates.n_effective},
+        confidence_level=level,
     )

@@ -57,7 +57,8 @@ def outcomes(fit: JourneyFit, *, confidence_level: float = 0.95) -> OutcomesResu
     --------
     >>> import pandas as pd
     >>> chain = pd.DataFrame([[0.5, 0.3, 0.2]], index=["basket"], columns=["basket", "joined", "declined"])
-    >>> outcomes(JourneyFit.from_matrix(chain)).to_frame()[["start_state", "outcome", "estimate"]].round(3).values.tolist()
+    >>> frame = outcomes(JourneyFit.from_matrix(chain)).to_frame()
+    >>> frame[["start_state", "outcome", "estimate"]].round(3).values.tolist()
     [['entry', 'joined', 0.6], ['entry', 'declined', 0.4], ['basket', 'joined', 0.6], ['basket', 'declined', 0.4]]
     """
     level = checks.confidence_level(confidence_level)
@@ -83,11 +84,16 @@ def outcomes(fit: JourneyFit, *, confidence_level: float = 0.95) -> OutcomesResu
     flag = joined_flags([(np.concatenate(unreachable), UNREACHABLE), (joined.few, TOO_FEW), *lean], n)
     # Computed outcome by outcome, told start by start.
     order = np.arange(n).reshape(len(nodes.outcomes), nodes.n_rows).T.ravel()
-    keys = pd.DataFrame({
-        "start_state": np.repeat(np.array(nodes.labels[: nodes.n_rows], dtype=object), len(nodes.outcomes)),
-        "outcome": np.tile(np.array(nodes.outcomes, dtype=object), nodes.n_rows),
-    })
+    keys = pd.DataFrame(
+        {
+            "start_state": np.repeat(np.array(nodes.labels[: nodes.n_rows], dtype=object), len(nodes.outcomes)),
+            "outcome": np.tile(np.array(nodes.outcomes, dtype=object), nodes.n_rows),
+        }
+    )
     return OutcomesResult(
-        keys=keys, estimates=joined.take(order), flag=flag[order],
-        counts={"n_effective": joined.n_effective[order]}, confidence_level=level,
+        keys=keys,
+        estimates=joined.take(order),
+        flag=flag[order],
+        counts={"n_effective": joined.n_effective[order]},
+        confidence_level=level,
     )

@@ -10,7 +10,7 @@ import pandas as pd
 
 from journeys import checks
 from journeys.errors import LogError
-from journeys.kernels.counting import FIRST_OUTCOME, LAPSED, OPEN
+from journeys.kernels.records import FIRST_OUTCOME, LAPSED, OPEN
 from journeys.models.fit import JourneyFit
 from journeys.questions.first_passage import FirstPassageResult, first_passage
 from journeys.questions.linear import leaning
@@ -90,25 +90,61 @@ class Overview:
         frame = frame[frame.measure == "converted"].set_index("horizon")
         so_far, end = frame.loc[SO_FAR], frame.loc[IN_THE_END]
         rows = [
-            ("plain count: converted so far, of all journeys", plain.n_converted, plain.n_journeys, so_far.estimate,
-             so_far.low, so_far.high, "too low: the undecided count as lost"),
-            ("converted so far, of decided journeys only", plain.n_converted, decided,
-             plain.n_converted / decided if decided else np.nan, np.nan, np.nan,
-             "off: a conversion is seen at once, a loss only after the silence"),
-            ("undecided yet", plain.n_undecided, plain.n_journeys, plain.n_undecided / plain.n_journeys, np.nan,
-             np.nan, "kept, as lasting at least as long as they were seen"),
-            ("may have begun before the log", plain.n_journeys - plain.n_sure, plain.n_journeys,
-             1 - plain.n_sure / plain.n_journeys, np.nan, np.nan,
-             "their moves count, their first event is not taken for an entry"),
-            ("expected in the end, of all who come in", np.nan, np.nan, end.estimate, end.low, end.high, end.flag),
+            (
+                "plain count: converted so far, of all journeys",
+                plain.n_converted,
+                plain.n_journeys,
+                so_far.estimate,
+                so_far.low,
+                so_far.high,
+                "too low: the undecided count as lost",
+            ),
+            (
+                "converted so far, of decided journeys only",
+                plain.n_converted,
+                decided,
+                plain.n_converted / decided if decided else np.nan,
+                np.nan,
+                np.nan,
+                "off: a conversion is seen at once, a loss only after the silence",
+            ),
+            (
+                "undecided yet",
+                plain.n_undecided,
+                plain.n_journeys,
+                plain.n_undecided / plain.n_journeys,
+                np.nan,
+                np.nan,
+                "kept, as lasting at least as long as they were seen",
+            ),
+            (
+                "may have begun before the log",
+                plain.n_journeys - plain.n_sure,
+                plain.n_journeys,
+                1 - plain.n_sure / plain.n_journeys,
+                np.nan,
+                np.nan,
+                "their moves count, their first event is not taken for an entry",
+            ),
+            (
+                "expected in the end, of all who come in",
+                np.nan,
+                np.nan,
+                end.estimate,
+                end.low,
+                end.high,
+                end.flag,
+            ),
         ]
         return pd.DataFrame(rows, columns=["line", "n", "of", "estimate", "low", "high", "note"])
 
     def notes(self) -> list[tuple[str, str]]:
         """Return what the matrix says of itself: pairs of a flag and the states it concerns."""
         flags = self.fit.row_flags
-        told = [(text, ", ".join(name for name, flag in flags.items() if flag == text))
-                for text in dict.fromkeys(flags.values())]
+        told = [
+            (text, ", ".join(name for name, flag in flags.items() if flag == text))
+            for text in dict.fromkeys(flags.values())
+        ]
         return [(text, names) for text, names in told if leaning(self.fit)[text][0]]
 
     def to_frame(self) -> pd.DataFrame:
@@ -120,22 +156,43 @@ class Overview:
             Columns section, the keys of all sections, estimate, std_error, low, high, confidence_level,
             counts, flag.
         """
-        sections = {"time_to_convert": self.conversion, "outcomes": self.endings,
-                    "first_passage_steps": self.steps, "first_passage_days": self.days, "moves": self.matrix}
+        sections = {
+            "time_to_convert": self.conversion,
+            "outcomes": self.endings,
+            "first_passage_steps": self.steps,
+            "first_passage_days": self.days,
+            "moves": self.matrix,
+        }
         frames = [result.to_frame().assign(section=name) for name, result in sections.items()]
         whole = pd.concat([self._counts(), *frames], ignore_index=True)
-        return whole[[*(key for key in KEY_COLUMNS if key in whole),
-                      *(column for column in whole if column not in KEY_COLUMNS)]]
+        return whole[
+            [
+                *(key for key in KEY_COLUMNS if key in whole),
+                *(column for column in whole if column not in KEY_COLUMNS),
+            ]
+        ]
 
     def _counts(self) -> pd.DataFrame:
         plain = self.plain
-        counts = {"people": plain.n_people, "journeys": plain.n_journeys, "sure entries": plain.n_sure,
-                  "undecided": plain.n_undecided}
-        rows = [(name, None, n) for name, n in counts.items()]
+        counts = {
+            "people": plain.n_people,
+            "journeys": plain.n_journeys,
+            "sure entries": plain.n_sure,
+            "undecided": plain.n_undecided,
+        }
+        rows: list[tuple[str, str | None, int]] = [(name, None, n) for name, n in counts.items()]
         rows += [("ended", outcome, n) for outcome, n in plain.n_by_outcome.items()]
         frame = pd.DataFrame(rows, columns=["measure", "outcome", "estimate"])
-        return frame.assign(section="counts", basis="log", estimate=frame.estimate.astype(float), flag="",
-                            std_error=np.nan, low=np.nan, high=np.nan, confidence_level=np.nan)
+        return frame.assign(
+            section="counts",
+            basis="log",
+            estimate=frame.estimate.astype(float),
+            flag="",
+            std_error=np.nan,
+            low=np.nan,
+            high=np.nan,
+            confidence_level=np.nan,
+        )
 
     def __repr__(self) -> str:
         """Return one line."""
@@ -176,7 +233,8 @@ def summarise(
         raise LogError(msg)
     level = checks.confidence_level(confidence_level)
     return Overview(
-        fit=fit, plain=plain_count(fit.tally),
+        fit=fit,
+        plain=plain_count(fit.tally),
         conversion=time_to_convert(fit, horizons, confidence_level=level),
         endings=outcomes(fit, confidence_level=level),
         steps=first_passage(fit, clock="steps", confidence_level=level),
@@ -199,12 +257,14 @@ def plain_count(tally: Tally) -> PlainCount:
         Journeys by what became of them so far.
     """
     n, outcome = tally.journeys["n"], tally.journeys["outcome"]
-    ended = {name: int(n[outcome == code].sum())
-             for code, name in enumerate(tally.rules.outcomes, start=FIRST_OUTCOME)}
+    ended = {name: int(n[outcome == code].sum()) for code, name in enumerate(tally.rules.outcomes, start=FIRST_OUTCOME)}
     if tally.rules.silence_us is not None:
         ended["lapsed"] = int(n[outcome == LAPSED].sum())
     return PlainCount(
-        n_people=tally.n_people, n_journeys=tally.n_journeys,
-        n_sure=int(n[tally.journeys["sure"] == 1].sum()), n_undecided=int(n[outcome == OPEN].sum()),
-        n_by_outcome=ended, n_converted=sum(ended[name] for name in tally.rules.converted),
+        n_people=tally.n_people,
+        n_journeys=tally.n_journeys,
+        n_sure=int(n[tally.journeys["sure"] == 1].sum()),
+        n_undecided=int(n[outcome == OPEN].sum()),
+        n_by_outcome=ended,
+        n_converted=sum(ended[name] for name in tally.rules.converted),
     )

@@ -13,8 +13,8 @@ from journeys import checks
 from journeys.errors import LogError
 from journeys.kernels.arrays import BoolArray
 from journeys.kernels.bins import DAY_US, STANDARD_HORIZONS_US, elapsed_edges
-from journeys.kernels.counting import FIRST_OUTCOME
 from journeys.kernels.intervals import variance_from_buckets
+from journeys.kernels.records import FIRST_OUTCOME
 from journeys.kernels.sojourn import StayFit, cell_influence, fit_stays
 from journeys.kernels.stays import Stays
 from journeys.models.fit import JourneyFit
@@ -91,16 +91,21 @@ def time_to_convert(
     parts, keys = [so_far, by_log], [("converted", SO_FAR, "log")]
     keys += [("converted", checks.duration_text(one), "log") for one in chosen]
     flags = [joined_flags([(so_far.few, TOO_FEW)], 1), log_flags]
-    for clock, measure, names in (("steps", "probability", "converted"), ("steps", "mean", "steps"),
-                                  ("time", "mean", "days")):
+    for clock, measure, names in (
+        ("steps", "probability", "converted"),
+        ("steps", "mean", "steps"),
+        ("time", "mean", "days"),
+    ):
         answer = first_passage(fit, None, clock)
         row = ((answer.keys.start_state == "entry") & (answer.keys.measure == measure)).to_numpy()
         parts.append(answer.estimates.take(row))
         flags.append(answer.flag[row])
         keys.append((names, IN_THE_END, "model"))
     return TimeToConvertResult(
-        keys=pd.DataFrame(keys, columns=["measure", "horizon", "basis"]), estimates=Estimates.joined(parts),
-        flag=np.concatenate(flags), confidence_level=level,
+        keys=pd.DataFrame(keys, columns=["measure", "horizon", "basis"]),
+        estimates=Estimates.joined(parts),
+        flag=np.concatenate(flags),
+        confidence_level=level,
     )
 
 
@@ -192,5 +197,3 @@ def _followed(found: StayFit, stays: Stays) -> float:
         return np.inf
     at_risk = np.flatnonzero(found.at_risk[0] > 0)
     return float(stays.upper[at_risk[-1]] * DAY_US) if len(at_risk) else 0.0
-
-

@@ -20,7 +20,7 @@ def limbs(values: NDArray[np.int64], name: str) -> Columns:
 
 def join_limbs(columns: Mapping[str, NDArray[np.int64]], name: str) -> NDArray[np.float64]:
     """Return the sums of a split column as floats."""
-    return columns[f"{name}_high"] * float(1 << _LIMB) + columns[f"{name}_low"]
+    return columns[f"{name}_high"].astype(np.float64) * (1 << _LIMB) + columns[f"{name}_low"]
 
 
 def exact_limbs(columns: Mapping[str, NDArray[np.int64]], name: str) -> list[int]:

@@ -15,12 +15,11 @@ from journeys.intake.read import LogSource, open_log
 from journeys.intake.rows import Rows
 from journeys.intake.rules import JourneyRules
 from journeys.kernels.bins import DAY_US, dwell_edges, elapsed_edges
-from journeys.kernels.counting import FIRST_OUTCOME, Reading
+from journeys.kernels.records import FIRST_OUTCOME, Reading
 from journeys.tally.blocks import cut_between_ties
 from journeys.tally.counter import Counter, OutOfOrderError, StateCodes, Sums
 from journeys.tally.keys import MOST_BINS
 from journeys.tally.spill import Spill
-from journeys.tally.spool import spooled
 from journeys.tally.tally import N_BUCKETS, Tally, join_key, split_key
 
 
@@ -70,7 +69,7 @@ def count_log(source: Any, rules: JourneyRules, *, progress: bool = False) -> Ta
     """
     log = open_log(source, rules.columns, text=(rules.event,))
     if log.one_shot:
-        with spooled(log, rules) as kept:
+        with log.spooled() as kept:
             return _count(kept, rules, progress)
     return _count(log, rules, progress)
 
@@ -80,8 +79,10 @@ def _count(log: LogSource, rules: JourneyRules, progress: bool) -> Tally:
     log_start = look.first_us if rules.log_start_us is None else rules.log_start_us
     as_of = look.last_us if rules.as_of_us is None else rules.as_of_us
     if log_start > as_of:
-        msg = (f"log_start ({np.datetime64(log_start, 'us')}) is after as_of ({np.datetime64(as_of, 'us')}); "
-               "set log_start and as_of to the span of the log")
+        msg = (
+            f"log_start ({np.datetime64(log_start, 'us')}) is after as_of ({np.datetime64(as_of, 'us')}); "
+            "set log_start and as_of to the span of the log"
+        )
         raise LogError(msg)
     if look.whole_days and (as_of - log_start) // DAY_US >= MOST_BINS:
         msg = f"the log spans more than {MOST_BINS:,} days; set log_start and as_of to the span of the log"
@@ -97,13 +98,24 @@ class _Pass:
     """One reading of the log."""
 
     def __init__(
-        self, log: LogSource, rules: JourneyRules, look: Look, log_start_us: int, as_of_us: int, progress: bool
+        self,
+        log: LogSource,
+        rules: JourneyRules,
+        look: Look,
+        log_start_us: int,
+        as_of_us: int,
+        progress: bool,
     ) -> None:
         self._log, self._rules, self._look, self._progress = log, rules, look, progress
         self._reading = Reading(
-            n_outcomes=len(rules.outcomes), n_converted=len(rules.converted), silence_us=rules.silence_us,
-            same_outcome_us=rules.same_outcome_us, merge_repeats=rules.repeats == "merge",
-            log_start_us=log_start_us, as_of_us=as_of_us, complete_history=rules.complete_history,
+            n_outcomes=len(rules.outcomes),
+            n_converted=len(rules.converted),
+            silence_us=rules.silence_us,
+            same_outcome_us=rules.same_outcome_us,
+            merge_repeats=rules.repeats == "merge",
+            log_start_us=log_start_us,
+            as_of_us=as_of_us,
+            complete_history=rules.complete_history,
         )
         self._findings = Findings()
         self._normaliser = Normaliser(rules, log_start_us=log_start_us, as_of_us=as_of_us)
@@ -134,8 +146,12 @@ class _Pass:
 
     def _counter(self) -> Counter:
         return Counter(
-            self._reading, self._codes, self._sums, self._findings,
-            columns=(self._rules.time, self._rules.event), drop_duplicates=self._rules.duplicates == "drop",
+            self._reading,
+            self._codes,
+            self._sums,
+            self._findings,
+            columns=(self._rules.time, self._rules.event),
+            drop_duplicates=self._rules.duplicates == "drop",
             stop_at_outcome=self._rules.after_outcome == "stop",
         )
 
@@ -165,7 +181,15 @@ class _Pass:
             order = np.argsort(key, kind="stable")
             tables[name] = {column: values[order] for column, values in table.items()}
         return Tally(
-            rules, tuple(seen), self._reading.log_start_us, self._reading.as_of_us, look.whole_days,
-            self._normaliser.n_rows, tables["moves"], tables["entries"], tables["journeys"],
-            {"bucket": np.arange(N_BUCKETS), **self._sums.customers}, self._normaliser.findings + self._findings,
+            rules,
+            tuple(seen),
+            self._reading.log_start_us,
+            self._reading.as_of_us,
+            look.whole_days,
+            self._normaliser.n_rows,
+            tables["moves"],
+            tables["entries"],
+            tables["journeys"],
+            {"bucket": np.arange(N_BUCKETS), **self._sums.customers},
+            self._normaliser.findings + self._findings,
         )

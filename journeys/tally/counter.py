@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -12,17 +13,8 @@ from journeys.intake.findings import Findings
 from journeys.intake.identity import bucket_of_major
 from journeys.intake.rows import Rows
 from journeys.kernels.bins import bin_of
-from journeys.kernels.counting import (
-    FIRST_OUTCOME,
-    Carried,
-    Counted,
-    Ends,
-    Entries,
-    Moves,
-    Reading,
-    close_log,
-    count_rows,
-)
+from journeys.kernels.counting import close_log, count_rows
+from journeys.kernels.records import FIRST_OUTCOME, Carried, Counted, Ends, Entries, Moves, Reading
 from journeys.tally.accumulate import Accumulator, limbs
 from journeys.tally.keys import MOST_CODES, pack
 from journeys.tally.tally import CUSTOMER_SUMS, N_BUCKETS, SUMS
@@ -45,7 +37,7 @@ class StateCodes:
     def of_events(self, targets: list[str | None]) -> NDArray[np.int32]:
         """Return the code of each raw event, given the name it is mapped to (None: dropped, code -1)."""
         if len(targets) > len(self._of_event):
-            new = [self._add(name) for name in targets[len(self._of_event):]]
+            new = [self._add(name) for name in targets[len(self._of_event) :]]
             self._of_event = np.concatenate([self._of_event, np.array(new, np.int32)])
         return self._of_event
 
@@ -54,8 +46,10 @@ class StateCodes:
             return -1
         if name not in self._code:
             if len(self.names) >= MOST_CODES:
-                msg = (f"more than {MOST_CODES:,} states in column of events; wanted names of what people do: "
-                       "map ids or addresses to a few names with `states`")
+                msg = (
+                    f"more than {MOST_CODES:,} states in column of events; wanted names of what people do: "
+                    "map ids or addresses to a few names with `states`"
+                )
                 raise LogError(msg)
             self._code[name] = len(self.names)
             self.names.append(name)
@@ -81,18 +75,33 @@ class Sums:
 
     def add_moves(self, moves: Moves) -> None:
         """Add moves under bucket, state, next, dwell bin and busy."""
-        key = pack(bucket_of_major(moves.key), moves.state, moves.next_code,
-                   bin_of(moves.dwell, self._dwell_edges), moves.busy)
+        key = pack(
+            bucket_of_major(moves.key),
+            moves.state,
+            moves.next_code,
+            bin_of(moves.dwell, self._dwell_edges),
+            moves.busy,
+        )
         self.tables["moves"].add(key, {"n": np.ones(len(key), np.int64), **limbs(moves.dwell, "dwell")})
 
     def add_ends(self, ends: Ends) -> None:
         """Add journeys under bucket, entry state, outcome, elapsed bin and sure."""
-        key = pack(bucket_of_major(ends.key), ends.state, ends.outcome,
-                   bin_of(ends.elapsed, self._elapsed_edges), ends.sure)
-        self.tables["journeys"].add(key, {
-            "n": np.ones(len(key), np.int64), "steps": ends.steps, "steps_squared": ends.steps**2,
-            **limbs(ends.elapsed, "elapsed"),
-        })
+        key = pack(
+            bucket_of_major(ends.key),
+            ends.state,
+            ends.outcome,
+            bin_of(ends.elapsed, self._elapsed_edges),
+            ends.sure,
+        )
+        self.tables["journeys"].add(
+            key,
+            {
+                "n": np.ones(len(key), np.int64),
+                "steps": ends.steps,
+                "steps_squared": ends.steps**2,
+                **limbs(ends.elapsed, "elapsed"),
+            },
+        )
 
     def _add_entries(self, entries: Entries) -> None:
         key = pack(bucket_of_major(entries.key), entries.state, flag=entries.sure)
@@ -128,8 +137,15 @@ class Counter:
     """
 
     def __init__(
-        self, reading: Reading, codes: StateCodes, sums: Sums, findings: Findings,
-        *, columns: tuple[str, str], drop_duplicates: bool, stop_at_outcome: bool,
+        self,
+        reading: Reading,
+        codes: StateCodes,
+        sums: Sums,
+        findings: Findings,
+        *,
+        columns: tuple[str, str],
+        drop_duplicates: bool,
+        stop_at_outcome: bool,
     ) -> None:
         self._reading, self._codes, self._sums, self._findings = reading, codes, sums, findings
         self._columns = columns
@@ -172,6 +188,7 @@ class Counter:
         self._sums.add(counted)
         self._findings.add("repeated_outcome", self._columns[1], rows.row[counted.repeated])
         self._findings.add("outcome_without_states", self._columns[1], rows.row[counted.bare])
+        self._findings.add("began_after_outcome", self._columns[1], rows.row[counted.again])
         self._findings.add("first_visit_of_unsure_journey", self._columns[0], counted.unsure_visits)
         self._carried = self._carried.updated(latest, at)
 
@@ -194,7 +211,7 @@ class Counter:
         group[:-1] |= tied[1:]
         index = np.flatnonzero(group)
         some = rows.take(index)
-        columns = [some.key, some.time, some.event]
+        columns: list[NDArray[Any]] = [some.key, some.time, some.event]
         if some.sequence is not None:
             columns.append(some.sequence)
         order = np.lexsort((some.row, *columns[::-1]))

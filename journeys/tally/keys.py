@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 Ints = NDArray[np.int64]
+Whole = NDArray[np.integer[Any]] | NDArray[np.bool_]
 
 _BIN_BITS, _CODE_BITS = 22, 16
 MOST_CODES = 1 << _CODE_BITS
@@ -25,9 +27,9 @@ class KeyParts:
     flag: Ints
 
 
-def pack(bucket: Ints, first: Ints, second: Ints | int = 0, bins: Ints | int = 0, flag: Ints | int = 0) -> Ints:
+def pack(bucket: Whole, first: Whole, second: Whole | int = 0, bins: Whole | int = 0, flag: Whole | int = 0) -> Ints:
     """Pack the parts of a key, the bucket in front."""
-    key = bucket.astype(np.int64) << _CODE_BITS
+    key: Ints = bucket.astype(np.int64) << _CODE_BITS
     key |= first
     key <<= _CODE_BITS
     key |= second

@@ -13,8 +13,7 @@ from journeys.intake.rows import Rows
 
 N_PARTS = 64
 _PART_SHIFT = np.uint64(58)
-_RECORD = np.dtype([("key", "u8"), ("time", "i8"), ("event", "i4"), ("row", "i8"), ("sequence", "i8"),
-                    ("ended", "?")])
+_RECORD = np.dtype([("key", "u8"), ("time", "i8"), ("event", "i4"), ("row", "i8"), ("sequence", "i8"), ("ended", "?")])
 
 
 class Spill:
@@ -51,8 +50,11 @@ class Spill:
             Path(handle.name).unlink()
             if len(record):
                 yield Rows(
-                    key=record["key"].copy(), time=record["time"].copy(), event=record["event"].copy(),
-                    row=record["row"].copy(), sequence=record["sequence"].copy() if self._sequence else None,
+                    key=record["key"].copy(),
+                    time=record["time"].copy(),
+                    event=record["event"].copy(),
+                    row=record["row"].copy(),
+                    sequence=record["sequence"].copy() if self._sequence else None,
                     ended=record["ended"].copy() if self._ended else None,
                 )
 

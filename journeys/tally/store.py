@@ -54,13 +54,22 @@ def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | 
         held = getattr(tally, name)
         size = len(held["bucket"])
         label = pa.DictionaryArray.from_arrays(pa.array(np.zeros(size, np.int8)), pa.array([name]))
-        parts.append(pa.table({"table": label.cast(pa.string())} | {
-            column: pa.array(held[column]) if column in held else pa.nulls(size, pa.int64()) for column in every
-        }))
+        parts.append(
+            pa.table(
+                {"table": label.cast(pa.string())}
+                | {column: pa.array(held[column]) if column in held else pa.nulls(size, pa.int64()) for column in every}
+            )
+        )
     head = {
-        "format_version": FORMAT_VERSION, "rules": tally.rules.to_dict(), "states": tally.states,
-        "log_start_us": tally.log_start_us, "as_of_us": tally.as_of_us, "whole_days": tally.whole_days,
-        "n_rows": tally.n_rows, "findings": tally.record.to_dict(), "checksum": tally.checksum,
+        "format_version": FORMAT_VERSION,
+        "rules": tally.rules.to_dict(),
+        "states": tally.states,
+        "log_start_us": tally.log_start_us,
+        "as_of_us": tally.as_of_us,
+        "whole_days": tally.whole_days,
+        "n_rows": tally.n_rows,
+        "findings": tally.record.to_dict(),
+        "checksum": tally.checksum,
     }
     whole = pa.concat_tables(parts).replace_schema_metadata({HEAD: json.dumps(head).encode(), **(more or {})})
     with written_whole(path) as part:
@@ -100,11 +109,15 @@ def load(path: str | os.PathLike[str]) -> Tally:
         msg = f"no tally at {os.fspath(path)!r}; wanted a file written by tally.save"
         raise StoreError(msg) from None
     except (KeyError, pa.ArrowException, OSError, ValueError):
-        msg = f"{os.fspath(path)!r} is not a whole tally; wanted a file written by tally.save: make it again from the log"
+        msg = (
+            f"{os.fspath(path)!r} is not a whole tally; wanted a file written by tally.save: make it again from the log"
+        )
         raise StoreError(msg) from None
     if head.get("format_version") != FORMAT_VERSION:
-        msg = (f"{os.fspath(path)!r} has format version {head.get('format_version')}, this program reads "
-               f"{FORMAT_VERSION}; count the log again")
+        msg = (
+            f"{os.fspath(path)!r} has format version {head.get('format_version')}, this program reads "
+            f"{FORMAT_VERSION}; count the log again"
+        )
         raise StoreError(msg)
     try:
         tally = _from_parts(table, head)
@@ -124,6 +137,12 @@ def _from_parts(table: pa.Table, head: dict[str, Any]) -> Tally:
         rows = table.filter(pa.array(which == name))
         held[name] = {column: rows[column].to_numpy().astype(np.int64) for column in columns_of(name)}
     return Tally(
-        JourneyRules.from_dict(head["rules"]), tuple(head["states"]), head["log_start_us"], head["as_of_us"],
-        head["whole_days"], head["n_rows"], *(held[name] for name in _TABLES), Findings.from_dict(head["findings"]),
+        rules=JourneyRules.from_dict(head["rules"]),
+        states=tuple(head["states"]),
+        log_start_us=head["log_start_us"],
+        as_of_us=head["as_of_us"],
+        whole_days=head["whole_days"],
+        n_rows=head["n_rows"],
+        record=Findings.from_dict(head["findings"]),
+        **held,
     )

@@ -5,10 +5,10 @@ from __future__ import annotations
 import json
 import os
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
 from hashlib import blake2b
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import pandas as pd
@@ -16,7 +16,7 @@ import pandas as pd
 from journeys.errors import JourneysError
 from journeys.intake.findings import Findings
 from journeys.intake.rules import JourneyRules
-from journeys.kernels.counting import FIRST_OUTCOME, LAPSED, OPEN
+from journeys.kernels.records import FIRST_OUTCOME, LAPSED, OPEN
 from journeys.tally.accumulate import Columns, add_up, exact_limbs
 from journeys.tally.keys import pack, unpack
 
@@ -145,14 +145,18 @@ class Tally:
         ValueError
             If there is no table of that name.
         """
-        tables = {"moves": self.moves, "entries": self.entries, "journeys": self.journeys,
-                  "customers": self.customers}
+        tables = {
+            "moves": self.moves,
+            "entries": self.entries,
+            "journeys": self.journeys,
+            "customers": self.customers,
+        }
         if name not in tables:
             msg = f"table {name!r} is not known; wanted one of {', '.join(tables)}"
             raise ValueError(msg)
         columns = tables[name]
         labels = np.array(self.labels, dtype=object)
-        frame = {}
+        frame: dict[str, Any] = {}
         for column, values in columns.items():
             if column.endswith("_high"):
                 total = column.removesuffix("_high")
@@ -168,7 +172,14 @@ class Tally:
     @cached_property
     def checksum(self) -> str:
         """Hexadecimal digest of the tables, the rules and the span; equal tallies have equal checksums."""
-        head = [self.rules.to_dict(), self.states, self.log_start_us, self.as_of_us, self.whole_days, self.n_rows]
+        head = [
+            self.rules.to_dict(),
+            self.states,
+            self.log_start_us,
+            self.as_of_us,
+            self.whole_days,
+            self.n_rows,
+        ]
         digest = blake2b(json.dumps(head, sort_keys=True).encode(), digest_size=16)
         for table in (self.moves, self.entries, self.journeys, self.customers):
             for name, column in table.items():
@@ -201,25 +212,36 @@ class Tally:
             ("kind of times (dates or moments)", self.whole_days, other.whole_days),
         ):
             if mine != theirs:
-                msg = (f"tallies with different {what} cannot be added"
-                       + ("" if what == "rules" else f" ({mine} and {theirs})")
-                       + "; give both parts the same rules with as_of and log_start set")
+                msg = (
+                    f"tallies with different {what} cannot be added"
+                    + ("" if what == "rules" else f" ({mine} and {theirs})")
+                    + "; give both parts the same rules with as_of and log_start set"
+                )
                 raise JourneysError(msg)
         states = tuple(sorted({*self.states, *other.states}))
-        mine, theirs = self._recoded(states), other._recoded(states)
-        people = {name: np.maximum(a, b) if name == "largest_events" else a + b
-                  for (name, a), b in zip(self.customers.items(), other.customers.values(), strict=True)}
+        here, there = self._recoded(states), other._recoded(states)
+        people = {
+            name: np.maximum(a, b) if name == "largest_events" else a + b
+            for (name, a), b in zip(self.customers.items(), other.customers.values(), strict=True)
+        }
         people["bucket"] = self.customers["bucket"]
-        return Tally(
-            self.rules, states, self.log_start_us, self.as_of_us, self.whole_days, self.n_rows + other.n_rows,
-            *(_added(name, mine[name], theirs[name]) for name in KEYS), people, self.record + other.record,
+        tables = {name: _added(name, here[name], there[name]) for name in KEYS}
+        return replace(
+            self,
+            states=states,
+            n_rows=self.n_rows + other.n_rows,
+            record=self.record + other.record,
+            customers=people,
+            moves=tables["moves"],
+            entries=tables["entries"],
+            journeys=tables["journeys"],
         )
 
     def _recoded(self, states: tuple[str, ...]) -> dict[str, Columns]:
         """Return the keyed tables with codes of the longer list of states."""
         new = np.arange(len(self.labels))
         place = {name: self.first_state + i for i, name in enumerate(states)}
-        new[self.first_state:] = [place[name] for name in self.states]
+        new[self.first_state :] = [place[name] for name in self.states]
         return {
             name: {column: new[values] if column in _CODED else values for column, values in table.items()}
             for name, table in (("moves", self.moves), ("entries", self.entries), ("journeys", self.journeys))
@@ -243,10 +265,12 @@ class Tally:
         ended = self.journeys["outcome"] != OPEN
         lapsed = self.journeys["outcome"] == LAPSED
         n = self.journeys["n"]
-        return (f"{self.n_rows:,} rows from {self.log_start:%Y-%m-%d} to {self.as_of:%Y-%m-%d}: "
-                f"{self.n_journeys:,} journeys of {self.n_people:,} people through {len(self.states)} states; "
-                f"{int(n[ended & ~lapsed].sum()):,} ended in an outcome, {int(n[lapsed].sum()):,} lapsed, "
-                f"{int(n[~ended].sum()):,} open")
+        return (
+            f"{self.n_rows:,} rows from {self.log_start:%Y-%m-%d} to {self.as_of:%Y-%m-%d}: "
+            f"{self.n_journeys:,} journeys of {self.n_people:,} people through {len(self.states)} states; "
+            f"{int(n[ended & ~lapsed].sum()):,} ended in an outcome, {int(n[lapsed].sum()):,} lapsed, "
+            f"{int(n[~ended].sum()):,} open"
+        )
 
     def __repr__(self) -> str:
         """Return one line."""

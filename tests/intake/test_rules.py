@@ -3,7 +3,6 @@ from __future__ import annotations
 import datetime as dt
 import json
 import pickle
-import string
 
 import numpy as np
 import pandas as pd
@@ -99,7 +98,11 @@ def test_silence_must_be_given():
 def test_names_all_faults_at_once():
     with pytest.raises(RulesError) as caught:
         make(silence=3, repeats="x", horizons=["1 month"])
-    assert [line.split(":")[0] for line in str(caught.value).split("\n")] == ["silence", "repeats", "horizons"]
+    assert [line.split(":")[0] for line in str(caught.value).split("\n")] == [
+        "silence",
+        "repeats",
+        "horizons",
+    ]
     assert isinstance(caught.value, JourneysError)
     assert isinstance(caught.value, ValueError)
 
@@ -255,10 +258,13 @@ def test_instants_are_read_back(us):
 @pytest.mark.parametrize(
     ("value", "us"),
     [
-        ("30d", 30 * DAY), ("12h", DAY // 2), ("90min", 5_400_000_000), ("2 weeks", 14 * DAY), ("1W", 7 * DAY),
+        ("30d", 30 * DAY), ("12h", DAY // 2), ("90min", 5_400_000_000), ("2 weeks", 14 * DAY),
+        ("1W", 7 * DAY),
         ("1.5 days", 3 * DAY // 2), ("1 day 02:30:00", DAY + 9_000_000_000), ("1d12h", 3 * DAY // 2),
-        ("00:00:01.5", 1_500_000), ("P1DT2H", DAY + 7_200_000_000), ("PT5M", 300_000_000), ("3 secs", 3_000_000),
-        (pd.Timedelta(days=1), DAY), (dt.timedelta(milliseconds=1), 1_000), (np.timedelta64(2, "h"), DAY // 12),
+        ("00:00:01.5", 1_500_000), ("P1DT2H", DAY + 7_200_000_000), ("PT5M", 300_000_000),
+        ("3 secs", 3_000_000),
+        (pd.Timedelta(days=1), DAY), (dt.timedelta(milliseconds=1), 1_000),
+        (np.timedelta64(2, "h"), DAY // 12),
     ],
 )  # fmt: skip
 def test_durations(value, us):
@@ -266,7 +272,8 @@ def test_durations(value, us):
 
 
 @pytest.mark.parametrize(
-    "value", [pd.Timedelta(1, "ns"), np.timedelta64("NaT"), np.timedelta64(1, "M"), "1 day 26:99", "inf", "1e3d"]
+    "value",
+    [pd.Timedelta(1, "ns"), np.timedelta64("NaT"), np.timedelta64(1, "M"), "1 day 26:99", "inf", "1e3d"],
 )
 def test_refuses_durations(value):
     with pytest.raises(ValueError, match="x: got"):

@@ -1,0 +1,206 @@
+"""`journeys` on the command line: parse, log, call, return an exit code. No statistics here."""
+
+from __future__ import annotations
+
+import argparse
+import json
+import logging
+import sys
+import warnings
+from collections.abc import Sequence
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from journeys.errors import JourneysError, JourneysWarning, LimitError, RulesError
+
+if TYPE_CHECKING:
+    from journeys.intake.rules import JourneyRules
+    from journeys.tally.tally import Tally
+
+DONE, FAILED, USAGE, LIMITS = 0, 1, 2, 3
+EXIT_CODES = """exit codes:
+  0  done
+  1  failed
+  2  wrong usage or settings
+  3  the log broke its quality limits, nothing was published
+"""
+logger = logging.getLogger("journeys")
+
+
+def main(argv: Sequence[str] | None = None) -> int:
+    """Run one command.
+
+    Parameters
+    ----------
+    argv : sequence of str, optional
+        The words after the program's name; default those of the process.
+
+    Returns
+    -------
+    int
+        The exit code.
+    """
+    parser = _parser()
+    try:
+        options = parser.parse_args(argv)
+    except SystemExit as stop:
+        return int(stop.code or 0)
+    logging.basicConfig(stream=sys.stderr, format="%(levelname)s %(message)s", level=logging.INFO, force=True)
+    with warnings.catch_warnings():
+        warnings.showwarning = _log_warning
+        warnings.simplefilter("always", JourneysWarning)
+        try:
+            options.run(options)
+        except JourneysError as error:
+            code = LIMITS if isinstance(error, LimitError) else USAGE if isinstance(error, RulesError) else FAILED
+            return _refused(error, code, options.debug)
+        except Exception as error:
+            return _refused(error, FAILED, options.debug)
+    return DONE
+
+
+def _parser() -> argparse.ArgumentParser:
+    parser = argparse.ArgumentParser(
+        prog="journeys",
+        description="From an event log to how many convert, how soon, where they are lost, how sure.",
+        epilog=EXIT_CODES,
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+    )
+    commands = parser.add_subparsers(required=True, metavar="COMMAND")
+    for name, run, what in (
+        ("summary", _summary, "the main job: count the log, fit, and write the summary"),
+        ("audit", _audit, "what was left out of the log, and whether it can carry the model"),
+        ("tally", _tally, "count the log and keep the counts"),
+    ):
+        command = commands.add_parser(
+            name,
+            help=what,
+            description=what,
+            epilog=EXIT_CODES,
+            formatter_class=argparse.RawDescriptionHelpFormatter,
+        )
+        command.set_defaults(run=run)
+        command.add_argument(
+            "log", metavar="LOG", help="Parquet, CSV or Arrow file, a folder of them, or a saved tally"
+        )
+        command.add_argument("--rules", metavar="FILE", help="rules file (TOML); not needed for a saved tally")
+        command.add_argument("--debug", action="store_true", help="show where an error came from")
+        if name == "summary":
+            command.add_argument("--out", metavar="FOLDER", required=True, help="where the summary goes")
+            command.add_argument("--keep-tally", action="store_true", help="write the tally there too")
+            command.add_argument(
+                "--horizon",
+                action="append",
+                metavar="TIME",
+                help='share converted within this time, such as "14d"; may be given several times',
+            )
+        if name == "tally":
+            command.add_argument("--out", metavar="FILE", required=True, help="where the tally goes")
+        else:
+            command.add_argument("--json", action="store_true", help="print for machines")
+    return parser
+
+
+def _summary(options: argparse.Namespace) -> None:
+    from journeys.models.model import JourneyModel
+    from journeys.questions.overview import summarise
+    from journeys.show.summary import summary_text, write_summary
+
+    tally = _counted(options)
+    check_limits(tally)
+    fit = JourneyModel().fit(tally)
+    overview = summarise(fit, options.horizon)
+    written = write_summary(overview, options.out)
+    if options.keep_tally:
+        written.append(Path(options.out) / "tally.parquet")
+        tally.save(written[-1])
+    for path in written:
+        logger.info("wrote %s", path)
+    if options.json:
+        from journeys.show.tables import file_frame
+
+        _print_json({"tally": tally.checksum, "estimates": _records(file_frame(overview.to_frame()))})
+    else:
+        sys.stdout.write(summary_text(overview))
+
+
+def _audit(options: argparse.Namespace) -> None:
+    from journeys.questions.audit import audit
+
+    seen = audit(_counted(options))
+    if options.json:
+        _print_json(
+            {
+                "carries_model": seen.carries_model,
+                "checks": _records(seen.checks),
+                "findings": _records(seen.findings),
+            }
+        )
+    else:
+        sys.stdout.write(seen.summary() + "\n")
+
+
+def _tally(options: argparse.Namespace) -> None:
+    tally = _counted(options)
+    tally.save(options.out)
+    logger.info("wrote %s", options.out)
+    sys.stdout.write(tally.summary() + "\n")
+
+
+def _counted(options: argparse.Namespace) -> Tally:
+    """Return the tally of LOG, or LOG itself where it is a saved one."""
+    from journeys.tally.store import is_tally, load
+
+    if is_tally(options.log):
+        tally = load(options.log)
+        if options.rules is not None and _rules(options) != tally.rules:
+            msg = f"--rules {options.rules}: these are not the rules {options.log} was counted by; leave --rules out"
+            raise RulesError(msg)
+        return tally
+    from journeys.tally.count import count_log
+
+    return count_log(options.log, _rules(options), progress=sys.stderr.isatty())
+
+
+def _rules(options: argparse.Namespace) -> JourneyRules:
+    from journeys.intake.rules import JourneyRules
+
+    if options.rules is None:
+        msg = "--rules is missing; wanted a rules file (TOML) beside an event log"
+        raise RulesError(msg)
+    return JourneyRules.from_toml(options.rules)
+
+
+def check_limits(tally: Tally) -> None:
+    """Raise a LimitError if more rows were unreadable than the rules allow."""
+    from journeys.intake.findings import UNREADABLE
+
+    n, limit = sum(tally.record.n(code) for code in UNREADABLE), tally.rules.limits["unreadable"]
+    if n > limit * tally.n_rows:
+        msg = (
+            f"{n:,} of {tally.n_rows:,} rows ({n / tally.n_rows:.2%}) have no readable customer, time or event; the "
+            f"limit is {limit:.2%}. Mend the export, or set [limits] unreadable in the rules; `journeys audit` "
+            "says which rows"
+        )
+        raise LimitError(msg)
+
+
+def _records(frame: Any) -> list[dict[str, Any]]:
+    records: list[dict[str, Any]] = json.loads(frame.to_json(orient="records"))
+    return records
+
+
+def _print_json(answer: dict[str, Any]) -> None:
+    sys.stdout.write(json.dumps(answer, indent=1) + "\n")
+
+
+def _refused(error: BaseException, code: int, debug: bool) -> int:
+    if debug:
+        logger.error("failed", exc_info=error)
+    else:
+        logger.error("%s", " ".join(str(error).split()) or type(error).__name__)
+    return code
+
+
+def _log_warning(message: Warning | str, *_: Any, **__: Any) -> None:
+    logger.warning("%s", message)

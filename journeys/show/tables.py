@@ -1,0 +1,102 @@
+"""Frames as files and as Markdown tables; names from the data can do no harm in either."""
+
+from __future__ import annotations
+
+import os
+import re
+
+import numpy as np
+import pandas as pd
+
+from journeys.files import written_whole
+
+# What a spreadsheet takes for the beginning of a formula.
+_FORMULA = ("=", "+", "-", "@", "\t", "\r")
+
+
+def file_frame(frame: pd.DataFrame) -> pd.DataFrame:
+    """Return a frame fit for a file: infinite numbers blank (their flag says so), text columns plain text.
+
+    Parameters
+    ----------
+    frame : DataFrame
+        Tidy estimates.
+
+    Returns
+    -------
+    DataFrame
+        A copy.
+    """
+    out = frame.copy()
+    for name in out.columns:
+        column = out[name]
+        if pd.api.types.is_float_dtype(column):
+            out[name] = column.where(np.isfinite(column))
+        elif not pd.api.types.is_numeric_dtype(column):
+            out[name] = column.astype("object").where(column.notna(), "").astype(str)
+    return out
+
+
+def write_parquet(frame: pd.DataFrame, path: str | os.PathLike[str]) -> None:
+    """Write a frame to a Parquet file, whole or not at all."""
+    with written_whole(path) as part:
+        file_frame(frame).to_parquet(part, index=False)
+
+
+def write_csv(frame: pd.DataFrame, path: str | os.PathLike[str]) -> None:
+    """Write a frame to a CSV file; text that a spreadsheet would run as a formula gets an apostrophe in front."""
+    out = file_frame(frame)
+    for name in out.columns:
+        if not pd.api.types.is_numeric_dtype(out[name]):
+            out[name] = out[name].map(cell_text)
+    with written_whole(path) as part:
+        out.rename(columns=cell_text).to_csv(part, index=False)
+
+
+def cell_text(text: str) -> str:
+    """Return text that a spreadsheet shows as text.
+
+    Examples
+    --------
+    >>> cell_text("=2+2"), cell_text("joined")
+    ("'=2+2", 'joined')
+    """
+    return f"'{text}" if text.startswith(_FORMULA) else text
+
+
+def markdown_table(frame: pd.DataFrame) -> str:
+    r"""Return a frame as a Markdown table.
+
+    Parameters
+    ----------
+    frame : DataFrame
+        Text and numbers as they shall be read.
+
+    Returns
+    -------
+    str
+
+    Examples
+    --------
+    >>> print(markdown_table(pd.DataFrame({"state": ["a|b"], "n": ["3"]})))
+    | state | n |
+    |---|---|
+    | a\|b | 3 |
+    """
+    rows = [[markdown_text(str(cell)) for cell in row] for row in frame.to_numpy(dtype=object)]
+    head = "| " + " | ".join(markdown_text(str(name)) for name in frame.columns) + " |"
+    rule = "|" + "---|" * len(frame.columns)
+    return "\n".join([head, rule, *("| " + " | ".join(row) + " |" for row in rows)])
+
+
+def markdown_text(text: str) -> str:
+    r"""Return text that Markdown shows as it is: markup escaped, line breaks and control characters as spaces.
+
+    Examples
+    --------
+    >>> markdown_text("<b>*x*")
+    '\\<b\\>\\*x\\*'
+    """
+    printable = "".join(char if char.isprintable() else " " for char in text)
+    # An underscore inside a word is no markup, and names are full of them.
+    return re.sub(r"[\\`*{}\[\]<>#|~]|(?<![^\W_])_|_(?![^\W_])", r"\\\g<0>", printable)

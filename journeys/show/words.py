@@ -1,0 +1,107 @@
+"""Numbers and names in words: shares in percent with their interval, lapses and open journeys in plain terms."""
+
+from __future__ import annotations
+
+import math
+import re
+
+from journeys.checks import duration_text
+from journeys.intake.rules import JourneyRules
+from journeys.questions.linear import TOO_FEW
+
+UNDECIDED = "undecided yet"
+
+
+def percent(share: float) -> str:
+    """Return a share in percent: one digit after the point, more where it is tiny.
+
+    Examples
+    --------
+    >>> percent(0.142), percent(0.0004), percent(float("nan"))
+    ('14.2 %', '0.04 %', '')
+    """
+    return f"{_scaled(share)} %" if math.isfinite(share) else ""
+
+
+def share_with_interval(estimate: float, low: float, high: float, flag: str = "") -> str:
+    """Return a share with its interval, or with the one bound it has.
+
+    Examples
+    --------
+    >>> share_with_interval(0.142, 0.134, 0.151)
+    '14.2 % (13.4–15.1)'
+    >>> share_with_interval(0.0, 0.0, 0.031, "too few")
+    '0.0 % (under 3.1)'
+    """
+    if not math.isfinite(estimate):
+        return ""
+    if not (math.isfinite(low) and math.isfinite(high)):
+        return percent(estimate)
+    if TOO_FEW in flag:
+        return f"{percent(estimate)} ({f'under {_scaled(high)}' if estimate <= 0.5 else f'over {_scaled(low)}'})"
+    return f"{percent(estimate)} ({_scaled(low)}–{_scaled(high)})"
+
+
+def amount_with_interval(estimate: float, low: float, high: float) -> str:
+    """Return a number of steps or days with its interval.
+
+    Examples
+    --------
+    >>> amount_with_interval(7.271, 7.19, 7.35), amount_with_interval(float("inf"), float("nan"), float("nan"))
+    ('7.27 (7.19–7.35)', 'some never do')
+    """
+    if math.isinf(estimate):
+        return "some never do"
+    if math.isnan(estimate):
+        return ""
+    if not (math.isfinite(low) and math.isfinite(high)):
+        return f"{estimate:.3g}"
+    digits = 0 if estimate >= 100 else 1 if estimate >= 10 else 2
+    return f"{estimate:,.{digits}f} ({low:,.{digits}f}–{high:,.{digits}f})"
+
+
+def outcome_words(outcome: str, rules: JourneyRules) -> str:
+    """Return an outcome as readers call it: a lapse is a silence, the others go by their own names."""
+    if outcome != "lapsed" or rules.silence_us is None:
+        return outcome
+    return f"quiet for over {length_words(rules.silence_us)}"
+
+
+def length_words(microseconds: int) -> str:
+    """Return a duration in words.
+
+    Examples
+    --------
+    >>> length_words(30 * 86_400_000_000), length_words(3_600_000_000)
+    ('30 days', '1 hour')
+    """
+    text = duration_text(microseconds)
+    names = {
+        "d": "day",
+        "h": "hour",
+        "min": "minute",
+        "s": "second",
+        "ms": "millisecond",
+        "us": "microsecond",
+    }
+    match = re.fullmatch(r"(\d+)([a-z]+)", text)
+    if match is None:
+        return text
+    n, unit = int(match[1]), names[match[2]]
+    return f"{n} {unit}" + ("" if n == 1 else "s")
+
+
+def listed(names: tuple[str, ...]) -> str:
+    """Return names joined for a sentence.
+
+    Examples
+    --------
+    >>> listed(("joined", "bought", "gave"))
+    'joined, bought or gave'
+    """
+    return names[0] if len(names) == 1 else ", ".join(names[:-1]) + " or " + names[-1]
+
+
+def _scaled(share: float) -> str:
+    value = 100 * share
+    return f"{value:.1f}" if value == 0 or abs(value) >= 0.1 else f"{value:.1g}"
