@@ -99,4 +99,5 @@ def bin_bounds_days(edges: NDArray[np.int64] | None, n_bins: int) -> tuple[NDArr
 
 def _geometric(first: float, ratio: float) -> NDArray[np.int64]:
     steps = int(np.ceil(np.log(LONGEST_US / first) / np.log(ratio))) + 1
-    return np.rint(first * ratio ** np.arange(max(steps, 1))).astype(np.int64)
+    edges: NDArray[np.float64] = np.rint(first * ratio ** np.arange(max(steps, 1)))
+    return edges.astype(np.int64)

@@ -165,6 +165,8 @@ class _Pass:
 
     def _tally(self) -> Tally:
         rules, look = self._rules, self._look
+        findings = self._normaliser.findings + self._findings
+        findings.add("later_than_now", rules.time, look.n_later_than_now)
         first_state = FIRST_OUTCOME + len(rules.outcomes)
         states = self._codes.names[first_state:]
         seen = sorted(states)
@@ -191,5 +193,5 @@ class _Pass:
             tables["entries"],
             tables["journeys"],
             {"bucket": np.arange(N_BUCKETS), **self._sums.customers},
-            self._normaliser.findings + self._findings,
+            findings,
         )
