@@ -74,6 +74,36 @@ def confidence_level(value: float) -> float:
     return float(value)
 
 
+def whole(value: int, name: str, least: int) -> int:
+    """Whole number of at least some size.
+
+    Parameters
+    ----------
+    value : int
+    name : str
+        Name of the argument, for the message.
+    least : int
+        The smallest one allowed.
+
+    Returns
+    -------
+    int
+
+    Raises
+    ------
+    ValueError
+        If it is something else.
+
+    Examples
+    --------
+    >>> whole(2, "n_workers", 1)
+    2
+    """
+    if isinstance(value, bool | np.bool_) or not isinstance(value, int | np.integer) or value < least:
+        raise ValueError(f"{name}: got {value!r}; wanted a whole number from {least}")
+    return int(value)
+
+
 def one_of(value: T, choices: Sequence[T], name: str) -> T:
     """Return the value, if it is one of the choices.
 

@@ -2,10 +2,11 @@
 
 from __future__ import annotations
 
+import errno
 import os
 import tempfile
-from collections.abc import Iterator
-from contextlib import contextmanager
+from collections.abc import Iterator, Sequence
+from contextlib import ExitStack, contextmanager
 from pathlib import Path
 
 
@@ -23,6 +24,11 @@ def written_whole(path: str | os.PathLike[str]) -> Iterator[Path]:
     pathlib.Path
         Where to write.
 
+    Raises
+    ------
+    OSError
+        If the folder is missing or may not be written in, or `path` is itself a folder.
+
     Examples
     --------
     >>> import tempfile
@@ -33,6 +39,9 @@ def written_whole(path: str | os.PathLike[str]) -> Iterator[Path]:
     'kept'
     """
     target = Path(path)
+    if target.is_dir():
+        # Told before the work is done, and before a file beside it has been replaced.
+        raise IsADirectoryError(errno.EISDIR, os.strerror(errno.EISDIR), str(target))
     handle, name = tempfile.mkstemp(prefix=f".{target.name[:40]}-", suffix=".part", dir=target.parent)
     os.close(handle)
     part = Path(name)
@@ -46,3 +55,26 @@ def written_whole(path: str | os.PathLike[str]) -> Iterator[Path]:
     except BaseException:
         part.unlink(missing_ok=True)
         raise
+
+
+@contextmanager
+def written_together(paths: Sequence[str | os.PathLike[str]]) -> Iterator[list[Path]]:
+    """Give a temporary path for each of several files; all are renamed when the block ends without an error.
+
+    Parameters
+    ----------
+    paths : sequence of str or path-like
+        Where the files shall stand.
+
+    Yields
+    ------
+    list of pathlib.Path
+        Where to write, in the order of `paths`.
+
+    Raises
+    ------
+    OSError
+        As in `written_whole`.
+    """
+    with ExitStack() as parts:
+        yield [parts.enter_context(written_whole(path)) for path in paths]

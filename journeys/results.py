@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+import textwrap
+from collections.abc import Collection, Mapping, Sequence
 from dataclasses import dataclass, field, fields
 from typing import ClassVar
 
@@ -156,12 +157,16 @@ class Result:
         return self.keys.assign(low=low, high=high, confidence_level=level)
 
     def summary(self) -> str:
-        """Return the answer as a plain text table."""
-        return f"{self.title}\n{self.to_frame().to_string(index=False)}"
+        """Return the answer as a plain text table; numbers to four digits."""
+        frame = self.to_frame().drop(columns="confidence_level")
+        rows = [[_cell(value) for value in row] for row in frame.to_numpy(dtype=object)]
+        numbers = [i for i, name in enumerate(frame.columns) if pd.api.types.is_numeric_dtype(frame[name])]
+        table = text_table([[str(name) for name in frame.columns], *rows], right=numbers, width=0)
+        return f"{self.title}, intervals at {100 * self.confidence_level:g} %\n{table}"
 
     def __repr__(self) -> str:
         """Return one line."""
-        return f"<{type(self).__name__}: {len(self.keys)} rows at {self.confidence_level:.0%} confidence>"
+        return f"<{type(self).__name__}: {len(self.keys)} rows at {100 * self.confidence_level:g} % confidence>"
 
     def _repr_html_(self) -> str:
         return str(self.to_frame().to_html(index=False, escape=True))
@@ -173,3 +178,67 @@ def joined_flags(parts: list[tuple[BoolArray, str]], n: int) -> np.ndarray:
     for mask, text in parts:
         flag = np.where(mask, np.where(flag == "", text, flag + "; " + text), flag)
     return flag
+
+
+def printable(text: str) -> str:
+    r"""Return text on one line that cannot steer a terminal: control and layout characters as spaces.
+
+    Parameters
+    ----------
+    text : str
+        Such as a name from the data.
+
+    Returns
+    -------
+    str
+
+    Examples
+    --------
+    >>> printable("two\nlines")
+    'two lines'
+    """
+    return "".join(char if char.isprintable() else " " for char in text)
+
+
+def text_table(rows: Sequence[Sequence[str]], *, right: Collection[int] = (), width: int = 100) -> str:
+    """Return rows as plain text in columns, left-aligned and indented by two.
+
+    Parameters
+    ----------
+    rows : sequence of sequences of str
+        Cells; all rows of one length.
+    right : collection of int
+        Columns aligned to the right.
+    width : int
+        Longest line wished for: the last column is wrapped to keep within it where it can. 0: never wrapped.
+
+    Returns
+    -------
+    str
+
+    Examples
+    --------
+    >>> print(text_table([["visits", "1,204", ""], ["joined", "97", "8.1 % of visits"]], right=[1]))
+      visits  1,204
+      joined     97  8.1 % of visits
+    """
+    cells = [[printable(cell) for cell in row] for row in rows]
+    widths = [max(len(row[i]) for row in cells) for i in range(len(cells[0]) - 1)] if cells else []
+    indent = 2 + sum(each + 2 for each in widths)
+    lines = []
+    for row in cells:
+        head = "".join(
+            f"{cell:>{each}}  " if i in right else f"{cell:<{each}}  "
+            for i, (cell, each) in enumerate(zip(row, widths, strict=False))
+        )
+        last = textwrap.wrap(row[-1], max(width - indent, 20)) if width else [row[-1]]
+        lines.append(f"  {head}{last[0] if last else ''}".rstrip())
+        lines += [" " * indent + more for more in last[1:]]
+    return "\n".join(lines)
+
+
+def _cell(value: object) -> str:
+    """Return a cell of a result as text: four digits, a blank for no number."""
+    if isinstance(value, float):
+        return "" if np.isnan(value) else f"{value:.4g}" if abs(value) < 999.95 else f"{value:,.0f}"
+    return str(value)

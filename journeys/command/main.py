@@ -9,9 +9,9 @@ import sys
 import warnings
 from collections.abc import Sequence
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, NoReturn
 
-from journeys.errors import JourneysError, JourneysWarning, LimitError, RulesError
+from journeys.errors import JourneysError, JourneysWarning, LimitError, LogError, RulesError
 
 if TYPE_CHECKING:
     from journeys.intake.rules import JourneyRules
@@ -54,13 +54,17 @@ def main(argv: Sequence[str] | None = None) -> int:
         except JourneysError as error:
             code = LIMITS if isinstance(error, LimitError) else USAGE if isinstance(error, RulesError) else FAILED
             return _refused(error, code, options.debug)
+        except OSError as error:
+            place = f"{error.filename}: " if error.filename else ""
+            return _refused(error, FAILED, options.debug, f"{place}{error.strerror or error}; nothing was written")
         except Exception as error:
-            return _refused(error, FAILED, options.debug)
+            fault = f"{type(error).__name__}: {error}; this should not happen, --debug shows where it did"
+            return _refused(error, FAILED, options.debug, fault)
     return DONE
 
 
 def _parser() -> argparse.ArgumentParser:
-    parser = argparse.ArgumentParser(
+    parser = _Parser(
         prog="journeys",
         description="From an event log to how many convert, how soon, where they are lost, how sure.",
         epilog=EXIT_CODES,
@@ -106,14 +110,16 @@ def _summary(options: argparse.Namespace) -> None:
     from journeys.questions.overview import summarise
     from journeys.show.summary import summary_text, write_summary
 
+    out = Path(options.out)
+    if out.exists() and not out.is_dir():
+        msg = f"--out {out}: is a file; wanted a folder, new or there already"
+        raise RulesError(msg)
+    horizons = _horizons(options)
     tally = _counted(options)
     check_limits(tally)
     fit = JourneyModel().fit(tally)
-    overview = summarise(fit, options.horizon)
-    written = write_summary(overview, options.out)
-    if options.keep_tally:
-        written.append(Path(options.out) / "tally.parquet")
-        tally.save(written[-1])
+    overview = summarise(fit, horizons)
+    written = write_summary(overview, out, keep_tally=options.keep_tally)
     for path in written:
         logger.info("wrote %s", path)
     if options.json:
@@ -141,10 +147,29 @@ def _audit(options: argparse.Namespace) -> None:
 
 
 def _tally(options: argparse.Namespace) -> None:
+    out = Path(options.out)
+    if out.is_dir():
+        msg = f"--out {out}: is a folder; wanted a file, such as {out / 'tally.parquet'}"
+        raise RulesError(msg)
+    if not out.parent.is_dir():
+        msg = f"--out {out}: there is no folder {out.parent}; make it first, or name another place"
+        raise RulesError(msg)
     tally = _counted(options)
     tally.save(options.out)
     logger.info("wrote %s", options.out)
     sys.stdout.write(tally.summary() + "\n")
+
+
+def _horizons(options: argparse.Namespace) -> list[str] | None:
+    """Return --horizon as given, once each can be read."""
+    from journeys.checks import duration_us
+
+    for one in options.horizon or ():
+        try:
+            duration_us(one, "--horizon")
+        except ValueError as fault:
+            raise RulesError(str(fault)) from None
+    return options.horizon  # type: ignore[no-any-return]
 
 
 def _counted(options: argparse.Namespace) -> Tally:
@@ -154,7 +179,10 @@ def _counted(options: argparse.Namespace) -> Tally:
     if is_tally(options.log):
         tally = load(options.log)
         if options.rules is not None and _rules(options) != tally.rules:
-            msg = f"--rules {options.rules}: these are not the rules {options.log} was counted by; leave --rules out"
+            msg = (
+                f"--rules {options.rules}: these are not the rules {options.log} was counted by; leave --rules out, "
+                "or count the log again"
+            )
             raise RulesError(msg)
         return tally
     from journeys.tally.count import count_log
@@ -166,7 +194,10 @@ def _rules(options: argparse.Namespace) -> JourneyRules:
     from journeys.intake.rules import JourneyRules
 
     if options.rules is None:
-        msg = "--rules is missing; wanted a rules file (TOML) beside an event log"
+        if not Path(options.log).exists():
+            msg = f"{options.log}: no such file"
+            raise LogError(msg)
+        msg = f"--rules is missing: {options.log} is not a saved tally; wanted --rules FILE, as for any event log"
         raise RulesError(msg)
     return JourneyRules.from_toml(options.rules)
 
@@ -178,28 +209,38 @@ def check_limits(tally: Tally) -> None:
     n, limit = sum(tally.record.n(code) for code in UNREADABLE), tally.rules.limits["unreadable"]
     if n > limit * tally.n_rows:
         msg = (
-            f"{n:,} of {tally.n_rows:,} rows ({n / tally.n_rows:.2%}) have no readable customer, time or event; the "
-            f"limit is {limit:.2%}. Mend the export, or set [limits] unreadable in the rules; `journeys audit` "
-            "says which rows"
+            f"{n:,} of {tally.n_rows:,} rows ({100 * n / tally.n_rows:.2f} %) have no readable customer, time or "
+            f"event; the limit is {100 * limit:.2f} %, so nothing was published. Mend the export, or raise [limits] "
+            "unreadable in the rules; `journeys audit` says which rows"
         )
         raise LimitError(msg)
 
 
 def _records(frame: Any) -> list[dict[str, Any]]:
-    records: list[dict[str, Any]] = json.loads(frame.to_json(orient="records"))
+    """Return rows for JSON: numbers to their last digit, null where there is none."""
+    plain = frame.astype(object)
+    records: list[dict[str, Any]] = plain.where(frame.notna(), None).to_dict(orient="records")
     return records
 
 
 def _print_json(answer: dict[str, Any]) -> None:
-    sys.stdout.write(json.dumps(answer, indent=1) + "\n")
+    sys.stdout.write(json.dumps(answer, indent=1, allow_nan=False) + "\n")
 
 
-def _refused(error: BaseException, code: int, debug: bool) -> int:
-    if debug:
-        logger.error("failed", exc_info=error)
-    else:
-        logger.error("%s", " ".join(str(error).split()) or type(error).__name__)
+def _refused(error: BaseException, code: int, debug: bool, told: str | None = None) -> int:
+    """Say in one line what was wrong; several faults are told one after another."""
+    lines = [line.strip() for line in (told or str(error) or type(error).__name__).splitlines()]
+    line = "; and ".join(line for line in lines if line)
+    # What a file or a name holds must not steer the terminal.
+    logger.error("%s", "".join(char if char.isprintable() else " " for char in line), exc_info=error if debug else None)
     return code
+
+
+class _Parser(argparse.ArgumentParser):
+    """Tells wrong usage in one line, as every other fault is told."""
+
+    def error(self, message: str) -> NoReturn:
+        self.exit(USAGE, f"ERROR {message}; `{self.prog} --help` says what is wanted\n")
 
 
 def _log_warning(message: Warning | str, *_: Any, **__: Any) -> None:

@@ -8,7 +8,7 @@ from collections.abc import Iterable, Iterator, Sequence
 import pyarrow as pa
 
 from journeys.errors import LogError
-from journeys.intake.read_files import ROWS_AT_ONCE
+from journeys.intake.read_parquet import ROWS_AT_ONCE
 
 _FEW_ROWS = 1 << 16
 

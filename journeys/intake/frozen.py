@@ -89,9 +89,14 @@ def _key(name: str) -> str:
 
 
 def _value(value: object) -> str:
-    """One value; JSON strings are TOML strings but for the one control character JSON leaves bare."""
+    """One value; JSON strings are TOML strings, once what cannot be seen is escaped.
+
+    JSON leaves one control character bare that TOML forbids, and marks that turn the direction of writing,
+    which would show a reader other rules than those in force.
+    """
     if isinstance(value, str):
-        return json.dumps(value, ensure_ascii=False).replace("\x7f", "\\u007f")
+        written = json.dumps(value, ensure_ascii=False)
+        return "".join(char if char.isprintable() else f"\\U{ord(char):08x}" for char in written)
     if isinstance(value, bool):
         return "true" if value else "false"
     if isinstance(value, int | float):

@@ -8,7 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from journeys.checks import DAY_US, instant_text
+from journeys.checks import DAY_US, MAX_TIME_US, MIN_TIME_US, instant_text
 from journeys.errors import LogError
 from journeys.intake.read import LogSource
 from journeys.intake.rules import JourneyRules
@@ -95,6 +95,8 @@ def first_look(source: LogSource, rules: JourneyRules, *, now_us: int | None = N
     (2, 2, False)
     """
     now = time.time_ns() // 1_000 if now_us is None else now_us
+    if (look := _look_at_ranges(source, rules, now)) is not None:
+        return look
     reader, n_rows, n_later = TimeReader(rules.time), 0, 0
     empty = np.empty(0, dtype=np.int64)
     days = _Days(empty, empty, empty, empty)
@@ -115,6 +117,36 @@ def first_look(source: LogSource, rules: JourneyRules, *, now_us: int | None = N
     if fixes := _clock_faults(days, rules):
         raise LogError(f"column {rules.time!r}: " + "; ".join(fixes))
     return Look(int(days.first[0]), int(days.last[-1]), n_rows, bool(reader.whole_days), n_later)
+
+
+def _look_at_ranges(source: LogSource, rules: JourneyRules, now: int) -> Look | None:
+    """Look at what the files note of their pieces; None where that does not settle everything."""
+    ranges = source.ranges(rules.time)
+    silence = rules.silence_us or 0
+    # A hole of the kind looked for cannot hide in a piece that is no longer than the silence.
+    if ranges is None or not ranges.n or silence < DAY_US:
+        return None
+    reader = TimeReader(rules.time)
+    first, last = reader.read(ranges.first), reader.read(ranges.last)
+    lowest = MIN_TIME_US if rules.log_start_us is None else rules.log_start_us
+    highest = MAX_TIME_US if rules.as_of_us is None else rules.as_of_us
+    settled = first.usable() & last.usable() & (first.us >= lowest) & (last.us <= min(highest, now))
+    if not (settled & (last.us - first.us <= silence)).all():
+        return None
+    days = _apart(first.us, last.us, np.array(ranges.n))
+    if fixes := _clock_faults(days, rules):
+        raise LogError(f"column {rules.time!r}: " + "; ".join(fixes))
+    return Look(int(days.first[0]), int(days.last[-1]), ranges.n_rows, bool(reader.whole_days), 0)
+
+
+def _apart(first: NDArray[np.int64], last: NDArray[np.int64], n: NDArray[np.int64]) -> _Days:
+    """Pieces put in order, those that overlap made one."""
+    order = np.argsort(first)
+    first, n = first[order], n[order]
+    reach = np.maximum.accumulate(last[order])
+    begin = np.flatnonzero(np.concatenate([[True], first[1:] > reach[:-1]]))
+    end = np.append(begin[1:], len(first)) - 1
+    return _Days(np.arange(len(begin)), np.add.reduceat(n, begin), first[begin], reach[end])
 
 
 def _between(us: NDArray[np.int64], rules: JourneyRules) -> NDArray[np.int64]:

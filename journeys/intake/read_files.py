@@ -14,13 +14,13 @@ import pyarrow.parquet as pq
 
 from journeys.errors import LogError
 from journeys.intake.read_csv import csv_batches, csv_schema
+from journeys.intake.read_parquet import parquet_batches
 
 KINDS = {
     ".parquet": "Parquet", ".pq": "Parquet",
     ".csv": "CSV", ".csv.gz": "CSV", ".tsv": "TSV", ".tsv.gz": "TSV",
     ".arrow": "Arrow", ".feather": "Arrow", ".ipc": "Arrow",
 }  # fmt: skip
-ROWS_AT_ONCE = 1 << 20
 _HIVE_NULL = "__HIVE_DEFAULT_PARTITION__"
 _WANTED = f"wanted one of {', '.join(KINDS)}"
 
@@ -131,7 +131,8 @@ def file_batches(file: LogFile, columns: Sequence[str], text: Sequence[str]) -> 
     if file.kind in ("CSV", "TSV"):
         yield from csv_batches(file.path, columns, text)
         return
-    batches = (_parquet_batches if file.kind == "Parquet" else _arrow_batches)(file, columns, text)
+    is_parquet = file.kind == "Parquet"
+    batches = parquet_batches(file.path, columns, text) if is_parquet else _arrow_batches(file, columns)
     while True:
         try:
             batch = next(batches, None)
@@ -207,15 +208,6 @@ def _kind(path: Path) -> str:
     raise LogError(f"{path}: files ending in {path.suffix or 'nothing'!r} are not read; {_WANTED}")
 
 
-def _parquet_batches(file: LogFile, columns: Sequence[str], text: Sequence[str]) -> Iterator[pa.RecordBatch]:
-    """Batches across row groups; names come as dictionaries, as most files store them."""
-    schema = pq.read_schema(file.path)
-    kinds = (pa.string(), pa.large_string())
-    names = [name for name in text if name in columns and schema.field(name).type in kinds]
-    with pq.ParquetFile(file.path, read_dictionary=names) as parquet:
-        yield from parquet.iter_batches(batch_size=ROWS_AT_ONCE, columns=list(columns))
-
-
 def _open_arrow(path: Path, options: Any = None) -> Any:
     """Reader of an Arrow file in either of its two forms."""
     with path.open("rb") as file:
@@ -224,7 +216,7 @@ def _open_arrow(path: Path, options: Any = None) -> Any:
     return (pa.ipc.open_file if is_file else pa.ipc.open_stream)(source, options=options)
 
 
-def _arrow_batches(file: LogFile, columns: Sequence[str], text: Sequence[str]) -> Iterator[pa.RecordBatch]:
+def _arrow_batches(file: LogFile, columns: Sequence[str]) -> Iterator[pa.RecordBatch]:
     """Batches of an Arrow file or stream."""
     names = _open_arrow(file.path).schema.names
     options = pa.ipc.IpcReadOptions(included_fields=[names.index(column) for column in columns])

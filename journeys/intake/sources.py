@@ -14,7 +14,8 @@ import pyarrow.parquet as pq
 
 from journeys.errors import LogError
 from journeys.intake.batches import check_columns, resized
-from journeys.intake.read_files import ROWS_AT_ONCE, LogFile, file_batches, file_schema, partition_types
+from journeys.intake.read_files import LogFile, file_batches, file_schema, partition_types
+from journeys.intake.read_parquet import ROWS_AT_ONCE, Ranges, column_ranges
 
 
 class LogSource(ABC):
@@ -46,6 +47,10 @@ class LogSource(ABC):
     @property
     def n_rows(self) -> int | None:
         """Number of rows, or None where only reading would tell."""
+        return None
+
+    def ranges(self, column: str) -> Ranges | None:
+        """Smallest and largest values of a column piece by piece, where they are known without reading it."""
         return None
 
     def describe(self) -> str:
@@ -126,6 +131,12 @@ class FileSource(LogSource):
         if self._files[0].kind != "Parquet":
             return None
         return sum(int(pq.read_metadata(file.path).num_rows) for file in self._files)
+
+    def ranges(self, column: str) -> Ranges | None:
+        """Say what Parquet files note of their row groups."""
+        if self._files[0].kind != "Parquet" or column in self._partition:
+            return None
+        return column_ranges([file.path for file in self._files], column)
 
     def _names_in(self, file: LogFile) -> list[str]:
         """Columns of one file; a folder's value goes before a column of the same name."""

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, fields, replace
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -12,47 +12,58 @@ from journeys.kernels.arrays import BoolArray as Bools
 from journeys.kernels.arrays import IntArray as Ints
 from journeys.kernels.records import FIRST_OUTCOME, LAPSED, OPEN, Carried, Counted, Ends, Entries, Moves, Reading
 
+Codes = NDArray[np.int32]
+Buckets = NDArray[np.uint8]
+
 
 @dataclass(frozen=True)
-class _Story:
-    """The journey a row belongs to, as of that row (or of the row before it)."""
+class Block:
+    """Rows in order, by customer.
 
-    visit_start: Ints
-    journey_start: Ints
-    first_code: NDArray[np.int32]
-    steps: Ints
-    sure: Bools
+    Attributes
+    ----------
+    time, code : ndarray, shape (n_rows,)
+        Microseconds and code, sorted by customer and in order within each.
+    start : ndarray of int64, shape (n_customers,)
+        Position of each customer's first row.
+    key, bucket : ndarray, shape (n_customers,)
+        The customers, increasing, and their buckets.
+    prior : Carried
+        What was carried of each customer; anything where `held` is False.
+    held : ndarray of bool, shape (n_customers,)
+        Whether the customer was seen before.
+    """
 
-    def before(self, first: Bools, carried: Carried, at: Ints) -> _Story:
-        """Shift by one row; the first row of a customer takes what was carried."""
-        return _Story(
-            **{f.name: shifted(getattr(self, f.name), first, getattr(carried, f.name), at) for f in fields(self)}
-        )
+    time: Ints
+    code: Codes
+    start: Ints
+    key: NDArray[np.uint64]
+    bucket: Buckets
+    prior: Carried
+    held: Bools
 
 
-def shifted(column: NDArray[Any], first: Bools, carried: NDArray[Any], at: Ints) -> NDArray[Any]:
-    """Return each row's value in the row before; the first row of customer c takes carried[at[c]]."""
-    out = np.empty_like(column)
-    out[1:] = column[:-1]
-    out[first] = carried[at] if len(carried) else 0
-    return out
+@dataclass(frozen=True)
+class _Marks:
+    """What each row is; arrays over rows."""
+
+    owner: Codes
+    prev_time: Ints
+    prev_code: Codes
+    silent: Bools
+    begins: Bools
+    moved: Bools
+    visit: Bools
+    repeated: Ints
 
 
-def count_rows(
-    key: NDArray[np.uint64],
-    time: Ints,
-    code: NDArray[np.int32],
-    carried: Carried,
-    reading: Reading,
-) -> tuple[Counted, Carried, Ints]:
+def count_rows(block: Block, reading: Reading) -> tuple[Counted, Carried]:
     """Return what rows in order add to the tally, and the customers' new records.
 
     Parameters
     ----------
-    key, time, code : ndarray, shape (n_rows,)
-        Customer, time in microseconds and code, sorted by customer and in order within each; none empty.
-    carried : Carried
-        Records of the customers seen before.
+    block : Block
+        At least one row.
     reading : Reading
         The rules.
 
@@ -61,167 +72,74 @@ def count_rows(
     counted : Counted
         Moves, entries and ended journeys.
     latest : Carried
-        One record per customer of these rows.
-    at : ndarray of int64
-        Where each of them stands in `carried`, -1 for a new one.
+        One record per customer of the block.
     """
-    n = len(key)
-    first = np.ones(n, bool)
-    first[1:] = key[1:] != key[:-1]
-    start_of = np.flatnonzero(first)
-    block = np.cumsum(first) - 1
-    at = carried.find(key[start_of])
-    seen = at >= 0
-    known = ~first | seen[block]
-
-    prev_time = shifted(time, first, carried.time, at)
-    prev_code = shifted(code, first, carried.code, at)
-    gap = time - prev_time
-    after_state = known & (prev_code >= reading.first_state)
-    after_outcome = known & ~after_state
-    silent = after_state & (gap > reading.silence_us) if reading.silence_us is not None else np.zeros(n, bool)
-    outcome = code < reading.first_state
-    repeated = after_outcome & (prev_code == code) & (gap <= reading.same_outcome_us)
-    begins = (~known | after_outcome | silent) & ~repeated
-    goes_on = ~begins & ~repeated
-    same_visit = goes_on & (code == prev_code) if reading.merge_repeats else np.zeros(n, bool)
-    visit = begins | (goes_on & ~same_visit)
-
-    story = _story(time, code, begins, visit, known, start_of, block, carried, at, reading)
-    before = story.before(first, carried, at)
-    ordinal = (
-        np.arange(n) - start_of[block] + 1 + np.where(seen, carried.n_events[at] if len(carried.key) else 0, 0)[block]
-    )
-    busy = ordinal > reading.busy_after
-
-    # The first visit of an unsure journey may have begun before the log: its dwell is unknown once repeats merge.
-    unseen_start = before.steps == 1
-    unseen_start &= ~before.sure
-    if not reading.merge_repeats:
-        unseen_start[:] = False
-    moved = goes_on & ~same_visit
-    moves = []
-    for mask, next_code, dwell in (
-        (moved, code, time - before.visit_start),
-        (silent, np.full(n, LAPSED, np.int32), prev_time + (reading.silence_us or 0) - before.visit_start),
-    ):
-        keep = mask & ~unseen_start
-        moves.append(Moves(key[keep], prev_code[keep], next_code[keep], dwell[keep], busy[keep]))
-
-    ended = outcome & ~repeated
+    marks = _marks(block, reading)
+    story = _Stories(block, marks, reading)
+    owner, silence = marks.owner, reading.silence_us or 0
+    busy = _busy(block, owner, reading)
+    ended = np.flatnonzero(block.code < reading.first_state)
+    if len(marks.repeated):
+        ended = np.setdiff1d(ended, marks.repeated, assume_unique=True)
+    silent = np.flatnonzero(marks.silent)
+    before = story.at(silent - 1, owner[silent], first=silent == block.start[owner[silent]])
+    now = story.at(ended, owner[ended])
+    moved = np.flatnonzero(marks.moved)
+    unsure_visits = 0
+    lapsed = silent
+    if reading.merge_repeats:
+        # The first visit of an unsure journey may have begun before the log: its dwell is unknown.
+        dwell, unseen = story.dwell(moved)
+        moved, dwell, unsure_visits = moved[~unseen], dwell[~unseen], int(unseen.sum())
+        dwell_lapsed, unseen = story.dwell(silent)
+        lapsed, unsure_visits = silent[~unseen], unsure_visits + int(unseen.sum())
+        dwell_lapsed = (dwell_lapsed + marks.prev_time[silent] - block.time[silent] + silence)[~unseen]
+    else:
+        dwell = block.time[moved] - marks.prev_time[moved]
+        dwell_lapsed = np.full(len(silent), silence)
+    moves = (
+        Moves(block.bucket[owner[moved]], marks.prev_code[moved], block.code[moved], dwell, _of(busy, moved)),
+        Moves(
+            block.bucket[owner[lapsed]], marks.prev_code[lapsed], np.full(len(lapsed), LAPSED, np.int32),
+            dwell_lapsed, _of(busy, lapsed),
+        ),
+    )  # fmt: skip
     ends = (
         Ends(
-            key[ended],
-            story.first_code[ended],
-            code[ended],
-            story.sure[ended],
-            story.steps[ended],
-            (time - story.journey_start)[ended],
+            block.bucket[owner[ended]], now.first_code, block.code[ended], now.sure, now.steps,
+            block.time[ended] - now.start,
         ),
         Ends(
-            key[silent],
-            before.first_code[silent],
-            np.full(silent.sum(), LAPSED, np.int32),
-            before.sure[silent],
-            before.steps[silent] + 1,
-            (prev_time + (reading.silence_us or 0) - before.journey_start)[silent],
+            block.bucket[owner[silent]], before.first_code, np.full(len(silent), LAPSED, np.int32), before.sure,
+            before.steps + 1, marks.prev_time[silent] + silence - before.start,
         ),
-    )
+    )  # fmt: skip
+    begun = story.begun
+    again = begun[~marks.silent[begun] & (marks.prev_code[begun] >= FIRST_OUTCOME)]
     counted = Counted(
-        moves=tuple(moves),
-        entries=Entries(key[begins], code[begins], story.sure[begins]),
+        moves=moves,
+        entries=Entries(block.bucket[owner[begun]], block.code[begun], story.sure_begun),
         ends=ends,
-        repeated=repeated,
-        bare=begins & outcome,
-        again=begins & after_outcome,
-        unsure_visits=int(((moved | silent) & unseen_start).sum()),
+        repeated=marks.repeated,
+        bare=begun[block.code[begun] < reading.first_state],
+        again=again,
+        unsure_visits=unsure_visits,
     )
-    won = ended & (code < FIRST_OUTCOME + reading.n_converted)
-    latest = _latest(key, time, code, story, ordinal, start_of, ended.astype(np.int64) + silent, won, carried, at)
-    return counted, latest, at
+    n = len(block.start)
+    decided = np.bincount(owner[ended], minlength=n) + np.bincount(owner[silent], minlength=n)
+    won = owner[ended[block.code[ended] < FIRST_OUTCOME + reading.n_converted]]
+    return counted, _latest(block, story, decided, np.bincount(won, minlength=n))
 
 
-def _story(
-    time: Ints,
-    code: NDArray[np.int32],
-    begins: Bools,
-    visit: Bools,
-    known: Bools,
-    start_of: Ints,
-    block: Ints,
-    carried: Carried,
-    at: Ints,
-    reading: Reading,
-) -> _Story:
-    """Find, for each row, the visit and the journey it stands in."""
-    index = np.arange(len(time))
-    visit_row = np.maximum.accumulate(np.where(visit, index, -1))
-    journey_row = np.maximum.accumulate(np.where(begins, index, -1))
-    here = visit_row >= start_of[block]
-    begun_here = journey_row >= start_of[block]
-    visits: Ints = np.cumsum(visit)
-    visits_before_block: Ints = (visits - visit)[start_of]
-    sure_now = known | reading.complete_history
-    if reading.silence_us is not None:
-        sure_now |= time >= reading.log_start_us + reading.silence_us
-
-    def value(now: NDArray[Any], held: NDArray[Any], in_block: Bools) -> NDArray[Any]:
-        if in_block.all():
-            return now
-        return np.where(in_block, now, held[at][block])
-
-    return _Story(
-        visit_start=value(time[visit_row], carried.visit_start, here),
-        journey_start=value(time[journey_row], carried.journey_start, begun_here),
-        first_code=value(code[journey_row], carried.first_code, begun_here),
-        sure=value(sure_now[journey_row], carried.sure, begun_here),
-        steps=value(visits - visits[journey_row] + 1, carried.steps, begun_here)
-        + np.where(begun_here, 0, visits - visits_before_block[block]),
-    )
-
-
-def _latest(
-    key: NDArray[np.uint64],
-    time: Ints,
-    code: NDArray[np.int32],
-    story: _Story,
-    ordinal: Ints,
-    start_of: Ints,
-    decided: Ints,
-    won: Bools,
-    carried: Carried,
-    at: Ints,
-) -> Carried:
-    """Return one record per customer of these rows, as of its last row."""
-    last = np.append(start_of[1:], len(key)) - 1
-    held = at >= 0
-
-    def total(column: NDArray[Any], before: Ints) -> Ints:
-        return np.add.reduceat(column.astype(np.int64), start_of) + np.where(held, before[at] if len(before) else 0, 0)
-
-    return Carried(
-        key=key[last],
-        time=time[last],
-        code=code[last],
-        visit_start=story.visit_start[last],
-        journey_start=story.journey_start[last],
-        first_code=story.first_code[last],
-        steps=story.steps[last],
-        sure=story.sure[last],
-        n_events=ordinal[last],
-        decided=total(decided, carried.decided),
-        converted=total(won, carried.converted),
-        story_over=np.zeros(len(last), bool),
-    )
-
-
-def close_log(carried: Carried, reading: Reading) -> tuple[Moves, Ends, int, Carried]:
+def close_log(carried: Carried, bucket: Buckets, reading: Reading) -> tuple[Moves, Ends, int, Carried]:
     """Return the moves and journeys that the end of the log decides or leaves open.
 
     Parameters
     ----------
     carried : Carried
         Records after the last row.
+    bucket : ndarray of uint8
+        The customers' buckets.
     reading : Reading
         The rules; `as_of_us` is the moment of closing.
 
@@ -234,28 +152,166 @@ def close_log(carried: Carried, reading: Reading) -> tuple[Moves, Ends, int, Car
     unsure_visits : int
         Stays left out.
     carried : Carried
-        The records with lapses counted in `decided`.
+        The same records, lapses counted in `decided`.
     """
-    running = (carried.code >= reading.first_state) & ~carried.story_over
-    held = carried.take(running)
+    running = np.flatnonzero((carried.code >= reading.first_state) & ~carried.story_over)
+    held, bucket = carried.take(running), bucket[running]
     if reading.silence_us is None:
-        lapsed, until = np.zeros(len(held.key), bool), np.full(len(held.key), reading.as_of_us)
+        lapsed, until = np.zeros(len(running), bool), np.full(len(running), reading.as_of_us)
     else:
         # A row at as_of itself would have been seen, so an age equal to the silence is decided.
         lapsed = reading.as_of_us - held.time >= reading.silence_us
         until = np.where(lapsed, held.time + reading.silence_us, reading.as_of_us)
     next_code = np.where(lapsed, LAPSED, OPEN).astype(np.int32)
-    keep = np.ones(len(held.key), bool)
+    keep = np.ones(len(running), bool)
     if reading.merge_repeats:
-        keep = ~((held.steps == 1) & ~held.sure)
+        keep = (held.steps != 1) | held.sure
     moves = Moves(
-        held.key[keep],
-        held.code[keep],
-        next_code[keep],
-        (until - held.visit_start)[keep],
+        bucket[keep], held.code[keep], next_code[keep], (until - held.visit_start)[keep],
         (held.n_events >= reading.busy_after)[keep],
-    )
-    ends = Ends(held.key, held.first_code, next_code, held.sure, held.steps + lapsed, until - held.journey_start)
-    decided = carried.decided.copy()
-    decided[running] += lapsed
-    return moves, ends, int((~keep).sum()), replace(carried, decided=decided)
+    )  # fmt: skip
+    ends = Ends(
+        bucket, held.first_code, next_code, held.sure, held.steps.astype(np.int64) + lapsed,
+        until - held.journey_start,
+    )  # fmt: skip
+    carried.decided[running] += lapsed
+    return moves, ends, int((~keep).sum()), carried
+
+
+def _marks(block: Block, reading: Reading) -> _Marks:
+    """Compare each row with the one before it, or with what was carried."""
+    time, code, start = block.time, block.code, block.start
+    n = len(time)
+    first = np.zeros(n, np.int32)
+    first[start] = 1
+    owner = np.cumsum(first, dtype=np.int32)
+    owner -= 1
+    prev_time, prev_code = np.empty_like(time), np.empty_like(code)
+    prev_time[1:], prev_code[1:] = time[:-1], code[:-1]
+    prev_time[start] = block.prior.time
+    # Code 0 stands for nobody: smaller than any outcome's.
+    prev_code[start] = np.where(block.held, block.prior.code, 0)
+    goes_on = prev_code >= reading.first_state
+    if reading.silence_us is None:
+        silent = np.zeros(n, bool)
+    else:
+        silent = time - prev_time > reading.silence_us
+        silent &= goes_on
+        goes_on &= ~silent
+    same = prev_code == code
+    begins = ~goes_on
+    again = np.flatnonzero(same & begins & (code < reading.first_state))
+    repeated = again[time[again] - prev_time[again] <= reading.same_outcome_us]
+    begins[repeated] = False
+    moved = goes_on & ~same if reading.merge_repeats else goes_on
+    return _Marks(owner, prev_time, prev_code, silent, begins, moved, moved | begins, repeated)
+
+
+@dataclass(frozen=True)
+class _Story:
+    """The journeys that some rows stand in."""
+
+    start: Ints
+    first_code: Codes
+    sure: Bools
+    steps: Ints
+
+
+class _Stories:
+    """Finds the journey, and the visit, that a row stands in: begun in this block, or carried."""
+
+    def __init__(self, block: Block, marks: _Marks, reading: Reading) -> None:
+        self._block, self._marks = block, marks
+        self._nth = np.cumsum(marks.begins, dtype=np.int32)
+        self.begun = np.flatnonzero(marks.begins)
+        self.sure_begun = np.ones(len(self.begun), bool)
+        if not reading.complete_history:
+            new = marks.prev_code[self.begun] == 0
+            if reading.silence_us is not None:
+                new &= block.time[self.begun] < reading.log_start_us + reading.silence_us
+            self.sure_begun = ~new
+        # Without merging, each row is a visit of its own.
+        self._visits: Codes | None = None
+        if reading.merge_repeats:
+            self._visits = np.cumsum(marks.visit, dtype=np.int32)
+            self._visit_row = np.maximum.accumulate(np.where(marks.visit, np.arange(len(block.time)), -1))
+
+    def at(self, row: Ints, owner: Codes, first: Bools | None = None) -> _Story:
+        """Return the journeys of rows (their positions and owners); where `first`, the one carried."""
+        block, prior = self._block, self._block.prior
+        if not len(row):
+            none = np.zeros(0, np.int64)
+            return _Story(none, np.zeros(0, np.int32), np.zeros(0, bool), none)
+        nth = self._nth[row] - 1
+        begin = self.begun[nth] if len(self.begun) else np.full(len(row), -1)
+        here = (nth >= 0) & (begin >= block.start[owner])
+        if first is not None:
+            here &= ~first
+        steps = self._steps(row, begin, owner, here)
+        return _Story(
+            start=np.where(here, block.time[begin], prior.journey_start[owner]),
+            first_code=np.where(here, block.code[begin], prior.first_code[owner]),
+            sure=np.where(here, self.sure_begun[nth] if len(self.begun) else False, prior.sure[owner]),
+            steps=np.where(first, prior.steps[owner], steps) if first is not None else steps,
+        )
+
+    def visit_start(self, row: Ints, owner: Codes, first: Bools | None = None) -> Ints:
+        """Return when the visits of rows began; where `first`, the one carried."""
+        block = self._block
+        if self._visits is None:
+            return block.time[row]
+        begin = self._visit_row[row]
+        here = begin >= block.start[owner]
+        if first is not None:
+            here &= ~first
+        return np.where(here, block.time[begin], block.prior.visit_start[owner])
+
+    def dwell(self, row: Ints) -> tuple[Ints, Bools]:
+        """Return, for rows that end a visit, the time since it began, and whether its beginning is unknown."""
+        owner = self._marks.owner[row]
+        first = row == self._block.start[owner]
+        before = self.at(row - 1, owner, first)
+        started = self.visit_start(row - 1, owner, first)
+        return self._block.time[row] - started, (before.steps == 1) & ~before.sure
+
+    def _steps(self, row: Ints, begin: Ints, owner: Codes, here: Bools) -> Ints:
+        start = self._block.start[owner]
+        if self._visits is None:
+            since_begin, since_start = row - begin + 1, row - start + 1
+        else:
+            visits = self._visits
+            since_begin = visits[row] - visits[begin] + 1
+            since_start = visits[row] - visits[start] + self._marks.visit[start]
+        return np.where(here, since_begin, self._block.prior.steps[owner] + since_start)
+
+
+def _busy(block: Block, owner: Codes, reading: Reading) -> Bools | None:
+    """Tell which rows come after the customer's first `busy_after` rows; None if none does."""
+    size = np.diff(block.start, append=len(block.time))
+    before = np.where(block.held, block.prior.n_events, 0)
+    if (before + size).max() <= reading.busy_after:
+        return None
+    ordinal = np.arange(len(owner)) - (block.start - before)[owner] + 1
+    return ordinal > reading.busy_after
+
+
+def _of(busy: Bools | None, rows: Ints) -> Bools | None:
+    return None if busy is None else busy[rows]
+
+
+def _latest(block: Block, story: _Stories, decided: NDArray[Any], won: NDArray[Any]) -> Carried:
+    """Return one record per customer of the block, as of its last row."""
+    n, prior = len(block.start), block.prior
+    last = np.append(block.start[1:], len(block.time)) - 1
+    owner = np.arange(n, dtype=np.int32)
+    now = story.at(last, owner)
+    size = (last - block.start + 1).astype(np.int32)
+    none = np.int32(0)
+    return Carried(
+        key=block.key, time=block.time[last], visit_start=story.visit_start(last, owner), journey_start=now.start,
+        code=block.code[last], first_code=now.first_code, steps=now.steps.astype(np.int32),
+        n_events=np.where(block.held, prior.n_events, none) + size,
+        decided=np.where(block.held, prior.decided, none) + decided.astype(np.int32),
+        converted=np.where(block.held, prior.converted, none) + won.astype(np.int32),
+        sure=now.sure, story_over=np.zeros(n, bool),
+    )  # fmt: skip

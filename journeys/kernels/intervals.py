@@ -180,8 +180,10 @@ def log_interval(
     """
     x, se = np.asarray(x, dtype=np.float64), np.asarray(se, dtype=np.float64)
     inside = np.where((x > 0) & np.isfinite(x), x, np.nan)
-    factor = np.exp(_t_quantile(df, confidence_level) * se / inside)
-    return inside / factor, inside * factor
+    with np.errstate(over="ignore"):
+        # A spread many times the number itself: nothing is known, from 0 to infinity.
+        factor = np.exp(_t_quantile(df, confidence_level) * se / inside)
+        return inside / factor, inside * factor
 
 
 def ratio_variance(y: npt.ArrayLike, m: npt.ArrayLike) -> tuple[float, float, float]:

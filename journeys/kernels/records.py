@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, fields
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -40,70 +41,104 @@ class Reading:
         return FIRST_OUTCOME + self.n_outcomes
 
 
-@dataclass(frozen=True)
+@dataclass
 class Carried:
-    """One record per customer seen: what the next row of that customer needs. Sorted by `key`."""
+    """One record per customer seen: what the next row of that customer needs. Sorted by `key`.
+
+    The one table that is changed in place: copying it for every block of rows would cost more than counting.
+    """
 
     key: NDArray[np.uint64]
     time: Ints
-    code: NDArray[np.int32]
     visit_start: Ints
     journey_start: Ints
+    code: NDArray[np.int32]
     first_code: NDArray[np.int32]
-    steps: Ints
+    steps: NDArray[np.int32]
+    n_events: NDArray[np.int32]
+    decided: NDArray[np.int32]
+    converted: NDArray[np.int32]
     sure: Bools
-    n_events: Ints
-    decided: Ints
-    converted: Ints
     story_over: Bools
 
     @classmethod
     def none(cls) -> Carried:
         """Return a table without customers."""
-        kinds = {"key": np.uint64, "code": np.int32, "first_code": np.int32, "sure": bool, "story_over": bool}
-        return cls(**{f.name: np.empty(0, kinds.get(f.name, np.int64)) for f in fields(cls)})
+        return cls.zeros(0)
+
+    @classmethod
+    def zeros(cls, n: int) -> Carried:
+        """Return a table of `n` empty records."""
+        wide = {"key": np.uint64, "time": np.int64, "visit_start": np.int64, "journey_start": np.int64}
+        flags = {"sure": np.bool_, "story_over": np.bool_}
+        kinds: dict[str, Any] = wide | flags
+        return cls(**{f.name: np.zeros(n, kinds.get(f.name, np.int32)) for f in fields(cls)})
+
+    @classmethod
+    def joined(cls, parts: list[Carried]) -> Carried:
+        """Return several tables one after another."""
+        if not parts:
+            return cls.none()
+        return cls(**{f.name: np.concatenate([getattr(part, f.name) for part in parts]) for f in fields(cls)})
 
     def take(self, index: Ints | Bools) -> Carried:
-        """Return the records at `index`."""
+        """Return copies of the records at `index`."""
         return Carried(**{f.name: getattr(self, f.name)[index] for f in fields(self)})
 
     def find(self, key: NDArray[np.uint64]) -> Ints:
         """Return the position of each key, -1 where it is not carried."""
         if not len(self.key):
             return np.full(len(key), -1)
-        at = np.minimum(np.searchsorted(self.key, key), len(self.key) - 1)
-        return np.where(self.key[at] == key, at, -1)
+        at = np.searchsorted(self.key, key)
+        np.minimum(at, len(self.key) - 1, out=at)
+        at[self.key[at] != key] = -1
+        return at
 
-    def updated(self, new: Carried, at: Ints) -> Carried:
-        """Return the table with `new` in place of the records at `at`, and added where `at` is -1."""
-        old, fresh = at >= 0, at < 0
-        where = np.searchsorted(self.key, new.key[fresh])
-        columns = {}
+    def put(self, new: Carried, at: Ints) -> Carried:
+        """Put new records in place of those at `at`; return the ones with no place (`at` is -1), to be inserted."""
+        if (at >= 0).all():
+            for f in fields(self):
+                getattr(self, f.name)[at] = getattr(new, f.name)
+            return Carried.none()
+        old = np.flatnonzero(at >= 0)
+        at = at[old]
         for f in fields(self):
-            column, values = getattr(self, f.name), getattr(new, f.name)
-            if old.any():
-                column = column.copy()
-                column[at[old]] = values[old]
-            columns[f.name] = np.insert(column, where, values[fresh]) if fresh.any() else column
-        return Carried(**columns)
+            getattr(self, f.name)[at] = getattr(new, f.name)[old]
+        fresh = np.ones(len(new.key), bool)
+        fresh[old] = False
+        return new.take(fresh)
+
+    def insert(self, fresh: Carried) -> None:
+        """Add records of new customers, sorted by key."""
+        if not len(fresh.key):
+            return
+        where = np.searchsorted(self.key, fresh.key) + np.arange(len(fresh.key))
+        size = len(self.key) + len(fresh.key)
+        stays = np.ones(size, bool)
+        stays[where] = False
+        for f in fields(self):
+            column = np.empty(size, getattr(self, f.name).dtype)
+            column[where] = getattr(fresh, f.name)
+            column[stays] = getattr(self, f.name)
+            setattr(self, f.name, column)
 
 
 @dataclass(frozen=True)
 class Moves:
-    """One element per move: whose, from which state, to what, after how long (microseconds)."""
+    """One element per move: whose bucket, from which state, to what, after how long (microseconds)."""
 
-    key: NDArray[np.uint64]
+    bucket: NDArray[np.uint8]
     state: NDArray[np.int32]
     next_code: NDArray[np.int32]
     dwell: Ints
-    busy: Bools
+    busy: Bools | None = None
 
 
 @dataclass(frozen=True)
 class Entries:
     """One element per journey begun."""
 
-    key: NDArray[np.uint64]
+    bucket: NDArray[np.uint8]
     state: NDArray[np.int32]
     sure: Bools
 
@@ -112,7 +147,7 @@ class Entries:
 class Ends:
     """One element per journey ended (or, at the end of the log, still open)."""
 
-    key: NDArray[np.uint64]
+    bucket: NDArray[np.uint8]
     state: NDArray[np.int32]
     outcome: NDArray[np.int32]
     sure: Bools
@@ -124,14 +159,14 @@ class Ends:
 class Counted:
     """What one block of rows adds.
 
-    `repeated`, `bare` and `again` are masks of rows: outcomes merged, outcomes with nothing before them, first
-    rows of journeys begun after an outcome; `unsure_visits` is a count.
+    `repeated`, `bare` and `again` are positions of rows: outcomes merged, outcomes with nothing before them,
+    first rows of journeys begun after an outcome; `unsure_visits` is a count.
     """
 
     moves: tuple[Moves, ...]
-    entries: Entries | None
+    entries: Entries
     ends: tuple[Ends, ...]
-    repeated: Bools
-    bare: Bools
-    again: Bools
+    repeated: Ints
+    bare: Ints
+    again: Ints
     unsure_visits: int

@@ -21,6 +21,8 @@ if TYPE_CHECKING:
     from journeys.questions.moves import MovesResult
     from journeys.tally.tally import Tally
 
+NO_WAY_OUT = "no move out was seen"
+
 
 @dataclass(frozen=True, eq=False)
 class Influence:
@@ -55,6 +57,14 @@ class JourneyFit:
         The counts behind the fit; None for a known chain.
     influence : Influence or None
         None for a known chain, which has no uncertainty.
+
+    Examples
+    --------
+    >>> import pandas as pd
+    >>> chain = pd.DataFrame([[0.5, 0.3, 0.2]], index=["basket"], columns=["basket", "joined", "declined"])
+    >>> fit = JourneyFit.from_matrix(chain)
+    >>> fit.matrix.loc["basket"].to_dict()
+    {'basket': 0.5, 'joined': 0.3, 'declined': 0.2}
     """
 
     nodes: Nodes
@@ -176,7 +186,7 @@ def with_dead_ends(
     """
     rows = np.setdiff1d(np.arange(nodes.n_rows), state)
     for row in rows:
-        row_flags[nodes.labels[row]] = "no move out was seen"
+        row_flags[nodes.labels[row]] = NO_WAY_OUT
     if len(rows):
         names = ", ".join(nodes.labels[row] for row in rows[:5])
         warnings.warn(f"no move out of {names} was seen: taken as never left", DeadEndWarning, stacklevel=4)

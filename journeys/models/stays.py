@@ -200,7 +200,7 @@ def journey_stays(tally: Tally) -> tuple[Stays, BucketStays]:
 
 def outcome_column(code: IntArray) -> IntArray:
     """Return the column of `journey_stays` for an outcome's code (column 0 is the journey itself)."""
-    return code + 1
+    return code.astype(np.int64) + 1
 
 
 def _node_of_code(tally: Tally, nodes: Nodes) -> IntArray:

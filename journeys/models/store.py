@@ -4,8 +4,10 @@ from __future__ import annotations
 
 import json
 import os
-from typing import TYPE_CHECKING
+from hashlib import blake2b
+from typing import TYPE_CHECKING, Any
 
+import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
 
@@ -43,7 +45,9 @@ def save(fit: JourneyFit, path: str | os.PathLike[str]) -> None:
         "converted": fit.converted,
         "row_flags": fit.row_flags,
     }
-    table = pa.table({name: getattr(fit, name) for name in _COLUMNS})
+    columns = {name: getattr(fit, name) for name in _COLUMNS}
+    table = pa.table(columns)
+    head["checksum"] = _checksum(head, columns)
     with written_whole(path) as part:
         pq.write_table(table.replace_schema_metadata({HEAD: json.dumps(head).encode()}), part)
 
@@ -87,6 +91,9 @@ def load(path: str | os.PathLike[str]) -> JourneyFit:
             f"{os.fspath(path)!r} has format version {head.get('format_version')}; this program reads {FORMAT_VERSION}"
         )
         raise StoreError(msg)
+    if _checksum(head, columns) != head.get("checksum"):
+        msg = f"{os.fspath(path)!r} is damaged (its checksum does not fit); make the chain again"
+        raise StoreError(msg)
     return JourneyFit(
         nodes=Nodes(tuple(head["states"]), tuple(head["outcomes"])),
         converted=tuple(head["converted"]),
@@ -94,3 +101,12 @@ def load(path: str | os.PathLike[str]) -> JourneyFit:
         open_moves="known",
         **columns,
     )
+
+
+def _checksum(head: dict[str, Any], columns: dict[str, np.ndarray]) -> str:
+    """Return the digest of all that a known chain's file holds."""
+    told = {key: value for key, value in head.items() if key != "checksum"}
+    digest = blake2b(json.dumps(told, sort_keys=True).encode(), digest_size=16)
+    for name in _COLUMNS:
+        digest.update(np.ascontiguousarray(columns[name]).tobytes())
+    return digest.hexdigest()

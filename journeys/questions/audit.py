@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import warnings
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -14,10 +15,13 @@ from journeys.intake.findings import UNREADABLE
 from journeys.intake.rules import JourneyRules
 from journeys.kernels.records import FIRST_OUTCOME, OPEN
 from journeys.models.model import JourneyModel, refuse_without_outcome
+from journeys.results import text_table
 from journeys.tally.count import count_log
 from journeys.tally.tally import Tally
 
 GOOD, CARE, NO = "good", "with care", "no"
+# Row numbers told per finding, and characters per cell, in the text for people.
+SHOWN, LONGEST = 5, 40
 
 
 @dataclass(frozen=True, eq=False)
@@ -51,14 +55,25 @@ class Audit:
 
     def summary(self) -> str:
         """Return checks and findings as plain text."""
-        found = self.findings[["code", "column", "n", "message"]]
-        rows = found.to_string(index=False) if len(found) else "none"
-        return f"{self!r}\n\n{self.checks.to_string(index=False)}\n\nFindings\n{rows}"
+        says = "can" if self.carries_model else "cannot"
+        checks = [
+            [row["verdict"], row["check_name"], row["value"], row["note"]] for row in self.checks.to_dict("records")
+        ]
+        found = [
+            [row["code"], row["column"], f"{row['n']:,}", row["message"] + _where(row["rows"], row["n"])]
+            for row in self.findings.to_dict("records")
+        ]
+        return (
+            f"{self.tally.summary()}\nThis log {says} carry the model.\n\nChecks\n{text_table(_short(checks))}\n\n"
+            + ("Findings: kind, column, rows (their numbers count from 0 over the whole input)\n" if found else "")
+            + (text_table(_short(found), right=[2]) if found else "Findings: none")
+        )
 
     def __repr__(self) -> str:
         """Return one line."""
         says = "can carry the model" if self.carries_model else "cannot carry the model"
-        return f"<Audit: the log {says}; {len(self.findings)} kinds of findings>"
+        n = len(self.findings)
+        return f"<Audit: the log {says}; {n} kind{'' if n == 1 else 's'} of findings>"
 
     def _repr_html_(self) -> str:
         return str(self.checks.to_html(index=False) + self.findings.to_html(index=False))
@@ -117,11 +132,33 @@ def audit(source: Any, rules: JourneyRules | None = None, *, progress: bool = Fa
     return Audit(tally, pd.DataFrame(rows, columns=["check_name", "value", "verdict", "note"]))
 
 
+def _where(rows: Sequence[int], n: int) -> str:
+    """Return the first row numbers of a finding, for its message."""
+    shown = ", ".join(str(row) for row in rows[:SHOWN])
+    return f" [{'row' if n == 1 else 'rows'} {shown}{', …' if n > SHOWN else ''}]" if shown else ""
+
+
+def _short(rows: list[list[str]]) -> list[list[str]]:
+    """Return rows whose cells, the last aside, fit a table: a name from the data can be of any length."""
+    return [
+        [*(cell if len(cell) <= LONGEST else cell[: LONGEST - 1] + "…" for cell in row[:-1]), row[-1]] for row in rows
+    ]
+
+
+def _percent(share: float, digits: int = 1) -> str:
+    return f"{100 * share:.{digits}f} %"
+
+
 def _unreadable(tally: Tally) -> tuple[str, str, str, str]:
     n = sum(tally.record.n(code) for code in UNREADABLE)
     share, limit = n / max(tally.n_rows, 1), tally.rules.limits["unreadable"]
     verdict = GOOD if share <= limit else NO
-    return "unreadable rows", f"{n:,} of {tally.n_rows:,} ({share:.2%})", verdict, f"limit {limit:.2%}"
+    return (
+        "unreadable rows",
+        f"{n:,} of {tally.n_rows:,} ({_percent(share, 2)})",
+        verdict,
+        f"limit {_percent(limit, 2)}",
+    )
 
 
 def _length(tally: Tally) -> tuple[str, str, str, str]:
@@ -147,7 +184,7 @@ def _sure(tally: Tally) -> tuple[str, str, str, str]:
     share = sure / max(tally.n_journeys, 1)
     verdict = NO if not sure else GOOD if share >= 0.5 else CARE
     note = "the others may have begun before the log" if share < 1 else ""
-    return "journeys whose start was seen", f"{sure:,} of {tally.n_journeys:,} ({share:.1%})", verdict, note
+    return "journeys whose start was seen", f"{sure:,} of {tally.n_journeys:,} ({_percent(share)})", verdict, note
 
 
 def _undecided(tally: Tally) -> tuple[str, str, str, str]:
@@ -155,7 +192,7 @@ def _undecided(tally: Tally) -> tuple[str, str, str, str]:
     share = n / max(tally.n_journeys, 1)
     return (
         "journeys undecided yet",
-        f"{n:,} of {tally.n_journeys:,} ({share:.1%})",
+        f"{n:,} of {tally.n_journeys:,} ({_percent(share)})",
         GOOD if share < 0.5 else CARE,
         "a plain count treats them as lost",
     )
@@ -172,7 +209,7 @@ def _outcomes(tally: Tally) -> list[tuple[str, str, str, str]]:
     rows.append(
         (
             "outcomes with nothing before them",
-            f"{bare:,} ({share:.1%} of outcomes)",
+            f"{bare:,} ({_percent(share)} of outcomes)",
             GOOD if share < 0.2 else CARE,
             "are their earlier events missing from the log?" if bare else "",
         )

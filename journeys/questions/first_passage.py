@@ -33,7 +33,7 @@ NO_SPREAD = "no spread given"
 _MOMENT = {"mean": "mean_given", "sd": "sd_given", "mean_unconditional": "mean_given"}
 
 
-@dataclass(frozen=True, eq=False)
+@dataclass(frozen=True, eq=False, repr=False)
 class FirstPassageResult(Result):
     """Probability of reaching a target, and mean and spread of the steps or time it takes."""
 

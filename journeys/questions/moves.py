@@ -18,7 +18,7 @@ from journeys.results import CELL, Result, joined_flags
 LIST_ALL_UP_TO = 200
 
 
-@dataclass(frozen=True, eq=False)
+@dataclass(frozen=True, eq=False, repr=False)
 class MovesResult(Result):
     """Moves by state and next state."""
 

@@ -17,7 +17,7 @@ from journeys.results import LOGIT, Estimates, Result, joined_flags
 UNREACHABLE = "cannot be reached"
 
 
-@dataclass(frozen=True, eq=False)
+@dataclass(frozen=True, eq=False, repr=False)
 class OutcomesResult(Result):
     """Outcome probabilities by start state and outcome."""
 

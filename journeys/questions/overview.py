@@ -97,7 +97,7 @@ class Overview:
                 so_far.estimate,
                 so_far.low,
                 so_far.high,
-                "too low: the undecided count as lost",
+                "too low: the undecided count as lost" if plain.n_undecided else "",
             ),
             (
                 "converted so far, of decided journeys only",
@@ -106,7 +106,9 @@ class Overview:
                 plain.n_converted / decided if decided else np.nan,
                 np.nan,
                 np.nan,
-                "off: a conversion is seen at once, a loss only after the silence",
+                "off: the undecided are left out"
+                if self.fit.tally is None or self.fit.tally.rules.silence_us is None
+                else "off: a conversion is seen at once, a loss only after the silence",
             ),
             (
                 "undecided yet",
@@ -227,6 +229,21 @@ def summarise(
         If the fit is a known chain without a log.
     ValueError
         If a horizon is not a duration, or the level is not between 0 and 1.
+
+    Examples
+    --------
+    >>> import pandas as pd
+    >>> from journeys.intake.rules import JourneyRules
+    >>> from journeys.models.model import JourneyModel
+    >>> from journeys.tally.count import count_log
+    >>> days = ["2025-01-01", "2025-01-03", "2025-01-02", "2025-01-02", "2025-01-05"]
+    >>> log = pd.DataFrame({"member": [1, 1, 2, 3, 3], "event": ["visit", "joined", "visit", "visit", "left"],
+    ...                     "happened": pd.to_datetime(days, utc=True)})
+    >>> rules = JourneyRules("member", "happened", "event", converted="joined", churned="left", silence="30d",
+    ...                      complete_history=True, as_of="2025-03-01")
+    >>> overview = summarise(JourneyModel().fit(count_log(log, rules)))
+    >>> overview.plain.n_converted, overview.plain.n_by_outcome["lapsed"]
+    (1, 1)
     """
     if fit.tally is None:
         msg = "this chain was given, not fitted to a log; ask outcomes or first_passage instead"

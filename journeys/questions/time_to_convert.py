@@ -10,7 +10,7 @@ import numpy as np
 import pandas as pd
 
 from journeys import checks
-from journeys.errors import LogError
+from journeys.errors import LogError, RulesError
 from journeys.kernels.arrays import BoolArray
 from journeys.kernels.bins import DAY_US, STANDARD_HORIZONS_US, elapsed_edges
 from journeys.kernels.intervals import variance_from_buckets
@@ -30,7 +30,7 @@ BETWEEN_BINS = "read between bin edges"
 TOO_LONG = "longer than any journey was followed"
 
 
-@dataclass(frozen=True, eq=False)
+@dataclass(frozen=True, eq=False, repr=False)
 class TimeToConvertResult(Result):
     """Share converted by horizon, and mean steps and days given conversion."""
 
@@ -75,6 +75,21 @@ def time_to_convert(
     ----------
     P. K. Andersen, O. Borgan, R. D. Gill, N. Keiding, Statistical Models Based on Counting Processes,
     Springer 1993, section IV.4.
+
+    Examples
+    --------
+    >>> import pandas as pd
+    >>> from journeys.intake.rules import JourneyRules
+    >>> from journeys.models.model import JourneyModel
+    >>> from journeys.tally.count import count_log
+    >>> days = ["2025-01-01", "2025-01-03", "2025-01-02", "2025-01-02", "2025-01-05"]
+    >>> log = pd.DataFrame({"member": [1, 1, 2, 3, 3], "event": ["visit", "joined", "visit", "visit", "left"],
+    ...                     "happened": pd.to_datetime(days, utc=True)})
+    >>> rules = JourneyRules("member", "happened", "event", converted="joined", churned="left", silence="30d",
+    ...                      complete_history=True, as_of="2025-03-01")
+    >>> answer = time_to_convert(JourneyModel().fit(count_log(log, rules)), ["7d"])
+    >>> answer.to_frame()[["measure", "horizon", "estimate"]].round(3).values.tolist()[:3]
+    [['converted', 'so far', 0.333], ['converted', '7d', 0.333], ['converted', 'in the end', 0.333]]
     """
     level = checks.confidence_level(confidence_level)
     tally = fit.tally
@@ -83,7 +98,7 @@ def time_to_convert(
         raise LogError(msg)
     if not fit.converted:
         msg = "the rules name no converted outcome; wanted converted=[...] in the rules"
-        raise ValueError(msg)
+        raise RulesError(msg)
     wanted = None if horizons is None else [checks.duration_us(one, "horizons") for one in horizons]
     chosen = sorted(set(default_horizons(tally) if wanted is None else wanted))
     so_far = _so_far(fit, tally)

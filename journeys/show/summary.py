@@ -10,11 +10,14 @@ from typing import Any
 
 import pandas as pd
 
-from journeys.files import written_whole
+from journeys.checks import duration_us
+from journeys.files import written_together
 from journeys.questions.overview import Overview
 from journeys.questions.time_to_convert import IN_THE_END, SO_FAR
+from journeys.results import printable, text_table
 from journeys.show.tables import markdown_table, markdown_text, write_csv, write_parquet
 from journeys.show.words import (
+    FLAG_MEANINGS,
     UNDECIDED,
     amount_with_interval,
     length_words,
@@ -58,15 +61,17 @@ def opening(overview: Overview) -> str:
 def summary_text(overview: Overview) -> str:
     """Return what the command prints: the headline, the span of the log, and the lines between the two shares."""
     lines = overview.reconciliation()
-    rows = []
+    rows, notes = [], []
     for row in _rows(lines):
-        rows.append((row["line"], _count(row), _share(row, row["note"]), row["note"]))
-    widths = [max(len(str(row[i])) for row in rows) for i in range(3)]
-    table = "\n".join(
-        f"  {line:<{widths[0]}}  {count:>{widths[1]}}  {share:<{widths[2]}}  {note}".rstrip()
-        for line, count, share, note in rows
+        rows.append((row["line"], _count(row), _share(row, row["note"])))
+        notes.append(f"\n    {row['note']}" if row["note"] else "")
+    told = "\n".join(line + note for line, note in zip(text_table(rows, right=[1]).split("\n"), notes, strict=True))
+    soon = [(since, share) for since, share, _, _ in _horizon_rows(overview) if since != IN_THE_END]
+    return (
+        f"{printable(opening(overview))}\n{_span(overview)} {_level(overview)}\n\n"
+        f"{told}\n\nConverted, of journeys whose start was seen\n{text_table(soon)}\n"
+        + "".join(f"{line}\n" for line in _time_lines(overview))
     )
-    return f"{opening(overview)}\n{_span(overview)}\n\n{table}\n"
 
 
 def summary_markdown(overview: Overview) -> str:
@@ -83,16 +88,15 @@ def summary_markdown(overview: Overview) -> str:
         A page that begins with the headline and ends with the rules it was made by.
     """
     tally = _tally(overview)
-    level = f"{overview.conversion.confidence_level:.0%}".replace("%", " %")
     parts = [
         f"# How many {markdown_text(listed(tally.rules.converted))}, and how soon",
         f"**{markdown_text(opening(overview))}.**",
-        f"{markdown_text(_span(overview))} Intervals at {level}.",
+        f"{_span(overview)} {_level(overview)}",
         "## Why the expected share is not the plain one",
         _reconciliation(overview),
         "## How long it takes",
         _horizons(overview),
-        _times(overview),
+        "\n".join(f"- {markdown_text(line)}" for line in _time_lines(overview)),
         "## Where journeys end",
         _endings(overview),
         "## From each state",
@@ -112,8 +116,8 @@ def summary_markdown(overview: Overview) -> str:
     return "\n\n".join(part for part in parts if part) + "\n"
 
 
-def write_summary(overview: Overview, folder: str | os.PathLike[str]) -> list[Path]:
-    """Write summary.parquet, summary.csv and summary.md into a folder, each whole or not at all.
+def write_summary(overview: Overview, folder: str | os.PathLike[str], *, keep_tally: bool = False) -> list[Path]:
+    """Write summary.parquet, summary.csv and summary.md into a folder, all of them whole or none.
 
     Parameters
     ----------
@@ -121,20 +125,30 @@ def write_summary(overview: Overview, folder: str | os.PathLike[str]) -> list[Pa
         From `journeys.summarise`.
     folder : str or path-like
         Made where it does not exist.
+    keep_tally : bool
+        Write the counts too, as tally.parquet.
 
     Returns
     -------
     list of pathlib.Path
         What was written.
+
+    Raises
+    ------
+    OSError
+        If the folder cannot be made or written in.
     """
     place = Path(folder)
+    frame, page = overview.to_frame(), summary_markdown(overview)
     place.mkdir(parents=True, exist_ok=True)
-    frame = overview.to_frame()
-    write_parquet(frame, place / "summary.parquet")
-    write_csv(frame, place / "summary.csv")
-    with written_whole(place / "summary.md") as part:
-        part.write_text(summary_markdown(overview), encoding="utf-8")
-    return [place / f"summary.{kind}" for kind in ("parquet", "csv", "md")]
+    names = ["summary.parquet", "summary.csv", "summary.md"] + ["tally.parquet"] * keep_tally
+    with written_together([place / name for name in names]) as parts:
+        write_parquet(frame, parts[0])
+        write_csv(frame, parts[1])
+        parts[2].write_text(page, encoding="utf-8")
+        if keep_tally:
+            _tally(overview).save(parts[3])
+    return [place / name for name in names]
 
 
 def _tally(overview: Overview) -> Tally:
@@ -183,23 +197,37 @@ def _reconciliation(overview: Overview) -> str:
     return markdown_table(pd.DataFrame(rows, columns=["what", "journeys", "share", "why"]))
 
 
-def _horizons(overview: Overview) -> str:
+def _level(overview: Overview) -> str:
+    return f"Intervals at {100 * overview.conversion.confidence_level:g} %."
+
+
+def _horizon_rows(overview: Overview) -> list[tuple[str, str, str, str]]:
+    """Return since when, share converted, basis and note, the shares within horizons and in the end."""
     rows = []
     for row in _rows(overview.conversion.to_frame(), measure="converted"):
-        if row["horizon"] != SO_FAR:
-            since = row["horizon"] if row["horizon"] == IN_THE_END else f"within {row['horizon']}"
-            rows.append((since, _share(row, row["flag"]), f"by the {row['basis']}", row["flag"]))
-    return markdown_table(pd.DataFrame(rows, columns=["since entry", "converted", "basis", "note"]))
+        if row["horizon"] == SO_FAR:
+            continue
+        since = row["horizon"]
+        if since != IN_THE_END:
+            since = f"within {length_words(duration_us(since, 'horizon'))}"
+        rows.append((since, _share(row, row["flag"]), f"by the {row['basis']}", row["flag"]))
+    return rows
 
 
-def _times(overview: Overview) -> str:
+def _horizons(overview: Overview) -> str:
+    return markdown_table(pd.DataFrame(_horizon_rows(overview), columns=["since entry", "converted", "basis", "note"]))
+
+
+def _time_lines(overview: Overview) -> list[str]:
+    """Return how many steps and days the converted take, one sentence each."""
     frame = overview.conversion.to_frame()
     told = []
-    for measure, words in (("steps", "steps, the outcome's own among them"), ("days", "days")):
+    for measure, words in (("steps", "steps, the converting event counted"), ("days", "days from their first event")):
         row = _rows(frame, measure=measure)[0]
-        note = f" ({row['flag']})" if row["flag"] else ""
-        told.append(f"- mean {words}, of those who do: {_amount(row) or 'no answer'}{note}")
-    return "\n".join(told)
+        amount = _amount(row)
+        said = f"On average, those who convert take {amount} {words}" if amount else f"Mean {measure}: no answer"
+        told.append(said + (f"; {row['flag']}" if row["flag"] else ""))
+    return told
 
 
 def _endings(overview: Overview) -> str:
@@ -211,6 +239,7 @@ def _endings(overview: Overview) -> str:
         so_far = (f"{n:,}", percent(n / plain.n_journeys))
         rows.append((outcome_words(outcome, rules), *so_far, _share(row, row["flag"]), row["flag"]))
     rows.append((UNDECIDED, f"{plain.n_undecided:,}", percent(plain.n_undecided / plain.n_journeys), "", ""))
+    rows.append(("all journeys", f"{plain.n_journeys:,}", percent(1.0), "", ""))
     columns = ["outcome", "journeys so far", "share so far", "expected in the end", "note"]
     return markdown_table(pd.DataFrame(rows, columns=columns))
 
@@ -222,7 +251,8 @@ def _by_state(overview: Overview) -> str:
         share = _rows(steps, start_state=state, measure="probability")[0]
         step = _rows(steps, start_state=state, measure="mean")[0]
         day = _rows(days, start_state=state, measure="mean")[0]
-        rows.append((state, _share(share, share["flag"]), _amount(step), _amount(day), step["flag"]))
+        notes = dict.fromkeys(part for row in (share, step, day) for part in _flags(row["flag"]))
+        rows.append((state, _share(share, share["flag"]), _amount(step), _amount(day), "; ".join(notes)))
     columns = ["from", "converts in the end", "mean steps, if so", "mean days, if so", "note"]
     return markdown_table(pd.DataFrame(rows, columns=columns))
 
@@ -247,7 +277,9 @@ def _findings(tally: Tally) -> str:
     if not found:
         return "Nothing was left out and nothing looked odd."
     rows = [(row["code"], row["column"], f"{row['n']:,}", row["message"]) for row in found]
-    return markdown_table(pd.DataFrame(rows, columns=["finding", "column", "rows", "what it means"]))
+    return markdown_table(
+        pd.DataFrame(rows, columns=["finding", "column", "rows", "what it means"]), ("finding", "what it means")
+    )
 
 
 def _beliefs(overview: Overview) -> str:
@@ -265,5 +297,27 @@ def _beliefs(overview: Overview) -> str:
             f"{percent(again / plain.n_journeys)} of the journeys began after an outcome of the same person: "
             "shares here are of journeys, not of people (`after_outcome` in the rules)."
         )
-    notes += [f"{text}: {names}." for text, names in overview.notes()]
+    notes += _flag_lines(overview)
     return "\n".join(f"- {markdown_text(note)}" for note in notes)
+
+
+def _flags(flag: str) -> list[str]:
+    return flag.split("; ") if flag else []
+
+
+def _flag_lines(overview: Overview) -> list[str]:
+    """Return what each flag on this page means, and which states it comes from."""
+    shown = [overview.conversion.flag, overview.endings.flag]
+    if len(overview.fit.states) <= WIDEST_MATRIX:
+        # What was never seen is a dot on this page, without a note.
+        shown.append(overview.matrix.flag[overview.matrix.estimates.value > 0])
+    seen = {part for flags in shown for flag in flags for part in _flags(flag)}
+    for passage in (overview.steps, overview.days):
+        told = passage.keys.measure.isin(["probability", "mean"])
+        seen |= {part for flag in passage.flag[told] for part in _flags(flag)}
+    lines = []
+    for text, meaning in FLAG_MEANINGS.items():
+        if text in seen:
+            names = ", ".join(name for name, flag in overview.fit.row_flags.items() if flag == text)
+            lines.append(f"{text}{f' ({names})' if names else ''}: {meaning}.")
+    return lines

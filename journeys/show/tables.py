@@ -2,16 +2,20 @@
 
 from __future__ import annotations
 
+import csv
 import os
 import re
+from collections.abc import Collection
 
 import numpy as np
 import pandas as pd
 
 from journeys.files import written_whole
+from journeys.results import printable
 
 # What a spreadsheet takes for the beginning of a formula.
-_FORMULA = ("=", "+", "-", "@", "\t", "\r")
+# The wide forms stand for the narrow ones in some languages' spreadsheets.
+_FORMULA = ("=", "+", "-", "@", "\t", "\r", "\n", "\uff1d", "\uff0b", "\uff0d", "\uff20")
 
 
 def file_frame(frame: pd.DataFrame) -> pd.DataFrame:
@@ -49,8 +53,12 @@ def write_csv(frame: pd.DataFrame, path: str | os.PathLike[str]) -> None:
     for name in out.columns:
         if not pd.api.types.is_numeric_dtype(out[name]):
             out[name] = out[name].map(cell_text)
+    out = out.rename(columns=cell_text)
+    # A bare carriage return would end the row for many readers, and not every writer puts it in quotes.
+    texts = [name for name in out.columns if not pd.api.types.is_numeric_dtype(out[name])]
+    returns = any("\r" in cell for name in texts for cell in (name, *out[name].unique()))
     with written_whole(path) as part:
-        out.rename(columns=cell_text).to_csv(part, index=False)
+        out.to_csv(part, index=False, quoting=csv.QUOTE_NONNUMERIC if returns else csv.QUOTE_MINIMAL)
 
 
 def cell_text(text: str) -> str:
@@ -64,13 +72,15 @@ def cell_text(text: str) -> str:
     return f"'{text}" if text.startswith(_FORMULA) else text
 
 
-def markdown_table(frame: pd.DataFrame) -> str:
+def markdown_table(frame: pd.DataFrame, ours: Collection[str] = ()) -> str:
     r"""Return a frame as a Markdown table.
 
     Parameters
     ----------
     frame : DataFrame
         Text and numbers as they shall be read.
+    ours : collection of str
+        Columns whose text is the package's own, Markdown already: left as it is.
 
     Returns
     -------
@@ -83,7 +93,10 @@ def markdown_table(frame: pd.DataFrame) -> str:
     |---|---|
     | a\|b | 3 |
     """
-    rows = [[markdown_text(str(cell)) for cell in row] for row in frame.to_numpy(dtype=object)]
+    rows = [
+        [str(cell) if name in ours else markdown_text(str(cell)) for name, cell in zip(frame.columns, row, strict=True)]
+        for row in frame.to_numpy(dtype=object)
+    ]
     head = "| " + " | ".join(markdown_text(str(name)) for name in frame.columns) + " |"
     rule = "|" + "---|" * len(frame.columns)
     return "\n".join([head, rule, *("| " + " | ".join(row) + " |" for row in rows)])
@@ -97,6 +110,5 @@ def markdown_text(text: str) -> str:
     >>> markdown_text("<b>*x*")
     '\\<b\\>\\*x\\*'
     """
-    printable = "".join(char if char.isprintable() else " " for char in text)
     # An underscore inside a word is no markup, and names are full of them.
-    return re.sub(r"[\\`*{}\[\]<>#|~]|(?<![^\W_])_|_(?![^\W_])", r"\\\g<0>", printable)
+    return re.sub(r"[\\`*{}\[\]<>#|~&]|(?<![^\W_])_|_(?![^\W_])", r"\\\g<0>", printable(text))

@@ -7,9 +7,25 @@ import re
 
 from journeys.checks import duration_text
 from journeys.intake.rules import JourneyRules
+from journeys.models.fit import NO_WAY_OUT
+from journeys.models.model import COMPLETED_ONLY, END_NOT_SEEN, ENOUGH_AT_END, FEW_AT_END
 from journeys.questions.linear import TOO_FEW
+from journeys.questions.outcomes import UNREACHABLE
+from journeys.questions.time_to_convert import BETWEEN_BINS, TOO_LONG
 
 UNDECIDED = "undecided yet"
+
+# What the flags that a reader of the summary meets say, in the order in which they are told.
+FLAG_MEANINGS = {
+    TOO_FEW: "too few events, or no spread in them, for an interval; a share has one exact bound in its place",
+    UNREACHABLE: "no way there was seen",
+    BETWEEN_BINS: "counts are kept in bins of time, and this time lies within one; name it in `horizons` to be exact",
+    TOO_LONG: "nobody was followed that long, so the share is a lower bound",
+    END_NOT_SEEN: "no stay there was followed as long as the silence, so the share that goes quiet is an upper bound",
+    FEW_AT_END: f"fewer than {ENOUGH_AT_END} stays there were followed as long as the silence",
+    COMPLETED_ONLY: "the longest stay there is still open, so only completed moves count; a silence would mend it",
+    NO_WAY_OUT: "taken as never left",
+}
 
 
 def percent(share: float) -> str:
@@ -54,9 +70,9 @@ def amount_with_interval(estimate: float, low: float, high: float) -> str:
         return "some never do"
     if math.isnan(estimate):
         return ""
-    if not (math.isfinite(low) and math.isfinite(high)):
-        return f"{estimate:.3g}"
     digits = 0 if estimate >= 100 else 1 if estimate >= 10 else 2
+    if not (math.isfinite(low) and math.isfinite(high)):
+        return f"{estimate:,.{digits}f}"
     return f"{estimate:,.{digits}f} ({low:,.{digits}f}–{high:,.{digits}f})"
 
 
@@ -104,4 +120,6 @@ def listed(names: tuple[str, ...]) -> str:
 
 def _scaled(share: float) -> str:
     value = 100 * share
-    return f"{value:.1f}" if value == 0 or abs(value) >= 0.1 else f"{value:.1g}"
+    if value == 0 or abs(value) >= 0.1:
+        return f"{value:.1f}"
+    return f"{value:.{-math.floor(math.log10(abs(value)))}f}"

@@ -23,17 +23,21 @@ def cut_between_ties(blocks: Iterator[Rows]) -> Iterator[Rows]:
         The same rows in the same order. In a log in time order, rows of one moment stay together; in one
         grouped by customer, so do the rows of a customer unless they fill half a block.
     """
-    waiting: Rows | None = None
+    waiting: list[Rows] = []
     for block in blocks:
         if not len(block.key):
             continue
-        rows = block if waiting is None else concat_rows([waiting, block])
+        waiting.append(block)
+        del block
+        rows = concat_rows(waiting)
         cut = _last_safe_cut(rows)
-        waiting = rows.take(slice(cut, None))
+        # A copy, so that the few rows that wait do not keep the whole block in memory.
+        waiting = [rows.take(np.arange(cut, len(rows)))]
         if cut:
-            yield rows.take(slice(0, cut))
-    if waiting is not None:
-        yield waiting
+            rows = rows.take(slice(0, cut))
+            yield rows
+        del rows
+    yield from waiting
 
 
 def _last_safe_cut(rows: Rows) -> int:

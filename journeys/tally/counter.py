@@ -1,120 +1,45 @@
-"""Blocks of rows in, sums out: sorts a block by customer, takes out what the rules leave out, counts the rest."""
+"""Blocks of rows in, sums out: takes out of a block what the rules leave out, counts the rest."""
 
 from __future__ import annotations
 
-from dataclasses import replace
+from collections.abc import Iterable
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from journeys.errors import LogError
 from journeys.intake.findings import Findings
 from journeys.intake.identity import bucket_of_major
-from journeys.intake.rows import Rows
-from journeys.kernels.bins import bin_of
-from journeys.kernels.counting import close_log, count_rows
-from journeys.kernels.records import FIRST_OUTCOME, Carried, Counted, Ends, Entries, Moves, Reading
-from journeys.tally.accumulate import Accumulator, limbs
-from journeys.tally.keys import MOST_CODES, pack
-from journeys.tally.tally import CUSTOMER_SUMS, N_BUCKETS, SUMS
+from journeys.kernels.arrays import BoolArray, IntArray
+from journeys.kernels.counting import Block, close_log, count_rows
+from journeys.kernels.records import FIRST_OUTCOME, Carried, Reading
+from journeys.tally.order import Ordered
+from journeys.tally.sums import Sums
 
-Ints = NDArray[np.int64]
+Codes = NDArray[np.int32]
 
 
 class OutOfOrderError(Exception):
     """A customer's rows came out of order across blocks: the log has to be sorted first."""
 
 
-class StateCodes:
-    """Codes of states in order of appearance, after the codes that the rules fix."""
+@dataclass(frozen=True)
+class LeaveOut:
+    """Which rows a counter leaves out, and the columns its findings name.
 
-    def __init__(self, outcomes: tuple[str, ...]) -> None:
-        self.names: list[str] = ["lapsed", "open", *outcomes]
-        self._code = {name: code for code, name in enumerate(self.names)}
-        self._of_event = np.empty(0, np.int32)
+    Attributes
+    ----------
+    time, event : str
+        Names of the columns.
+    duplicates, after_outcome : bool
+        `duplicates="drop"`, `after_outcome="stop"`.
+    """
 
-    def of_events(self, targets: list[str | None]) -> NDArray[np.int32]:
-        """Return the code of each raw event, given the name it is mapped to (None: dropped, code -1)."""
-        if len(targets) > len(self._of_event):
-            new = [self._add(name) for name in targets[len(self._of_event) :]]
-            self._of_event = np.concatenate([self._of_event, np.array(new, np.int32)])
-        return self._of_event
-
-    def _add(self, name: str | None) -> int:
-        if name is None:
-            return -1
-        if name not in self._code:
-            if len(self.names) >= MOST_CODES:
-                msg = (
-                    f"more than {MOST_CODES:,} states in column of events; wanted names of what people do: "
-                    "map ids or addresses to a few names with `states`"
-                )
-                raise LogError(msg)
-            self._code[name] = len(self.names)
-            self.names.append(name)
-        return self._code[name]
-
-
-class Sums:
-    """The tables while they grow."""
-
-    def __init__(self, dwell_edges: Ints | None, elapsed_edges: Ints | None) -> None:
-        self._dwell_edges, self._elapsed_edges = dwell_edges, elapsed_edges
-        self.tables = {name: Accumulator(names) for name, names in SUMS.items()}
-        self.customers = {name: np.zeros(N_BUCKETS, np.int64) for name in (*CUSTOMER_SUMS, "largest_events")}
-
-    def add(self, counted: Counted) -> None:
-        """Add what a block of rows gave."""
-        for moves in counted.moves:
-            self.add_moves(moves)
-        for ends in counted.ends:
-            self.add_ends(ends)
-        if counted.entries is not None:
-            self._add_entries(counted.entries)
-
-    def add_moves(self, moves: Moves) -> None:
-        """Add moves under bucket, state, next, dwell bin and busy."""
-        key = pack(
-            bucket_of_major(moves.key),
-            moves.state,
-            moves.next_code,
-            bin_of(moves.dwell, self._dwell_edges),
-            moves.busy,
-        )
-        self.tables["moves"].add(key, {"n": np.ones(len(key), np.int64), **limbs(moves.dwell, "dwell")})
-
-    def add_ends(self, ends: Ends) -> None:
-        """Add journeys under bucket, entry state, outcome, elapsed bin and sure."""
-        key = pack(
-            bucket_of_major(ends.key),
-            ends.state,
-            ends.outcome,
-            bin_of(ends.elapsed, self._elapsed_edges),
-            ends.sure,
-        )
-        self.tables["journeys"].add(
-            key,
-            {
-                "n": np.ones(len(key), np.int64),
-                "steps": ends.steps,
-                "steps_squared": ends.steps**2,
-                **limbs(ends.elapsed, "elapsed"),
-            },
-        )
-
-    def _add_entries(self, entries: Entries) -> None:
-        key = pack(bucket_of_major(entries.key), entries.state, flag=entries.sure)
-        self.tables["entries"].add(key, {"n": np.ones(len(key), np.int64)})
-
-    def add_customers(self, carried: Carried) -> None:
-        """Add one record per customer, at the end of the log."""
-        held = carried.take(carried.n_events > 0)
-        bucket = bucket_of_major(held.key)
-        j, x = held.decided, held.converted
-        for name, values in zip(CUSTOMER_SUMS, (np.ones_like(j), j, j * j, j * x, x, x * x), strict=True):
-            np.add.at(self.customers[name], bucket, values)
-        np.maximum.at(self.customers["largest_events"], bucket, held.n_events)
+    time: str
+    event: str
+    duplicates: bool
+    after_outcome: bool
 
 
 class Counter:
@@ -124,184 +49,150 @@ class Counter:
     ----------
     reading : Reading
         The rules as numbers.
-    codes : StateCodes
-        Shared by all counters of a pass.
+    leave_out : LeaveOut
+        The rules on rows left out.
     sums : Sums
         Where everything is added.
     findings : Findings
         Where rows left out are counted.
-    columns : tuple of two str
-        Names of the time and event columns, for the findings.
-    drop_duplicates, stop_at_outcome : bool
-        `duplicates="drop"`, `after_outcome="stop"`.
     """
 
-    def __init__(
-        self,
-        reading: Reading,
-        codes: StateCodes,
-        sums: Sums,
-        findings: Findings,
-        *,
-        columns: tuple[str, str],
-        drop_duplicates: bool,
-        stop_at_outcome: bool,
-    ) -> None:
-        self._reading, self._codes, self._sums, self._findings = reading, codes, sums, findings
-        self._columns = columns
-        self._drop_duplicates, self._stop_at_outcome = drop_duplicates, stop_at_outcome
+    def __init__(self, reading: Reading, leave_out: LeaveOut, sums: Sums, findings: Findings) -> None:
+        self._reading, self._leave_out, self._sums, self._findings = reading, leave_out, sums, findings
         self._carried = Carried.none()
 
-    def add(self, rows: Rows, targets: list[str | None]) -> None:
+    def add(self, chunks: Iterable[Ordered], code_of_event: Codes, n_states: int) -> None:
         """Count a block of rows.
 
         Parameters
         ----------
-        rows : Rows
-            In input order.
-        targets : list of str or None
-            Name that each raw event stands for.
+        chunks : iterable of Ordered
+            The rows by customer and in order, each customer in one chunk, customers in increasing order.
+        code_of_event : ndarray of int32
+            Code of each raw event.
+        n_states : int
+            States known by now.
 
         Raises
         ------
         OutOfOrderError
             If a row is older than, or as old as, a row of that customer in an earlier block.
         """
-        if not len(rows.key):
-            return
-        rows = rows.take(_order(rows))
-        first = _block_starts(rows.key)
-        start = np.flatnonzero(first)
+        fresh = [self._add(rows, code_of_event, n_states) for rows in chunks if len(rows)]
+        self._carried.insert(Carried.joined(fresh))
+
+    def _add(self, rows: Ordered, code_of_event: Codes, n_states: int) -> Carried:
+        """Count one chunk; put its customers' new records in their place and return those of new customers."""
+        start = rows.starts()
         at = self._carried.find(rows.key[start])
-        seen = at >= 0
-        if seen.any() and (rows.time[start[seen]] <= self._carried.time[at[seen]]).any():
+        held = at >= 0
+        if (rows.time[start[held]] <= self._carried.time[at[held]]).any():
             raise OutOfOrderError
-        rows = self._without_duplicates(rows, first)
-        code = self._codes.of_events(targets)[rows.event]
-        whole = rows
-        rows, code = self._without_ended(rows, code)
-        if not len(rows.key):
-            return
-        counted, latest, at = count_rows(rows.key, rows.time, code, self._carried, self._reading)
-        if self._stop_at_outcome:
-            latest = self._stopped(latest, whole)
-        self._sums.add(counted)
-        self._findings.add("repeated_outcome", self._columns[1], rows.row[counted.repeated])
-        self._findings.add("outcome_without_states", self._columns[1], rows.row[counted.bare])
-        self._findings.add("began_after_outcome", self._columns[1], rows.row[counted.again])
-        self._findings.add("first_visit_of_unsure_journey", self._columns[0], counted.unsure_visits)
-        self._carried = self._carried.updated(latest, at)
+        kept = self._without_duplicates(rows, start)
+        code = code_of_event[kept.event]
+        if self._leave_out.after_outcome or kept.rows.ended is not None:
+            if kept is not rows:
+                start = kept.starts()
+            keep = self._before_end(kept, code, start, at)
+            kept, code = kept.take(keep), code[keep]
+        if not len(kept):
+            return Carried.none()
+        if kept is not rows:
+            start = kept.starts()
+            at = self._carried.find(kept.key[start])
+        latest = self._count(kept, code, start, at, n_states)
+        if self._leave_out.after_outcome:
+            # The latest row of any kind, even one left out, is what later rows must not precede.
+            last = np.searchsorted(rows.key, latest.key, side="right") - 1
+            latest.story_over = latest.code < self._reading.first_state
+            latest.time = np.where(latest.story_over, rows.time[last], latest.time)
+        return self._carried.put(latest, at)
 
     def close(self) -> None:
         """Close the log: running journeys lapse or stay open, customers are added up."""
-        moves, ends, unsure_visits, carried = close_log(self._carried, self._reading)
-        self._sums.add_moves(moves)
+        bucket = bucket_of_major(self._carried.key).astype(np.uint8)
+        moves, ends, unsure_visits, carried = close_log(self._carried, bucket, self._reading)
+        self._sums.add_moves(moves, 0)
         self._sums.add_ends(ends)
-        self._findings.add("first_visit_of_unsure_journey", self._columns[0], unsure_visits)
-        self._sums.add_customers(carried)
+        self._findings.add("first_visit_of_unsure_journey", self._leave_out.time, unsure_visits)
+        self._sums.add_customers(carried, bucket)
         self._carried = Carried.none()
 
-    def _without_duplicates(self, rows: Rows, first: NDArray[np.bool_]) -> Rows:
+    def _count(self, rows: Ordered, code: Codes, start: IntArray, at: IntArray, n_states: int) -> Carried:
+        """Add up a block and return its customers' new records."""
+        key, held = rows.key[start], at >= 0
+        # The records of customers never seen are never looked at: any will do.
+        prior = self._carried.take(np.maximum(at, 0)) if held.any() else _blank(len(start))
+        block = Block(rows.time, code, start, key, bucket_of_major(key).astype(np.uint8), prior, held)
+        counted, latest = count_rows(block, self._reading)
+        self._sums.add(counted, n_states)
+        names, event = self._findings, self._leave_out.event
+        names.add("repeated_outcome", event, rows.numbers(counted.repeated))
+        names.add("outcome_without_states", event, rows.numbers(counted.bare))
+        names.add("began_after_outcome", event, rows.numbers(counted.again))
+        names.add("first_visit_of_unsure_journey", self._leave_out.time, counted.unsure_visits)
+        return latest
+
+    def _without_duplicates(self, rows: Ordered, start: IntArray) -> Ordered:
         """Count exact duplicates and ties; drop the duplicates if the rules say so."""
-        tied = np.zeros(len(first), bool)
-        tied[1:] = ~first[1:] & (rows.time[1:] == rows.time[:-1])
+        tied = np.zeros(len(rows), bool)
+        np.equal(rows.time[1:], rows.time[:-1], out=tied[1:])
+        tied[start] = False
         if not tied.any():
             return rows
         group = tied.copy()
         group[:-1] |= tied[1:]
         index = np.flatnonzero(group)
-        some = rows.take(index)
+        some = rows.take(group)
         columns: list[NDArray[Any]] = [some.key, some.time, some.event]
-        if some.sequence is not None:
-            columns.append(some.sequence)
-        order = np.lexsort((some.row, *columns[::-1]))
+        if rows.rows.sequence is not None:
+            columns.append(rows.rows.sequence[some.order])
+        number = rows.numbers(group)
+        order = np.lexsort((number, *columns[::-1]))
         same = np.ones(len(order), bool)
         same[0] = False
         for column in columns:
             same[1:] &= column[order][1:] == column[order][:-1]
-        again = index[order[same]]
-        self._findings.add("duplicate", self._columns[1], rows.row[again])
-        self._findings.add("tied_times", self._columns[0], int(tied.sum()) - len(again))
-        if not self._drop_duplicates or not len(again):
+        again = order[same]
+        self._findings.add("duplicate", self._leave_out.event, number[again])
+        self._findings.add("tied_times", self._leave_out.time, int(tied.sum()) - len(again))
+        if not self._leave_out.duplicates or not len(again):
             return rows
-        keep = np.ones(len(first), bool)
-        keep[again] = False
+        keep = np.ones(len(rows), bool)
+        keep[index[again]] = False
         return rows.take(keep)
 
-    def _without_ended(self, rows: Rows, code: NDArray[np.int32]) -> tuple[Rows, NDArray[np.int32]]:
-        """Leave out the rows of customers whose story was over before the log, or ended earlier in it."""
-        if not self._stop_at_outcome and rows.ended is None:
-            return rows, code
-        start = np.flatnonzero(_block_starts(rows.key))
-        size = np.diff(np.append(start, len(rows.key)))
-        at = self._carried.find(rows.key[start])
+    def _before_end(self, rows: Ordered, code: Codes, start: IntArray, at: IntArray) -> BoolArray:
+        """Tell which rows come before the end of their customer's story, here or before the log."""
+        size = np.diff(start, append=len(rows))
         seen = at >= 0
         over = np.zeros(len(start), bool)
-        before_log = np.zeros(len(start), bool) if rows.ended is None else ~seen & rows.ended[start]
+        ended = rows.rows.ended
+        before_log = np.zeros(len(start), bool) if ended is None else ~seen & ended[rows.order[start]]
         over[seen] = self._carried.story_over[at[seen]]
         before_log[seen] = over[seen] & (self._carried.n_events[at[seen]] == 0)
         outcomes_before = np.zeros(len(code), np.int64)
-        if self._stop_at_outcome:
+        if self._leave_out.after_outcome:
             outcome = (code < self._reading.first_state).astype(np.int64)
             outcomes_before = np.cumsum(outcome) - outcome
             outcomes_before -= np.repeat(outcomes_before[start], size)
         left_before = np.repeat(before_log, size)
         left_after = ~left_before & (np.repeat(over, size) | (outcomes_before > 0))
-        self._findings.add("ended_before", self._columns[1], rows.row[left_before])
-        self._findings.add("after_outcome", self._columns[1], rows.row[left_after])
-        self._remember_left_out(rows, start + size - 1, at, over, before_log & ~seen)
-        keep = ~(left_before | left_after)
-        return rows.take(keep), code[keep]
-
-    def _stopped(self, latest: Carried, rows: Rows) -> Carried:
-        """Mark stories that an outcome has ended, as of the customer's last row even if it was left out."""
-        over = latest.code < self._reading.first_state
-        last = np.searchsorted(rows.key, latest.key, side="right") - 1
-        return replace(latest, story_over=over, time=np.where(over, rows.time[last], latest.time))
-
-    def _remember_left_out(
-        self, rows: Rows, last: Ints, at: Ints, over: NDArray[np.bool_], ended_before: NDArray[np.bool_]
-    ) -> None:
-        """Keep the time of the latest row of customers whose rows are all left out, to notice disorder."""
-        if over.any():
-            time = self._carried.time.copy()
-            time[at[over]] = rows.time[last[over]]
-            self._carried = replace(self._carried, time=time)
-        if ended_before.any():
-            key, time = rows.key[last[ended_before]], rows.time[last[ended_before]]
-            blank = np.zeros(len(key), np.int64)
-            code = np.full(len(key), FIRST_OUTCOME, np.int32)
-            unsure, yes = np.zeros(len(key), bool), np.ones(len(key), bool)
-            new = Carried(key, time, code, blank, blank, code, blank, unsure, blank, blank, blank, yes)
-            self._carried = self._carried.updated(new, np.full(len(key), -1))
+        self._findings.add("ended_before", self._leave_out.event, rows.numbers(left_before))
+        self._findings.add("after_outcome", self._leave_out.event, rows.numbers(left_after))
+        last = start + size - 1
+        self._carried.time[at[over]] = rows.time[last[over]]
+        new = before_log & ~seen
+        if new.any():
+            records = _blank(int(new.sum()))
+            records.key, records.time = rows.key[last[new]], rows.time[last[new]]
+            records.story_over[:] = True
+            self._carried.insert(records)
+        return ~(left_before | left_after)
 
 
-def _block_starts(key: NDArray[np.uint64]) -> NDArray[np.bool_]:
-    first = np.ones(len(key), bool)
-    first[1:] = key[1:] != key[:-1]
-    return first
-
-
-def _order(rows: Rows) -> Ints:
-    """Return the order by customer, time, sequence, input row; a plain sort where rows come in time order."""
-    n = len(rows.key)
-    bits = np.uint64(max(n - 1, 1).bit_length())
-    # Sorting (leading bits of the customer's key, position) in one word is far faster than an indirect sort.
-    packed = (rows.key >> bits << bits) | np.arange(n, dtype=np.uint64)
-    packed.sort()
-    order = (packed & ((np.uint64(1) << bits) - np.uint64(1))).astype(np.int64)
-    key = rows.key[order]
-    if (key[1:] < key[:-1]).any():
-        # Two customers share the leading bits: sort by the whole key.
-        order = np.argsort(rows.key, kind="stable")
-        key = rows.key[order]
-    time = rows.time[order]
-    same = key[1:] == key[:-1]
-    wrong = same & (time[1:] < time[:-1])
-    if rows.sequence is not None:
-        sequence = rows.sequence[order]
-        wrong |= same & (time[1:] == time[:-1]) & (sequence[1:] < sequence[:-1])
-    if not wrong.any():
-        return order
-    tie = rows.row if rows.sequence is None else rows.sequence
-    return np.lexsort((rows.row, tie, rows.time, rows.key))
+def _blank(n: int) -> Carried:
+    """Return `n` records of customers who have no journey."""
+    records = Carried.zeros(n)
+    records.code[:] = records.first_code[:] = FIRST_OUTCOME
+    return records

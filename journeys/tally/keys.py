@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Callable
 from typing import Any
 
 import numpy as np
@@ -14,17 +14,6 @@ Whole = NDArray[np.integer[Any]] | NDArray[np.bool_]
 _BIN_BITS, _CODE_BITS = 22, 16
 MOST_CODES = 1 << _CODE_BITS
 MOST_BINS = 1 << _BIN_BITS
-
-
-@dataclass(frozen=True)
-class KeyParts:
-    """Bucket, two codes, a bin and a flag; unused parts are zero."""
-
-    bucket: Ints
-    first: Ints
-    second: Ints
-    bin: Ints
-    flag: Ints
 
 
 def pack(bucket: Whole, first: Whole, second: Whole | int = 0, bins: Whole | int = 0, flag: Whole | int = 0) -> Ints:
@@ -40,13 +29,13 @@ def pack(bucket: Whole, first: Whole, second: Whole | int = 0, bins: Whole | int
     return key
 
 
-def unpack(key: Ints) -> KeyParts:
-    """Take a packed key apart."""
+def unpack(key: Ints) -> tuple[Callable[[], Ints], ...]:
+    """Return what takes a packed key apart: functions for bucket, two codes, bin and flag."""
     code = MOST_CODES - 1
-    return KeyParts(
-        bucket=key >> (2 * _CODE_BITS + _BIN_BITS + 1),
-        first=(key >> (_CODE_BITS + _BIN_BITS + 1)) & code,
-        second=(key >> (_BIN_BITS + 1)) & code,
-        bin=(key >> 1) & (MOST_BINS - 1),
-        flag=key & 1,
+    return (
+        lambda: key >> (2 * _CODE_BITS + _BIN_BITS + 1),
+        lambda: (key >> (_CODE_BITS + _BIN_BITS + 1)) & code,
+        lambda: (key >> (_BIN_BITS + 1)) & code,
+        lambda: (key >> 1) & (MOST_BINS - 1),
+        lambda: key & 1,
     )

@@ -9,32 +9,34 @@ from types import TracebackType
 
 import numpy as np
 
+from journeys.intake.identity import bucket_of_major
 from journeys.intake.rows import Rows
+from journeys.tally.tally import N_BUCKETS
 
-N_PARTS = 64
-_PART_SHIFT = np.uint64(58)
+# Files, each with the customers of a few neighbouring buckets.
+N_PARTS = 50
+BUCKETS_PER_PART = N_BUCKETS // N_PARTS
 _RECORD = np.dtype([("key", "u8"), ("time", "i8"), ("event", "i4"), ("row", "i8"), ("sequence", "i8"), ("ended", "?")])
 
 
 class Spill:
-    """Rows on disk in parts by the leading bits of the customer's key; a context manager that cleans up."""
+    """Rows on disk in parts by bucket of customers; a context manager that cleans up after itself."""
 
     def __init__(self) -> None:
         self._folder = tempfile.TemporaryDirectory(prefix="journeys-")
         self._files = [(Path(self._folder.name) / f"part-{part}").open("wb") for part in range(N_PARTS)]
-        self._sequence = self._ended = False
+        self._has_sequence = self._has_ended = False
 
     def add(self, rows: Rows) -> None:
         """Write a block of rows to the parts its customers belong to."""
-        record = np.empty(len(rows.key), _RECORD)
-        for name in ("key", "time", "event", "row"):
-            record[name] = getattr(rows, name)
-        self._sequence, self._ended = rows.sequence is not None, rows.ended is not None
-        record["sequence"] = 0 if rows.sequence is None else rows.sequence
-        record["ended"] = False if rows.ended is None else rows.ended
-        part = (rows.key >> _PART_SHIFT).astype(np.uint8)
+        self._has_sequence, self._has_ended = rows.sequence is not None, rows.ended is not None
+        part = bucket_of_major(rows.key) // BUCKETS_PER_PART
         order = np.argsort(part, kind="stable")
-        record = record[order]
+        record = np.zeros(len(rows), _RECORD)
+        for name in ("key", "time", "event", "row", "sequence", "ended"):
+            column = getattr(rows, name)
+            if column is not None:
+                record[name] = column[order]
         ends = np.searchsorted(part[order], np.arange(N_PARTS), side="right")
         begin = 0
         for handle, end in zip(self._files, ends, strict=True):
@@ -42,20 +44,18 @@ class Spill:
                 record[begin:end].tofile(handle)
             begin = end
 
-    def parts(self) -> Iterator[Rows]:
-        """Give each part's rows, all rows of a customer in one part."""
-        for handle in self._files:
+    def parts(self, first: int, last: int) -> Iterator[Rows]:
+        """Give the rows of the parts from `first` up to `last`, all rows of a customer in one part."""
+        for handle in self._files[first:last]:
             handle.close()
             record = np.fromfile(handle.name, _RECORD)
             Path(handle.name).unlink()
             if len(record):
+                columns = {name: record[name].copy() for name in ("key", "time", "event", "row")}
                 yield Rows(
-                    key=record["key"].copy(),
-                    time=record["time"].copy(),
-                    event=record["event"].copy(),
-                    row=record["row"].copy(),
-                    sequence=record["sequence"].copy() if self._sequence else None,
-                    ended=record["ended"].copy() if self._ended else None,
+                    **columns,
+                    sequence=record["sequence"].copy() if self._has_sequence else None,
+                    ended=record["ended"].copy() if self._has_ended else None,
                 )
 
     def __enter__(self) -> Spill:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import os
+from hashlib import blake2b
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -15,7 +16,7 @@ from journeys.errors import JourneysError, StoreError
 from journeys.files import written_whole
 from journeys.intake.findings import Findings
 from journeys.intake.rules import JourneyRules
-from journeys.tally.tally import CUSTOMER_SUMS, KEYS, SUMS, Tally
+from journeys.tally.tally import CUSTOMER_SUMS, KEYS, NARROW, SUMS, Tally
 
 if TYPE_CHECKING:
     from journeys.tally.accumulate import Columns
@@ -57,7 +58,10 @@ def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | 
         parts.append(
             pa.table(
                 {"table": label.cast(pa.string())}
-                | {column: pa.array(held[column]) if column in held else pa.nulls(size, pa.int64()) for column in every}
+                | {
+                    column: pa.array(held[column]).cast(pa.int64()) if column in held else pa.nulls(size, pa.int64())
+                    for column in every
+                }
             )
         )
     head = {
@@ -69,7 +73,7 @@ def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | 
         "whole_days": tally.whole_days,
         "n_rows": tally.n_rows,
         "findings": tally.record.to_dict(),
-        "checksum": tally.checksum,
+        "checksum": _checksum(tally),
     }
     whole = pa.concat_tables(parts).replace_schema_metadata({HEAD: json.dumps(head).encode(), **(more or {})})
     with written_whole(path) as part:
@@ -121,7 +125,7 @@ def load(path: str | os.PathLike[str]) -> Tally:
         raise StoreError(msg)
     try:
         tally = _from_parts(table, head)
-        whole = tally.checksum == head["checksum"]
+        whole = _checksum(tally) == head["checksum"]
     except (KeyError, TypeError, ValueError, AttributeError, pa.ArrowException, JourneysError):
         whole = False
     if not whole:
@@ -130,12 +134,21 @@ def load(path: str | os.PathLike[str]) -> Tally:
     return tally
 
 
+def _checksum(tally: Tally) -> str:
+    """Return the digest of all that is in the file: the tally's own leaves out the findings."""
+    findings = json.dumps(tally.record.to_dict(), sort_keys=True)
+    return blake2b((tally.checksum + findings).encode(), digest_size=16).hexdigest()
+
+
 def _from_parts(table: pa.Table, head: dict[str, Any]) -> Tally:
     which = np.asarray(table["table"].to_pandas(), dtype=str)
     held: dict[str, Columns] = {}
     for name in _TABLES:
         rows = table.filter(pa.array(which == name))
-        held[name] = {column: rows[column].to_numpy().astype(np.int64) for column in columns_of(name)}
+        narrow = {} if name == "customers" else NARROW
+        held[name] = {
+            column: rows[column].to_numpy().astype(narrow.get(column, np.int64)) for column in columns_of(name)
+        }
     return Tally(
         rules=JourneyRules.from_dict(head["rules"]),
         states=tuple(head["states"]),

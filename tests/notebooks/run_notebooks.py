@@ -39,6 +39,7 @@ def executed(path: Path, more: str = "") -> Any:
         kernel_manager_class=ThisInterpreter,
         timeout=60,
         record_timing=False,
+        coalesce_streams=True,
         resources={"metadata": {"path": path.parent}},
     )
     paths = [str(REPO), *filter(None, [os.environ.get("PYTHONPATH")])]

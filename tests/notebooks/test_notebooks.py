@@ -33,7 +33,7 @@ def test_names_no_folder_of_a_machine(path: Path):
 def test_first_hour_says_what_is_so():
     """The sentences around its last table, held against the table itself and the stated truth."""
     fresh = executed(FIRST_HOUR, "print(comparison.to_json(orient='index')); print(plain_days)")
-    table, plain_days = fresh.cells[-1].outputs[0].text.splitlines()
+    table, plain_days = text_outputs(fresh)[-1].splitlines()
     converted, steps, days = (json.loads(table)[name] for name in ("converted", "steps", "days"))
     truth = json.loads((REPO / "demo_data" / "truth.json").read_text(encoding="utf-8"))
     assert converted["true_value"] == pytest.approx(truth["journeys"]["share"]["joined"], abs=1e-9)

@@ -1,0 +1,107 @@
+"""Parquet files: batches of rows, and what the files note of their pieces."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+
+import pyarrow as pa
+import pyarrow.parquet as pq
+
+ROWS_AT_ONCE = 1 << 20
+
+
+def parquet_batches(path: Path, columns: Sequence[str], text: Sequence[str]) -> Iterator[pa.RecordBatch]:
+    """Batches across row groups; names come as dictionaries, as most files store them.
+
+    Parameters
+    ----------
+    path : Path
+    columns, text : sequence of str
+        Columns to read, and those of all columns that hold names.
+
+    Yields
+    ------
+    pyarrow.RecordBatch
+    """
+    schema = pq.read_schema(path)
+    kinds = (pa.string(), pa.large_string())
+    names = [name for name in text if name in columns and schema.field(name).type in kinds]
+    with pq.ParquetFile(path, read_dictionary=names) as parquet:
+        # A few row groups at a time: asked for all of them, Arrow would hold the whole file.
+        for groups in _together(parquet.metadata):
+            yield from parquet.iter_batches(batch_size=ROWS_AT_ONCE, row_groups=groups, columns=list(columns))
+
+
+def _together(metadata: pq.FileMetaData) -> Iterator[list[int]]:
+    """Numbers of neighbouring row groups that make up a batch."""
+    groups: list[int] = []
+    n_rows = 0
+    for number in range(metadata.num_row_groups):
+        n = metadata.row_group(number).num_rows
+        if groups and n_rows + n > ROWS_AT_ONCE:
+            yield groups
+            groups, n_rows = [], 0
+        groups.append(number)
+        n_rows += n
+    if groups:
+        yield groups
+
+
+@dataclass(frozen=True, slots=True)
+class Ranges:
+    """What the row groups of Parquet files say of one column.
+
+    Attributes
+    ----------
+    first, last : pyarrow.Array, shape (n_groups,)
+        Smallest and largest value of each group that has any.
+    n : list of int, length n_groups
+        Values that are there.
+    n_rows : int
+        Rows of all groups.
+    """
+
+    first: pa.Array
+    last: pa.Array
+    n: list[int]
+    n_rows: int
+
+
+def column_ranges(paths: Sequence[Path], column: str) -> Ranges | None:
+    """Ranges of a column of times or dates, without reading it; None where the files do not tell.
+
+    Parameters
+    ----------
+    paths : sequence of Path
+    column : str
+
+    Returns
+    -------
+    Ranges or None
+    """
+    first, last, n, n_rows, kind = [], [], [], 0, None
+    for path in paths:
+        metadata = pq.read_metadata(path)
+        field = metadata.schema.to_arrow_schema().field(column)
+        if kind not in (None, field.type) or not _tells_ranges(field.type):
+            return None
+        kind = field.type
+        place = metadata.schema.names.index(column)
+        for number in range(metadata.num_row_groups):
+            group = metadata.row_group(number)
+            found = group.column(place).statistics
+            n_rows += group.num_rows
+            if found is None or not found.has_null_count or (found.num_values and not found.has_min_max):
+                return None
+            if found.num_values:
+                first.append(found.min)
+                last.append(found.max)
+                n.append(found.num_values)
+    return None if kind is None else Ranges(pa.array(first, kind), pa.array(last, kind), n, n_rows)
+
+
+def _tells_ranges(kind: pa.DataType) -> bool:
+    """Return whether the statistics of such a column come as values of its own type."""
+    return bool(pa.types.is_date32(kind) or (pa.types.is_timestamp(kind) and kind.unit in ("ms", "us")))

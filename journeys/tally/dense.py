@@ -1,0 +1,120 @@
+"""Moves added up in a table with a cell for every key, for chains small enough to have one."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from journeys.kernels.arrays import IntArray
+from journeys.kernels.bins import DAY_US, bin_of
+from journeys.kernels.records import Moves
+from journeys.tally.accumulate import Accumulator, Keyed, add_up, limbs, product_limbs
+from journeys.tally.keys import pack
+
+# Cells of all workers together: 12 bytes each.
+MOST_CELLS = 12_000_000
+# A cell holds its count in 32 bits and its dwell, less the lower edge of its bin, in 64.
+_MOST_COUNT = (1 << 32) - 1
+_MOST_DWELL = 1 << 62
+_BUCKETS_AT_ONCE = 8
+
+
+class MoveSums:
+    """The moves table while it grows, for the buckets from one to another.
+
+    Parameters
+    ----------
+    edges : ndarray of int64 or None
+        From `dwell_edges`.
+    longest_us : int or None
+        The longest dwell of a move that goes into the table of cells (the silence); None: no such table.
+    first_state : int
+        Code of the first state.
+    buckets : range
+        Which buckets, for the size of the table of cells.
+    """
+
+    def __init__(self, edges: IntArray | None, longest_us: int | None, first_state: int, buckets: range) -> None:
+        self._edges, self._first_state, self._buckets = edges, first_state, buckets
+        self._n_bins = 0
+        if longest_us is not None:
+            self._n_bins = int(bin_of(np.array([longest_us]), edges)[0]) + 1
+        self._n_states = 0
+        self._n = np.zeros(0, np.uint32)
+        self._rest = np.zeros(0, np.int64)
+        self._count, self._dwell = 0, 0.0
+        self._sparse = Accumulator(("n", "dwell_high", "dwell_low"))
+        bins = np.arange(self._n_bins)
+        self._lower = bins * DAY_US if edges is None else np.concatenate([[0], edges])[: self._n_bins]
+
+    def add(self, moves: Moves, n_states: int) -> None:
+        """Add moves; `n_states` states are known by now."""
+        if moves.busy is not None:
+            # Few customers have so many events that their moves need cells of their own.
+            self._add_sparse(_part(moves, moves.busy), 1)
+            moves = _part(moves, ~moves.busy)
+        if not len(moves.bucket):
+            return
+        if n_states > self._n_states:
+            self._grow(n_states)
+        bins = bin_of(moves.dwell, self._edges)
+        rest = moves.dwell - self._lower[bins] if len(self._n) else moves.dwell
+        total = float(rest.sum(dtype=np.float64))
+        if not len(self._n) or total > _MOST_DWELL:
+            self._add_sparse(moves, 0)
+            return
+        cell = moves.bucket.astype(np.int64)
+        cell -= self._buckets.start
+        cell *= self._n_states
+        cell += moves.state
+        cell -= self._first_state
+        cell *= self._first_state + self._n_states
+        cell += moves.next_code
+        cell *= self._n_bins
+        cell += bins
+        if self._count + len(cell) > _MOST_COUNT or self._dwell + total > _MOST_DWELL:
+            self._empty_cells()
+        self._count += len(cell)
+        self._dwell += total
+        np.add.at(self._n, cell, np.uint32(1))
+        np.add.at(self._rest, cell, rest)
+
+    def result(self) -> Keyed:
+        """Return the distinct keys in order and their sums."""
+        self._empty_cells()
+        self._n, self._rest = np.zeros(0, np.uint32), np.zeros(0, np.int64)
+        return self._sparse.result()
+
+    def _grow(self, n_states: int) -> None:
+        """Make room for more states."""
+        self._empty_cells()
+        self._n_states = n_states
+        per_bucket = n_states * (self._first_state + n_states) * self._n_bins
+        size = per_bucket * len(self._buckets) if per_bucket * 200 <= MOST_CELLS else 0
+        self._n, self._rest = np.zeros(size, np.uint32), np.zeros(size, np.int64)
+
+    def _empty_cells(self) -> None:
+        """Move what the cells hold to the sorted table."""
+        # A few buckets at a time, to stay small.
+        size = max(len(self._n) // max(len(self._buckets), 1), 1) * _BUCKETS_AT_ONCE
+        for begin in range(0, len(self._n), size):
+            at = np.flatnonzero(self._n[begin : begin + size]) + begin
+            bins = at % self._n_bins
+            above = at // self._n_bins
+            next_code = above % (self._first_state + self._n_states)
+            above //= self._first_state + self._n_states
+            state = above % self._n_states + self._first_state
+            bucket = above // self._n_states + self._buckets.start
+            n = self._n[at].astype(np.int64)
+            sums = product_limbs(n, self._lower[bins], self._rest[at], "dwell")
+            self._sparse.add((pack(bucket, state, next_code, bins), {"n": n, **sums}))
+        self._n[:] = 0
+        self._rest[:] = 0
+        self._count, self._dwell = 0, 0.0
+
+    def _add_sparse(self, moves: Moves, busy: int) -> None:
+        key = pack(moves.bucket, moves.state, moves.next_code, bin_of(moves.dwell, self._edges), busy)
+        self._sparse.add(add_up(key, {"n": np.ones(len(key), np.int64), **limbs(moves.dwell, "dwell")}))
+
+
+def _part(moves: Moves, mask: np.ndarray) -> Moves:
+    return Moves(moves.bucket[mask], moves.state[mask], moves.next_code[mask], moves.dwell[mask])

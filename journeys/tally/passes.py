@@ -1,0 +1,204 @@
+"""One reading of a log: a thread reads ahead, workers count the customers of their buckets, the rest is joined."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from concurrent.futures import ThreadPoolExecutor, wait
+from dataclasses import dataclass
+from typing import TypeVar
+
+import numpy as np
+from numpy.typing import NDArray
+
+from journeys.intake.findings import Findings
+from journeys.intake.identity import bucket_major
+from journeys.intake.look import Look
+from journeys.intake.normalise import Normaliser
+from journeys.intake.read import LogSource
+from journeys.intake.rows import Rows
+from journeys.intake.rules import JourneyRules
+from journeys.kernels.arrays import IntArray
+from journeys.kernels.bins import dwell_edges, elapsed_edges
+from journeys.kernels.records import Reading
+from journeys.tally.accumulate import Columns, Keyed, merged
+from journeys.tally.blocks import cut_between_ties
+from journeys.tally.codes import StateCodes
+from journeys.tally.counter import Counter, LeaveOut
+from journeys.tally.dense import MoveSums
+from journeys.tally.order import Ordered, by_customer
+from journeys.tally.spill import BUCKETS_PER_PART, N_PARTS, Spill
+from journeys.tally.sums import Sums
+from journeys.tally.tally import KEYS, N_BUCKETS, NARROW, SUMS, Tally, join_key, split_key
+
+T = TypeVar("T")
+
+
+@dataclass(frozen=True)
+class Span:
+    """From when to when a log reaches, and whether it holds dates without a time."""
+
+    log_start_us: int
+    as_of_us: int
+    whole_days: bool
+
+
+@dataclass(frozen=True)
+class _Block:
+    """Rows with their order by customer and the codes of their events."""
+
+    rows: Rows
+    order: IntArray
+    code_of_event: NDArray[np.int32]
+    n_states: int
+
+
+class _Worker:
+    """Counts the customers of some neighbouring buckets."""
+
+    def __init__(self, parts: range, reading: Reading, leave_out: LeaveOut, span: Span, rules: JourneyRules) -> None:
+        self.parts = parts
+        self.findings = Findings()
+        self._reading, self._leave_out = reading, leave_out
+        buckets = range(parts.start * BUCKETS_PER_PART, parts.stop * BUCKETS_PER_PART)
+        # Merged visits may last longer than the silence, and without one there is no longest stay at all.
+        longest = None if rules.repeats == "merge" else rules.silence_us
+        edges = dwell_edges(rules.silence_us, span.whole_days)
+        moves = MoveSums(edges, longest, reading.first_state, buckets)
+        self.sums = Sums(elapsed_edges(rules.silence_us, span.whole_days, rules.horizons_us), moves)
+        self._counter = self._new_counter()
+
+    def add(self, block: _Block, part: slice) -> None:
+        """Count one part of a block in order."""
+        self._counter.add(Ordered.chunks(block.rows, block.order[part]), block.code_of_event, block.n_states)
+
+    def close(self) -> dict[str, Keyed]:
+        """Close the log and return the tables."""
+        self._counter.close()
+        return self.sums.result()
+
+    def add_parts(self, spill: Spill, code_of_event: NDArray[np.int32], n_states: int) -> dict[str, Keyed]:
+        """Count the parts of a spilled log that are this worker's, one after another, and return the tables."""
+        for rows in spill.parts(self.parts.start, self.parts.stop):
+            counter = self._new_counter()
+            counter.add(Ordered.chunks(rows, by_customer(rows.key)), code_of_event, n_states)
+            counter.close()
+        return self.sums.result()
+
+    def _new_counter(self) -> Counter:
+        return Counter(self._reading, self._leave_out, self.sums, self.findings)
+
+
+class Pass:
+    """One reading of a log.
+
+    Parameters
+    ----------
+    log : LogSource
+        The log.
+    rules : JourneyRules
+        What a journey is.
+    look : Look
+        What a first look at the times told.
+    span : Span
+        From when to when the log is read.
+    n_workers : int
+        Threads that count.
+    progress : bool
+        Show a progress bar.
+    """
+
+    def __init__(
+        self, log: LogSource, rules: JourneyRules, look: Look, span: Span, n_workers: int, progress: bool
+    ) -> None:
+        self._log, self._rules, self._look, self._span, self._progress = log, rules, look, span, progress
+        reading = Reading(
+            n_outcomes=len(rules.outcomes), n_converted=len(rules.converted), silence_us=rules.silence_us,
+            same_outcome_us=rules.same_outcome_us, merge_repeats=rules.repeats == "merge",
+            log_start_us=span.log_start_us, as_of_us=span.as_of_us, complete_history=rules.complete_history,
+        )  # fmt: skip
+        self._normaliser = Normaliser(rules, log_start_us=span.log_start_us, as_of_us=span.as_of_us)
+        self._codes = StateCodes(rules.outcomes)
+        leave_out = LeaveOut(rules.time, rules.event, rules.duplicates == "drop", rules.after_outcome == "stop")
+        cuts = [part * N_PARTS // n_workers for part in range(n_workers + 1)]
+        self._workers = [
+            _Worker(range(first, last), reading, leave_out, span, rules)
+            for first, last in zip(cuts, cuts[1:], strict=False)
+        ]
+
+    def in_order(self) -> Tally:
+        """Count while rows stream by; raises OutOfOrderError where a customer's rows come out of order."""
+        firsts = bucket_major(np.array([worker.parts.start * BUCKETS_PER_PART for worker in self._workers], np.uint64))
+        with ThreadPoolExecutor(len(self._workers)) as pool:
+            for block in ahead(self._ordered()):
+                cut = np.searchsorted(block.rows.key, firsts, sorter=block.order).tolist()
+                parts = [slice(a, b) for a, b in zip(cut, [*cut[1:], len(block.order)], strict=True)]
+                jobs = [pool.submit(w.add, block, part) for w, part in zip(self._workers, parts, strict=True)]
+                wait(jobs)
+                for job in jobs:
+                    job.result()
+            tables = list(pool.map(_Worker.close, self._workers))
+        return self._tally(tables)
+
+    def sorted_by_customer(self) -> Tally:
+        """Count after sorting the rows by customer in temporary files."""
+        with Spill() as spill, ThreadPoolExecutor(len(self._workers)) as pool:
+            for rows in ahead(self._rows()):
+                spill.add(rows)
+            code_of_event = self._codes.of_events(self._normaliser.targets)
+            n_states = len(self._codes.states)
+            jobs = [pool.submit(w.add_parts, spill, code_of_event, n_states) for w in self._workers]
+            tables = [job.result() for job in jobs]
+        return self._tally(tables)
+
+    def _rows(self) -> Iterator[Rows]:
+        from tqdm import tqdm
+
+        with tqdm(total=self._look.n_rows, unit=" rows", unit_scale=True, disable=not self._progress) as bar:
+            for batch in self._log.batches(self._rules.columns):
+                bar.update(batch.num_rows)
+                yield self._normaliser.rows(batch)
+
+    def _ordered(self) -> Iterator[_Block]:
+        for rows in cut_between_ties(self._rows()):
+            code_of_event = self._codes.of_events(self._normaliser.targets)
+            yield _Block(rows, by_customer(rows.key), code_of_event, len(self._codes.states))
+
+    def _tally(self, parts: list[dict[str, Keyed]]) -> Tally:
+        findings = sum((worker.findings for worker in self._workers), self._normaliser.findings)
+        findings.add("later_than_now", self._rules.time, self._look.n_later_than_now)
+        states = sorted(self._codes.states)
+        fixed = len(self._codes.names) - len(states)
+        place = {name: fixed + i for i, name in enumerate(states)}
+        code = np.array([*range(fixed), *(place[name] for name in self._codes.states)])
+        tables = {name: _labelled(name, [part[name] for part in parts], code) for name in KEYS}
+        customers = {"bucket": np.arange(N_BUCKETS)}
+        for name in self._workers[0].sums.customers:
+            # Each bucket is one worker's, so the others hold zeros.
+            customers[name] = np.sum([worker.sums.customers[name] for worker in self._workers], axis=0)
+        return Tally(
+            rules=self._rules, states=tuple(states), log_start_us=self._span.log_start_us,
+            as_of_us=self._span.as_of_us, whole_days=self._span.whole_days, n_rows=self._normaliser.n_rows,
+            customers=customers, record=findings, **tables,
+        )  # fmt: skip
+
+
+def _labelled(name: str, parts: list[Keyed], code: IntArray) -> Columns:
+    """Join the workers' tables, their codes replaced by positions among the sorted labels."""
+    table = split_key(name, *merged(parts, SUMS[name]))
+    if (code[1:] > code[:-1]).all():
+        return table
+    for column in ("state", "next", "outcome"):
+        if column in table:
+            table[column] = code[table[column]].astype(NARROW[column])
+    order = np.argsort(join_key(name, table))
+    return {column: values[order] for column, values in table.items()}
+
+
+def ahead(items: Iterator[T]) -> Iterator[T]:
+    """Give the items of an iterator, a thread making the next while this one is used."""
+    end = object()
+    with ThreadPoolExecutor(1) as pool:
+        job = pool.submit(next, items, end)
+        while (item := job.result()) is not end:
+            job = pool.submit(next, items, end)
+            yield item  # type: ignore[misc]

@@ -1,0 +1,71 @@
+"""The tables of a tally while they grow."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+
+from journeys.kernels.arrays import IntArray
+from journeys.kernels.bins import bin_of
+from journeys.kernels.records import Carried, Counted, Ends, Entries, Moves
+from journeys.tally.accumulate import Accumulator, Keyed, add_up, add_up_counts, limbs
+from journeys.tally.dense import MoveSums
+from journeys.tally.keys import pack
+from journeys.tally.tally import CUSTOMER_SUMS, N_BUCKETS, SUMS
+
+
+class Sums:
+    """Everything that blocks of rows add up to, for the buckets from one to another.
+
+    Parameters
+    ----------
+    dwell_edges, elapsed_edges : ndarray of int64 or None
+        Bins of dwell and of elapsed time.
+    moves : MoveSums
+        The moves table.
+    """
+
+    def __init__(self, elapsed_edges: IntArray | None, moves: MoveSums) -> None:
+        self._elapsed_edges, self._moves = elapsed_edges, moves
+        self._entries, self._journeys = Accumulator(SUMS["entries"]), Accumulator(SUMS["journeys"])
+        self.customers = {name: np.zeros(N_BUCKETS, np.int64) for name in (*CUSTOMER_SUMS, "largest_events")}
+
+    def add(self, counted: Counted, n_states: int) -> None:
+        """Add what a block of rows gave; `n_states` states are known by now."""
+        for moves in counted.moves:
+            self.add_moves(moves, n_states)
+        for ends in counted.ends:
+            self.add_ends(ends)
+        self._add_entries(counted.entries)
+
+    def add_moves(self, moves: Moves, n_states: int) -> None:
+        """Add moves under bucket, state, next, dwell bin and busy."""
+        self._moves.add(moves, n_states)
+
+    def add_ends(self, ends: Ends) -> None:
+        """Add journeys under bucket, entry state, outcome, elapsed bin and sure."""
+        bins = bin_of(ends.elapsed, self._elapsed_edges)
+        key = pack(ends.bucket, ends.state, ends.outcome, bins, ends.sure)
+        steps = ends.steps.astype(np.int64)
+        sums = {"n": np.ones(len(key), np.int64), "steps": steps, "steps_squared": steps**2}
+        self._journeys.add(add_up(key, {**sums, **limbs(ends.elapsed, "elapsed")}))
+
+    def add_customers(self, carried: Carried, bucket: np.ndarray[Any, Any]) -> None:
+        """Add one record per customer, at the end of the log."""
+        seen = carried.n_events > 0
+        bucket, j, x = bucket[seen], carried.decided[seen].astype(np.int64), carried.converted[seen].astype(np.int64)
+        for name, values in zip(CUSTOMER_SUMS, (np.ones_like(j), j, j * j, j * x, x, x * x), strict=True):
+            np.add.at(self.customers[name], bucket, values)
+        np.maximum.at(self.customers["largest_events"], bucket, carried.n_events[seen])
+
+    def result(self) -> dict[str, Keyed]:
+        """Return each table's distinct keys in order and their sums."""
+        return {
+            "moves": self._moves.result(),
+            "entries": self._entries.result(),
+            "journeys": self._journeys.result(),
+        }
+
+    def _add_entries(self, entries: Entries) -> None:
+        self._entries.add(add_up_counts(pack(entries.bucket, entries.state, flag=entries.sure)))
