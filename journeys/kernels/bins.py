@@ -89,9 +89,9 @@ def bin_of(duration_us: NDArray[np.int64], edges: NDArray[np.int64] | None) -> N
         return np.asarray(np.searchsorted(edges, duration_us, side="left"), np.int64)
     # Geometric edges: the logarithm tells the bin to within one, and a comparison settles it; far faster than a search.
     scale = (len(edges) - 1) / np.log(edges[-1] / edges[0])
-    guess = np.log(np.maximum(duration_us, 1))
-    guess -= np.log(edges[0])
-    guess *= scale
+    guess = np.log(np.maximum(duration_us, 1).astype(np.float32))
+    guess -= np.float32(np.log(edges[0]))
+    guess *= np.float32(scale)
     bins = np.clip(np.ceil(guess, out=guess), 0, len(edges) - 1).astype(np.int64)
     bins -= (bins > 0) & (duration_us <= edges[np.maximum(bins - 1, 0)])
     bins += duration_us > edges[bins]

@@ -131,7 +131,7 @@ def count_rows(block: Block, reading: Reading) -> tuple[Counted, Carried]:
     return counted, _latest(block, story, decided, np.bincount(won, minlength=n))
 
 
-def close_log(carried: Carried, bucket: Buckets, reading: Reading) -> tuple[Moves, Ends, int, Carried]:
+def close_log(carried: Carried, bucket: Buckets, reading: Reading) -> tuple[Moves, Ends, int]:
     """Return the moves and journeys that the end of the log decides or leaves open.
 
     Parameters
@@ -151,8 +151,10 @@ def close_log(carried: Carried, bucket: Buckets, reading: Reading) -> tuple[Move
         One lapsed or open journey each.
     unsure_visits : int
         Stays left out.
-    carried : Carried
-        The same records, lapses counted in `decided`.
+
+    Notes
+    -----
+    Lapses are counted in `carried.decided`.
     """
     running = np.flatnonzero((carried.code >= reading.first_state) & ~carried.story_over)
     held, bucket = carried.take(running), bucket[running]
@@ -167,7 +169,7 @@ def close_log(carried: Carried, bucket: Buckets, reading: Reading) -> tuple[Move
     if reading.merge_repeats:
         keep = (held.steps != 1) | held.sure
     moves = Moves(
-        bucket[keep], held.code[keep], next_code[keep], (until - held.visit_start)[keep],
+        bucket[keep], held.code[keep], next_code[keep], (until - held.visit_began)[keep],
         (held.n_events >= reading.busy_after)[keep],
     )  # fmt: skip
     ends = Ends(
@@ -175,7 +177,7 @@ def close_log(carried: Carried, bucket: Buckets, reading: Reading) -> tuple[Move
         until - held.journey_start,
     )  # fmt: skip
     carried.decided[running] += lapsed
-    return moves, ends, int((~keep).sum()), carried
+    return moves, ends, int((~keep).sum())
 
 
 def _marks(block: Block, reading: Reading) -> _Marks:
@@ -231,6 +233,7 @@ class _Stories:
                 new &= block.time[self.begun] < reading.log_start_us + reading.silence_us
             self.sure_begun = ~new
         # Without merging, each row is a visit of its own.
+        self.merging = reading.merge_repeats
         self._visits: Codes | None = None
         if reading.merge_repeats:
             self._visits = np.cumsum(marks.visit, dtype=np.int32)
@@ -264,7 +267,7 @@ class _Stories:
         here = begin >= block.start[owner]
         if first is not None:
             here &= ~first
-        return np.where(here, block.time[begin], block.prior.visit_start[owner])
+        return np.where(here, block.time[begin], block.prior.visit_began[owner])
 
     def dwell(self, row: Ints) -> tuple[Ints, Bools]:
         """Return, for rows that end a visit, the time since it began, and whether its beginning is unknown."""
@@ -300,7 +303,7 @@ def _of(busy: Bools | None, rows: Ints) -> Bools | None:
 
 
 def _latest(block: Block, story: _Stories, decided: NDArray[Any], won: NDArray[Any]) -> Carried:
-    """Return one record per customer of the block, as of its last row."""
+    """Return one record per customer of the block, as of its last row; of journeys ended, what the block adds."""
     n, prior = len(block.start), block.prior
     last = np.append(block.start[1:], len(block.time)) - 1
     owner = np.arange(n, dtype=np.int32)
@@ -308,10 +311,10 @@ def _latest(block: Block, story: _Stories, decided: NDArray[Any], won: NDArray[A
     size = (last - block.start + 1).astype(np.int32)
     none = np.int32(0)
     return Carried(
-        key=block.key, time=block.time[last], visit_start=story.visit_start(last, owner), journey_start=now.start,
+        key=block.key, time=block.time[last], journey_start=now.start,
         code=block.code[last], first_code=now.first_code, steps=now.steps.astype(np.int32),
         n_events=np.where(block.held, prior.n_events, none) + size,
-        decided=np.where(block.held, prior.decided, none) + decided.astype(np.int32),
-        converted=np.where(block.held, prior.converted, none) + won.astype(np.int32),
+        decided=decided.astype(np.int32), converted=won.astype(np.int32),
         sure=now.sure, story_over=np.zeros(n, bool),
+        visit_start=story.visit_start(last, owner) if story.merging else None,
     )  # fmt: skip

@@ -46,11 +46,11 @@ class Carried:
     """One record per customer seen: what the next row of that customer needs. Sorted by `key`.
 
     The one table that is changed in place: copying it for every block of rows would cost more than counting.
+    `visit_start` is only kept where repeats merge; elsewhere each row is a visit of its own.
     """
 
     key: NDArray[np.uint64]
     time: Ints
-    visit_start: Ints
     journey_start: Ints
     code: NDArray[np.int32]
     first_code: NDArray[np.int32]
@@ -60,30 +60,29 @@ class Carried:
     converted: NDArray[np.int32]
     sure: Bools
     story_over: Bools
+    visit_start: Ints | None = None
 
     @classmethod
-    def none(cls) -> Carried:
-        """Return a table without customers."""
-        return cls.zeros(0)
+    def zeros(cls, n: int, *, visits: bool) -> Carried:
+        """Return a table of `n` empty records, with the start of visits if they may span rows."""
+        wide = {"key": np.uint64, "time": np.int64, "journey_start": np.int64, "visit_start": np.int64}
+        kinds: dict[str, Any] = {**wide, "sure": np.bool_, "story_over": np.bool_}
+        names = [f.name for f in fields(cls) if visits or f.name != "visit_start"]
+        return cls(**{name: np.zeros(n, kinds.get(name, np.int32)) for name in names})
 
-    @classmethod
-    def zeros(cls, n: int) -> Carried:
-        """Return a table of `n` empty records."""
-        wide = {"key": np.uint64, "time": np.int64, "visit_start": np.int64, "journey_start": np.int64}
-        flags = {"sure": np.bool_, "story_over": np.bool_}
-        kinds: dict[str, Any] = wide | flags
-        return cls(**{f.name: np.zeros(n, kinds.get(f.name, np.int32)) for f in fields(cls)})
+    @property
+    def visit_began(self) -> Ints:
+        """When the visit of each customer's last row began."""
+        return self.time if self.visit_start is None else self.visit_start
 
-    @classmethod
-    def joined(cls, parts: list[Carried]) -> Carried:
-        """Return several tables one after another."""
-        if not parts:
-            return cls.none()
-        return cls(**{f.name: np.concatenate([getattr(part, f.name) for part in parts]) for f in fields(cls)})
+    @property
+    def names(self) -> list[str]:
+        """Columns that are kept."""
+        return [f.name for f in fields(self) if getattr(self, f.name) is not None]
 
-    def take(self, index: Ints | Bools) -> Carried:
-        """Return copies of the records at `index`."""
-        return Carried(**{f.name: getattr(self, f.name)[index] for f in fields(self)})
+    def take(self, index: Ints | Bools | slice) -> Carried:
+        """Return the records at `index`."""
+        return Carried(**{name: getattr(self, name)[index] for name in self.names})
 
     def find(self, key: NDArray[np.uint64]) -> Ints:
         """Return the position of each key, -1 where it is not carried."""
@@ -94,33 +93,42 @@ class Carried:
         at[self.key[at] != key] = -1
         return at
 
-    def put(self, new: Carried, at: Ints) -> Carried:
-        """Put new records in place of those at `at`; return the ones with no place (`at` is -1), to be inserted."""
-        if (at >= 0).all():
-            for f in fields(self):
-                getattr(self, f.name)[at] = getattr(new, f.name)
-            return Carried.none()
-        old = np.flatnonzero(at >= 0)
-        at = at[old]
-        for f in fields(self):
-            getattr(self, f.name)[at] = getattr(new, f.name)[old]
-        fresh = np.ones(len(new.key), bool)
-        fresh[old] = False
-        return new.take(fresh)
+    def put(self, new: Carried, at: Ints) -> Carried | None:
+        """Put new records in place of those at `at`; return the ones with no place (`at` is -1), to be inserted.
 
-    def insert(self, fresh: Carried) -> None:
+        Journeys decided and converted are what the new records add to the old ones.
+        """
+        fresh = None
+        if (at < 0).any():
+            fresh = new.take(at < 0)
+            held = np.flatnonzero(at >= 0)
+            at, new = at[held], new.take(held)
+        for name in self.names:
+            column, values = getattr(self, name), getattr(new, name)
+            if name in _ADDED:
+                some = np.flatnonzero(values)
+                column[at[some]] += values[some]
+            elif name != "key":
+                column[at] = values
+        return fresh
+
+    def insert(self, fresh: list[Carried]) -> None:
         """Add records of new customers, sorted by key."""
-        if not len(fresh.key):
+        if not fresh:
             return
-        where = np.searchsorted(self.key, fresh.key) + np.arange(len(fresh.key))
-        size = len(self.key) + len(fresh.key)
+        key = np.concatenate([part.key for part in fresh])
+        where = np.searchsorted(self.key, key) + np.arange(len(key))
+        size = len(self.key) + len(key)
         stays = np.ones(size, bool)
         stays[where] = False
-        for f in fields(self):
-            column = np.empty(size, getattr(self, f.name).dtype)
-            column[where] = getattr(fresh, f.name)
-            column[stays] = getattr(self, f.name)
-            setattr(self, f.name, column)
+        for name in self.names:
+            column = np.empty(size, getattr(self, name).dtype)
+            column[where] = np.concatenate([getattr(part, name) for part in fresh])
+            column[stays] = getattr(self, name)
+            setattr(self, name, column)
+
+
+_ADDED = ("decided", "converted")
 
 
 @dataclass(frozen=True)
@@ -132,6 +140,28 @@ class Moves:
     next_code: NDArray[np.int32]
     dwell: Ints
     busy: Bools | None = None
+
+
+@dataclass(frozen=True)
+class Cells:
+    """A table with a cell for every move there can be; empty for a chain too large to have one.
+
+    Attributes
+    ----------
+    n, rest : ndarray of uint32 and of int64
+        Counts, and sums of dwell less the lower edge of its bin, by bucket, state, next and bin.
+    lower, upper : ndarray of int64, shape (n_bins,)
+        Edges of the bins.
+    first_bucket, n_states : int
+        The bucket that comes first, and for how many states there is room.
+    """
+
+    n: NDArray[np.uint32]
+    rest: Ints
+    lower: Ints
+    upper: Ints
+    first_bucket: int
+    n_states: int
 
 
 @dataclass(frozen=True)

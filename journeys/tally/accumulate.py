@@ -13,6 +13,7 @@ Columns = dict[str, NDArray[np.int64]]
 Keyed = tuple[IntArray, Columns]
 
 _LIMB = 32
+_FEW = 1 << 19
 _LOW = (1 << _LIMB) - 1
 
 
@@ -41,31 +42,32 @@ def product_limbs(n: IntArray, value: IntArray, rest: IntArray, name: str) -> Co
 
 
 def add_up(key: IntArray, sums: Columns) -> Keyed:
-    """Return the distinct keys in order and the sums under each; low limbs carried into the high ones."""
+    """Return the distinct keys in order and the sums under each; low limbs carried into the high ones.
+
+    `sums` is used up, so that columns can be let go of one by one.
+    """
     if not len(key):
         return key, sums
-    order = np.argsort(key)
-    key = key[order]
-    first = np.ones(len(key), bool)
-    first[1:] = key[1:] != key[:-1]
-    start = np.flatnonzero(first)
-    added = {name: np.add.reduceat(column[order], start) for name, column in sums.items()}
+    if (key[1:] <= key[:-1]).any():
+        order = np.argsort(key)
+        key = key[order]
+        first = np.ones(len(key), bool)
+        first[1:] = key[1:] != key[:-1]
+        start = np.flatnonzero(first)
+        added = {name: np.add.reduceat(sums.pop(name)[order], start) for name in list(sums)}
+        key = key[start]
+    else:
+        added = dict(sums)
     for name in added:
         if name.endswith("_low"):
             high = name.removesuffix("_low") + "_high"
             added[high] = added[high] + (added[name] >> _LIMB)
             added[name] = added[name] & _LOW
-    return key[start], added
-
-
-def add_up_counts(key: IntArray) -> Keyed:
-    """Return the distinct keys in order and how often each came."""
-    distinct, n = np.unique(key, return_counts=True)
-    return distinct, {"n": n.astype(np.int64, copy=False)}
+    return key, added
 
 
 class Accumulator:
-    """A growing table of sums: blocks, each sorted and added up, merged when they pile up."""
+    """A growing table of sums: blocks wait in any order and are added up when they pile up."""
 
     def __init__(self, names: tuple[str, ...]) -> None:
         self._names = names
@@ -73,35 +75,24 @@ class Accumulator:
         self._waiting = 0
         self._settled = 0
 
-    def add(self, keyed: Keyed) -> None:
-        """Add one block: distinct keys in order, and their sums."""
-        if not len(keyed[0]):
+    def add(self, key: IntArray, sums: Columns) -> None:
+        """Add one block."""
+        if not len(key):
             return
-        self._blocks.append(keyed)
-        self._waiting += len(keyed[0])
-        if self._waiting > max(2 * self._settled, 1 << 20):
-            self._merge()
+        self._blocks.append((key, sums))
+        self._waiting += len(key)
+        if self._waiting > max(2 * self._settled, _FEW):
+            self._settle()
 
     def result(self) -> Keyed:
-        """Return the distinct keys in order and their sums."""
-        self._merge()
-        if not self._blocks:
-            return np.empty(0, np.int64), {name: np.empty(0, np.int64) for name in self._names}
-        return self._blocks[0]
+        """Return the distinct keys in order and their sums, and let go of them."""
+        self._settle()
+        blocks, self._blocks = self._blocks, []
+        return blocks[0] if blocks else (np.empty(0, np.int64), {name: np.empty(0, np.int64) for name in self._names})
 
-    def _merge(self) -> None:
-        if len(self._blocks) > 1:
-            self._blocks = [merged(self._blocks, self._names)]
-        self._settled = len(self._blocks[0][0]) if self._blocks else 0
-        self._waiting = 0
-
-
-def merged(blocks: list[Keyed], names: tuple[str, ...]) -> Keyed:
-    """Return several blocks added up as one; side by side where their keys do not overlap."""
-    blocks = sorted((block for block in blocks if len(block[0])), key=lambda block: int(block[0][0]))
-    if len(blocks) == 1:
-        return blocks[0]
-    key = np.concatenate([block[0] for block in blocks]) if blocks else np.empty(0, np.int64)
-    sums = {name: np.concatenate([block[1][name] for block in blocks] or [key]) for name in names}
-    apart = all(one[0][-1] < two[0][0] for one, two in zip(blocks, blocks[1:], strict=False))
-    return (key, sums) if apart else add_up(key, sums)
+    def _settle(self) -> None:
+        if self._waiting:
+            key = np.concatenate([key for key, _ in self._blocks])
+            sums = {name: np.concatenate([sums.pop(name) for _, sums in self._blocks]) for name in self._names}
+            self._blocks = [add_up(key, sums)]
+            self._settled, self._waiting = len(self._blocks[0][0]), 0

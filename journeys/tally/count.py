@@ -3,14 +3,17 @@
 from __future__ import annotations
 
 import os
+from contextlib import nullcontext
+from functools import partial
+from importlib.util import find_spec
 from typing import Any
 
 import numpy as np
 
 from journeys import checks
 from journeys.errors import LogError
-from journeys.intake.look import first_look
-from journeys.intake.read import LogSource, open_log
+from journeys.intake.look import Look, first_look
+from journeys.intake.read import open_log
 from journeys.intake.rules import JourneyRules
 from journeys.kernels.bins import DAY_US
 from journeys.tally.counter import OutOfOrderError
@@ -19,9 +22,18 @@ from journeys.tally.passes import Pass, Span
 from journeys.tally.tally import Tally
 
 MOST_WORKERS = 8
+# Rows from which on starting the compiled loops costs less than they save.
+WORTH_COMPILING = 2_000_000
 
 
-def count_log(source: Any, rules: JourneyRules, *, n_workers: int | None = None, progress: bool = False) -> Tally:
+def count_log(
+    source: Any,
+    rules: JourneyRules,
+    *,
+    n_workers: int | None = None,
+    compiled: bool | None = None,
+    progress: bool = False,
+) -> Tally:
     """Return the tally of an event log, in one streamed pass.
 
     Parameters
@@ -33,6 +45,9 @@ def count_log(source: Any, rules: JourneyRules, *, n_workers: int | None = None,
         What a journey is.
     n_workers : int, optional
         Threads that count; default one per processor, at most 8. The tally does not depend on it.
+    compiled : bool, optional
+        Count in compiled loops (extra ``fast``), with the same tally; default: where numba is installed and the
+        log has at least two million rows.
     progress : bool
         Show a progress bar on stderr.
 
@@ -48,6 +63,8 @@ def count_log(source: Any, rules: JourneyRules, *, n_workers: int | None = None,
         outside the rest (a wrong clock).
     ValueError
         If `n_workers` is not a whole number from 1.
+    ImportError
+        If `compiled` is True and numba is not installed.
 
     Notes
     -----
@@ -69,14 +86,29 @@ def count_log(source: Any, rules: JourneyRules, *, n_workers: int | None = None,
     """
     workers = min(os.cpu_count() or 1, MOST_WORKERS) if n_workers is None else checks.whole(n_workers, "n_workers", 1)
     log = open_log(source, rules.columns, text=(rules.event,))
-    if log.one_shot:
-        with log.spooled() as kept:
-            return _count(kept, rules, workers, progress)
-    return _count(log, rules, workers, progress)
+    with log.spooled() if log.one_shot else nullcontext(log) as kept:
+        look = first_look(kept, rules)
+        pass_ = partial(
+            Pass, kept, rules, look, _span(look, rules),
+            n_workers=workers, compiled=_compiles(compiled, look.n_rows), progress=progress,
+        )  # fmt: skip
+        try:
+            return pass_().in_order()
+        except OutOfOrderError:
+            return pass_().sorted_by_customer()
 
 
-def _count(log: LogSource, rules: JourneyRules, n_workers: int, progress: bool) -> Tally:
-    look = first_look(log, rules)
+def _compiles(wanted: bool | None, n_rows: int) -> bool:
+    """Tell whether to count in compiled loops."""
+    installed = find_spec("numba") is not None
+    if wanted and not installed:
+        msg = "compiled=True needs numba; wanted the extra: pip install 'journeys[fast]'"
+        raise ImportError(msg)
+    return installed and n_rows >= WORTH_COMPILING if wanted is None else wanted
+
+
+def _span(look: Look, rules: JourneyRules) -> Span:
+    """Return from when to when the log is read."""
     log_start = look.first_us if rules.log_start_us is None else rules.log_start_us
     as_of = look.last_us if rules.as_of_us is None else rules.as_of_us
     if log_start > as_of:
@@ -88,8 +120,4 @@ def _count(log: LogSource, rules: JourneyRules, n_workers: int, progress: bool) 
     if look.whole_days and (as_of - log_start) // DAY_US >= MOST_BINS:
         msg = f"the log spans more than {MOST_BINS:,} days; set log_start and as_of to the span of the log"
         raise LogError(msg)
-    span = Span(log_start, as_of, look.whole_days)
-    try:
-        return Pass(log, rules, look, span, n_workers, progress).in_order()
-    except OutOfOrderError:
-        return Pass(log, rules, look, span, n_workers, progress).sorted_by_customer()
+    return Span(log_start, as_of, look.whole_days)

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
 from dataclasses import dataclass
 from typing import Any
 
@@ -10,11 +9,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from journeys.intake.findings import Findings
-from journeys.intake.identity import bucket_of_major
+from journeys.intake.identity import FIRST_KEYS, bucket_of_major
+from journeys.intake.rows import Rows
 from journeys.kernels.arrays import BoolArray, IntArray
 from journeys.kernels.counting import Block, close_log, count_rows
-from journeys.kernels.records import FIRST_OUTCOME, Carried, Reading
-from journeys.tally.order import Ordered
+from journeys.kernels.records import FIRST_OUTCOME, Carried, Counted, Reading
+from journeys.tally.order import CHUNK_ROWS, Ordered, chunks
 from journeys.tally.sums import Sums
 
 Codes = NDArray[np.int32]
@@ -55,19 +55,27 @@ class Counter:
         Where everything is added.
     findings : Findings
         Where rows left out are counted.
+    compiled : bool
+        Count in a compiled loop, where the rules leave out no rows in the middle of stories.
     """
 
-    def __init__(self, reading: Reading, leave_out: LeaveOut, sums: Sums, findings: Findings) -> None:
+    def __init__(
+        self, reading: Reading, leave_out: LeaveOut, sums: Sums, findings: Findings, *, compiled: bool = False
+    ) -> None:
         self._reading, self._leave_out, self._sums, self._findings = reading, leave_out, sums, findings
-        self._carried = Carried.none()
+        self._compiled = compiled and not leave_out.after_outcome
+        self._carried = self._blank(0)
+        self._n_states = 0
 
-    def add(self, chunks: Iterable[Ordered], code_of_event: Codes, n_states: int) -> None:
+    def add(self, rows: Rows, order: IntArray, code_of_event: Codes, n_states: int) -> None:
         """Count a block of rows.
 
         Parameters
         ----------
-        chunks : iterable of Ordered
-            The rows by customer and in order, each customer in one chunk, customers in increasing order.
+        rows : Rows
+            In input order.
+        order : ndarray of int64
+            Positions of the rows to count, by customer and input row.
         code_of_event : ndarray of int32
             Code of each raw event.
         n_states : int
@@ -78,11 +86,14 @@ class Counter:
         OutOfOrderError
             If a row is older than, or as old as, a row of that customer in an earlier block.
         """
-        fresh = [self._add(rows, code_of_event, n_states) for rows in chunks if len(rows)]
-        self._carried.insert(Carried.joined(fresh))
+        self._n_states = n_states
+        add = self._add_compiled if self._compiled and rows.ended is None else self._add
+        added = [add(rows, part, code_of_event) for part in chunks(rows.key, order)]
+        self._carried.insert([fresh for fresh in added if fresh is not None])
 
-    def _add(self, rows: Ordered, code_of_event: Codes, n_states: int) -> Carried:
+    def _add(self, block: Rows, order: IntArray, code_of_event: Codes) -> Carried | None:
         """Count one chunk; put its customers' new records in their place and return those of new customers."""
+        rows = Ordered.of(block, order)
         start = rows.starts()
         at = self._carried.find(rows.key[start])
         held = at >= 0
@@ -96,11 +107,11 @@ class Counter:
             keep = self._before_end(kept, code, start, at)
             kept, code = kept.take(keep), code[keep]
         if not len(kept):
-            return Carried.none()
+            return None
         if kept is not rows:
             start = kept.starts()
             at = self._carried.find(kept.key[start])
-        latest = self._count(kept, code, start, at, n_states)
+        latest = self._count(kept, code, start, at)
         if self._leave_out.after_outcome:
             # The latest row of any kind, even one left out, is what later rows must not precede.
             last = np.searchsorted(rows.key, latest.key, side="right") - 1
@@ -108,30 +119,52 @@ class Counter:
             latest.time = np.where(latest.story_over, rows.time[last], latest.time)
         return self._carried.put(latest, at)
 
+    def _add_compiled(self, block: Rows, order: IntArray, code_of_event: Codes) -> Carried | None:
+        """Do the same in one compiled loop over the rows."""
+        from journeys.kernels.compiled import count_in_order
+
+        rows = Ordered.of(block, order)
+        rows = self._without_duplicates(rows, rows.starts())
+        cells = self._sums.moves.cells(len(rows), self._n_states)
+        code = code_of_event[rows.event]
+        found = count_in_order(rows.key, rows.time, code, self._carried, FIRST_KEYS, self._reading, cells)
+        if found is None:
+            raise OutOfOrderError
+        counted, fresh, gained = found
+        self._sums.moves.gained(gained)
+        self._note(counted, block, rows.order)
+        return fresh
+
     def close(self) -> None:
         """Close the log: running journeys lapse or stay open, customers are added up."""
-        bucket = bucket_of_major(self._carried.key).astype(np.uint8)
-        moves, ends, unsure_visits, carried = close_log(self._carried, bucket, self._reading)
-        self._sums.add_moves(moves, 0)
-        self._sums.add_ends(ends)
-        self._findings.add("first_visit_of_unsure_journey", self._leave_out.time, unsure_visits)
-        self._sums.add_customers(carried, bucket)
-        self._carried = Carried.none()
+        for begin in range(0, len(self._carried.key), CHUNK_ROWS):
+            carried = self._carried.take(slice(begin, begin + CHUNK_ROWS))
+            bucket = bucket_of_major(carried.key).astype(np.uint8)
+            moves, ends, unsure_visits = close_log(carried, bucket, self._reading)
+            self._sums.add_moves(moves, self._n_states)
+            self._sums.add_ends(ends)
+            self._findings.add("first_visit_of_unsure_journey", self._leave_out.time, unsure_visits)
+            self._sums.add_customers(carried, bucket)
+        self._carried = self._blank(0)
 
-    def _count(self, rows: Ordered, code: Codes, start: IntArray, at: IntArray, n_states: int) -> Carried:
+    def _count(self, rows: Ordered, code: Codes, start: IntArray, at: IntArray) -> Carried:
         """Add up a block and return its customers' new records."""
         key, held = rows.key[start], at >= 0
         # The records of customers never seen are never looked at: any will do.
-        prior = self._carried.take(np.maximum(at, 0)) if held.any() else _blank(len(start))
+        prior = self._carried.take(np.maximum(at, 0)) if held.any() else self._blank(len(start))
         block = Block(rows.time, code, start, key, bucket_of_major(key).astype(np.uint8), prior, held)
         counted, latest = count_rows(block, self._reading)
-        self._sums.add(counted, n_states)
-        names, event = self._findings, self._leave_out.event
-        names.add("repeated_outcome", event, rows.numbers(counted.repeated))
-        names.add("outcome_without_states", event, rows.numbers(counted.bare))
-        names.add("began_after_outcome", event, rows.numbers(counted.again))
-        names.add("first_visit_of_unsure_journey", self._leave_out.time, counted.unsure_visits)
+        self._note(counted, rows.rows, rows.order)
         return latest
+
+    def _note(self, counted: Counted, rows: Rows, order: IntArray) -> None:
+        """Add up what was counted, and what was found on the way."""
+        self._sums.add(counted, self._n_states)
+        names, event = self._findings, self._leave_out.event
+        names.add("repeated_outcome", event, rows.row[order[counted.repeated]])
+        names.add("outcome_without_states", event, rows.row[order[counted.bare]])
+        names.add("began_after_outcome", event, rows.row[order[counted.again]])
+        names.add("first_visit_of_unsure_journey", self._leave_out.time, counted.unsure_visits)
 
     def _without_duplicates(self, rows: Ordered, start: IntArray) -> Ordered:
         """Count exact duplicates and ties; drop the duplicates if the rules say so."""
@@ -184,15 +217,14 @@ class Counter:
         self._carried.time[at[over]] = rows.time[last[over]]
         new = before_log & ~seen
         if new.any():
-            records = _blank(int(new.sum()))
+            records = self._blank(int(new.sum()))
             records.key, records.time = rows.key[last[new]], rows.time[last[new]]
             records.story_over[:] = True
-            self._carried.insert(records)
+            self._carried.insert([records])
         return ~(left_before | left_after)
 
-
-def _blank(n: int) -> Carried:
-    """Return `n` records of customers who have no journey."""
-    records = Carried.zeros(n)
-    records.code[:] = records.first_code[:] = FIRST_OUTCOME
-    return records
+    def _blank(self, n: int) -> Carried:
+        """Return `n` records of customers who have no journey."""
+        records = Carried.zeros(n, visits=self._reading.merge_repeats)
+        records.code[:] = records.first_code[:] = FIRST_OUTCOME
+        return records

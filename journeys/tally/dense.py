@@ -6,8 +6,8 @@ import numpy as np
 
 from journeys.kernels.arrays import IntArray
 from journeys.kernels.bins import DAY_US, bin_of
-from journeys.kernels.records import Moves
-from journeys.tally.accumulate import Accumulator, Keyed, add_up, limbs, product_limbs
+from journeys.kernels.records import Cells, Moves
+from journeys.tally.accumulate import Accumulator, Keyed, limbs, product_limbs
 from journeys.tally.keys import pack
 
 # Cells of all workers together: 12 bytes each.
@@ -45,10 +45,11 @@ class MoveSums:
         self._sparse = Accumulator(("n", "dwell_high", "dwell_low"))
         bins = np.arange(self._n_bins)
         self._lower = bins * DAY_US if edges is None else np.concatenate([[0], edges])[: self._n_bins]
+        self._widest = 0.0 if edges is None or not self._n_bins else float((edges[: self._n_bins] - self._lower).max())
 
     def add(self, moves: Moves, n_states: int) -> None:
         """Add moves; `n_states` states are known by now."""
-        if moves.busy is not None:
+        if moves.busy is not None and moves.busy.any():
             # Few customers have so many events that their moves need cells of their own.
             self._add_sparse(_part(moves, moves.busy), 1)
             moves = _part(moves, ~moves.busy)
@@ -71,12 +72,30 @@ class MoveSums:
         cell += moves.next_code
         cell *= self._n_bins
         cell += bins
-        if self._count + len(cell) > _MOST_COUNT or self._dwell + total > _MOST_DWELL:
-            self._empty_cells()
-        self._count += len(cell)
+        self._make_room(len(cell), total)
         self._dwell += total
         np.add.at(self._n, cell, np.uint32(1))
         np.add.at(self._rest, cell, rest)
+
+    def cells(self, n_rows: int, n_states: int) -> Cells:
+        """Return the table of cells with room for the moves of `n_rows` rows, for a compiled loop to add to."""
+        if n_states > self._n_states:
+            self._grow(n_states)
+        if len(self._n):
+            # A row makes at most one move and one lapse.
+            self._make_room(2 * n_rows, 2.0 * n_rows * self._widest)
+        upper = self._lower if self._edges is None else self._edges[: self._n_bins]
+        return Cells(self._n, self._rest, self._lower, upper, self._buckets.start, self._n_states)
+
+    def gained(self, dwell: float) -> None:
+        """Note by how much a compiled loop has raised the cells' dwell."""
+        self._dwell += dwell
+
+    def _make_room(self, count: int, dwell: float) -> None:
+        """Empty the cells before they could overflow."""
+        if self._count + count > _MOST_COUNT or self._dwell + dwell > _MOST_DWELL:
+            self._empty_cells()
+        self._count += count
 
     def result(self) -> Keyed:
         """Return the distinct keys in order and their sums."""
@@ -106,14 +125,14 @@ class MoveSums:
             bucket = above // self._n_states + self._buckets.start
             n = self._n[at].astype(np.int64)
             sums = product_limbs(n, self._lower[bins], self._rest[at], "dwell")
-            self._sparse.add((pack(bucket, state, next_code, bins), {"n": n, **sums}))
+            self._sparse.add(pack(bucket, state, next_code, bins), {"n": n, **sums})
         self._n[:] = 0
         self._rest[:] = 0
         self._count, self._dwell = 0, 0.0
 
     def _add_sparse(self, moves: Moves, busy: int) -> None:
         key = pack(moves.bucket, moves.state, moves.next_code, bin_of(moves.dwell, self._edges), busy)
-        self._sparse.add(add_up(key, {"n": np.ones(len(key), np.int64), **limbs(moves.dwell, "dwell")}))
+        self._sparse.add(key, {"n": np.ones(len(key), np.int64), **limbs(moves.dwell, "dwell")})
 
 
 def _part(moves: Moves, mask: np.ndarray) -> Moves:

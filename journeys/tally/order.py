@@ -52,37 +52,6 @@ class Ordered:
             key, time = rows.key[order], rows.time[order]
         return cls(rows, order, key, time, rows.event[order])
 
-    @classmethod
-    def chunks(cls, rows: Rows, order: IntArray) -> Iterator[Ordered]:
-        """Give rows in order piece by piece, no customer cut in two, each piece small enough for the processor's cache.
-
-        Parameters
-        ----------
-        rows : Rows
-            In input order.
-        order : ndarray of int64
-            Positions in `rows`, by customer and input row.
-
-        Yields
-        ------
-        Ordered
-        """
-
-        def key_at(place: int) -> int:
-            return int(rows.key[order[place]])
-
-        places, begin = range(len(order)), 0
-        while begin < len(order):
-            end = len(order)
-            if end - begin > CHUNK_ROWS:
-                # Up to the customer that the chunk would end in, or past it where that is its only one.
-                key = key_at(begin + CHUNK_ROWS)
-                end = bisect_left(places, key, begin, key=key_at)
-                if end == begin:
-                    end = bisect_right(places, key, begin, key=key_at)
-            yield cls.of(rows, order[begin:end])
-            begin = end
-
     def __len__(self) -> int:
         """Return the number of rows."""
         return len(self.order)
@@ -100,6 +69,37 @@ class Ordered:
     def numbers(self, at: IntArray | BoolArray) -> IntArray:
         """Return the input row numbers of rows of the view."""
         return self.rows.row[self.order[at]]
+
+
+def chunks(key: NDArray[np.uint64], order: IntArray) -> Iterator[IntArray]:
+    """Cut an order by customer into pieces, no customer in two, each small enough for the processor's cache.
+
+    Parameters
+    ----------
+    key : ndarray of uint64
+        Customers in input order.
+    order : ndarray of int64
+        Positions in `key`, by customer.
+
+    Yields
+    ------
+    ndarray of int64
+    """
+
+    def key_at(place: int) -> int:
+        return int(key[order[place]])
+
+    places, begin = range(len(order)), 0
+    while begin < len(order):
+        end = len(order)
+        if end - begin > CHUNK_ROWS:
+            # Up to the customer that the chunk would end in, or past it where that is its only one.
+            last = key_at(begin + CHUNK_ROWS)
+            end = bisect_left(places, last, begin, key=key_at)
+            if end == begin:
+                end = bisect_right(places, last, begin, key=key_at)
+        yield order[begin:end]
+        begin = end
 
 
 def by_customer(key: NDArray[np.uint64]) -> IntArray:

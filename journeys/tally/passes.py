@@ -20,15 +20,15 @@ from journeys.intake.rules import JourneyRules
 from journeys.kernels.arrays import IntArray
 from journeys.kernels.bins import dwell_edges, elapsed_edges
 from journeys.kernels.records import Reading
-from journeys.tally.accumulate import Columns, Keyed, merged
+from journeys.tally.accumulate import Columns, Keyed
 from journeys.tally.blocks import cut_between_ties
 from journeys.tally.codes import StateCodes
 from journeys.tally.counter import Counter, LeaveOut
 from journeys.tally.dense import MoveSums
-from journeys.tally.order import Ordered, by_customer
+from journeys.tally.order import by_customer
 from journeys.tally.spill import BUCKETS_PER_PART, N_PARTS, Spill
 from journeys.tally.sums import Sums
-from journeys.tally.tally import KEYS, N_BUCKETS, NARROW, SUMS, Tally, join_key, split_key
+from journeys.tally.tally import KEYS, N_BUCKETS, NARROW, Tally, join_key, split_key
 
 T = TypeVar("T")
 
@@ -55,8 +55,10 @@ class _Block:
 class _Worker:
     """Counts the customers of some neighbouring buckets."""
 
-    def __init__(self, parts: range, reading: Reading, leave_out: LeaveOut, span: Span, rules: JourneyRules) -> None:
-        self.parts = parts
+    def __init__(
+        self, parts: range, reading: Reading, leave_out: LeaveOut, span: Span, rules: JourneyRules, *, compiled: bool
+    ) -> None:
+        self.parts, self._compiled = parts, compiled
         self.findings = Findings()
         self._reading, self._leave_out = reading, leave_out
         buckets = range(parts.start * BUCKETS_PER_PART, parts.stop * BUCKETS_PER_PART)
@@ -69,23 +71,28 @@ class _Worker:
 
     def add(self, block: _Block, part: slice) -> None:
         """Count one part of a block in order."""
-        self._counter.add(Ordered.chunks(block.rows, block.order[part]), block.code_of_event, block.n_states)
+        self._counter.add(block.rows, block.order[part], block.code_of_event, block.n_states)
 
-    def close(self) -> dict[str, Keyed]:
-        """Close the log and return the tables."""
+    def close(self, code: IntArray) -> dict[str, Columns]:
+        """Close the log and return the tables, codes replaced by `code`."""
         self._counter.close()
-        return self.sums.result()
+        return self._tables(code)
 
-    def add_parts(self, spill: Spill, code_of_event: NDArray[np.int32], n_states: int) -> dict[str, Keyed]:
+    def add_parts(
+        self, spill: Spill, code_of_event: NDArray[np.int32], n_states: int, code: IntArray
+    ) -> dict[str, Columns]:
         """Count the parts of a spilled log that are this worker's, one after another, and return the tables."""
         for rows in spill.parts(self.parts.start, self.parts.stop):
             counter = self._new_counter()
-            counter.add(Ordered.chunks(rows, by_customer(rows.key)), code_of_event, n_states)
+            counter.add(rows, by_customer(rows.key), code_of_event, n_states)
             counter.close()
-        return self.sums.result()
+        return self._tables(code)
+
+    def _tables(self, code: IntArray) -> dict[str, Columns]:
+        return {name: _labelled(name, self.sums.result(name), code) for name in KEYS}
 
     def _new_counter(self) -> Counter:
-        return Counter(self._reading, self._leave_out, self.sums, self.findings)
+        return Counter(self._reading, self._leave_out, self.sums, self.findings, compiled=self._compiled)
 
 
 class Pass:
@@ -103,12 +110,22 @@ class Pass:
         From when to when the log is read.
     n_workers : int
         Threads that count.
+    compiled : bool
+        Count in compiled loops.
     progress : bool
         Show a progress bar.
     """
 
     def __init__(
-        self, log: LogSource, rules: JourneyRules, look: Look, span: Span, n_workers: int, progress: bool
+        self,
+        log: LogSource,
+        rules: JourneyRules,
+        look: Look,
+        span: Span,
+        *,
+        n_workers: int,
+        compiled: bool,
+        progress: bool,
     ) -> None:
         self._log, self._rules, self._look, self._span, self._progress = log, rules, look, span, progress
         reading = Reading(
@@ -121,7 +138,7 @@ class Pass:
         leave_out = LeaveOut(rules.time, rules.event, rules.duplicates == "drop", rules.after_outcome == "stop")
         cuts = [part * N_PARTS // n_workers for part in range(n_workers + 1)]
         self._workers = [
-            _Worker(range(first, last), reading, leave_out, span, rules)
+            _Worker(range(first, last), reading, leave_out, span, rules, compiled=compiled)
             for first, last in zip(cuts, cuts[1:], strict=False)
         ]
 
@@ -136,7 +153,8 @@ class Pass:
                 wait(jobs)
                 for job in jobs:
                     job.result()
-            tables = list(pool.map(_Worker.close, self._workers))
+            code = self._label_positions()
+            tables = [job.result() for job in [pool.submit(worker.close, code) for worker in self._workers]]
         return self._tally(tables)
 
     def sorted_by_customer(self) -> Tally:
@@ -146,7 +164,8 @@ class Pass:
                 spill.add(rows)
             code_of_event = self._codes.of_events(self._normaliser.targets)
             n_states = len(self._codes.states)
-            jobs = [pool.submit(w.add_parts, spill, code_of_event, n_states) for w in self._workers]
+            known = (code_of_event, n_states, self._label_positions())
+            jobs = [pool.submit(worker.add_parts, spill, *known) for worker in self._workers]
             tables = [job.result() for job in jobs]
         return self._tally(tables)
 
@@ -163,28 +182,31 @@ class Pass:
             code_of_event = self._codes.of_events(self._normaliser.targets)
             yield _Block(rows, by_customer(rows.key), code_of_event, len(self._codes.states))
 
-    def _tally(self, parts: list[dict[str, Keyed]]) -> Tally:
-        findings = sum((worker.findings for worker in self._workers), self._normaliser.findings)
-        findings.add("later_than_now", self._rules.time, self._look.n_later_than_now)
+    def _label_positions(self) -> IntArray:
+        """Return where each code's name stands among the labels of the tally, its states in alphabetical order."""
         states = sorted(self._codes.states)
         fixed = len(self._codes.names) - len(states)
         place = {name: fixed + i for i, name in enumerate(states)}
-        code = np.array([*range(fixed), *(place[name] for name in self._codes.states)])
-        tables = {name: _labelled(name, [part[name] for part in parts], code) for name in KEYS}
+        return np.array([*range(fixed), *(place[name] for name in self._codes.states)])
+
+    def _tally(self, parts: list[dict[str, Columns]]) -> Tally:
+        findings = sum((worker.findings for worker in self._workers), self._normaliser.findings)
+        findings.add("later_than_now", self._rules.time, self._look.n_later_than_now)
+        tables = {name: _side_by_side([part.pop(name) for part in parts]) for name in KEYS}
         customers = {"bucket": np.arange(N_BUCKETS)}
         for name in self._workers[0].sums.customers:
             # Each bucket is one worker's, so the others hold zeros.
             customers[name] = np.sum([worker.sums.customers[name] for worker in self._workers], axis=0)
         return Tally(
-            rules=self._rules, states=tuple(states), log_start_us=self._span.log_start_us,
+            rules=self._rules, states=tuple(sorted(self._codes.states)), log_start_us=self._span.log_start_us,
             as_of_us=self._span.as_of_us, whole_days=self._span.whole_days, n_rows=self._normaliser.n_rows,
             customers=customers, record=findings, **tables,
         )  # fmt: skip
 
 
-def _labelled(name: str, parts: list[Keyed], code: IntArray) -> Columns:
-    """Join the workers' tables, their codes replaced by positions among the sorted labels."""
-    table = split_key(name, *merged(parts, SUMS[name]))
+def _labelled(name: str, keyed: Keyed, code: IntArray) -> Columns:
+    """Take the keys of a table apart, codes replaced by the positions of their names among the labels."""
+    table = split_key(name, *keyed)
     if (code[1:] > code[:-1]).all():
         return table
     for column in ("state", "next", "outcome"):
@@ -192,6 +214,11 @@ def _labelled(name: str, parts: list[Keyed], code: IntArray) -> Columns:
             table[column] = code[table[column]].astype(NARROW[column])
     order = np.argsort(join_key(name, table))
     return {column: values[order] for column, values in table.items()}
+
+
+def _side_by_side(parts: list[Columns]) -> Columns:
+    """Join tables of neighbouring buckets, letting go of each column as soon as it is copied."""
+    return {column: np.concatenate([part.pop(column) for part in parts]) for column in list(parts[0])}
 
 
 def ahead(items: Iterator[T]) -> Iterator[T]:

@@ -6,6 +6,7 @@ import tempfile
 from collections.abc import Iterator
 from pathlib import Path
 from types import TracebackType
+from typing import BinaryIO
 
 import numpy as np
 
@@ -24,11 +25,13 @@ class Spill:
 
     def __init__(self) -> None:
         self._folder = tempfile.TemporaryDirectory(prefix="journeys-")
-        self._files = [(Path(self._folder.name) / f"part-{part}").open("wb") for part in range(N_PARTS)]
+        self._files: dict[int, BinaryIO] = {}
         self._has_sequence = self._has_ended = False
 
     def add(self, rows: Rows) -> None:
         """Write a block of rows to the parts its customers belong to."""
+        if not len(rows):
+            return
         self._has_sequence, self._has_ended = rows.sequence is not None, rows.ended is not None
         part = bucket_of_major(rows.key) // BUCKETS_PER_PART
         order = np.argsort(part, kind="stable")
@@ -37,26 +40,24 @@ class Spill:
             column = getattr(rows, name)
             if column is not None:
                 record[name] = column[order]
-        ends = np.searchsorted(part[order], np.arange(N_PARTS), side="right")
-        begin = 0
-        for handle, end in zip(self._files, ends, strict=True):
-            if end > begin:
-                record[begin:end].tofile(handle)
-            begin = end
+        present, begin = np.unique(part[order], return_index=True)
+        for number, piece in zip(present.tolist(), np.split(record, begin[1:]), strict=True):
+            if number not in self._files:
+                self._files[number] = (Path(self._folder.name) / f"part-{number}").open("wb")
+            piece.tofile(self._files[number])
 
     def parts(self, first: int, last: int) -> Iterator[Rows]:
         """Give the rows of the parts from `first` up to `last`, all rows of a customer in one part."""
-        for handle in self._files[first:last]:
+        for number in sorted(self._files.keys() & set(range(first, last))):
+            handle = self._files[number]
             handle.close()
             record = np.fromfile(handle.name, _RECORD)
             Path(handle.name).unlink()
-            if len(record):
-                columns = {name: record[name].copy() for name in ("key", "time", "event", "row")}
-                yield Rows(
-                    **columns,
-                    sequence=record["sequence"].copy() if self._has_sequence else None,
-                    ended=record["ended"].copy() if self._has_ended else None,
-                )
+            columns = {name: record[name].copy() for name in ("key", "time", "event", "row")}
+            sequence = record["sequence"].copy() if self._has_sequence else None
+            ended = record["ended"].copy() if self._has_ended else None
+            del record
+            yield Rows(**columns, sequence=sequence, ended=ended)
 
     def __enter__(self) -> Spill:
         """Start."""
@@ -66,6 +67,6 @@ class Spill:
         self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
     ) -> None:
         """Remove the temporary files."""
-        for handle in self._files:
+        for handle in self._files.values():
             handle.close()
         self._folder.cleanup()

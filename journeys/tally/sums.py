@@ -9,7 +9,7 @@ import numpy as np
 from journeys.kernels.arrays import IntArray
 from journeys.kernels.bins import bin_of
 from journeys.kernels.records import Carried, Counted, Ends, Entries, Moves
-from journeys.tally.accumulate import Accumulator, Keyed, add_up, add_up_counts, limbs
+from journeys.tally.accumulate import Accumulator, Keyed, limbs
 from journeys.tally.dense import MoveSums
 from journeys.tally.keys import pack
 from journeys.tally.tally import CUSTOMER_SUMS, N_BUCKETS, SUMS
@@ -27,7 +27,7 @@ class Sums:
     """
 
     def __init__(self, elapsed_edges: IntArray | None, moves: MoveSums) -> None:
-        self._elapsed_edges, self._moves = elapsed_edges, moves
+        self._elapsed_edges, self.moves = elapsed_edges, moves
         self._entries, self._journeys = Accumulator(SUMS["entries"]), Accumulator(SUMS["journeys"])
         self.customers = {name: np.zeros(N_BUCKETS, np.int64) for name in (*CUSTOMER_SUMS, "largest_events")}
 
@@ -41,7 +41,7 @@ class Sums:
 
     def add_moves(self, moves: Moves, n_states: int) -> None:
         """Add moves under bucket, state, next, dwell bin and busy."""
-        self._moves.add(moves, n_states)
+        self.moves.add(moves, n_states)
 
     def add_ends(self, ends: Ends) -> None:
         """Add journeys under bucket, entry state, outcome, elapsed bin and sure."""
@@ -49,7 +49,7 @@ class Sums:
         key = pack(ends.bucket, ends.state, ends.outcome, bins, ends.sure)
         steps = ends.steps.astype(np.int64)
         sums = {"n": np.ones(len(key), np.int64), "steps": steps, "steps_squared": steps**2}
-        self._journeys.add(add_up(key, {**sums, **limbs(ends.elapsed, "elapsed")}))
+        self._journeys.add(key, {**sums, **limbs(ends.elapsed, "elapsed")})
 
     def add_customers(self, carried: Carried, bucket: np.ndarray[Any, Any]) -> None:
         """Add one record per customer, at the end of the log."""
@@ -59,13 +59,12 @@ class Sums:
             np.add.at(self.customers[name], bucket, values)
         np.maximum.at(self.customers["largest_events"], bucket, carried.n_events[seen])
 
-    def result(self) -> dict[str, Keyed]:
-        """Return each table's distinct keys in order and their sums."""
-        return {
-            "moves": self._moves.result(),
-            "entries": self._entries.result(),
-            "journeys": self._journeys.result(),
-        }
+    def result(self, name: str) -> Keyed:
+        """Return the distinct keys of a table in order and their sums, and let go of it."""
+        if name == "moves":
+            return self.moves.result()
+        return {"entries": self._entries, "journeys": self._journeys}[name].result()
 
     def _add_entries(self, entries: Entries) -> None:
-        self._entries.add(add_up_counts(pack(entries.bucket, entries.state, flag=entries.sure)))
+        key, n = np.unique(pack(entries.bucket, entries.state, flag=entries.sure), return_counts=True)
+        self._entries.add(key, {"n": n.astype(np.int64, copy=False)})

@@ -7,8 +7,11 @@ from __future__ import annotations
 
 import os
 from collections.abc import Callable
+from dataclasses import dataclass
 from functools import cache
+from importlib.util import find_spec
 from typing import Any
+from unittest.mock import patch
 
 import numpy as np
 import pandas as pd
@@ -19,14 +22,15 @@ from hypothesis import strategies as st
 from random_logs import RandomLog, logs, random_log
 from slow_rules import SlowTally, read_log
 
-from journeys.intake import identity
+from journeys.intake import batches, identity
 from journeys.intake.rules import JourneyRules
 from journeys.kernels.bins import dwell_edges, elapsed_edges
-from journeys.tally import count_log
+from journeys.tally import count_log, order
 
 N_LOGS = int(os.environ.get("JOURNEYS_SLOW_LOGS", "1500"))
 N_SHARES = 6
 
+HAS_NUMBA = find_spec("numba") is not None
 Table = dict[Any, tuple[int, ...]]
 
 FINDING_CODES = (
@@ -92,10 +96,33 @@ def keyed(table: pd.DataFrame, keys: list[str], sums: list[str]) -> Table:
     return result
 
 
-def compare(log: RandomLog, chunk: int) -> None:
+@dataclass(frozen=True)
+class How:
+    """The way a log is counted, which must not matter: batches of so many rows, chunks, workers, compiled loops."""
+
+    batch: int = 0
+    chunk: int = 1 << 16
+    n_workers: int = 2
+    compiled: bool = False
+
+
+WAYS = st.builds(How, st.integers(0, 7), st.integers(1, 9), st.integers(1, 4), st.sampled_from([False, HAS_NUMBA]))
+
+
+def drawn_way(rng: np.random.Generator) -> How:
+    """Return a way of counting."""
+    batch, chunk, n_workers = (int(rng.integers(low, high)) for low, high in ((0, 8), (1, 10), (1, 5)))
+    return How(batch, chunk, n_workers, HAS_NUMBA and bool(rng.integers(2)))
+
+
+def compare(log: RandomLog, how: How) -> None:
     """Hold every table and every finding of the package against the slow reading."""
     slow = slow_tally(log)
-    tally = count_log(source_of(log, chunk), JourneyRules(**log.rules))
+    # Batches stay as small as they are given, and so do the pieces that are counted.
+    with patch.object(batches, "_FEW_ROWS", 1), patch.object(order, "CHUNK_ROWS", how.chunk):
+        tally = count_log(
+            source_of(log, how.batch), JourneyRules(**log.rules), n_workers=how.n_workers, compiled=how.compiled
+        )
     moves = keyed(tally.table("moves"), ["bucket", "state", "next", "bin", "busy"], ["n", "dwell"])
     assert moves == slow.moves
     entries = keyed(tally.table("entries"), ["bucket", "state", "sure"], ["n"])
@@ -119,11 +146,11 @@ def test_seeded_random_logs(share: int) -> None:
     for seed in range(share, N_LOGS, N_SHARES):
         rng = np.random.default_rng([20240927, seed])
         log = random_log(rng)
-        chunk = int(rng.integers(0, 8))
+        how = drawn_way(rng)
         try:
-            compare(log, chunk)
+            compare(log, how)
         except AssertionError as fault:
-            pytest.fail(f"seed {seed}, chunk {chunk}, rules {log.rules}, rows {log.rows}\n{fault}")
+            pytest.fail(f"seed {seed}, {how}, rules {log.rules}, rows {log.rows}\n{fault}")
 
 
 def test_busy_customers() -> None:
@@ -131,7 +158,7 @@ def test_busy_customers() -> None:
     for seed in range(8):
         log = random_log(np.random.default_rng([77, seed]), n_rows=3_500)
         n_busy += any(busy for *_, busy in slow_tally(log).moves)
-        compare(log, 0 if seed % 2 else 170)
+        compare(log, How(0 if seed % 2 else 170, 50, 2, HAS_NUMBA and seed % 4 > 1))
     assert n_busy >= 4
 
 
@@ -140,6 +167,6 @@ def test_busy_customers() -> None:
     deadline=None,
     suppress_health_check=[HealthCheck.too_slow, HealthCheck.data_too_large],
 )
-@given(log=logs(), chunk=st.integers(0, 7))
-def test_drawn_logs(log: RandomLog, chunk: int) -> None:
-    compare(log, chunk)
+@given(log=logs(), how=WAYS)
+def test_drawn_logs(log: RandomLog, how: How) -> None:
+    compare(log, how)

@@ -1,0 +1,54 @@
+"""The benchmark of the tally runs, and everyone gives the same answers: duckdb, polars, pandas and ours."""
+
+from __future__ import annotations
+
+import json
+import subprocess
+import sys
+from pathlib import Path
+
+import pytest
+
+BENCH = Path(__file__).resolve().parent / "bench_tally.py"
+PEERS = ("duckdb bare", "duckdb table", "duckdb enum", "polars bare", "polars ordered", "pandas bare", "pyarrow read")
+
+
+def bench(folder: Path, kind: str, *options: str) -> subprocess.CompletedProcess[str]:
+    sizes = ("--rows", "50000", "--customers", "4000", "--repeats", "1", "--ids", kind, "--folder", str(folder))
+    return subprocess.run([sys.executable, str(BENCH), *sizes, *options], capture_output=True, text=True, timeout=300)
+
+
+@pytest.mark.parametrize(
+    ("kind", "options"),
+    [("integer", ("--growth", "20000", "60000", "--imports", "1")), ("text", ("--growth", "--imports", "0"))],
+)
+def test_the_table_prints_and_answers_agree(tmp_path: Path, kind: str, options: tuple[str, ...]):
+    for engine in ("duckdb", "polars"):
+        pytest.importorskip(engine, reason=f"optional engine missing: {engine}")
+    figures = tmp_path / "figures.json"
+    done = bench(tmp_path, kind, *options, "--json", str(figures))
+    assert done.returncode == 0, done.stdout + done.stderr
+    assert "| what | wanted | measured | reached |" in done.stdout
+    assert done.stdout.count("| agree |") == 3
+    assert "DIFFER" not in done.stdout
+    assert "failed:" not in done.stdout
+    told = json.loads(figures.read_text(encoding="utf-8"))
+    costs = {cost["process"]: cost for cost in told["costs"]}
+    assert {"journeys tally", *PEERS} <= set(costs)
+    assert all(0 < cost["peak_mib"] < 10_000 and cost["seconds"] > 0 for cost in told["costs"])
+    measured = {what: (wanted, reached) for what, wanted, _, reached in told["rows"]}
+    for peer in ("duckdb bare", "duckdb table", "polars bare", "pandas bare"):
+        wanted, reached = measured[f"{kind} ids, 0.05 M rows: speed against {peer}"]
+        assert wanted.startswith("≥")
+        assert reached in ("yes", "no")
+    assert sum("growth" in what for what in measured) == (2 if kind == "integer" else 0)
+    assert sum("import" in what for what in measured) == (2 if kind == "integer" else 0)
+
+
+def test_an_answer_that_differs_is_told(tmp_path: Path):
+    """A log whose rows of one customer share a moment has no one order, so that answers may differ, and here do."""
+    pytest.importorskip("duckdb", reason="optional engine missing: duckdb")
+    from figures import Figures, report
+
+    found = Figures(answers=[("one", True), ("other", False)])
+    assert "| other | DIFFER |" in report({}, found)
