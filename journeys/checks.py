@@ -9,10 +9,12 @@ import datetime as dt
 import re
 from collections.abc import Sequence
 from fractions import Fraction
-from typing import TypeVar
+from typing import TYPE_CHECKING, TypeVar
 
 import numpy as np
-import pandas as pd
+
+if TYPE_CHECKING:
+    import pandas as pd
 
 Duration = str | dt.timedelta | np.timedelta64
 Instant = str | dt.date | np.datetime64
@@ -232,7 +234,8 @@ def instant_us(value: Instant, name: str) -> int:
     0
     """
     wanted = 'wanted an instant such as "2025-06-30" or "2025-06-30T12:00:00Z" (no zone: UTC)'
-    if not isinstance(value, str | dt.date | np.datetime64) or pd.isna(value):
+    # Of all dates only the missing ones of pandas and numpy differ from themselves.
+    if not isinstance(value, str | dt.date | np.datetime64) or value != value:
         raise TypeError(f"{name}: got {value!r}; {wanted}")
     try:
         if isinstance(value, str):
@@ -243,7 +246,7 @@ def instant_us(value: Instant, name: str) -> int:
             moment = value
     except ValueError:
         raise ValueError(f"{name}: got {value!r}; {wanted}") from None
-    if isinstance(moment, pd.Timestamp):
+    if hasattr(moment, "to_pydatetime"):  # a pandas.Timestamp
         moment = moment.to_pydatetime(warn=False)
     if not isinstance(moment, dt.datetime):
         moment = dt.datetime.combine(moment, dt.time())
@@ -301,6 +304,8 @@ def _text_us(text: str, name: str) -> Fraction:
 
 def _read_timedelta(value: str | np.timedelta64, name: str) -> pd.Timedelta:
     """Let `pandas.Timedelta` read it, or give our own message."""
+    import pandas as pd
+
     try:
         delta = pd.Timedelta(value)
     except (ValueError, OverflowError, TypeError):

@@ -5,14 +5,16 @@ from __future__ import annotations
 import textwrap
 from collections.abc import Collection, Mapping, Sequence
 from dataclasses import dataclass, field, fields
-from typing import ClassVar
+from typing import TYPE_CHECKING, ClassVar
 
 import numpy as np
-import pandas as pd
 
 from journeys import checks
 from journeys.kernels.arrays import BoolArray, FloatArray
 from journeys.kernels.intervals import clopper_pearson, log_interval, logit_interval
+
+if TYPE_CHECKING:
+    import pandas as pd
 
 # How an interval is made from an estimate and its standard error.
 LOGIT, LOG, CELL, KNOWN = "logit", "log", "cell", "known"
@@ -158,9 +160,11 @@ class Result:
 
     def summary(self) -> str:
         """Return the answer as a plain text table; numbers to four digits."""
+        from pandas.api.types import is_numeric_dtype
+
         frame = self.to_frame().drop(columns="confidence_level")
         rows = [[_cell(value) for value in row] for row in frame.to_numpy(dtype=object)]
-        numbers = [i for i, name in enumerate(frame.columns) if pd.api.types.is_numeric_dtype(frame[name])]
+        numbers = [i for i, name in enumerate(frame.columns) if is_numeric_dtype(frame[name])]
         table = text_table([[str(name) for name in frame.columns], *rows], right=numbers, width=0)
         return f"{self.title}, intervals at {100 * self.confidence_level:g} %\n{table}"
 

@@ -10,12 +10,16 @@ import sys
 from collections.abc import Iterator
 from pathlib import Path
 
+import pyarrow as pa
+import pyarrow.parquet as pq
 import pytest
+from pyarrow import csv
 
 import journeys
 from journeys.results import Result
 
 PACKAGE = Path(journeys.__file__).parent
+DEMO = PACKAGE.parent / "demo_data"
 STAGES = ("errors", "checks", "files", "kernels", "results", "intake", "tally", "models", "questions", "show",
           "nightly", "command")
 
@@ -114,9 +118,7 @@ def test_kernels_know_only_arrays() -> None:
     for module, path in MODULES.items():
         if module.startswith("kernels."):
             tops = {name.partition(".")[0] for name, _ in imports(path)}
-            # Compiled loops are an extra, imported where they are used.
-            extra = {"numba"} if module == "kernels.compiled" else set()
-            assert tops <= {*sys.stdlib_module_names, "journeys", "numpy", "scipy", *extra}, module
+            assert tops <= {*sys.stdlib_module_names, "journeys", "numpy", "scipy"}, module
 
 
 def test_public_names() -> None:
@@ -140,14 +142,57 @@ def test_public_names_are_explained_with_an_example(name: str) -> None:
             assert re.search(line, text, re.MULTILINE), f"{name} says nothing of {parameter}"
 
 
+def loaded_after(code: str) -> set[str]:
+    """Return the modules that a fresh Python has imported once the code has run."""
+    code += "; import sys; print(*sys.modules)"
+    ran = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True, cwd=PACKAGE.parent)
+    return set(ran.stdout.splitlines()[-1].split())
+
+
 def test_import_is_light() -> None:
     """What few calls need is imported by those; no extra, and no option, comes with the package."""
-    code = "import sys, journeys; print(*sorted({name for name in sys.modules}))"
-    ran = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True, cwd=PACKAGE.parent)
-    loaded = set(ran.stdout.split())
+    loaded = loaded_after("import journeys")
     assert "journeys.models.fit" in loaded
     extras = {"statsmodels", "matplotlib", "jinja2", "polars", "duckdb", "numba", "tqdm", "scipy.stats", "scipy.sparse"}
-    assert not loaded & {*extras, "scipy.linalg", "journeys.show", "journeys.command"}
+    assert not loaded & {*extras, "pandas", "scipy.linalg", "journeys.show", "journeys.command"}
+
+
+@pytest.mark.parametrize("kind", ["parquet", "csv", "arrow", "folder"])
+def test_counting_files_is_light(kind: str, tmp_path: Path) -> None:
+    """The nightly count never waits for pandas, whichever files the log is kept in."""
+    rules = tmp_path / "rules.toml"
+    text = (DEMO / "rules.toml").read_text(encoding="utf-8")
+    if kind == "folder":
+        assert "{ staff = [true] }" in text
+        text = text.replace("{ staff = [true] }", '{ staff = [true], part = ["third"] }')
+    rules.write_text(text, encoding="utf-8")
+    words = ["tally", str(kept_as(kind, tmp_path)), "--rules", str(rules), "--out", str(tmp_path / "tally.parquet")]
+    loaded = loaded_after(f"from journeys.command.main import main; assert main({words!r}) == 0")
+    assert "journeys.tally.store" in loaded
+    assert not loaded & {"pandas", "scipy.stats", "journeys.show"}
+    counted = journeys.Tally.load(tmp_path / "tally.parquet")
+    expected = journeys.tally(DEMO / "club_log.parquet", journeys.JourneyRules.from_toml(DEMO / "rules.toml"))
+    for name in ("moves", "entries", "journeys", "customers"):
+        assert counted.table(name).equals(expected.table(name))
+
+
+def kept_as(kind: str, folder: Path) -> Path:
+    """Return the demo log in a kind of file, or in two folders that give a column by their names."""
+    log = DEMO / "club_log.parquet"
+    if kind == "parquet":
+        return log
+    table = pq.read_table(log)
+    path = folder / f"log.{kind}"
+    if kind == "csv":
+        csv.write_csv(table, path)
+    elif kind == "arrow":
+        with pa.ipc.new_file(str(path), table.schema) as writer:
+            writer.write_table(table)
+    else:
+        for part, rows in (("first", table.slice(0, 20_000)), ("second", table.slice(20_000))):
+            (path / f"part={part}").mkdir(parents=True)
+            pq.write_table(rows, path / f"part={part}" / "rows.parquet")
+    return path
 
 
 @pytest.mark.parametrize("module", MODULES)

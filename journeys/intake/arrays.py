@@ -1,7 +1,12 @@
-"""Arrow columns brought to a few plain forms: one text type, dictionaries taken apart, numpy arrays out."""
+"""Arrow columns brought to a few plain forms: one text type, dictionaries taken apart, numpy arrays out.
+
+Between Arrow and numpy the buffers themselves are handed over: `pyarrow.array`, `pyarrow.scalar` and `to_numpy`
+import pandas when first called, which takes longer than counting a small log.
+"""
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import Any
 
 import numpy as np
@@ -95,10 +100,55 @@ def numbers(array: pa.Array, missing: Any = 0) -> NDArray[Any]:
     -------
     ndarray, shape (n_rows,)
     """
+    values = _from_buffer(array)
     if array.null_count:
-        array = pc.fill_null(array, pa.scalar(missing, array.type))
-    values: NDArray[Any] = array.to_numpy(zero_copy_only=False)
+        values = values.copy()
+        values[_nulls(array)] = missing
     return values
+
+
+def from_numpy(values: NDArray[Any], kind: pa.DataType) -> pa.Array:
+    """Array of whole numbers, or of the times they count, without nulls.
+
+    Parameters
+    ----------
+    values : ndarray of int or bool, shape (n_rows,)
+    kind : pyarrow.DataType
+        int64, or a type of times or dates.
+
+    Returns
+    -------
+    pyarrow.Array
+
+    Examples
+    --------
+    >>> from_numpy(np.array([1]), pa.date32()).to_pylist()
+    [datetime.date(1970, 1, 2)]
+    """
+    width = np.int32 if kind.bit_width == 32 else np.int64
+    return pa.Array.from_buffers(kind, len(values), [None, pa.py_buffer(np.ascontiguousarray(values, dtype=width))])
+
+
+def from_texts(texts: Sequence[str | None]) -> pa.StringArray:
+    """Array of a few texts, null where there is none.
+
+    Parameters
+    ----------
+    texts : sequence of str or None
+
+    Returns
+    -------
+    pyarrow.StringArray
+
+    Examples
+    --------
+    >>> from_texts(["visit", None, "é"]).to_pylist()
+    ['visit', None, 'é']
+    """
+    parts = [(text or "").encode() for text in texts]
+    ends = np.cumsum([0, *(len(part) for part in parts)]).astype(np.int32)
+    there = np.packbits(np.array([text is not None for text in texts], dtype=bool), bitorder="little")
+    return pa.StringArray.from_buffers(len(parts), *(pa.py_buffer(one) for one in (ends, b"".join(parts), there)))
 
 
 def is_missing(array: pa.Array) -> NDArray[np.bool_] | None:
@@ -178,5 +228,17 @@ def _nulls(array: pa.Array) -> NDArray[np.bool_]:
     """Mark nulls."""
     if array.null_count == 0:
         return np.zeros(len(array), dtype=bool)
-    mask: NDArray[np.bool_] = array.is_null().to_numpy(zero_copy_only=False)
-    return mask.copy()
+    return _from_buffer(array.is_null())
+
+
+def _from_buffer(array: pa.Array) -> NDArray[Any]:
+    """Values of an array of fixed-width type; whatever stands there, where it has a null."""
+    n, kind, buffer = len(array), np.dtype(array.type.to_pandas_dtype()), array.buffers()[1]
+    if not n:
+        return np.empty(0, dtype=kind)
+    if kind != np.bool_:
+        return np.frombuffer(buffer, dtype=kind, count=n, offset=array.offset * kind.itemsize)
+    # Eight to a byte, the first one lowest.
+    start, skip = divmod(array.offset, 8)
+    packed = np.frombuffer(buffer, dtype=np.uint8, count=(skip + n + 7) // 8, offset=start)
+    return np.unpackbits(packed, count=skip + n, bitorder="little")[skip:].view(np.bool_)

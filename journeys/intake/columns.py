@@ -10,7 +10,7 @@ import pyarrow.compute as pc
 from numpy.typing import NDArray
 
 from journeys.errors import LogError
-from journeys.intake.arrays import indices_of, is_missing, is_text, numbers, plain, whole_numbers
+from journeys.intake.arrays import from_texts, indices_of, is_missing, is_text, numbers, plain, whole_numbers
 
 
 def decoded(array: pa.Array) -> pa.Array:
@@ -76,9 +76,9 @@ def event_names(array: pa.Array, column: str) -> pa.DictionaryArray:
     wanted = "wanted names of events: text, or whole numbers; cast it to text"
     missing = is_missing(names)
     values = whole_numbers(names, column, wanted)
-    texts = [str(value) for value in values.tolist()]
-    mask = np.zeros(len(texts), dtype=bool) if missing is None else missing
-    return pa.DictionaryArray.from_arrays(array.indices, pa.array(texts, pa.string(), mask=mask))
+    absent = np.zeros(len(values), dtype=bool) if missing is None else missing
+    texts = [None if gone else str(value) for value, gone in zip(values.tolist(), absent.tolist(), strict=True)]
+    return pa.DictionaryArray.from_arrays(array.indices, from_texts(texts))
 
 
 def is_in(array: pa.Array, values: tuple[str | int | bool, ...], column: str) -> NDArray[np.bool_]:
@@ -114,17 +114,18 @@ def is_in(array: pa.Array, values: tuple[str | int | bool, ...], column: str) ->
         return _present(array) & inside[indices_of(array)]
     if pa.types.is_null(array.type):
         return np.zeros(len(array), dtype=bool)
-    given = pa.array(list(values))
-    if is_text(array.type) and is_text(given.type):
-        return numbers(pc.is_in(array, value_set=given.cast(array.type)))
-    both_flags = pa.types.is_boolean(array.type) and pa.types.is_boolean(given.type)
-    if both_flags or (_is_number(array.type) and pa.types.is_integer(given.type)):
+    given = pa.string() if isinstance(values[0], str) else pa.bool_() if isinstance(values[0], bool) else pa.int64()
+    if is_text(array.type) and is_text(given):
+        texts = from_texts([str(value) for value in values])
+        return numbers(pc.is_in(array, value_set=texts.cast(array.type)))
+    both_flags = pa.types.is_boolean(array.type) and pa.types.is_boolean(given)
+    if both_flags or (_is_number(array.type) and pa.types.is_integer(given)):
         if pa.types.is_decimal(array.type):
             array = array.cast(pa.float64())
         inside = np.isin(numbers(array, missing=False if both_flags else 0), list(values))
         return _present(array) & inside
     raise LogError(
-        f"exclude: column {column!r} is of type {array.type}, the values given are {given.type}; "
+        f"exclude: column {column!r} is of type {array.type}, the values given are {given}; "
         "write them as the column has them: text in quotes, numbers and true/false without"
     )
 

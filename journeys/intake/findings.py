@@ -4,11 +4,13 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
-import pandas as pd
 from numpy.typing import NDArray
+
+if TYPE_CHECKING:
+    import pandas as pd
 
 N_ROWS_SHOWN = 10
 
@@ -142,6 +144,8 @@ class Findings:
         pandas.DataFrame
             Columns code, column, n (rows), rows (the smallest row numbers, at most 10, from 0), message.
         """
+        import pandas as pd
+
         records = [(*key, count.n, list(count.rows), MESSAGES[key[0]]) for key, count in self._sorted()]
         frame = pd.DataFrame.from_records(records, columns=["code", "column", "n", "rows", "message"])
         return frame.astype({"code": str, "column": str, "n": "int64", "rows": object, "message": str})

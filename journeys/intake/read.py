@@ -4,11 +4,11 @@ from __future__ import annotations
 
 import itertools
 import os
+import sys
 from collections.abc import Iterable, Sequence
 from pathlib import Path
 from typing import Any
 
-import pandas as pd
 import pyarrow as pa
 
 from journeys.errors import LogError
@@ -52,6 +52,7 @@ def open_log(source: Any, columns: Sequence[str], *, text: Sequence[str] = ()) -
 
     Examples
     --------
+    >>> import pandas as pd
     >>> log = open_log(pd.DataFrame({"who": [1, 2], "what": ["visit", "visit"], "notes": ["", ""]}), ["who"])
     >>> log.describe(), [batch.to_pydict() for batch in log.batches(["who"])]
     ('pandas frame, 2 rows', [{'who': [1, 2]}])
@@ -70,13 +71,19 @@ def _source(source: Any, text: tuple[str, ...]) -> LogSource:
         return FileSource(find_files(source), text, Path(source).name)
     if _all_are(source, str | os.PathLike):
         return FileSource(find_files(source), text, Path(source[0]).name)
-    if isinstance(source, pd.DataFrame):
+    if _is_pandas_frame(source):
         return PandasSource(source)
     if isinstance(source, pa.RecordBatch):
         return TableSource(pa.Table.from_batches([source]), "Arrow record batch")
     if isinstance(source, pa.Table):
         return TableSource(source, "Arrow table")
     return _stream(source)
+
+
+def _is_pandas_frame(source: Any) -> bool:
+    """Return whether it is a pandas frame; where pandas was never imported, nothing is."""
+    pandas = sys.modules.get("pandas")
+    return pandas is not None and isinstance(source, pandas.DataFrame)
 
 
 def _stream(source: Any) -> LogSource:

@@ -6,8 +6,11 @@ from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
+import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
+
+from journeys.intake.arrays import from_numpy
 
 ROWS_AT_ONCE = 1 << 20
 
@@ -96,10 +99,12 @@ def column_ranges(paths: Sequence[Path], column: str) -> Ranges | None:
             if found is None or not found.has_null_count or (found.num_values and not found.has_min_max):
                 return None
             if found.num_values:
-                first.append(found.min)
-                last.append(found.max)
+                first.append(found.min_raw)
+                last.append(found.max_raw)
                 n.append(found.num_values)
-    return None if kind is None else Ranges(pa.array(first, kind), pa.array(last, kind), n, n_rows)
+    if kind is None:
+        return None
+    return Ranges(from_numpy(np.array(first, np.int64), kind), from_numpy(np.array(last, np.int64), kind), n, n_rows)
 
 
 def _tells_ranges(kind: pa.DataType) -> bool:

@@ -7,15 +7,19 @@ from abc import ABC, abstractmethod
 from collections.abc import Iterator, Sequence
 from contextlib import ExitStack, contextmanager
 from pathlib import Path
+from typing import TYPE_CHECKING
 
-import pandas as pd
 import pyarrow as pa
 import pyarrow.parquet as pq
 
 from journeys.errors import LogError
+from journeys.intake.arrays import from_texts
 from journeys.intake.batches import check_columns, resized
 from journeys.intake.read_files import LogFile, file_batches, file_schema, partition_types
 from journeys.intake.read_parquet import ROWS_AT_ONCE, Ranges, column_ranges
+
+if TYPE_CHECKING:
+    import pandas as pd
 
 
 class LogSource(ABC):
@@ -157,9 +161,8 @@ class FileSource(LogSource):
         """Batch with the columns that the file's folders give."""
         arrays = dict(zip(batch.schema.names, batch.columns, strict=True))
         for key, value in file.partition:
-            kind = self._partition[key]
-            typed = int(value) if value is not None and pa.types.is_int64(kind) else value
-            arrays[key] = pa.repeat(pa.scalar(typed, kind), batch.num_rows)
+            typed = from_texts([value]).cast(self._partition[key])
+            arrays[key] = pa.repeat(typed[0], batch.num_rows)
         return pa.RecordBatch.from_arrays(list(arrays.values()), names=list(arrays))
 
 

@@ -1,25 +1,63 @@
-"""The counting of rows in order as one compiled loop: the same answers as `counting`, for large logs.
+"""The counting of rows in order as one compiled loop: the same answers as `counting`, sooner.
 
-Imported only where numba is installed (extra `fast`) and the log is large enough to be worth the start.
+The loop is `_walk.c`, built where the package is installed with a C compiler at hand; without it `counting` is used.
 """
 
 from __future__ import annotations
 
-import math
+import ctypes
+from functools import cache
+from importlib.util import find_spec
 from typing import Any, TypeVar
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
 from journeys.kernels.arrays import IntArray
-from journeys.kernels.bins import DAY_US
-from journeys.kernels.records import FIRST_OUTCOME, LAPSED, Carried, Cells, Counted, Ends, Entries, Moves, Reading
+from journeys.kernels.bins import LONGEST_US
+from journeys.kernels.records import FIRST_OUTCOME, Carried, Cells, Counted, Ends, Entries, Moves, Reading
 
-_IN_ORDER, _OUT_OF_ORDER = 0, 1
+_OUT_OF_ORDER = 1
 _NO_SILENCE = -1
+# Floating-point numbers that agree in their leading 18 bits lie within 1/64 of an octave.
+_SUB_OCTAVE_SHIFT = 46
 
 T = TypeVar("T", Moves, Entries, Ends)
+
+_CARRIED = ("key", "time", "start", "visit", "code", "first", "steps", "events", "decided", "converted", "sure")
+# In the order of the struct in _walk.c. What is named in the second list is a number, all else the address of an array.
+_FIELDS = (
+    "n_rows", "key", "time", "code", "n_buckets", "first_keys",
+    "n_carried", *(f"c_{name}" for name in _CARRIED), *(f"f_{name}" for name in _CARRIED),
+    "m_bucket", "m_state", "m_next", "m_dwell", "m_busy",
+    "e_bucket", "e_state", "e_outcome", "e_sure", "e_steps", "e_elapsed",
+    "b_bucket", "b_state", "b_sure", "repeated", "bare", "again",
+    "cell_n", "cell_rest", "lower", "upper", "guess", "n_bins", "first_bucket", "n_states", "whole_days",
+    "first_state", "first_churned", "silence", "same_outcome", "merge", "log_start", "complete", "busy_after",
+    "n_moves", "n_ends", "n_begun", "n_fresh", "n_repeated", "n_bare", "n_again", "unsure_visits",
+)  # fmt: skip
+
+
+class _Walk(ctypes.Structure):
+    """What the loop works on, as _walk.c lays it out."""
+
+    _fields_ = [*((name, ctypes.c_int64) for name in _FIELDS), ("gained", ctypes.c_double)]
+
+
+@cache
+def _library() -> ctypes.CDLL | None:
+    found = find_spec("journeys.kernels._walk")
+    if found is None or found.origin is None:
+        return None
+    library = ctypes.CDLL(found.origin)
+    library.journeys_walk.argtypes = [ctypes.POINTER(_Walk)]
+    library.journeys_walk.restype = ctypes.c_int64
+    return library
+
+
+def is_built() -> bool:
+    """Tell whether the compiled loop is there."""
+    return _library() is not None
 
 
 def count_in_order(
@@ -57,37 +95,67 @@ def count_in_order(
 
     Or None if a row is not later than one of its customer that was counted before; `carried` is then spoilt.
     """
+    library = _library()
+    if library is None:
+        msg = "the compiled loop is not built; wanted a C compiler when the package was installed"
+        raise ImportError(msg)
     n = len(key)
     # A row makes at most a lapse and a move, and ends at most two journeys.
-    moves = Moves(np.empty(2 * n, np.uint8), _codes(2 * n), _codes(2 * n), _times(2 * n), np.empty(2 * n, np.bool_))
-    ends = Ends(
-        np.empty(2 * n, np.uint8), _codes(2 * n), _codes(2 * n), np.empty(2 * n, np.bool_), _times(2 * n), _times(2 * n)
-    )
-    begun = Entries(np.empty(n, np.uint8), _codes(n), np.empty(n, np.bool_))
-    repeated, bare, again = _times(n), _times(n), _times(n)
+    moves = Moves(_bytes(2 * n), _codes(2 * n), _codes(2 * n), _times(2 * n), _flags(2 * n))
+    ends = Ends(_bytes(2 * n), _codes(2 * n), _codes(2 * n), _flags(2 * n), _times(2 * n), _times(2 * n))
+    begun = Entries(_bytes(n), _codes(n), _flags(n))
+    marked = {"repeated": _times(n), "bare": _times(n), "again": _times(n)}
     fresh = Carried.zeros(n, visits=reading.merge_repeats)
-    status, n_moves, n_ends, n_begun, n_fresh, n_repeated, n_bare, n_again, unsure_visits, gained = _walk(
-        key, time, code, first_keys, _columns(carried), _columns(fresh),
-        (moves.bucket, moves.state, moves.next_code, moves.dwell, moves.busy),
-        (ends.bucket, ends.state, ends.outcome, ends.sure, ends.steps, ends.elapsed),
-        (begun.bucket, begun.state, begun.sure), (repeated, bare, again),
-        cells.n, cells.rest, cells.lower, cells.upper, cells.first_bucket, cells.n_states, *_bin_guess(cells),
-        reading.first_state, FIRST_OUTCOME + reading.n_converted,
-        _NO_SILENCE if reading.silence_us is None else reading.silence_us, reading.same_outcome_us,
-        reading.merge_repeats, reading.log_start_us, reading.complete_history, reading.busy_after,
+    guess = _bin_guess(cells.upper.tobytes())
+    arrays = {
+        "key": key, "time": time, "code": code, "first_keys": first_keys, **marked,
+        **_prefixed("c", carried), **_prefixed("f", fresh),
+        "m_bucket": moves.bucket, "m_state": moves.state, "m_next": moves.next_code, "m_dwell": moves.dwell,
+        "m_busy": moves.busy, "e_bucket": ends.bucket, "e_state": ends.state, "e_outcome": ends.outcome,
+        "e_sure": ends.sure, "e_steps": ends.steps, "e_elapsed": ends.elapsed, "b_bucket": begun.bucket,
+        "b_state": begun.state, "b_sure": begun.sure, "cell_n": cells.n, "cell_rest": cells.rest,
+        "lower": cells.lower, "upper": cells.upper, "guess": guess,
+    }  # fmt: skip
+    # Held until the loop is done: an array that had to be copied is in no other hands.
+    held = {name: np.ascontiguousarray(array) for name, array in arrays.items()}
+    walk = _Walk(
+        **{name: array.ctypes.data for name, array in held.items()},
+        n_rows=n, n_buckets=len(first_keys), n_carried=len(carried.key), n_bins=len(cells.upper) if len(cells.n) else 0,
+        first_bucket=cells.first_bucket, n_states=cells.n_states, whole_days=cells.whole_days,
+        first_state=reading.first_state, first_churned=FIRST_OUTCOME + reading.n_converted,
+        silence=_NO_SILENCE if reading.silence_us is None else reading.silence_us,
+        same_outcome=reading.same_outcome_us, merge=reading.merge_repeats, log_start=reading.log_start_us,
+        complete=reading.complete_history, busy_after=reading.busy_after,
     )  # fmt: skip
-    if status == _OUT_OF_ORDER:
+    if library.journeys_walk(ctypes.byref(walk)) == _OUT_OF_ORDER:
         return None
     counted = Counted(
-        moves=(_first(moves, n_moves),),
-        entries=_first(begun, n_begun),
-        ends=(_first(ends, n_ends),),
-        repeated=repeated[:n_repeated],
-        bare=bare[:n_bare],
-        again=again[:n_again],
-        unsure_visits=unsure_visits,
+        moves=(_first(moves, walk.n_moves),),
+        entries=_first(begun, walk.n_begun),
+        ends=(_first(ends, walk.n_ends),),
+        repeated=marked["repeated"][: walk.n_repeated],
+        bare=marked["bare"][: walk.n_bare],
+        again=marked["again"][: walk.n_again],
+        unsure_visits=walk.unsure_visits,
     )
-    return counted, fresh.take(np.arange(n_fresh)) if n_fresh else None, gained
+    return counted, fresh.take(np.arange(walk.n_fresh)) if walk.n_fresh else None, walk.gained
+
+
+def _prefixed(letter: str, records: Carried) -> dict[str, NDArray[Any]]:
+    columns = (
+        records.key, records.time, records.journey_start, records.visit_began, records.code, records.first_code,
+        records.steps, records.n_events, records.decided, records.converted, records.sure,
+    )  # fmt: skip
+    return {f"{letter}_{name}": column for name, column in zip(_CARRIED, columns, strict=True)}
+
+
+@cache
+def _bin_guess(upper: bytes) -> NDArray[np.int16]:
+    """Return, for the leading bits of a dwell, the lowest bin it can be in."""
+    edges = np.frombuffer(upper, np.int64)
+    last = int(np.array(float(LONGEST_US)).view(np.int64)) >> _SUB_OCTAVE_SHIFT
+    lowest = (np.arange(last + 1, dtype=np.int64) << _SUB_OCTAVE_SHIFT).view(np.float64)
+    return np.searchsorted(edges, np.ceil(lowest), side="left").astype(np.int16)
 
 
 def _first(records: T, n: int) -> T:
@@ -95,12 +163,12 @@ def _first(records: T, n: int) -> T:
     return type(records)(**{name: column[:n] for name, column in vars(records).items()})
 
 
-def _bin_guess(cells: Cells) -> tuple[float, float]:
-    """Return what tells the bin of a dwell to within a few: bins are whole days, or even in the logarithm."""
-    upper = cells.upper
-    if len(upper) < 2 or upper[0] == 0:
-        return 0.0, 0.0
-    return float(np.log(upper[0])), float((len(upper) - 1) / np.log(upper[-1] / upper[0]))
+def _bytes(n: int) -> NDArray[np.uint8]:
+    return np.empty(n, np.uint8)
+
+
+def _flags(n: int) -> NDArray[np.bool_]:
+    return np.empty(n, np.bool_)
 
 
 def _codes(n: int) -> NDArray[np.int32]:
@@ -109,139 +177,3 @@ def _codes(n: int) -> NDArray[np.int32]:
 
 def _times(n: int) -> IntArray:
     return np.empty(n, np.int64)
-
-
-def _columns(records: Carried) -> tuple[NDArray[Any], ...]:
-    """Return the columns in the order in which the loop takes them."""
-    visits = np.empty(0, np.int64) if records.visit_start is None else records.visit_start
-    return (
-        records.key, records.time, records.journey_start, visits, records.code, records.first_code, records.steps,
-        records.n_events, records.decided, records.converted, records.sure,
-    )  # fmt: skip
-
-
-@njit(nogil=True, cache=True)
-def _bin_of(dwell, lower, upper, log_of_first, bins_per_log):  # type: ignore[no-untyped-def]
-    """Return the bin of a dwell: the logarithm tells it to within a few, the edges settle it."""
-    if bins_per_log == 0.0:
-        place = dwell // DAY_US
-    else:
-        place = int((math.log(dwell) - log_of_first) * bins_per_log) if dwell > 0 else 0
-    place = min(max(place, 0), len(upper) - 1)
-    while place > 0 and dwell <= upper[place - 1]:
-        place -= 1
-    while place < len(upper) - 1 and dwell > upper[place]:
-        place += 1
-    return place
-
-
-@njit(nogil=True, cache=True)
-def _walk(  # type: ignore[no-untyped-def]
-    key, time, code, first_keys, carried, fresh, moves, ends, begun, marked,
-    cell_n, cell_rest, lower, upper, first_bucket, n_states, log_of_first, bins_per_log,
-    first_state, first_churned, silence, same, merge, log_start, complete, busy_after,
-):  # fmt: skip
-    """Walk over the rows; see `counting` for the same in array operations."""
-    c_key, c_time, c_start, c_visit, c_code, c_first, c_steps, c_events, c_decided, c_converted, c_sure = carried
-    f_key, f_time, f_start, f_visit, f_code, f_first, f_steps, f_events, f_decided, f_converted, f_sure = fresh
-    m_bucket, m_state, m_next, m_dwell, m_busy = moves
-    e_bucket, e_state, e_outcome, e_sure, e_steps, e_elapsed = ends
-    b_bucket, b_state, b_sure = begun
-    repeated, bare, again = marked
-    n_moves = n_ends = n_begun = n_fresh = n_repeated = n_bare = n_again = unsure_visits = 0
-    gained = 0.0
-    place = np.searchsorted(c_key, key[0])
-    bucket = np.searchsorted(first_keys, key[0], side="right") - 1
-    i = 0
-    while i < len(key):
-        who = key[i]
-        while bucket + 1 < len(first_keys) and who >= first_keys[bucket + 1]:
-            bucket += 1
-        while place < len(c_key) and c_key[place] < who:
-            place += 1
-        held = place < len(c_key) and c_key[place] == who
-        last, prev, started, visit, first, steps, events, sure = 0, 0, 0, 0, 0, 0, 0, False
-        if held:
-            if time[i] <= c_time[place]:
-                return _OUT_OF_ORDER, 0, 0, 0, 0, 0, 0, 0, 0, 0.0
-            last, prev, started = c_time[place], c_code[place], c_start[place]
-            first, steps, events, sure = c_first[place], c_steps[place], c_events[place], c_sure[place]
-            visit = c_visit[place] if merge else last
-        decided = won = 0
-        while i < len(key) and key[i] == who:
-            now, what = time[i], code[i]
-            events += 1
-            begins = False
-            if prev >= first_state:
-                lapses = silence >= 0 and now - last > silence
-                if lapses or not (merge and what == prev):
-                    if merge and steps == 1 and not sure:
-                        # Merged, the first visit of an unsure journey may have begun before the log.
-                        unsure_visits += 1
-                    else:
-                        to = LAPSED if lapses else what
-                        dwell = last + silence - visit if lapses else now - visit
-                        busy = events > busy_after
-                        if len(cell_n) > 0 and not busy:
-                            bin_ = _bin_of(dwell, lower, upper, log_of_first, bins_per_log)
-                            cell = (bucket - first_bucket) * n_states + prev - first_state
-                            cell = (cell * (first_state + n_states) + to) * len(upper) + bin_
-                            cell_n[cell] += np.uint32(1)
-                            cell_rest[cell] += dwell - lower[bin_]
-                            gained += dwell - lower[bin_]
-                        else:
-                            m_bucket[n_moves], m_state[n_moves], m_next[n_moves] = bucket, prev, to
-                            m_dwell[n_moves], m_busy[n_moves] = dwell, busy
-                            n_moves += 1
-                    if not lapses:
-                        steps += 1
-                        visit = now
-                if lapses:
-                    e_bucket[n_ends], e_state[n_ends], e_outcome[n_ends] = bucket, first, LAPSED
-                    e_sure[n_ends], e_steps[n_ends], e_elapsed[n_ends] = sure, steps + 1, last + silence - started
-                    n_ends += 1
-                    decided += 1
-                    begins = True
-            elif prev != 0 and what == prev and now - last <= same:
-                repeated[n_repeated] = i
-                n_repeated += 1
-                last = now
-                i += 1
-                continue
-            else:
-                begins = True
-                if prev != 0:
-                    again[n_again] = i
-                    n_again += 1
-            if begins:
-                sure = prev != 0 or complete or (silence >= 0 and now >= log_start + silence)
-                started, visit, first, steps = now, now, what, 1
-                b_bucket[n_begun], b_state[n_begun], b_sure[n_begun] = bucket, what, sure
-                n_begun += 1
-                if what < first_state:
-                    bare[n_bare] = i
-                    n_bare += 1
-            if what < first_state:
-                e_bucket[n_ends], e_state[n_ends], e_outcome[n_ends] = bucket, first, what
-                e_sure[n_ends], e_steps[n_ends], e_elapsed[n_ends] = sure, steps, now - started
-                n_ends += 1
-                decided += 1
-                if what < first_churned:
-                    won += 1
-            prev, last = what, now
-            i += 1
-        if held:
-            c_time[place], c_start[place], c_code[place], c_first[place] = last, started, prev, first
-            c_steps[place], c_events[place], c_sure[place] = steps, events, sure
-            c_decided[place] += decided
-            c_converted[place] += won
-            if merge:
-                c_visit[place] = visit
-        else:
-            f_key[n_fresh], f_time[n_fresh], f_start[n_fresh] = who, last, started
-            f_code[n_fresh], f_first[n_fresh], f_steps[n_fresh], f_events[n_fresh] = prev, first, steps, events
-            f_decided[n_fresh], f_converted[n_fresh], f_sure[n_fresh] = decided, won, sure
-            if merge:
-                f_visit[n_fresh] = visit
-            n_fresh += 1
-    return _IN_ORDER, n_moves, n_ends, n_begun, n_fresh, n_repeated, n_bare, n_again, unsure_visits, gained

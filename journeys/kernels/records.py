@@ -154,6 +154,8 @@ class Cells:
         Edges of the bins.
     first_bucket, n_states : int
         The bucket that comes first, and for how many states there is room.
+    whole_days : bool
+        Bin d holds the dwell of exactly d days.
     """
 
     n: NDArray[np.uint32]
@@ -162,6 +164,7 @@ class Cells:
     upper: Ints
     first_bucket: int
     n_states: int
+    whole_days: bool
 
 
 @dataclass(frozen=True)

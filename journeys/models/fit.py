@@ -10,7 +10,6 @@ from functools import cached_property
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
-import pandas as pd
 
 from journeys.errors import DeadEndWarning
 from journeys.kernels.arrays import BoolArray, FloatArray, IntArray
@@ -18,6 +17,8 @@ from journeys.kernels.graph import Classes, classify
 from journeys.models.stays import Nodes
 
 if TYPE_CHECKING:
+    import pandas as pd
+
     from journeys.questions.moves import MovesResult
     from journeys.tally.tally import Tally
 
@@ -93,6 +94,8 @@ class JourneyFit:
     @cached_property
     def matrix(self) -> pd.DataFrame:
         """The transition matrix: rows entry and the states, columns states and outcomes; rows sum to 1."""
+        import pandas as pd
+
         dense = np.zeros((self.nodes.n_rows, self.nodes.n_nodes))
         dense[self.move_state, self.move_target] = self.probability
         labels = self.nodes.labels

@@ -3,14 +3,16 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
-import pandas as pd
 
 from journeys.kernels.arrays import FloatArray
 from journeys.models.fit import JourneyFit, with_dead_ends
 from journeys.models.stays import Nodes
+
+if TYPE_CHECKING:
+    import pandas as pd
 
 # A row of probabilities written with a dozen decimals sums to 1 within this.
 ROW_SUM_TOLERANCE = 1e-9
@@ -79,6 +81,8 @@ def from_matrix(frame: pd.DataFrame, dwell: Any = None, entry: Any = None) -> Jo
 
 
 def _checked(frame: pd.DataFrame) -> tuple[tuple[str, ...], tuple[str, ...], FloatArray]:
+    import pandas as pd
+
     if not isinstance(frame, pd.DataFrame):
         msg = f"frame: got {type(frame).__name__}; wanted a pandas DataFrame of probabilities, one row a state"
         raise TypeError(msg)

@@ -5,10 +5,9 @@ from __future__ import annotations
 import warnings
 from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
-import pandas as pd
 
 from journeys.errors import JourneysWarning, LogError
 from journeys.intake.findings import UNREADABLE
@@ -18,6 +17,9 @@ from journeys.models.model import JourneyModel, refuse_without_outcome
 from journeys.results import text_table
 from journeys.tally.count import count_log
 from journeys.tally.tally import Tally
+
+if TYPE_CHECKING:
+    import pandas as pd
 
 GOOD, CARE, NO = "good", "with care", "no"
 # Row numbers told per finding, and characters per cell, in the text for people.
@@ -113,6 +115,8 @@ def audit(source: Any, rules: JourneyRules | None = None, *, progress: bool = Fa
     >>> audit(log, rules).carries_model
     True
     """
+    import pandas as pd
+
     if isinstance(source, Tally):
         tally = source
     elif rules is None:

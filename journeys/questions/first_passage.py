@@ -7,7 +7,6 @@ from dataclasses import dataclass
 from typing import ClassVar
 
 import numpy as np
-import pandas as pd
 
 from journeys import checks
 from journeys.kernels.absorption import Passage, passage
@@ -95,6 +94,8 @@ def first_passage(
     >>> frame.loc[frame.start_state == "basket", ["measure", "estimate"]].round(3).values.tolist()
     [['probability', 1.0], ['mean', 2.0], ['sd', 1.414], ['mean_unconditional', 2.0]]
     """
+    import pandas as pd
+
     checks.one_of(clock, ("steps", "time"), "clock")
     checks.one_of(unit, tuple(UNIT_DAYS), "unit")
     level = checks.confidence_level(confidence_level)

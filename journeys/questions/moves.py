@@ -6,7 +6,6 @@ from dataclasses import dataclass
 from typing import ClassVar
 
 import numpy as np
-import pandas as pd
 
 from journeys import checks
 from journeys.kernels.intervals import variance_from_buckets
@@ -63,6 +62,8 @@ def moves(fit: JourneyFit, *, confidence_level: float = 0.95) -> MovesResult:
     >>> moves(JourneyFit.from_matrix(chain)).to_frame()[["state", "next_state", "estimate"]].values.tolist()
     [['entry', 'basket', 1.0], ['entry', 'joined', 0.0], ['basket', 'basket', 0.5], ['basket', 'joined', 0.5]]
     """
+    import pandas as pd
+
     level = checks.confidence_level(confidence_level)
     nodes = fit.nodes
     if len(nodes.states) <= LIST_ALL_UP_TO:

@@ -6,7 +6,6 @@ from dataclasses import dataclass
 from typing import ClassVar
 
 import numpy as np
-import pandas as pd
 
 from journeys import checks
 from journeys.kernels.absorption import passage
@@ -61,6 +60,8 @@ def outcomes(fit: JourneyFit, *, confidence_level: float = 0.95) -> OutcomesResu
     >>> frame[["start_state", "outcome", "estimate"]].round(3).values.tolist()
     [['entry', 'joined', 0.6], ['entry', 'declined', 0.4], ['basket', 'joined', 0.6], ['basket', 'declined', 0.4]]
     """
+    import pandas as pd
+
     level = checks.confidence_level(confidence_level)
     nodes = fit.nodes
     if not nodes.outcomes:

@@ -4,9 +4,9 @@ from __future__ import annotations
 
 from collections.abc import Collection
 from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
-import pandas as pd
 
 from journeys import checks
 from journeys.errors import LogError
@@ -18,6 +18,9 @@ from journeys.questions.moves import MovesResult, moves
 from journeys.questions.outcomes import OutcomesResult, outcomes
 from journeys.questions.time_to_convert import IN_THE_END, SO_FAR, TimeToConvertResult, time_to_convert
 from journeys.tally.tally import Tally
+
+if TYPE_CHECKING:
+    import pandas as pd
 
 KEY_COLUMNS = ("section", "start_state", "state", "next_state", "outcome", "measure", "horizon", "basis")
 
@@ -84,6 +87,8 @@ class Overview:
         DataFrame
             Columns line, n, of, estimate, low, high, note.
         """
+        import pandas as pd
+
         plain = self.plain
         decided = plain.n_journeys - plain.n_undecided
         frame = self.conversion.to_frame()
@@ -158,6 +163,8 @@ class Overview:
             Columns section, the keys of all sections, estimate, std_error, low, high, confidence_level,
             counts, flag.
         """
+        import pandas as pd
+
         sections = {
             "time_to_convert": self.conversion,
             "outcomes": self.endings,
@@ -166,7 +173,7 @@ class Overview:
             "moves": self.matrix,
         }
         frames = [result.to_frame().assign(section=name) for name, result in sections.items()]
-        whole = pd.concat([self._counts(), *frames], ignore_index=True)
+        whole = pd.concat([pd.DataFrame(self._counts()), *frames], ignore_index=True)
         return whole[
             [
                 *(key for key in KEY_COLUMNS if key in whole),
@@ -174,7 +181,8 @@ class Overview:
             ]
         ]
 
-    def _counts(self) -> pd.DataFrame:
+    def _counts(self) -> dict[str, Any]:
+        """Return the columns that tell what was counted."""
         plain = self.plain
         counts = {
             "people": plain.n_people,
@@ -184,17 +192,16 @@ class Overview:
         }
         rows: list[tuple[str, str | None, int]] = [(name, None, n) for name, n in counts.items()]
         rows += [("ended", outcome, n) for outcome, n in plain.n_by_outcome.items()]
-        frame = pd.DataFrame(rows, columns=["measure", "outcome", "estimate"])
-        return frame.assign(
-            section="counts",
-            basis="log",
-            estimate=frame.estimate.astype(float),
-            flag="",
-            std_error=np.nan,
-            low=np.nan,
-            high=np.nan,
-            confidence_level=np.nan,
-        )
+        measures, ended, n = zip(*rows, strict=True)
+        return {
+            "measure": measures,
+            "outcome": ended,
+            "estimate": np.array(n, dtype=np.float64),
+            "section": "counts",
+            "basis": "log",
+            "flag": "",
+            **dict.fromkeys(("std_error", "low", "high", "confidence_level"), np.nan),
+        }
 
     def __repr__(self) -> str:
         """Return one line."""

@@ -7,7 +7,6 @@ from dataclasses import dataclass
 from typing import ClassVar
 
 import numpy as np
-import pandas as pd
 
 from journeys import checks
 from journeys.errors import LogError, RulesError
@@ -91,6 +90,8 @@ def time_to_convert(
     >>> answer.to_frame()[["measure", "horizon", "estimate"]].round(3).values.tolist()[:3]
     [['converted', 'so far', 0.333], ['converted', '7d', 0.333], ['converted', 'in the end', 0.333]]
     """
+    import pandas as pd
+
     level = checks.confidence_level(confidence_level)
     tally = fit.tally
     if tally is None:

@@ -2,13 +2,12 @@
 
 from __future__ import annotations
 
+import math
 import os
-from collections.abc import Hashable, Mapping
+from collections.abc import Collection, Hashable, Mapping, Sequence
 from importlib.metadata import version
 from pathlib import Path
-from typing import Any
-
-import pandas as pd
+from typing import TYPE_CHECKING, Any
 
 from journeys.checks import duration_us
 from journeys.files import written_together
@@ -27,6 +26,9 @@ from journeys.show.words import (
     share_with_interval,
 )
 from journeys.tally.tally import Tally
+
+if TYPE_CHECKING:
+    import pandas as pd
 
 # A matrix wider than this is no longer read as a table; it stands in the Parquet and CSV files.
 WIDEST_MATRIX = 12
@@ -178,6 +180,12 @@ def _rows(frame: pd.DataFrame, **keys: str) -> list[dict[Hashable, Any]]:
     return frame.to_dict("records")
 
 
+def _table(rows: Sequence[Sequence[str]], columns: list[str], ours: Collection[str] = ()) -> str:
+    import pandas as pd
+
+    return markdown_table(pd.DataFrame(rows, columns=columns), ours)
+
+
 def _share(row: Row, flag: str) -> str:
     return share_with_interval(row["estimate"], row["low"], row["high"], flag)
 
@@ -187,14 +195,14 @@ def _amount(row: Row) -> str:
 
 
 def _count(row: Row) -> str:
-    return "" if pd.isna(row["n"]) else f"{int(row['n']):,} of {int(row['of']):,}"
+    return "" if math.isnan(row["n"]) else f"{int(row['n']):,} of {int(row['of']):,}"
 
 
 def _reconciliation(overview: Overview) -> str:
     rows = [
         (row["line"], _count(row), _share(row, row["note"]), row["note"]) for row in _rows(overview.reconciliation())
     ]
-    return markdown_table(pd.DataFrame(rows, columns=["what", "journeys", "share", "why"]))
+    return _table(rows, ["what", "journeys", "share", "why"])
 
 
 def _level(overview: Overview) -> str:
@@ -215,7 +223,7 @@ def _horizon_rows(overview: Overview) -> list[tuple[str, str, str, str]]:
 
 
 def _horizons(overview: Overview) -> str:
-    return markdown_table(pd.DataFrame(_horizon_rows(overview), columns=["since entry", "converted", "basis", "note"]))
+    return _table(_horizon_rows(overview), ["since entry", "converted", "basis", "note"])
 
 
 def _time_lines(overview: Overview) -> list[str]:
@@ -240,8 +248,7 @@ def _endings(overview: Overview) -> str:
         rows.append((outcome_words(outcome, rules), *so_far, _share(row, row["flag"]), row["flag"]))
     rows.append((UNDECIDED, f"{plain.n_undecided:,}", percent(plain.n_undecided / plain.n_journeys), "", ""))
     rows.append(("all journeys", f"{plain.n_journeys:,}", percent(1.0), "", ""))
-    columns = ["outcome", "journeys so far", "share so far", "expected in the end", "note"]
-    return markdown_table(pd.DataFrame(rows, columns=columns))
+    return _table(rows, ["outcome", "journeys so far", "share so far", "expected in the end", "note"])
 
 
 def _by_state(overview: Overview) -> str:
@@ -253,8 +260,7 @@ def _by_state(overview: Overview) -> str:
         day = _rows(days, start_state=state, measure="mean")[0]
         notes = dict.fromkeys(part for row in (share, step, day) for part in _flags(row["flag"]))
         rows.append((state, _share(share, share["flag"]), _amount(step), _amount(day), "; ".join(notes)))
-    columns = ["from", "converts in the end", "mean steps, if so", "mean days, if so", "note"]
-    return markdown_table(pd.DataFrame(rows, columns=columns))
+    return _table(rows, ["from", "converts in the end", "mean steps, if so", "mean days, if so", "note"])
 
 
 def _matrix(overview: Overview) -> str:
@@ -267,9 +273,9 @@ def _matrix(overview: Overview) -> str:
     ]
     table = frame.pivot(index="state", columns="next_state", values="cell")
     table = table.reindex(index=list(nodes.labels[: nodes.n_rows]), columns=list(nodes.labels[1:])).fillna("")
-    table.columns = pd.Index([outcome_words(str(name), _tally(overview).rules) for name in table.columns])
+    names = [outcome_words(str(name), _tally(overview).rules) for name in table.columns]
     words = "Percent of moves out of each state, with intervals; · stands for never seen."
-    return f"{words}\n\n{markdown_table(table.reset_index(names='from'))}"
+    return f"{words}\n\n{markdown_table(table.set_axis(names, axis='columns').reset_index(names='from'))}"
 
 
 def _findings(tally: Tally) -> str:
@@ -277,9 +283,7 @@ def _findings(tally: Tally) -> str:
     if not found:
         return "Nothing was left out and nothing looked odd."
     rows = [(row["code"], row["column"], f"{row['n']:,}", row["message"]) for row in found]
-    return markdown_table(
-        pd.DataFrame(rows, columns=["finding", "column", "rows", "what it means"]), ("finding", "what it means")
-    )
+    return _table(rows, ["finding", "column", "rows", "what it means"], ("finding", "what it means"))
 
 
 def _beliefs(overview: Overview) -> str:

@@ -6,12 +6,15 @@ import csv
 import os
 import re
 from collections.abc import Collection
+from typing import TYPE_CHECKING
 
 import numpy as np
-import pandas as pd
 
 from journeys.files import written_whole
 from journeys.results import printable
+
+if TYPE_CHECKING:
+    import pandas as pd
 
 # What a spreadsheet takes for the beginning of a formula.
 # The wide forms stand for the narrow ones in some languages' spreadsheets.
@@ -31,12 +34,14 @@ def file_frame(frame: pd.DataFrame) -> pd.DataFrame:
     DataFrame
         A copy.
     """
+    from pandas.api.types import is_float_dtype, is_numeric_dtype
+
     out = frame.copy()
     for name in out.columns:
         column = out[name]
-        if pd.api.types.is_float_dtype(column):
+        if is_float_dtype(column):
             out[name] = column.where(np.isfinite(column))
-        elif not pd.api.types.is_numeric_dtype(column):
+        elif not is_numeric_dtype(column):
             out[name] = column.astype("object").where(column.notna(), "").astype(str)
     return out
 
@@ -49,13 +54,15 @@ def write_parquet(frame: pd.DataFrame, path: str | os.PathLike[str]) -> None:
 
 def write_csv(frame: pd.DataFrame, path: str | os.PathLike[str]) -> None:
     """Write a frame to a CSV file; text that a spreadsheet would run as a formula gets an apostrophe in front."""
+    from pandas.api.types import is_numeric_dtype
+
     out = file_frame(frame)
     for name in out.columns:
-        if not pd.api.types.is_numeric_dtype(out[name]):
+        if not is_numeric_dtype(out[name]):
             out[name] = out[name].map(cell_text)
     out = out.rename(columns=cell_text)
     # A bare carriage return would end the row for many readers, and not every writer puts it in quotes.
-    texts = [name for name in out.columns if not pd.api.types.is_numeric_dtype(out[name])]
+    texts = [name for name in out.columns if not is_numeric_dtype(out[name])]
     returns = any("\r" in cell for name in texts for cell in (name, *out[name].unique()))
     with written_whole(path) as part:
         out.to_csv(part, index=False, quoting=csv.QUOTE_NONNUMERIC if returns else csv.QUOTE_MINIMAL)
@@ -88,6 +95,7 @@ def markdown_table(frame: pd.DataFrame, ours: Collection[str] = ()) -> str:
 
     Examples
     --------
+    >>> import pandas as pd
     >>> print(markdown_table(pd.DataFrame({"state": ["a|b"], "n": ["3"]})))
     | state | n |
     |---|---|

@@ -8,12 +8,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from journeys.kernels.arrays import FloatArray, IntArray
+from journeys.tally.keys import bucket_in
 
 Columns = dict[str, NDArray[np.int64]]
 Keyed = tuple[IntArray, Columns]
 
 _LIMB = 32
-_FEW = 1 << 19
+_FEW = 1 << 14
+_BUCKETS_PER_PART = 4
 _LOW = (1 << _LIMB) - 1
 
 
@@ -67,32 +69,58 @@ def add_up(key: IntArray, sums: Columns) -> Keyed:
 
 
 class Accumulator:
-    """A growing table of sums: blocks wait in any order and are added up when they pile up."""
+    """A growing table of sums, in parts by bucket so that adding one up needs little room.
+
+    Parameters
+    ----------
+    names : tuple of str
+        What is summed.
+    """
+
+    def __init__(self, names: tuple[str, ...]) -> None:
+        self._names = names
+        self._parts: dict[int, _Part] = {}
+
+    def add(self, key: IntArray, sums: Columns) -> None:
+        """Add one block; quickest where the keys of a bucket stand together."""
+        if not len(key):
+            return
+        part = bucket_in(key) // _BUCKETS_PER_PART
+        begin = np.flatnonzero(np.diff(part, prepend=-1))
+        for number, first, last in zip(part[begin].tolist(), begin, [*begin[1:], len(key)], strict=True):
+            piece = slice(first, last)
+            # A copy, so that what waits does not keep the whole block in memory.
+            columns = {name: sums[name][piece].copy() for name in self._names}
+            self._parts.setdefault(number, _Part(self._names)).add(key[piece].copy(), columns)
+
+    def result(self) -> Keyed:
+        """Return the distinct keys in order and their sums, and let go of them."""
+        parts = [self._parts.pop(number).settled() for number in sorted(self._parts)]
+        key = np.concatenate([np.empty(0, np.int64), *(key for key, _ in parts)])
+        empty = np.empty(0, np.int64)
+        return key, {name: np.concatenate([empty, *(sums.pop(name) for _, sums in parts)]) for name in self._names}
+
+
+class _Part:
+    """The sums of a few buckets: blocks wait in any order and are added up when they pile up."""
 
     def __init__(self, names: tuple[str, ...]) -> None:
         self._names = names
         self._blocks: list[Keyed] = []
-        self._waiting = 0
-        self._settled = 0
+        self._waiting = self._n_settled = 0
 
     def add(self, key: IntArray, sums: Columns) -> None:
         """Add one block."""
-        if not len(key):
-            return
         self._blocks.append((key, sums))
         self._waiting += len(key)
-        if self._waiting > max(2 * self._settled, _FEW):
-            self._settle()
+        if self._waiting > max(2 * self._n_settled, _FEW):
+            self.settled()
 
-    def result(self) -> Keyed:
-        """Return the distinct keys in order and their sums, and let go of them."""
-        self._settle()
-        blocks, self._blocks = self._blocks, []
-        return blocks[0] if blocks else (np.empty(0, np.int64), {name: np.empty(0, np.int64) for name in self._names})
-
-    def _settle(self) -> None:
+    def settled(self) -> Keyed:
+        """Return the distinct keys in order and their sums."""
         if self._waiting:
             key = np.concatenate([key for key, _ in self._blocks])
             sums = {name: np.concatenate([sums.pop(name) for _, sums in self._blocks]) for name in self._names}
             self._blocks = [add_up(key, sums)]
-            self._settled, self._waiting = len(self._blocks[0][0]), 0
+            self._n_settled, self._waiting = len(self._blocks[0][0]), 0
+        return self._blocks[0]

@@ -5,7 +5,6 @@ from __future__ import annotations
 import os
 from contextlib import nullcontext
 from functools import partial
-from importlib.util import find_spec
 from typing import Any
 
 import numpy as np
@@ -16,14 +15,13 @@ from journeys.intake.look import Look, first_look
 from journeys.intake.read import open_log
 from journeys.intake.rules import JourneyRules
 from journeys.kernels.bins import DAY_US
+from journeys.kernels.compiled import is_built
 from journeys.tally.counter import OutOfOrderError
 from journeys.tally.keys import MOST_BINS
 from journeys.tally.passes import Pass, Span
 from journeys.tally.tally import Tally
 
 MOST_WORKERS = 8
-# Rows from which on starting the compiled loops costs less than they save.
-WORTH_COMPILING = 2_000_000
 
 
 def count_log(
@@ -46,8 +44,7 @@ def count_log(
     n_workers : int, optional
         Threads that count; default one per processor, at most 8. The tally does not depend on it.
     compiled : bool, optional
-        Count in compiled loops (extra ``fast``), with the same tally; default: where numba is installed and the
-        log has at least two million rows.
+        Count in a compiled loop, with the same tally; default: where it could be built.
     progress : bool
         Show a progress bar on stderr.
 
@@ -64,7 +61,7 @@ def count_log(
     ValueError
         If `n_workers` is not a whole number from 1.
     ImportError
-        If `compiled` is True and numba is not installed.
+        If `compiled` is True and the compiled loop is not built.
 
     Notes
     -----
@@ -90,7 +87,7 @@ def count_log(
         look = first_look(kept, rules)
         pass_ = partial(
             Pass, kept, rules, look, _span(look, rules),
-            n_workers=workers, compiled=_compiles(compiled, look.n_rows), progress=progress,
+            n_workers=workers, compiled=_compiles(compiled), progress=progress,
         )  # fmt: skip
         try:
             return pass_().in_order()
@@ -98,13 +95,12 @@ def count_log(
             return pass_().sorted_by_customer()
 
 
-def _compiles(wanted: bool | None, n_rows: int) -> bool:
-    """Tell whether to count in compiled loops."""
-    installed = find_spec("numba") is not None
-    if wanted and not installed:
-        msg = "compiled=True needs numba; wanted the extra: pip install 'journeys[fast]'"
+def _compiles(wanted: bool | None) -> bool:
+    """Tell whether to count in the compiled loop."""
+    if wanted and not is_built():
+        msg = "compiled=True: the compiled loop is not built; install the package again with a C compiler at hand"
         raise ImportError(msg)
-    return installed and n_rows >= WORTH_COMPILING if wanted is None else wanted
+    return is_built() if wanted is None else wanted
 
 
 def _span(look: Look, rules: JourneyRules) -> Span:

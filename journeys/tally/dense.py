@@ -85,7 +85,7 @@ class MoveSums:
             # A row makes at most one move and one lapse.
             self._make_room(2 * n_rows, 2.0 * n_rows * self._widest)
         upper = self._lower if self._edges is None else self._edges[: self._n_bins]
-        return Cells(self._n, self._rest, self._lower, upper, self._buckets.start, self._n_states)
+        return Cells(self._n, self._rest, self._lower, upper, self._buckets.start, self._n_states, self._edges is None)
 
     def gained(self, dwell: float) -> None:
         """Note by how much a compiled loop has raised the cells' dwell."""

@@ -29,11 +29,16 @@ def pack(bucket: Whole, first: Whole, second: Whole | int = 0, bins: Whole | int
     return key
 
 
+def bucket_in(key: Ints) -> Ints:
+    """Return the bucket of each packed key."""
+    return key >> (2 * _CODE_BITS + _BIN_BITS + 1)
+
+
 def unpack(key: Ints) -> tuple[Callable[[], Ints], ...]:
     """Return what takes a packed key apart: functions for bucket, two codes, bin and flag."""
     code = MOST_CODES - 1
     return (
-        lambda: key >> (2 * _CODE_BITS + _BIN_BITS + 1),
+        lambda: bucket_in(key),
         lambda: (key >> (_CODE_BITS + _BIN_BITS + 1)) & code,
         lambda: (key >> (_BIN_BITS + 1)) & code,
         lambda: (key >> 1) & (MOST_BINS - 1),

@@ -14,6 +14,7 @@ import pyarrow.parquet as pq
 
 from journeys.errors import JourneysError, StoreError
 from journeys.files import written_whole
+from journeys.intake.arrays import from_numpy, from_texts
 from journeys.intake.findings import Findings
 from journeys.intake.rules import JourneyRules
 from journeys.tally.tally import CUSTOMER_SUMS, KEYS, NARROW, SUMS, Tally
@@ -54,12 +55,11 @@ def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | 
     for name in _TABLES:
         held = getattr(tally, name)
         size = len(held["bucket"])
-        label = pa.DictionaryArray.from_arrays(pa.array(np.zeros(size, np.int8)), pa.array([name]))
         parts.append(
             pa.table(
-                {"table": label.cast(pa.string())}
+                {"table": pa.repeat(from_texts([name])[0], size)}
                 | {
-                    column: pa.array(held[column]).cast(pa.int64()) if column in held else pa.nulls(size, pa.int64())
+                    column: from_numpy(held[column], pa.int64()) if column in held else pa.nulls(size, pa.int64())
                     for column in every
                 }
             )

@@ -11,8 +11,8 @@ from hashlib import blake2b
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
-import pandas as pd
 
+from journeys.checks import instant_text
 from journeys.errors import JourneysError
 from journeys.intake.findings import Findings
 from journeys.intake.rules import JourneyRules
@@ -22,6 +22,8 @@ from journeys.tally.keys import pack, unpack
 
 if TYPE_CHECKING:
     from typing import Self
+
+    import pandas as pd
 
 N_BUCKETS = 200
 
@@ -129,12 +131,12 @@ class Tally:
     @property
     def as_of(self) -> pd.Timestamp:
         """The moment the log is read at."""
-        return pd.Timestamp(self.as_of_us, unit="us", tz="UTC")
+        return _timestamp(self.as_of_us)
 
     @property
     def log_start(self) -> pd.Timestamp:
         """The moment the log starts."""
-        return pd.Timestamp(self.log_start_us, unit="us", tz="UTC")
+        return _timestamp(self.log_start_us)
 
     @property
     def days(self) -> float:
@@ -159,6 +161,8 @@ class Tally:
         ValueError
             If there is no table of that name.
         """
+        import pandas as pd
+
         tables = {
             "moves": self.moves,
             "entries": self.entries,
@@ -291,8 +295,9 @@ class Tally:
         ended = self.journeys["outcome"] != OPEN
         lapsed = self.journeys["outcome"] == LAPSED
         n = self.journeys["n"]
+        first, last = (instant_text(us)[: len("2025-06-30")] for us in (self.log_start_us, self.as_of_us))
         return (
-            f"{self.n_rows:,} rows from {self.log_start:%Y-%m-%d} to {self.as_of:%Y-%m-%d}: "
+            f"{self.n_rows:,} rows from {first} to {last}: "
             f"{self.n_journeys:,} journeys of {self.n_people:,} people through {len(self.states)} states; "
             f"{int(n[ended & ~lapsed].sum()):,} ended in an outcome, {int(n[lapsed].sum()):,} lapsed, "
             f"{int(n[~ended].sum()):,} open"
@@ -304,6 +309,12 @@ class Tally:
 
     def _repr_html_(self) -> str:
         return f"<p>Tally: {self.summary()}</p>"
+
+
+def _timestamp(us: int) -> pd.Timestamp:
+    import pandas as pd
+
+    return pd.Timestamp(us, unit="us", tz="UTC")
 
 
 def _added(name: str, mine: Columns, theirs: Columns) -> Columns:

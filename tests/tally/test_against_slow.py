@@ -9,7 +9,6 @@ import os
 from collections.abc import Callable
 from dataclasses import dataclass
 from functools import cache
-from importlib.util import find_spec
 from typing import Any
 from unittest.mock import patch
 
@@ -25,12 +24,12 @@ from slow_rules import SlowTally, read_log
 from journeys.intake import batches, identity
 from journeys.intake.rules import JourneyRules
 from journeys.kernels.bins import dwell_edges, elapsed_edges
+from journeys.kernels.compiled import is_built
 from journeys.tally import count_log, order
 
 N_LOGS = int(os.environ.get("JOURNEYS_SLOW_LOGS", "1500"))
 N_SHARES = 6
 
-HAS_NUMBA = find_spec("numba") is not None
 Table = dict[Any, tuple[int, ...]]
 
 FINDING_CODES = (
@@ -106,13 +105,13 @@ class How:
     compiled: bool = False
 
 
-WAYS = st.builds(How, st.integers(0, 7), st.integers(1, 9), st.integers(1, 4), st.sampled_from([False, HAS_NUMBA]))
+WAYS = st.builds(How, st.integers(0, 7), st.integers(1, 9), st.integers(1, 4), st.sampled_from([False, is_built()]))
 
 
 def drawn_way(rng: np.random.Generator) -> How:
     """Return a way of counting."""
     batch, chunk, n_workers = (int(rng.integers(low, high)) for low, high in ((0, 8), (1, 10), (1, 5)))
-    return How(batch, chunk, n_workers, HAS_NUMBA and bool(rng.integers(2)))
+    return How(batch, chunk, n_workers, is_built() and bool(rng.integers(2)))
 
 
 def compare(log: RandomLog, how: How) -> None:
@@ -158,7 +157,7 @@ def test_busy_customers() -> None:
     for seed in range(8):
         log = random_log(np.random.default_rng([77, seed]), n_rows=3_500)
         n_busy += any(busy for *_, busy in slow_tally(log).moves)
-        compare(log, How(0 if seed % 2 else 170, 50, 2, HAS_NUMBA and seed % 4 > 1))
+        compare(log, How(0 if seed % 2 else 170, 50, 2, is_built() and seed % 4 > 1))
     assert n_busy >= 4
 
 

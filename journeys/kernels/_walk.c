@@ -1,0 +1,243 @@
+/* The counting of rows in order as one loop: the same answers as counting.py, whose words explain the rules.
+ *
+ * Plain C without Python objects, called through ctypes (compiled.py), so it runs without the interpreter's lock.
+ * All members of the struct are eight bytes wide and in the order of compiled.py's list of fields.
+ */
+#include <Python.h>
+#include <stdint.h>
+#include <string.h>
+
+#define LAPSED 0
+#define IN_ORDER 0
+#define OUT_OF_ORDER 1
+#define DAY_US INT64_C(86400000000)
+#define SUB_OCTAVE_SHIFT 46
+
+#ifdef _WIN32
+#define EXPORT __declspec(dllexport)
+#else
+#define EXPORT __attribute__((visibility("default")))
+#endif
+
+typedef struct {
+    int64_t n_rows;
+    const uint64_t *key;
+    const int64_t *time;
+    const int32_t *code;
+    int64_t n_buckets;
+    const uint64_t *first_keys;
+    /* what is carried of the customers seen before */
+    int64_t n_carried;
+    const uint64_t *c_key;
+    int64_t *c_time, *c_start, *c_visit;
+    int32_t *c_code, *c_first, *c_steps, *c_events, *c_decided, *c_converted;
+    uint8_t *c_sure;
+    /* records of new customers */
+    uint64_t *f_key;
+    int64_t *f_time, *f_start, *f_visit;
+    int32_t *f_code, *f_first, *f_steps, *f_events, *f_decided, *f_converted;
+    uint8_t *f_sure;
+    /* moves that are not added to the cells, ended journeys, journeys begun, marked rows */
+    uint8_t *m_bucket;
+    int32_t *m_state, *m_next;
+    int64_t *m_dwell;
+    uint8_t *m_busy;
+    uint8_t *e_bucket;
+    int32_t *e_state, *e_outcome;
+    uint8_t *e_sure;
+    int64_t *e_steps, *e_elapsed;
+    uint8_t *b_bucket;
+    int32_t *b_state;
+    uint8_t *b_sure;
+    int64_t *repeated, *bare, *again;
+    /* cells: n_bins is 0 where there are none */
+    uint32_t *cell_n;
+    int64_t *cell_rest;
+    const int64_t *lower, *upper;
+    const int16_t *guess;
+    int64_t n_bins, first_bucket, n_states, whole_days;
+    /* the rules; silence is -1 where none is given */
+    int64_t first_state, first_churned, silence, same_outcome, merge, log_start, complete, busy_after;
+    /* how many of each were written, and what the cells gained */
+    int64_t n_moves, n_ends, n_begun, n_fresh, n_repeated, n_bare, n_again, unsure_visits;
+    double gained;
+} Walk;
+
+static int64_t bin_of(const Walk *w, int64_t dwell)
+{
+    if (w->whole_days)
+        return dwell / DAY_US;
+    /* The leading bits of the dwell as a floating-point number tell the lowest bin it can be in. */
+    double wide = (double)dwell;
+    uint64_t bits;
+    memcpy(&bits, &wide, sizeof bits);
+    int64_t bin = w->guess[bits >> SUB_OCTAVE_SHIFT];
+    while (dwell > w->upper[bin])
+        bin++;
+    while (bin > 0 && dwell <= w->upper[bin - 1])
+        bin--;
+    return bin;
+}
+
+static int64_t lower_bound(const uint64_t *sorted, int64_t n, uint64_t value)
+{
+    int64_t low = 0;
+    while (low < n) {
+        int64_t middle = low + (n - low) / 2;
+        if (sorted[middle] < value)
+            low = middle + 1;
+        else
+            n = middle;
+    }
+    return low;
+}
+
+static void add_move(Walk *w, int64_t bucket, int64_t from, int64_t to, int64_t dwell, int busy)
+{
+    if (w->n_bins && !busy) {
+        int64_t bin = bin_of(w, dwell);
+        int64_t cell = (bucket - w->first_bucket) * w->n_states + from - w->first_state;
+        cell = (cell * (w->first_state + w->n_states) + to) * w->n_bins + bin;
+        w->cell_n[cell]++;
+        w->cell_rest[cell] += dwell - w->lower[bin];
+        w->gained += (double)(dwell - w->lower[bin]);
+        return;
+    }
+    int64_t i = w->n_moves++;
+    w->m_bucket[i] = (uint8_t)bucket;
+    w->m_state[i] = (int32_t)from;
+    w->m_next[i] = (int32_t)to;
+    w->m_dwell[i] = dwell;
+    w->m_busy[i] = (uint8_t)busy;
+}
+
+static void end_journey(Walk *w, int64_t bucket, int64_t first, int64_t outcome, int sure, int64_t steps,
+                        int64_t elapsed)
+{
+    int64_t i = w->n_ends++;
+    w->e_bucket[i] = (uint8_t)bucket;
+    w->e_state[i] = (int32_t)first;
+    w->e_outcome[i] = (int32_t)outcome;
+    w->e_sure[i] = (uint8_t)sure;
+    w->e_steps[i] = steps;
+    w->e_elapsed[i] = elapsed;
+}
+
+EXPORT int64_t journeys_walk(Walk *w)
+{
+    const uint64_t *key = w->key;
+    int64_t place, bucket, i = 0;
+    if (!w->n_rows)
+        return IN_ORDER;
+    place = lower_bound(w->c_key, w->n_carried, key[0]);
+    bucket = lower_bound(w->first_keys, w->n_buckets, key[0]);
+    if (bucket == w->n_buckets || w->first_keys[bucket] > key[0])
+        bucket--;
+    while (i < w->n_rows) {
+        uint64_t who = key[i];
+        int64_t last = 0, prev = 0, started = 0, visit = 0, first = 0, steps = 0, events = 0, decided = 0, won = 0;
+        int sure = 0, held;
+        while (bucket + 1 < w->n_buckets && who >= w->first_keys[bucket + 1])
+            bucket++;
+        while (place < w->n_carried && w->c_key[place] < who)
+            place++;
+        held = place < w->n_carried && w->c_key[place] == who;
+        if (held) {
+            if (w->time[i] <= w->c_time[place])
+                return OUT_OF_ORDER;
+            last = w->c_time[place];
+            prev = w->c_code[place];
+            started = w->c_start[place];
+            first = w->c_first[place];
+            steps = w->c_steps[place];
+            events = w->c_events[place];
+            sure = w->c_sure[place];
+            visit = w->merge ? w->c_visit[place] : last;
+        }
+        for (; i < w->n_rows && key[i] == who; i++) {
+            int64_t now = w->time[i], what = w->code[i];
+            int begins = 1, lapses = 0;
+            events++;
+            if (prev >= w->first_state) {
+                lapses = w->silence >= 0 && now - last > w->silence;
+                begins = lapses;
+                if (lapses || !(w->merge && what == prev)) {
+                    /* Merged, the first visit of an unsure journey may have begun before the log. */
+                    if (w->merge && steps == 1 && !sure)
+                        w->unsure_visits++;
+                    else
+                        add_move(w, bucket, prev, lapses ? LAPSED : what, (lapses ? last + w->silence : now) - visit,
+                                 events > w->busy_after);
+                    if (!lapses) {
+                        steps++;
+                        visit = now;
+                    }
+                }
+                if (lapses) {
+                    end_journey(w, bucket, first, LAPSED, sure, steps + 1, last + w->silence - started);
+                    decided++;
+                }
+            } else if (prev != 0 && what == prev && now - last <= w->same_outcome) {
+                w->repeated[w->n_repeated++] = i;
+                last = now;
+                continue;
+            } else if (prev != 0) {
+                w->again[w->n_again++] = i;
+            }
+            if (begins) {
+                sure = prev != 0 || w->complete || (w->silence >= 0 && now >= w->log_start + w->silence);
+                started = visit = now;
+                first = what;
+                steps = 1;
+                w->b_bucket[w->n_begun] = (uint8_t)bucket;
+                w->b_state[w->n_begun] = (int32_t)what;
+                w->b_sure[w->n_begun++] = (uint8_t)sure;
+                if (what < w->first_state)
+                    w->bare[w->n_bare++] = i;
+            }
+            if (what < w->first_state) {
+                end_journey(w, bucket, first, what, sure, steps, now - started);
+                decided++;
+                won += what < w->first_churned;
+            }
+            prev = what;
+            last = now;
+        }
+        if (held) {
+            w->c_time[place] = last;
+            w->c_start[place] = started;
+            w->c_code[place] = (int32_t)prev;
+            w->c_first[place] = (int32_t)first;
+            w->c_steps[place] = (int32_t)steps;
+            w->c_events[place] = (int32_t)events;
+            w->c_decided[place] += (int32_t)decided;
+            w->c_converted[place] += (int32_t)won;
+            w->c_sure[place] = (uint8_t)sure;
+            if (w->merge)
+                w->c_visit[place] = visit;
+        } else {
+            int64_t f = w->n_fresh++;
+            w->f_key[f] = who;
+            w->f_time[f] = last;
+            w->f_start[f] = started;
+            w->f_code[f] = (int32_t)prev;
+            w->f_first[f] = (int32_t)first;
+            w->f_steps[f] = (int32_t)steps;
+            w->f_events[f] = (int32_t)events;
+            w->f_decided[f] = (int32_t)decided;
+            w->f_converted[f] = (int32_t)won;
+            w->f_sure[f] = (uint8_t)sure;
+            if (w->merge)
+                w->f_visit[f] = visit;
+        }
+    }
+    return IN_ORDER;
+}
+
+/* A module without functions: it is there so that the build puts the library where Python finds it. */
+static struct PyModuleDef definition = {PyModuleDef_HEAD_INIT, "_walk", NULL, -1, NULL, NULL, NULL, NULL, NULL};
+
+PyMODINIT_FUNC PyInit__walk(void)
+{
+    return PyModule_Create(&definition);
+}

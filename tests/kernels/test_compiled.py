@@ -1,0 +1,49 @@
+"""The compiled loop: built where a C compiler is, and refused clearly where it is not."""
+
+from __future__ import annotations
+
+import shutil
+import sysconfig
+from pathlib import Path
+
+import pandas as pd
+import pytest
+
+from journeys.intake.rules import JourneyRules
+from journeys.kernels import compiled
+from journeys.tally import count_log
+
+RULES = JourneyRules("member", "happened", "event", converted=["joined"], silence="30d", complete_history=True)
+LOG = pd.DataFrame(
+    {
+        "member": [1, 1, 2],
+        "event": ["visit", "joined", "visit"],
+        "happened": pd.to_datetime(["2025-01-01", "2025-01-02", "2025-03-01"], utc=True),
+    }
+)
+
+
+def test_it_is_built_where_a_compiler_is() -> None:
+    # An editable install builds it beside its source.
+    headers = Path(sysconfig.get_path("include")) / "Python.h"
+    if shutil.which("cc") and headers.exists():
+        assert compiled.is_built()
+
+
+def test_struct_has_the_fields_of_the_c_file() -> None:
+    source = (Path(compiled.__file__).parent / "_walk.c").read_text(encoding="utf-8")
+    inside = source[source.index("typedef struct {") : source.index("} Walk;")]
+    names = []
+    for line in inside.splitlines()[1:]:
+        text = line.strip()
+        if text and not text.startswith(("/*", "*")):
+            names += [part.split()[-1].lstrip("*") for part in text.rstrip(";").split(",")]
+    assert names == [name for name, _ in compiled._Walk._fields_]
+
+
+def test_without_it_the_answer_is_the_same_and_asking_for_it_is_refused(monkeypatch: pytest.MonkeyPatch) -> None:
+    whole = count_log(LOG, RULES)
+    monkeypatch.setattr(compiled, "_library", lambda: None)
+    assert count_log(LOG, RULES) == whole
+    with pytest.raises(ImportError, match="compiled loop is not built"):
+        count_log(LOG, RULES, compiled=True)
