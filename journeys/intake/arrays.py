@@ -114,7 +114,7 @@ def from_numpy(values: NDArray[Any], kind: pa.DataType) -> pa.Array:
     ----------
     values : ndarray of int or bool, shape (n_rows,)
     kind : pyarrow.DataType
-        int64, or a type of times or dates.
+        A type of whole numbers, times, dates, or bool.
 
     Returns
     -------
@@ -125,8 +125,12 @@ def from_numpy(values: NDArray[Any], kind: pa.DataType) -> pa.Array:
     >>> from_numpy(np.array([1]), pa.date32()).to_pylist()
     [datetime.date(1970, 1, 2)]
     """
-    width = np.int32 if kind.bit_width == 32 else np.int64
-    return pa.Array.from_buffers(kind, len(values), [None, pa.py_buffer(np.ascontiguousarray(values, dtype=width))])
+    if pa.types.is_boolean(kind):
+        data = np.packbits(np.asarray(values, dtype=bool), bitorder="little")
+    else:
+        unsigned = "u" if pa.types.is_unsigned_integer(kind) else ""
+        data = np.ascontiguousarray(values, dtype=f"{unsigned}int{kind.bit_width}")
+    return pa.Array.from_buffers(kind, len(values), [None, pa.py_buffer(data)])
 
 
 def from_texts(texts: Sequence[str | None]) -> pa.StringArray:

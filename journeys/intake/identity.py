@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 
 from journeys.errors import LogError
 from journeys.intake.arrays import indices_of, is_missing, is_text, numbers, plain, whole_numbers
+from journeys.kernels import compiled
 
 N_BUCKETS = 200
 _GOLDEN = 0x9E3779B97F4A7C15
@@ -23,6 +24,8 @@ _QUOTIENT, _REST = divmod(2**64, N_BUCKETS)
 # Words of a text that are mixed for all rows at once; the rest of longer texts goes row by row.
 _WORDS_AT_ONCE = 64
 _BLOCK = 32_768
+# From so many ids on, a compiled loop takes their keys, where there is one.
+_FEW = 1_024
 _TAIL_MASKS = np.array([(1 << 8 * n) - 1 for n in range(9)], dtype=np.uint64)
 _FIX = (
     "give customers whole numbers that fit in int64, or text: column.astype(str), "
@@ -52,6 +55,8 @@ def mix(values: NDArray[np.uint64]) -> NDArray[np.uint64]:
     >>> hex(mix(np.array([0x9E3779B97F4A7C15], dtype="u8"))[0])
     '0xe220a8397b1dcdaf'
     """
+    if len(values) >= _FEW and compiled.is_built():
+        return compiled.mixed(values)
     out = np.array(values, dtype=np.uint64)
     for start in range(0, len(out), _BLOCK):
         # Blocks stay in the processor's cache through all eight passes.
@@ -138,6 +143,8 @@ def bucket_major(key64: NDArray[np.uint64]) -> NDArray[np.uint64]:
     >>> bool((from_bucket_major(bucket_major(keys)) == keys).all())
     True
     """
+    if len(key64) >= _FEW and compiled.is_built():
+        return compiled.by_bucket(key64, FIRST_KEYS)
     out = np.empty_like(key64)
     for start in range(0, len(out), _BLOCK):
         block = key64[start : start + _BLOCK]
@@ -188,6 +195,8 @@ FIRST_KEYS = _first_of(np.arange(N_BUCKETS, dtype=np.uint64))
 def _text_keys(array: pa.Array) -> NDArray[np.uint64]:
     """Keys of plain text or bytes, from the buffers themselves."""
     starts, lengths, data = _text_buffers(array)
+    if len(lengths) >= _FEW and compiled.is_built():
+        return compiled.text_keys(starts, lengths, data)
     out = np.empty(len(lengths), dtype=np.uint64)
     for start in range(0, len(out), _BLOCK):
         rows = slice(start, start + _BLOCK)

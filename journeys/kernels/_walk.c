@@ -234,6 +234,90 @@ EXPORT int64_t journeys_walk(Walk *w)
     return IN_ORDER;
 }
 
+/* Bring rows into the given order, events as codes; tell whether any row is not later than the one before it of the
+ * same customer, which the loop above does not expect. */
+EXPORT int64_t journeys_gather(int64_t n, const int64_t *order, const uint64_t *key, const int64_t *time,
+                               const int32_t *event, const int32_t *code_of_event, uint64_t *out_key,
+                               int64_t *out_time, int32_t *out_code)
+{
+    int64_t i, not_later = 0;
+    for (i = 0; i < n; i++) {
+        int64_t at = order[i];
+        out_key[i] = key[at];
+        out_time[i] = time[at];
+        out_code[i] = code_of_event[event[at]];
+    }
+    for (i = 1; i < n; i++)
+        not_later |= (out_key[i] == out_key[i - 1]) & (out_time[i] <= out_time[i - 1]);
+    return not_later;
+}
+
+/* Merge new items into a column: new item j goes before the old item at where[j], which does not decrease. */
+EXPORT void journeys_insert(int64_t size, const char *old, int64_t n_old, const int64_t *where, int64_t n_new,
+                            const char *fresh, char *out)
+{
+    int64_t from = 0, j;
+    for (j = 0; j < n_new; j++) {
+        memcpy(out, old + from * size, (size_t)((where[j] - from) * size));
+        out += (where[j] - from) * size;
+        memcpy(out, fresh + j * size, (size_t)size);
+        out += size;
+        from = where[j];
+    }
+    memcpy(out, old + from * size, (size_t)((n_old - from) * size));
+}
+
+/* The 64-bit keys of customers, as identity.py explains them. */
+#define GOLDEN UINT64_C(0x9E3779B97F4A7C15)
+
+static uint64_t mix(uint64_t x)
+{
+    x ^= x >> 30;
+    x *= UINT64_C(0xBF58476D1CE4E5B9);
+    x ^= x >> 27;
+    x *= UINT64_C(0x94D049BB133111EB);
+    return x ^ (x >> 31);
+}
+
+EXPORT void journeys_mix(int64_t n, const uint64_t *in, uint64_t *out)
+{
+    int64_t i;
+    for (i = 0; i < n; i++)
+        out[i] = mix(in[i]);
+}
+
+EXPORT void journeys_text_keys(int64_t n, const int64_t *start, const int64_t *length, const char *data, uint64_t *out)
+{
+    int64_t i, j;
+    for (i = 0; i < n; i++) {
+        const char *text = data + start[i];
+        uint64_t total = mix((uint64_t)length[i] ^ GOLDEN);
+        for (j = 0; 8 * j < length[i]; j++) {
+            uint64_t word = 0;
+            int64_t left = length[i] - 8 * j;
+            if (left >= 8) {
+                memcpy(&word, text + 8 * j, 8);
+            } else {
+                int64_t k;
+                for (k = 0; k < left; k++)
+                    word |= (uint64_t)(unsigned char)text[8 * j + k] << (8 * k);
+            }
+            total += mix(word + ((uint64_t)j + 1) * GOLDEN);
+        }
+        out[i] = mix(total);
+    }
+}
+
+EXPORT void journeys_bucket_major(int64_t n, const uint64_t *key, const uint64_t *first_keys, uint64_t n_buckets,
+                                  uint64_t *out)
+{
+    int64_t i;
+    for (i = 0; i < n; i++) {
+        uint64_t above = key[i] / n_buckets;
+        out[i] = first_keys[key[i] - above * n_buckets] + above;
+    }
+}
+
 /* A module without functions: it is there so that the build puts the library where Python finds it. */
 static struct PyModuleDef definition = {PyModuleDef_HEAD_INIT, "_walk", NULL, -1, NULL, NULL, NULL, NULL, NULL};
 

@@ -6,6 +6,7 @@ The loop is `_walk.c`, built where the package is installed with a C compiler at
 from __future__ import annotations
 
 import ctypes
+import sys
 from functools import cache
 from importlib.util import find_spec
 from typing import Any, TypeVar
@@ -45,19 +46,29 @@ class _Walk(ctypes.Structure):
 
 
 @cache
-def _library() -> ctypes.CDLL | None:
+def _library() -> Any:
+    """Return the compiled library, None where it is not built."""
     found = find_spec("journeys.kernels._walk")
     if found is None or found.origin is None:
         return None
     library = ctypes.CDLL(found.origin)
     library.journeys_walk.argtypes = [ctypes.POINTER(_Walk)]
     library.journeys_walk.restype = ctypes.c_int64
+    number, address = ctypes.c_int64, ctypes.c_void_p
+    library.journeys_gather.argtypes = [number, *[address] * 8]
+    library.journeys_gather.restype = ctypes.c_int64
+    library.journeys_insert.argtypes = [number, address, number, address, number, address, address]
+    library.journeys_mix.argtypes = [number, address, address]
+    library.journeys_text_keys.argtypes = [number, *[address] * 4]
+    library.journeys_bucket_major.argtypes = [number, address, address, number, address]
+    for name in ("insert", "mix", "text_keys", "bucket_major"):
+        getattr(library, f"journeys_{name}").restype = None
     return library
 
 
 def is_built() -> bool:
-    """Tell whether the compiled loop is there."""
-    return _library() is not None
+    """Tell whether the compiled loop is there, and the machine one whose words it reads as numpy does."""
+    return sys.byteorder == "little" and _library() is not None
 
 
 def count_in_order(
@@ -139,6 +150,72 @@ def count_in_order(
         unsure_visits=walk.unsure_visits,
     )
     return counted, fresh.take(np.arange(walk.n_fresh)) if walk.n_fresh else None, walk.gained
+
+
+def gathered(
+    order: IntArray,
+    key: NDArray[np.uint64],
+    time: IntArray,
+    event: NDArray[np.int32],
+    code_of_event: NDArray[np.int32],
+) -> tuple[NDArray[np.uint64], IntArray, NDArray[np.int32]] | None:
+    """Return customer, time and code of rows in the given order.
+
+    Parameters
+    ----------
+    order : ndarray of int64, shape (n,)
+        Positions, by customer.
+    key, time, event : ndarray, shape (n_rows,)
+        Customer, microseconds and raw event in input order.
+    code_of_event : ndarray of int32
+        Code of each raw event.
+
+    Returns
+    -------
+    tuple of three ndarray, shape (n,), or None
+        None if a row is not later than the one before it of the same customer.
+    """
+    n = len(order)
+    out = np.empty(n, np.uint64), _times(n), _codes(n)
+    given = [np.ascontiguousarray(array) for array in (order, key, time, event, code_of_event)]
+    not_later = _library().journeys_gather(n, *(array.ctypes.data for array in (*given, *out)))
+    return None if not_later else out
+
+
+def mixed(words: NDArray[np.uint64]) -> NDArray[np.uint64]:
+    """Return each word mixed, as `identity.mix` says."""
+    words = np.ascontiguousarray(words)
+    out = np.empty_like(words)
+    _library().journeys_mix(len(words), words.ctypes.data, out.ctypes.data)
+    return out
+
+
+def text_keys(starts: IntArray, lengths: IntArray, data: NDArray[np.uint8]) -> NDArray[np.uint64]:
+    """Return the key of each text, given where it begins and how many bytes it has (little-endian machines only)."""
+    out = np.empty(len(lengths), np.uint64)
+    given = [np.ascontiguousarray(array) for array in (starts, lengths, data)]
+    _library().journeys_text_keys(len(out), *(array.ctypes.data for array in (*given, out)))
+    return out
+
+
+def by_bucket(keys: NDArray[np.uint64], first_keys: NDArray[np.uint64]) -> NDArray[np.uint64]:
+    """Return keys renumbered bucket by bucket, as `identity.bucket_major` says."""
+    keys = np.ascontiguousarray(keys)
+    out = np.empty_like(keys)
+    _library().journeys_bucket_major(
+        len(keys), keys.ctypes.data, first_keys.ctypes.data, len(first_keys), out.ctypes.data
+    )
+    return out
+
+
+def inserted(old: NDArray[Any], where: IntArray, new: NDArray[Any]) -> NDArray[Any]:
+    """Return a column with new items put in, item j before the old one at `where[j]`, which does not decrease."""
+    out = np.empty(len(old) + len(new), old.dtype)
+    old, where, new = np.ascontiguousarray(old), np.ascontiguousarray(where), np.ascontiguousarray(new, old.dtype)
+    _library().journeys_insert(
+        old.itemsize, old.ctypes.data, len(old), where.ctypes.data, len(new), new.ctypes.data, out.ctypes.data
+    )
+    return out
 
 
 def _prefixed(letter: str, records: Carried) -> dict[str, NDArray[Any]]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, fields
 from typing import Any
 
@@ -10,6 +11,8 @@ from numpy.typing import NDArray
 
 from journeys.kernels.arrays import BoolArray as Bools
 from journeys.kernels.arrays import IntArray as Ints
+
+PutIn = Callable[[NDArray[Any], Ints, NDArray[Any]], NDArray[Any]]
 
 # Codes of what a row or a move can lead to: these two, then the outcomes, then the states.
 LAPSED = 0
@@ -112,20 +115,14 @@ class Carried:
                 column[at] = values
         return fresh
 
-    def insert(self, fresh: list[Carried]) -> None:
-        """Add records of new customers, sorted by key."""
+    def insert(self, fresh: list[Carried], put_in: PutIn = np.insert) -> None:
+        """Add records of new customers, sorted by key; `put_in` puts items into a column before given positions."""
         if not fresh:
             return
-        key = np.concatenate([part.key for part in fresh])
-        where = np.searchsorted(self.key, key) + np.arange(len(key))
-        size = len(self.key) + len(key)
-        stays = np.ones(size, bool)
-        stays[where] = False
+        where = np.searchsorted(self.key, np.concatenate([part.key for part in fresh]))
         for name in self.names:
-            column = np.empty(size, getattr(self, name).dtype)
-            column[where] = np.concatenate([getattr(part, name) for part in fresh])
-            column[stays] = getattr(self, name)
-            setattr(self, name, column)
+            new = np.concatenate([getattr(part, name) for part in fresh])
+            setattr(self, name, put_in(getattr(self, name), where, new))
 
 
 _ADDED = ("decided", "converted")

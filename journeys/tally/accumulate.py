@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 
 import numpy as np
 from numpy.typing import NDArray
@@ -12,9 +12,10 @@ from journeys.tally.keys import bucket_in
 
 Columns = dict[str, NDArray[np.int64]]
 Keyed = tuple[IntArray, Columns]
+Expand = Callable[[Columns], Columns]
 
 _LIMB = 32
-_FEW = 1 << 14
+_FEW = 1 << 15
 _BUCKETS_PER_PART = 4
 _LOW = (1 << _LIMB) - 1
 
@@ -81,17 +82,27 @@ class Accumulator:
         self._names = names
         self._parts: dict[int, _Part] = {}
 
-    def add(self, key: IntArray, sums: Columns) -> None:
-        """Add one block; quickest where the keys of a bucket stand together."""
+    def add(self, key: IntArray, columns: Columns, expand: Expand | None = None) -> None:
+        """Add one block; quickest where the keys of a bucket stand together.
+
+        Parameters
+        ----------
+        key : ndarray of int64
+            Packed keys, any number of rows each.
+        columns : dict of str to ndarray
+            The sums, or what `expand` makes them of when the time has come: what waits should be small.
+        expand : callable, optional
+            From the columns of a block to its sums.
+        """
         if not len(key):
             return
         part = bucket_in(key) // _BUCKETS_PER_PART
         begin = np.flatnonzero(np.diff(part, prepend=-1))
         for number, first, last in zip(part[begin].tolist(), begin, [*begin[1:], len(key)], strict=True):
             piece = slice(first, last)
-            # A copy, so that what waits does not keep the whole block in memory.
-            columns = {name: sums[name][piece].copy() for name in self._names}
-            self._parts.setdefault(number, _Part(self._names)).add(key[piece].copy(), columns)
+            # Copies, so that what waits does not keep the whole block in memory.
+            kept = {name: column[piece].copy() for name, column in columns.items()}
+            self._parts.setdefault(number, _Part(self._names)).add(key[piece].copy(), kept, expand)
 
     def result(self) -> Keyed:
         """Return the distinct keys in order and their sums, and let go of them."""
@@ -106,12 +117,13 @@ class _Part:
 
     def __init__(self, names: tuple[str, ...]) -> None:
         self._names = names
-        self._blocks: list[Keyed] = []
+        self._settled: Keyed | None = None
+        self._blocks: list[tuple[IntArray, Columns, Expand | None]] = []
         self._waiting = self._n_settled = 0
 
-    def add(self, key: IntArray, sums: Columns) -> None:
+    def add(self, key: IntArray, columns: Columns, expand: Expand | None) -> None:
         """Add one block."""
-        self._blocks.append((key, sums))
+        self._blocks.append((key, columns, expand))
         self._waiting += len(key)
         if self._waiting > max(2 * self._n_settled, _FEW):
             self.settled()
@@ -119,8 +131,14 @@ class _Part:
     def settled(self) -> Keyed:
         """Return the distinct keys in order and their sums."""
         if self._waiting:
-            key = np.concatenate([key for key, _ in self._blocks])
-            sums = {name: np.concatenate([sums.pop(name) for _, sums in self._blocks]) for name in self._names}
-            self._blocks = [add_up(key, sums)]
-            self._n_settled, self._waiting = len(self._blocks[0][0]), 0
-        return self._blocks[0]
+            blocks = [(key, columns if expand is None else expand(columns)) for key, columns, expand in self._blocks]
+            blocks += [] if self._settled is None else [self._settled]
+            self._blocks = []
+            key = np.concatenate([key for key, _ in blocks])
+            sums = {name: np.concatenate([sums.pop(name) for _, sums in blocks]) for name in self._names}
+            self._settled = add_up(key, sums)
+            self._n_settled, self._waiting = len(self._settled[0]), 0
+        if self._settled is None:
+            msg = "nothing was added to this part"
+            raise ValueError(msg)
+        return self._settled

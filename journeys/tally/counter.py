@@ -12,6 +12,7 @@ from journeys.intake.findings import Findings
 from journeys.intake.identity import FIRST_KEYS, bucket_of_major
 from journeys.intake.rows import Rows
 from journeys.kernels.arrays import BoolArray, IntArray
+from journeys.kernels.compiled import count_in_order, gathered, inserted
 from journeys.kernels.counting import Block, close_log, count_rows
 from journeys.kernels.records import FIRST_OUTCOME, Carried, Counted, Reading
 from journeys.tally.order import CHUNK_ROWS, Ordered, chunks
@@ -89,7 +90,8 @@ class Counter:
         self._n_states = n_states
         add = self._add_compiled if self._compiled and rows.ended is None else self._add
         added = [add(rows, part, code_of_event) for part in chunks(rows.key, order)]
-        self._carried.insert([fresh for fresh in added if fresh is not None])
+        fresh = [records for records in added if records is not None]
+        self._carried.insert(fresh, inserted if self._compiled else np.insert)
 
     def _add(self, block: Rows, order: IntArray, code_of_event: Codes) -> Carried | None:
         """Count one chunk; put its customers' new records in their place and return those of new customers."""
@@ -121,18 +123,18 @@ class Counter:
 
     def _add_compiled(self, block: Rows, order: IntArray, code_of_event: Codes) -> Carried | None:
         """Do the same in one compiled loop over the rows."""
-        from journeys.kernels.compiled import count_in_order
-
-        rows = Ordered.of(block, order)
-        rows = self._without_duplicates(rows, rows.starts())
-        cells = self._sums.moves.cells(len(rows), self._n_states)
-        code = code_of_event[rows.event]
-        found = count_in_order(rows.key, rows.time, code, self._carried, FIRST_KEYS, self._reading, cells)
+        found = gathered(order, block.key, block.time, block.event, code_of_event)
         if found is None:
+            rows = Ordered.of(block, order)
+            rows = self._without_duplicates(rows, rows.starts())
+            order, found = rows.order, (rows.key, rows.time, code_of_event[rows.event])
+        cells = self._sums.moves.cells(len(order), self._n_states)
+        result = count_in_order(*found, self._carried, FIRST_KEYS, self._reading, cells)
+        if result is None:
             raise OutOfOrderError
-        counted, fresh, gained = found
+        counted, fresh, gained = result
         self._sums.moves.gained(gained)
-        self._note(counted, block, rows.order)
+        self._note(counted, block, order)
         return fresh
 
     def close(self) -> None:

@@ -7,7 +7,7 @@ import numpy as np
 from journeys.kernels.arrays import IntArray
 from journeys.kernels.bins import DAY_US, bin_of
 from journeys.kernels.records import Cells, Moves
-from journeys.tally.accumulate import Accumulator, Keyed, limbs, product_limbs
+from journeys.tally.accumulate import Accumulator, Columns, Keyed, limbs, product_limbs
 from journeys.tally.keys import pack
 
 # Cells of all workers together: 12 bytes each.
@@ -132,8 +132,13 @@ class MoveSums:
 
     def _add_sparse(self, moves: Moves, busy: int) -> None:
         key = pack(moves.bucket, moves.state, moves.next_code, bin_of(moves.dwell, self._edges), busy)
-        self._sparse.add(key, {"n": np.ones(len(key), np.int64), **limbs(moves.dwell, "dwell")})
+        self._sparse.add(key, {"dwell": moves.dwell}, _single_moves)
 
 
 def _part(moves: Moves, mask: np.ndarray) -> Moves:
     return Moves(moves.bucket[mask], moves.state[mask], moves.next_code[mask], moves.dwell[mask])
+
+
+def _single_moves(columns: Columns) -> Columns:
+    """Return what single moves add: themselves and their dwell."""
+    return {"n": np.ones(len(columns["dwell"]), np.int64), **limbs(columns["dwell"], "dwell")}

@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import pyarrow as pa
+import pyarrow.compute as pc
 import pyarrow.parquet as pq
 
 from journeys.errors import JourneysError, StoreError
@@ -50,20 +51,6 @@ def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | 
     -----
     All tables stand in one file, told apart by the column `table`; a column that a table lacks is null there.
     """
-    parts = []
-    every = list(dict.fromkeys(column for table in _TABLES for column in columns_of(table)))
-    for name in _TABLES:
-        held = getattr(tally, name)
-        size = len(held["bucket"])
-        parts.append(
-            pa.table(
-                {"table": pa.repeat(from_texts([name])[0], size)}
-                | {
-                    column: from_numpy(held[column], pa.int64()) if column in held else pa.nulls(size, pa.int64())
-                    for column in every
-                }
-            )
-        )
     head = {
         "format_version": FORMAT_VERSION,
         "rules": tally.rules.to_dict(),
@@ -75,9 +62,37 @@ def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | 
         "findings": tally.record.to_dict(),
         "checksum": _checksum(tally),
     }
-    whole = pa.concat_tables(parts).replace_schema_metadata({HEAD: json.dumps(head).encode(), **(more or {})})
-    with written_whole(path) as part:
-        pq.write_table(whole, part, compression="zstd")
+    schema = _schema().with_metadata({HEAD: json.dumps(head).encode(), **(more or {})})
+    # Dictionaries pay where a value runs on for many rows; elsewhere they only take time.
+    runs = ["table", "bucket", "state"]
+    with (
+        written_whole(path) as part,
+        pq.ParquetWriter(
+            part, schema, compression="zstd", compression_level=1, use_dictionary=runs, write_statistics=False
+        ) as writer,
+    ):
+        for name in _TABLES:
+            writer.write_table(_as_arrow(name, getattr(tally, name), schema))
+
+
+def _schema() -> pa.Schema:
+    """Return the columns of all tables, each with the type that is enough for it."""
+    every = dict.fromkeys(column for table in _TABLES for column in columns_of(table))
+    narrow = {name: pa.from_numpy_dtype(kind) for name, kind in NARROW.items()}
+    return pa.schema([("table", pa.string()), *((name, narrow.get(name, pa.int64())) for name in every)])
+
+
+def _as_arrow(name: str, held: Columns, schema: pa.Schema) -> pa.Table:
+    """Return one table of the tally, the columns it lacks null."""
+    size = len(held["bucket"])
+    columns = {"table": pa.repeat(from_texts([name])[0], size)}
+    for field in schema:
+        if field.name in held:
+            values = held[field.name].astype(NARROW.get(field.name, np.int64), copy=False)
+            columns[field.name] = from_numpy(values, field.type)
+        elif field.name != "table":
+            columns[field.name] = pa.nulls(size, field.type)
+    return pa.table(columns, schema=schema)
 
 
 def is_tally(path: str | os.PathLike[str]) -> bool:
@@ -141,10 +156,9 @@ def _checksum(tally: Tally) -> str:
 
 
 def _from_parts(table: pa.Table, head: dict[str, Any]) -> Tally:
-    which = np.asarray(table["table"].to_pandas(), dtype=str)
     held: dict[str, Columns] = {}
     for name in _TABLES:
-        rows = table.filter(pa.array(which == name))
+        rows = table.filter(pc.equal(table["table"], name))
         narrow = {} if name == "customers" else NARROW
         held[name] = {
             column: rows[column].to_numpy().astype(narrow.get(column, np.int64)) for column in columns_of(name)

@@ -9,7 +9,7 @@ import numpy as np
 from journeys.kernels.arrays import IntArray
 from journeys.kernels.bins import bin_of
 from journeys.kernels.records import Carried, Counted, Ends, Entries, Moves
-from journeys.tally.accumulate import Accumulator, Keyed, limbs
+from journeys.tally.accumulate import Accumulator, Columns, Keyed, limbs
 from journeys.tally.dense import MoveSums
 from journeys.tally.keys import pack
 from journeys.tally.tally import CUSTOMER_SUMS, N_BUCKETS, SUMS
@@ -47,9 +47,7 @@ class Sums:
         """Add journeys under bucket, entry state, outcome, elapsed bin and sure."""
         bins = bin_of(ends.elapsed, self._elapsed_edges)
         key = pack(ends.bucket, ends.state, ends.outcome, bins, ends.sure)
-        steps = ends.steps.astype(np.int64)
-        sums = {"n": np.ones(len(key), np.int64), "steps": steps, "steps_squared": steps**2}
-        self._journeys.add(key, {**sums, **limbs(ends.elapsed, "elapsed")})
+        self._journeys.add(key, {"steps": ends.steps.astype(np.int32), "elapsed": ends.elapsed}, _journeys)
 
     def add_customers(self, carried: Carried, bucket: np.ndarray[Any, Any]) -> None:
         """Add one record per customer, at the end of the log."""
@@ -68,3 +66,10 @@ class Sums:
     def _add_entries(self, entries: Entries) -> None:
         key, n = np.unique(pack(entries.bucket, entries.state, flag=entries.sure), return_counts=True)
         self._entries.add(key, {"n": n.astype(np.int64, copy=False)})
+
+
+def _journeys(columns: Columns) -> Columns:
+    """Return what single journeys add: themselves, their steps and steps squared, their elapsed time."""
+    steps = columns["steps"].astype(np.int64)
+    counts = {"n": np.ones(len(steps), np.int64), "steps": steps, "steps_squared": steps**2}
+    return {**counts, **limbs(columns["elapsed"], "elapsed")}

@@ -202,7 +202,8 @@ class Tally:
         for table in (self.moves, self.entries, self.journeys, self.customers):
             for name, column in table.items():
                 digest.update(name.encode())
-                digest.update(np.ascontiguousarray(column, dtype="<i8").tobytes())
+                plain = np.ascontiguousarray(column, column.dtype.newbyteorder("<"))
+                digest.update(plain.view(np.uint8).data)
         return digest.hexdigest()
 
     def __eq__(self, other: object) -> bool:

@@ -6,9 +6,12 @@ import shutil
 import sysconfig
 from pathlib import Path
 
+import numpy as np
 import pandas as pd
+import pyarrow as pa
 import pytest
 
+from journeys.intake import identity
 from journeys.intake.rules import JourneyRules
 from journeys.kernels import compiled
 from journeys.tally import count_log
@@ -47,3 +50,19 @@ def test_without_it_the_answer_is_the_same_and_asking_for_it_is_refused(monkeypa
     assert count_log(LOG, RULES) == whole
     with pytest.raises(ImportError, match="compiled loop is not built"):
         count_log(LOG, RULES, compiled=True)
+
+
+def test_keys_are_the_same_with_and_without_it(monkeypatch: pytest.MonkeyPatch) -> None:
+    if not compiled.is_built():
+        pytest.skip("optional engine missing: the compiled loop")
+    rng = np.random.default_rng(8)
+    numbers = pa.array(rng.integers(-(2**62), 2**62, 5_000))
+    letters = np.array(list("abcé漢\0 "))
+    texts = pa.array(["".join(rng.choice(letters, size)) for size in rng.integers(0, 40, 5_000)])
+    even = pa.array([f"{number:016x}" for number in rng.integers(0, 2**62, 5_000)])
+    columns = (numbers, texts, texts[7:], even, texts.cast(pa.large_string()))
+    with_it = [identity.bucket_major(identity.customer_keys(column)[0]) for column in columns]
+    monkeypatch.setattr(compiled, "_library", lambda: None)
+    without = [identity.bucket_major(identity.customer_keys(column)[0]) for column in columns]
+    for one, two in zip(with_it, without, strict=True):
+        np.testing.assert_array_equal(one, two)
