@@ -81,11 +81,14 @@ class MoveSums:
         """Return the table of cells with room for the moves of `n_rows` rows, for a compiled loop to add to."""
         if n_states > self._n_states:
             self._grow(n_states)
-        if len(self._n):
-            # A row makes at most one move and one lapse.
-            self._make_room(2 * n_rows, 2.0 * n_rows * self._widest)
+        # A row makes at most one move and one lapse.
+        most = 2.0 * n_rows * self._widest
+        fits = len(self._n) > 0 and most <= _MOST_DWELL
+        if fits:
+            self._make_room(2 * n_rows, most)
+        n, rest = (self._n, self._rest) if fits else (self._n[:0], self._rest[:0])
         upper = self._lower if self._edges is None else self._edges[: self._n_bins]
-        return Cells(self._n, self._rest, self._lower, upper, self._buckets.start, self._n_states, self._edges is None)
+        return Cells(n, rest, self._lower, upper, self._buckets.start, self._n_states, self._edges is None)
 
     def gained(self, dwell: float) -> None:
         """Note by how much a compiled loop has raised the cells' dwell."""

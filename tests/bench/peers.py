@@ -101,7 +101,7 @@ def duckdb_table(log: str) -> Answer:
                 select (hash(customer) % {N_BUCKETS})::utinyint as bucket, state, next,
                        least({STEPS}, greatest(0, ceil(ln(greatest(us, 1) / {FIRST_US}) / {LOG_RATIO})))::utinyint
                        as bin,
-                       count(*) as n, sum(least(us, {SILENCE_US})) as dwell_us
+                       count(*) as n, sum(least(us, {SILENCE_US}))::bigint as dwell_us
                 from moves group by all
             ) to '{moves}' (format parquet)"""
         )
