@@ -211,7 +211,7 @@ def as_frame(
     frame = pd.DataFrame({"customer": customer_column(customers, integer_ids)})
     frame["time"] = time_column(chance, times, whole_days)
     empty = pick(chance, (None, ""))
-    texts = pd.Series([empty if event is None else event for event in events], dtype="str")
+    texts = pd.Series([empty if event is None else event for event in events], dtype="string")
     frame["event"] = texts.astype("category") if once_in(chance, 3) else texts
     if "sequence" in rules:
         missing = any(value is None for value in sequences)
@@ -219,14 +219,14 @@ def as_frame(
     if "ended_before" in rules:
         frame["ended"] = pd.array(ended, dtype="bool")
     if "exclude" in rules:
-        frame["staff"] = pd.array([cells["staff"] for cells in columns], dtype="str")
+        frame["staff"] = pd.array([cells["staff"] for cells in columns], dtype="string")
     return frame
 
 
 def customer_column(customers: list[Any], integer_ids: bool) -> Any:
     """Return ids as whole numbers (nullable where one is missing) or text."""
     if not integer_ids:
-        return pd.array(customers, dtype="str")
+        return pd.array(customers, dtype="string")
     return pd.array(customers, dtype="Int64" if None in customers else "int64")
 
 

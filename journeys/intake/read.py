@@ -91,11 +91,14 @@ def _stream(source: Any) -> LogSource:
     module, name = type(source).__module__.partition(".")[0], type(source).__name__
     if name == "LazyFrame":
         raise TypeError(f"got a {module} LazyFrame; call .collect() on it, or .sink_parquet(path)")
+    unnamed = f"got a {name}, which has no rows with named columns; {_WANTED}"
+    if module == "pandas":
+        raise TypeError(unnamed)
     if hasattr(source, "__arrow_c_stream__"):
         try:
             reader = pa.RecordBatchReader.from_stream(source)
         except (pa.ArrowInvalid, pa.ArrowTypeError, TypeError):
-            raise TypeError(f"got a {name}, which has no rows with named columns; {_WANTED}") from None
+            raise TypeError(unnamed) from None
         if module == "polars":
             return TableSource(reader.read_all(), "polars frame")
         return StreamSource(reader.schema, reader, f"{module} {name}")
