@@ -47,7 +47,7 @@ def resized(batches: Iterable[pa.RecordBatch]) -> Iterator[pa.RecordBatch]:
     Yields
     ------
     pyarrow.RecordBatch
-        With at least one row and at most 2**20.
+        With at least one row and at most 2**19.
 
     Examples
     --------

@@ -12,7 +12,7 @@ import pyarrow.parquet as pq
 
 from journeys.intake.arrays import from_numpy
 
-ROWS_AT_ONCE = 1 << 20
+ROWS_AT_ONCE = 1 << 19
 
 
 def parquet_batches(path: Path, columns: Sequence[str], text: Sequence[str]) -> Iterator[pa.RecordBatch]:

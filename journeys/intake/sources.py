@@ -72,7 +72,7 @@ class LogSource(ABC):
         Yields
         ------
         pyarrow.RecordBatch
-            At most 2**20 rows each; small neighbours are put together.
+            At most 2**19 rows each; small neighbours are put together.
 
         Raises
         ------

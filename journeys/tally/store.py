@@ -26,6 +26,8 @@ if TYPE_CHECKING:
 FORMAT_VERSION = 1
 HEAD = b"journeys"
 _TABLES = (*KEYS, "customers")
+# Rows of a table written at once: the columns that it lacks take room too.
+_ROWS_AT_ONCE = 1 << 18
 
 
 def columns_of(table: str) -> tuple[str, ...]:
@@ -72,7 +74,10 @@ def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | 
         ) as writer,
     ):
         for name in _TABLES:
-            writer.write_table(_as_arrow(name, getattr(tally, name), schema))
+            held = getattr(tally, name)
+            for begin in range(0, max(len(held["bucket"]), 1), _ROWS_AT_ONCE):
+                piece = {column: values[begin : begin + _ROWS_AT_ONCE] for column, values in held.items()}
+                writer.write_table(_as_arrow(name, piece, schema))
 
 
 def _schema() -> pa.Schema:
