@@ -8,8 +8,6 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-from journeys.intake.rules import JourneyRules
-
 
 @dataclass(frozen=True, slots=True)
 class Rows:
@@ -110,9 +108,6 @@ class EventCodes:
     >>> codes = EventCodes()
     >>> codes.encode(["visit", "basket", "visit"]).tolist(), codes.names
     ([0, 1, 0], ['visit', 'basket'])
-    >>> rules = JourneyRules("who", "when", "what", silence="30d", states={"visit": "seen"}, unmapped="drop")
-    >>> codes.targets(rules)
-    ('seen', None)
     """
 
     names: list[str] = field(default_factory=list)
@@ -141,16 +136,3 @@ class EventCodes:
                 self.names.append(name)
             codes[position] = code
         return codes
-
-    def targets(self, rules: JourneyRules) -> tuple[str | None, ...]:
-        """State or outcome each event counts as, by code; None where the rules drop it.
-
-        Parameters
-        ----------
-        rules : JourneyRules
-
-        Returns
-        -------
-        tuple of str or None, length n_names
-        """
-        return tuple(rules.target(name) for name in self.names)

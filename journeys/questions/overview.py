@@ -13,7 +13,6 @@ from journeys.errors import LogError
 from journeys.kernels.records import FIRST_OUTCOME, LAPSED, OPEN
 from journeys.models.fit import JourneyFit
 from journeys.questions.first_passage import FirstPassageResult, first_passage
-from journeys.questions.linear import leaning
 from journeys.questions.moves import MovesResult, moves
 from journeys.questions.outcomes import OutcomesResult, outcomes
 from journeys.questions.time_to_convert import IN_THE_END, SO_FAR, TimeToConvertResult, time_to_convert
@@ -144,15 +143,6 @@ class Overview:
             ),
         ]
         return pd.DataFrame(rows, columns=["line", "n", "of", "estimate", "low", "high", "note"])
-
-    def notes(self) -> list[tuple[str, str]]:
-        """Return what the matrix says of itself: pairs of a flag and the states it concerns."""
-        flags = self.fit.row_flags
-        told = [
-            (text, ", ".join(name for name, flag in flags.items() if flag == text))
-            for text in dict.fromkeys(flags.values())
-        ]
-        return [(text, names) for text, names in told if leaning(self.fit)[text][0]]
 
     def to_frame(self) -> pd.DataFrame:
         """Return every number of the summary, one tidy row each.
