@@ -204,9 +204,7 @@ def _rules(options: argparse.Namespace) -> JourneyRules:
 
 def check_limits(tally: Tally) -> None:
     """Raise a LimitError if more rows were unreadable than the rules allow."""
-    from journeys.intake.findings import UNREADABLE
-
-    n, limit = sum(tally.record.n(code) for code in UNREADABLE), tally.rules.limits["unreadable"]
+    n, limit = tally.record.n_unreadable, tally.rules.limits["unreadable"]
     if n > limit * tally.n_rows:
         msg = (
             f"{n:,} of {tally.n_rows:,} rows ({100 * n / tally.n_rows:.2f} %) have no readable customer, time or "

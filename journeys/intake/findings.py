@@ -118,6 +118,11 @@ class Findings:
         """
         return sum(count.n for (each, _), count in self._counts.items() if each == code)
 
+    @property
+    def n_unreadable(self) -> int:
+        """Rows without a readable customer, time or event; what `limits` is about."""
+        return sum(self.n(code) for code in UNREADABLE)
+
     def __add__(self, other: Findings) -> Findings:
         """Both accounts together; row numbers must be of the same input."""
         both = Findings()

@@ -10,7 +10,7 @@ from journeys.checks import DAY_US
 from journeys.errors import LogError
 from journeys.intake.arrays import indices_of, is_missing, numbers, plain, whole_numbers
 from journeys.intake.columns import as_text, decoded, event_names, is_in
-from journeys.intake.findings import UNREADABLE, Findings
+from journeys.intake.findings import Findings
 from journeys.intake.identity import bucket_major, customer_keys
 from journeys.intake.rows import EventCodes, Rows
 from journeys.intake.rule_checks import RESERVED
@@ -85,11 +85,6 @@ class Normaliser:
         if self.n_kept > 1 and self._all_midnight and not self.whole_days:
             extra.add("midnight_times", self.rules.time, self.n_kept)
         return self._found + extra
-
-    @property
-    def unreadable_share(self) -> float:
-        """Share of the rows read that lack a readable customer, time or event; what `limits` is about."""
-        return sum(self._found.n(code) for code in UNREADABLE) / max(self.n_rows, 1)
 
     def rows(self, batch: pa.RecordBatch) -> Rows:
         """Kept rows of the next batch.

@@ -10,7 +10,6 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from journeys.errors import JourneysWarning, LogError
-from journeys.intake.findings import UNREADABLE
 from journeys.intake.rules import JourneyRules
 from journeys.kernels.records import FIRST_OUTCOME, OPEN
 from journeys.models.model import JourneyModel, refuse_without_outcome
@@ -154,7 +153,7 @@ def _percent(share: float, digits: int = 1) -> str:
 
 
 def _unreadable(tally: Tally) -> tuple[str, str, str, str]:
-    n = sum(tally.record.n(code) for code in UNREADABLE)
+    n = tally.record.n_unreadable
     share, limit = n / max(tally.n_rows, 1), tally.rules.limits["unreadable"]
     verdict = GOOD if share <= limit else NO
     return (

@@ -20,8 +20,8 @@ class Sums:
 
     Parameters
     ----------
-    dwell_edges, elapsed_edges : ndarray of int64 or None
-        Bins of dwell and of elapsed time.
+    elapsed_edges : ndarray of int64 or None
+        Bins of elapsed time, from `kernels.bins`.
     moves : MoveSums
         The moves table.
     """

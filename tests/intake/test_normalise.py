@@ -52,7 +52,7 @@ def test_row_numbers_and_codes_go_on_over_batches():
     assert second.event.tolist() == [2, 0]
     assert counts(normaliser) == {"missing_event": ("what", 1, [5])}
     assert (normaliser.n_rows, normaliser.n_kept) == (6, 5)
-    assert normaliser.unreadable_share == pytest.approx(1 / 6)
+    assert normaliser.findings.n_unreadable * 6 == normaliser.n_rows
 
 
 def test_each_row_is_left_out_for_the_first_reason():
@@ -297,4 +297,4 @@ def test_dictionaries_of_times_and_customers():
 def test_an_empty_batch():
     (rows,), normaliser = read(batch(who=pa.array([], pa.int64()), when=(), what=pa.array([], pa.string())))
     assert len(rows) == 0
-    assert normaliser.unreadable_share == 0
+    assert normaliser.findings.n_unreadable == 0
