@@ -219,7 +219,7 @@ def inserted(old: NDArray[Any], where: IntArray, new: NDArray[Any]) -> NDArray[A
 
 
 def _prefixed(letter: str, records: Carried) -> dict[str, NDArray[Any]]:
-    columns = (
+    columns: tuple[NDArray[Any], ...] = (
         records.key, records.time, records.journey_start, records.visit_began, records.code, records.first_code,
         records.steps, records.n_events, records.decided, records.converted, records.sure,
     )  # fmt: skip
