@@ -191,7 +191,7 @@ def move_influence(
     ...     n=np.array([3.0, 1.0]), total=np.array([0.0, 0.0]), lower=np.array([0.0]),
     ...     upper=np.array([0.0]), open_state=no, open_bin=no, open_n=none, survivor_n=np.zeros(1))
     >>> split = BucketStays(2, np.array([0, 1, 1]), np.array([0, 0, 1]), np.array([2.0, 1.0, 1.0]),
-    ...     no, no, no, none, no, no, none)
+    ...     np.zeros(3), no, no, no, none, no, no, none)
     >>> move_influence(fit_stays(stays), stays, split)[0].tolist()
     [[0.125, -0.125], [-0.125, 0.125]]
     """
@@ -263,7 +263,7 @@ def cell_influence(
     ...     n=np.array([1.0, 3.0]), total=np.array([1.0, 6.0]), lower=np.array([0.0, 1.0]),
     ...     upper=np.array([1.0, 2.0]), open_state=no, open_bin=no, open_n=none, survivor_n=np.zeros(1))
     >>> split = BucketStays(2, np.array([0, 1, 1]), np.array([0, 1, 1]), np.array([1.0, 1.0, 2.0]),
-    ...     no, no, no, none, no, no, none)
+    ...     np.array([1.0, 2.0, 4.0]), no, no, no, none, no, no, none)
     >>> cell_influence(fit_stays(stays), stays, split, np.array([0.0, 1.0]), np.zeros(1)).tolist()
     [-0.1875, 0.1875]
     """

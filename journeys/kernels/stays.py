@@ -100,8 +100,8 @@ class BucketStays:
     ----------
     n_buckets : int
         Number of buckets.
-    bucket, cell, n : arrays, shape (n_ended,)
-        Ended stays: bucket, index into the cells of the `Stays`, number of stays.
+    bucket, cell, n, total : arrays, shape (n_ended,)
+        Ended stays: bucket, index into the cells of the `Stays`, number of stays, summed dwell in days.
     open_bucket, open_state, open_bin, open_n : arrays, shape (n_open,)
         Open stays.
     survivor_bucket, survivor_state, survivor_n : arrays, shape (n_survivors,)
@@ -112,6 +112,7 @@ class BucketStays:
     bucket: IntArray
     cell: IntArray
     n: FloatArray
+    total: FloatArray
     open_bucket: IntArray
     open_state: IntArray
     open_bin: IntArray
@@ -119,3 +120,25 @@ class BucketStays:
     survivor_bucket: IntArray
     survivor_state: IntArray
     survivor_n: FloatArray
+
+
+@dataclass(frozen=True, eq=False)
+class FittedStays:
+    """What a chain was fitted to, and what was estimated from it cell by cell.
+
+    Attributes
+    ----------
+    stays : Stays
+        The stays of all customers together.
+    by_bucket : BucketStays
+        The same stays by bucket of customers.
+    found : StayFit
+        The estimates; its moves are numbered as in `StayFit`.
+    move : int array, shape (n_moves of `found`,)
+        Place of each of those moves among the moves of the chain, which may hold more (dead ends).
+    """
+
+    stays: Stays
+    by_bucket: BucketStays
+    found: StayFit
+    move: IntArray

@@ -14,6 +14,7 @@ import numpy as np
 from journeys.errors import DeadEndWarning
 from journeys.kernels.arrays import BoolArray, FloatArray, IntArray
 from journeys.kernels.graph import Classes, classify
+from journeys.kernels.stays import FittedStays
 from journeys.models.stays import Nodes
 
 if TYPE_CHECKING:
@@ -58,6 +59,8 @@ class JourneyFit:
         The counts behind the fit; None for a known chain.
     influence : Influence or None
         None for a known chain, which has no uncertainty.
+    fitted_stays : FittedStays or None
+        The binned stays behind the moves, in all and by bucket; None for a known chain.
 
     Examples
     --------
@@ -80,6 +83,7 @@ class JourneyFit:
     open_moves: str
     tally: Tally | None = None
     influence: Influence | None = None
+    fitted_stays: FittedStays | None = None
 
     @property
     def states(self) -> tuple[str, ...]:

@@ -12,7 +12,7 @@ from journeys.errors import EndNotSeenWarning, JourneysWarning, LogError, ShortL
 from journeys.kernels.arrays import BoolArray, FloatArray, sum_at
 from journeys.kernels.records import FIRST_OUTCOME
 from journeys.kernels.sojourn import StayFit, fit_stays, move_influence
-from journeys.kernels.stays import Stays
+from journeys.kernels.stays import FittedStays, Stays
 from journeys.models.fit import Influence, JourneyFit, with_dead_ends
 from journeys.models.stays import move_stays, nodes_of, without_open
 from journeys.tally.tally import Tally
@@ -119,6 +119,8 @@ class JourneyModel:
             row_flags,
         )
         pad = kept < 0
+        place = np.empty(len(found.probability), np.int64)
+        place[kept[~pad]] = np.flatnonzero(~pad)
         influence = Influence(*(np.where(pad, 0.0, part[:, kept]) for part in (d_probability, d_mean, d_second)))
         return JourneyFit(
             nodes=nodes,
@@ -133,6 +135,7 @@ class JourneyModel:
             open_moves=self.open_moves,
             tally=tally,
             influence=influence,
+            fitted_stays=FittedStays(stays, by_bucket, found, place),
         )
 
     def _look_at_ends(

@@ -43,7 +43,7 @@ class Rows:
             self.state[~ended], 2 * at[~ended] + 1, np.ones((~ended).sum()), np.zeros(n_states),
         )  # fmt: skip
         self.buckets = BucketStays(
-            len(rows), rows[ended], cell, np.ones(ended.sum()),
+            len(rows), rows[ended], cell, np.ones(ended.sum()), self.cell_time[cell],
             rows[~ended], self.state[~ended], 2 * at[~ended] + 1, np.ones((~ended).sum()), no, no, none,
         )  # fmt: skip
         self.fit = fit_stays(self.stays)
@@ -231,7 +231,7 @@ def test_clustered_transitions(reference, shared) -> None:
     edges = np.zeros(1), np.ones(1)
     stays = Stays(3, 3, 1, i, j, 0 * i, n, n, *edges, no, no, none, np.zeros(3))
     one = np.ones(cell.size)
-    buckets = BucketStays(len(path), people.ravel(), cell.ravel(), one, no, no, no, none, no, no, none)
+    buckets = BucketStays(len(path), people.ravel(), cell.ravel(), one, one, no, no, no, none, no, no, none)
     fit = fit_stays(stays)
     influence = move_influence(fit, stays, buckets)[0]
     plain = np.sqrt((influence**2).sum(axis=0)).reshape(3, 3)
@@ -332,7 +332,7 @@ def each_alone(s: Stays) -> tuple[BucketStays, list[tuple[str, int]]]:
     """A bucket for every kind of stay, holding one of it."""
     c, o, m = len(s.n), len(s.open_n), s.n_states
     buckets = BucketStays(
-        c + o + m, np.arange(c), np.arange(c), np.ones(c),
+        c + o + m, np.arange(c), np.arange(c), np.ones(c), s.total / s.n,
         c + np.arange(o), s.open_state, s.open_bin, np.ones(o),
         c + o + np.arange(m), np.arange(m), np.ones(m),
     )  # fmt: skip
@@ -379,7 +379,7 @@ def test_influence_where_all_at_risk_end() -> None:
     fit = fit_stays(stays)
     assert fit.hazard_all[0].tolist() == [1 / 3, 1.0, 0.0]
     assert fit.survival_end.tolist() == [0.0, 0.0]
-    buckets = BucketStays(5, np.arange(5), np.arange(5), np.ones(5), no, no, no, none, no, no, none)
+    buckets = BucketStays(5, np.arange(5), np.arange(5), np.ones(5), b + 0.5, no, no, no, none, no, no, none)
     fast = move_influence(fit, stays, buckets)[0]
     for kind in range(5):
         expected = difference(stays, ("n", kind), lambda x: x.probability, 0.5)
@@ -396,7 +396,7 @@ def split_at_random(s: Stays, g: int, seed: int) -> BucketStays:
         return bucket, index, parts[bucket, index].astype(float)
 
     (eb, ec, en), (ob, oi, on), (sb, si, sn) = deal(s.n), deal(s.open_n), deal(s.survivor_n)
-    return BucketStays(g, eb, ec, en, ob, s.open_state[oi], s.open_bin[oi], on, sb, si, sn)
+    return BucketStays(g, eb, ec, en, en * (s.total / s.n)[ec], ob, s.open_state[oi], s.open_bin[oi], on, sb, si, sn)
 
 
 @pytest.mark.parametrize("g", [4, 300])  # full and nearly empty tables: both kinds of product
