@@ -27,6 +27,7 @@ class SlowTally:
     moves: dict[tuple[int, str, str, int, bool], tuple[int, ...]] = field(default_factory=dict)
     entries: dict[tuple[int, str, bool], int] = field(default_factory=dict)
     journeys: dict[tuple[int, str, str, int, bool], tuple[int, ...]] = field(default_factory=dict)
+    gaps: dict[tuple[int, str, int, bool], tuple[int, ...]] = field(default_factory=dict)
     customers: dict[int, tuple[int, ...]] = field(default_factory=dict)
     findings: dict[str, int] = field(default_factory=dict)
 
@@ -250,12 +251,14 @@ class CustomerReader:
             return
 
         if self.is_outcome(prev):
+            self.absence(prev.name, gap, back=True)
             self.start_journey(row, first_row=False)
             return
 
         silent = self.rules.silence_us is not None and gap > self.rules.silence_us
         if silent:
             self.lapse(prev, n_rows_before=position)
+            self.absence("lapsed", gap, back=True)
             self.start_journey(row, first_row=False)
             return
 
@@ -298,14 +301,22 @@ class CustomerReader:
     def read_end(self) -> None:
         """At ``as_of`` a journey still running has lapsed, or is open."""
         last = self.history[-1]
+        away = self.rules.as_of_us - last.time
         if self.is_outcome(last):
+            if self.rules.after_outcome == "reopen":
+                self.absence(last.name, away, back=False)
             return
         n_rows = len(self.history)
-        if self.rules.silence_us is not None and self.rules.as_of_us - last.time >= self.rules.silence_us:
+        if self.rules.silence_us is not None and away >= self.rules.silence_us:
             self.lapse(last, n_rows_before=n_rows)
+            self.absence("lapsed", away, back=False)
         else:
             self.move("open", self.rules.as_of_us, n_rows)
             self.end_journey("open", self.rules.as_of_us)
+
+    def absence(self, after: str, away: int, *, back: bool) -> None:
+        """Count how long a customer was away after the last event of a journey that had ended."""
+        add(self.tally.gaps, (self.bucket, after, self.rules.elapsed_bin(away), back), 1, away)
 
     def move(self, to: str, at: int, n_rows_before: int) -> None:
         """Count a move out of the present visit, its dwell reckoned from the visit's start."""

@@ -49,6 +49,9 @@ typedef struct {
     uint8_t *b_bucket;
     int32_t *b_state;
     uint8_t *b_sure;
+    uint8_t *g_bucket;
+    int32_t *g_outcome;
+    int64_t *g_away;
     int64_t *repeated, *bare, *again;
     /* cells: n_bins is 0 where there are none */
     uint32_t *cell_n;
@@ -59,7 +62,7 @@ typedef struct {
     /* the rules; silence is -1 where none is given */
     int64_t first_state, first_churned, silence, same_outcome, merge, log_start, complete, busy_after;
     /* how many of each were written, and what the cells gained */
-    int64_t n_moves, n_ends, n_begun, n_fresh, n_repeated, n_bare, n_again, unsure_visits;
+    int64_t n_moves, n_ends, n_begun, n_gaps, n_fresh, n_repeated, n_bare, n_again, unsure_visits;
     double gained;
 } Walk;
 
@@ -183,6 +186,12 @@ EXPORT int64_t journeys_walk(Walk *w)
                 continue;
             } else if (prev != 0) {
                 w->again[w->n_again++] = i;
+            }
+            if (begins && prev != 0) {
+                int64_t g = w->n_gaps++;
+                w->g_bucket[g] = (uint8_t)bucket;
+                w->g_outcome[g] = (int32_t)(lapses ? LAPSED : prev);
+                w->g_away[g] = now - last;
             }
             if (begins) {
                 sure = prev != 0 || w->complete || (w->silence >= 0 && now >= w->log_start + w->silence);

@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 
 from journeys.kernels.arrays import IntArray
 from journeys.kernels.bins import LONGEST_US
-from journeys.kernels.records import FIRST_OUTCOME, Carried, Cells, Counted, Ends, Entries, Moves, Reading
+from journeys.kernels.records import FIRST_OUTCOME, Carried, Cells, Counted, Ends, Entries, Gaps, Moves, Reading
 
 _OUT_OF_ORDER = 1
 _NO_SILENCE = -1
@@ -32,10 +32,10 @@ _FIELDS = (
     "n_carried", *(f"c_{name}" for name in _CARRIED), *(f"f_{name}" for name in _CARRIED),
     "m_bucket", "m_state", "m_next", "m_dwell", "m_busy",
     "e_bucket", "e_state", "e_outcome", "e_sure", "e_steps", "e_elapsed",
-    "b_bucket", "b_state", "b_sure", "repeated", "bare", "again",
+    "b_bucket", "b_state", "b_sure", "g_bucket", "g_outcome", "g_away", "repeated", "bare", "again",
     "cell_n", "cell_rest", "lower", "upper", "guess", "n_bins", "first_bucket", "n_states", "whole_days",
     "first_state", "first_churned", "silence", "same_outcome", "merge", "log_start", "complete", "busy_after",
-    "n_moves", "n_ends", "n_begun", "n_fresh", "n_repeated", "n_bare", "n_again", "unsure_visits",
+    "n_moves", "n_ends", "n_begun", "n_gaps", "n_fresh", "n_repeated", "n_bare", "n_again", "unsure_visits",
 )  # fmt: skip
 
 
@@ -115,6 +115,7 @@ def count_in_order(
     moves = Moves(_bytes(2 * n), _codes(2 * n), _codes(2 * n), _times(2 * n), _flags(2 * n))
     ends = Ends(_bytes(2 * n), _codes(2 * n), _codes(2 * n), _flags(2 * n), _times(2 * n), _times(2 * n))
     begun = Entries(_bytes(n), _codes(n), _flags(n))
+    gaps = Gaps(_bytes(n), _codes(n), _times(n), back=True)
     marked = {"repeated": _times(n), "bare": _times(n), "again": _times(n)}
     fresh = Carried.zeros(n, visits=reading.merge_repeats)
     guess = _bin_guess(cells.upper.tobytes())
@@ -124,7 +125,8 @@ def count_in_order(
         "m_bucket": moves.bucket, "m_state": moves.state, "m_next": moves.next_code, "m_dwell": moves.dwell,
         "m_busy": moves.busy, "e_bucket": ends.bucket, "e_state": ends.state, "e_outcome": ends.outcome,
         "e_sure": ends.sure, "e_steps": ends.steps, "e_elapsed": ends.elapsed, "b_bucket": begun.bucket,
-        "b_state": begun.state, "b_sure": begun.sure, "cell_n": cells.n, "cell_rest": cells.rest,
+        "b_state": begun.state, "b_sure": begun.sure, "g_bucket": gaps.bucket, "g_outcome": gaps.outcome,
+        "g_away": gaps.away, "cell_n": cells.n, "cell_rest": cells.rest,
         "lower": cells.lower, "upper": cells.upper, "guess": guess,
     }  # fmt: skip
     # Held until the loop is done: an array that had to be copied is in no other hands.
@@ -144,6 +146,7 @@ def count_in_order(
         moves=(_first(moves, walk.n_moves),),
         entries=_first(begun, walk.n_begun),
         ends=(_first(ends, walk.n_ends),),
+        gaps=Gaps(*(column[: walk.n_gaps] for column in (gaps.bucket, gaps.outcome, gaps.away)), back=True),
         repeated=marked["repeated"][: walk.n_repeated],
         bare=marked["bare"][: walk.n_bare],
         again=marked["again"][: walk.n_again],

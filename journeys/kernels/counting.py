@@ -10,7 +10,19 @@ from numpy.typing import NDArray
 
 from journeys.kernels.arrays import BoolArray as Bools
 from journeys.kernels.arrays import IntArray as Ints
-from journeys.kernels.records import FIRST_OUTCOME, LAPSED, OPEN, Carried, Counted, Ends, Entries, Moves, Reading
+from journeys.kernels.records import (
+    FIRST_OUTCOME,
+    LAPSED,
+    OPEN,
+    Carried,
+    Closed,
+    Counted,
+    Ends,
+    Entries,
+    Gaps,
+    Moves,
+    Reading,
+)
 
 Codes = NDArray[np.int32]
 Buckets = NDArray[np.uint8]
@@ -115,14 +127,16 @@ def count_rows(block: Block, reading: Reading) -> tuple[Counted, Carried]:
         ),
     )  # fmt: skip
     begun = story.begun
-    again = begun[~marks.silent[begun] & (marks.prev_code[begun] >= FIRST_OUTCOME)]
+    back = begun[marks.prev_code[begun] >= FIRST_OUTCOME]
+    after = np.where(marks.silent[back], np.int32(LAPSED), marks.prev_code[back])
     counted = Counted(
         moves=moves,
         entries=Entries(block.bucket[owner[begun]], block.code[begun], story.sure_begun),
         ends=ends,
+        gaps=Gaps(block.bucket[owner[back]], after, block.time[back] - marks.prev_time[back], back=True),
         repeated=marks.repeated,
         bare=begun[block.code[begun] < reading.first_state],
-        again=again,
+        again=back[after != LAPSED],
         unsure_visits=unsure_visits,
     )
     n = len(block.start)
@@ -131,8 +145,8 @@ def count_rows(block: Block, reading: Reading) -> tuple[Counted, Carried]:
     return counted, _latest(block, story, decided, np.bincount(won, minlength=n))
 
 
-def close_log(carried: Carried, bucket: Buckets, reading: Reading) -> tuple[Moves, Ends, int]:
-    """Return the moves and journeys that the end of the log decides or leaves open.
+def close_log(carried: Carried, bucket: Buckets, reading: Reading) -> Closed:
+    """Return the moves, journeys and absences that the end of the log decides or leaves open.
 
     Parameters
     ----------
@@ -145,17 +159,15 @@ def close_log(carried: Carried, bucket: Buckets, reading: Reading) -> tuple[Move
 
     Returns
     -------
-    moves : Moves
-        One lapsed or open stay per running journey (first visits of unsure journeys left out under merging).
-    ends : Ends
-        One lapsed or open journey each.
-    unsure_visits : int
-        Stays left out.
+    Closed
+        One lapsed or open stay per running journey (first visits of unsure journeys left out under merging), one
+        lapsed or open journey each, and the absence of everyone whose last journey has ended.
 
     Notes
     -----
     Lapses are counted in `carried.decided`.
     """
+    gaps = _absent(carried, bucket, reading)
     running = np.flatnonzero((carried.code >= reading.first_state) & ~carried.story_over)
     held, bucket = carried.take(running), bucket[running]
     if reading.silence_us is None:
@@ -177,7 +189,19 @@ def close_log(carried: Carried, bucket: Buckets, reading: Reading) -> tuple[Move
         until - held.journey_start,
     )  # fmt: skip
     carried.decided[running] += lapsed
-    return moves, ends, int((~keep).sum())
+    return Closed(moves, ends, gaps, int((~keep).sum()))
+
+
+def _absent(carried: Carried, bucket: Buckets, reading: Reading) -> Gaps:
+    """Return the absences of customers whose last journey has ended and who have not come back."""
+    away = reading.as_of_us - carried.time
+    ended = carried.code < reading.first_state
+    if reading.silence_us is not None:
+        ended |= away >= reading.silence_us
+    gone = np.flatnonzero(ended & ~carried.story_over)
+    code = carried.code[gone]
+    after = np.where(code < reading.first_state, code, np.int32(LAPSED))
+    return Gaps(bucket[gone], after, away[gone], back=False)
 
 
 def _marks(block: Block, reading: Reading) -> _Marks:

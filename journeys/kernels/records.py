@@ -186,6 +186,26 @@ class Ends:
 
 
 @dataclass(frozen=True)
+class Gaps:
+    """One element per customer's absence: how the journey before it ended, how long since the last event, whether over."""
+
+    bucket: NDArray[np.uint8]
+    outcome: NDArray[np.int32]
+    away: Ints
+    back: bool
+
+
+@dataclass(frozen=True)
+class Closed:
+    """What the end of the log adds; `unsure_visits` counts stays left out."""
+
+    moves: Moves
+    ends: Ends
+    gaps: Gaps
+    unsure_visits: int
+
+
+@dataclass(frozen=True)
 class Counted:
     """What one block of rows adds.
 
@@ -196,6 +216,7 @@ class Counted:
     moves: tuple[Moves, ...]
     entries: Entries
     ends: tuple[Ends, ...]
+    gaps: Gaps
     repeated: Ints
     bare: Ints
     again: Ints

@@ -142,10 +142,9 @@ class Counter:
         for begin in range(0, len(self._carried.key), CHUNK_ROWS):
             carried = self._carried.take(slice(begin, begin + CHUNK_ROWS))
             bucket = bucket_of_major(carried.key).astype(np.uint8)
-            moves, ends, unsure_visits = close_log(carried, bucket, self._reading)
-            self._sums.add_moves(moves, self._n_states)
-            self._sums.add_ends(ends)
-            self._findings.add("first_visit_of_unsure_journey", self._leave_out.time, unsure_visits)
+            closed = close_log(carried, bucket, self._reading)
+            self._sums.close(closed, self._n_states)
+            self._findings.add("first_visit_of_unsure_journey", self._leave_out.time, closed.unsure_visits)
             self._sums.add_customers(carried, bucket)
         self._carried = self._blank(0)
 

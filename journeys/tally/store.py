@@ -18,14 +18,13 @@ from journeys.files import written_whole
 from journeys.intake.arrays import from_numpy, from_texts
 from journeys.intake.findings import Findings
 from journeys.intake.rules import JourneyRules
-from journeys.tally.tally import CUSTOMER_SUMS, KEYS, NARROW, SUMS, Tally
+from journeys.tally.tally import CUSTOMER_SUMS, KEYS, NARROW, SUMS, TABLES, Tally
 
 if TYPE_CHECKING:
     from journeys.tally.accumulate import Columns
 
-FORMAT_VERSION = 1
+FORMAT_VERSION = 2
 HEAD = b"journeys"
-_TABLES = (*KEYS, "customers")
 # Rows of a table written at once: the columns that it lacks take room too.
 _ROWS_AT_ONCE = 1 << 18
 
@@ -73,7 +72,7 @@ def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | 
             part, schema, compression="zstd", compression_level=1, use_dictionary=runs, write_statistics=False
         ) as writer,
     ):
-        for name in _TABLES:
+        for name in TABLES:
             held = getattr(tally, name)
             for begin in range(0, max(len(held["bucket"]), 1), _ROWS_AT_ONCE):
                 piece = {column: values[begin : begin + _ROWS_AT_ONCE] for column, values in held.items()}
@@ -82,7 +81,7 @@ def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | 
 
 def _schema() -> pa.Schema:
     """Return the columns of all tables, each with the type that is enough for it."""
-    every = dict.fromkeys(column for table in _TABLES for column in columns_of(table))
+    every = dict.fromkeys(column for table in TABLES for column in columns_of(table))
     narrow = {name: pa.from_numpy_dtype(kind) for name, kind in NARROW.items()}
     return pa.schema([("table", pa.string()), *((name, narrow.get(name, pa.int64())) for name in every)])
 
@@ -162,7 +161,7 @@ def _checksum(tally: Tally) -> str:
 
 def _from_parts(table: pa.Table, head: dict[str, Any]) -> Tally:
     held: dict[str, Columns] = {}
-    for name in _TABLES:
+    for name in TABLES:
         rows = table.filter(pc.equal(table["table"], name))
         narrow = {} if name == "customers" else NARROW
         held[name] = {

@@ -32,18 +32,22 @@ KEYS: dict[str, tuple[str, ...]] = {
     "moves": ("bucket", "state", "next", "bin", "busy"),
     "entries": ("bucket", "state", "-", "-", "sure"),
     "journeys": ("bucket", "state", "outcome", "bin", "sure"),
+    "gaps": ("bucket", "outcome", "-", "bin", "back"),
 }
 SUMS: dict[str, tuple[str, ...]] = {
     "moves": ("n", "dwell_high", "dwell_low"),
     "entries": ("n",),
     "journeys": ("n", "steps", "steps_squared", "elapsed_high", "elapsed_low"),
+    "gaps": ("n", "away_high", "away_low"),
 }
 CUSTOMER_SUMS = ("people", "j", "jj", "jx", "x", "xx")
+TABLES = (*KEYS, "customers")
 _CODED = ("state", "next", "outcome")
+_FLAGS = ("sure", "busy", "back")
 # Parts of a key in the fewest bytes that hold them; everything else is int64.
 NARROW: dict[str, type[np.generic]] = {
     "bucket": np.uint8, "state": np.uint16, "next": np.uint16, "outcome": np.uint16, "bin": np.int32,
-    "sure": np.bool_, "busy": np.bool_,
+    "sure": np.bool_, "busy": np.bool_, "back": np.bool_,
 }  # fmt: skip
 
 
@@ -75,7 +79,7 @@ class Tally:
         True where the log holds dates without a time.
     n_rows : int
         Rows read, whatever became of them.
-    moves, entries, journeys, customers : mapping of str to ndarray
+    moves, entries, journeys, gaps, customers : mapping of str to ndarray
         The tables, one array per column, sorted by their keys; states and outcomes as positions in `labels`.
     record : Findings
         What was left out or looked odd.
@@ -100,6 +104,7 @@ class Tally:
     moves: Columns
     entries: Columns
     journeys: Columns
+    gaps: Columns
     customers: Columns
     record: Findings
 
@@ -148,7 +153,7 @@ class Tally:
 
         Parameters
         ----------
-        name : {"moves", "entries", "journeys", "customers"}
+        name : {"moves", "entries", "journeys", "gaps", "customers"}
             Which table.
 
         Returns
@@ -163,16 +168,10 @@ class Tally:
         """
         import pandas as pd
 
-        tables = {
-            "moves": self.moves,
-            "entries": self.entries,
-            "journeys": self.journeys,
-            "customers": self.customers,
-        }
-        if name not in tables:
-            msg = f"table {name!r} is not known; wanted one of {', '.join(tables)}"
+        if name not in TABLES:
+            msg = f"table {name!r} is not known; wanted one of {', '.join(TABLES)}"
             raise ValueError(msg)
-        columns = tables[name]
+        columns: Columns = getattr(self, name)
         labels = np.array(self.labels, dtype=object)
         frame: dict[str, Any] = {}
         for column, values in columns.items():
@@ -184,7 +183,7 @@ class Tally:
             elif column in _CODED:
                 frame[column] = labels[values]
             else:
-                frame[column] = values.astype(bool) if column in ("sure", "busy") else values
+                frame[column] = values.astype(bool) if column in _FLAGS else values
         return pd.DataFrame(frame)
 
     @cached_property
@@ -199,8 +198,8 @@ class Tally:
             self.n_rows,
         ]
         digest = blake2b(json.dumps(head, sort_keys=True).encode(), digest_size=16)
-        for table in (self.moves, self.entries, self.journeys, self.customers):
-            for name, column in table.items():
+        for table in TABLES:
+            for name, column in getattr(self, table).items():
                 digest.update(name.encode())
                 plain = np.ascontiguousarray(column, column.dtype.newbyteorder("<"))
                 digest.update(plain.view(np.uint8).data)
@@ -252,9 +251,7 @@ class Tally:
             n_rows=self.n_rows + other.n_rows,
             record=self.record + other.record,
             customers=people,
-            moves=tables["moves"],
-            entries=tables["entries"],
-            journeys=tables["journeys"],
+            **tables,
         )
 
     def _kinds_of_times(self, other: Tally) -> tuple[bool, bool]:
@@ -273,9 +270,9 @@ class Tally:
         return {
             name: {
                 column: new[values].astype(NARROW[column]) if column in _CODED else values
-                for column, values in table.items()
+                for column, values in getattr(self, name).items()
             }
-            for name, table in (("moves", self.moves), ("entries", self.entries), ("journeys", self.journeys))
+            for name in KEYS
         }
 
     def save(self, path: str | os.PathLike[str]) -> None:

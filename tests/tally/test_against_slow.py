@@ -132,6 +132,8 @@ def compare(log: RandomLog, how: How) -> None:
         ["n", "steps", "steps_squared", "elapsed"],
     )
     assert journeys == slow.journeys
+    gaps = keyed(tally.table("gaps"), ["bucket", "outcome", "bin", "back"], ["n", "away"])
+    assert gaps == slow.gaps
     people = tally.table("customers")
     people = people[people["people"] > 0]
     customers = keyed(people, ["bucket"], ["people", "j", "jj", "jx", "x", "xx", "largest_events"])
