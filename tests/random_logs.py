@@ -9,7 +9,9 @@ from __future__ import annotations
 
 import datetime as dt
 from collections.abc import Sequence
+from functools import partial
 from typing import Any, NamedTuple, Protocol, TypeVar
+from zoneinfo import ZoneInfo
 
 import numpy as np
 import pandas as pd
@@ -128,9 +130,13 @@ def random_row(
     if "sequence" in rules and not (faults and once_in(chance, 12)):
         sequence = chance.whole(0, 2)
     ended = once_in(chance, 4) if "ended_before" in rules else None
-    columns = {}
+    columns: dict[str, Any] = {}
     if "exclude" in rules:
         columns["staff"] = pick(chance, ("no", "no", "yes", "test", None))
+    if "country" in rules.get("by", ()):
+        columns["country"] = pick(chance, ("NL", "BE", "NL", None, ""))
+    if "size" in rules.get("by", ()):
+        columns["size"] = chance.whole(1, 3)
     return (*cells, sequence, ended, columns)
 
 
@@ -193,8 +199,47 @@ def random_rules(chance: Chance, whole_days: bool, n_ticks: int) -> tuple[dict[s
         if once_in(chance, 2):
             rules["states"]["noise"] = None
         rules["unmapped"] = pick(chance, ("keep", "drop", "other", "visit"))
-    slow |= {key: rules[key] for key in ("after_outcome", "exclude", "states", "unmapped") if key in rules}
+    names = ("after_outcome", "exclude", "states", "unmapped")
+    if once_in(chance, 4):
+        random_groups(chance, rules, slow, whole_days, n_ticks)
+    if once_in(chance, 4):
+        rules["opens"] = slow["opens"] = list(pick(chance, (["visit"], ["price", "visit"], ["price"], ["nowhere"])))
+    if once_in(chance, 4):
+        rules["stages"] = slow["stages"] = pick(chance, (["visit", "price"], ["price", "nowhere", "visit"], ["price"]))
+    slow |= {key: rules[key] for key in names if key in rules}
     return rules, slow
+
+
+def random_groups(
+    chance: Chance, rules: dict[str, Any], slow: dict[str, Any], whole_days: bool, n_ticks: int
+) -> None:
+    """Add rules that group journeys, the same for both readings."""
+    by = [name for name in ("country", "size", "came_after") if once_in(chance, 2)]
+    if once_in(chance, 2):
+        rules["cohort"] = pick(chance, ("day", "week", "month"))
+        rules["timezone"] = pick(chance, ("Europe/Amsterdam", "UTC", "America/New_York"))
+        slow["cohort_of"] = partial(cohort_of, rules["cohort"], "UTC" if whole_days else rules["timezone"])
+        by.append("cohort")
+    first, last = (slow[name] for name in ("log_start_us", "as_of_us"))
+    if once_in(chance, 2):
+        unit = DAY_US if whole_days else HOUR_US
+        ticks = {chance.whole(0, n_ticks) for _ in range(chance.whole(1, 2))}
+        cuts = sorted(cut for cut in (START_US + unit * tick for tick in ticks) if first < cut <= last)
+        if cuts:
+            rules["split_at"] = [as_text(cut, whole_days) for cut in cuts]
+            slow["splits_us"] = cuts
+            by.append("period")
+    if by:
+        rules["by"] = slow["by"] = by
+
+
+def cohort_of(cohort: str, timezone: str, time_us: int) -> str:
+    """Return the name of the cohort that a moment lies in."""
+    when = dt.datetime(1970, 1, 1, tzinfo=dt.UTC) + dt.timedelta(microseconds=time_us)
+    day = when.astimezone(ZoneInfo(timezone)).date()
+    if cohort == "month":
+        return f"{day:%Y-%m}"
+    return (day - dt.timedelta(days=day.weekday() if cohort == "week" else 0)).isoformat()
 
 
 def as_text(time_us: int, whole_days: bool) -> str:
@@ -220,6 +265,11 @@ def as_frame(
         frame["ended"] = pd.array(ended, dtype="bool")
     if "exclude" in rules:
         frame["staff"] = pd.array([cells["staff"] for cells in columns], dtype="string")
+    if "country" in rules.get("by", ()):
+        countries = pd.array([cells["country"] for cells in columns], dtype="string")
+        frame["country"] = pd.Series(countries).astype("category") if once_in(chance, 3) else countries
+    if "size" in rules.get("by", ()):
+        frame["size"] = pd.array([cells["size"] for cells in columns], dtype="int64")
     return frame
 
 

@@ -22,12 +22,13 @@ LogRow = tuple[Any, Any, Any, Any, Any, dict[str, Any]]
 
 @dataclass
 class SlowTally:
-    """The tables of counts and exact sums, keyed by plain tuples."""
+    """The tables of counts and exact sums, keyed by plain tuples; where journeys are grouped, the group comes last."""
 
-    moves: dict[tuple[int, str, str, int, bool], tuple[int, ...]] = field(default_factory=dict)
-    entries: dict[tuple[int, str, bool], int] = field(default_factory=dict)
-    journeys: dict[tuple[int, str, str, int, bool], tuple[int, ...]] = field(default_factory=dict)
-    gaps: dict[tuple[int, str, int, bool], tuple[int, ...]] = field(default_factory=dict)
+    moves: dict[tuple[Any, ...], tuple[int, ...]] = field(default_factory=dict)
+    entries: dict[tuple[Any, ...], int] = field(default_factory=dict)
+    journeys: dict[tuple[Any, ...], tuple[int, ...]] = field(default_factory=dict)
+    gaps: dict[tuple[Any, ...], tuple[int, ...]] = field(default_factory=dict)
+    stages: dict[tuple[Any, ...], tuple[int, ...]] = field(default_factory=dict)
     customers: dict[int, tuple[int, ...]] = field(default_factory=dict)
     findings: dict[str, int] = field(default_factory=dict)
 
@@ -43,6 +44,7 @@ class Row:
     sequence: Any
     ended: bool
     place: int
+    columns: dict[str, Any]
 
 
 @dataclass
@@ -55,6 +57,9 @@ class Journey:
     visits: int
     visit_state: str
     visit_start: int
+    group: dict[str, Any]
+    n_stages: int = 0
+    stage_start: int = 0
 
 
 def read_log(
@@ -73,6 +78,11 @@ def read_log(
     as_of_us: int,
     log_start_us: int,
     complete_history: bool = False,
+    opens: Sequence[str] = (),
+    by: Sequence[str] = (),
+    cohort_of: Callable[[int], str] | None = None,
+    splits_us: Sequence[int] = (),
+    stages: Sequence[str] = (),
     whole_days: bool = False,
     bucket_of: Callable[[Any], int],
     dwell_bin: Callable[[int], int],
@@ -92,16 +102,17 @@ def read_log(
         if reason is not None:
             found(tally, reason)
             continue
-        customer, time, event, sequence, ended, _ = raw
+        customer, time, event, sequence, ended, columns = raw
         name = mapped(event, rules)
         assert name is not None
-        row = Row(customer, time, event, name, sequence, bool(ended), place)
+        row = Row(customer, time, event, name, sequence, bool(ended), place, columns)
         by_customer.setdefault(customer, []).append(row)
     for customer_rows in by_customer.values():
         history = put_in_order(customer_rows)
         history = without_duplicates(history, rules, tally)
         history = without_ended_before(history, tally)
         history = without_after_outcome(history, rules, tally)
+        history = from_openers(history, rules, tally)
         if history:
             CustomerReader(history, rules, tally).read()
     return tally
@@ -213,6 +224,29 @@ def without_after_outcome(history: list[Row], rules: Rules, tally: SlowTally) ->
     return history
 
 
+def from_openers(history: list[Row], rules: Rules, tally: SlowTally) -> list[Row]:
+    """Leave out rows that would begin a journey but may not, unless the journey may have begun before the log."""
+    if not rules.opens:
+        return history
+    kept: list[Row] = []
+    for row in history:
+        new = not kept
+        silent = not new and rules.silence_us is not None and row.time - kept[-1].time > rules.silence_us
+        begins = new or silent or kept[-1].name in rules.outcomes
+        unsure = new and not is_sure(row, rules)
+        if begins and not unsure and row.name not in rules.opens and row.name not in rules.outcomes:
+            found(tally, "before_opener")
+        else:
+            kept.append(row)
+    return kept
+
+
+def is_sure(row: Row, rules: Rules) -> bool:
+    """Say whether a customer's first row surely begins a journey."""
+    late = rules.silence_us is not None and row.time >= rules.log_start_us + rules.silence_us
+    return bool(rules.complete_history or late)
+
+
 class CustomerReader:
     """Reads one customer's ordered rows into the tally."""
 
@@ -222,6 +256,7 @@ class CustomerReader:
         self.tally = tally
         self.bucket = rules.bucket_of(history[0].customer)
         self.journey: Journey | None = None
+        self.group: dict[str, Any] = {}
         self.n_decided = 0
         self.n_converted = 0
 
@@ -240,7 +275,7 @@ class CustomerReader:
         """Read one row. ``position`` is also the number of this customer's kept rows before it."""
         row = self.history[position]
         if position == 0:
-            self.start_journey(row, first_row=True)
+            self.start_journey(row, came_after="new")
             return
         prev = self.history[position - 1]
         gap = row.time - prev.time
@@ -251,32 +286,85 @@ class CustomerReader:
             return
 
         if self.is_outcome(prev):
-            self.absence(prev.name, gap, back=True)
-            self.start_journey(row, first_row=False)
+            self.absence(prev.name, prev.time, row.time, back=True)
+            self.start_journey(row, came_after=prev.name)
             return
 
         silent = self.rules.silence_us is not None and gap > self.rules.silence_us
         if silent:
             self.lapse(prev, n_rows_before=position)
-            self.absence("lapsed", gap, back=True)
-            self.start_journey(row, first_row=False)
+            self.absence("lapsed", prev.time, row.time, back=True)
+            self.start_journey(row, came_after="lapsed")
             return
 
         self.go_on(row, prev, n_rows_before=position)
 
-    def start_journey(self, row: Row, *, first_row: bool) -> None:
+    def start_journey(self, row: Row, *, came_after: str) -> None:
         """Open a journey at a row, and end it at once where the row is an outcome."""
-        sure = self.rules.complete_history or not first_row
-        if self.rules.silence_us is not None and row.time >= self.rules.log_start_us + self.rules.silence_us:
-            sure = True
-        key = (self.bucket, row.name, sure)
+        sure = came_after != "new" or is_sure(row, self.rules)
+        group = {name: row.columns.get(name) or "not given" for name in self.rules.by}
+        if "cohort" in group:
+            group["cohort"] = self.rules.cohort_of(row.time)
+        if "came_after" in group:
+            group["came_after"] = came_after
+        key: tuple[Any, ...] = (self.bucket, row.name, sure)
+        self.group = group
+        key = self.grouped(key, row.time)
         self.tally.entries[key] = self.tally.entries.get(key, 0) + 1
-        self.journey = Journey(row.name, row.time, sure, 0, row.name, row.time)
+        self.journey = Journey(row.name, row.time, sure, 0, row.name, row.time, group, 0, row.time)
         if self.is_outcome(row):
             found(self.tally, "outcome_without_states")
             self.end_journey(row.name, row.time)
         else:
             self.journey.visits = 1
+            self.look_at_stage(row)
+
+    def look_at_stage(self, row: Row) -> None:
+        """Count the stage before as passed where the row is the next stage."""
+        assert self.journey is not None
+        reached = self.journey.n_stages
+        if reached < len(self.rules.stages) and row.name == self.rules.stages[reached]:
+            self.leave_stage(row.name, row.time)
+            self.journey.n_stages += 1
+            self.journey.stage_start = row.time
+
+    def leave_stage(self, to: str, at: int) -> None:
+        """Count the stage that the journey stands in as left for the next one or the end."""
+        journey = self.journey
+        assert journey is not None
+        if not self.rules.stages:
+            return
+        _, until, to = self.seen(journey.start, at, to)
+        if until < journey.stage_start:
+            return
+        stage = self.rules.stages[journey.n_stages - 1] if journey.n_stages else "entry"
+        since_entry = self.rules.elapsed_bin(until - journey.start)
+        since_stage = self.rules.elapsed_bin(until - journey.stage_start)
+        self.add(self.tally.stages, (self.bucket, stage, to, since_entry, journey.sure, since_stage), journey.start, 1)
+
+    def period(self, time: int) -> int:
+        """Return the number of cuts up to a moment."""
+        return sum(split <= time for split in self.rules.splits_us)
+
+    def seen(self, since: int, until: int, to: str) -> tuple[int, int, str]:
+        """Return how far something begun at `since` is seen in its period, and what it led to there."""
+        period = self.period(since)
+        if period < len(self.rules.splits_us):
+            last = self.rules.splits_us[period] - (DAY_US if self.rules.whole_days else 1)
+            if until > last:
+                return since, last, "open"
+        return since, until, to
+
+    def add(self, table: dict[Any, tuple[int, ...]], key: tuple[Any, ...], since: int, *amounts: int) -> None:
+        """Add amounts to a row of a table, under the group of the latest journey and the period."""
+        add(table, self.grouped(key, since), *amounts)
+
+    def grouped(self, key: tuple[Any, ...], since: int) -> tuple[Any, ...]:
+        """Return a key with the group of the latest journey and the period of a moment, where there are groups."""
+        if not self.rules.by:
+            return key
+        group = [self.group[name] for name in self.rules.by if name != "period"]
+        return (*key, (*group, self.period(since)))
 
     def go_on(self, row: Row, prev: Row, *, n_rows_before: int) -> None:
         """Go on with the running journey: the same visit, a move to a state, or a move to an outcome."""
@@ -290,6 +378,7 @@ class CustomerReader:
             self.journey.visits += 1
             self.journey.visit_state = row.name
             self.journey.visit_start = row.time
+            self.look_at_stage(row)
 
     def lapse(self, last: Row, *, n_rows_before: int) -> None:
         """End the running journey one silence after its last event."""
@@ -304,19 +393,21 @@ class CustomerReader:
         away = self.rules.as_of_us - last.time
         if self.is_outcome(last):
             if self.rules.after_outcome == "reopen":
-                self.absence(last.name, away, back=False)
+                self.absence(last.name, last.time, self.rules.as_of_us, back=False)
             return
         n_rows = len(self.history)
         if self.rules.silence_us is not None and away >= self.rules.silence_us:
             self.lapse(last, n_rows_before=n_rows)
-            self.absence("lapsed", away, back=False)
+            self.absence("lapsed", last.time, self.rules.as_of_us, back=False)
         else:
             self.move("open", self.rules.as_of_us, n_rows)
             self.end_journey("open", self.rules.as_of_us)
 
-    def absence(self, after: str, away: int, *, back: bool) -> None:
+    def absence(self, after: str, since: int, until: int, *, back: bool) -> None:
         """Count how long a customer was away after the last event of a journey that had ended."""
-        add(self.tally.gaps, (self.bucket, after, self.rules.elapsed_bin(away), back), 1, away)
+        _, until, to = self.seen(since, until, "back" if back else "open")
+        away = until - since
+        self.add(self.tally.gaps, (self.bucket, after, self.rules.elapsed_bin(away), to == "back"), since, 1, away)
 
     def move(self, to: str, at: int, n_rows_before: int) -> None:
         """Count a move out of the present visit, its dwell reckoned from the visit's start."""
@@ -326,19 +417,24 @@ class CustomerReader:
             # The visit may have begun before the log: how long it lasted is not known.
             found(self.tally, "first_visit_of_unsure_journey")
             return
-        dwell = at - self.journey.visit_start
+        since, at, to = self.seen(self.journey.visit_start, at, to)
+        dwell = at - since
         busy = n_rows_before >= self.rules.busy_after
         key = (self.bucket, self.journey.visit_state, to, self.rules.dwell_bin(dwell), busy)
-        add(self.tally.moves, key, 1, dwell)
+        self.add(self.tally.moves, key, since, 1, dwell)
 
     def end_journey(self, outcome: str, at: int) -> None:
         """Count the journey with its steps and elapsed time; an open one is counted as far as it got."""
         journey = self.journey
         assert journey is not None
-        elapsed = at - journey.start
+        self.leave_stage(outcome, at)
+        _, until, seen = self.seen(journey.start, at, outcome)
+        elapsed = until - journey.start
         steps = journey.visits if outcome == "open" else journey.visits + 1
-        key = (self.bucket, journey.entry_state, outcome, self.rules.elapsed_bin(elapsed), journey.sure)
-        add(self.tally.journeys, key, 1, steps, steps * steps, elapsed)
+        if seen != outcome or until != at:
+            steps = 0  # cut at the end of a period, where the steps so far are not known
+        key = (self.bucket, journey.entry_state, seen, self.rules.elapsed_bin(elapsed), journey.sure)
+        self.add(self.tally.journeys, key, journey.start, 1, steps, steps * steps, elapsed)
         if outcome != "open":
             self.n_decided += 1
         if outcome in self.rules.converted:

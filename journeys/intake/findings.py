@@ -27,6 +27,7 @@ MESSAGES = {
     "duplicate": 'equal to an earlier row in every column read; duplicates="drop" counts each once',
     "ended_before": "left out: the customer had ended before the log begins, says the ended_before column",
     "after_outcome": 'left out: after the customer\'s first outcome; after_outcome="reopen" counts them',
+    "before_opener": "left out: before the first state that may open a journey (`opens`)",
     "repeated_outcome": "the same outcome again within same_outcome_within: counted once",
     "outcome_without_states": "an outcome with nothing before it: a journey of one event; are events lost?",
     "began_after_outcome": "a journey begun after an outcome of the same customer; "

@@ -11,6 +11,7 @@ from journeys.errors import LogError
 from journeys.intake.arrays import indices_of, is_missing, numbers, plain, whole_numbers
 from journeys.intake.columns import as_text, decoded, event_names, is_in
 from journeys.intake.findings import Findings
+from journeys.intake.groups import GroupCodes
 from journeys.intake.identity import bucket_major, customer_keys
 from journeys.intake.rows import EventCodes, Rows
 from journeys.intake.rule_checks import RESERVED
@@ -41,6 +42,8 @@ class Normaliser:
         Events seen so far.
     targets : list of str or None
         State or outcome of each event code; None where dropped.
+    groups : GroupCodes
+        Values seen so far in the group columns.
     n_rows, n_kept : int
         Rows read, rows kept.
 
@@ -64,6 +67,7 @@ class Normaliser:
         self.rules = rules
         self.codes = EventCodes()
         self.targets: list[str | None] = []
+        self.groups = GroupCodes(rules.group_columns)
         self.n_rows = 0
         self.n_kept = 0
         self._log_start_us = rules.log_start_us if log_start_us is None else log_start_us
@@ -120,7 +124,10 @@ class Normaliser:
         sequence = self._sequence(batch, kept)
         ended = self._ended(batch, kept)
         self._note_times(kept, times)
-        rows = kept.take(bucket_major(key64), times.us, events, sequence, ended)
+        by = None
+        if rules.group_columns:
+            by = self.groups.encode([batch.column(column) for column in rules.group_columns])
+        rows = kept.take(bucket_major(key64), times.us, events, sequence, ended, by)
         self.n_kept += len(rows)
         self._all_midnight = self._all_midnight and not (rows.time % DAY_US).any()
         return rows
@@ -238,8 +245,9 @@ class _Kept:
         events: NDArray[np.int32],
         sequence: NDArray[np.int64] | None,
         ended: Mask | None,
+        by: NDArray[np.int32] | None,
     ) -> Rows:
         """Kept rows of the batch."""
         number = np.arange(self._first, self._first + self._n_rows, dtype=np.int64)
-        rows = Rows(key, times, events, number, sequence, ended)
+        rows = Rows(key, times, events, number, sequence, ended, by)
         return rows if self.mask is None else rows.take(self.mask)

@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, fields
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -27,6 +28,8 @@ class Rows:
         Order among rows of a customer at the same time; a missing one is the largest int64.
     ended : ndarray of bool, shape (n_rows,), or None
         The `ended_before` column.
+    by : ndarray of int32, shape (n_rows,), or None
+        Code of the values in the group columns (`groups.GroupCodes`).
 
     Examples
     --------
@@ -41,6 +44,7 @@ class Rows:
     row: NDArray[np.int64]
     sequence: NDArray[np.int64] | None = None
     ended: NDArray[np.bool_] | None = None
+    by: NDArray[np.int32] | None = None
 
     def __len__(self) -> int:
         """Return the number of rows."""
@@ -57,9 +61,12 @@ class Rows:
         -------
         Rows
         """
-        sequence = None if self.sequence is None else self.sequence[index]
-        ended = None if self.ended is None else self.ended[index]
-        return Rows(self.key[index], self.time[index], self.event[index], self.row[index], sequence, ended)
+        columns = {name: None if column is None else column[index] for name, column in self.columns().items()}
+        return Rows(**columns)  # type: ignore[arg-type]
+
+    def columns(self) -> dict[str, NDArray[Any] | None]:
+        """Return the arrays by name."""
+        return {field.name: getattr(self, field.name) for field in fields(self)}
 
 
 def concat_rows(blocks: Sequence[Rows]) -> Rows:
@@ -82,16 +89,11 @@ def concat_rows(blocks: Sequence[Rows]) -> Rows:
     """
     if len(blocks) == 1:
         return blocks[0]
-    sequences = [block.sequence for block in blocks if block.sequence is not None]
-    ended = [block.ended for block in blocks if block.ended is not None]
-    return Rows(
-        np.concatenate([block.key for block in blocks]),
-        np.concatenate([block.time for block in blocks]),
-        np.concatenate([block.event for block in blocks]),
-        np.concatenate([block.row for block in blocks]),
-        np.concatenate(sequences) if sequences else None,
-        np.concatenate(ended) if ended else None,
-    )
+    joined = {
+        name: None if column is None else np.concatenate([getattr(block, name) for block in blocks])
+        for name, column in blocks[0].columns().items()
+    }
+    return Rows(**joined)  # type: ignore[arg-type]
 
 
 @dataclass(slots=True)

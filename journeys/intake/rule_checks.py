@@ -14,6 +14,7 @@ from journeys.checks import (
     instant_us,
     one_of,
 )
+from journeys.intake import group_checks
 from journeys.intake.frozen import FrozenMap
 
 RESERVED = ("entry", "lapsed", "open", "unknown")
@@ -55,7 +56,9 @@ def canonical(raw: Mapping[str, Any]) -> tuple[dict[str, Any], list[str]]:
         except (TypeError, ValueError) as fault:
             problems.append(str(fault))
     if not problems:
+        settings = group_checks.completed(settings)
         problems = [*_role_faults(settings), *_name_faults(settings), *_time_faults(settings)]
+        problems += [*group_checks.group_faults(settings), *group_checks.state_faults(settings)]
     return settings, problems
 
 
@@ -211,6 +214,12 @@ _CHECKS: dict[str, Callable[[Any, str], Any]] = {
     "complete_history": _flag,
     "ended_before": _maybe(_column),
     "horizons": _durations,
+    "opens": _events,
+    "by": group_checks.columns,
+    "cohort": group_checks.cohort,
+    "timezone": group_checks.timezone,
+    "split_at": group_checks.instants,
+    "stages": _events,
     "limits": _limits,
 }
 

@@ -2,21 +2,20 @@
 
 from __future__ import annotations
 
-import difflib
-import tomllib
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, fields
-from pathlib import Path
-from typing import Any, Self
+from typing import Any
 
 from journeys.checks import Duration, Instant, duration_us, instant_us
 from journeys.errors import RulesError
-from journeys.intake.frozen import FrozenMap, toml_text
+from journeys.intake.frozen import FrozenMap
+from journeys.intake.group_checks import BUILT_IN
 from journeys.intake.rule_checks import LIMITS, NOT_GIVEN, NotGiven, canonical
+from journeys.intake.settings import Settings
 
 
 @dataclass(frozen=True, slots=True, init=False, repr=False)
-class JourneyRules:
+class JourneyRules(Settings):
     """Rules a log is read by, checked when made; equal rules compare equal however they were written.
 
     Parameters
@@ -54,6 +53,21 @@ class JourneyRules:
         Boolean column: the customer had ended before the log begins.
     horizons : list of str or timedelta
         Further times since entry at which shares are to be exact.
+    opens : str or list of str
+        States that may open a journey; what comes before the first of them is left out and counted. Default:
+        any state. An outcome opens one only when nothing else does.
+    by : str or list of str
+        Columns to group journeys by, read at a journey's first event; also "came_after", built in: whether
+        the customer was new, had lapsed, or how the journey before ended.
+    cohort : {"day", "week", "month"}, optional
+        Groups journeys by the day, week (from Monday) or month in which they began: the column "cohort".
+    timezone : str
+        Where the days of a cohort begin, such as "Europe/Amsterdam".
+    split_at : list of str, datetime, date or Timestamp
+        Cuts the log into periods, the column "period": a move belongs to the period in which its state was
+        entered; one that crosses a cut is open at the cut, and not counted after it.
+    stages : list of str
+        States that a journey passes one after another on its way, in order, for the table of stages.
     limits : mapping of str to float
         "unreadable": largest share of rows that may lack a readable customer, time or event.
 
@@ -94,6 +108,12 @@ class JourneyRules:
     complete_history: bool
     ended_before: str | None
     horizons: tuple[str, ...]
+    opens: tuple[str, ...]
+    by: tuple[str, ...]
+    cohort: str | None
+    timezone: str
+    split_at: tuple[str, ...]
+    stages: tuple[str, ...]
     limits: FrozenMap[float]
 
     def __init__(
@@ -118,6 +138,12 @@ class JourneyRules:
         complete_history: bool = False,
         ended_before: str | None = None,
         horizons: str | Iterable[Duration] = (),
+        opens: str | Iterable[str] = (),
+        by: str | Iterable[str] = (),
+        cohort: str | None = None,
+        timezone: str = "UTC",
+        split_at: Instant | Iterable[Instant] = (),
+        stages: Iterable[str] = (),
         limits: Mapping[str, float] = FrozenMap(LIMITS),  # noqa: B008 - immutable
     ) -> None:
         given = locals()
@@ -153,6 +179,16 @@ class JourneyRules:
         return tuple(duration_us(horizon, "horizons") for horizon in self.horizons)
 
     @property
+    def splits_us(self) -> tuple[int, ...]:
+        """Cuts between periods in microseconds since 1970, rising."""
+        return tuple(instant_us(split, "split_at") for split in self.split_at)
+
+    @property
+    def group_columns(self) -> tuple[str, ...]:
+        """Columns of the log that journeys are grouped by."""
+        return tuple(name for name in self.by if name not in BUILT_IN)
+
+    @property
     def outcomes(self) -> tuple[str, ...]:
         """Outcomes named by the rules: the converted ones, then the churned ones."""
         return self.converted + self.churned
@@ -162,7 +198,7 @@ class JourneyRules:
         """Columns the log must have, each once."""
         roles = (self.customer, self.time, self.event, self.sequence, self.ended_before)
         named = [column for column in roles if column is not None]
-        return tuple(dict.fromkeys([*named, *self.exclude]))
+        return tuple(dict.fromkeys([*named, *self.exclude, *self.group_columns]))
 
     def target(self, event: str) -> str | None:
         """State or outcome an event counts as; None if the rules drop it.
@@ -192,123 +228,12 @@ class JourneyRules:
             return event
         return None if self.unmapped == "drop" else self.unmapped
 
-    @classmethod
-    def from_dict(cls, settings: Mapping[str, Any]) -> Self:
-        """Rules from a mapping with the names of the parameters as keys.
-
-        Parameters
-        ----------
-        settings : mapping
-
-        Returns
-        -------
-        JourneyRules
-
-        Raises
-        ------
-        RulesError
-            If a key is unknown or missing, or a value is wrong.
-
-        Examples
-        --------
-        >>> JourneyRules.from_dict({"customer": "who", "time": "when", "event": "what", "silense": "30d"})
-        Traceback (most recent call last):
-        ...
-        journeys.errors.RulesError: 'silense' is no setting of the rules; did you mean 'silence'?
-        """
-        known = [field.name for field in fields(cls)]
-        problems = []
-        for name in settings:
-            if name not in known:
-                close = difflib.get_close_matches(str(name), known, n=1)
-                hint = f"did you mean {close[0]!r}?" if close else f"there are {', '.join(known)}"
-                problems.append(f"{name!r} is no setting of the rules; {hint}")
-        problems += [
-            f'{name}: not given; wanted the name of a column, such as {name} = "{name}"'
-            for name in known[:3]
-            if name not in settings
-        ]
-        if problems:
-            raise RulesError("\n".join(problems))
-        return cls(**settings)
-
-    @classmethod
-    def from_toml(cls, path: str | Path) -> Self:
-        """Rules from a TOML file with the names of the parameters as keys.
-
-        Parameters
-        ----------
-        path : str or Path
-
-        Returns
-        -------
-        JourneyRules
-
-        Raises
-        ------
-        RulesError
-            If the file cannot be read, or what it says is wrong.
-        """
-        file = Path(path)
-        try:
-            settings = tomllib.loads(file.read_text(encoding="utf-8"))
-        except OSError as fault:
-            raise RulesError(f"rules file {file}: {fault.strerror or 'cannot be read'}") from None
-        except (tomllib.TOMLDecodeError, UnicodeDecodeError) as fault:
-            raise RulesError(f"rules file {file}: not TOML ({fault})") from None
-        try:
-            return cls.from_dict(settings)
-        except RulesError as fault:
-            raise RulesError(f"rules file {file}: {fault}") from None
-
-    def to_dict(self) -> dict[str, Any]:
-        """Rules as plain values that JSON can hold; `from_dict` makes equal rules of them.
-
-        Returns
-        -------
-        dict
-
-        Examples
-        --------
-        >>> rules = JourneyRules("who", "when", "what", silence=None, horizons=["7d"])
-        >>> JourneyRules.from_dict(rules.to_dict()) == rules
-        True
-        """
-        return {field.name: _plain(getattr(self, field.name)) for field in fields(self)}
-
-    def to_toml(self) -> str:
-        """Rules as the text of a TOML file that `from_toml` makes equal rules of.
-
-        Returns
-        -------
-        str
-
-        Examples
-        --------
-        >>> print(JourneyRules("who", "when", "what", silence=None).to_toml()[:45])
-        customer = "who"
-        time = "when"
-        event = "what"
-        """
+    def _for_toml(self) -> dict[str, Any]:
         settings = self.to_dict()
         settings["silence"] = self.silence or "none"
         if self.states is not None:
             settings["states"] = {event: state or False for event, state in self.states.items()}
-        return toml_text({name: value for name, value in settings.items() if value is not None})
+        return settings
 
-    def __repr__(self) -> str:
-        """Write the call that makes it, without the settings left as they come."""
-        standard = JourneyRules(self.customer, self.time, self.event, silence=None)
-        shown = [f"{name}={getattr(self, name)!r}" for name in ("customer", "time", "event")]
-        for field in fields(self)[3:]:
-            value = getattr(self, field.name)
-            if field.name == "silence" or value != getattr(standard, field.name):
-                shown.append(f"{field.name}={value!r}")
-        return f"JourneyRules({', '.join(shown)})"
-
-
-def _plain(value: Any) -> Any:
-    """Tuples as lists, mappings as dicts."""
-    if isinstance(value, Mapping):
-        return {key: _plain(item) for key, item in value.items()}
-    return list(value) if isinstance(value, tuple) else value
+    def _must_be_said(self) -> dict[str, Any]:
+        return {"silence": None}

@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import ctypes
 import sys
+from dataclasses import replace
 from functools import cache
 from importlib.util import find_spec
 from typing import Any, TypeVar
@@ -115,9 +116,9 @@ def count_in_order(
     moves = Moves(_bytes(2 * n), _codes(2 * n), _codes(2 * n), _times(2 * n), _flags(2 * n))
     ends = Ends(_bytes(2 * n), _codes(2 * n), _codes(2 * n), _flags(2 * n), _times(2 * n), _times(2 * n))
     begun = Entries(_bytes(n), _codes(n), _flags(n))
-    gaps = Gaps(_bytes(n), _codes(n), _times(n), back=True)
+    gaps = Gaps(_bytes(n), _codes(n), _times(n), True)
     marked = {"repeated": _times(n), "bare": _times(n), "again": _times(n)}
-    fresh = Carried.zeros(n, visits=reading.merge_repeats)
+    fresh = Carried.zeros(n, ("visit_start",) if reading.merge_repeats else ())
     guess = _bin_guess(cells.upper.tobytes())
     arrays = {
         "key": key, "time": time, "code": code, "first_keys": first_keys, **marked,
@@ -146,7 +147,9 @@ def count_in_order(
         moves=(_first(moves, walk.n_moves),),
         entries=_first(begun, walk.n_begun),
         ends=(_first(ends, walk.n_ends),),
-        gaps=Gaps(*(column[: walk.n_gaps] for column in (gaps.bucket, gaps.outcome, gaps.away)), back=True),
+        gaps=replace(
+            gaps, bucket=gaps.bucket[: walk.n_gaps], outcome=gaps.outcome[: walk.n_gaps], away=gaps.away[: walk.n_gaps]
+        ),
         repeated=marked["repeated"][: walk.n_repeated],
         bare=marked["bare"][: walk.n_bare],
         again=marked["again"][: walk.n_again],
@@ -240,7 +243,8 @@ def _bin_guess(upper: bytes) -> NDArray[np.int16]:
 
 def _first(records: T, n: int) -> T:
     """Return the first `n` records."""
-    return type(records)(**{name: column[:n] for name, column in vars(records).items()})
+    held: dict[str, Any] = {name: None if column is None else column[:n] for name, column in vars(records).items()}
+    return type(records)(**held)
 
 
 def _bytes(n: int) -> NDArray[np.uint8]:

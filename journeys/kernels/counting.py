@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -23,50 +23,8 @@ from journeys.kernels.records import (
     Moves,
     Reading,
 )
-
-Codes = NDArray[np.int32]
-Buckets = NDArray[np.uint8]
-
-
-@dataclass(frozen=True)
-class Block:
-    """Rows in order, by customer.
-
-    Attributes
-    ----------
-    time, code : ndarray, shape (n_rows,)
-        Microseconds and code, sorted by customer and in order within each.
-    start : ndarray of int64, shape (n_customers,)
-        Position of each customer's first row.
-    key, bucket : ndarray, shape (n_customers,)
-        The customers, increasing, and their buckets.
-    prior : Carried
-        What was carried of each customer; anything where `held` is False.
-    held : ndarray of bool, shape (n_customers,)
-        Whether the customer was seen before.
-    """
-
-    time: Ints
-    code: Codes
-    start: Ints
-    key: NDArray[np.uint64]
-    bucket: Buckets
-    prior: Carried
-    held: Bools
-
-
-@dataclass(frozen=True)
-class _Marks:
-    """What each row is; arrays over rows."""
-
-    owner: Codes
-    prev_time: Ints
-    prev_code: Codes
-    silent: Bools
-    begins: Bools
-    moved: Bools
-    visit: Bools
-    repeated: Ints
+from journeys.kernels.stage_counts import stages_at_close, stages_passed
+from journeys.kernels.stories import Block, Buckets, Codes, Stories, marks_of
 
 
 def count_rows(block: Block, reading: Reading) -> tuple[Counted, Carried]:
@@ -86,15 +44,15 @@ def count_rows(block: Block, reading: Reading) -> tuple[Counted, Carried]:
     latest : Carried
         One record per customer of the block.
     """
-    marks = _marks(block, reading)
-    story = _Stories(block, marks, reading)
+    marks = marks_of(block, reading)
+    story = Stories(block, marks, reading)
     owner, silence = marks.owner, reading.silence_us or 0
     busy = _busy(block, owner, reading)
     ended = np.flatnonzero(block.code < reading.first_state)
     if len(marks.repeated):
         ended = np.setdiff1d(ended, marks.repeated, assume_unique=True)
     silent = np.flatnonzero(marks.silent)
-    before = story.at(silent - 1, owner[silent], first=silent == block.start[owner[silent]])
+    before = story.before(silent)
     now = story.at(ended, owner[ended])
     moved = np.flatnonzero(marks.moved)
     unsure_visits = 0
@@ -110,20 +68,25 @@ def count_rows(block: Block, reading: Reading) -> tuple[Counted, Carried]:
         dwell = block.time[moved] - marks.prev_time[moved]
         dwell_lapsed = np.full(len(silent), silence)
     moves = (
-        Moves(block.bucket[owner[moved]], marks.prev_code[moved], block.code[moved], dwell, _of(busy, moved)),
+        Moves(
+            block.bucket[owner[moved]], marks.prev_code[moved], block.code[moved], dwell, _of(busy, moved),
+            *story.grouped(block.time[moved] - dwell, lambda: story.at(moved, owner[moved])),
+        ),
         Moves(
             block.bucket[owner[lapsed]], marks.prev_code[lapsed], np.full(len(lapsed), LAPSED, np.int32),
             dwell_lapsed, _of(busy, lapsed),
+            *story.grouped(marks.prev_time[lapsed] + silence - dwell_lapsed, lambda: story.before(lapsed)),
         ),
     )  # fmt: skip
     ends = (
         Ends(
             block.bucket[owner[ended]], now.first_code, block.code[ended], now.sure, now.steps,
-            block.time[ended] - now.start,
+            block.time[ended] - now.start, *story.grouped(now.start, lambda: now),
         ),
         Ends(
             block.bucket[owner[silent]], before.first_code, np.full(len(silent), LAPSED, np.int32), before.sure,
             before.steps + 1, marks.prev_time[silent] + silence - before.start,
+            *story.grouped(before.start, lambda: before),
         ),
     )  # fmt: skip
     begun = story.begun
@@ -131,18 +94,28 @@ def count_rows(block: Block, reading: Reading) -> tuple[Counted, Carried]:
     after = np.where(marks.silent[back], np.int32(LAPSED), marks.prev_code[back])
     counted = Counted(
         moves=moves,
-        entries=Entries(block.bucket[owner[begun]], block.code[begun], story.sure_begun),
+        entries=Entries(
+            block.bucket[owner[begun]], block.code[begun], story.sure_begun,
+            *(() if story.group_begun is None else (block.time[begun], story.group_begun)),
+        ),
         ends=ends,
-        gaps=Gaps(block.bucket[owner[back]], after, block.time[back] - marks.prev_time[back], back=True),
+        gaps=Gaps(
+            block.bucket[owner[back]], after, block.time[back] - marks.prev_time[back], True,
+            *story.grouped(marks.prev_time[back], lambda: story.before(back)),
+        ),
         repeated=marks.repeated,
         bare=begun[block.code[begun] < reading.first_state],
         again=back[after != LAPSED],
         unsure_visits=unsure_visits,
-    )
+    )  # fmt: skip
+    stage: tuple[Codes, Ints] | tuple[None, None] = (None, None)
+    if reading.stages is not None:
+        passed, number, start = stages_passed(block, marks, story, reading)
+        counted, stage = replace(counted, passed=passed), (number, start)
     n = len(block.start)
     decided = np.bincount(owner[ended], minlength=n) + np.bincount(owner[silent], minlength=n)
     won = owner[ended[block.code[ended] < FIRST_OUTCOME + reading.n_converted]]
-    return counted, _latest(block, story, decided, np.bincount(won, minlength=n))
+    return counted, _latest(block, story, decided, np.bincount(won, minlength=n), stage)
 
 
 def close_log(carried: Carried, bucket: Buckets, reading: Reading) -> Closed:
@@ -183,13 +156,15 @@ def close_log(carried: Carried, bucket: Buckets, reading: Reading) -> Closed:
     moves = Moves(
         bucket[keep], held.code[keep], next_code[keep], (until - held.visit_began)[keep],
         (held.n_events >= reading.busy_after)[keep],
+        *(() if held.group is None else (held.visit_began[keep], held.group[keep])),
     )  # fmt: skip
     ends = Ends(
         bucket, held.first_code, next_code, held.sure, held.steps.astype(np.int64) + lapsed,
-        until - held.journey_start,
+        until - held.journey_start, *(() if held.group is None else (held.journey_start, held.group)),
     )  # fmt: skip
     carried.decided[running] += lapsed
-    return Closed(moves, ends, gaps, int((~keep).sum()))
+    passed = None if reading.stages is None else stages_at_close(held, bucket, until, next_code, reading)
+    return Closed(moves, ends, gaps, int((~keep).sum()), passed)
 
 
 def _absent(carried: Carried, bucket: Buckets, reading: Reading) -> Gaps:
@@ -198,118 +173,11 @@ def _absent(carried: Carried, bucket: Buckets, reading: Reading) -> Gaps:
     ended = carried.code < reading.first_state
     if reading.silence_us is not None:
         ended |= away >= reading.silence_us
-    gone = np.flatnonzero(ended & ~carried.story_over)
+    gone = np.flatnonzero(ended & ~carried.story_over & (carried.code != 0))
     code = carried.code[gone]
     after = np.where(code < reading.first_state, code, np.int32(LAPSED))
-    return Gaps(bucket[gone], after, away[gone], back=False)
-
-
-def _marks(block: Block, reading: Reading) -> _Marks:
-    """Compare each row with the one before it, or with what was carried."""
-    time, code, start = block.time, block.code, block.start
-    n = len(time)
-    first = np.zeros(n, np.int32)
-    first[start] = 1
-    owner = np.cumsum(first, dtype=np.int32)
-    owner -= 1
-    prev_time, prev_code = np.empty_like(time), np.empty_like(code)
-    prev_time[1:], prev_code[1:] = time[:-1], code[:-1]
-    prev_time[start] = block.prior.time
-    # Code 0 stands for nobody: smaller than any outcome's.
-    prev_code[start] = np.where(block.held, block.prior.code, 0)
-    goes_on = prev_code >= reading.first_state
-    if reading.silence_us is None:
-        silent = np.zeros(n, bool)
-    else:
-        silent = time - prev_time > reading.silence_us
-        silent &= goes_on
-        goes_on &= ~silent
-    same = prev_code == code
-    begins = ~goes_on
-    again = np.flatnonzero(same & begins & (code < reading.first_state))
-    repeated = again[time[again] - prev_time[again] <= reading.same_outcome_us]
-    begins[repeated] = False
-    moved = goes_on & ~same if reading.merge_repeats else goes_on
-    return _Marks(owner, prev_time, prev_code, silent, begins, moved, moved | begins, repeated)
-
-
-@dataclass(frozen=True)
-class _Story:
-    """The journeys that some rows stand in."""
-
-    start: Ints
-    first_code: Codes
-    sure: Bools
-    steps: Ints
-
-
-class _Stories:
-    """Finds the journey, and the visit, that a row stands in: begun in this block, or carried."""
-
-    def __init__(self, block: Block, marks: _Marks, reading: Reading) -> None:
-        self._block, self._marks = block, marks
-        self._nth = np.cumsum(marks.begins, dtype=np.int32)
-        self.begun = np.flatnonzero(marks.begins)
-        self.sure_begun = np.ones(len(self.begun), bool)
-        if not reading.complete_history:
-            new = marks.prev_code[self.begun] == 0
-            if reading.silence_us is not None:
-                new &= block.time[self.begun] < reading.log_start_us + reading.silence_us
-            self.sure_begun = ~new
-        # Without merging, each row is a visit of its own.
-        self.merging = reading.merge_repeats
-        self._visits: Codes | None = None
-        if reading.merge_repeats:
-            self._visits = np.cumsum(marks.visit, dtype=np.int32)
-            self._visit_row = np.maximum.accumulate(np.where(marks.visit, np.arange(len(block.time)), -1))
-
-    def at(self, row: Ints, owner: Codes, first: Bools | None = None) -> _Story:
-        """Return the journeys of rows (their positions and owners); where `first`, the one carried."""
-        block, prior = self._block, self._block.prior
-        if not len(row):
-            none = np.zeros(0, np.int64)
-            return _Story(none, np.zeros(0, np.int32), np.zeros(0, bool), none)
-        nth = self._nth[row] - 1
-        begin = self.begun[nth] if len(self.begun) else np.full(len(row), -1)
-        here = (nth >= 0) & (begin >= block.start[owner])
-        if first is not None:
-            here &= ~first
-        steps = self._steps(row, begin, owner, here)
-        return _Story(
-            start=np.where(here, block.time[begin], prior.journey_start[owner]),
-            first_code=np.where(here, block.code[begin], prior.first_code[owner]),
-            sure=np.where(here, self.sure_begun[nth] if len(self.begun) else False, prior.sure[owner]),
-            steps=np.where(first, prior.steps[owner], steps) if first is not None else steps,
-        )
-
-    def visit_start(self, row: Ints, owner: Codes, first: Bools | None = None) -> Ints:
-        """Return when the visits of rows began; where `first`, the one carried."""
-        block = self._block
-        if self._visits is None:
-            return block.time[row]
-        begin = self._visit_row[row]
-        here = begin >= block.start[owner]
-        if first is not None:
-            here &= ~first
-        return np.where(here, block.time[begin], block.prior.visit_began[owner])
-
-    def dwell(self, row: Ints) -> tuple[Ints, Bools]:
-        """Return, for rows that end a visit, the time since it began, and whether its beginning is unknown."""
-        owner = self._marks.owner[row]
-        first = row == self._block.start[owner]
-        before = self.at(row - 1, owner, first)
-        started = self.visit_start(row - 1, owner, first)
-        return self._block.time[row] - started, (before.steps == 1) & ~before.sure
-
-    def _steps(self, row: Ints, begin: Ints, owner: Codes, here: Bools) -> Ints:
-        start = self._block.start[owner]
-        if self._visits is None:
-            since_begin, since_start = row - begin + 1, row - start + 1
-        else:
-            visits = self._visits
-            since_begin = visits[row] - visits[begin] + 1
-            since_start = visits[row] - visits[start] + self._marks.visit[start]
-        return np.where(here, since_begin, self._block.prior.steps[owner] + since_start)
+    grouped = () if carried.group is None else (carried.time[gone], carried.group[gone])
+    return Gaps(bucket[gone], after, away[gone], False, *grouped)
 
 
 def _busy(block: Block, owner: Codes, reading: Reading) -> Bools | None:
@@ -326,7 +194,13 @@ def _of(busy: Bools | None, rows: Ints) -> Bools | None:
     return None if busy is None else busy[rows]
 
 
-def _latest(block: Block, story: _Stories, decided: NDArray[Any], won: NDArray[Any]) -> Carried:
+def _latest(
+    block: Block,
+    story: Stories,
+    decided: NDArray[Any],
+    won: NDArray[Any],
+    stage: tuple[Codes, Ints] | tuple[None, None],
+) -> Carried:
     """Return one record per customer of the block, as of its last row; of journeys ended, what the block adds."""
     n, prior = len(block.start), block.prior
     last = np.append(block.start[1:], len(block.time)) - 1
@@ -341,4 +215,5 @@ def _latest(block: Block, story: _Stories, decided: NDArray[Any], won: NDArray[A
         decided=decided.astype(np.int32), converted=won.astype(np.int32),
         sure=now.sure, story_over=np.zeros(n, bool),
         visit_start=story.visit_start(last, owner) if story.merging else None,
+        group=now.group, seen=None if prior.seen is None else block.time[last], stage=stage[0], stage_start=stage[1],
     )  # fmt: skip

@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from dataclasses import dataclass, fields
+from collections.abc import Callable, Collection
+from dataclasses import MISSING, dataclass, fields
 from typing import Any
 
 import numpy as np
@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from journeys.kernels.arrays import BoolArray as Bools
 from journeys.kernels.arrays import IntArray as Ints
+from journeys.kernels.grouping import Grouping
 
 PutIn = Callable[[NDArray[Any], Ints, NDArray[Any]], NDArray[Any]]
 
@@ -37,6 +38,8 @@ class Reading:
     as_of_us: int
     complete_history: bool
     busy_after: int = 1_000
+    grouping: Grouping | None = None
+    stages: NDArray[np.int32] | None = None
 
     @property
     def first_state(self) -> int:
@@ -49,7 +52,9 @@ class Carried:
     """One record per customer seen: what the next row of that customer needs. Sorted by `key`.
 
     The one table that is changed in place: copying it for every block of rows would cost more than counting.
-    `visit_start` is only kept where repeats merge; elsewhere each row is a visit of its own.
+    `visit_start` is only kept where repeats merge; elsewhere each row is a visit of its own. `group`, of the latest
+    journey, is kept where journeys are grouped, `seen` (the time of the latest row, counted or not) where rows before
+    an opening state are left out, `stage` (the stage reached) and `stage_start` where stages are named.
     """
 
     key: NDArray[np.uint64]
@@ -64,19 +69,29 @@ class Carried:
     sure: Bools
     story_over: Bools
     visit_start: Ints | None = None
+    group: Ints | None = None
+    seen: Ints | None = None
+    stage: NDArray[np.int32] | None = None
+    stage_start: Ints | None = None
 
     @classmethod
-    def zeros(cls, n: int, *, visits: bool) -> Carried:
-        """Return a table of `n` empty records, with the start of visits if they may span rows."""
-        wide = {"key": np.uint64, "time": np.int64, "journey_start": np.int64, "visit_start": np.int64}
-        kinds: dict[str, Any] = {**wide, "sure": np.bool_, "story_over": np.bool_}
-        names = [f.name for f in fields(cls) if visits or f.name != "visit_start"]
+    def zeros(cls, n: int, also: Collection[str] = ()) -> Carried:
+        """Return a table of `n` empty records, with the optional columns named."""
+        wide = ("time", "journey_start", "visit_start", "group", "seen", "stage_start")
+        kinds: dict[str, Any] = {**dict.fromkeys(wide, np.int64), "key": np.uint64}
+        kinds |= {"sure": np.bool_, "story_over": np.bool_}
+        names = [f.name for f in fields(cls) if f.default is MISSING or f.name in also]
         return cls(**{name: np.zeros(n, kinds.get(name, np.int32)) for name in names})
 
     @property
     def visit_began(self) -> Ints:
         """When the visit of each customer's last row began."""
         return self.time if self.visit_start is None else self.visit_start
+
+    @property
+    def latest(self) -> Ints:
+        """When each customer's latest row was, counted or not."""
+        return self.time if self.seen is None else self.seen
 
     @property
     def names(self) -> list[str]:
@@ -130,13 +145,18 @@ _ADDED = ("decided", "converted")
 
 @dataclass(frozen=True)
 class Moves:
-    """One element per move: whose bucket, from which state, to what, after how long (microseconds)."""
+    """One element per move: whose bucket, from which state, to what, after how long (microseconds).
+
+    Where journeys are grouped, also when the state was entered and the journey's group; so for what follows.
+    """
 
     bucket: NDArray[np.uint8]
     state: NDArray[np.int32]
     next_code: NDArray[np.int32]
     dwell: Ints
     busy: Bools | None = None
+    since: Ints | None = None
+    group: Ints | None = None
 
 
 @dataclass(frozen=True)
@@ -171,6 +191,8 @@ class Entries:
     bucket: NDArray[np.uint8]
     state: NDArray[np.int32]
     sure: Bools
+    since: Ints | None = None
+    group: Ints | None = None
 
 
 @dataclass(frozen=True)
@@ -183,16 +205,34 @@ class Ends:
     sure: Bools
     steps: Ints
     elapsed: Ints
+    since: Ints | None = None
+    group: Ints | None = None
 
 
 @dataclass(frozen=True)
 class Gaps:
-    """One element per customer's absence: how the journey before it ended, how long since the last event, whether over."""
+    """One element per absence: how the journey before it ended, how long since the last event, whether it is over."""
 
     bucket: NDArray[np.uint8]
     outcome: NDArray[np.int32]
     away: Ints
     back: bool
+    since: Ints | None = None
+    group: Ints | None = None
+
+
+@dataclass(frozen=True)
+class Passed:
+    """One element per stage left: its state (0 before the first stage), and for which stage, outcome or open."""
+
+    bucket: NDArray[np.uint8]
+    stage: NDArray[np.int32]
+    next_code: NDArray[np.int32]
+    sure: Bools
+    since_entry: Ints
+    since_stage: Ints
+    since: Ints | None = None
+    group: Ints | None = None
 
 
 @dataclass(frozen=True)
@@ -203,6 +243,7 @@ class Closed:
     ends: Ends
     gaps: Gaps
     unsure_visits: int
+    passed: Passed | None = None
 
 
 @dataclass(frozen=True)
@@ -221,3 +262,4 @@ class Counted:
     bare: Ints
     again: Ints
     unsure_visits: int
+    passed: tuple[Passed, ...] = ()

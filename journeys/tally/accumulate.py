@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -11,7 +12,7 @@ from journeys.kernels.arrays import FloatArray, IntArray
 from journeys.tally.keys import bucket_in
 
 Columns = dict[str, NDArray[np.int64]]
-Keyed = tuple[IntArray, Columns]
+More = dict[str, IntArray]
 Expand = Callable[[Columns], Columns]
 
 _LIMB = 32
@@ -44,21 +45,36 @@ def product_limbs(n: IntArray, value: IntArray, rest: IntArray, name: str) -> Co
     return {f"{name}_high": high + (low_sum >> _LIMB), f"{name}_low": low_sum & _LOW}
 
 
-def add_up(key: IntArray, sums: Columns) -> Keyed:
+class Keyed(NamedTuple):
+    """A table: distinct keys in order, the sums under each, and further parts of the key where there are any."""
+
+    key: IntArray
+    sums: Columns
+    more: More
+
+
+def in_order(key: IntArray, more: More) -> IntArray:
+    """Return the order of rows by the further parts of the key, then by the packed key."""
+    return np.lexsort((key, *reversed(more.values()))) if more else np.argsort(key)
+
+
+def add_up(key: IntArray, sums: Columns, more: More) -> Keyed:
     """Return the distinct keys in order and the sums under each; low limbs carried into the high ones.
 
     `sums` is used up, so that columns can be let go of one by one.
     """
     if not len(key):
-        return key, sums
-    if (key[1:] <= key[:-1]).any():
-        order = np.argsort(key)
-        key = key[order]
+        return Keyed(key, sums, more)
+    if more or (key[1:] <= key[:-1]).any():
+        order = in_order(key, more)
+        key, more = key[order], {name: part[order] for name, part in more.items()}
         first = np.ones(len(key), bool)
         first[1:] = key[1:] != key[:-1]
+        for part in more.values():
+            first[1:] |= part[1:] != part[:-1]
         start = np.flatnonzero(first)
         added = {name: np.add.reduceat(sums.pop(name)[order], start) for name in list(sums)}
-        key = key[start]
+        key, more = key[start], {name: part[start] for name, part in more.items()}
     else:
         added = dict(sums)
     for name in added:
@@ -66,7 +82,7 @@ def add_up(key: IntArray, sums: Columns) -> Keyed:
             high = name.removesuffix("_low") + "_high"
             added[high] = added[high] + (added[name] >> _LIMB)
             added[name] = added[name] & _LOW
-    return key, added
+    return Keyed(key, added, more)
 
 
 class Accumulator:
@@ -76,13 +92,15 @@ class Accumulator:
     ----------
     names : tuple of str
         What is summed.
+    more : tuple of str
+        Further parts of the key, beside the packed one.
     """
 
-    def __init__(self, names: tuple[str, ...]) -> None:
-        self._names = names
+    def __init__(self, names: tuple[str, ...], more: tuple[str, ...] = ()) -> None:
+        self._names, self._more = names, more
         self._parts: dict[int, _Part] = {}
 
-    def add(self, key: IntArray, columns: Columns, expand: Expand | None = None) -> None:
+    def add(self, key: IntArray, columns: Columns, expand: Expand | None = None, more: More | None = None) -> None:
         """Add one block; quickest where the keys of a bucket stand together.
 
         Parameters
@@ -93,6 +111,8 @@ class Accumulator:
             The sums, or what `expand` makes them of when the time has come: what waits should be small.
         expand : callable, optional
             From the columns of a block to its sums.
+        more : dict of str to ndarray, optional
+            The further parts of the key.
         """
         if not len(key):
             return
@@ -102,14 +122,18 @@ class Accumulator:
             piece = slice(first, last)
             # Copies, so that what waits does not keep the whole block in memory.
             kept = {name: column[piece].copy() for name, column in columns.items()}
-            self._parts.setdefault(number, _Part(self._names)).add(key[piece].copy(), kept, expand)
+            also = {name: column[piece].copy() for name, column in (more or {}).items()}
+            self._parts.setdefault(number, _Part(self._names)).add(key[piece].copy(), kept, expand, also)
 
     def result(self) -> Keyed:
         """Return the distinct keys in order and their sums, and let go of them."""
         parts = [self._parts.pop(number).settled() for number in sorted(self._parts)]
-        key = np.concatenate([np.empty(0, np.int64), *(key for key, _ in parts)])
         empty = np.empty(0, np.int64)
-        return key, {name: np.concatenate([empty, *(sums.pop(name) for _, sums in parts)]) for name in self._names}
+        return Keyed(
+            np.concatenate([empty, *(part.key for part in parts)]),
+            {name: np.concatenate([empty, *(part.sums.pop(name) for part in parts)]) for name in self._names},
+            {name: np.concatenate([empty, *(part.more.pop(name) for part in parts)]) for name in self._more},
+        )
 
 
 class _Part:
@@ -118,12 +142,12 @@ class _Part:
     def __init__(self, names: tuple[str, ...]) -> None:
         self._names = names
         self._settled: Keyed | None = None
-        self._blocks: list[tuple[IntArray, Columns, Expand | None]] = []
+        self._blocks: list[tuple[IntArray, Columns, Expand | None, More]] = []
         self._waiting = self._n_settled = 0
 
-    def add(self, key: IntArray, columns: Columns, expand: Expand | None) -> None:
+    def add(self, key: IntArray, columns: Columns, expand: Expand | None, more: More) -> None:
         """Add one block."""
-        self._blocks.append((key, columns, expand))
+        self._blocks.append((key, columns, expand, more))
         self._waiting += len(key)
         if self._waiting > max(2 * self._n_settled, _FEW):
             self.settled()
@@ -131,13 +155,17 @@ class _Part:
     def settled(self) -> Keyed:
         """Return the distinct keys in order and their sums."""
         if self._waiting:
-            blocks = [(key, columns if expand is None else expand(columns)) for key, columns, expand in self._blocks]
+            blocks = [
+                Keyed(key, columns if expand is None else expand(columns), more)
+                for key, columns, expand, more in self._blocks
+            ]
             blocks += [] if self._settled is None else [self._settled]
             self._blocks = []
-            key = np.concatenate([key for key, _ in blocks])
-            sums = {name: np.concatenate([sums.pop(name) for _, sums in blocks]) for name in self._names}
-            self._settled = add_up(key, sums)
-            self._n_settled, self._waiting = len(self._settled[0]), 0
+            key = np.concatenate([block.key for block in blocks])
+            more = {name: np.concatenate([block.more.pop(name) for block in blocks]) for name in list(blocks[0].more)}
+            sums = {name: np.concatenate([block.sums.pop(name) for block in blocks]) for name in self._names}
+            self._settled = add_up(key, sums, more)
+            self._n_settled, self._waiting = len(self._settled.key), 0
         if self._settled is None:
             msg = "nothing was added to this part"
             raise ValueError(msg)

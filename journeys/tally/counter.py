@@ -13,8 +13,10 @@ from journeys.intake.identity import FIRST_KEYS, bucket_of_major
 from journeys.intake.rows import Rows
 from journeys.kernels.arrays import BoolArray, IntArray
 from journeys.kernels.compiled import count_in_order, gathered, inserted
-from journeys.kernels.counting import Block, close_log, count_rows
+from journeys.kernels.counting import close_log, count_rows
+from journeys.kernels.openers import before_opener
 from journeys.kernels.records import FIRST_OUTCOME, Carried, Counted, Reading
+from journeys.kernels.stories import Block
 from journeys.tally.order import CHUNK_ROWS, Ordered, chunks
 from journeys.tally.sums import Sums
 
@@ -35,12 +37,15 @@ class LeaveOut:
         Names of the columns.
     duplicates, after_outcome : bool
         `duplicates="drop"`, `after_outcome="stop"`.
+    opens : ndarray of int32 or None
+        Codes of the states that may open a journey; None: any.
     """
 
     time: str
     event: str
     duplicates: bool
     after_outcome: bool
+    opens: NDArray[np.int32] | None = None
 
 
 class Counter:
@@ -64,7 +69,14 @@ class Counter:
         self, reading: Reading, leave_out: LeaveOut, sums: Sums, findings: Findings, *, compiled: bool = False
     ) -> None:
         self._reading, self._leave_out, self._sums, self._findings = reading, leave_out, sums, findings
-        self._compiled = compiled and not leave_out.after_outcome
+        plain = reading.grouping is None and reading.stages is None
+        self._compiled = compiled and plain and not leave_out.after_outcome and leave_out.opens is None
+        self._also = [
+            *(["visit_start"] if reading.merge_repeats else []),
+            *(["group"] if reading.grouping is not None else []),
+            *(["seen"] if leave_out.opens is not None else []),
+            *(["stage", "stage_start"] if reading.stages is not None else []),
+        ]
         self._carried = self._blank(0)
         self._n_states = 0
 
@@ -99,7 +111,7 @@ class Counter:
         start = rows.starts()
         at = self._carried.find(rows.key[start])
         held = at >= 0
-        if (rows.time[start[held]] <= self._carried.time[at[held]]).any():
+        if (rows.time[start[held]] <= self._carried.latest[at[held]]).any():
             raise OutOfOrderError
         kept = self._without_duplicates(rows, start)
         code = code_of_event[kept.event]
@@ -108,12 +120,18 @@ class Counter:
                 start = kept.starts()
             keep = self._before_end(kept, code, start, at)
             kept, code = kept.take(keep), code[keep]
+        if self._leave_out.opens is not None and len(kept):
+            keep = self._from_opener(kept, code)
+            self._note_seen(rows, kept.take(keep))
+            kept, code = kept.take(keep), code[keep]
         if not len(kept):
             return None
         if kept is not rows:
             start = kept.starts()
             at = self._carried.find(kept.key[start])
         latest = self._count(kept, code, start, at)
+        if latest.seen is not None:
+            latest.seen = rows.time[np.searchsorted(rows.key, latest.key, side="right") - 1]
         if self._leave_out.after_outcome:
             # The latest row of any kind, even one left out, is what later rows must not precede.
             last = np.searchsorted(rows.key, latest.key, side="right") - 1
@@ -150,13 +168,42 @@ class Counter:
 
     def _count(self, rows: Ordered, code: Codes, start: IntArray, at: IntArray) -> Carried:
         """Add up a block and return its customers' new records."""
+        counted, latest = count_rows(self._block(rows, code, start, at), self._reading)
+        self._note(counted, rows.rows, rows.order)
+        return latest
+
+    def _block(self, rows: Ordered, code: Codes, start: IntArray, at: IntArray) -> Block:
+        """Return rows with what is carried of their customers."""
         key, held = rows.key[start], at >= 0
         # The records of customers never seen are never looked at: any will do.
         prior = self._carried.take(np.maximum(at, 0)) if held.any() else self._blank(len(start))
-        block = Block(rows.time, code, start, key, bucket_of_major(key).astype(np.uint8), prior, held)
-        counted, latest = count_rows(block, self._reading)
-        self._note(counted, rows.rows, rows.order)
-        return latest
+        by = None if rows.rows.by is None else rows.rows.by[rows.order]
+        return Block(rows.time, code, start, key, bucket_of_major(key).astype(np.uint8), prior, held, by)
+
+    def _from_opener(self, rows: Ordered, code: Codes) -> BoolArray:
+        """Tell which rows do not come before the first state that may open their journey; count those that do."""
+        start = rows.starts()
+        block = self._block(rows, code, start, self._carried.find(rows.key[start]))
+        opens = self._leave_out.opens
+        left = before_opener(block, np.zeros(0, np.int32) if opens is None else opens, self._reading)
+        self._findings.add("before_opener", self._leave_out.event, rows.numbers(left))
+        return ~left
+
+    def _note_seen(self, rows: Ordered, kept: Ordered) -> None:
+        """Note the latest row of customers of whom none is counted, which later rows must not precede."""
+        start = rows.starts()
+        key, last = rows.key[start], rows.time[np.append(start[1:], len(rows)) - 1]
+        none = ~np.isin(key, kept.key)
+        at = self._carried.find(key)
+        if self._carried.seen is not None:
+            self._carried.seen[at[none & (at >= 0)]] = last[none & (at >= 0)]
+        new = none & (at < 0)
+        if new.any():
+            records = self._blank(int(new.sum()))
+            records.key, records.seen = key[new], last[new]
+            # Nobody yet, as far as journeys go.
+            records.code[:] = 0
+            self._carried.insert([records])
 
     def _note(self, counted: Counted, rows: Rows, order: IntArray) -> None:
         """Add up what was counted, and what was found on the way."""
@@ -215,17 +262,18 @@ class Counter:
         self._findings.add("ended_before", self._leave_out.event, rows.numbers(left_before))
         self._findings.add("after_outcome", self._leave_out.event, rows.numbers(left_after))
         last = start + size - 1
-        self._carried.time[at[over]] = rows.time[last[over]]
+        self._carried.latest[at[over]] = rows.time[last[over]]
         new = before_log & ~seen
         if new.any():
             records = self._blank(int(new.sum()))
-            records.key, records.time = rows.key[last[new]], rows.time[last[new]]
+            records.key = rows.key[last[new]]
+            records.latest[:] = rows.time[last[new]]
             records.story_over[:] = True
             self._carried.insert([records])
         return ~(left_before | left_after)
 
     def _blank(self, n: int) -> Carried:
         """Return `n` records of customers who have no journey."""
-        records = Carried.zeros(n, visits=self._reading.merge_repeats)
+        records = Carried.zeros(n, self._also)
         records.code[:] = records.first_code[:] = FIRST_OUTCOME
         return records

@@ -31,18 +31,27 @@ class MoveSums:
         Code of the first state.
     buckets : range
         Which buckets, for the size of the table of cells.
+    more : tuple of str
+        Further parts of the key ("group"); with any there is no table of cells.
     """
 
-    def __init__(self, edges: IntArray | None, longest_us: int | None, first_state: int, buckets: range) -> None:
+    def __init__(
+        self,
+        edges: IntArray | None,
+        longest_us: int | None,
+        first_state: int,
+        buckets: range,
+        more: tuple[str, ...] = (),
+    ) -> None:
         self._edges, self._first_state, self._buckets = edges, first_state, buckets
         self._n_bins = 0
-        if longest_us is not None:
+        if longest_us is not None and not more:
             self._n_bins = int(bin_of(np.array([longest_us]), edges)[0]) + 1
         self._n_states = 0
         self._n = np.zeros(0, np.uint32)
         self._rest = np.zeros(0, np.int64)
         self._count, self._dwell = 0, 0.0
-        self._sparse = Accumulator(("n", "dwell_high", "dwell_low"))
+        self._sparse = Accumulator(("n", "dwell_high", "dwell_low"), more)
         bins = np.arange(self._n_bins)
         self._lower = bins * DAY_US if edges is None else np.concatenate([[0], edges])[: self._n_bins]
         self._widest = 0.0 if edges is None or not self._n_bins else float((edges[: self._n_bins] - self._lower).max())
@@ -135,11 +144,13 @@ class MoveSums:
 
     def _add_sparse(self, moves: Moves, busy: int) -> None:
         key = pack(moves.bucket, moves.state, moves.next_code, bin_of(moves.dwell, self._edges), busy)
-        self._sparse.add(key, {"dwell": moves.dwell}, _single_moves)
+        more = {} if moves.group is None else {"group": moves.group}
+        self._sparse.add(key, {"dwell": moves.dwell}, _single_moves, more)
 
 
 def _part(moves: Moves, mask: np.ndarray) -> Moves:
-    return Moves(moves.bucket[mask], moves.state[mask], moves.next_code[mask], moves.dwell[mask])
+    group = None if moves.group is None else moves.group[mask]
+    return Moves(moves.bucket[mask], moves.state[mask], moves.next_code[mask], moves.dwell[mask], group=group)
 
 
 def _single_moves(columns: Columns) -> Columns:

@@ -5,12 +5,15 @@ from __future__ import annotations
 from collections.abc import Iterator
 from concurrent.futures import ThreadPoolExecutor, wait
 from dataclasses import dataclass
-from typing import TypeVar
+from typing import Any, TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
 
+from journeys.errors import LogError
 from journeys.intake.findings import Findings
+from journeys.intake.group_checks import CAME_AFTER
+from journeys.intake.groups import MOST_GROUPS, cohort_calendar
 from journeys.intake.identity import bucket_major
 from journeys.intake.look import Look
 from journeys.intake.normalise import Normaliser
@@ -18,17 +21,20 @@ from journeys.intake.read import LogSource
 from journeys.intake.rows import Rows
 from journeys.intake.rules import JourneyRules
 from journeys.kernels.arrays import IntArray
-from journeys.kernels.bins import dwell_edges, elapsed_edges
+from journeys.kernels.bins import DAY_US, dwell_edges, elapsed_edges
+from journeys.kernels.grouping import MOST_PERIODS, Grouping
 from journeys.kernels.records import Reading
 from journeys.tally.accumulate import Columns, Keyed
 from journeys.tally.blocks import cut_between_ties
 from journeys.tally.codes import StateCodes
 from journeys.tally.counter import Counter, LeaveOut
 from journeys.tally.dense import MoveSums
+from journeys.tally.groups import Group, named_groups
 from journeys.tally.order import by_customer
 from journeys.tally.spill import BUCKETS_PER_PART, N_PARTS, Spill
 from journeys.tally.sums import Sums
-from journeys.tally.tally import KEYS, N_BUCKETS, NARROW, Tally, join_key, split_key
+from journeys.tally.tables import KEYS, N_BUCKETS, NARROW, sorted_by_key, split_key
+from journeys.tally.tally import Tally
 
 T = TypeVar("T")
 
@@ -65,8 +71,10 @@ class _Worker:
         # Merged visits may last longer than the silence, and without one there is no longest stay at all.
         longest = None if rules.repeats == "merge" else rules.silence_us
         edges = dwell_edges(rules.silence_us, span.whole_days)
-        moves = MoveSums(edges, longest, reading.first_state, buckets)
-        self.sums = Sums(elapsed_edges(rules.silence_us, span.whole_days, rules.horizons_us), moves)
+        group = () if reading.grouping is None else ("group",)
+        moves = MoveSums(edges, longest, reading.first_state, buckets, group)
+        edges = elapsed_edges(rules.silence_us, span.whole_days, rules.horizons_us)
+        self.sums = Sums(edges, moves, reading.grouping)
         self._counter = self._new_counter()
 
     def add(self, block: _Block, part: slice) -> None:
@@ -128,14 +136,19 @@ class Pass:
         progress: bool,
     ) -> None:
         self._log, self._rules, self._look, self._span, self._progress = log, rules, look, span, progress
+        self._codes = StateCodes(rules.outcomes, tuple(dict.fromkeys((*rules.stages, *rules.opens))))
+        cohort_starts, self._cohorts = _cohorts(rules, span)
         reading = Reading(
             n_outcomes=len(rules.outcomes), n_converted=len(rules.converted), silence_us=rules.silence_us,
             same_outcome_us=rules.same_outcome_us, merge_repeats=rules.repeats == "merge",
             log_start_us=span.log_start_us, as_of_us=span.as_of_us, complete_history=rules.complete_history,
+            grouping=_grouping(rules, span, cohort_starts), stages=_codes_of(rules.stages, self._codes),
         )  # fmt: skip
         self._normaliser = Normaliser(rules, log_start_us=span.log_start_us, as_of_us=span.as_of_us)
-        self._codes = StateCodes(rules.outcomes)
-        leave_out = LeaveOut(rules.time, rules.event, rules.duplicates == "drop", rules.after_outcome == "stop")
+        leave_out = LeaveOut(
+            rules.time, rules.event, rules.duplicates == "drop", rules.after_outcome == "stop",
+            _codes_of(rules.opens, self._codes),
+        )
         cuts = [part * N_PARTS // n_workers for part in range(n_workers + 1)]
         self._workers = [
             _Worker(range(first, last), reading, leave_out, span, rules, compiled=compiled)
@@ -184,36 +197,87 @@ class Pass:
 
     def _label_positions(self) -> IntArray:
         """Return where each code's name stands among the labels of the tally, its states in alphabetical order."""
-        states = sorted(self._codes.states)
-        fixed = len(self._codes.names) - len(states)
-        place = {name: fixed + i for i, name in enumerate(states)}
-        return np.array([*range(fixed), *(place[name] for name in self._codes.states)])
+        fixed = len(self._codes.names) - len(self._codes.states)
+        place = {name: fixed + i for i, name in enumerate(self._codes.seen)}
+        # A stage that never turned up stands in no table.
+        return np.array([*range(fixed), *(place.get(name, 0) for name in self._codes.states)])
 
     def _tally(self, parts: list[dict[str, Columns]]) -> Tally:
         findings = sum((worker.findings for worker in self._workers), self._normaliser.findings)
         findings.add("later_than_now", self._rules.time, self._look.n_later_than_now)
         tables = {name: _side_by_side([part.pop(name) for part in parts]) for name in KEYS}
+        groups = self._name_groups(tables)
         customers = {"bucket": np.arange(N_BUCKETS)}
         for name in self._workers[0].sums.customers:
             # Each bucket is one worker's, so the others hold zeros.
             customers[name] = np.sum([worker.sums.customers[name] for worker in self._workers], axis=0)
+        keyed: dict[str, Any] = tables
         return Tally(
-            rules=self._rules, states=tuple(sorted(self._codes.states)), log_start_us=self._span.log_start_us,
+            rules=self._rules, states=tuple(self._codes.seen), groups=groups, log_start_us=self._span.log_start_us,
             as_of_us=self._span.as_of_us, whole_days=self._span.whole_days, n_rows=self._normaliser.n_rows,
-            customers=customers, record=findings, **tables,
+            customers=customers, record=findings, **keyed,
         )  # fmt: skip
+
+    def _name_groups(self, tables: dict[str, Columns]) -> tuple[Group, ...]:
+        """Return the groups in the order of their values, and put their places into the tables, sorted anew."""
+        if not self._rules.by:
+            return ()
+        packed = np.unique(np.concatenate([table["group"] for table in tables.values()]))
+        combinations = self._normaliser.groups.combinations
+        groups, place = named_groups(packed, self._rules, combinations, self._cohorts)
+        if len(groups) > MOST_GROUPS:
+            msg = (
+                f"by: {len(groups):,} groups of journeys; wanted {MOST_GROUPS:,} at most: leave out a column, take "
+                "longer cohorts, or count parts of the log apart"
+            )
+            raise LogError(msg)
+        for name, table in tables.items():
+            table["group"] = place[np.searchsorted(packed, table["group"])].astype(NARROW["group"])
+            tables[name] = sorted_by_key(name, table)
+        return groups
+
+
+def _cohorts(rules: JourneyRules, span: Span) -> tuple[IntArray | None, tuple[str, ...]]:
+    """Return starts and names of the cohorts; dates are the same days everywhere."""
+    if rules.cohort is None:
+        return None, ()
+    timezone = "UTC" if span.whole_days else rules.timezone
+    return cohort_calendar(rules.cohort, timezone, span.log_start_us, span.as_of_us)
+
+
+def _grouping(rules: JourneyRules, span: Span, cohort_starts: IntArray | None) -> Grouping | None:
+    if not rules.by:
+        return None
+    splits = np.array(rules.splits_us, np.int64)
+    if len(splits) >= MOST_PERIODS:
+        msg = f"split_at: got {len(splits):,} cuts; wanted fewer than {MOST_PERIODS:,}"
+        raise LogError(msg)
+    if span.whole_days and (splits % DAY_US).any():
+        msg = f"split_at: got {rules.split_at}, but the log holds dates; wanted cuts at whole days"
+        raise LogError(msg)
+    outside = (splits <= span.log_start_us) | (splits > span.as_of_us)
+    if outside.any():
+        msg = f"split_at: {rules.split_at[int(np.argmax(outside))]} does not lie inside the log; wanted cuts within it"
+        raise LogError(msg)
+    return Grouping(CAME_AFTER in rules.by, cohort_starts, splits, DAY_US if span.whole_days else 1)
+
+
+def _codes_of(states: tuple[str, ...], codes: StateCodes) -> NDArray[np.int32] | None:
+    return np.array([codes.code(name) for name in states], np.int32) if states else None
 
 
 def _labelled(name: str, keyed: Keyed, code: IntArray) -> Columns:
     """Take the keys of a table apart, codes replaced by the positions of their names among the labels."""
     table = split_key(name, *keyed)
+    if "group" in keyed.more:
+        # Still packed numbers, which need more room than places among the groups.
+        table["group"] = keyed.more["group"]
     if (code[1:] > code[:-1]).all():
         return table
-    for column in ("state", "next", "outcome"):
+    for column in ("state", "next", "outcome", "stage"):
         if column in table:
             table[column] = code[table[column]].astype(NARROW[column])
-    order = np.argsort(join_key(name, table))
-    return {column: values[order] for column, values in table.items()}
+    return sorted_by_key(name, table)
 
 
 def _side_by_side(parts: list[Columns]) -> Columns:

@@ -12,12 +12,14 @@ import numpy as np
 
 from journeys.intake.identity import bucket_of_major
 from journeys.intake.rows import Rows
-from journeys.tally.tally import N_BUCKETS
+from journeys.tally.tables import N_BUCKETS
 
 # Files, each with the customers of a few neighbouring buckets.
 N_PARTS = 50
 BUCKETS_PER_PART = N_BUCKETS // N_PARTS
-_RECORD = np.dtype([("key", "u8"), ("time", "i8"), ("event", "i4"), ("row", "i8"), ("sequence", "i8"), ("ended", "?")])
+_RECORD = np.dtype(
+    [("key", "u8"), ("time", "i8"), ("event", "i4"), ("row", "i8"), ("sequence", "i8"), ("ended", "?"), ("by", "i4")]
+)
 
 
 class Spill:
@@ -26,20 +28,18 @@ class Spill:
     def __init__(self) -> None:
         self._folder = tempfile.TemporaryDirectory(prefix="journeys-")
         self._files: dict[int, BinaryIO] = {}
-        self._has_sequence = self._has_ended = False
+        self._held: list[str] = []
 
     def add(self, rows: Rows) -> None:
         """Write a block of rows to the parts its customers belong to."""
         if not len(rows):
             return
-        self._has_sequence, self._has_ended = rows.sequence is not None, rows.ended is not None
+        self._held = [name for name, column in rows.columns().items() if column is not None]
         part = bucket_of_major(rows.key) // BUCKETS_PER_PART
         order = np.argsort(part, kind="stable")
         record = np.zeros(len(rows), _RECORD)
-        for name in ("key", "time", "event", "row", "sequence", "ended"):
-            column = getattr(rows, name)
-            if column is not None:
-                record[name] = column[order]
+        for name in self._held:
+            record[name] = getattr(rows, name)[order]
         present, begin = np.unique(part[order], return_index=True)
         for number, piece in zip(present.tolist(), np.split(record, begin[1:]), strict=True):
             if number not in self._files:
@@ -53,11 +53,9 @@ class Spill:
             handle.close()
             record = np.fromfile(handle.name, _RECORD)
             Path(handle.name).unlink()
-            columns = {name: record[name].copy() for name in ("key", "time", "event", "row")}
-            sequence = record["sequence"].copy() if self._has_sequence else None
-            ended = record["ended"].copy() if self._has_ended else None
+            columns = {name: record[name].copy() for name in self._held}
             del record
-            yield Rows(**columns, sequence=sequence, ended=ended)
+            yield Rows(**columns)
 
     def __enter__(self) -> Spill:
         """Start."""

@@ -18,7 +18,8 @@ from journeys.files import written_whole
 from journeys.intake.arrays import from_numpy, from_texts
 from journeys.intake.findings import Findings
 from journeys.intake.rules import JourneyRules
-from journeys.tally.tally import CUSTOMER_SUMS, KEYS, NARROW, SUMS, TABLES, Tally
+from journeys.tally.tables import CUSTOMER_SUMS, NARROW, SUMS, TABLES, parts_of
+from journeys.tally.tally import Tally
 
 if TYPE_CHECKING:
     from journeys.tally.accumulate import Columns
@@ -29,11 +30,11 @@ HEAD = b"journeys"
 _ROWS_AT_ONCE = 1 << 18
 
 
-def columns_of(table: str) -> tuple[str, ...]:
+def columns_of(table: str, *, grouped: bool) -> tuple[str, ...]:
     """Return the columns of a table in their order."""
     if table == "customers":
         return ("bucket", *CUSTOMER_SUMS, "largest_events")
-    return (*(part for part in KEYS[table] if part != "-"), *SUMS[table])
+    return (*parts_of(table, grouped=grouped), *SUMS[table])
 
 
 def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | None = None) -> None:
@@ -60,10 +61,12 @@ def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | 
         "as_of_us": tally.as_of_us,
         "whole_days": tally.whole_days,
         "n_rows": tally.n_rows,
+        "groups": tally.groups,
+        "part": tally.part,
         "findings": tally.record.to_dict(),
         "checksum": _checksum(tally),
     }
-    schema = _schema().with_metadata({HEAD: json.dumps(head).encode(), **(more or {})})
+    schema = _schema(grouped=bool(tally.rules.by)).with_metadata({HEAD: json.dumps(head).encode(), **(more or {})})
     # Dictionaries pay where a value runs on for many rows; elsewhere they only take time.
     runs = ["table", "bucket", "state"]
     with (
@@ -79,9 +82,9 @@ def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | 
                 writer.write_table(_as_arrow(name, piece, schema))
 
 
-def _schema() -> pa.Schema:
+def _schema(*, grouped: bool) -> pa.Schema:
     """Return the columns of all tables, each with the type that is enough for it."""
-    every = dict.fromkeys(column for table in TABLES for column in columns_of(table))
+    every = dict.fromkeys(column for table in TABLES for column in columns_of(table, grouped=grouped))
     narrow = {name: pa.from_numpy_dtype(kind) for name, kind in NARROW.items()}
     return pa.schema([("table", pa.string()), *((name, narrow.get(name, pa.int64())) for name in every)])
 
@@ -161,14 +164,18 @@ def _checksum(tally: Tally) -> str:
 
 def _from_parts(table: pa.Table, head: dict[str, Any]) -> Tally:
     held: dict[str, Columns] = {}
+    rules = JourneyRules.from_dict(head["rules"])
     for name in TABLES:
         rows = table.filter(pc.equal(table["table"], name))
         narrow = {} if name == "customers" else NARROW
         held[name] = {
-            column: rows[column].to_numpy().astype(narrow.get(column, np.int64)) for column in columns_of(name)
+            column: rows[column].to_numpy().astype(narrow.get(column, np.int64))
+            for column in columns_of(name, grouped=bool(rules.by))
         }
     return Tally(
-        rules=JourneyRules.from_dict(head["rules"]),
+        rules=rules,
+        groups=tuple(tuple(group) for group in head["groups"]),
+        part=head["part"],
         states=tuple(head["states"]),
         log_start_us=head["log_start_us"],
         as_of_us=head["as_of_us"],

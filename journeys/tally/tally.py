@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import json
 import os
-from collections.abc import Mapping
 from dataclasses import dataclass, replace
 from functools import cached_property
 from hashlib import blake2b
@@ -18,50 +17,22 @@ from journeys.intake.findings import Findings
 from journeys.intake.rules import JourneyRules
 from journeys.kernels.records import FIRST_OUTCOME, LAPSED, OPEN
 from journeys.tally.accumulate import Columns, add_up, exact_limbs
-from journeys.tally.keys import pack, unpack
+from journeys.tally.groups import Group, merged_groups, picked
+from journeys.tally.tables import (
+    CODED,
+    FLAGS,
+    KEYS,
+    NARROW,
+    SUMS,
+    TABLES,
+    join_key,
+    split_key,
+)
 
 if TYPE_CHECKING:
     from typing import Self
 
     import pandas as pd
-
-N_BUCKETS = 200
-
-# The parts of each table's key, in the order they are packed, and what is summed under it.
-KEYS: dict[str, tuple[str, ...]] = {
-    "moves": ("bucket", "state", "next", "bin", "busy"),
-    "entries": ("bucket", "state", "-", "-", "sure"),
-    "journeys": ("bucket", "state", "outcome", "bin", "sure"),
-    "gaps": ("bucket", "outcome", "-", "bin", "back"),
-}
-SUMS: dict[str, tuple[str, ...]] = {
-    "moves": ("n", "dwell_high", "dwell_low"),
-    "entries": ("n",),
-    "journeys": ("n", "steps", "steps_squared", "elapsed_high", "elapsed_low"),
-    "gaps": ("n", "away_high", "away_low"),
-}
-CUSTOMER_SUMS = ("people", "j", "jj", "jx", "x", "xx")
-TABLES = (*KEYS, "customers")
-_CODED = ("state", "next", "outcome")
-_FLAGS = ("sure", "busy", "back")
-# Parts of a key in the fewest bytes that hold them; everything else is int64.
-NARROW: dict[str, type[np.generic]] = {
-    "bucket": np.uint8, "state": np.uint16, "next": np.uint16, "outcome": np.uint16, "bin": np.int32,
-    "sure": np.bool_, "busy": np.bool_, "back": np.bool_,
-}  # fmt: skip
-
-
-def split_key(name: str, key: np.ndarray, sums: Mapping[str, np.ndarray]) -> Columns:
-    """Return a table's columns with its packed key taken apart, each part in the fewest bytes that hold it."""
-    parts = zip(KEYS[name], unpack(key), strict=True)
-    return {**{part: column().astype(NARROW[part]) for part, column in parts if part != "-"}, **sums}
-
-
-def join_key(name: str, table: Mapping[str, np.ndarray]) -> np.ndarray:
-    """Return the packed key of a table's rows."""
-    nothing = np.zeros(len(table["n"]), np.int64)
-    return pack(*(nothing if part == "-" else table[part] for part in KEYS[name]))
-
 
 @dataclass(frozen=True, eq=False)
 class Tally:
@@ -79,10 +50,15 @@ class Tally:
         True where the log holds dates without a time.
     n_rows : int
         Rows read, whatever became of them.
-    moves, entries, journeys, gaps, customers : mapping of str to ndarray
-        The tables, one array per column, sorted by their keys; states and outcomes as positions in `labels`.
+    moves, entries, journeys, gaps, stages, customers : mapping of str to ndarray
+        The tables, one array per column, sorted by their keys; states and outcomes as positions in `labels`,
+        groups as positions in `groups`.
     record : Findings
         What was left out or looked odd.
+    groups : tuple of tuple
+        Values of the columns `rules.by`, one tuple per group of journeys; empty where they are not grouped.
+    part : bool
+        The tally holds some of the groups of another (see `where`).
 
     Examples
     --------
@@ -105,8 +81,11 @@ class Tally:
     entries: Columns
     journeys: Columns
     gaps: Columns
+    stages: Columns
     customers: Columns
     record: Findings
+    groups: tuple[Group, ...] = ()
+    part: bool = False
 
     @property
     def labels(self) -> tuple[str, ...]:
@@ -125,7 +104,7 @@ class Tally:
 
     @property
     def n_people(self) -> int:
-        """Customers with at least one journey."""
+        """Customers with at least one journey; in a part of a tally, how many there are at least."""
         return int(self.customers["people"].sum())
 
     @property
@@ -153,7 +132,7 @@ class Tally:
 
         Parameters
         ----------
-        name : {"moves", "entries", "journeys", "gaps", "customers"}
+        name : {"moves", "entries", "journeys", "gaps", "stages", "customers"}
             Which table.
 
         Returns
@@ -180,10 +159,14 @@ class Tally:
                 frame[total] = pd.Series(exact_limbs(columns, total), dtype=object)
             elif column.endswith("_low"):
                 continue
-            elif column in _CODED:
-                frame[column] = labels[values]
+            elif column in CODED:
+                named = labels[values]
+                frame[column] = np.where(values == 0, "entry", named) if column == "stage" else named
+            elif column == "group":
+                for i, name_of_part in enumerate(self.rules.by):
+                    frame[name_of_part] = np.array([group[i] for group in self.groups], dtype=object)[values]
             else:
-                frame[column] = values.astype(bool) if column in _FLAGS else values
+                frame[column] = values.astype(bool) if column in FLAGS else values
         return pd.DataFrame(frame)
 
     @cached_property
@@ -196,6 +179,8 @@ class Tally:
             self.as_of_us,
             self.whole_days,
             self.n_rows,
+            self.groups,
+            self.part,
         ]
         digest = blake2b(json.dumps(head, sort_keys=True).encode(), digest_size=16)
         for table in TABLES:
@@ -225,6 +210,7 @@ class Tally:
             return NotImplemented
         for what, mine, theirs in (
             ("rules", self.rules, other.rules),
+            ("parts of the groups", self.part, other.part),
             ("as_of", self.as_of, other.as_of),
             ("log_start", self.log_start, other.log_start),
             ("kind of times (dates or moments)", *self._kinds_of_times(other)),
@@ -237,13 +223,14 @@ class Tally:
                 )
                 raise JourneysError(msg)
         states = tuple(sorted({*self.states, *other.states}))
-        here, there = self._recoded(states), other._recoded(states)
+        groups, here_at, there_at = merged_groups(self.groups, other.groups)
+        here, there = self._recoded(states, here_at), other._recoded(states, there_at)
         people = {
             name: np.maximum(a, b) if name == "largest_events" else a + b
             for (name, a), b in zip(self.customers.items(), other.customers.values(), strict=True)
         }
         people["bucket"] = self.customers["bucket"]
-        tables = {name: _added(name, here[name], there[name]) for name in KEYS}
+        tables: dict[str, Any] = {name: _added(name, here[name], there[name]) for name in KEYS}
         return replace(
             self,
             states=states,
@@ -251,6 +238,7 @@ class Tally:
             n_rows=self.n_rows + other.n_rows,
             record=self.record + other.record,
             customers=people,
+            groups=groups,
             **tables,
         )
 
@@ -262,14 +250,66 @@ class Tally:
         kind = known[0] if known else self.whole_days or other.whole_days
         return kind, kind
 
-    def _recoded(self, states: tuple[str, ...]) -> dict[str, Columns]:
-        """Return the keyed tables with codes of the longer list of states."""
+    def where(self, **conditions: Any) -> Self:
+        """Return the part of the tally that some groups of journeys make up.
+
+        Parameters
+        ----------
+        **conditions
+            By the name of a group column: a value, a list of values, or a pair (low, high), both included,
+            None for no bound. A group has to meet all of them.
+
+        Returns
+        -------
+        Tally
+            Every question takes it. Of its customers only a lower bound is known.
+
+        Raises
+        ------
+        ValueError
+            If a column is not one of `rules.by`, a value never occurs, or nothing is left.
+        TypeError
+            If a bound is of another kind than the values.
+
+        Examples
+        --------
+        >>> import pandas as pd
+        >>> from journeys.tally.count import count_log
+        >>> log = pd.DataFrame({"member": [1, 2], "event": "visit", "country": ["NL", "BE"],
+        ...                     "happened": pd.to_datetime(["2025-01-01", "2025-03-01"], utc=True)})
+        >>> tally = count_log(log, JourneyRules("member", "happened", "event", silence="30d", by="country"))
+        >>> tally.where(country="NL").n_journeys
+        1
+        """
+        keep = picked(self.groups, self.rules.by, conditions)
+        if not keep.any():
+            msg = f"no group of journeys meets {conditions}; wanted conditions that some group meets"
+            raise ValueError(msg)
+        if keep.all():
+            return self
+        place = np.cumsum(keep) - 1
+        tables: dict[str, Any] = {}
+        for name in KEYS:
+            table: Columns = getattr(self, name)
+            mine = keep[table["group"]]
+            tables[name] = {column: values[mine] for column, values in table.items()}
+            tables[name]["group"] = place[tables[name]["group"]].astype(NARROW["group"])
+        customers = {name: np.zeros_like(values) for name, values in self.customers.items()}
+        customers["bucket"] = self.customers["bucket"]
+        customers["people"][np.unique(tables["journeys"]["bucket"])] = 1
+        groups = tuple(group for group, kept in zip(self.groups, keep.tolist(), strict=True) if kept)
+        return replace(self, groups=groups, part=True, customers=customers, **tables)
+
+    def _recoded(self, states: tuple[str, ...], group: np.ndarray) -> dict[str, Columns]:
+        """Return the keyed tables with codes of the longer lists of states and groups."""
         new = np.arange(len(self.labels))
         place = {name: self.first_state + i for i, name in enumerate(states)}
         new[self.first_state :] = [place[name] for name in self.states]
         return {
             name: {
-                column: new[values].astype(NARROW[column]) if column in _CODED else values
+                column: (group[values] if column == "group" else new[values]).astype(NARROW[column])
+                if column in CODED or column == "group"
+                else values
                 for column, values in getattr(self, name).items()
             }
             for name in KEYS
@@ -316,6 +356,7 @@ def _timestamp(us: int) -> pd.Timestamp:
 
 
 def _added(name: str, mine: Columns, theirs: Columns) -> Columns:
-    key = np.concatenate([join_key(name, mine), join_key(name, theirs)])
+    (key, more), (other_key, other_more) = join_key(name, mine), join_key(name, theirs)
     sums = {column: np.concatenate([mine[column], theirs[column]]) for column in SUMS[name]}
-    return split_key(name, *add_up(key, sums))
+    both = {part: np.concatenate([more[part], other_more[part]]) for part in more}
+    return split_key(name, *add_up(np.concatenate([key, other_key]), sums, both))

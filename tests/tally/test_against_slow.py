@@ -26,6 +26,7 @@ from journeys.intake.rules import JourneyRules
 from journeys.kernels.bins import dwell_edges, elapsed_edges
 from journeys.kernels.compiled import is_built
 from journeys.tally import count_log, order
+from journeys.tally.groups import period_names
 
 N_LOGS = int(os.environ.get("JOURNEYS_SLOW_LOGS", "1500"))
 N_SHARES = 6
@@ -43,6 +44,7 @@ FINDING_CODES = (
     "duplicate",
     "ended_before",
     "after_outcome",
+    "before_opener",
     "repeated_outcome",
     "outcome_without_states",
     "first_visit_of_unsure_journey",
@@ -86,13 +88,25 @@ def source_of(log: RandomLog, chunk: int) -> pd.DataFrame | pa.RecordBatchReader
     return pa.RecordBatchReader.from_batches(table.schema, table.to_batches(max_chunksize=chunk))
 
 
-def keyed(table: pd.DataFrame, keys: list[str], sums: list[str]) -> Table:
-    """Return a table as key → sums, all plain Python values."""
+def keyed(table: pd.DataFrame, keys: list[str], sums: list[str], by: tuple[Any, ...] = ()) -> Table:
+    """Return a table as key → sums, all plain Python values; where journeys are grouped, the group comes last."""
     columns = [table[name].tolist() for name in (*keys, *sums)]
+    if by:
+        columns.insert(len(keys), groups(table, *by))
+        keys = [*keys, "group"]
     rows = list(zip(*columns, strict=True))
     result = {row[: len(keys)]: row[len(keys) :] for row in rows}
     assert len(result) == len(rows), "keys are not unique"
     return result
+
+
+def groups(table: pd.DataFrame, by: tuple[str, ...], periods: tuple[str, ...]) -> list[tuple[Any, ...]]:
+    """Return the group of each row: the values in the order of `by`, then the number of the period."""
+    parts = [table[name].tolist() for name in by if name != "period"]
+    period = [0] * len(table)
+    if "period" in by:
+        period = [periods.index(name) for name in table["period"]]
+    return list(zip(*parts, period, strict=True))
 
 
 @dataclass(frozen=True)
@@ -122,18 +136,22 @@ def compare(log: RandomLog, how: How) -> None:
         tally = count_log(
             source_of(log, how.batch), JourneyRules(**log.rules), n_workers=how.n_workers, compiled=how.compiled
         )
-    moves = keyed(tally.table("moves"), ["bucket", "state", "next", "bin", "busy"], ["n", "dwell"])
+    by = (tally.rules.by, period_names(tally.rules.splits_us)) if tally.rules.by else ()
+    moves = keyed(tally.table("moves"), ["bucket", "state", "next", "bin", "busy"], ["n", "dwell"], by)
     assert moves == slow.moves
-    entries = keyed(tally.table("entries"), ["bucket", "state", "sure"], ["n"])
+    entries = keyed(tally.table("entries"), ["bucket", "state", "sure"], ["n"], by)
     assert entries == {key: (n,) for key, n in slow.entries.items()}
     journeys = keyed(
         tally.table("journeys"),
         ["bucket", "state", "outcome", "bin", "sure"],
         ["n", "steps", "steps_squared", "elapsed"],
+        by,
     )
     assert journeys == slow.journeys
-    gaps = keyed(tally.table("gaps"), ["bucket", "outcome", "bin", "back"], ["n", "away"])
+    gaps = keyed(tally.table("gaps"), ["bucket", "outcome", "bin", "back"], ["n", "away"], by)
     assert gaps == slow.gaps
+    stages = keyed(tally.table("stages"), ["bucket", "stage", "next", "bin", "sure", "bin_stage"], ["n"], by)
+    assert stages == slow.stages
     people = tally.table("customers")
     people = people[people["people"] > 0]
     customers = keyed(people, ["bucket"], ["people", "j", "jj", "jx", "x", "xx", "largest_events"])

@@ -1,0 +1,151 @@
+"""Return settings as plain values, TOML files and a call that can be pasted back."""
+
+from __future__ import annotations
+
+import difflib
+import tomllib
+from collections.abc import Mapping
+from dataclasses import fields
+from pathlib import Path
+from typing import TYPE_CHECKING, Any, ClassVar, Self
+
+from journeys.errors import RulesError
+from journeys.intake.frozen import toml_text
+
+
+class Settings:
+    """What a frozen dataclass of settings gets from and gives to files; its first three fields must be given."""
+
+    __slots__ = ()
+
+    if TYPE_CHECKING:
+        __dataclass_fields__: ClassVar[dict[str, Any]]
+
+    @classmethod
+    def from_dict(cls, settings: Mapping[str, Any]) -> Self:
+        """Return settings from a mapping with the names of the parameters as keys.
+
+        Parameters
+        ----------
+        settings : mapping
+
+        Returns
+        -------
+        Self
+
+        Raises
+        ------
+        RulesError
+            If a key is unknown or missing, or a value is wrong.
+
+        Examples
+        --------
+        >>> from journeys.intake.rules import JourneyRules
+        >>> JourneyRules.from_dict({"customer": "who", "time": "when", "event": "what", "silense": "30d"})
+        Traceback (most recent call last):
+        ...
+        journeys.errors.RulesError: 'silense' is no setting of the rules; did you mean 'silence'?
+        """
+        known = [field.name for field in fields(cls)]
+        problems = []
+        for name in settings:
+            if name not in known:
+                close = difflib.get_close_matches(str(name), known, n=1)
+                hint = f"did you mean {close[0]!r}?" if close else f"there are {', '.join(known)}"
+                problems.append(f"{name!r} is no setting of the rules; {hint}")
+        problems += [
+            f'{name}: not given; wanted the name of a column, such as {name} = "{name}"'
+            for name in known[:3]
+            if name not in settings
+        ]
+        if problems:
+            raise RulesError("\n".join(problems))
+        return cls(**settings)
+
+    @classmethod
+    def from_toml(cls, path: str | Path) -> Self:
+        """Return settings from a TOML file with the names of the parameters as keys.
+
+        Parameters
+        ----------
+        path : str or Path
+
+        Returns
+        -------
+        Self
+
+        Raises
+        ------
+        RulesError
+            If the file cannot be read, or what it says is wrong.
+        """
+        file = Path(path)
+        try:
+            settings = tomllib.loads(file.read_text(encoding="utf-8"))
+        except OSError as fault:
+            raise RulesError(f"rules file {file}: {fault.strerror or 'cannot be read'}") from None
+        except (tomllib.TOMLDecodeError, UnicodeDecodeError) as fault:
+            raise RulesError(f"rules file {file}: not TOML ({fault})") from None
+        try:
+            return cls.from_dict(settings)
+        except RulesError as fault:
+            raise RulesError(f"rules file {file}: {fault}") from None
+
+    def to_dict(self) -> dict[str, Any]:
+        """Return settings as plain values that JSON can hold; `from_dict` makes equal rules of them.
+
+        Returns
+        -------
+        dict
+
+        Examples
+        --------
+        >>> from journeys.intake.rules import JourneyRules
+        >>> rules = JourneyRules("who", "when", "what", silence=None, horizons=["7d"])
+        >>> JourneyRules.from_dict(rules.to_dict()) == rules
+        True
+        """
+        return {field.name: _plain(getattr(self, field.name)) for field in fields(self)}
+
+    def to_toml(self) -> str:
+        """Return settings as the text of a TOML file that `from_toml` makes equal rules of.
+
+        Returns
+        -------
+        str
+
+        Examples
+        --------
+        >>> from journeys.intake.rules import JourneyRules
+        >>> print(JourneyRules("who", "when", "what", silence=None).to_toml()[:45])
+        customer = "who"
+        time = "when"
+        event = "what"
+        """
+        return toml_text({name: value for name, value in self._for_toml().items() if value is not None})
+
+    def _for_toml(self) -> dict[str, Any]:
+        """Return the settings with None written in words where it means something else than left out."""
+        return self.to_dict()
+
+    def __repr__(self) -> str:
+        """Write the call that makes it, without the settings left as they come."""
+        first = [getattr(self, field.name) for field in fields(self)[:3]]
+        standard = type(self)(*first, **self._must_be_said())
+        shown = [f"{field.name}={getattr(self, field.name)!r}" for field in fields(self)[:3]]
+        for field in fields(self)[3:]:
+            value = getattr(self, field.name)
+            if field.name in self._must_be_said() or value != getattr(standard, field.name):
+                shown.append(f"{field.name}={value!r}")
+        return f"{type(self).__name__}({', '.join(shown)})"
+
+    def _must_be_said(self) -> dict[str, Any]:
+        """Return settings without a standard, each with a value that will do."""
+        return {}
+
+
+def _plain(value: Any) -> Any:
+    """Tuples as lists, mappings as dicts."""
+    if isinstance(value, Mapping):
+        return {key: _plain(item) for key, item in value.items()}
+    return list(value) if isinstance(value, tuple) else value

@@ -1,0 +1,69 @@
+"""The tables of a tally: the parts of their keys, what is summed, and how keys are packed and taken apart."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+
+import numpy as np
+
+from journeys.tally.accumulate import Columns, More, in_order
+from journeys.tally.keys import pack, unpack
+
+N_BUCKETS = 200
+
+# The parts of each table's key, in the order they are packed, and what is summed under it.
+KEYS: dict[str, tuple[str, ...]] = {
+    "moves": ("bucket", "state", "next", "bin", "busy"),
+    "entries": ("bucket", "state", "-", "-", "sure"),
+    "journeys": ("bucket", "state", "outcome", "bin", "sure"),
+    "gaps": ("bucket", "outcome", "-", "bin", "back"),
+    "stages": ("bucket", "stage", "next", "bin", "sure"),
+}
+# Parts of a key that are not packed with the others; where journeys are grouped, "group" goes before them.
+MORE: dict[str, tuple[str, ...]] = {"stages": ("bin_stage",)}
+SUMS: dict[str, tuple[str, ...]] = {
+    "moves": ("n", "dwell_high", "dwell_low"),
+    "entries": ("n",),
+    "journeys": ("n", "steps", "steps_squared", "elapsed_high", "elapsed_low"),
+    "gaps": ("n", "away_high", "away_low"),
+    "stages": ("n",),
+}
+CUSTOMER_SUMS = ("people", "j", "jj", "jx", "x", "xx")
+TABLES = (*KEYS, "customers")
+CODED = ("state", "next", "outcome", "stage")
+FLAGS = ("sure", "busy", "back")
+# Parts of a key in the fewest bytes that hold them; everything else is int64.
+NARROW: dict[str, type[np.generic]] = {
+    "bucket": np.uint8, "state": np.uint16, "next": np.uint16, "outcome": np.uint16, "bin": np.int32,
+    "sure": np.bool_, "busy": np.bool_, "back": np.bool_, "group": np.int32, "stage": np.uint16,
+    "bin_stage": np.int32,
+}  # fmt: skip
+
+
+def parts_of(name: str, *, grouped: bool) -> tuple[str, ...]:
+    """Return the columns of a table's key in their order."""
+    packed = tuple(part for part in KEYS[name] if part != "-")
+    return (*(("group",) if grouped else ()), *packed, *MORE.get(name, ()))
+
+
+def split_key(name: str, key: np.ndarray, sums: Mapping[str, np.ndarray], more: More) -> Columns:
+    """Return a table's columns with its packed key taken apart, each part in the fewest bytes that hold it."""
+    packed = {part: column for part, column in zip(KEYS[name], unpack(key), strict=True) if part != "-"}
+    parts = {
+        part: (more[part] if part in more else packed[part]()).astype(NARROW[part])
+        for part in parts_of(name, grouped="group" in more)
+    }
+    return {**parts, **sums}
+
+
+def join_key(name: str, table: Mapping[str, np.ndarray]) -> tuple[np.ndarray, More]:
+    """Return the packed key of a table's rows, and the further parts of it."""
+    nothing = np.zeros(len(table["n"]), np.int64)
+    more = {part: table[part].astype(np.int64) for part in ("group", *MORE.get(name, ())) if part in table}
+    return pack(*(nothing if part == "-" else table[part] for part in KEYS[name])), more
+
+
+def sorted_by_key(name: str, table: Columns) -> Columns:
+    """Return a table in the order of its key."""
+    order = in_order(*join_key(name, table))
+    return {column: values[order] for column, values in table.items()}
