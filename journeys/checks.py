@@ -9,6 +9,7 @@ import datetime as dt
 import re
 from collections.abc import Sequence
 from fractions import Fraction
+from functools import lru_cache
 from typing import TYPE_CHECKING, TypeVar
 
 import numpy as np
@@ -104,6 +105,26 @@ def whole(value: int, name: str, least: int) -> int:
     if isinstance(value, bool | np.bool_) or not isinstance(value, int | np.integer) or value < least:
         raise ValueError(f"{name}: got {value!r}; wanted a whole number from {least}")
     return int(value)
+
+
+def rng(value: int | np.random.Generator | None, seed: int) -> np.random.Generator:
+    """Source of chance: a generator as it is, or one started from a number (`seed` if None is given).
+
+    Raises
+    ------
+    ValueError
+        If it is something else, or a negative number.
+
+    Examples
+    --------
+    >>> bool(rng(7, 0).random() == rng(None, 7).random())
+    True
+    """
+    if value is None or isinstance(value, np.random.Generator):
+        return np.random.default_rng(seed if value is None else value)
+    if isinstance(value, bool | np.bool_) or not isinstance(value, int | np.integer) or value < 0:
+        raise ValueError(f"rng: got {value!r}; wanted a whole number from 0, a numpy.random.Generator or None")
+    return np.random.default_rng(int(value))
 
 
 def one_of(value: T, choices: Sequence[T], name: str) -> T:
@@ -275,6 +296,7 @@ def instant_text(us: int) -> str:
     return moment.date().isoformat() if us % DAY_US == 0 else moment.isoformat() + "Z"
 
 
+@lru_cache(1024)
 def _text_us(text: str, name: str) -> Fraction:
     """Read text part by part, exactly; only the ISO 8601 form ("P1DT2H") is left to pandas."""
     lowered = text.strip().lower()

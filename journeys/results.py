@@ -4,20 +4,21 @@ from __future__ import annotations
 
 import textwrap
 from collections.abc import Collection, Mapping, Sequence
-from dataclasses import dataclass, field, fields
+from dataclasses import dataclass, field, fields, replace
 from typing import TYPE_CHECKING, ClassVar
 
 import numpy as np
 
 from journeys import checks
-from journeys.kernels.arrays import BoolArray, FloatArray
-from journeys.kernels.intervals import clopper_pearson, log_interval, logit_interval
+from journeys.kernels.arrays import BoolArray, FloatArray, IntArray
+from journeys.kernels.draw_intervals import drawn_interval
+from journeys.kernels.intervals import clopper_pearson, log_interval, logit_interval, t_interval
 
 if TYPE_CHECKING:
     import pandas as pd
 
 # How an interval is made from an estimate and its standard error.
-LOGIT, LOG, CELL, KNOWN = "logit", "log", "cell", "known"
+LOGIT, LOG, CELL, PLAIN, KNOWN = "logit", "log", "cell", "plain", "known"
 
 
 @dataclass(frozen=True, eq=False)
@@ -30,7 +31,7 @@ class Estimates:
         Estimate, standard error on its own scale and degrees of freedom of its t quantile.
     scale : ndarray of str, shape (n,)
         "logit" for probabilities, "log" for times, "cell" for single moves (Clopper-Pearson at `n_effective`),
-        "known" for numbers without uncertainty.
+        "plain" for differences, "known" for numbers without uncertainty.
     n_effective : ndarray, shape (n,)
         Independent trials that would carry the same information; NaN where that has no meaning.
     few : ndarray of bool, shape (n,)
@@ -69,6 +70,7 @@ class Estimates:
                 (self.scale == LOG) & ~self.few,
                 log_interval(self.value, self.std_error, self.df, confidence_level),
             ),
+            ((self.scale == PLAIN) & ~self.few, t_interval(self.value, self.std_error, self.df, confidence_level)),
             ((self.scale == CELL) & ~self.few, self._exact(confidence_level, "both")),
             (one_sided & (self.value <= 0.5), self._exact(confidence_level, "upper")),
             (one_sided & (self.value > 0.5), self._exact(confidence_level, "lower")),
@@ -82,14 +84,85 @@ class Estimates:
         trials = np.nan_to_num(self.n_effective)
         return clopper_pearson(share * trials, trials, confidence_level, side)  # type: ignore[arg-type]
 
-    @classmethod
-    def joined(cls, parts: list[Estimates]) -> Estimates:
-        """Return several one after another."""
-        return cls(*(np.concatenate([getattr(part, f.name) for part in parts]) for f in fields(cls)))
+    @staticmethod
+    def joined(parts: Sequence[Estimates]) -> Estimates:
+        """Return several one after another; each keeps its kind of bounds."""
+        whole = Estimates(*(np.concatenate([getattr(part, f.name) for part in parts]) for f in fields(Estimates)))
+        if all(type(part) is Estimates for part in parts):
+            return whole
+        return JoinedEstimates(**vars(whole), parts=tuple(parts), order=np.arange(len(whole.value)))
 
     def take(self, index: np.ndarray) -> Estimates:
-        """Return those at `index`."""
-        return Estimates(*(getattr(self, f.name)[index] for f in fields(self)))
+        """Return those at `index`, positions or a mask."""
+        return Estimates(*(getattr(self, f.name)[index] for f in fields(Estimates)))
+
+    def times(self, factor: float) -> Estimates:
+        """Return the same numbers in another unit."""
+        return self if factor == 1 else replace(self, value=self.value * factor, std_error=self.std_error * factor)
+
+
+@dataclass(frozen=True, eq=False)
+class DrawnEstimates(Estimates):
+    """Estimates whose two-sided bounds are read off the answers of resamples.
+
+    Attributes
+    ----------
+    draws : ndarray, shape (n_resamples, n)
+        All NaN where there shall be no interval.
+    accelerations : ndarray, shape (n,), or None
+        For bias-corrected and accelerated bounds; None for percentiles.
+    """
+
+    draws: FloatArray
+    accelerations: FloatArray | None
+
+    def bounds(self, confidence_level: float) -> tuple[FloatArray, FloatArray]:
+        """Return the lower and upper bounds at a level (see `Estimates.bounds`)."""
+        low, high = super().bounds(confidence_level)
+        mine = np.isin(self.scale, (LOGIT, LOG)) & ~self.few
+        lower, upper = drawn_interval(self.draws, self.value, confidence_level, self.accelerations)
+        return np.where(mine, lower, low), np.where(mine, upper, high)
+
+    def take(self, index: np.ndarray) -> Estimates:
+        """Return those at `index`, positions or a mask."""
+        accelerations = None if self.accelerations is None else self.accelerations[index]
+        kept = vars(super().take(index))
+        return DrawnEstimates(**kept, draws=self.draws[:, index], accelerations=accelerations)
+
+    def times(self, factor: float) -> Estimates:
+        """Return the same numbers in another unit."""
+        value, std_error = self.value * factor, self.std_error * factor
+        return replace(self, value=value, std_error=std_error, draws=self.draws * factor)
+
+
+@dataclass(frozen=True, eq=False)
+class JoinedEstimates(Estimates):
+    """Estimates of several kinds together.
+
+    Attributes
+    ----------
+    parts : tuple of Estimates
+        Each with the bounds of its kind.
+    order : ndarray of int, shape (n,)
+        Position of each number in the parts one after another.
+    """
+
+    parts: tuple[Estimates, ...]
+    order: IntArray
+
+    def bounds(self, confidence_level: float) -> tuple[FloatArray, FloatArray]:
+        """Return the lower and upper bounds at a level (see `Estimates.bounds`)."""
+        low, high = zip(*(part.bounds(confidence_level) for part in self.parts), strict=True)
+        return np.concatenate(low)[self.order], np.concatenate(high)[self.order]
+
+    def take(self, index: np.ndarray) -> Estimates:
+        """Return those at `index`, positions or a mask."""
+        return JoinedEstimates(**vars(super().take(index)), parts=self.parts, order=self.order[index])
+
+    def times(self, factor: float) -> Estimates:
+        """Return the same numbers in another unit."""
+        parts = tuple(part.times(factor) for part in self.parts)
+        return replace(self, value=self.value * factor, std_error=self.std_error * factor, parts=parts)
 
 
 @dataclass(frozen=True, eq=False)

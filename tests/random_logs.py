@@ -9,12 +9,14 @@ from __future__ import annotations
 
 import datetime as dt
 from collections.abc import Sequence
+from decimal import Decimal
 from functools import partial
 from typing import Any, NamedTuple, Protocol, TypeVar
 from zoneinfo import ZoneInfo
 
 import numpy as np
 import pandas as pd
+import pyarrow as pa
 from hypothesis import strategies as st
 
 T = TypeVar("T")
@@ -28,6 +30,12 @@ STATES = ("visit", "price", "basket", "café ☕")
 OUTCOMES = ("joined", "declined", "left")
 CONVERTED_FIRST = (("joined",), ("joined", "left"), ("joined",))
 INTEGER_IDS = (0, 1, -5, 2**53 + 1, -(2**63), 2**63 - 1)
+# Amounts of money of each type; as millionths they need more than 32 bits, and no sum of 3,500 outgrows 63.
+AMOUNTS: dict[str, tuple[Any, ...]] = {
+    "whole": (5, 0, -3, None, 700_000_000, -(10**9)),
+    "decimal": (Decimal("19.99"), Decimal("-0.000001"), None, Decimal("123456789.345678"), Decimal(0)),
+    "float": (19.99, -5.25, 0.1, float("nan"), float("inf"), 1e-7, 1234567890.34, -700_000_000.0),
+}
 TEXT_IDS = ("a", "b", "1", "member-000000017", "Zoë", "a" * 40, " a", "b\x00c")
 
 
@@ -102,6 +110,7 @@ def build(chance: Chance, n_rows: int | None) -> RandomLog:
     ids = [ids[(first + step) % len(ids)] for step in range(chance.whole(1, 4))]
     faults = once_in(chance, 2)
     jitter = not whole_days and once_in(chance, 3)
+    amounts = pick(chance, tuple(AMOUNTS)) if "value" in rules else ""
     rows: list[tuple[Any, ...]] = []
     for _ in range(n_rows if n_rows is not None else chance.whole(1, 30)):
         if rows and once_in(chance, 8):
@@ -111,16 +120,16 @@ def build(chance: Chance, n_rows: int | None) -> RandomLog:
         time = START_US + unit * chance.whole(-2, n_ticks + 2)
         if jitter:
             time += pick(chance, (0, 0, 1, -1))
-        rows.append(random_row(chance, pick(chance, ids), time, pick(chance, names), rules, faults))
+        rows.append(random_row(chance, pick(chance, ids), time, pick(chance, names), rules, faults, amounts))
     if not once_in(chance, 3):
         by_time = once_in(chance, 2)
         rows.sort(key=lambda row: (row[1] is None, row[1] or 0) if by_time else (str(row[0]), row[1] or 0))
-    frame = as_frame(chance, rows, rules, whole_days, isinstance(ids[0], int))
+    frame = as_frame(chance, rows, rules, whole_days, isinstance(ids[0], int), amounts)
     return RandomLog(frame, rules, rows, slow)
 
 
 def random_row(
-    chance: Chance, customer: Any, time: int, event: str, rules: dict[str, Any], faults: bool
+    chance: Chance, customer: Any, time: int, event: str, rules: dict[str, Any], faults: bool, amounts: str
 ) -> tuple[Any, ...]:
     """Make one row, now and then without its customer, time or event."""
     cells: list[Any] = [customer, time, event]
@@ -137,6 +146,8 @@ def random_row(
         columns["country"] = pick(chance, ("NL", "BE", "NL", None, ""))
     if "size" in rules.get("by", ()):
         columns["size"] = chance.whole(1, 3)
+    if "value" in rules:
+        columns["amount"] = pick(chance, AMOUNTS[amounts])
     return (*cells, sequence, ended, columns)
 
 
@@ -206,6 +217,11 @@ def random_rules(chance: Chance, whole_days: bool, n_ticks: int) -> tuple[dict[s
         rules["opens"] = slow["opens"] = list(pick(chance, (["visit"], ["price", "visit"], ["price"], ["nowhere"])))
     if once_in(chance, 4):
         rules["stages"] = slow["stages"] = pick(chance, (["visit", "price"], ["price", "nowhere", "visit"], ["price"]))
+    if once_in(chance, 3):
+        touchpoints = pick(chance, (["price", "visit"], "all", ["nowhere", "café ☕", "the basket"], ["visit"], "all"))
+        rules["touchpoints"] = slow["touchpoints"] = touchpoints
+    if once_in(chance, 3):
+        rules["value"] = slow["value"] = "amount"
     slow |= {key: rules[key] for key in names if key in rules}
     return rules, slow
 
@@ -249,7 +265,12 @@ def as_text(time_us: int, whole_days: bool) -> str:
 
 
 def as_frame(
-    chance: Chance, rows: list[tuple[Any, ...]], rules: dict[str, Any], whole_days: bool, integer_ids: bool
+    chance: Chance,
+    rows: list[tuple[Any, ...]],
+    rules: dict[str, Any],
+    whole_days: bool,
+    integer_ids: bool,
+    amounts: str,
 ) -> pd.DataFrame:
     """Return the rows as a data frame, in one of several types that hold the same values."""
     customers, times, events, sequences, ended, columns = (list(part) for part in zip(*rows, strict=True))
@@ -270,6 +291,10 @@ def as_frame(
         frame["country"] = pd.Series(countries).astype("category") if once_in(chance, 3) else countries
     if "size" in rules.get("by", ()):
         frame["size"] = pd.array([cells["size"] for cells in columns], dtype="int64")
+    if "value" in rules:
+        cells_of = [cells["amount"] for cells in columns]
+        kinds = {"whole": "Int64", "decimal": pd.ArrowDtype(pa.decimal128(25, 6)), "float": "float64"}
+        frame["amount"] = pd.Series(cells_of, dtype=kinds[amounts])
     return frame
 
 

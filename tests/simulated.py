@@ -55,6 +55,15 @@ class CustomerClass:
     tempo: float
 
 
+@dataclass(frozen=True)
+class Change:
+    """From a day of the log on, joining is so many times as likely: at every visit begun then, or in journeys."""
+
+    day: float
+    joining: float
+    in_flight: bool
+
+
 ONE_CLASS = (CustomerClass(1.0, 1.0, 1.0),)
 # People in a hurry who seldom join, and slow ones who do: a fit without classes is 1.71 days short here.
 TWO_CLASSES = (CustomerClass(0.4, 0.2, 0.3), CustomerClass(0.6, 1.8, 2.0))
@@ -147,24 +156,29 @@ def simulate(
     first_arrivals: str = "uniform",
     returning: float = 0.5,
     two_classes: bool = False,
+    change: Change | None = None,
 ) -> pd.DataFrame:
     """Return the log between `LOG_START` and `log_end(length_in_silences)`: customer, time, event, by time.
 
     First arrivals are uniform over the log, or over the log and the eight silences before it ("steady state
     from -8W"); what falls outside the log is cut off. After each journey, lapsed or converted, a customer
-    comes back with probability `returning`.
+    comes back with probability `returning`. A change holds for visits begun after it (in flight), or for all
+    visits of journeys begun after it.
     """
     starts = {"uniform": 0.0, "steady state from -8W": -8.0 * SILENCE_DAYS}
     log_days = length_in_silences * SILENCE_DAYS
     kinds = TWO_CLASSES if two_classes else ONE_CLASS
     kind = rng.choice(len(kinds), n_customers, p=[k.share for k in kinds])
-    routes = np.stack([headings(k).cumsum(axis=1) for k in kinds])
-    mu = np.stack([log_medians(k) for k in kinds])
+    later = 1.0 if change is None else change.joining
+    changed = [CustomerClass(k.share, k.joining * later, k.tempo) for k in kinds]
+    routes = np.stack([headings(k).cumsum(axis=1) for k in (*kinds, *changed)])
+    mu = np.stack([log_medians(k) for k in (*kinds, *changed)])
 
     into = np.minimum(ENTRY.cumsum(), 1.0)
     into[-1] = 1.0  # whatever rounding left of the sum
     customer = np.arange(n_customers)
     time = rng.uniform(starts[first_arrivals], log_days, n_customers)
+    began = time
     state = draw(np.broadcast_to(into, (n_customers, len(STATES))), rng)
     seen: list[tuple[NDArray[np.int64], Floats, NDArray[np.int64]]] = []
     while len(customer):
@@ -172,10 +186,13 @@ def simulate(
         # Who has just converted, or heads for nowhere, or would be silent too long, ends the journey here.
         at_state = state < len(STATES)
         here = np.where(at_state, state, 0)
-        heading = draw(routes[kind[customer], here], rng)
+        behaves = kind[customer]
+        if change is not None:
+            behaves = behaves + len(kinds) * ((time if change.in_flight else began) >= change.day)
+        heading = draw(routes[behaves, here], rng)
         moving = at_state & (heading <= len(STATES))
         target = np.minimum(heading, len(STATES))
-        stay = rng.lognormal(mu[kind[customer], here, target], SIGMA[here])
+        stay = rng.lognormal(mu[behaves, here, target], SIGMA[here])
         moving &= stay <= SILENCE_DAYS
         back = ~moving & (rng.random(len(customer)) < returning)
         ended = time + np.where(at_state, SILENCE_DAYS, 0.0)
@@ -183,8 +200,9 @@ def simulate(
         entry = draw(np.broadcast_to(into, (len(customer), len(STATES))), rng)
         time = np.where(moving, time + stay, ended + away)
         state = np.where(moving, target, entry)
+        began = np.where(moving, began, time)
         going_on = (moving | back) & (time <= log_days)
-        customer, time, state = customer[going_on], time[going_on], state[going_on]
+        customer, time, state, began = (part[going_on] for part in (customer, time, state, began))
     return as_log(seen, log_days)
 
 

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
+from fractions import Fraction
 from types import SimpleNamespace
 from typing import Any
 
@@ -16,7 +17,8 @@ DAY_US = 24 * HOUR_US
 
 # The arguments of `read_log` under their own names.
 Rules = SimpleNamespace
-# (customer, time, event, sequence, ended before the log, further columns), in input order.
+# (customer, time, event, sequence, ended before the log, further columns), in input order; the value of an event is
+# the further column that the rules name for it.
 LogRow = tuple[Any, Any, Any, Any, Any, dict[str, Any]]
 
 
@@ -29,6 +31,8 @@ class SlowTally:
     journeys: dict[tuple[Any, ...], tuple[int, ...]] = field(default_factory=dict)
     gaps: dict[tuple[Any, ...], tuple[int, ...]] = field(default_factory=dict)
     stages: dict[tuple[Any, ...], tuple[int, ...]] = field(default_factory=dict)
+    touches: dict[tuple[Any, ...], tuple[int, ...]] = field(default_factory=dict)
+    touch_sets: dict[tuple[Any, ...], tuple[int, ...]] = field(default_factory=dict)
     customers: dict[int, tuple[int, ...]] = field(default_factory=dict)
     findings: dict[str, int] = field(default_factory=dict)
 
@@ -45,6 +49,7 @@ class Row:
     ended: bool
     place: int
     columns: dict[str, Any]
+    value: int = 0
 
 
 @dataclass
@@ -60,6 +65,8 @@ class Journey:
     group: dict[str, Any]
     n_stages: int = 0
     stage_start: int = 0
+    touched: list[str] = field(default_factory=list)
+    value: int = 0
 
 
 def read_log(
@@ -83,6 +90,8 @@ def read_log(
     cohort_of: Callable[[int], str] | None = None,
     splits_us: Sequence[int] = (),
     stages: Sequence[str] = (),
+    touchpoints: Sequence[str] | str = (),
+    value: str | None = None,
     whole_days: bool = False,
     bucket_of: Callable[[Any], int],
     dwell_bin: Callable[[int], int],
@@ -93,8 +102,11 @@ def read_log(
     rules = Rules(**locals())
     rules.outcomes = {*converted, *churned}
     rules.exclude = exclude or {}
+    rules.asks_for_touches = bool(touchpoints)
     if whole_days:
         rules.dwell_bin = rules.elapsed_bin = days_of
+    if touchpoints == "all":
+        rules.touchpoints = states_that_occur(rows, rules)
     tally = SlowTally()
     by_customer: dict[Any, list[Row]] = {}
     for place, raw in enumerate(rows):
@@ -106,6 +118,8 @@ def read_log(
         name = mapped(event, rules)
         assert name is not None
         row = Row(customer, time, event, name, sequence, bool(ended), place, columns)
+        if value is not None:
+            row.value = worth(columns[value], tally)
         by_customer.setdefault(customer, []).append(row)
     for customer_rows in by_customer.values():
         history = put_in_order(customer_rows)
@@ -116,6 +130,20 @@ def read_log(
         if history:
             CustomerReader(history, rules, tally).read()
     return tally
+
+
+def states_that_occur(rows: Sequence[LogRow], rules: Rules) -> list[str]:
+    """Return the states of the rows that stay, in alphabetical order."""
+    names = {mapped(raw[2], rules) for raw in rows if reason_to_leave_out(raw, rules) is None}
+    return sorted(name for name in names if name is not None and name not in rules.outcomes)
+
+
+def worth(amount: Any, tally: SlowTally) -> int:
+    """Return the millionths of an amount, of a missing one 0."""
+    if amount is None or amount != amount or amount in (float("inf"), -float("inf")):
+        found(tally, "missing_value")
+        return 0
+    return round(Fraction(amount) * 1_000_000)
 
 
 def days_of(microseconds: int) -> int:
@@ -192,11 +220,11 @@ def put_in_order(history: list[Row]) -> list[Row]:
 
 
 def without_duplicates(history: list[Row], rules: Rules, tally: SlowTally) -> list[Row]:
-    """Count rows equal in customer, time, event as recorded and sequence; drop the later ones if asked."""
+    """Count rows equal in customer, time, event as recorded, sequence and value; drop the later ones if asked."""
     seen = set()
     first_ones = []
     for row in history:
-        cells = (row.customer, row.time, row.event, row.sequence)
+        cells = (row.customer, row.time, row.event, row.sequence, row.value)
         if cells in seen:
             found(tally, "duplicate")
         else:
@@ -259,6 +287,7 @@ class CustomerReader:
         self.group: dict[str, Any] = {}
         self.n_decided = 0
         self.n_converted = 0
+        self.total_value = 0
 
     def read(self) -> None:
         """Read every row, then what can be said at ``as_of``."""
@@ -312,12 +341,21 @@ class CustomerReader:
         key = self.grouped(key, row.time)
         self.tally.entries[key] = self.tally.entries.get(key, 0) + 1
         self.journey = Journey(row.name, row.time, sure, 0, row.name, row.time, group, 0, row.time)
+        self.touch(row)
         if self.is_outcome(row):
             found(self.tally, "outcome_without_states")
             self.end_journey(row.name, row.time)
         else:
             self.journey.visits = 1
             self.look_at_stage(row)
+
+    def touch(self, row: Row) -> None:
+        """Note what an event of the running journey touches, and what it is worth."""
+        assert self.journey is not None
+        self.total_value += row.value
+        self.journey.value += row.value
+        if row.name in self.rules.touchpoints:
+            self.journey.touched.append(row.name)
 
     def look_at_stage(self, row: Row) -> None:
         """Count the stage before as passed where the row is the next stage."""
@@ -369,6 +407,7 @@ class CustomerReader:
     def go_on(self, row: Row, prev: Row, *, n_rows_before: int) -> None:
         """Go on with the running journey: the same visit, a move to a state, or a move to an outcome."""
         assert self.journey is not None
+        self.touch(row)
         if self.rules.repeats == "merge" and row.name == prev.name:
             return
         self.move(row.name, row.time, n_rows_before)
@@ -407,6 +446,8 @@ class CustomerReader:
         """Count how long a customer was away after the last event of a journey that had ended."""
         _, until, to = self.seen(since, until, "back" if back else "open")
         away = until - since
+        if after == "lapsed" and away < self.rules.silence_us:
+            return  # the period ended before the silence did
         self.add(self.tally.gaps, (self.bucket, after, self.rules.elapsed_bin(away), to == "back"), since, 1, away)
 
     def move(self, to: str, at: int, n_rows_before: int) -> None:
@@ -431,20 +472,44 @@ class CustomerReader:
         _, until, seen = self.seen(journey.start, at, outcome)
         elapsed = until - journey.start
         steps = journey.visits if outcome == "open" else journey.visits + 1
+        value = [journey.value] if self.rules.value is not None else []
         if seen != outcome or until != at:
-            steps = 0  # cut at the end of a period, where the steps so far are not known
+            # Cut at the end of a period, where the steps and the value so far are not known.
+            steps, value = 0, [0 for _ in value]
+        else:
+            self.count_touches(outcome, elapsed, value)
         key = (self.bucket, journey.entry_state, seen, self.rules.elapsed_bin(elapsed), journey.sure)
-        self.add(self.tally.journeys, key, journey.start, 1, steps, steps * steps, elapsed)
+        self.add(self.tally.journeys, key, journey.start, 1, steps, steps * steps, elapsed, *value)
         if outcome != "open":
             self.n_decided += 1
         if outcome in self.rules.converted:
             self.n_converted += 1
         self.journey = None
 
+    def count_touches(self, outcome: str, elapsed: int, value: list[int]) -> None:
+        """Count the journey under each touchpoint that it has touched, or under none, and under the set of them."""
+        journey = self.journey
+        assert journey is not None
+        if not self.rules.asks_for_touches:
+            return
+        bins, touched = self.rules.elapsed_bin(elapsed), journey.touched
+        distinct = len(set(touched))
+        for name in set(touched) or {"none of them"}:
+            first, last = (int(bool(touched) and touched[end] == name) for end in (0, -1))
+            key = (self.bucket, name, outcome, bins, journey.sure, distinct)
+            self.add(self.tally.touches, key, journey.start, 1, first, last, *value)
+        if len(self.rules.touchpoints) <= 15:
+            bits = sum(2**i for i, name in enumerate(self.rules.touchpoints) if name in touched)
+            self.add(self.tally.touch_sets, (self.bucket, outcome, bins, journey.sure, bits), journey.start, 1, *value)
+
     def count_customer(self) -> None:
-        """Add the customer to the sums of its bucket; the event count is merged by its largest."""
+        """Add the customer to the sums of its bucket; event count and value are merged by their largest."""
         j, x = self.n_decided, self.n_converted
-        *sums, largest = self.tally.customers.get(self.bucket, (0,) * 7)
-        new = (1, j, j * j, j * x, x, x * x)
-        added = [old + more for old, more in zip(sums, new, strict=True)]
-        self.tally.customers[self.bucket] = (*added, max(largest, len(self.history)))
+        new = (1, j, j * j, j * x, x, x * x, len(self.history))
+        if self.rules.value is not None:
+            new = (*new, self.total_value, self.total_value)
+        before = self.tally.customers.get(self.bucket, (0,) * len(new))
+        self.tally.customers[self.bucket] = tuple(
+            max(old, more) if place in (6, 8) else old + more
+            for place, (old, more) in enumerate(zip(before, new, strict=True))
+        )

@@ -18,13 +18,16 @@ def test_random_logs_bring_every_rule_to_bear() -> None:
     logs = [random_log(np.random.default_rng(seed)) for seed in range(300)]
     findings: Counter[str] = Counter()
     ends: Counter[tuple[str, bool]] = Counter()
-    equal_gaps = 0
+    equal_gaps = negative = 0
+    touched: Counter[tuple[str, int]] = Counter()
     for log in logs:
         tally = read_log(
             log.rows, **log.slow, bucket_of=lambda _: 0, dwell_bin=hours_of, elapsed_bin=hours_of
         )
         findings.update(tally.findings.keys())
         ends.update((key[2], key[4]) for key in tally.journeys)
+        touched.update((key[2], key[5]) for key in tally.touches)
+        negative += "value" in log.rules and any(sums[-1] < 0 for sums in tally.journeys.values())
         silence = log.slow["silence_us"]
         longest = {int(key[3] * HOUR_US) for key in tally.moves if key[2] not in ("lapsed", "open")}
         equal_gaps += silence in longest and not log.slow["whole_days"]
@@ -39,15 +42,20 @@ def test_random_logs_bring_every_rule_to_bear() -> None:
         "duplicate",
         "ended_before",
         "after_outcome",
+        "before_opener",
         "repeated_outcome",
         "outcome_without_states",
         "first_visit_of_unsure_journey",
+        "missing_value",
     }
     assert min(findings.values()) >= 10
     assert {(end, sure) for end in ("joined", "declined", "lapsed", "open") for sure in (True, False)} <= set(
         ends
     )
     assert equal_gaps > 20
+    assert negative > 10
+    ways = [(end, distinct) for end in ("joined", "lapsed", "open") for distinct in range(3)]
+    assert min(touched[way] for way in ways) >= 3
 
 
 def test_random_frames_hold_the_same_values_as_their_rows() -> None:

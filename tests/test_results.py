@@ -13,7 +13,18 @@ from club_log import club_fit, small_log
 
 import journeys as jn
 from journeys.questions.moves import moves
-from journeys.results import CELL, KNOWN, LOG, LOGIT, Estimates, Result, printable, text_table
+from journeys.results import (
+    CELL,
+    KNOWN,
+    LOG,
+    LOGIT,
+    DrawnEstimates,
+    Estimates,
+    JoinedEstimates,
+    Result,
+    printable,
+    text_table,
+)
 
 Question = Callable[..., Result]
 
@@ -22,16 +33,28 @@ def days_passage(fit: jn.JourneyFit, **options: float) -> Result:
     return jn.first_passage(fit, clock="time", **options)  # type: ignore[arg-type]
 
 
+def linear_passage(fit: jn.JourneyFit, **options: float) -> Result:
+    return jn.first_passage(fit, clock="time", method="linearised", **options)  # type: ignore[arg-type]
+
+
+def recurrence(fit: jn.JourneyFit, **options: float) -> Result:
+    return jn.return_time(fit, restart=True, **options)  # type: ignore[arg-type]
+
+
 QUESTIONS: dict[str, tuple[Question, list[str], list[str]]] = {
     "moves": (moves, ["state", "next_state"], ["n_moves", "n_effective"]),
     "outcomes": (jn.outcomes, ["start_state", "outcome"], ["n_effective"]),
-    "steps": (jn.first_passage, ["start_state", "measure"], ["n_effective"]),
-    "days": (days_passage, ["start_state", "measure"], ["n_effective"]),
+    "steps": (jn.first_passage, ["start_state", "measure"], ["n_effective", "n_undefined"]),
+    "days": (days_passage, ["start_state", "measure"], ["n_effective", "n_undefined"]),
+    "linearised": (linear_passage, ["start_state", "measure"], ["n_effective", "n_undefined"]),
+    "returns": (jn.return_time, ["state", "measure"], ["n_effective", "n_undefined"]),
+    "recurrence": (recurrence, ["state", "measure"], ["n_effective", "n_undefined"]),
     "time_to_convert": (jn.time_to_convert, ["measure", "horizon", "basis"], []),
 }
 NUMBERS = ["estimate", "std_error", "low", "high", "confidence_level"]
 NAMES = list(QUESTIONS)
 CHAIN_NAMES = [name for name in NAMES if name != "time_to_convert"]
+PASSAGES = ["steps", "days", "linearised"]
 
 
 @cache
@@ -49,7 +72,7 @@ def known_chain() -> jn.JourneyFit:
 
 def on_chain(name: str, fit: jn.JourneyFit, to: str) -> Result:
     """Ask a question of a known chain, which says nothing of what counts as converted."""
-    return QUESTIONS[name][0](fit, **({"to": to} if name in ("steps", "days") else {}))
+    return QUESTIONS[name][0](fit, **({"to": to} if name in PASSAGES else {}))
 
 
 # --- shape ------------------------------------------------------------------------------------------------
@@ -86,7 +109,8 @@ def test_every_question_has_rows_for_entry_and_every_state() -> None:
     fit = club_fit()
     starts = ["entry", *fit.states]
     assert answer("moves").to_frame().state.unique().tolist() == starts
-    for name in ("outcomes", "steps", "days"):
+    assert answer("returns").to_frame().state.unique().tolist() == list(fit.states)
+    for name in ("outcomes", *PASSAGES):
         assert answer(name).to_frame().start_state.unique().tolist() == starts
     assert answer("outcomes").to_frame().outcome.unique().tolist() == list(fit.outcomes)
 
@@ -110,9 +134,18 @@ def test_unflagged_numbers_have_both_bounds_apart(name: str) -> None:
     frame = answer(name).to_frame()
     plain = frame[frame.flag == ""]
     assert len(plain) > 5
-    assert (plain.low < plain.estimate).all()
-    assert (plain.estimate < plain.high).all()
-    assert (plain.std_error > 0).all()
+    # With restart everybody comes back: no doubt about that.
+    sure = (plain.estimate == 1) & (plain.std_error == 0)
+    assert not sure.any() or name == "recurrence"
+    assert (plain.low[sure] == 1).all()
+    # The bounds of a whole number are whole, and may be that number.
+    whole = plain.get("measure", plain.flag).isin(["median", "q90", "median_steps", "q90_steps"])
+    assert (plain.low <= plain.estimate)[whole].all()
+    assert (plain.estimate <= plain.high)[whole].all()
+    rest = ~(whole | sure)
+    assert (plain.low < plain.estimate)[rest].all()
+    assert (plain.estimate < plain.high)[rest].all()
+    assert (plain.std_error > 0)[~sure].all()
 
 
 @pytest.mark.parametrize("name", NAMES)
@@ -126,11 +159,13 @@ def test_another_level_needs_no_other_computation(name: str, monkeypatch: pytest
     for place in (
         "questions.outcomes.passage",
         "questions.first_passage.passage",
-        "questions.linear.passage",
+        "questions.linear.often_visited",
+        "questions.bootstrap.Refitter",
+        "questions.return_time.quantiles_of_moves",
         "questions.linear.variance_from_buckets",
         "questions.moves.variance_from_buckets",
-        "questions.time_to_convert.variance_from_buckets",
-        "questions.time_to_convert.fit_stays",
+        "questions.within.variance_from_buckets",
+        "questions.within.fit_stays",
     ):
         monkeypatch.setattr(f"journeys.{place}", refuse)
     with pytest.raises(AssertionError, match="computed again"):
@@ -230,6 +265,47 @@ def test_spread_far_beyond_the_number_gives_an_endless_interval_and_no_warning()
     low, high = estimates.bounds(0.95)
     assert low[0] == 0.0
     assert high[0] == np.inf
+
+
+def test_estimates_of_several_kinds_together_keep_their_bounds() -> None:
+    """Bounds of draws, of a scale and of an exact count, joined, reordered, and in another unit."""
+    n = 3
+    scale, few = np.array([LOG, LOG, CELL], dtype=object), np.array([False, True, True])
+    value, std_error = np.array([2.0, 3.0, 0.0]), np.array([0.2, 0.3, 0.0])
+    plain = Estimates(value, std_error, np.full(n, 50.0), scale, np.full(n, 9.0), few)
+    draws = np.linspace(0.5, 1.5, 1999)[:, None] * plain.value
+    drawn = DrawnEstimates(**vars(plain), draws=draws, accelerations=None)
+    whole = Estimates.joined([plain, drawn])
+    assert isinstance(whole, JoinedEstimates)
+    assert type(Estimates.joined([plain, plain])) is Estimates
+    low, high = whole.bounds(0.9)
+    np.testing.assert_array_equal(low[:n], plain.bounds(0.9)[0])
+    assert [low[n], high[n]] == pytest.approx([2 * 0.55, 2 * 1.45], abs=1e-3)
+    assert np.isnan([low[n + 1], high[n + 1]]).all()  # too few: no draws make up for that
+    assert [low[n + 2], high[n + 2]] == pytest.approx([0.0, 1 - 0.1 ** (1 / 9)])
+    order = np.array([3, 0, 5, 4])
+    for moved, index in ((whole.take(order), order), (whole.take(order).take(np.array([2, 0])), order[[2, 0]])):
+        np.testing.assert_array_equal(moved.bounds(0.9), np.array(whole.bounds(0.9))[:, index])
+        np.testing.assert_array_equal(moved.value, whole.value[index])
+    mask = whole.take(np.arange(2 * n) % 2 == 1)
+    np.testing.assert_array_equal(mask.bounds(0.8), np.array(whole.bounds(0.8))[:, [1, 3, 5]])
+    weeks = Estimates.joined([plain.take(np.array([0])), drawn.take(np.array([0]))]).times(1 / 7)
+    days = whole.take(np.array([0, 3]))
+    np.testing.assert_allclose(np.array(weeks.bounds(0.95)) * 7, days.bounds(0.95), rtol=1e-12)
+    np.testing.assert_allclose(weeks.std_error * 7, days.std_error, rtol=1e-12)
+
+
+def test_bounds_by_corrected_draws() -> None:
+    rng = np.random.default_rng(2)
+    draws = rng.gamma(2.0, size=(1999, 2))
+    one = Estimates(np.full(2, 2.0), np.ones(2), np.full(2, 50.0), np.full(2, LOG, dtype=object), np.ones(2),
+                    np.zeros(2, bool))  # fmt: skip
+    found = DrawnEstimates(**vars(one), draws=draws, accelerations=np.array([0.0, 0.1]))
+    low, high = found.bounds(0.95)
+    assert (low < 2.0).all()
+    assert (high > 2.0).all()
+    swapped = found.take(np.array([1, 0]))
+    assert swapped.bounds(0.95)[0].tolist() == low[::-1].tolist()
 
 
 # --- known chains, sameness, frozenness -------------------------------------------------------------------

@@ -40,6 +40,7 @@ MESSAGES = {
     "midnight_times": "every time is a midnight; if only days were recorded, pass a column of dates",
     "missing_sequence": "no sequence number: put after the numbered rows of the same customer and time",
     "missing_ended_before": "no value in the ended_before column: read as not ended",
+    "missing_value": "no finite number in the value column: counted as worth 0",
     "sub_microsecond": "time finer than a microsecond: cut to whole microseconds",
 }
 UNREADABLE = ("missing_customer", "missing_time", "missing_event", "out_of_range_time")

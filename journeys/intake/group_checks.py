@@ -61,7 +61,7 @@ def group_faults(s: Mapping[str, Any]) -> list[str]:
     """Return what is wrong between the settings that group."""
     faults = [
         f"by: got {name!r}, which is the {role} column; wanted a column that tells groups of customers apart"
-        for role in ("customer", "time", "sequence", "ended_before")
+        for role in ("customer", "time", "sequence", "ended_before", "value")
         if (name := s[role]) is not None and name in s["by"]
     ]
     for column, setting, example in ((COHORT, "cohort", '"week"'), (PERIOD, "split_at", '["2026-01-01"]')):
@@ -74,7 +74,7 @@ def group_faults(s: Mapping[str, Any]) -> list[str]:
 
 
 def state_faults(s: Mapping[str, Any]) -> list[str]:
-    """Return what is wrong with the states that open journeys or are stages."""
+    """Return what is wrong with the states that open journeys, are stages or touchpoints."""
     outcomes = s["converted"] + s["churned"]
     faults = [
         f"opens: got {name!r}, an outcome; wanted states (an outcome opens a journey only when nothing else does)"
@@ -82,18 +82,24 @@ def state_faults(s: Mapping[str, Any]) -> list[str]:
         if name in outcomes
     ]
     faults += [
-        f"stages: got {name!r}, an outcome; wanted the states before it (outcomes follow by themselves)"
-        for name in s["stages"]
+        f"{setting}: got {name!r}, an outcome; wanted the states before it (outcomes follow by themselves)"
+        for setting in ("stages", "touchpoints")
+        for name in _named(s[setting])
         if name in outcomes
     ]
     states = s["states"] or {}
-    for setting in ("opens", "stages"):
+    for setting in ("opens", "stages", "touchpoints"):
         faults += [
             f"{setting}: got {name!r}, which `states` maps to {states[name]!r}; wanted the name it is mapped to"
-            for name in s[setting]
+            for name in _named(s[setting])
             if name in states and states[name] != name
         ]
     return faults
+
+
+def _named(states: tuple[str, ...] | str) -> tuple[str, ...]:
+    """Return the states that are named, none where a word stands for all."""
+    return () if isinstance(states, str) else states
 
 
 def _split_faults(s: Mapping[str, Any]) -> list[str]:

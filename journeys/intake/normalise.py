@@ -17,6 +17,7 @@ from journeys.intake.rows import EventCodes, Rows
 from journeys.intake.rule_checks import RESERVED
 from journeys.intake.rules import JourneyRules
 from journeys.intake.times import TimeReader, Times
+from journeys.intake.values import millionths
 
 Mask = NDArray[np.bool_]
 _UNNUMBERED = np.iinfo(np.int64).max
@@ -105,7 +106,8 @@ class Normaliser:
         Raises
         ------
         LogError
-            If a column is of a type that cannot be read, changes kind, or an event has a reserved name.
+            If a column is of a type that cannot be read, changes kind, holds a value too large, or an event has
+            a reserved name.
         """
         rules, first = self.rules, self.n_rows
         self.n_rows += batch.num_rows
@@ -127,7 +129,9 @@ class Normaliser:
         by = None
         if rules.group_columns:
             by = self.groups.encode([batch.column(column) for column in rules.group_columns])
-        rows = kept.take(bucket_major(key64), times.us, events, sequence, ended, by)
+        value = self._value(batch, kept)
+        number = np.arange(first, first + batch.num_rows, dtype=np.int64)
+        rows = kept.of(Rows(bucket_major(key64), times.us, events, number, sequence, ended, by, value))
         self.n_kept += len(rows)
         self._all_midnight = self._all_midnight and not (rows.time % DAY_US).any()
         return rows
@@ -205,6 +209,16 @@ class Normaliser:
         return np.asarray(values == 1)
 
 
+    def _value(self, batch: pa.RecordBatch, kept: _Kept) -> NDArray[np.int64] | None:
+        """Worth of the kept rows in millionths; a missing one is 0."""
+        column = self.rules.value
+        if column is None:
+            return None
+        value, missing = millionths(decoded(batch.column(column)), column, kept.mask)
+        kept.note("missing_value", column, missing)
+        return value
+
+
 _OTHER_NAMES = {"entry": "entered", "lapsed": "went quiet", "open": "opened", "unknown": "not known"}
 
 
@@ -214,7 +228,7 @@ class _Kept:
     def __init__(self, n_rows: int, first: int, findings: Findings) -> None:
         self.mask: Mask | None = None  # None: all of them
         self.n = n_rows
-        self._n_rows, self._first, self._findings = n_rows, first, findings
+        self._first, self._findings = first, findings
 
     def _still(self, mask: Mask | None) -> Mask | None:
         """Part of the mask that is among the kept rows; None if empty."""
@@ -238,16 +252,6 @@ class _Kept:
         if still is not None:
             self._findings.add(code, column, np.flatnonzero(still) + self._first)
 
-    def take(
-        self,
-        key: NDArray[np.uint64],
-        times: NDArray[np.int64],
-        events: NDArray[np.int32],
-        sequence: NDArray[np.int64] | None,
-        ended: Mask | None,
-        by: NDArray[np.int32] | None,
-    ) -> Rows:
-        """Kept rows of the batch."""
-        number = np.arange(self._first, self._first + self._n_rows, dtype=np.int64)
-        rows = Rows(key, times, events, number, sequence, ended, by)
+    def of(self, rows: Rows) -> Rows:
+        """Kept ones among the rows of the batch."""
         return rows if self.mask is None else rows.take(self.mask)

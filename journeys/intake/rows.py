@@ -30,6 +30,8 @@ class Rows:
         The `ended_before` column.
     by : ndarray of int32, shape (n_rows,), or None
         Code of the values in the group columns (`groups.GroupCodes`).
+    value : ndarray of int64, shape (n_rows,), or None
+        What the event is worth, in millionths; 0 where it is missing.
 
     Examples
     --------
@@ -45,6 +47,7 @@ class Rows:
     sequence: NDArray[np.int64] | None = None
     ended: NDArray[np.bool_] | None = None
     by: NDArray[np.int32] | None = None
+    value: NDArray[np.int64] | None = None
 
     def __len__(self) -> int:
         """Return the number of rows."""

@@ -19,7 +19,11 @@ from journeys.intake.frozen import FrozenMap
 
 RESERVED = ("entry", "lapsed", "open", "unknown")
 LIMITS = {"unreadable": 0.01}
-_ROLES = ("customer", "time", "event", "sequence", "ended_before")
+# In place of a list of touchpoints: every state.
+ALL = "all"
+# What a journey has touched is kept as the bits of one whole number.
+MOST_TOUCHPOINTS = 63
+_ROLES = ("customer", "time", "event", "sequence", "ended_before", "value")
 
 
 class NotGiven:
@@ -96,6 +100,16 @@ def _events(value: object, name: str) -> tuple[str, ...]:
     names = tuple(_event(item, name) for item in value)
     if twice := sorted({item for item in names if names.count(item) > 1}):
         raise ValueError(f"{name}: got {twice[0]!r} twice; wanted each event once: take one out")
+    return names
+
+
+def _touchpoints(value: object, name: str) -> tuple[str, ...] | str:
+    """States by name, or all of them."""
+    if value == ALL:
+        return ALL
+    names = _events(value, name)
+    if len(names) > MOST_TOUCHPOINTS:
+        raise ValueError(f"{name}: got {len(names)} states; wanted at most {MOST_TOUCHPOINTS}: name fewer")
     return names
 
 
@@ -220,6 +234,8 @@ _CHECKS: dict[str, Callable[[Any, str], Any]] = {
     "timezone": group_checks.timezone,
     "split_at": group_checks.instants,
     "stages": _events,
+    "touchpoints": _touchpoints,
+    "value": _maybe(_column),
     "limits": _limits,
 }
 

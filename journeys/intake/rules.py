@@ -42,7 +42,7 @@ class JourneyRules(Settings):
     sequence : str, optional
         Column of whole numbers that orders a customer's rows of the same time.
     duplicates : {"keep", "drop"}
-        What becomes of rows equal to an earlier one in all the columns of the rules.
+        What becomes of rows equal to an earlier one in customer, time, event, `sequence` and `value`.
     exclude : mapping of str to list
         Column to the values that leave a row out (staff, tests).
     as_of, log_start : str, datetime, date or Timestamp, optional
@@ -68,6 +68,13 @@ class JourneyRules(Settings):
         entered; one that crosses a cut is open at the cut, and not counted after it.
     stages : list of str
         States that a journey passes one after another on its way, in order, for the table of stages.
+    touchpoints : list of str, or "all"
+        States that attribution is about, in order, 63 at most; "all" for every state, if there are no more. What
+        journeys touch is counted only if asked for: it makes the pass over the log slower. Default: none.
+    value : str, optional
+        Column of numbers: what each event is worth in money, a journey being worth the sum of its events (its
+        outcome's too; an outcome merged with the one before it adds nothing). Kept to a millionth; negative for
+        what is paid back; a missing one counts as 0 and is a finding.
     limits : mapping of str to float
         "unreadable": largest share of rows that may lack a readable customer, time or event.
 
@@ -114,6 +121,8 @@ class JourneyRules(Settings):
     timezone: str
     split_at: tuple[str, ...]
     stages: tuple[str, ...]
+    touchpoints: tuple[str, ...] | str
+    value: str | None
     limits: FrozenMap[float]
 
     def __init__(
@@ -144,6 +153,8 @@ class JourneyRules(Settings):
         timezone: str = "UTC",
         split_at: Instant | Iterable[Instant] = (),
         stages: Iterable[str] = (),
+        touchpoints: str | Iterable[str] = (),
+        value: str | None = None,
         limits: Mapping[str, float] = FrozenMap(LIMITS),  # noqa: B008 - immutable
     ) -> None:
         given = locals()
@@ -189,6 +200,11 @@ class JourneyRules(Settings):
         return tuple(name for name in self.by if name not in BUILT_IN)
 
     @property
+    def named_touchpoints(self) -> tuple[str, ...]:
+        """Touchpoints by name; none where there are none, or all states are."""
+        return () if isinstance(self.touchpoints, str) else self.touchpoints
+
+    @property
     def outcomes(self) -> tuple[str, ...]:
         """Outcomes named by the rules: the converted ones, then the churned ones."""
         return self.converted + self.churned
@@ -196,7 +212,7 @@ class JourneyRules(Settings):
     @property
     def columns(self) -> tuple[str, ...]:
         """Columns the log must have, each once."""
-        roles = (self.customer, self.time, self.event, self.sequence, self.ended_before)
+        roles = (self.customer, self.time, self.event, self.sequence, self.ended_before, self.value)
         named = [column for column in roles if column is not None]
         return tuple(dict.fromkeys([*named, *self.exclude, *self.group_columns]))
 

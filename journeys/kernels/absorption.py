@@ -2,20 +2,33 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
 
-from journeys.kernels.arrays import BoolArray, FloatArray, IntArray, sum_at
-from journeys.kernels.graph import can_reach
+from journeys.kernels.arrays import BoolArray, FloatArray, IntArray
+from journeys.kernels.passage_moves import Moves, moves_to
 
-Solve = Callable[[FloatArray, bool], FloatArray]
 Gradient = tuple[FloatArray, FloatArray, FloatArray]
 
-_DENSE = 500  # most states of which a full matrix is made where few moves occur
-_THIN = 50  # few: not one pair of states in so many
-_LOST = 1e-9  # a row that sums to less than 1 by more than this loses walks on the way
+_TINY = 1e-290  # below this a float has no room for all its digits, or for what was left out of it
+_FLOATS = 2**22  # numbers of one kind worked on at a time, about
+_WIDE = 0.01  # variance to mean square above which the one can be had from the other without loss
+
+
+@dataclass(frozen=True, eq=False)
+class Changes:
+    """How the answers from every state change in some directions, each of shape (n_directions, n_states).
+
+    Attributes
+    ----------
+    probability, mean_given, sd_given : float arrays
+        As in `Passage`; NaN for times given a target that is not reached, and for a standard deviation of 0.
+    """
+
+    probability: FloatArray
+    mean_given: FloatArray
+    sd_given: FloatArray
 
 
 @dataclass(frozen=True, eq=False)
@@ -33,6 +46,9 @@ class Passage:
         NaN where it cannot be.
     first_moment, second_moment : float arrays, shape (n_states,)
         Mean of the time, and of its square, counted 0 where the target is not reached.
+    doubtful : bool array, shape (n_states,)
+        The target can be reached on the graph, but an answer is too small or too large for a float, or comes
+        from iteration and may be off by more than a millionth: it must not be told as it is.
     """
 
     probability: FloatArray
@@ -41,7 +57,8 @@ class Passage:
     sd_given: FloatArray
     first_moment: FloatArray
     second_moment: FloatArray
-    _moves: _Moves
+    doubtful: BoolArray
+    _moves: Moves
 
     def gradients(self, start: int) -> dict[str, Gradient]:
         """Differentiate the answers from one state by the moves.
@@ -99,90 +116,111 @@ class Passage:
             "sd_given": (d_sd[0], d_sd[1], d_sd[2]),
         }
 
+    def probability_changes(self, d_p: FloatArray) -> FloatArray:
+        """Change of the probability of reaching the target, from every state, in some directions.
+
+        Parameters
+        ----------
+        d_p : float array, shape (n_directions, n_moves)
+            Change of the probability of each move.
+
+        Returns
+        -------
+        float array, shape (n_directions, n_states)
+
+        Examples
+        --------
+        >>> import numpy as np
+        >>> p = np.array([0.5, 0.5])
+        >>> walk = passage(1, 3, np.array([0, 0]), np.array([1, 2]), p, p, p, np.arange(3) == 1)
+        >>> walk.probability_changes(np.array([[1.0, -1.0], [0.0, 1.0]])).tolist()
+        [[1.0], [0.0]]
+        """
+        v = self._moves
+        to_h = v.sums(v.over_nodes(self.probability, 1.0)[v.target])
+        out = np.empty((len(d_p), v.n_states))
+        for some in _batches(*d_p.shape):
+            out[some] = v.solve(to_h @ _upright(d_p[some])).T
+        return out
+
+    def changes(self, d_p: FloatArray, d_mean: FloatArray, d_second: FloatArray) -> Changes:
+        """Change of the answers from every state when the moves change in some directions.
+
+        Parameters
+        ----------
+        d_p, d_mean, d_second : float arrays, shape (n_directions, n_moves)
+            Change of the probability, the mean and the second moment of each move. For steps, where the three
+            are one, give the same three times.
+
+        Returns
+        -------
+        Changes
+            What `gradients` of every state gives, multiplied with the directions and summed.
+
+        Notes
+        -----
+        With N = (I - P)^-1: dh = N dP h, dg = N (dM h + M dh + dP g) and
+        ds = N (dM2 h + M2 dh + 2 dM g + 2 M dg + dP s), for all directions with the same factors.
+
+        Examples
+        --------
+        >>> import numpy as np
+        >>> p = np.array([0.5, 0.5])
+        >>> walk = passage(1, 3, np.array([0, 0]), np.array([0, 2]), p, p, p, np.arange(3) == 2)
+        >>> one = np.array([[0.1, -0.1]])
+        >>> walk.changes(one, one, one).mean_given.round(10).tolist()
+        [[0.4]]
+        """
+        v = self._moves
+        to_h, to_g, to_s = (v.sums(v.over_nodes(x, end)[v.target]) for x, end in self._moments())
+        # moves that lead away for good are no part of the way there, known or not
+        leads = v.over_nodes(self.probability, 1.0)[v.target] > 0
+        mean, second = (v.matrix(np.where(leads, x, 0.0)) for x in (v.mean, v.second))
+        parts = tuple(np.empty((len(d_p), v.n_states)) for _ in range(3))
+        for some in _batches(*d_p.shape):
+            by_p = _upright(d_p[some])
+            by_mean = by_p if d_mean is d_p else _upright(d_mean[some])
+            by_second = by_p if d_second is d_p else _upright(d_second[some])
+            d_h = v.solve(to_h @ by_p)
+            d_g = v.solve(to_h @ by_mean + mean @ d_h + to_g @ by_p)
+            crossed = to_g @ by_mean + mean @ d_g
+            d_s = v.solve(to_h @ by_second + second @ d_h + 2.0 * crossed + to_s @ by_p)
+            for whole, part in zip(parts, self._of_answers(d_h, d_g, d_s), strict=True):
+                whole[some] = part.T
+        return Changes(*parts)
+
+    def _of_answers(self, d_h: FloatArray, d_g: FloatArray, d_s: FloatArray) -> Gradient:
+        """Turn changes of the moments into those of the answers, all of shape (n_states, n_directions)."""
+        h, mu, sd, s = (
+            x[:, None] for x in (self.probability, self.mean_given, self.sd_given, self.second_moment)
+        )
+        share = _or_nan(h)
+        d_mu = (d_g - mu * d_h) / share
+        d_sd = ((d_s - s / share * d_h) / share - 2.0 * mu * d_mu) / _or_nan(2.0 * sd)
+        # a target is reached at once, whatever changes
+        arrived = self._moves.is_target[: len(h)]
+        d_mu[arrived] = d_sd[arrived] = 0.0
+        return d_h, d_mu, d_sd
+
     def _moments(self) -> tuple[tuple[FloatArray, float], ...]:
         """Moments of order 0, 1, 2 from every state, each with its value at a target."""
         return (self.probability, 1.0), (self.first_moment, 0.0), (self.second_moment, 0.0)
 
 
-@dataclass(frozen=True, eq=False)
-class _Moves:
-    """The moves, and the solver on the states from which the target can be reached."""
-
-    n_states: int
-    state: IntArray
-    target: IntArray
-    p: FloatArray
-    mean: FloatArray
-    second: FloatArray
-    is_target: BoolArray
-    solve_on: IntArray
-    _solve: Solve
-
-    def over_nodes(self, x: FloatArray, at_target: float) -> FloatArray:
-        """Values at states, spread over all nodes, shape (n_nodes,)."""
-        full = np.where(self.is_target, at_target, 0.0)
-        full[: self.n_states] = x
-        return full
-
-    def pull(self, weights: FloatArray) -> FloatArray:
-        """Sum over the moves out of each state, shape (n_states,)."""
-        return sum_at(self.state, weights, self.n_states)
-
-    def push(self, row: FloatArray, weights: FloatArray) -> FloatArray:
-        """Row vector times a matrix over states, shape (n_states,)."""
-        inside = self.target < self.n_states
-        return sum_at(self.target[inside], (row[self.state] * weights)[inside], self.n_states)
-
-    def solve(self, right: FloatArray) -> FloatArray:
-        """Solve x = right + P x on the states that are left open; 0 elsewhere.
-
-        NaN in `right` stands for what is not known: NaN comes back from wherever it can be met.
-        """
-        x = np.zeros(self.n_states)
-        unknown = np.isnan(right[self.solve_on])
-        x[self.solve_on] = self._solve(np.where(unknown, 0.0, right[self.solve_on]), False)
-        if unknown.any():
-            here = np.zeros(len(self.is_target), dtype=np.bool_)
-            here[self.solve_on[unknown]] = True
-            used = (self.p > 0) & ~self.is_target[self.state]
-            met = can_reach(len(here), self.state[used], self.target[used], here)
-            x[self.solve_on[met[self.solve_on]]] = np.nan
-        return x
-
-    def solve_back(self, row: FloatArray) -> FloatArray:
-        """Solve x = row + x P in the same way."""
-        x = np.zeros(self.n_states)
-        x[self.solve_on] = self._solve(row[self.solve_on], True)
-        return x
+def _batches(n: int, n_moves: int) -> list[slice]:
+    """Cut directions into parts that keep memory modest."""
+    few = max(1, _FLOATS // max(n_moves, 1))
+    return [slice(first, first + few) for first in range(0, n, few)]
 
 
-def _solver(size: int, row: IntArray, column: IntArray, p: FloatArray) -> Solve:
-    """Solver of (I - P) x = b and of its transpose; P in coordinates, no row sums above 1."""
-    if size == 0:
-        return lambda b, transposed: b
-    if size > _DENSE and len(p) * _THIN < size * size:
-        from scipy.sparse import csc_array, eye_array
-        from scipy.sparse.linalg import splu
-
-        inner = csc_array((p, (row, column)), shape=(size, size))
-        thin: Callable[..., FloatArray] = splu(csc_array(eye_array(size) - inner)).solve
-        return lambda b, transposed: thin(b, "T" if transposed else "N")
-    from scipy.linalg import lu_factor, lu_solve
-
-    dense = np.eye(size)
-    np.subtract.at(dense, (row, column), p)
-    factors = lu_factor(dense, overwrite_a=True)
-    return lambda b, transposed: lu_solve(factors, b, trans=1) if transposed else lu_solve(factors, b)
+def _upright(directions: FloatArray) -> FloatArray:
+    """Directions in columns, side by side in memory, as sparse products take them."""
+    return np.ascontiguousarray(directions.T, dtype=np.float64)
 
 
-def _certain(moves: _Moves, open_states: BoolArray, n_nodes: int) -> BoolArray:
-    """States from which no walk can miss the target, shape (n_states,)."""
-    m = moves.n_states
-    used = (moves.p > 0) & ~moves.is_target[moves.state]
-    elsewhere = ~moves.is_target
-    elsewhere[:m] &= ~open_states
-    elsewhere[:m] |= open_states & (1.0 - moves.pull(moves.p) > _LOST)
-    return ~can_reach(n_nodes, moves.state[used], moves.target[used], elsewhere)[:m]
+def _or_nan(x: FloatArray) -> FloatArray:
+    """Return what can be divided by: NaN for 0."""
+    return np.where(x == 0, np.nan, x)
 
 
 def passage(
@@ -216,8 +254,10 @@ def passage(
 
     Notes
     -----
-    Only states from which the graph leads to the target are solved for, so the matrix
-    is never singular. The spread is solved for about the mean, without cancellation.
+    Only states from which the graph leads to the target are solved for, so the matrix is never singular. The
+    diagonal of I - P is the sum of what leaves a state, not 1 minus what stays, and states are taken out without
+    a subtraction, so that also tiny probabilities and huge means are right to nearly all digits. A spread that is
+    small beside the mean is solved for about the mean; a wide one comes from the second moment.
 
     References
     ----------
@@ -236,35 +276,48 @@ def passage(
     >>> walk.probability.round(4).tolist(), walk.mean_given.round(4).tolist()
     ([0.3333, 0.6667], [2.6667, 1.6667])
     """
-    used = p > 0
-    reaches = can_reach(n_nodes, move_state[used], move_target[used], is_target)[:n_states]
-    open_states = reaches & ~is_target[:n_states]
-    solve_on = np.flatnonzero(open_states)
-    index = np.full(n_nodes, -1, dtype=np.int64)
-    index[solve_on] = np.arange(len(solve_on))
-    inner = used & (index[move_state] >= 0) & (index[move_target] >= 0)
-    solver = _solver(len(solve_on), index[move_state[inner]], index[move_target[inner]], p[inner])
-    v = _Moves(n_states, move_state, move_target, p, mean, second, is_target, solve_on, solver)
-
-    at_target = is_target[:n_states]
-    certain = _certain(v, open_states, n_nodes)
-    h = v.solve(v.pull(p * is_target[move_target]))
+    v = moves_to(n_states, n_nodes, move_state, move_target, p, mean, second, is_target)
+    at_target, open_states, certain = is_target[:n_states], v.open_states, v.certain
+    direct = v.pull(p * is_target[move_target])
+    h = v.solve(direct)
+    doubtful = open_states & ~certain & (~(h > _TINY) | v.off(h, direct))
     h = np.where(certain | at_target, 1.0, np.clip(h, 0.0, 1.0))
-    # what happens on moves that lead away for good, known or not, is no part of the way there
-    leads = v.over_nodes(h, 1.0)[move_target]
-    g = v.solve(v.pull(np.where(leads > 0, mean, 0.0) * leads))
-    mu = np.divide(g, h, out=np.full(n_states, np.nan), where=h > 0)
-
-    # spread about the mean: each move adds the square of its dwell and of the change in mean
-    jump = v.over_nodes(np.nan_to_num(mu), 0.0)
-    change = jump[move_target] - jump[move_state]
-    dwell = np.divide(mean, p, out=np.zeros(len(p)), where=used)
-    own = np.maximum(second - mean * dwell, 0.0)
-    square = np.where(leads > 0, own + p * (dwell + change) ** 2, 0.0) * leads
-    spread = np.maximum(v.solve(v.pull(square)), 0.0)
-    variance = np.divide(spread, h, out=np.full(n_states, np.nan), where=h > 0)
-    variance[at_target] = 0.0
+    # numbers too large for a float are told as doubtful
+    with np.errstate(over="ignore", invalid="ignore"):
+        # what happens on moves that lead away for good, known or not, is no part of the way there
+        leads = v.over_nodes(h, 1.0)[move_target]
+        first = np.where(leads > 0, mean, 0.0)
+        right = v.pull(first * leads)
+        g = v.solve(right)
+        mu = np.divide(g, h, out=np.full(n_states, np.nan), where=h > 0)
+        variance, s = _spread(v, h, leads, mu, g)
+        doubtful |= open_states & v.off(g, right)
+    if not (np.isnan(mean).any() or np.isnan(second).any()):
+        doubtful |= open_states & ~(np.isfinite(mu) & np.isfinite(variance))
     return Passage(
         probability=h, certain=certain, mean_given=mu, sd_given=np.sqrt(variance),
-        first_moment=g, second_moment=h * np.nan_to_num(variance + mu**2), _moves=v,
-    )
+        first_moment=g, second_moment=s, doubtful=doubtful, _moves=v,
+    )  # fmt: skip
+
+
+def _spread(v: Moves, h: FloatArray, leads: FloatArray, mu: FloatArray, g: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Variance of the time given the target is reached, and the mean square counted 0 where it is not.
+
+    About the mean each move adds the square of its dwell and of the change in mean. That keeps all digits of a
+    small spread; of a wide one it loses those that the means do not differ by.
+    """
+    known = leads > 0
+    first, square = (np.where(known, x, 0.0) for x in (v.mean, v.second))
+    s = v.solve(v.pull(square * leads + 2.0 * first * v.over_nodes(g, 0.0)[v.target]))
+    ratio = np.divide(s, h, out=np.full(v.n_states, np.nan), where=h > 0)
+    wide = ratio - mu**2
+    jump = v.over_nodes(np.nan_to_num(mu), 0.0)
+    change = jump[v.target] - jump[v.state]
+    dwell = np.divide(v.mean, v.p, out=np.zeros(len(v.p)), where=v.p > 0)
+    own = np.maximum(v.second - v.mean * dwell, 0.0)
+    about = np.maximum(v.solve(v.pull(np.where(known, own + v.p * (dwell + change) ** 2, 0.0) * leads)), 0.0)
+    narrow = np.divide(about, h, out=np.full(v.n_states, np.nan), where=h > 0)
+    variance = np.where(wide > _WIDE * ratio, wide, narrow)
+    variance[v.is_target[: v.n_states]] = 0.0
+    variance[np.isinf(variance)] = np.nan
+    return variance, np.where(h > 0, s, 0.0)

@@ -25,6 +25,7 @@ from journeys.kernels.records import (
 )
 from journeys.kernels.stage_counts import stages_at_close, stages_passed
 from journeys.kernels.stories import Block, Buckets, Codes, Stories, marks_of
+from journeys.kernels.touch_counts import touches_and_values
 
 
 def count_rows(block: Block, reading: Reading) -> tuple[Counted, Carried]:
@@ -43,6 +44,11 @@ def count_rows(block: Block, reading: Reading) -> tuple[Counted, Carried]:
         Moves, entries and ended journeys.
     latest : Carried
         One record per customer of the block.
+
+    Raises
+    ------
+    OverflowError
+        If the values of a journey's or a customer's events add up to more than an int64 can hold.
     """
     marks = marks_of(block, reading)
     story = Stories(block, marks, reading)
@@ -108,14 +114,18 @@ def count_rows(block: Block, reading: Reading) -> tuple[Counted, Carried]:
         again=back[after != LAPSED],
         unsure_visits=unsure_visits,
     )  # fmt: skip
-    stage: tuple[Codes, Ints] | tuple[None, None] = (None, None)
+    also: dict[str, NDArray[Any]] = {}
     if reading.stages is not None:
         passed, number, start = stages_passed(block, marks, story, reading)
-        counted, stage = replace(counted, passed=passed), (number, start)
+        counted, also = replace(counted, passed=passed), {"stage": number, "stage_start": start}
+    if reading.touches or reading.values:
+        by_outcome, by_silence, latest = touches_and_values(block, marks, story, ended, silent)
+        counted = replace(counted, ends=(replace(ends[0], **by_outcome), replace(ends[1], **by_silence)))
+        also |= latest
     n = len(block.start)
     decided = np.bincount(owner[ended], minlength=n) + np.bincount(owner[silent], minlength=n)
     won = owner[ended[block.code[ended] < FIRST_OUTCOME + reading.n_converted]]
-    return counted, _latest(block, story, decided, np.bincount(won, minlength=n), stage)
+    return counted, _latest(block, story, decided, np.bincount(won, minlength=n), also)
 
 
 def close_log(carried: Carried, bucket: Buckets, reading: Reading) -> Closed:
@@ -160,7 +170,8 @@ def close_log(carried: Carried, bucket: Buckets, reading: Reading) -> Closed:
     )  # fmt: skip
     ends = Ends(
         bucket, held.first_code, next_code, held.sure, held.steps.astype(np.int64) + lapsed,
-        until - held.journey_start, *(() if held.group is None else (held.journey_start, held.group)),
+        until - held.journey_start, None if held.group is None else held.journey_start, held.group,
+        held.touched, held.first_touch, held.last_touch, held.value,
     )  # fmt: skip
     carried.decided[running] += lapsed
     passed = None if reading.stages is None else stages_at_close(held, bucket, until, next_code, reading)
@@ -195,15 +206,14 @@ def _of(busy: Bools | None, rows: Ints) -> Bools | None:
 
 
 def _latest(
-    block: Block,
-    story: Stories,
-    decided: NDArray[Any],
-    won: NDArray[Any],
-    stage: tuple[Codes, Ints] | tuple[None, None],
+    block: Block, story: Stories, decided: NDArray[Any], won: NDArray[Any], also: dict[str, NDArray[Any]]
 ) -> Carried:
-    """Return one record per customer of the block, as of its last row; of journeys ended, what the block adds."""
+    """Return one record per customer of the block, as of its last row; of journeys ended, what the block adds.
+
+    `also` holds optional columns.
+    """
     n, prior = len(block.start), block.prior
-    last = np.append(block.start[1:], len(block.time)) - 1
+    last = block.end - 1
     owner = np.arange(n, dtype=np.int32)
     now = story.at(last, owner)
     size = (last - block.start + 1).astype(np.int32)
@@ -215,5 +225,5 @@ def _latest(
         decided=decided.astype(np.int32), converted=won.astype(np.int32),
         sure=now.sure, story_over=np.zeros(n, bool),
         visit_start=story.visit_start(last, owner) if story.merging else None,
-        group=now.group, seen=None if prior.seen is None else block.time[last], stage=stage[0], stage_start=stage[1],
+        group=now.group, seen=None if prior.seen is None else block.time[last], **also,
     )  # fmt: skip

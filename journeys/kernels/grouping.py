@@ -27,6 +27,8 @@ class Grouping:
         Starts of the cohorts, rising, microseconds.
     splits : ndarray of int64, shape (n_periods - 1,)
         Cuts between periods, rising, microseconds.
+    silence_us : int
+        The silence, 0 where none is given.
     tick_us : int
         The finest step of time in the log: a microsecond, or a day where it holds dates.
     """
@@ -34,6 +36,7 @@ class Grouping:
     after: bool
     cohort_starts: IntArray | None
     splits: IntArray
+    silence_us: int
     tick_us: int
 
     def of_journeys(self, by: NDArray[np.int32] | None, before: NDArray[np.int32], begun: IntArray) -> IntArray:

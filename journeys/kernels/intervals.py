@@ -186,6 +186,63 @@ def log_interval(
         return inside / factor, inside * factor
 
 
+def t_interval(
+    x: npt.ArrayLike, se: npt.ArrayLike, df: npt.ArrayLike, confidence_level: float = 0.95
+) -> tuple[FloatArray, FloatArray]:
+    """Interval of any number, symmetric about it.
+
+    Parameters
+    ----------
+    x, se : array_like
+        The number and its standard error.
+    df : array_like
+        Degrees of freedom of the t quantile.
+    confidence_level : float, default 0.95
+        Level of the interval.
+
+    Returns
+    -------
+    tuple of two float arrays
+        Lower and upper bounds.
+
+    Examples
+    --------
+    >>> low, high = t_interval(-0.5, 0.5, 30)
+    >>> round(float(low), 4), round(float(high), 4)
+    (-1.5211, 0.5211)
+    """
+    x = np.asarray(x, dtype=np.float64)
+    half = _t_quantile(df, confidence_level) * np.asarray(se, dtype=np.float64)
+    return x - half, x + half
+
+
+def t_test(x: npt.ArrayLike, se: npt.ArrayLike, df: npt.ArrayLike) -> FloatArray:
+    """Two-sided p-value of a number that would be 0.
+
+    Parameters
+    ----------
+    x, se : array_like
+        The number and its standard error.
+    df : array_like
+        Degrees of freedom of the t distribution.
+
+    Returns
+    -------
+    float array
+        NaN where the standard error is not positive.
+
+    Examples
+    --------
+    >>> t_test(2.0, 1.0, 30).round(4).tolist()
+    0.0546
+    """
+    from scipy.special import stdtr
+
+    x, se = np.asarray(x, dtype=np.float64), np.asarray(se, dtype=np.float64)
+    t = np.divide(np.abs(x), se, out=np.full(np.broadcast(x, se).shape, np.nan), where=se > 0)
+    return np.asarray(2.0 * stdtr(df, -t), dtype=np.float64)
+
+
 def ratio_variance(y: npt.ArrayLike, m: npt.ArrayLike) -> tuple[float, float, float]:
     """Ratio of two sums over clusters, with its linearised variance.
 

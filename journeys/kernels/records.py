@@ -26,7 +26,8 @@ class Reading:
     """The rules of reading as plain numbers.
 
     `n_outcomes` outcomes have the codes 2 to 1 + n_outcomes, the first `n_converted` of them are
-    conversions, and states come after. Times are microseconds.
+    conversions, and states come after. Times are microseconds. `touches` and `values` tell whether what journeys touch,
+    and what their events are worth, is kept.
     """
 
     n_outcomes: int
@@ -40,6 +41,8 @@ class Reading:
     busy_after: int = 1_000
     grouping: Grouping | None = None
     stages: NDArray[np.int32] | None = None
+    touches: bool = False
+    values: bool = False
 
     @property
     def first_state(self) -> int:
@@ -54,7 +57,10 @@ class Carried:
     The one table that is changed in place: copying it for every block of rows would cost more than counting.
     `visit_start` is only kept where repeats merge; elsewhere each row is a visit of its own. `group`, of the latest
     journey, is kept where journeys are grouped, `seen` (the time of the latest row, counted or not) where rows before
-    an opening state are left out, `stage` (the stage reached) and `stage_start` where stages are named.
+    an opening state are left out, `stage` (the stage reached) and `stage_start` where stages are named. Where there are
+    touchpoints, `touched` has a bit for each that the journey has touched, `first_touch` and `last_touch` the numbers
+    of the first and the last (from 1, 0 for none); where events have values, `value` is the journey's and
+    `total_value` the customer's.
     """
 
     key: NDArray[np.uint64]
@@ -73,12 +79,17 @@ class Carried:
     seen: Ints | None = None
     stage: NDArray[np.int32] | None = None
     stage_start: Ints | None = None
+    touched: NDArray[np.uint64] | None = None
+    first_touch: NDArray[np.int32] | None = None
+    last_touch: NDArray[np.int32] | None = None
+    value: Ints | None = None
+    total_value: Ints | None = None
 
     @classmethod
     def zeros(cls, n: int, also: Collection[str] = ()) -> Carried:
         """Return a table of `n` empty records, with the optional columns named."""
-        wide = ("time", "journey_start", "visit_start", "group", "seen", "stage_start")
-        kinds: dict[str, Any] = {**dict.fromkeys(wide, np.int64), "key": np.uint64}
+        wide = ("time", "journey_start", "visit_start", "group", "seen", "stage_start", "value", "total_value")
+        kinds: dict[str, Any] = {**dict.fromkeys(wide, np.int64), "key": np.uint64, "touched": np.uint64}
         kinds |= {"sure": np.bool_, "story_over": np.bool_}
         names = [f.name for f in fields(cls) if f.default is MISSING or f.name in also]
         return cls(**{name: np.zeros(n, kinds.get(name, np.int32)) for name in names})
@@ -114,7 +125,7 @@ class Carried:
     def put(self, new: Carried, at: Ints) -> Carried | None:
         """Put new records in place of those at `at`; return the ones with no place (`at` is -1), to be inserted.
 
-        Journeys decided and converted are what the new records add to the old ones.
+        Journeys decided and converted, and total values, are what the new records add to the old ones.
         """
         fresh = None
         if (at < 0).any():
@@ -140,7 +151,7 @@ class Carried:
             setattr(self, name, put_in(getattr(self, name), where, new))
 
 
-_ADDED = ("decided", "converted")
+_ADDED = ("decided", "converted", "total_value")
 
 
 @dataclass(frozen=True)
@@ -197,7 +208,7 @@ class Entries:
 
 @dataclass(frozen=True)
 class Ends:
-    """One element per journey ended (or, at the end of the log, still open)."""
+    """One element per journey ended (or, at the end of the log, still open); the last four as in `Carried`."""
 
     bucket: NDArray[np.uint8]
     state: NDArray[np.int32]
@@ -207,6 +218,10 @@ class Ends:
     elapsed: Ints
     since: Ints | None = None
     group: Ints | None = None
+    touched: NDArray[np.uint64] | None = None
+    first_touch: NDArray[np.int32] | None = None
+    last_touch: NDArray[np.int32] | None = None
+    value: Ints | None = None
 
 
 @dataclass(frozen=True)

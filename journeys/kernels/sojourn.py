@@ -13,6 +13,7 @@ from journeys.kernels.stays import BucketStays, StayFit, Stays
 
 __all__ = ["BucketStays", "StayFit", "Stays", "cell_influence", "fit_stays", "move_influence"]
 
+_VERY_FEW = 2_000  # so few stays are summed one by one: a sparse product takes longer to set up
 _FEW = 8  # below one filled place in so many, a sparse product is the quicker one
 
 
@@ -21,8 +22,23 @@ def _divide(top: FloatArray, below: FloatArray) -> FloatArray:
     return np.divide(top, below, out=np.zeros(np.broadcast(top, below).shape), where=below != 0)
 
 
-def _second_moment(tau: FloatArray, lower: FloatArray, upper: FloatArray) -> FloatArray:
-    """Mean square of a density linear on its bin, cut off at 0, whose mean is `tau`."""
+def second_moment(tau: FloatArray, lower: FloatArray, upper: FloatArray) -> FloatArray:
+    """Mean square of a density linear on its bin, cut off at 0, whose mean is `tau`.
+
+    Parameters
+    ----------
+    tau, lower, upper : float arrays that broadcast to one shape
+        Mean dwell, and the edges of its bin.
+
+    Returns
+    -------
+    float array
+
+    Examples
+    --------
+    >>> second_moment(np.array([1.0]), np.array([0.0]), np.array([2.0])).round(4).tolist()
+    [1.3333]
+    """
     width = upper - lower
     shift = tau - (lower + upper) / 2
     within = np.abs(shift) <= width / 6
@@ -90,7 +106,7 @@ def fit_stays(stays: Stays, open_weight: float = 0.5) -> StayFit:
     q = survival[:, :-1].ravel()[place] * hazard
     low, high = stays.lower[stays.bin], stays.upper[stays.bin]
     tau = np.where(stays.n > 0, _divide(stays.total, stays.n), (low + high) / 2)
-    tau2 = _second_moment(tau, low, high)
+    tau2 = second_moment(tau, low, high)
 
     end = survival[:, -1].copy()
     left = np.where(leaving.sum(axis=1) > 0, end, 0.0)
@@ -118,7 +134,10 @@ def fit_stays(stays: Stays, open_weight: float = 0.5) -> StayFit:
 
 def _crossed(bucket: IntArray, at: IntArray, n: FloatArray, weights: FloatArray, g: int) -> FloatArray:
     """Multiply counts (bucket x bin) by weights (bin x value), shape (g, n_values)."""
-    k = len(weights)
+    k, values = weights.shape
+    if len(n) < _VERY_FEW:
+        place = bucket[:, None] * values + np.arange(values)
+        return sum_at(place.ravel(), (n[:, None] * weights[at]).ravel(), g * values).reshape(g, values)
     if len(n) * _FEW < g * k:
         from scipy.sparse import csr_array
 
@@ -243,14 +262,14 @@ def cell_influence(
     ----------
     fit, stays, buckets
         As for `move_influence`.
-    phi : float array, shape (n_cells,)
-        Value of a stay that ends in the cell.
-    phi_survivor : float array, shape (n_states,)
+    phi : float array, shape (n_cells,) or (n_values, n_cells)
+        Value of a stay that ends in the cell; several tables make several answers.
+    phi_survivor : float array, shape (n_states,) or (n_values, n_states)
         Value of a stay that outlives the last bin.
 
     Returns
     -------
-    float array, shape (n_buckets,)
+    float array, shape (n_buckets,) or (n_buckets, n_values)
         Derivative by the stays of each bucket, `phi` held fixed.
 
     Examples
@@ -267,17 +286,28 @@ def cell_influence(
     >>> cell_influence(fit_stays(stays), stays, split, np.array([0.0, 1.0]), np.zeros(1)).tolist()
     [-0.1875, 0.1875]
     """
-    m, k, g = stays.n_states, stays.n_bins, buckets.n_buckets
+    from scipy.sparse import csr_array
+
+    m, k, g, n_cells = stays.n_states, stays.n_bins, buckets.n_buckets, len(fit.q)
+    tables, survivors = np.atleast_2d(phi).T, np.atleast_2d(phi_survivor).T
+    n_values = tables.shape[1]
     place = stays.state * k + stays.bin
-    inflow = sum_at(place, fit.q * phi, m * k).reshape(m, k)
-    takes, pull, sofar = (
-        a.T for a in _pull(inflow.T, fit.survival_end * phi_survivor, fit.hazard_all.T, fit.at_risk.T)
-    )
-    per_cell = _direct(fit, stays) * phi - (takes + sofar).ravel()[place]
-    per_open = (fit.open_weight * pull - sofar)[buckets.open_state, buckets.open_bin]
-    per_survivor = -sofar[buckets.survivor_state, -1]
-    return (
-        sum_at(buckets.bucket, buckets.n * per_cell[buckets.cell], g)
-        + sum_at(buckets.open_bucket, buckets.open_n * per_open, g)
-        + sum_at(buckets.survivor_bucket, buckets.survivor_n * per_survivor, g)
-    )
+    # sparse products, so that many tables cost one pass over the cells; bins first for the sums along them
+    gather = csr_array((fit.q, (stays.bin * m + stays.state, np.arange(n_cells))), shape=(k * m, n_cells))
+    inflow = np.asarray(gather @ tables).reshape(k, m, n_values)
+    tail = fit.survival_end[:, None] * survivors
+    takes, pull, sofar = _pull(inflow, tail, fit.hazard_all.T[:, :, None], fit.at_risk.T[:, :, None])
+
+    own = csr_array((buckets.n * _direct(fit, stays)[buckets.cell], (buckets.bucket, buckets.cell)), shape=(g, n_cells))
+    found = np.asarray(own @ tables)
+    at = place[buckets.cell]
+    ended = csr_array((buckets.n, (buckets.bucket, at % k * m + at // k)), shape=(g, k * m))
+    found -= ended @ (takes + sofar).reshape(k * m, n_values)
+    if len(buckets.open_n):
+        at = buckets.open_bin * m + buckets.open_state
+        still = csr_array((buckets.open_n, (buckets.open_bucket, at)), shape=(g, k * m))
+        found += still @ (fit.open_weight * pull - sofar).reshape(k * m, n_values)
+    if len(buckets.survivor_n):
+        kept = csr_array((buckets.survivor_n, (buckets.survivor_bucket, buckets.survivor_state)), shape=(g, m))
+        found -= kept @ sofar[-1]
+    return found[:, 0] if np.ndim(phi) == 1 else found

@@ -8,7 +8,7 @@ import numpy as np
 
 from journeys.kernels.arrays import BoolArray, IntArray
 from journeys.kernels.records import LAPSED, Carried, Passed, Reading
-from journeys.kernels.stories import Block, Buckets, Codes, Marks, Stories
+from journeys.kernels.stories import Block, Buckets, Codes, Marks, Stories, last_legs, legs_of
 
 
 def stages_passed(
@@ -52,9 +52,7 @@ def stages_passed(
         parts.append(_passed(block, story, row, now.start, now.sure, left, codes[k], block.time[row], legs, waiting))
         legs.stage[waiting], legs.stage_start[waiting], legs.reached[waiting] = k, block.time[row], row + 1
     parts += _ends(block, marks, story, reading, codes, legs)
-    last = np.searchsorted(legs.begin, np.append(block.start[1:], len(block.time)), side="left") - 1
-    mine = last >= 0
-    mine[mine] &= legs.begin[last[mine]] >= block.start[mine]
+    last, mine = last_legs(block, legs.begin)
     prior_stage, prior_start = _prior(block)
     stage = np.where(mine, legs.stage[last] if len(legs.stage) else 0, prior_stage)
     start = np.where(mine, legs.stage_start[last] if len(legs.stage) else 0, prior_start)
@@ -87,13 +85,9 @@ class _Legs:
     @classmethod
     def of(cls, block: Block, marks: Marks, story: Stories) -> _Legs:
         """Return the legs of a block in the order of its rows."""
-        first = np.zeros(len(block.time), bool)
-        first[block.start] = True
-        goes_on = np.flatnonzero(first & marks.goes_on)
-        begin = np.sort(np.concatenate([story.begun, goes_on]))
+        begin = legs_of(block, marks, story)
         owner = marks.owner[begin]
-        customer_end = np.append(block.start[1:], len(block.time))[owner]
-        end = np.minimum(np.append(begin[1:], len(block.time)), customer_end)
+        end = np.minimum(np.append(begin[1:], len(block.time)), block.end[owner])
         carried = ~marks.begins[begin]
         prior_stage, prior_start = _prior(block)
         return cls(

@@ -35,6 +35,10 @@ class Block:
         Whether the customer was seen before.
     by : ndarray of int32, shape (n_rows,), or None
         Codes of the values in the group columns.
+    touch : ndarray of int8, shape (n_rows,), or None
+        Numbers of the touchpoints, from 1 to 63, 0 for rows that are none.
+    value : ndarray of int64, shape (n_rows,), or None
+        What the events are worth.
     """
 
     time: Ints
@@ -45,6 +49,13 @@ class Block:
     prior: Carried
     held: Bools
     by: Codes | None = None
+    touch: NDArray[np.int8] | None = None
+    value: Ints | None = None
+
+    @property
+    def end(self) -> Ints:
+        """Position after each customer's last row."""
+        return np.append(self.start[1:], len(self.time))
 
 
 @dataclass(frozen=True)
@@ -195,3 +206,21 @@ class Stories:
             since_begin = visits[row] - visits[begin] + 1
             since_start = visits[row] - visits[start] + self._marks.visit[start]
         return np.where(here, since_begin, self._block.prior.steps[owner] + since_start)
+
+
+def legs_of(block: Block, marks: Marks, story: Stories) -> Ints:
+    """Return the first row of each part of a journey that lies in the block: begun there, or gone on with.
+
+    Rows before a customer's first leg are outcomes merged with the one before them.
+    """
+    first = np.zeros(len(block.time), bool)
+    first[block.start] = True
+    return np.sort(np.concatenate([story.begun, np.flatnonzero(first & marks.goes_on)]))
+
+
+def last_legs(block: Block, begin: Ints) -> tuple[Ints, Bools]:
+    """Return which leg is each customer's last, and whether there is one."""
+    last = np.searchsorted(begin, block.end, side="left") - 1
+    mine = last >= 0
+    mine[mine] &= begin[last[mine]] >= block.start[mine]
+    return last, mine

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import os
 import warnings
-from collections.abc import Collection
+from collections.abc import Collection, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from typing import TYPE_CHECKING, Any
@@ -20,6 +20,7 @@ from journeys.models.stays import Nodes
 if TYPE_CHECKING:
     import pandas as pd
 
+    from journeys.models.what_if import WhatIf
     from journeys.questions.moves import MovesResult
     from journeys.tally.tally import Tally
 
@@ -61,6 +62,9 @@ class JourneyFit:
         None for a known chain, which has no uncertainty.
     fitted_stays : FittedStays or None
         The binned stays behind the moves, in all and by bucket; None for a known chain.
+    dwell : tuple or None
+        In a known chain the distribution of each move's dwell in days, None where only a mean or nothing is
+        given; None for a fit to a tally.
 
     Examples
     --------
@@ -84,6 +88,7 @@ class JourneyFit:
     tally: Tally | None = None
     influence: Influence | None = None
     fitted_stays: FittedStays | None = None
+    dwell: tuple[Any, ...] | None = None
 
     @property
     def states(self) -> tuple[str, ...]:
@@ -116,11 +121,19 @@ class JourneyFit:
         is_outcome = np.arange(self.nodes.n_nodes) >= self.nodes.n_rows
         return classify(self.nodes.n_nodes, self.move_state[used], self.move_target[used], is_outcome)
 
-    def moves(self, *, confidence_level: float = 0.95) -> MovesResult:
+    def moves(self, *, by: str | Sequence[str] | None = None, confidence_level: float = 0.95) -> MovesResult:
         """Return every cell of the matrix with its interval (see `journeys.questions.moves.moves`)."""
         from journeys.questions.moves import moves
 
-        return moves(self, confidence_level=confidence_level)
+        return moves(self, by=by, confidence_level=confidence_level)
+
+    def with_move(
+        self, state: str, next_state: str, change: float, *, taken_from: str | Collection[str] | None = None
+    ) -> WhatIf:
+        """Return the chain with one move made likelier (see `journeys.models.what_if.with_move`)."""
+        from journeys.models.what_if import with_move
+
+        return with_move(self, state, next_state, change, taken_from=taken_from)
 
     def target_mask(self, to: str | Collection[str] | None) -> BoolArray:
         """Return which nodes `to` names.

@@ -61,7 +61,8 @@ def from_matrix(frame: pd.DataFrame, dwell: Any = None, entry: Any = None) -> Jo
     state = np.concatenate([np.zeros(len(first), np.int64), row + 1])
     target = np.concatenate([first + 1, column + 1])
     probability = np.concatenate([begin[first], cells[row, column]])
-    mean, second = _dwell_moments(nodes, state, target, dwell)
+    given = _dwells(nodes, state, target, dwell)
+    mean, second = _dwell_moments(nodes, state, target, given)
     flags: dict[str, str] = {}
     state, target, columns, kept = with_dead_ends(
         nodes, state, target, [probability, probability * mean, probability * second], flags
@@ -77,6 +78,7 @@ def from_matrix(frame: pd.DataFrame, dwell: Any = None, entry: Any = None) -> Jo
         second=columns[2],
         row_flags=flags,
         open_moves="known",
+        dwell=tuple(given[i] if i >= 0 and hasattr(given[i], "cdf") else None for i in kept.tolist()),
     )
 
 
@@ -139,13 +141,11 @@ def _entry_probabilities(states: tuple[str, ...], entry: Any) -> FloatArray:
     return np.asarray(begin / begin.sum(), dtype=np.float64)
 
 
-def _dwell_moments(nodes: Nodes, state: np.ndarray, target: np.ndarray, dwell: Any) -> tuple[FloatArray, FloatArray]:
-    """Return mean and mean square of the dwell of each move; NaN where it is not given."""
-    mean, second = np.full(len(state), np.nan), np.full(len(state), np.nan)
-    entering = state == 0
-    mean[entering] = second[entering] = 0.0
+def _dwells(nodes: Nodes, state: np.ndarray, target: np.ndarray, dwell: Any) -> list[Any]:
+    """Return what is given of the dwell of each move; None for nothing."""
+    given: list[Any] = [None] * len(state)
     if dwell is None:
-        return mean, second
+        return given
     if not isinstance(dwell, Mapping):
         msg = f"dwell: got {type(dwell).__name__}; wanted a mapping from state or (state, next state) to days"
         raise TypeError(msg)
@@ -157,9 +157,20 @@ def _dwell_moments(nodes: Nodes, state: np.ndarray, target: np.ndarray, dwell: A
         msg = f"dwell: {unknown[0]!r} is neither a state nor a (state, next state) with a probability above 0"
         raise ValueError(msg)
     for move, (origin, to) in enumerate(pairs):
-        value = dwell.get((origin, to), dwell.get(origin))
-        if value is not None and not entering[move]:
-            mean[move], second[move] = _moments(value, (origin, to))
+        if state[move] > 0:
+            given[move] = dwell.get((origin, to), dwell.get(origin))
+    return given
+
+
+def _dwell_moments(
+    nodes: Nodes, state: np.ndarray, target: np.ndarray, given: list[Any]
+) -> tuple[FloatArray, FloatArray]:
+    """Return mean and mean square of the dwell of each move; NaN where it is not given."""
+    mean, second = np.full(len(state), np.nan), np.full(len(state), np.nan)
+    mean[state == 0] = second[state == 0] = 0.0
+    for move, value in enumerate(given):
+        if value is not None:
+            mean[move], second[move] = _moments(value, (nodes.labels[state[move]], nodes.labels[target[move]]))
     return mean, second
 
 

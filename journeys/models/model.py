@@ -10,6 +10,7 @@ import numpy as np
 from journeys import checks
 from journeys.errors import EndNotSeenWarning, JourneysWarning, LogError, ShortLogWarning
 from journeys.kernels.arrays import BoolArray, FloatArray, sum_at
+from journeys.kernels.bins import DAY_US
 from journeys.kernels.records import FIRST_OUTCOME
 from journeys.kernels.sojourn import StayFit, fit_stays, move_influence
 from journeys.kernels.stays import FittedStays, Stays
@@ -85,7 +86,15 @@ class JourneyModel:
         DeadEndWarning
             If no move out of a state was seen.
         """
-        refuse(tally)
+        fault = fault_of(tally)
+        if fault is not None:
+            raise LogError(fault.message)
+        _warn_if_short(tally)
+        refuse_without_outcome(tally)
+        return self.fit_whatever(tally)
+
+    def fit_whatever(self, tally: Tally) -> JourneyFit:
+        """Fit the chain to a tally whose faults have been looked for (see `fault_of`)."""
         nodes = nodes_of(tally)
         stays, by_bucket = move_stays(tally, censored=self.open_moves == "censored")
         weight = 0.0 if tally.whole_days else 0.5
@@ -161,31 +170,48 @@ class JourneyModel:
             )
 
 
-def refuse(tally: Tally) -> None:
-    """Raise a LogError where no fit can be had; warn where the log is short."""
+@dataclass(frozen=True)
+class Fault:
+    """Why no fit can be had: in few words, and with what was wanted and how to mend it."""
+
+    briefly: str
+    message: str
+
+
+def fault_of(tally: Tally) -> Fault | None:
+    """Return why no fit can be had of a tally, None where there is nothing in its way."""
     rules = tally.rules
-    if rules.silence_us is not None:
-        silence_days = rules.silence_us / 86_400e6
-        if tally.as_of_us - tally.log_start_us <= rules.silence_us:
-            msg = (
-                f"the log is {tally.days:.1f} days long, no longer than the silence of {silence_days:g} days, so "
-                "nobody can be seen to lapse; wanted a longer log or a shorter silence"
-            )
-            raise LogError(msg)
-        if tally.days < 1.5 * silence_days:
-            warnings.warn(
-                f"the log of {tally.days:.1f} days is shorter than one and a half silences: times given "
-                "conversion will be too narrow in their intervals",
-                ShortLogWarning,
-                stacklevel=3,
-            )
-    if not (tally.entries["sure"] == 1).any():
-        msg = (
-            f"none of {tally.n_journeys:,} journeys has a sure entry (all may have begun before the log); wanted a "
-            "log that starts earlier, or complete_history=true if it holds each customer's whole past"
+    if rules.silence_us is not None and tally.days_followed * DAY_US <= rules.silence_us:
+        silence_days = rules.silence_us / DAY_US
+        what = f"the log is {tally.days:.1f} days long"
+        if tally.days_followed < tally.days:
+            what = f"these journeys were followed for {tally.days_followed:.1f} days at most"
+        return Fault(
+            f"followed for {tally.days_followed:.0f} days, no longer than the silence",
+            f"{what}, no longer than the silence of {silence_days:g} days, so "
+            "nobody can be seen to lapse; wanted a longer log or a shorter silence",
         )
-        raise LogError(msg)
-    refuse_without_outcome(tally)
+    if not (tally.entries["sure"] == 1).any():
+        return Fault(
+            "no sure entry",
+            f"none of {tally.n_journeys:,} journeys has a sure entry (all may have begun before the log); wanted a "
+            "log that starts earlier, or complete_history=true if it holds each customer's whole past",
+        )
+    return None
+
+
+def _warn_if_short(tally: Tally) -> None:
+    silence_us = tally.rules.silence_us
+    if silence_us is not None and tally.days_followed * DAY_US < 1.5 * silence_us:
+        what = f"the log of {tally.days:.1f} days"
+        if tally.days_followed < tally.days:
+            what = f"the time of {tally.days_followed:.1f} days for which these journeys were followed"
+        warnings.warn(
+            f"{what} is shorter than one and a half silences: times given "
+            "conversion will be too narrow in their intervals",
+            ShortLogWarning,
+            stacklevel=3,
+        )
 
 
 def refuse_without_outcome(tally: Tally) -> None:

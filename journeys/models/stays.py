@@ -2,15 +2,16 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, replace
 
 import numpy as np
 
-from journeys.kernels.arrays import FloatArray, IntArray, sum_at
+from journeys.kernels.arrays import BoolArray, FloatArray, IntArray, sum_at
 from journeys.kernels.bins import DAY_US, bin_bounds_days, bin_of, dwell_edges, elapsed_edges
 from journeys.kernels.records import FIRST_OUTCOME, LAPSED, OPEN
 from journeys.kernels.stays import BucketStays, Stays
-from journeys.tally.accumulate import join_limbs
+from journeys.tally.accumulate import Columns, join_limbs
 from journeys.tally.tally import Tally
 
 
@@ -152,21 +153,56 @@ def journey_stays(tally: Tally) -> tuple[Stays, BucketStays]:
     by_bucket : BucketStays
         The same by non-empty bucket.
     """
-    table, rules = tally.journeys, tally.rules
+    table = tally.journeys
+    return _one_row(tally, table, "elapsed", outcome_column, table["sure"] == 1, table["outcome"] == OPEN)
+
+
+def absence_stays(tally: Tally, outcome: int) -> tuple[Stays, BucketStays]:
+    """Return absences as stays in one state, ended by coming back or still open.
+
+    Parameters
+    ----------
+    tally : Tally
+        The counts.
+    outcome : int
+        Code of how the journey before the absence ended: lapsed, or an outcome.
+
+    Returns
+    -------
+    stays : Stays
+        One state; column 1 is coming back. Times are since the customer's last event.
+    by_bucket : BucketStays
+        The same by non-empty bucket.
+    """
+    table = tally.gaps
+    kind = table["outcome"] == outcome
+    return _one_row(tally, table, "away", np.ones_like, kind, table["back"] == 0)
+
+
+def _one_row(
+    tally: Tally,
+    table: Columns,
+    total: str,
+    column: Callable[[IntArray], IntArray],
+    mine: BoolArray,
+    is_open: BoolArray,
+) -> tuple[Stays, BucketStays]:
+    """Return some rows of a table binned by elapsed time as stays in one state.
+
+    `total` names the sum of times, `column` turns the outcomes of ended stays into columns, `mine` picks the
+    rows and `is_open` says which of them have not ended.
+    """
+    rules, bucket = tally.rules, live_buckets(tally)
     edges = elapsed_edges(rules.silence_us, tally.whole_days, rules.horizons_us)
-    bucket = live_buckets(tally)
-    sure = table["sure"] == 1
-    is_open = sure & (table["outcome"] == OPEN)
-    ended = sure & (table["outcome"] != OPEN)
-    n_bins = int(table["bin"].max()) + 1 if len(table["n"]) else 1
+    still, ended = mine & is_open, mine & ~is_open
+    n_bins = int(table["bin"][mine].max()) + 1 if mine.any() else 1
     lower, upper = bin_bounds_days(edges, n_bins)
-    target = outcome_column(table["outcome"][ended])
+    target = column(table["outcome"][ended].astype(np.int64))
     cells, cell = np.unique(target * n_bins + table["bin"][ended], return_inverse=True)
-    n = table["n"][ended].astype(np.float64)
-    total = join_limbs(table, "elapsed")[ended] / DAY_US
-    none = np.zeros(0, np.int64)
-    zeros = np.zeros(int(is_open.sum()), np.int64)
-    open_n: FloatArray = table["n"][is_open].astype(np.float64)
+    n: FloatArray = table["n"][ended].astype(np.float64)
+    days = join_limbs(table, total)[ended] / DAY_US
+    zeros, none = np.zeros(int(still.sum()), np.int64), np.zeros(0, np.int64)
+    open_n: FloatArray = table["n"][still].astype(np.float64)
     stays = Stays(
         n_states=1,
         n_targets=FIRST_OUTCOME + len(rules.outcomes) + 1,
@@ -175,11 +211,11 @@ def journey_stays(tally: Tally) -> tuple[Stays, BucketStays]:
         target=cells // n_bins,
         bin=cells % n_bins,
         n=sum_at(cell, n, len(cells)),
-        total=sum_at(cell, total, len(cells)),
+        total=sum_at(cell, days, len(cells)),
         lower=lower,
         upper=upper,
         open_state=zeros,
-        open_bin=table["bin"][is_open],
+        open_bin=table["bin"][still],
         open_n=open_n,
         survivor_n=np.zeros(1),
     )
@@ -188,8 +224,8 @@ def journey_stays(tally: Tally) -> tuple[Stays, BucketStays]:
         bucket=bucket[table["bucket"][ended]],
         cell=cell,
         n=n,
-        total=total,
-        open_bucket=bucket[table["bucket"][is_open]],
+        total=days,
+        open_bucket=bucket[table["bucket"][still]],
         open_state=zeros,
         open_bin=stays.open_bin,
         open_n=open_n,

@@ -34,6 +34,12 @@ def save(fit: JourneyFit, path: str | os.PathLike[str]) -> None:
         What to keep.
     path : str or path-like
         Where.
+
+    Raises
+    ------
+    StoreError
+        If the dwell of a known chain has a distribution that is not one of `scipy.stats` with numbers as
+        parameters.
     """
     if fit.tally is not None:
         tally_store.save(fit.tally, path, {HEAD: json.dumps({"open_moves": fit.open_moves}).encode()})
@@ -45,6 +51,8 @@ def save(fit: JourneyFit, path: str | os.PathLike[str]) -> None:
         "converted": fit.converted,
         "row_flags": fit.row_flags,
     }
+    if fit.dwell is not None and any(one is not None for one in fit.dwell):
+        head["dwell"] = [_told(one) for one in fit.dwell]
     columns = {name: getattr(fit, name) for name in _COLUMNS}
     table = pa.table(columns)
     head["checksum"] = _checksum(head, columns)
@@ -99,6 +107,7 @@ def load(path: str | os.PathLike[str]) -> JourneyFit:
         converted=tuple(head["converted"]),
         row_flags=head["row_flags"],
         open_moves="known",
+        dwell=_dwells(head.get("dwell"), len(columns["probability"])),
         **columns,
     )
 
@@ -110,3 +119,43 @@ def _checksum(head: dict[str, Any], columns: dict[str, np.ndarray]) -> str:
     for name in _COLUMNS:
         digest.update(np.ascontiguousarray(columns[name]).tobytes())
     return digest.hexdigest()
+
+
+def _told(given: Any) -> dict[str, Any] | None:
+    """Return the name and the parameters of a frozen distribution."""
+    from scipy import stats
+
+    if given is None:
+        return None
+    kind = getattr(given, "dist", None)
+    name = str(getattr(kind, "name", ""))
+    of_scipy = type(getattr(stats, name, None)) is type(kind)
+    if not of_scipy or not isinstance(kind, stats.rv_continuous | stats.rv_discrete):
+        msg = f"{given!r} is no frozen distribution of scipy.stats, so the chain cannot be kept in a file; make it anew"
+        raise StoreError(msg)
+    try:
+        args = [float(one) for one in given.args]
+        return {"name": name, "args": args, "kwds": {key: float(one) for key, one in given.kwds.items()}}
+    except (TypeError, ValueError):
+        msg = f"the parameters of a {name} distribution are no single numbers, so the chain cannot be kept in a file"
+        raise StoreError(msg) from None
+
+
+def _dwells(told: list[dict[str, Any] | None] | None, n: int) -> tuple[Any, ...]:
+    """Return the distributions that `_told` wrote down."""
+    if told is None:
+        return (None,) * n
+    from scipy import stats
+
+    kinds = (stats.rv_continuous, stats.rv_discrete)
+    found: list[Any] = []
+    for one in told:
+        if one is None:
+            found.append(None)
+            continue
+        kind = getattr(stats, one["name"], None)
+        if not isinstance(kind, kinds):
+            msg = f"the fit keeps a distribution {one['name']!r} that this scipy does not have; make the chain anew"
+            raise StoreError(msg)
+        found.append(kind(*one["args"], **one["kwds"]))
+    return tuple(found)

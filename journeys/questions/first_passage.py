@@ -2,42 +2,49 @@
 
 from __future__ import annotations
 
-from collections.abc import Collection
+from collections.abc import Collection, Sequence
 from dataclasses import dataclass
+from functools import partial
 from typing import ClassVar
 
 import numpy as np
 
 from journeys import checks
-from journeys.kernels.absorption import Passage, passage
-from journeys.kernels.arrays import FloatArray
+from journeys.kernels.absorption import passage
+from journeys.kernels.arrays import FloatArray, IntArray
+from journeys.kernels.return_walks import passage_walk
 from journeys.models.fit import JourneyFit
-from journeys.questions.linear import (
-    ENOUGH_DF,
-    ENOUGH_EVENTS,
-    TOO_FEW,
-    leaning,
-    probabilities,
-    spread,
-    starts_counted,
-)
+from journeys.questions.bootstrap import Plan, accelerations, plan, walk_influence
+from journeys.questions.by_group import by_group
+from journeys.questions.elapsed import walk_to
+from journeys.questions.linear import leaning, passage_spread, starts_counted
+from journeys.questions.measures import LEVELS, MEASURES, UNIT_DAYS, Walked, measured
 from journeys.questions.outcomes import UNREACHABLE
-from journeys.results import KNOWN, LOG, LOGIT, Estimates, Result, joined_flags
+from journeys.questions.quantiles import quantiles_of_moves
+from journeys.results import Estimates, Result
 
-UNIT_DAYS = {"weeks": 7.0, "days": 1.0, "hours": 1 / 24, "minutes": 1 / 1440}
-MEASURES = ("probability", "mean", "sd", "mean_unconditional")
-SOME_NEVER = "infinite: some never do"
-NO_DWELL = "no dwell given"
-NO_SPREAD = "no spread given"
-_MOMENT = {"mean": "mean_given", "sd": "sd_given", "mean_unconditional": "mean_given"}
+__all__ = ["UNIT_DAYS", "FirstPassageResult", "first_passage"]
 
 
 @dataclass(frozen=True, eq=False, repr=False)
 class FirstPassageResult(Result):
-    """Probability of reaching a target, and mean and spread of the steps or time it takes."""
+    """Probability of reaching a target, and how many steps or how much time it takes.
+
+    Attributes
+    ----------
+    unit : str
+        "steps", or the unit of time.
+    method : str
+        How the uncertainty was found.
+    resamples : ndarray, shape (n_resamples, n_rows), or None
+        The answers of the resamples, row by row of the frame: NaN where one is undefined, and for medians and
+        quantiles, which are not resampled. None where nothing was.
+    """
 
     title: ClassVar[str] = "First passage"
     unit: str = "steps"
+    method: str = "linearised"
+    resamples: FloatArray | None = None
 
 
 def first_passage(
@@ -45,6 +52,10 @@ def first_passage(
     to: str | Collection[str] | None = None,
     clock: str = "steps",
     *,
+    by: str | Sequence[str] | None = None,
+    method: str = "bootstrap",
+    n_resamples: int | None = None,
+    rng: int | np.random.Generator | None = None,
     unit: str = "days",
     confidence_level: float = 0.95,
 ) -> FirstPassageResult:
@@ -58,6 +69,18 @@ def first_passage(
         An outcome, a state, or several of either; default: all converted outcomes together.
     clock : {"steps", "time"}
         Count moves, or elapsed time.
+    by : str or sequence of str, optional
+        Columns that journeys are grouped by: one fit per group, their columns first.
+    method : {"bootstrap", "percentile", "bca", "linearised"}
+        How uncertainty is found: from resamples of the buckets of customers, as a standard error, as
+        percentiles or as bias-corrected and accelerated ones; or linearised, which needs no resamples. Above
+        500 states say "linearised", or give `n_resamples` and wait. A known chain has none whatever the method; a
+        what-if is linearised.
+    n_resamples : int, optional
+        Default 399, or 1,999 (also the least) for "percentile" and "bca".
+    rng : int or numpy.random.Generator, optional
+        Source of chance; default: started from the checksum of the tally, so that the same tally gives the
+        same numbers.
     unit : {"days", "weeks", "hours", "minutes"}
         Unit of time; without meaning for steps.
     confidence_level : float
@@ -67,24 +90,30 @@ def first_passage(
     -------
     FirstPassageResult
         One row per (start_state, measure): `probability` of ever reaching `to` before the journey ends
-        otherwise; `mean` and `sd` of the steps or time given that it is reached; `mean_unconditional`,
-        infinite where the probability is below 1. From `to` itself: 1, 0, 0 and 0.
+        otherwise; `median`, `q90` (90 % quantile), `mean` and `sd` of the steps or time given that it is
+        reached; `mean_unconditional`, infinite where the probability is below 1. From `to` itself: 1, and 0 for
+        the others. The column n_undefined counts resamples in which a number has no value.
 
     Raises
     ------
     ValueError
-        If `to`, `clock`, `unit` or the level is not one of those.
+        If an argument is not one of those, or more than 500 states were to be resampled unasked.
 
     Notes
     -----
     The target is made absorbing; which states can reach it is decided on the graph of moves. With
-    N = (I - P)^-1, h = N p and g = N (M h), the mean given passage is g/h. Intervals from the linearised
-    cluster variance: logit scale for probabilities, log scale for steps and times.
+    N = (I - P)^-1, h = N p and g = N (M h), the mean given passage is g/h. Intervals lie even on the logit
+    scale for probabilities, on the log scale for steps and times. "bootstrap" takes the standard error over
+    the resamples on that scale and t quantiles with one degree of freedom less than there are buckets. Where
+    over 5 % of the resamples leave a number undefined there is no interval. Median and `q90` keep their linear
+    intervals in every method.
 
     References
     ----------
     J. G. Kemeny, J. L. Snell, Finite Markov Chains, Van Nostrand 1960, chapter III. R. Pyke, Markov renewal
-    processes with finitely many states, Ann. Math. Statist. 32 (1961) 1243-1259.
+    processes with finitely many states, Ann. Math. Statist. 32 (1961) 1243-1259. B. Efron, R. J. Tibshirani,
+    An Introduction to the Bootstrap, Chapman and Hall 1993. B. Efron, Better bootstrap confidence intervals,
+    JASA 82 (1987) 171-185.
 
     Examples
     --------
@@ -92,124 +121,93 @@ def first_passage(
     >>> chain = pd.DataFrame([[0.5, 0.5]], index=["basket"], columns=["basket", "joined"])
     >>> frame = first_passage(JourneyFit.from_matrix(chain), "joined").to_frame()
     >>> frame.loc[frame.start_state == "basket", ["measure", "estimate"]].round(3).values.tolist()
-    [['probability', 1.0], ['mean', 2.0], ['sd', 1.414], ['mean_unconditional', 2.0]]
+    [['probability', 1.0], ['median', 1.0], ['q90', 4.0], ['mean', 2.0], ['sd', 1.414], ['mean_unconditional', 2.0]]
     """
-    import pandas as pd
-
     checks.one_of(clock, ("steps", "time"), "clock")
     checks.one_of(unit, tuple(UNIT_DAYS), "unit")
     level = checks.confidence_level(confidence_level)
-    nodes, p = fit.nodes, fit.probability
-    mean, second = (p, p) if clock == "steps" else (fit.mean, fit.second)
-    found = passage(nodes.n_rows, nodes.n_nodes, fit.move_state, fit.move_target, p, mean, second, fit.target_mask(to))
-    scale = 1.0 if clock == "steps" else UNIT_DAYS[unit]
-    spreads = _spreads(fit, found, steps=clock == "steps")
-    share = probabilities(fit, found.probability, *spreads["probability"], starts_counted(fit), LOGIT)
-    at_target = fit.target_mask(to)[: nodes.n_rows]
-    share = _without_doubt(share, at_target)
-    parts, flags = (
-        [share],
-        [
-            joined_flags(
-                [(np.isnan(found.mean_given) & (found.probability == 0), UNREACHABLE), (share.few, TOO_FEW)],
-                nodes.n_rows,
-            )
-        ],
-    )
-    for measure in MEASURES[1:]:
-        part, flag = _moment(fit, found, share, measure, spreads[_MOMENT[measure]], scale, at_target)
-        parts.append(part)
-        flags.append(flag)
-    joined, flag = Estimates.joined(parts), np.concatenate(flags)
-    lean = [(np.tile(mask & ~at_target, len(MEASURES)), text) for text, mask in leaning(fit).items()]
-    for mask, text in lean:
-        flag = np.where(mask, np.where(flag == "", text, flag + "; " + text), flag)
-    order = np.arange(len(flag)).reshape(len(MEASURES), nodes.n_rows).T.ravel()
-    keys = pd.DataFrame(
-        {
-            "start_state": np.repeat(np.array(nodes.labels[: nodes.n_rows], dtype=object), len(MEASURES)),
-            "measure": np.tile(np.array(MEASURES, dtype=object), nodes.n_rows),
-        }
-    )
-    return FirstPassageResult(
-        keys=keys,
-        estimates=joined.take(order),
-        flag=flag[order],
-        counts={"n_effective": np.tile(share.n_effective, (len(MEASURES), 1)).T.ravel()},
-        confidence_level=level,
-        unit=clock if clock == "steps" else unit,
-    )
+    fit.target_mask(to)
+    if by is not None:
+        ask = partial(
+            first_passage, to=to, clock=clock, method=method, n_resamples=n_resamples, rng=rng, unit=unit,
+            confidence_level=level,
+        )  # fmt: skip
+        return by_group(fit, by, ask)
+    how = plan(fit, method, n_resamples, rng, fit.nodes.n_rows)
+    every = np.arange(fit.nodes.n_rows)
+    return _result(fit, _walked(fit, to, how, clock, every, LEVELS), how, every, MEASURES, clock, unit, level)
 
 
-def _spreads(fit: JourneyFit, found: Passage, *, steps: bool) -> dict[str, tuple[FloatArray, FloatArray]]:
-    """Return standard errors and degrees of freedom by measure, from every start."""
-    n, moves = fit.nodes.n_rows, len(fit.probability)
-    if fit.influence is None:
-        nothing = (np.zeros(n), np.full(n, np.inf))
-        return dict.fromkeys(("probability", "mean_given", "sd_given"), nothing)
-    by_start = [found.gradients(start) for start in range(n)]
-    answers = {}
-    zeros = np.zeros((n, moves))
-    for measure in ("probability", "mean_given", "sd_given"):
-        by_p, by_mean, by_second = (np.stack([one[measure][i] for one in by_start]) for i in range(3))
-        if steps:
-            by_p, by_mean, by_second = by_p + by_mean + by_second, zeros, zeros
-        answers[measure] = spread(fit, by_p, by_mean, by_second)
-    return answers
-
-
-def _moment(
+def from_entry(
     fit: JourneyFit,
-    found: Passage,
-    share: Estimates,
-    measure: str,
-    spreads: tuple[FloatArray, FloatArray],
-    scale: float,
-    at_target: np.ndarray,
-) -> tuple[Estimates, np.ndarray]:
-    """Return one kind of mean or spread from every start, with its flags."""
-    n = len(at_target)
-    value = np.where(at_target, 0.0, found.sd_given if measure == "sd" else found.mean_given) / scale
-    std_error, df = spreads[0] / scale, spreads[1]
-    reached = found.probability > 0
-    unknown = reached & ~at_target & np.isnan(value)
-    never = np.zeros(n, bool)
-    if measure == "mean_unconditional":
-        never = ~(found.certain | at_target)
-        value = np.where(never, np.inf, value)
-    std_error = np.where(np.isfinite(value), std_error, np.nan)
-    known = fit.influence is None
-    events = np.nan_to_num(share.n_effective) * share.value
-    few = (
-        np.zeros(n, bool)
-        if known
-        else ((df < ENOUGH_DF) | (events < ENOUGH_EVENTS) | ~(std_error > 0)) & np.isfinite(value) & ~at_target
-    )
-    estimates = _without_doubt(
-        Estimates(value, std_error, df, np.full(n, KNOWN if known else LOG, dtype=object), share.n_effective, few),
-        at_target,
-    )
-    absent = NO_DWELL if measure != "sd" or np.isnan(found.mean_given[reached & ~at_target]).any() else NO_SPREAD
-    flag = joined_flags(
-        [
-            (~reached & ~never, UNREACHABLE),
-            (never & ~reached, UNREACHABLE),
-            (never & reached, SOME_NEVER),
-            (unknown, absent),
-            (few, TOO_FEW),
-        ],
-        n,
-    )
-    return estimates, flag
+    to: str | Collection[str] | None = None,
+    clock: str = "steps",
+    *,
+    quantiles: bool = True,
+    confidence_level: float = 0.95,
+) -> FirstPassageResult:
+    """Return the rows of `first_passage` that start at entry, linearised, at less cost; quantiles only if asked for."""
+    how = plan(fit, "linearised", None, None, 1)
+    entry, levels = np.zeros(1, np.int64), LEVELS if quantiles else ()
+    told = MEASURES if quantiles else tuple(name for name in MEASURES if name not in ("median", "q90"))
+    walked = _walked(fit, to, how, clock, entry, levels)
+    return _result(fit, walked, how, entry, told, clock, "days", checks.confidence_level(confidence_level))
 
 
-def _without_doubt(estimates: Estimates, mask: np.ndarray) -> Estimates:
-    """Return the same with the numbers under `mask` known for certain."""
-    return Estimates(
-        estimates.value,
-        np.where(mask, 0.0, estimates.std_error),
-        estimates.df,
-        np.where(mask, KNOWN, estimates.scale),
-        estimates.n_effective,
-        estimates.few & ~mask,
+def _result(
+    fit: JourneyFit, walked: Walked, how: Plan, starts: IntArray, told: Sequence[str], clock: str, unit: str,
+    level: float,
+) -> FirstPassageResult:  # fmt: skip
+    """Return answers as rows, start by start."""
+    import pandas as pd
+
+    steps = clock == "steps"
+    answers = measured(fit, walked, how, 1.0 if steps else UNIT_DAYS[unit])
+    labels = np.array(fit.nodes.labels, dtype=object)[starts]
+    keys = {"start_state": np.repeat(labels, len(told)), "measure": np.tile(told, len(labels)).astype(object)}
+    return FirstPassageResult(
+        keys=pd.DataFrame(keys),
+        estimates=answers.estimates,
+        flag=answers.flag,
+        counts={"n_effective": answers.n_effective, "n_undefined": answers.n_undefined},
+        confidence_level=level,
+        unit=clock if steps else unit,
+        method=how.method,
+        resamples=answers.resamples,
     )
+
+
+def _walked(
+    fit: JourneyFit, to: str | Collection[str] | None, how: Plan, clock: str, at: IntArray, levels: Sequence[float]
+) -> Walked:
+    """Return all that is known of the walks to the target from some starts (resamples: from every start)."""
+    p, n, is_target, steps = fit.probability, fit.nodes.n_rows, fit.target_mask(to), clock == "steps"
+    walk = passage_walk(n, fit.move_state, fit.move_target, is_target)
+    mean, second = (p, p) if steps else (fit.mean, fit.second)
+    found = passage(n, walk.n_nodes, walk.state, walk.target, p, mean, second, is_target)
+    influence = walk_influence(fit, walk, found, steps=steps) if how.method == "bca" else None
+    draws = how.draws(fit, lambda state, target: [passage_walk(n, state, target, is_target)], steps=steps)
+    return Walked(
+        probability=found.probability[at],
+        certain=found.certain[at],
+        mean=found.mean_given[at],
+        sd=found.sd_given[at],
+        at_target=is_target[at],
+        sure=np.zeros(len(at), bool),
+        doubtful=found.doubtful[at],
+        trials=starts_counted(fit)[at],
+        spreads={name: (se[at], df[at]) for name, (se, df) in passage_spread(fit, found, steps=steps).items()},
+        speeds=accelerations(influence),
+        draws=None if draws is None else draws[0],
+        quantiles=_quantiles(fit, to, clock, at, levels, found.probability),
+        lean={text: mask[at] for text, mask in leaning(fit).items()},
+        unreachable=UNREACHABLE,
+    )
+
+
+def _quantiles(
+    fit: JourneyFit, to: str | Collection[str] | None, clock: str, at: IntArray, levels: Sequence[float], p: FloatArray
+) -> list[tuple[Estimates, np.ndarray]]:
+    if not levels:
+        return []
+    return quantiles_of_moves(fit, walk_to(fit, to), at, clock=clock, levels=levels, probability=p)

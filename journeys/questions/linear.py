@@ -4,9 +4,10 @@ from __future__ import annotations
 
 import numpy as np
 
-from journeys.kernels.absorption import passage
+from journeys.kernels.absorption import Passage
 from journeys.kernels.arrays import BoolArray, FloatArray, sum_at
 from journeys.kernels.intervals import variance_from_buckets
+from journeys.kernels.visits import often_visited
 from journeys.models.fit import JourneyFit
 from journeys.results import KNOWN, Estimates
 
@@ -15,29 +16,65 @@ ENOUGH_EVENTS = 5.0
 ENOUGH_DF = 10.0
 LEANS = 0.01
 TOO_FEW = "too few"
+DOUBTFUL = "too extreme to compute"
 
 
-def spread(
-    fit: JourneyFit, by_p: FloatArray, by_mean: FloatArray, by_second: FloatArray
-) -> tuple[FloatArray, FloatArray]:
-    """Return standard error and degrees of freedom of answers from their derivatives.
+def probability_spread(fit: JourneyFit, found: Passage) -> tuple[FloatArray, FloatArray]:
+    """Return standard error and degrees of freedom of the probability of a passage, from every start.
 
     Parameters
     ----------
     fit : JourneyFit
-        The chain; a known one gives zeros.
-    by_p, by_mean, by_second : ndarray, shape (n_answers, n_moves)
-        Derivatives by each move's probability, mean and second moment.
+        The chain; a known one gives zeros, and infinite degrees of freedom.
+    found : Passage
+        Through its moves.
 
     Returns
     -------
-    std_error, df : ndarray, shape (n_answers,)
+    std_error, df : ndarray, shape (n_states + 1,)
+        Exactly 0 from where the target is certain.
     """
     if fit.influence is None:
-        return np.zeros(len(by_p)), np.full(len(by_p), np.inf)
-    influence = fit.influence.probability @ by_p.T
-    if by_mean.any() or by_second.any():
-        influence = influence + fit.influence.mean @ by_mean.T + fit.influence.second @ by_second.T
+        n = len(found.probability)
+        return np.zeros(n), np.full(n, np.inf)
+    return _probability_spread(found, found.probability_changes(fit.influence.probability))
+
+
+def passage_spread(fit: JourneyFit, found: Passage, *, steps: bool) -> dict[str, tuple[FloatArray, FloatArray]]:
+    """Return standard errors and degrees of freedom of the answers of a passage, from every start.
+
+    Parameters
+    ----------
+    fit : JourneyFit
+        The chain; a known one gives zeros, and infinite degrees of freedom.
+    found : Passage
+        Through its moves.
+    steps : bool
+        The passage counts moves; else it is in time.
+
+    Returns
+    -------
+    dict of str to (std_error, df), each of shape (n_states + 1,)
+        By `probability`, `mean_given` and `sd_given`; NaN errors where the answer is undefined.
+    """
+    if fit.influence is None:
+        return dict.fromkeys(("probability", "mean_given", "sd_given"), probability_spread(fit, found))
+    pulls = fit.influence
+    by_p = pulls.probability
+    change = found.changes(by_p, by_p, by_p) if steps else found.changes(by_p, pulls.mean, pulls.second)
+    return {
+        "probability": _probability_spread(found, change.probability),
+        "mean_given": _spread_of(change.mean_given),
+        "sd_given": _spread_of(change.sd_given),
+    }
+
+
+def _probability_spread(found: Passage, change: FloatArray) -> tuple[FloatArray, FloatArray]:
+    # where nothing else can happen the rows of the moves sum to 1, whatever the buckets; what is left is rounding
+    return _spread_of(np.where(found.certain, 0.0, change))
+
+
+def _spread_of(influence: FloatArray) -> tuple[FloatArray, FloatArray]:
     variance, df = variance_from_buckets(influence)
     return np.sqrt(variance), df
 
@@ -48,14 +85,14 @@ def starts_counted(fit: JourneyFit) -> FloatArray:
 
 
 def probabilities(
-    fit: JourneyFit, value: FloatArray, std_error: FloatArray, df: FloatArray, trials: FloatArray, scale: str
+    fit: JourneyFit | None, value: FloatArray, std_error: FloatArray, df: FloatArray, trials: FloatArray, scale: str
 ) -> Estimates:
     """Return probabilities with their effective trials and a mark where events are too few.
 
     Parameters
     ----------
-    fit : JourneyFit
-        The chain.
+    fit : JourneyFit or None
+        The chain; None for shares that were counted without one.
     value, std_error, df, trials : ndarray, shape (n,)
         Probabilities, their spread, and the completed stays behind each, the most that `n_effective` can
         be for a single cell and what it is where the variance is zero.
@@ -63,7 +100,7 @@ def probabilities(
         "logit" or "cell".
     """
     n = len(value)
-    if fit.influence is None:
+    if fit is not None and fit.influence is None:
         return Estimates(
             value,
             np.zeros(n),
@@ -91,10 +128,11 @@ def leaning(fit: JourneyFit) -> dict[str, BoolArray]:
     dict of str to ndarray of bool, shape (n_states + 1,)
         By the words of the flag.
     """
-    found: dict[str, BoolArray] = {}
-    for label, text in fit.row_flags.items():
-        here = np.array([name == label for name in fit.nodes.labels])
-        p = fit.probability
-        reach = passage(fit.nodes.n_rows, fit.nodes.n_nodes, fit.move_state, fit.move_target, p, p, p, here)
-        found[text] = found.get(text, np.zeros(fit.nodes.n_rows, bool)) | (reach.probability > LEANS)
+    nodes = fit.nodes
+    found = {}
+    for text in dict.fromkeys(fit.row_flags.values()):
+        bears = np.array([fit.row_flags.get(name) == text for name in nodes.labels[: nodes.n_rows]])
+        found[text] = often_visited(
+            nodes.n_rows, fit.move_state, fit.move_target, fit.probability, fit.classes, bears, LEANS
+        )
     return found

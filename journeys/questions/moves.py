@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import partial
 from typing import ClassVar
 
 import numpy as np
@@ -10,6 +12,7 @@ import numpy as np
 from journeys import checks
 from journeys.kernels.intervals import variance_from_buckets
 from journeys.models.fit import JourneyFit
+from journeys.questions.by_group import by_group
 from journeys.questions.linear import TOO_FEW, probabilities, starts_counted
 from journeys.results import CELL, Result, joined_flags
 
@@ -24,13 +27,17 @@ class MovesResult(Result):
     title: ClassVar[str] = "Moves"
 
 
-def moves(fit: JourneyFit, *, confidence_level: float = 0.95) -> MovesResult:
+def moves(
+    fit: JourneyFit, *, by: str | Sequence[str] | None = None, confidence_level: float = 0.95
+) -> MovesResult:
     """Return the probability of every move with its interval.
 
     Parameters
     ----------
     fit : JourneyFit
         The chain.
+    by : str or sequence of str, optional
+        Columns that journeys are grouped by: one fit per group, their columns first.
     confidence_level : float
         Between 0 and 1.
 
@@ -65,6 +72,8 @@ def moves(fit: JourneyFit, *, confidence_level: float = 0.95) -> MovesResult:
     import pandas as pd
 
     level = checks.confidence_level(confidence_level)
+    if by is not None:
+        return by_group(fit, by, partial(moves, confidence_level=level))
     nodes = fit.nodes
     if len(nodes.states) <= LIST_ALL_UP_TO:
         row, column = (part.ravel() for part in np.indices((nodes.n_rows, nodes.n_nodes)))

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import partial
 from typing import ClassVar
 
 import numpy as np
@@ -10,7 +12,8 @@ import numpy as np
 from journeys import checks
 from journeys.kernels.absorption import passage
 from journeys.models.fit import JourneyFit
-from journeys.questions.linear import TOO_FEW, leaning, probabilities, spread, starts_counted
+from journeys.questions.by_group import by_group
+from journeys.questions.linear import DOUBTFUL, TOO_FEW, leaning, probabilities, probability_spread, starts_counted
 from journeys.results import LOGIT, Estimates, Result, joined_flags
 
 UNREACHABLE = "cannot be reached"
@@ -23,13 +26,17 @@ class OutcomesResult(Result):
     title: ClassVar[str] = "Where journeys end"
 
 
-def outcomes(fit: JourneyFit, *, confidence_level: float = 0.95) -> OutcomesResult:
+def outcomes(
+    fit: JourneyFit, *, by: str | Sequence[str] | None = None, confidence_level: float = 0.95
+) -> OutcomesResult:
     """Return the probability of each outcome, from entry and from every state.
 
     Parameters
     ----------
     fit : JourneyFit
         The chain.
+    by : str or sequence of str, optional
+        Columns that journeys are grouped by: one fit per group, their columns first.
     confidence_level : float
         Between 0 and 1.
 
@@ -63,26 +70,25 @@ def outcomes(fit: JourneyFit, *, confidence_level: float = 0.95) -> OutcomesResu
     import pandas as pd
 
     level = checks.confidence_level(confidence_level)
+    if by is not None:
+        return by_group(fit, by, partial(outcomes, confidence_level=level))
     nodes = fit.nodes
     if not nodes.outcomes:
         msg = "this chain has no outcomes; ask first_passage to a state instead"
         raise ValueError(msg)
-    parts, unreachable = [], []
+    parts, unreachable, doubtful = [], [], []
     p, trials = fit.probability, starts_counted(fit)
-    nothing = np.zeros((nodes.n_rows, len(p)))
     for outcome in nodes.outcomes:
         to = passage(nodes.n_rows, nodes.n_nodes, fit.move_state, fit.move_target, p, p, p, fit.target_mask(outcome))
-        if fit.influence is None:
-            derivative = nothing
-        else:
-            derivative = np.stack([to.gradients(s)["probability"][0] for s in range(nodes.n_rows)])
-        std_error, df = spread(fit, derivative, nothing, nothing)
+        std_error, df = probability_spread(fit, to)
         parts.append(probabilities(fit, to.probability, std_error, df, trials, LOGIT))
-        unreachable.append(np.isnan(to.mean_given))
+        unreachable.append((to.probability == 0) & ~to.doubtful)
+        doubtful.append(to.doubtful)
     joined = Estimates.joined(parts)
     lean = [(np.tile(mask, len(nodes.outcomes)), text) for text, mask in leaning(fit).items()]
     n = len(joined.value)
-    flag = joined_flags([(np.concatenate(unreachable), UNREACHABLE), (joined.few, TOO_FEW), *lean], n)
+    flags = [(np.concatenate(unreachable), UNREACHABLE), (np.concatenate(doubtful), DOUBTFUL), (joined.few, TOO_FEW)]
+    flag = joined_flags([*flags, *lean], n)
     # Computed outcome by outcome, told start by start.
     order = np.arange(n).reshape(len(nodes.outcomes), nodes.n_rows).T.ravel()
     keys = pd.DataFrame(

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Collection
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -12,16 +12,24 @@ from journeys import checks
 from journeys.errors import LogError
 from journeys.kernels.records import FIRST_OUTCOME, LAPSED, OPEN
 from journeys.models.fit import JourneyFit
+from journeys.models.what_if import WhatIf
+from journeys.questions.comeback import ComebackResult, comeback
+from journeys.questions.compare import CompareResult, compare
 from journeys.questions.first_passage import FirstPassageResult, first_passage
 from journeys.questions.moves import MovesResult, moves
 from journeys.questions.outcomes import OutcomesResult, outcomes
+from journeys.questions.stages import StagesResult, stages
 from journeys.questions.time_to_convert import IN_THE_END, SO_FAR, TimeToConvertResult, time_to_convert
 from journeys.tally.tally import Tally
 
 if TYPE_CHECKING:
     import pandas as pd
 
-KEY_COLUMNS = ("section", "start_state", "state", "next_state", "outcome", "measure", "horizon", "basis")
+KEY_COLUMNS = (
+    "section", "start_state", "state", "next_state", "stage", "after", "outcome", "measure", "horizon", "basis",
+)  # fmt: skip
+# With more groups than these each is not fitted against all others.
+MOST_COMPARED = 30
 
 
 @dataclass(frozen=True)
@@ -68,6 +76,14 @@ class Overview:
         From entry and every state to conversion.
     matrix : MovesResult
         Every move.
+    back : ComebackResult or None
+        Who comes back after a lapse; None where nothing lapses.
+    funnel : StagesResult or None
+        The stages of the rules; None where none are named.
+    groups : dict of str to TimeToConvertResult
+        Conversion by each column that journeys are grouped by.
+    against : dict of str to CompareResult
+        Each group against all others, for columns of few groups.
     """
 
     fit: JourneyFit
@@ -77,6 +93,10 @@ class Overview:
     steps: FirstPassageResult
     days: FirstPassageResult
     matrix: MovesResult
+    back: ComebackResult | None = None
+    funnel: StagesResult | None = None
+    groups: dict[str, TimeToConvertResult] = field(default_factory=dict)
+    against: dict[str, CompareResult] = field(default_factory=dict)
 
     def reconciliation(self) -> pd.DataFrame:
         """Return how the expected share comes out of the plain one, line by line.
@@ -161,8 +181,12 @@ class Overview:
             "first_passage_steps": self.steps,
             "first_passage_days": self.days,
             "moves": self.matrix,
+            "comeback": self.back,
+            "stages": self.funnel,
+            **{f"by {column}": result for column, result in self.groups.items()},
+            **{f"against the rest by {column}": result for column, result in self.against.items()},
         }
-        frames = [result.to_frame().assign(section=name) for name, result in sections.items()]
+        frames = [result.to_frame().assign(section=name) for name, result in sections.items() if result is not None]
         whole = pd.concat([pd.DataFrame(self._counts()), *frames], ignore_index=True)
         return whole[
             [
@@ -223,7 +247,7 @@ def summarise(
     Raises
     ------
     LogError
-        If the fit is a known chain without a log.
+        If the fit is a known chain without a log, or a what-if.
     ValueError
         If a horizon is not a duration, or the level is not between 0 and 1.
 
@@ -245,15 +269,27 @@ def summarise(
     if fit.tally is None:
         msg = "this chain was given, not fitted to a log; ask outcomes or first_passage instead"
         raise LogError(msg)
+    if isinstance(fit, WhatIf):
+        msg = "this chain was changed by hand, so the log's counts do not go with it; wanted its fit, or ask compare"
+        raise LogError(msg)
     level = checks.confidence_level(confidence_level)
+    tally, rules = fit.tally, fit.tally.rules
     return Overview(
         fit=fit,
         plain=plain_count(fit.tally),
         conversion=time_to_convert(fit, horizons, confidence_level=level),
         endings=outcomes(fit, confidence_level=level),
-        steps=first_passage(fit, clock="steps", confidence_level=level),
-        days=first_passage(fit, clock="time", confidence_level=level),
+        steps=first_passage(fit, clock="steps", method="linearised", confidence_level=level),
+        days=first_passage(fit, clock="time", method="linearised", confidence_level=level),
         matrix=moves(fit, confidence_level=level),
+        back=None if rules.silence_us is None else comeback(tally, confidence_level=level),
+        funnel=stages(fit, confidence_level=level) if rules.stages else None,
+        groups={name: time_to_convert(fit, horizons, by=name, confidence_level=level) for name in rules.by},
+        against={
+            name: compare(fit, by=name, confidence_level=level)
+            for name in rules.by
+            if 1 < len(tally.split(name)) <= MOST_COMPARED
+        },
     )
 
 

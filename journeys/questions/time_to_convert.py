@@ -2,42 +2,56 @@
 
 from __future__ import annotations
 
-from collections.abc import Collection
+from collections.abc import Collection, Sequence
 from dataclasses import dataclass
+from functools import partial
 from typing import ClassVar
 
 import numpy as np
 
 from journeys import checks
 from journeys.errors import LogError, RulesError
-from journeys.kernels.arrays import BoolArray
+from journeys.kernels.arrays import BoolArray, IntArray
 from journeys.kernels.bins import DAY_US, STANDARD_HORIZONS_US, elapsed_edges
-from journeys.kernels.intervals import variance_from_buckets
+from journeys.kernels.phase_type import DENSE
 from journeys.kernels.records import FIRST_OUTCOME
-from journeys.kernels.sojourn import StayFit, cell_influence, fit_stays
-from journeys.kernels.stays import Stays
 from journeys.models.fit import JourneyFit
 from journeys.models.stays import journey_stays, live_buckets, outcome_column
-from journeys.questions.first_passage import first_passage
-from journeys.questions.linear import TOO_FEW, probabilities
-from journeys.results import LOGIT, Estimates, Result, joined_flags
+from journeys.models.what_if import WhatIf
+from journeys.questions.by_group import by_group
+from journeys.questions.first_passage import from_entry
+from journeys.questions.linear import TOO_FEW
+from journeys.questions.passage_curve import passage_curve
+from journeys.questions.within import BETWEEN_BINS, ended_within, followed_short, no_numbers, plain_share
+from journeys.results import Estimates, Result, joined_flags
 from journeys.tally.tally import Tally
+
+__all__ = [
+    "BETWEEN_BINS", "IN_THE_END", "NO_CURVE", "SO_FAR", "TOO_LONG", "TimeToConvertResult", "default_horizons",
+    "time_to_convert",
+]  # fmt: skip
 
 IN_THE_END = "in the end"
 SO_FAR = "so far"
-BETWEEN_BINS = "read between bin edges"
 TOO_LONG = "longer than any journey was followed"
+NO_CURVE = f"no curve of time above {DENSE} states"
+
+_Row = tuple[tuple[str, str, str], Estimates, np.ndarray]
 
 
 @dataclass(frozen=True, eq=False, repr=False)
 class TimeToConvertResult(Result):
-    """Share converted by horizon, and mean steps and days given conversion."""
+    """Share converted by horizon, and median, 90 % quantile and mean of steps and days given conversion."""
 
     title: ClassVar[str] = "Time to convert"
 
 
 def time_to_convert(
-    fit: JourneyFit, horizons: Collection[checks.Duration] | None = None, *, confidence_level: float = 0.95
+    fit: JourneyFit,
+    horizons: Collection[checks.Duration] | None = None,
+    *,
+    by: str | Sequence[str] | None = None,
+    confidence_level: float = 0.95,
 ) -> TimeToConvertResult:
     """Return the summary table: what share converts, by when, and how long it takes.
 
@@ -47,6 +61,8 @@ def time_to_convert(
         A fit to a tally.
     horizons : collection of durations, optional
         Such as ["7d", "30d"]; default: those of the rules, else round ones that fit the conversions seen.
+    by : str or sequence of str, optional
+        Columns that journeys are grouped by: one fit per group, their columns first, the same horizons for all.
     confidence_level : float
         Between 0 and 1.
 
@@ -55,8 +71,10 @@ def time_to_convert(
     TimeToConvertResult
         One row per (measure, horizon, basis). Measure `converted`: horizon "so far", by the log, is the
         plain share of all journeys; a duration, by the log, is the share of journeys with a sure entry
-        converted within it, undecided ones accounted for; "in the end", by the model. Measures `steps` and
-        `days`: means given conversion, by the model.
+        converted within it, undecided ones accounted for, and by the model, beside it, what the chain makes
+        of the moves; "in the end", by the model. Measures `median_steps`, `q90_steps`, `steps`,
+        `median_days`, `q90_days` and `days`: median, 90 % quantile and mean given conversion, by the model. A
+        what-if has no rows by the log, which did not change with it.
 
     Raises
     ------
@@ -68,7 +86,10 @@ def time_to_convert(
     Notes
     -----
     Within horizons: the Aalen-Johansen estimate on whole journeys, those still open right-censored at their
-    age, other outcomes competing; its variance is linearised over buckets of customers.
+    age, other outcomes competing; its variance is linearised over buckets of customers. The model's share is
+    that of `passage_curve`, and what is "in the end" that of `first_passage`. Where the two shares of a horizon
+    differ by more than their intervals, customers of several kinds are mixed, or what comes next depends on
+    more than the last state.
 
     References
     ----------
@@ -87,8 +108,8 @@ def time_to_convert(
     >>> rules = JourneyRules("member", "happened", "event", converted="joined", churned="left", silence="30d",
     ...                      complete_history=True, as_of="2025-03-01")
     >>> answer = time_to_convert(JourneyModel().fit(count_log(log, rules)), ["7d"])
-    >>> answer.to_frame()[["measure", "horizon", "estimate"]].round(3).values.tolist()[:3]
-    [['converted', 'so far', 0.333], ['converted', '7d', 0.333], ['converted', 'in the end', 0.333]]
+    >>> answer.to_frame()[["measure", "horizon", "basis", "estimate"]].round(3).values.tolist()[:3]
+    [['converted', 'so far', 'log', 0.333], ['converted', '7d', 'log', 0.333], ['converted', '7d', 'model', 0.333]]
     """
     import pandas as pd
 
@@ -101,24 +122,15 @@ def time_to_convert(
         msg = "the rules name no converted outcome; wanted converted=[...] in the rules"
         raise RulesError(msg)
     wanted = None if horizons is None else [checks.duration_us(one, "horizons") for one in horizons]
-    chosen = sorted(set(default_horizons(tally) if wanted is None else wanted))
-    so_far = _so_far(fit, tally)
-    by_log, log_flags = _within(fit, tally, np.array(chosen, np.int64))
-    parts, keys = [so_far, by_log], [("converted", SO_FAR, "log")]
-    keys += [("converted", checks.duration_text(one), "log") for one in chosen]
-    flags = [joined_flags([(so_far.few, TOO_FEW)], 1), log_flags]
-    for clock, measure, names in (
-        ("steps", "probability", "converted"),
-        ("steps", "mean", "steps"),
-        ("time", "mean", "days"),
-    ):
-        answer = first_passage(fit, None, clock)
-        row = ((answer.keys.start_state == "entry") & (answer.keys.measure == measure)).to_numpy()
-        parts.append(answer.estimates.take(row))
-        flags.append(answer.flag[row])
-        keys.append((names, IN_THE_END, "model"))
+    chosen = np.array(sorted(set(default_horizons(tally) if wanted is None else wanted)), np.int64)
+    if by is not None:
+        same = [checks.duration_text(int(one)) for one in chosen]
+        return by_group(fit, by, partial(time_to_convert, horizons=same, confidence_level=level))
+    so_far = [] if isinstance(fit, WhatIf) else [_so_far(tally)]
+    told = [*so_far, *_within(fit, tally, chosen), *_in_the_end(fit)]
+    keys, parts, flags = zip(*told, strict=True)
     return TimeToConvertResult(
-        keys=pd.DataFrame(keys, columns=["measure", "horizon", "basis"]),
+        keys=pd.DataFrame(list(keys), columns=["measure", "horizon", "basis"]),
         estimates=Estimates.joined(parts),
         flag=np.concatenate(flags),
         confidence_level=level,
@@ -163,53 +175,54 @@ def _converted(tally: Tally, outcome: np.ndarray) -> BoolArray:
     return (outcome >= FIRST_OUTCOME) & (outcome < FIRST_OUTCOME + len(tally.rules.converted))
 
 
-def _so_far(fit: JourneyFit, tally: Tally) -> Estimates:
+def _so_far(tally: Tally) -> _Row:
     """Return the plain share of journeys converted by `as_of`, undecided and unsure ones in the denominator."""
     table, bucket = tally.journeys, live_buckets(tally)
-    size = int(bucket.max()) + 1
-    mine = _converted(tally, table["outcome"])
-    whose = bucket[table["bucket"]]
-    all_n = np.bincount(whose, table["n"], size)
-    won = np.bincount(whose[mine], table["n"][mine], size)
-    share = won.sum() / all_n.sum()
-    variance, df = variance_from_buckets((won - share * all_n) / all_n.sum())
-    one = np.array([share])
-    return probabilities(fit, one, np.sqrt(variance)[None], df[None], np.array([all_n.sum()]), LOGIT)
+    n = table["n"].astype(np.float64)
+    share = plain_share(bucket[table["bucket"]], n, _converted(tally, table["outcome"]), int(bucket.max()) + 1)
+    return ("converted", SO_FAR, "log"), share, joined_flags([(share.few, TOO_FEW)], 1)
 
 
-def _within(fit: JourneyFit, tally: Tally, horizons_us: np.ndarray) -> tuple[Estimates, np.ndarray]:
-    """Return the share of sure-entry journeys converted within each horizon."""
-    stays, by_bucket = journey_stays(tally)
-    found = fit_stays(stays, 0.0 if tally.whole_days else 0.5)
+def _within(fit: JourneyFit, tally: Tally, horizons_us: IntArray) -> list[_Row]:
+    """Return the share converted within each horizon, by the log and by the model."""
+    sources = {} if isinstance(fit, WhatIf) else {"log": _by_log(tally, horizons_us)}
+    sources["model"] = _by_model(fit, horizons_us)
+    return [
+        (("converted", checks.duration_text(int(one)), basis), shares.take(np.array([i])), flag[[i]])
+        for i, one in enumerate(horizons_us)
+        for basis, (shares, flag) in sources.items()
+    ]
+
+
+def _by_log(tally: Tally, horizons_us: IntArray) -> tuple[Estimates, np.ndarray]:
+    """Return the share of sure-entry journeys converted within each horizon, and its flags."""
     edges = elapsed_edges(tally.rules.silence_us, tally.whole_days, tally.rules.horizons_us)
-    winning = np.isin(stays.target, outcome_column(FIRST_OUTCOME + np.arange(len(tally.rules.converted))))
-    value, influence, between = [], [], []
-    for horizon in horizons_us:
-        weight, exact = _share_of_bins(int(horizon), edges, stays)
-        phi = winning * weight[stays.bin]
-        value.append(float(found.q @ phi))
-        influence.append(cell_influence(found, stays, by_bucket, phi, np.zeros(1)))
-        between.append(not exact)
-    variance, df = variance_from_buckets(np.stack(influence, axis=1))
-    trials = np.full(len(value), stays.n.sum())
-    estimates = probabilities(fit, np.array(value), np.sqrt(variance), df, trials, LOGIT)
-    beyond = horizons_us > _followed(found, stays)
-    flag = joined_flags([(np.array(between), BETWEEN_BINS), (beyond, TOO_LONG), (estimates.few, TOO_FEW)], len(value))
-    return estimates, flag
+    winning = outcome_column(FIRST_OUTCOME + np.arange(len(tally.rules.converted)))
+    shares, flags = ended_within(*journey_stays(tally), winning, edges).shares(horizons_us, TOO_LONG)
+    if tally.rules.cohort is not None:
+        # Not all of a young cohort have had the time: that is never left unsaid.
+        for i, horizon in enumerate(horizons_us.tolist()):
+            flags[i] = "; ".join(text for text in (flags[i], followed_short(tally, horizon)) if text)
+    return shares, flags
 
 
-def _share_of_bins(horizon_us: int, edges: np.ndarray | None, stays: Stays) -> tuple[np.ndarray, bool]:
-    """Return the share of each bin that lies within the horizon, and whether it is a bin edge."""
-    if edges is None:
-        return (np.arange(stays.n_bins) <= horizon_us // DAY_US).astype(float), horizon_us % DAY_US == 0
-    upper = edges[: stays.n_bins].astype(float)
-    lower = np.concatenate([[0.0], upper[:-1]])
-    return np.clip((horizon_us - lower) / (upper - lower), 0.0, 1.0), bool((edges == horizon_us).any())
+def _by_model(fit: JourneyFit, horizons_us: IntArray) -> tuple[Estimates, np.ndarray]:
+    """Return the share the chain has converted within each horizon, and its flags."""
+    n = len(horizons_us)
+    if fit.nodes.n_rows > DENSE:
+        return no_numbers(n), np.full(n, NO_CURVE, dtype=object)
+    return passage_curve(fit).estimates(horizons_us / DAY_US)
 
 
-def _followed(found: StayFit, stays: Stays) -> float:
-    """Return the longest elapsed time (microseconds) at which a journey was still at risk, or infinity."""
-    if found.survival_end[0] <= 1e-12:
-        return np.inf
-    at_risk = np.flatnonzero(found.at_risk[0] > 0)
-    return float(stays.upper[at_risk[-1]] * DAY_US) if len(at_risk) else 0.0
+def _in_the_end(fit: JourneyFit) -> list[_Row]:
+    """Return the share converted in the end, and steps and days given conversion, by the model."""
+    rows: list[_Row] = []
+    for clock, unit in (("steps", "steps"), ("time", "days")):
+        answer = from_entry(fit, None, clock)
+        wanted = {"median": f"median_{unit}", "q90": f"q90_{unit}", "mean": unit}
+        if clock == "steps":
+            wanted = {"probability": "converted", **wanted}
+        for measure, name in wanted.items():
+            row = (answer.keys.measure == measure).to_numpy()
+            rows.append(((name, IN_THE_END, "model"), answer.estimates.take(row), answer.flag[row]))
+    return rows

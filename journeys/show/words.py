@@ -9,9 +9,11 @@ from journeys.checks import duration_text
 from journeys.intake.rules import JourneyRules
 from journeys.models.fit import NO_WAY_OUT
 from journeys.models.model import COMPLETED_ONLY, END_NOT_SEEN, ENOUGH_AT_END, FEW_AT_END
-from journeys.questions.linear import TOO_FEW
+from journeys.questions.comeback import NONE_SEEN, NOT_FOLLOWED, STILL_SILENCE
+from journeys.questions.linear import DOUBTFUL, TOO_FEW
 from journeys.questions.outcomes import UNREACHABLE
-from journeys.questions.time_to_convert import BETWEEN_BINS, TOO_LONG
+from journeys.questions.time_to_convert import BETWEEN_BINS, NO_CURVE, TOO_LONG
+from journeys.questions.within import NO_UPPER_END
 
 UNDECIDED = "undecided yet"
 
@@ -21,6 +23,12 @@ FLAG_MEANINGS = {
     UNREACHABLE: "no way there was seen",
     BETWEEN_BINS: "counts are kept in bins of time, and this time lies within one; name it in `horizons` to be exact",
     TOO_LONG: "nobody was followed that long, so the share is a lower bound",
+    NOT_FOLLOWED: "nobody was watched for that long after they had gone, so the share is a lower bound",
+    STILL_SILENCE: "who lapses is away for longer than the silence, whatever happens",
+    NONE_SEEN: "no journey ended in that way",
+    NO_UPPER_END: "the curve levels off within its interval, so the time has no upper bound",
+    NO_CURVE: "the chain has too many states for a curve of time; ask first_passage for means",
+    DOUBTFUL: "the number is too small or too large for the computer to tell it from nothing",
     END_NOT_SEEN: "no stay there was followed as long as the silence, so the share that goes quiet is an upper bound",
     FEW_AT_END: f"fewer than {ENOUGH_AT_END} stays there were followed as long as the silence",
     COMPLETED_ONLY: "the longest stay there is still open, so only completed moves count; a silence would mend it",

@@ -22,7 +22,7 @@ _LOW = (1 << _LIMB) - 1
 
 
 def limbs(values: IntArray, name: str) -> Columns:
-    """Split whole numbers into two columns whose sums cannot overflow: value = high * 2**32 + low."""
+    """Split whole numbers into two columns whose sums cannot overflow: value = high * 2**32 + low, low not negative."""
     return {f"{name}_high": values >> _LIMB, f"{name}_low": values & _LOW}
 
 
@@ -77,12 +77,18 @@ def add_up(key: IntArray, sums: Columns, more: More) -> Keyed:
         key, more = key[start], {name: part[start] for name, part in more.items()}
     else:
         added = dict(sums)
-    for name in added:
+    return Keyed(key, carried_over(added), more)
+
+
+def carried_over(sums: Columns) -> Columns:
+    """Return sums with what the low limbs hold too much carried into the high ones."""
+    carried = dict(sums)
+    for name in sums:
         if name.endswith("_low"):
             high = name.removesuffix("_low") + "_high"
-            added[high] = added[high] + (added[name] >> _LIMB)
-            added[name] = added[name] & _LOW
-    return Keyed(key, added, more)
+            carried[high] = sums[high] + (sums[name] >> _LIMB)
+            carried[name] = sums[name] & _LOW
+    return carried
 
 
 class Accumulator:

@@ -18,7 +18,8 @@ from journeys.kernels.bins import DAY_US
 from journeys.kernels.compiled import is_built
 from journeys.tally.counter import OutOfOrderError
 from journeys.tally.keys import MOST_BINS
-from journeys.tally.passes import Pass, Span
+from journeys.tally.passes import Pass
+from journeys.tally.spans import Span
 from journeys.tally.tally import Tally
 
 MOST_WORKERS = 8

@@ -8,6 +8,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from journeys.errors import LogError
 from journeys.intake.findings import Findings
 from journeys.intake.identity import FIRST_KEYS, bucket_of_major
 from journeys.intake.rows import Rows
@@ -39,6 +40,8 @@ class LeaveOut:
         `duplicates="drop"`, `after_outcome="stop"`.
     opens : ndarray of int32 or None
         Codes of the states that may open a journey; None: any.
+    value : str or None
+        Name of the column of values.
     """
 
     time: str
@@ -46,6 +49,7 @@ class LeaveOut:
     duplicates: bool
     after_outcome: bool
     opens: NDArray[np.int32] | None = None
+    value: str | None = None
 
 
 class Counter:
@@ -69,18 +73,28 @@ class Counter:
         self, reading: Reading, leave_out: LeaveOut, sums: Sums, findings: Findings, *, compiled: bool = False
     ) -> None:
         self._reading, self._leave_out, self._sums, self._findings = reading, leave_out, sums, findings
-        plain = reading.grouping is None and reading.stages is None
+        plain = reading.grouping is None and reading.stages is None and not (reading.touches or reading.values)
         self._compiled = compiled and plain and not leave_out.after_outcome and leave_out.opens is None
         self._also = [
             *(["visit_start"] if reading.merge_repeats else []),
             *(["group"] if reading.grouping is not None else []),
             *(["seen"] if leave_out.opens is not None else []),
             *(["stage", "stage_start"] if reading.stages is not None else []),
+            *(["touched", "first_touch", "last_touch"] if reading.touches else []),
+            *(["value", "total_value"] if reading.values else []),
         ]
         self._carried = self._blank(0)
         self._n_states = 0
+        self._touch_of_code: NDArray[np.int8] | None = None
 
-    def add(self, rows: Rows, order: IntArray, code_of_event: Codes, n_states: int) -> None:
+    def add(
+        self,
+        rows: Rows,
+        order: IntArray,
+        code_of_event: Codes,
+        n_states: int,
+        touch_of_code: NDArray[np.int8] | None = None,
+    ) -> None:
         """Count a block of rows.
 
         Parameters
@@ -93,13 +107,17 @@ class Counter:
             Code of each raw event.
         n_states : int
             States known by now.
+        touch_of_code : ndarray of int8, optional
+            For each code the number of the touchpoint, 0 where it is none.
 
         Raises
         ------
         OutOfOrderError
             If a row is older than, or as old as, a row of that customer in an earlier block.
+        LogError
+            If the values of a customer's events add up to more than can be held.
         """
-        self._n_states = n_states
+        self._n_states, self._touch_of_code = n_states, touch_of_code
         add = self._add_compiled if self._compiled and rows.ended is None else self._add
         added = [add(rows, part, code_of_event) for part in chunks(rows.key, order)]
         fresh = [records for records in added if records is not None]
@@ -168,7 +186,14 @@ class Counter:
 
     def _count(self, rows: Ordered, code: Codes, start: IntArray, at: IntArray) -> Carried:
         """Add up a block and return its customers' new records."""
-        counted, latest = count_rows(self._block(rows, code, start, at), self._reading)
+        try:
+            counted, latest = count_rows(self._block(rows, code, start, at), self._reading)
+        except OverflowError:
+            msg = (
+                f"column {self._leave_out.value!r}: the values of one customer add up to more than 9,000,000,000,000; "
+                "wanted amounts of money: write them in a larger unit, or repair them where the log is written"
+            )
+            raise LogError(msg) from None
         self._note(counted, rows.rows, rows.order)
         return latest
 
@@ -178,7 +203,9 @@ class Counter:
         # The records of customers never seen are never looked at: any will do.
         prior = self._carried.take(np.maximum(at, 0)) if held.any() else self._blank(len(start))
         by = None if rows.rows.by is None else rows.rows.by[rows.order]
-        return Block(rows.time, code, start, key, bucket_of_major(key).astype(np.uint8), prior, held, by)
+        value = None if rows.rows.value is None else rows.rows.value[rows.order]
+        touch = None if self._touch_of_code is None else self._touch_of_code[code]
+        return Block(rows.time, code, start, key, bucket_of_major(key).astype(np.uint8), prior, held, by, touch, value)
 
     def _from_opener(self, rows: Ordered, code: Codes) -> BoolArray:
         """Tell which rows do not come before the first state that may open their journey; count those that do."""
@@ -226,8 +253,7 @@ class Counter:
         index = np.flatnonzero(group)
         some = rows.take(group)
         columns: list[NDArray[Any]] = [some.key, some.time, some.event]
-        if rows.rows.sequence is not None:
-            columns.append(rows.rows.sequence[some.order])
+        columns += [column[some.order] for column in (rows.rows.sequence, rows.rows.value) if column is not None]
         number = rows.numbers(group)
         order = np.lexsort((number, *columns[::-1]))
         same = np.ones(len(order), bool)

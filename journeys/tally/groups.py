@@ -129,6 +129,51 @@ def picked(groups: tuple[Group, ...], columns: Sequence[str], conditions: Mappin
     return keep
 
 
+def gathered(groups: tuple[Group, ...], columns: Sequence[str], by: Sequence[str]) -> dict[Group, IntArray]:
+    """Return, for each combination of values in some of the columns, which groups have it.
+
+    Parameters
+    ----------
+    groups, columns
+        As in `picked`.
+    by : sequence of str
+        Among the columns.
+
+    Returns
+    -------
+    dict of tuple to ndarray of int64
+        In the order of the values.
+
+    Raises
+    ------
+    ValueError
+        If a column is not among `columns`, or none is named.
+
+    Examples
+    --------
+    >>> found = gathered((("BE", "a"), ("BE", "b"), ("NL", "a")), ["country", "plan"], ["country"])
+    >>> {values: index.tolist() for values, index in found.items()}
+    {('BE',): [0, 1], ('NL',): [2]}
+    """
+    unknown = [name for name in by if name not in columns]
+    if unknown or not by:
+        there = ", ".join(map(repr, columns)) or "none: name them with `by` in the rules and count the log again"
+        msg = f"by: got {unknown[0] if unknown else by!r}; wanted columns that journeys are grouped by: {there}"
+        raise ValueError(msg)
+    place = [list(columns).index(name) for name in by]
+    found: dict[Group, list[int]] = {}
+    for i, group in enumerate(groups):
+        found.setdefault(tuple(group[at] for at in place), []).append(i)
+    return {values: np.array(found[values], np.int64) for values in sorted(found, key=_sortable)}
+
+
+def runs(first: IntArray, last: IntArray) -> slice | IntArray:
+    """Return the rows of several runs: a slice where they follow one another."""
+    if (first[1:] == last[:-1]).all():
+        return slice(int(first[0]), int(last[-1]))
+    return np.concatenate([np.arange(a, b) for a, b in zip(first, last, strict=True)])
+
+
 def _among(values: list[Value], wanted: Any, name: str) -> BoolArray:
     several = isinstance(wanted, Collection) and not isinstance(wanted, str)
     choices = list(wanted) if several else [wanted]

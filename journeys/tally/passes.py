@@ -31,21 +31,14 @@ from journeys.tally.counter import Counter, LeaveOut
 from journeys.tally.dense import MoveSums
 from journeys.tally.groups import Group, named_groups
 from journeys.tally.order import by_customer
+from journeys.tally.spans import Span
 from journeys.tally.spill import BUCKETS_PER_PART, N_PARTS, Spill
 from journeys.tally.sums import Sums
-from journeys.tally.tables import KEYS, N_BUCKETS, NARROW, sorted_by_key, split_key
+from journeys.tally.tables import CODED, KEYS, MORE, MOST_IN_SETS, N_BUCKETS, NARROW, sorted_by_key, split_key
 from journeys.tally.tally import Tally
+from journeys.tally.touchpoints import Places, Touchpoints
 
 T = TypeVar("T")
-
-
-@dataclass(frozen=True)
-class Span:
-    """From when to when a log reaches, and whether it holds dates without a time."""
-
-    log_start_us: int
-    as_of_us: int
-    whole_days: bool
 
 
 @dataclass(frozen=True)
@@ -56,6 +49,7 @@ class _Block:
     order: IntArray
     code_of_event: NDArray[np.int32]
     n_states: int
+    touch_of_code: NDArray[np.int8] | None
 
 
 class _Worker:
@@ -74,30 +68,36 @@ class _Worker:
         group = () if reading.grouping is None else ("group",)
         moves = MoveSums(edges, longest, reading.first_state, buckets, group)
         edges = elapsed_edges(rules.silence_us, span.whole_days, rules.horizons_us)
-        self.sums = Sums(edges, moves, reading.grouping)
+        self.sums = Sums(edges, moves, reading.grouping, valued=reading.values)
         self._counter = self._new_counter()
 
     def add(self, block: _Block, part: slice) -> None:
         """Count one part of a block in order."""
-        self._counter.add(block.rows, block.order[part], block.code_of_event, block.n_states)
+        self._counter.add(
+            block.rows, block.order[part], block.code_of_event, block.n_states, block.touch_of_code
+        )
 
-    def close(self, code: IntArray) -> dict[str, Columns]:
+    def close(self, code: IntArray, places: Places) -> dict[str, Columns]:
         """Close the log and return the tables, codes replaced by `code`."""
         self._counter.close()
-        return self._tables(code)
+        return self._tables(code, places)
 
     def add_parts(
-        self, spill: Spill, code_of_event: NDArray[np.int32], n_states: int, code: IntArray
+        self,
+        spill: Spill,
+        known: tuple[NDArray[np.int32], int, NDArray[np.int8] | None],
+        code: IntArray,
+        places: Places,
     ) -> dict[str, Columns]:
         """Count the parts of a spilled log that are this worker's, one after another, and return the tables."""
         for rows in spill.parts(self.parts.start, self.parts.stop):
             counter = self._new_counter()
-            counter.add(rows, by_customer(rows.key), code_of_event, n_states)
+            counter.add(rows, by_customer(rows.key), *known)
             counter.close()
-        return self._tables(code)
+        return self._tables(code, places)
 
-    def _tables(self, code: IntArray) -> dict[str, Columns]:
-        return {name: _labelled(name, self.sums.result(name), code) for name in KEYS}
+    def _tables(self, code: IntArray, places: Places) -> dict[str, Columns]:
+        return {name: _labelled(name, self.sums.result(name), code, places) for name in KEYS}
 
     def _new_counter(self) -> Counter:
         return Counter(self._reading, self._leave_out, self.sums, self.findings, compiled=self._compiled)
@@ -136,18 +136,21 @@ class Pass:
         progress: bool,
     ) -> None:
         self._log, self._rules, self._look, self._span, self._progress = log, rules, look, span, progress
-        self._codes = StateCodes(rules.outcomes, tuple(dict.fromkeys((*rules.stages, *rules.opens))))
+        named = (*rules.stages, *rules.opens, *rules.named_touchpoints)
+        self._codes = StateCodes(rules.outcomes, tuple(dict.fromkeys(named)))
+        self._touchpoints = Touchpoints(rules)
         cohort_starts, self._cohorts = _cohorts(rules, span)
         reading = Reading(
             n_outcomes=len(rules.outcomes), n_converted=len(rules.converted), silence_us=rules.silence_us,
             same_outcome_us=rules.same_outcome_us, merge_repeats=rules.repeats == "merge",
             log_start_us=span.log_start_us, as_of_us=span.as_of_us, complete_history=rules.complete_history,
             grouping=_grouping(rules, span, cohort_starts), stages=_codes_of(rules.stages, self._codes),
+            touches=bool(rules.touchpoints), values=rules.value is not None,
         )  # fmt: skip
         self._normaliser = Normaliser(rules, log_start_us=span.log_start_us, as_of_us=span.as_of_us)
         leave_out = LeaveOut(
             rules.time, rules.event, rules.duplicates == "drop", rules.after_outcome == "stop",
-            _codes_of(rules.opens, self._codes),
+            _codes_of(rules.opens, self._codes), rules.value,
         )
         cuts = [part * N_PARTS // n_workers for part in range(n_workers + 1)]
         self._workers = [
@@ -166,8 +169,8 @@ class Pass:
                 wait(jobs)
                 for job in jobs:
                     job.result()
-            code = self._label_positions()
-            tables = [job.result() for job in [pool.submit(worker.close, code) for worker in self._workers]]
+            final = self._final()
+            tables = [job.result() for job in [pool.submit(worker.close, *final) for worker in self._workers]]
         return self._tally(tables)
 
     def sorted_by_customer(self) -> Tally:
@@ -177,8 +180,9 @@ class Pass:
                 spill.add(rows)
             code_of_event = self._codes.of_events(self._normaliser.targets)
             n_states = len(self._codes.states)
-            known = (code_of_event, n_states, self._label_positions())
-            jobs = [pool.submit(worker.add_parts, spill, *known) for worker in self._workers]
+            known = (code_of_event, n_states, self._touchpoints.of_codes(self._codes))
+            final = self._final()
+            jobs = [pool.submit(worker.add_parts, spill, known, *final) for worker in self._workers]
             tables = [job.result() for job in jobs]
         return self._tally(tables)
 
@@ -193,19 +197,27 @@ class Pass:
     def _ordered(self) -> Iterator[_Block]:
         for rows in cut_between_ties(self._rows()):
             code_of_event = self._codes.of_events(self._normaliser.targets)
-            yield _Block(rows, by_customer(rows.key), code_of_event, len(self._codes.states))
+            touch_of_code = self._touchpoints.of_codes(self._codes)
+            yield _Block(rows, by_customer(rows.key), code_of_event, len(self._codes.states), touch_of_code)
+
+    def _final(self) -> tuple[IntArray, Places]:
+        """Return where codes and touchpoints stand in the end."""
+        code = self._label_positions()
+        return code, self._touchpoints.places(self._codes, code)
 
     def _label_positions(self) -> IntArray:
         """Return where each code's name stands among the labels of the tally, its states in alphabetical order."""
         fixed = len(self._codes.names) - len(self._codes.states)
         place = {name: fixed + i for i, name in enumerate(self._codes.seen)}
-        # A stage that never turned up stands in no table.
+        # A named state that never turned up stands in no table.
         return np.array([*range(fixed), *(place.get(name, 0) for name in self._codes.states)])
 
     def _tally(self, parts: list[dict[str, Columns]]) -> Tally:
         findings = sum((worker.findings for worker in self._workers), self._normaliser.findings)
         findings.add("later_than_now", self._rules.time, self._look.n_later_than_now)
         tables = {name: _side_by_side([part.pop(name) for part in parts]) for name in KEYS}
+        if len(self._touchpoints.names) > MOST_IN_SETS:
+            tables["touch_sets"] = {column: values[:0] for column, values in tables["touch_sets"].items()}
         groups = self._name_groups(tables)
         customers = {"bucket": np.arange(N_BUCKETS)}
         for name in self._workers[0].sums.customers:
@@ -221,6 +233,8 @@ class Pass:
     def _name_groups(self, tables: dict[str, Columns]) -> tuple[Group, ...]:
         """Return the groups in the order of their values, and put their places into the tables, sorted anew."""
         if not self._rules.by:
+            # Buckets come first in the order of the other tables, which is that of the workers.
+            tables |= {name: sorted_by_key(name, tables[name]) for name in MORE}
             return ()
         packed = np.unique(np.concatenate([table["group"] for table in tables.values()]))
         combinations = self._normaliser.groups.combinations
@@ -259,22 +273,27 @@ def _grouping(rules: JourneyRules, span: Span, cohort_starts: IntArray | None) -
     if outside.any():
         msg = f"split_at: {rules.split_at[int(np.argmax(outside))]} does not lie inside the log; wanted cuts within it"
         raise LogError(msg)
-    return Grouping(CAME_AFTER in rules.by, cohort_starts, splits, DAY_US if span.whole_days else 1)
+    return Grouping(
+        CAME_AFTER in rules.by, cohort_starts, splits, rules.silence_us or 0, DAY_US if span.whole_days else 1
+    )
 
 
 def _codes_of(states: tuple[str, ...], codes: StateCodes) -> NDArray[np.int32] | None:
     return np.array([codes.code(name) for name in states], np.int32) if states else None
 
 
-def _labelled(name: str, keyed: Keyed, code: IntArray) -> Columns:
+def _labelled(name: str, keyed: Keyed, code: IntArray, places: Places) -> Columns:
     """Take the keys of a table apart, codes replaced by the positions of their names among the labels."""
     table = split_key(name, *keyed)
     if "group" in keyed.more:
         # Still packed numbers, which need more room than places among the groups.
         table["group"] = keyed.more["group"]
+    if name in ("touches", "touch_sets"):
+        # Their outcomes need no new codes: those of the outcomes are fixed.
+        return places.placed(name, table)
     if (code[1:] > code[:-1]).all():
         return table
-    for column in ("state", "next", "outcome", "stage"):
+    for column in CODED:
         if column in table:
             table[column] = code[table[column]].astype(NARROW[column])
     return sorted_by_key(name, table)

@@ -17,9 +17,9 @@ from journeys.tally.tables import N_BUCKETS
 # Files, each with the customers of a few neighbouring buckets.
 N_PARTS = 50
 BUCKETS_PER_PART = N_BUCKETS // N_PARTS
-_RECORD = np.dtype(
-    [("key", "u8"), ("time", "i8"), ("event", "i4"), ("row", "i8"), ("sequence", "i8"), ("ended", "?"), ("by", "i4")]
-)
+_KINDS = {
+    "key": "u8", "time": "i8", "event": "i4", "row": "i8", "sequence": "i8", "ended": "?", "by": "i4", "value": "i8",
+}  # fmt: skip
 
 
 class Spill:
@@ -29,15 +29,17 @@ class Spill:
         self._folder = tempfile.TemporaryDirectory(prefix="journeys-")
         self._files: dict[int, BinaryIO] = {}
         self._held: list[str] = []
+        self._record = np.dtype([])
 
     def add(self, rows: Rows) -> None:
         """Write a block of rows to the parts its customers belong to."""
         if not len(rows):
             return
         self._held = [name for name, column in rows.columns().items() if column is not None]
+        self._record = np.dtype([(name, _KINDS[name]) for name in self._held])
         part = bucket_of_major(rows.key) // BUCKETS_PER_PART
         order = np.argsort(part, kind="stable")
-        record = np.zeros(len(rows), _RECORD)
+        record = np.zeros(len(rows), self._record)
         for name in self._held:
             record[name] = getattr(rows, name)[order]
         present, begin = np.unique(part[order], return_index=True)
@@ -51,7 +53,7 @@ class Spill:
         for number in sorted(self._files.keys() & set(range(first, last))):
             handle = self._files[number]
             handle.close()
-            record = np.fromfile(handle.name, _RECORD)
+            record = np.fromfile(handle.name, self._record)
             Path(handle.name).unlink()
             columns = {name: record[name].copy() for name in self._held}
             del record

@@ -18,23 +18,24 @@ from journeys.files import written_whole
 from journeys.intake.arrays import from_numpy, from_texts
 from journeys.intake.findings import Findings
 from journeys.intake.rules import JourneyRules
-from journeys.tally.tables import CUSTOMER_SUMS, NARROW, SUMS, TABLES, parts_of
+from journeys.tally.tables import NARROW, TABLES, customer_sums, parts_of, sums_of
 from journeys.tally.tally import Tally
 
 if TYPE_CHECKING:
     from journeys.tally.accumulate import Columns
 
-FORMAT_VERSION = 2
+FORMAT_VERSION = 3
 HEAD = b"journeys"
 # Rows of a table written at once: the columns that it lacks take room too.
 _ROWS_AT_ONCE = 1 << 18
 
 
-def columns_of(table: str, *, grouped: bool) -> tuple[str, ...]:
+def columns_of(table: str, rules: JourneyRules) -> tuple[str, ...]:
     """Return the columns of a table in their order."""
+    valued = rules.value is not None
     if table == "customers":
-        return ("bucket", *CUSTOMER_SUMS, "largest_events")
-    return (*parts_of(table, grouped=grouped), *SUMS[table])
+        return ("bucket", *customer_sums(valued=valued))
+    return (*parts_of(table, grouped=bool(rules.by)), *sums_of(table, valued=valued))
 
 
 def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | None = None) -> None:
@@ -66,7 +67,7 @@ def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | 
         "findings": tally.record.to_dict(),
         "checksum": _checksum(tally),
     }
-    schema = _schema(grouped=bool(tally.rules.by)).with_metadata({HEAD: json.dumps(head).encode(), **(more or {})})
+    schema = _schema(tally.rules).with_metadata({HEAD: json.dumps(head).encode(), **(more or {})})
     # Dictionaries pay where a value runs on for many rows; elsewhere they only take time.
     runs = ["table", "bucket", "state"]
     with (
@@ -82,9 +83,9 @@ def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | 
                 writer.write_table(_as_arrow(name, piece, schema))
 
 
-def _schema(*, grouped: bool) -> pa.Schema:
+def _schema(rules: JourneyRules) -> pa.Schema:
     """Return the columns of all tables, each with the type that is enough for it."""
-    every = dict.fromkeys(column for table in TABLES for column in columns_of(table, grouped=grouped))
+    every = dict.fromkeys(column for table in TABLES for column in columns_of(table, rules))
     narrow = {name: pa.from_numpy_dtype(kind) for name, kind in NARROW.items()}
     return pa.schema([("table", pa.string()), *((name, narrow.get(name, pa.int64())) for name in every)])
 
@@ -170,7 +171,7 @@ def _from_parts(table: pa.Table, head: dict[str, Any]) -> Tally:
         narrow = {} if name == "customers" else NARROW
         held[name] = {
             column: rows[column].to_numpy().astype(narrow.get(column, np.int64))
-            for column in columns_of(name, grouped=bool(rules.by))
+            for column in columns_of(name, rules)
         }
     return Tally(
         rules=rules,

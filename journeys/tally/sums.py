@@ -11,11 +11,11 @@ from numpy.typing import NDArray
 from journeys.kernels.arrays import BoolArray, IntArray
 from journeys.kernels.bins import bin_of
 from journeys.kernels.grouping import Grouping
-from journeys.kernels.records import OPEN, Carried, Closed, Counted, Ends, Entries, Gaps, Moves, Passed
-from journeys.tally.accumulate import Accumulator, Columns, Keyed, More, limbs
+from journeys.kernels.records import LAPSED, OPEN, Carried, Closed, Counted, Ends, Entries, Gaps, Moves, Passed
+from journeys.tally.accumulate import Accumulator, Columns, Keyed, More, carried_over, limbs
 from journeys.tally.dense import MoveSums
 from journeys.tally.keys import pack
-from journeys.tally.tables import CUSTOMER_SUMS, MORE, N_BUCKETS, SUMS
+from journeys.tally.tables import CUSTOMER_SUMS, MORE, MOST_IN_SETS, N_BUCKETS, SUMS, customer_sums, sums_of
 
 
 class Sums:
@@ -29,15 +29,22 @@ class Sums:
         The moves table.
     grouping : Grouping or None
         How journeys are grouped.
+    valued : bool
+        Values are summed too.
     """
 
-    def __init__(self, elapsed_edges: IntArray | None, moves: MoveSums, grouping: Grouping | None = None) -> None:
-        self._elapsed_edges, self.moves, self._grouping = elapsed_edges, moves, grouping
-        group = () if grouping is None else ("group",)
-        self._tables = {
-            name: Accumulator(sums, (*group, *MORE.get(name, ()))) for name, sums in SUMS.items() if name != "moves"
-        }
-        self.customers = {name: np.zeros(N_BUCKETS, np.int64) for name in (*CUSTOMER_SUMS, "largest_events")}
+    def __init__(
+        self,
+        elapsed_edges: IntArray | None,
+        moves: MoveSums,
+        grouping: Grouping | None = None,
+        *,
+        valued: bool = False,
+    ) -> None:
+        self._elapsed_edges, self.moves, self._grouping, self._valued = elapsed_edges, moves, grouping, valued
+        self._tables = {name: self._empty(name) for name in SUMS if name != "moves"}
+        self._sets = True
+        self.customers = {name: np.zeros(N_BUCKETS, np.int64) for name in customer_sums(valued=valued)}
 
     def add(self, counted: Counted, n_states: int) -> None:
         """Add what a block of rows gave; `n_states` states are known by now."""
@@ -65,10 +72,20 @@ class Sums:
         for name, values in zip(CUSTOMER_SUMS, (np.ones_like(j), j, j * j, j * x, x, x * x), strict=True):
             np.add.at(self.customers[name], bucket, values)
         np.maximum.at(self.customers["largest_events"], bucket, carried.n_events[seen])
+        if carried.total_value is not None:
+            value = carried.total_value[seen]
+            for name, part in limbs(value, "value").items():
+                np.add.at(self.customers[name], bucket, part)
+            self.customers = carried_over(self.customers)
+            np.maximum.at(self.customers["largest_value"], bucket, value)
 
     def result(self, name: str) -> Keyed:
         """Return the distinct keys of a table in order and their sums, and let go of it."""
         return self.moves.result() if name == "moves" else self._tables[name].result()
+
+    def _empty(self, name: str) -> Accumulator:
+        group = () if self._grouping is None else ("group",)
+        return Accumulator(sums_of(name, valued=self._valued), (*group, *MORE.get(name, ())))
 
     def _add_moves(self, moves: Moves, n_states: int) -> None:
         """Add moves under bucket, state, next, dwell bin and busy."""
@@ -81,12 +98,51 @@ class Sums:
     def _add_ends(self, ends: Ends) -> None:
         """Add journeys under bucket, entry state, outcome, elapsed bin and sure.
 
-        The steps of a journey cut at the end of a period are not known there: they are left at 0.
+        The steps and the value of a journey cut at the end of a period are not known there: they are left at 0.
         """
         more, elapsed, cut = self._in_period(ends, ends.elapsed)
         outcome, steps = _unless(cut, ends.outcome, OPEN), _unless(cut, ends.steps, 0)
-        key = pack(ends.bucket, ends.state, outcome, bin_of(elapsed, self._elapsed_edges), ends.sure)
-        self._tables["journeys"].add(key, {"steps": steps.astype(np.int32), "elapsed": elapsed}, _journeys, more)
+        bins = bin_of(elapsed, self._elapsed_edges)
+        key = pack(ends.bucket, ends.state, outcome, bins, ends.sure)
+        value = {} if ends.value is None else {"value": _unless(cut, ends.value, 0)}
+        self._tables["journeys"].add(
+            key, {"steps": steps.astype(np.int32), "elapsed": elapsed, **value}, _journeys, more
+        )
+        if ends.touched is not None:
+            self._add_touches(ends, ends.touched, bins, np.flatnonzero(~cut), more)
+
+    def _add_touches(self, ends: Ends, touched: NDArray[np.uint64], bins: IntArray, kept: IntArray, more: More) -> None:
+        """Add what the kept journeys have touched, one row per touchpoint or one for none, and the sets of them.
+
+        What a journey cut at the end of a period has touched until then is not known: it is not kept.
+        """
+        touched, more = touched[kept], {name: part[kept] for name, part in more.items()}
+        bucket, outcome, bins, sure = ends.bucket[kept], ends.outcome[kept], bins[kept], ends.sure[kept]
+        value = {} if ends.value is None else {"value": ends.value[kept]}
+        # One bit for each number that a touchpoint has, the lowest one for none at all.
+        bits = (touched << np.uint64(1)) | (touched == 0)
+        matrix = np.unpackbits(bits.astype("<u8").view(np.uint8).reshape(-1, 8), axis=1, bitorder="little")
+        row, number = np.nonzero(matrix)
+        columns: dict[str, NDArray[Any]] = {
+            name: (of[kept][row] == number) & (number > 0)
+            for name, of in (("first", ends.first_touch), ("last", ends.last_touch))
+            if of is not None
+        }
+        self._tables["touches"].add(
+            pack(bucket[row], number, outcome[row], bins[row], sure[row]),
+            columns | {name: part[row] for name, part in value.items()},
+            _touches,
+            {name: part[row] for name, part in more.items()}
+            | {"distinct": matrix[:, 1:].sum(axis=1, dtype=np.int64)[row]},
+        )
+        if touched.max(initial=0) >> np.uint64(MOST_IN_SETS):
+            # Too many touchpoints for sets of them: there will be none.
+            self._sets = False
+            self._tables["touch_sets"] = self._empty("touch_sets")
+        if self._sets:
+            key = pack(bucket, np.zeros(len(kept), np.int64), outcome, bins, sure)
+            sets = {**more, "set": touched.astype(np.int64)}
+            self._tables["touch_sets"].add(key, {"n": np.ones(len(kept), np.int64), **value}, _touch_sets, sets)
 
     def _add_entries(self, entries: Entries) -> None:
         more, _, _ = self._in_period(entries, np.zeros(len(entries.bucket), np.int64))
@@ -102,6 +158,10 @@ class Sums:
         more, away, cut = self._in_period(gaps, gaps.away)
         back = np.full(len(away), gaps.back) & ~cut
         key = pack(gaps.bucket, gaps.outcome, bins=bin_of(away, self._elapsed_edges), flag=back)
+        if self._grouping is not None and cut.any():
+            # Silent for less than the silence when the period ended: nothing had lapsed in it.
+            kept = ~(cut & (gaps.outcome == LAPSED) & (away < self._grouping.silence_us))
+            key, away, more = key[kept], away[kept], {name: part[kept] for name, part in more.items()}
         self._tables["gaps"].add(key, {"away": away}, _gaps, more)
 
     def _add_passed(self, passed: Passed) -> None:
@@ -137,7 +197,23 @@ def _gaps(columns: Columns) -> Columns:
 
 
 def _journeys(columns: Columns) -> Columns:
-    """Return what single journeys add: themselves, their steps and steps squared, their elapsed time."""
+    """Return what single journeys add: themselves, their steps and steps squared, their elapsed time, their value."""
     steps = columns["steps"].astype(np.int64)
     counts = {"n": np.ones(len(steps), np.int64), "steps": steps, "steps_squared": steps**2}
-    return {**counts, **limbs(columns["elapsed"], "elapsed")}
+    return {**counts, **limbs(columns["elapsed"], "elapsed"), **_value(columns)}
+
+
+def _touches(columns: Columns) -> Columns:
+    """Return what single touches add: themselves, whether they are the first or the last, the journey's value."""
+    counts = {"n": np.ones(len(columns["first"]), np.int64)}
+    counts |= {name: columns[name].astype(np.int64) for name in ("first", "last")}
+    return {**counts, **_value(columns)}
+
+
+def _touch_sets(columns: Columns) -> Columns:
+    """Return what single journeys add under the set of what they have touched."""
+    return {"n": columns["n"], **_value(columns)}
+
+
+def _value(columns: Columns) -> Columns:
+    return limbs(columns["value"], "value") if "value" in columns else {}

@@ -18,26 +18,47 @@ KEYS: dict[str, tuple[str, ...]] = {
     "journeys": ("bucket", "state", "outcome", "bin", "sure"),
     "gaps": ("bucket", "outcome", "-", "bin", "back"),
     "stages": ("bucket", "stage", "next", "bin", "sure"),
+    "touches": ("bucket", "state", "outcome", "bin", "sure"),
+    "touch_sets": ("bucket", "-", "outcome", "bin", "sure"),
 }
 # Parts of a key that are not packed with the others; where journeys are grouped, "group" goes before them.
-MORE: dict[str, tuple[str, ...]] = {"stages": ("bin_stage",)}
+MORE: dict[str, tuple[str, ...]] = {"stages": ("bin_stage",), "touches": ("distinct",), "touch_sets": ("set",)}
 SUMS: dict[str, tuple[str, ...]] = {
     "moves": ("n", "dwell_high", "dwell_low"),
     "entries": ("n",),
     "journeys": ("n", "steps", "steps_squared", "elapsed_high", "elapsed_low"),
     "gaps": ("n", "away_high", "away_low"),
     "stages": ("n",),
+    "touches": ("n", "first", "last"),
+    "touch_sets": ("n",),
 }
 CUSTOMER_SUMS = ("people", "j", "jj", "jx", "x", "xx")
+# Sums that there are only where the rules name a column of values, and the tables that have them.
+VALUE = ("value_high", "value_low")
+_VALUED = ("journeys", "touches", "touch_sets")
+# Sets of touchpoints are counted for so many at most.
+MOST_IN_SETS = 15
 TABLES = (*KEYS, "customers")
 CODED = ("state", "next", "outcome", "stage")
+# What code 0, elsewhere a lapse, stands for in columns that hold states alone.
+NO_STATE = {("stages", "stage"): "entry", ("touches", "state"): "none of them"}
 FLAGS = ("sure", "busy", "back")
 # Parts of a key in the fewest bytes that hold them; everything else is int64.
 NARROW: dict[str, type[np.generic]] = {
     "bucket": np.uint8, "state": np.uint16, "next": np.uint16, "outcome": np.uint16, "bin": np.int32,
     "sure": np.bool_, "busy": np.bool_, "back": np.bool_, "group": np.int32, "stage": np.uint16,
-    "bin_stage": np.int32,
+    "bin_stage": np.int32, "distinct": np.uint8, "set": np.uint16,
 }  # fmt: skip
+
+
+def sums_of(name: str, *, valued: bool) -> tuple[str, ...]:
+    """Return what is summed in a table, with or without values."""
+    return (*SUMS[name], *(VALUE if valued and name in _VALUED else ()))
+
+
+def customer_sums(*, valued: bool) -> tuple[str, ...]:
+    """Return the columns of the customers table beside the bucket; those called largest are merged by the largest."""
+    return (*CUSTOMER_SUMS, "largest_events", *((*VALUE, "largest_value") if valued else ()))
 
 
 def parts_of(name: str, *, grouped: bool) -> tuple[str, ...]:

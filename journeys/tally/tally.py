@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import json
 import os
-from dataclasses import dataclass, replace
+from collections.abc import Sequence
+from dataclasses import dataclass
 from functools import cached_property
 from hashlib import blake2b
 from typing import TYPE_CHECKING, Any
@@ -12,27 +13,21 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from journeys.checks import instant_text
-from journeys.errors import JourneysError
 from journeys.intake.findings import Findings
+from journeys.intake.rule_checks import ALL
 from journeys.intake.rules import JourneyRules
 from journeys.kernels.records import FIRST_OUTCOME, LAPSED, OPEN
-from journeys.tally.accumulate import Columns, add_up, exact_limbs
-from journeys.tally.groups import Group, merged_groups, picked
-from journeys.tally.tables import (
-    CODED,
-    FLAGS,
-    KEYS,
-    NARROW,
-    SUMS,
-    TABLES,
-    join_key,
-    split_key,
-)
+from journeys.tally.accumulate import Columns, exact_limbs
+from journeys.tally.groups import Group, gathered, picked
+from journeys.tally.parts import added, of_groups
+from journeys.tally.spans import Span, longest_followed_us
+from journeys.tally.tables import CODED, FLAGS, NO_STATE, TABLES
 
 if TYPE_CHECKING:
     from typing import Self
 
     import pandas as pd
+
 
 @dataclass(frozen=True, eq=False)
 class Tally:
@@ -50,9 +45,10 @@ class Tally:
         True where the log holds dates without a time.
     n_rows : int
         Rows read, whatever became of them.
-    moves, entries, journeys, gaps, stages, customers : mapping of str to ndarray
+    moves, entries, journeys, gaps, stages, touches, touch_sets, customers : mapping of str to ndarray
         The tables, one array per column, sorted by their keys; states and outcomes as positions in `labels`,
-        groups as positions in `groups`.
+        groups as positions in `groups`, sets of touchpoints as bits, the lowest for the first of `touchpoints`. A
+        table that the rules do not ask for has no rows.
     record : Findings
         What was left out or looked odd.
     groups : tuple of tuple
@@ -82,6 +78,8 @@ class Tally:
     journeys: Columns
     gaps: Columns
     stages: Columns
+    touches: Columns
+    touch_sets: Columns
     customers: Columns
     record: Findings
     groups: tuple[Group, ...] = ()
@@ -96,6 +94,11 @@ class Tally:
     def first_state(self) -> int:
         """Position of the first state in `labels`."""
         return FIRST_OUTCOME + len(self.rules.outcomes)
+
+    @property
+    def touchpoints(self) -> tuple[str, ...]:
+        """The states whose touches are counted, in the order of the bits of a set."""
+        return self.states if self.rules.touchpoints == ALL else self.rules.named_touchpoints
 
     @property
     def findings(self) -> pd.DataFrame:
@@ -127,18 +130,36 @@ class Tally:
         """Length of the log in days."""
         return (self.as_of_us - self.log_start_us) / 86_400e6
 
+    @property
+    def span(self) -> Span:
+        """Start and end of the log."""
+        return Span(self.log_start_us, self.as_of_us, self.whole_days)
+
+    @property
+    def days_followed(self) -> float:
+        """For how many days the longest followed of the journeys were followed (to the end of their period)."""
+        return longest_followed_us(self.rules, self.groups, self.span) / 86_400e6
+
     def table(self, name: str) -> pd.DataFrame:
-        """Return one table with names in place of codes and exact sums in microseconds.
+        """Return one table with names in place of codes and exact sums in microseconds, of values in millionths.
 
         Parameters
         ----------
-        name : {"moves", "entries", "journeys", "gaps", "stages", "customers"}
+        name : {"moves", "entries", "journeys", "gaps", "stages", "touches", "touch_sets", "customers"}
             Which table.
 
         Returns
         -------
         DataFrame
             One row per key.
+
+        Notes
+        -----
+        "touches" has a row for each touchpoint (and one for "none of them") under the outcome, the bin of the elapsed
+        time, whether the entry is sure, and how many distinct touchpoints the journey has touched: in how many
+        journeys it is one of them (n), the first, the last, and what these journeys are worth. "touch_sets", for up to
+        15 touchpoints, has the same for each set of them. Journeys cut at the end of a period stand in neither, since
+        what they had touched until then is not known; in "journeys" their steps and value are 0.
 
         Raises
         ------
@@ -160,8 +181,8 @@ class Tally:
             elif column.endswith("_low"):
                 continue
             elif column in CODED:
-                named = labels[values]
-                frame[column] = np.where(values == 0, "entry", named) if column == "stage" else named
+                nothing = NO_STATE.get((name, column), labels[0])
+                frame[column] = np.where(values == 0, nothing, labels[values])
             elif column == "group":
                 for i, name_of_part in enumerate(self.rules.by):
                     frame[name_of_part] = np.array([group[i] for group in self.groups], dtype=object)[values]
@@ -206,49 +227,7 @@ class Tally:
         JourneysError
             If rules, span or kind of times differ.
         """
-        if not isinstance(other, Tally):
-            return NotImplemented
-        for what, mine, theirs in (
-            ("rules", self.rules, other.rules),
-            ("parts of the groups", self.part, other.part),
-            ("as_of", self.as_of, other.as_of),
-            ("log_start", self.log_start, other.log_start),
-            ("kind of times (dates or moments)", *self._kinds_of_times(other)),
-        ):
-            if mine != theirs:
-                msg = (
-                    f"tallies with different {what} cannot be added"
-                    + ("" if what == "rules" else f" ({mine} and {theirs})")
-                    + "; give both parts the same rules with as_of and log_start set"
-                )
-                raise JourneysError(msg)
-        states = tuple(sorted({*self.states, *other.states}))
-        groups, here_at, there_at = merged_groups(self.groups, other.groups)
-        here, there = self._recoded(states, here_at), other._recoded(states, there_at)
-        people = {
-            name: np.maximum(a, b) if name == "largest_events" else a + b
-            for (name, a), b in zip(self.customers.items(), other.customers.values(), strict=True)
-        }
-        people["bucket"] = self.customers["bucket"]
-        tables: dict[str, Any] = {name: _added(name, here[name], there[name]) for name in KEYS}
-        return replace(
-            self,
-            states=states,
-            whole_days=self._kinds_of_times(other)[0],
-            n_rows=self.n_rows + other.n_rows,
-            record=self.record + other.record,
-            customers=people,
-            groups=groups,
-            **tables,
-        )
-
-    def _kinds_of_times(self, other: Tally) -> tuple[bool, bool]:
-        """Return whether each holds dates; one without a journey may have seen no time, and goes with the other."""
-        known = [one.whole_days for one in (self, other) if one.n_journeys]
-        if len(known) == 2:
-            return known[0], known[1]
-        kind = known[0] if known else self.whole_days or other.whole_days
-        return kind, kind
+        return added(self, other) if isinstance(other, Tally) else NotImplemented
 
     def where(self, **conditions: Any) -> Self:
         """Return the part of the tally that some groups of journeys make up.
@@ -285,35 +264,35 @@ class Tally:
         if not keep.any():
             msg = f"no group of journeys meets {conditions}; wanted conditions that some group meets"
             raise ValueError(msg)
-        if keep.all():
-            return self
-        place = np.cumsum(keep) - 1
-        tables: dict[str, Any] = {}
-        for name in KEYS:
-            table: Columns = getattr(self, name)
-            mine = keep[table["group"]]
-            tables[name] = {column: values[mine] for column, values in table.items()}
-            tables[name]["group"] = place[tables[name]["group"]].astype(NARROW["group"])
-        customers = {name: np.zeros_like(values) for name, values in self.customers.items()}
-        customers["bucket"] = self.customers["bucket"]
-        customers["people"][np.unique(tables["journeys"]["bucket"])] = 1
-        groups = tuple(group for group, kept in zip(self.groups, keep.tolist(), strict=True) if kept)
-        return replace(self, groups=groups, part=True, customers=customers, **tables)
+        return self if keep.all() else of_groups(self, np.flatnonzero(keep))
 
-    def _recoded(self, states: tuple[str, ...], group: np.ndarray) -> dict[str, Columns]:
-        """Return the keyed tables with codes of the longer lists of states and groups."""
-        new = np.arange(len(self.labels))
-        place = {name: self.first_state + i for i, name in enumerate(states)}
-        new[self.first_state :] = [place[name] for name in self.states]
-        return {
-            name: {
-                column: (group[values] if column == "group" else new[values]).astype(NARROW[column])
-                if column in CODED or column == "group"
-                else values
-                for column, values in getattr(self, name).items()
-            }
-            for name in KEYS
-        }
+    def split(self, by: str | Sequence[str]) -> dict[Group, Tally]:
+        """Return a part of the tally for every combination of values in some of its group columns.
+
+        Parameters
+        ----------
+        by : str or sequence of str
+            Among `rules.by`.
+
+        Returns
+        -------
+        dict of tuple to Tally
+            In the order of the values.
+
+        Raises
+        ------
+        ValueError
+            If a column is not one that journeys are grouped by.
+        """
+        names = (by,) if isinstance(by, str) else tuple(by)
+        return {values: of_groups(self, index) for values, index in gathered(self.groups, self.rules.by, names).items()}
+
+    def rest(self, by: str | Sequence[str], values: Group) -> Tally:
+        """Return the part of the tally that `split` does not give for `values`."""
+        names = (by,) if isinstance(by, str) else tuple(by)
+        found = gathered(self.groups, self.rules.by, names)
+        others = [index for group, index in found.items() if group != values]
+        return of_groups(self, np.sort(np.concatenate(others)))
 
     def save(self, path: str | os.PathLike[str]) -> None:
         """Write the tally to one Parquet file (see `journeys.tally.store.save`)."""
@@ -353,10 +332,3 @@ def _timestamp(us: int) -> pd.Timestamp:
     import pandas as pd
 
     return pd.Timestamp(us, unit="us", tz="UTC")
-
-
-def _added(name: str, mine: Columns, theirs: Columns) -> Columns:
-    (key, more), (other_key, other_more) = join_key(name, mine), join_key(name, theirs)
-    sums = {column: np.concatenate([mine[column], theirs[column]]) for column in SUMS[name]}
-    both = {part: np.concatenate([more[part], other_more[part]]) for part in more}
-    return split_key(name, *add_up(np.concatenate([key, other_key]), sums, both))

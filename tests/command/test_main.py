@@ -19,7 +19,7 @@ from club_log import LOG, RULES, club_overview, small_log
 import journeys as jn
 from journeys.command.main import DONE, FAILED, LIMITS, USAGE, main
 
-SUMMARY_FILES = {"summary.parquet", "summary.csv", "summary.md"}
+SUMMARY_FILES = {"summary.parquet", "summary.csv", "summary.md", "columns.csv"}
 SMALL_RULES = """customer = "who"
 time = "when"
 event = "what"
@@ -97,13 +97,13 @@ def all_files(folder: Path) -> set[str]:
 # --- what the commands do ---------------------------------------------------------------------------------
 
 
-def test_summary_writes_three_files_and_prints_the_headline(run: Run, tmp_path: Path) -> None:
+def test_summary_writes_its_files_and_prints_the_headline(run: Run, tmp_path: Path) -> None:
     ran = run("summary", LOG, "--rules", RULES, "--out", tmp_path / "new" / "folder")
     assert ran.code == DONE
-    assert all_files(tmp_path / "new" / "folder") == SUMMARY_FILES
+    assert all_files(tmp_path / "new" / "folder") == {*SUMMARY_FILES, "groups.csv"}
     plain = club_overview().plain
     assert ran.out.startswith(f"joined so far {plain.n_converted:,} of {plain.n_journeys:,} journeys of ")
-    assert [line.split()[:2] for line in ran.err.splitlines()] == [["INFO", "wrote"]] * 3
+    assert [line.split()[:2] for line in ran.err.splitlines()] == [["INFO", "wrote"]] * 5
 
 
 def test_summary_files_hold_what_the_library_answers(run: Run, tmp_path: Path) -> None:
@@ -123,11 +123,11 @@ def test_summary_files_hold_what_the_library_answers(run: Run, tmp_path: Path) -
 
 def test_summary_from_the_kept_tally_is_the_same_to_the_byte(run: Run, tmp_path: Path) -> None:
     first = run("summary", LOG, "--rules", RULES, "--out", tmp_path / "a", "--keep-tally")
-    assert all_files(tmp_path / "a") == {*SUMMARY_FILES, "tally.parquet"}
+    assert all_files(tmp_path / "a") == {*SUMMARY_FILES, "groups.csv", "tally.parquet"}
     again = run("summary", tmp_path / "a" / "tally.parquet", "--out", tmp_path / "b")
     assert (first.code, again.code) == (DONE, DONE)
     assert again.out == first.out
-    assert all_files(tmp_path / "b") == SUMMARY_FILES
+    assert all_files(tmp_path / "b") == {*SUMMARY_FILES, "groups.csv"}
     for name in SUMMARY_FILES:
         assert (tmp_path / "a" / name).read_bytes() == (tmp_path / "b" / name).read_bytes()
 
@@ -193,6 +193,7 @@ def test_horizons_are_those_asked_for(run: Run, tmp_path: Path, times: list[str]
     assert run("summary", LOG, "--rules", RULES, "--out", tmp_path, *words).code == DONE
     frame = pd.read_csv(tmp_path / "summary.csv")
     shares = frame[(frame.section == "time_to_convert") & (frame.measure == "converted")]
+    shares = shares[(shares.basis == "log") | (shares.horizon == "in the end")]
     assert shares.horizon.tolist() == ["so far", *times, "in the end"]
     assert shares.estimate[1:].is_monotonic_increasing
 

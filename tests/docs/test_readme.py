@@ -18,8 +18,25 @@ from journeys import errors
 from journeys.command import main as command
 from journeys.intake.findings import MESSAGES
 from journeys.intake.rule_checks import LIMITS
-from journeys.models import model
-from journeys.questions import first_passage, linear, outcomes, time_to_convert
+from journeys.models import model, what_if
+from journeys.questions import (
+    bootstrap,
+    comeback,
+    compare,
+    curve_result,
+    elapsed,
+    linear,
+    measures,
+    outcomes,
+    quantiles,
+    removal,
+    return_time,
+    sensitivity,
+    stage_rows,
+    stages_by_log,
+    time_to_convert,
+    within,
+)
 
 REPO = Path(__file__).resolve().parents[2]
 README = (REPO / "README.md").read_text(encoding="utf-8")
@@ -85,7 +102,9 @@ def test_every_command_runs_as_written(clone: Path):
         if "--out" in words:
             assert (clone / words[words.index("--out") + 1]).exists()
     written = {path.name for path in (clone / "club_summary").iterdir()}
-    assert written == {"summary.md", "summary.csv", "summary.parquet", "tally.parquet"}
+    assert written == {
+        "summary.md", "summary.csv", "summary.parquet", "groups.csv", "columns.csv", "tally.parquet",
+    }  # fmt: skip
 
 
 @pytest.mark.parametrize("line", [line for line in commands() if PYTEST in line])
@@ -178,10 +197,16 @@ def test_names_every_finding():
 def test_names_every_flag():
     known = {
         linear.TOO_FEW, model.END_NOT_SEEN, model.FEW_AT_END, model.COMPLETED_ONLY, outcomes.UNREACHABLE,
-        first_passage.SOME_NEVER, first_passage.NO_DWELL, first_passage.NO_SPREAD,
-        time_to_convert.BETWEEN_BINS, time_to_convert.TOO_LONG, "no move out was seen",
+        measures.SOME_NEVER, measures.NO_DWELL, measures.NO_SPREAD, return_time.NEVER_BACK, bootstrap.UNDEFINED,
+        time_to_convert.BETWEEN_BINS, time_to_convert.TOO_LONG, time_to_convert.NO_CURVE, "no move out was seen",
+        linear.DOUBTFUL, elapsed.NO_DISTRIBUTION, curve_result.NEVER_THAT_MANY, curve_result.NO_BAND,
+        quantiles.BY_CURVE, quantiles.TOO_LARGE, quantiles.NOT_IN_REACH, comeback.NOT_FOLLOWED,
+        comeback.STILL_SILENCE, comeback.NONE_SEEN, within.NO_UPPER_END, stages_by_log.NOT_TO_THE_END,
+        stage_rows.NEVER_SEEN, stage_rows.ABOVE_ONE, compare.ON_ONE_SIDE, removal.OFF_THE_WAY,
+        sensitivity.LESS_THAN_A_POINT, what_if.WHAT_IF, what_if.NEW_MOVE, "no sure entry",
     }  # fmt: skip
-    assert coded(table_after("Flags are words")) == known
+    with_numbers = {"11 of 30d followed", "followed for 29 days, no longer than the silence"}
+    assert coded(table_after("Flags are words")) == known | with_numbers
 
 
 def test_names_every_option():

@@ -1,6 +1,7 @@
 from __future__ import annotations
 
 import datetime as dt
+from decimal import Decimal
 
 import numpy as np
 import pandas as pd
@@ -278,6 +279,74 @@ def test_ended_before(gone):
 def test_ended_before_refuses_other_numbers():
     with pytest.raises(LogError, match="holds other numbers than 0 and 1"):
         read(batch(gone=[0, 1, 2]), ended_before="gone")
+
+
+VALUES = [
+    pa.array([3, None, -2]),
+    pa.array([3, None, -2], pa.int8()),
+    pa.array([3.0, None, -2.0], pa.float32()),
+    pa.array([3.0, np.nan, -2.0]),
+    pa.array([3.0, np.inf, -2.0]),
+    pa.array([3.0, -np.inf, -2.0]),
+    pa.array([Decimal("3.00"), None, Decimal("-2.00")]),
+    pa.array([Decimal("3.00"), None, Decimal("-2.00")], pa.decimal256(60, 2)),
+    pa.array([Decimal(7), Decimal(3), None, Decimal(-2)]).slice(1),
+    pa.array([3, None, -2]).dictionary_encode(),
+]
+
+
+@pytest.mark.parametrize("amount", VALUES, ids=lambda array: str(array.type))
+def test_values_of_any_type_of_number(amount):
+    (rows,), normaliser = read(batch(amount=amount), value="amount")
+    assert rows.value.tolist() == [3_000_000, 0, -2_000_000]
+    assert rows.value.dtype == np.int64
+    assert counts(normaliser) == {"missing_value": ("amount", 1, [1])}
+    assert rows.row.tolist() == [0, 1, 2]
+
+
+@pytest.mark.parametrize(
+    ("amount", "millionths"),
+    [
+        (pa.array([19.99, 0.1, 1e-7]), [19_990_000, 100_000, 0]),
+        (pa.array([1_234_567_890_123.375, -8e12, 0.0000014]), [1_234_567_890_123_375_000, -8 * 10**18, 1]),
+        (pa.array([Decimal("0.000001"), Decimal("9000000000000"), Decimal("-9E12")]), [1, 9 * 10**18, -9 * 10**18]),
+        (pa.array([Decimal("0.00000051"), Decimal("0.0000005"), Decimal("-1.9999995")]), [1, 0, -2_000_000]),
+        (pa.array([9_000_000_000_000, -9_000_000_000_000, 0]), [9 * 10**18, -9 * 10**18, 0]),
+        (pa.array([None, None, None], pa.null()), [0, 0, 0]),
+    ],
+)
+def test_values_are_kept_to_the_millionth(amount, millionths):
+    (rows,), _ = read(batch(amount=amount), value="amount")
+    assert rows.value.tolist() == millionths
+
+
+@pytest.mark.parametrize(
+    "amount",
+    [
+        pa.array([0, 9_000_000_000_001, 0]), pa.array([0, 2**64 - 1, 0], pa.uint64()), pa.array([0.0, -9.1e12, 0.0]),
+        pa.array([Decimal(0), Decimal("9000000000000.01"), Decimal(0)]),
+        pa.array([Decimal(0), Decimal(10) ** 40, Decimal(0)], pa.decimal256(60, 0)),
+    ],
+)  # fmt: skip
+def test_values_too_large_are_refused_unless_their_row_is_left_out(amount):
+    with pytest.raises(LogError, match=r"column 'amount' holds (a value beyond 9,000,000,000,000|whole numbers above)"):
+        read(batch(amount=amount), value="amount")
+    if amount.type != pa.uint64():
+        (rows,), normaliser = read(batch(amount=amount, what=("a", None, "b")), value="amount")
+        assert rows.value.tolist() == [0, 0]
+        assert set(counts(normaliser)) == {"missing_event"}
+
+
+@pytest.mark.parametrize("amount", [["5", "6", "7"], [True, False, True], [dt.date(2025, 1, 1)] * 3])
+def test_values_have_to_be_numbers(amount):
+    with pytest.raises(LogError, match=r"column 'amount' is of type .*; wanted numbers: what each event is worth"):
+        read(batch(amount=amount), value="amount")
+
+
+def test_missing_values_of_rows_left_out_are_no_finding():
+    (rows,), normaliser = read(batch(what=("a", None, "b"), amount=[None, None, 1.5]), value="amount")
+    assert rows.value.tolist() == [0, 1_500_000]
+    assert counts(normaliser) == {"missing_event": ("what", 1, [1]), "missing_value": ("amount", 1, [0])}
 
 
 def test_midnights():

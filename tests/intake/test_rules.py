@@ -81,6 +81,15 @@ REFUSED = [
     ({"limits": {"unreadable": 5}}, r"limits\['unreadable'\]: got 5; wanted a share"),
     ({"limits": 0.1}, "limits: got 0.1; wanted a mapping"),
     ({"converted": ["\ud800"]}, "wanted text that can be written as UTF-8"),
+    ({"touchpoints": ["a", "a"]}, "touchpoints: got 'a' twice"),
+    ({"touchpoints": None}, "touchpoints: got None; wanted the name of an event or a list of them"),
+    ({"touchpoints": ["a", "joined"], "converted": "joined"}, "touchpoints: got 'joined', an outcome"),
+    ({"touchpoints": "x", "states": {"x": "y"}}, "touchpoints: got 'x', which `states` maps to 'y'"),
+    ({"touchpoints": [f"s{i}" for i in range(64)]}, "touchpoints: got 64 states; wanted at most 63: name fewer"),
+    ({"value": ""}, "value: got ''; wanted the name of a column"),
+    ({"value": 1}, "value: got 1; wanted the name of a column"),
+    ({"value": "when"}, "value: got column 'when', which is time already"),
+    ({"value": "amount", "by": "amount"}, "by: got 'amount', which is the value column"),
 ]
 
 
@@ -114,6 +123,18 @@ def test_accepts_what_only_looks_contradictory():
     make(after_outcome="stop", ended_before="gone")
     make(as_of="2025-01-02", log_start="2025-01-01")
     make(exclude={"what": ["ping"]})
+
+
+def test_touchpoints_and_value():
+    plain, every, one = make(), make(touchpoints="all"), make(touchpoints="poster", value="amount")
+    assert (plain.touchpoints, plain.named_touchpoints, plain.value) == ((), (), None)
+    assert (every.touchpoints, every.named_touchpoints) == ("all", ())
+    assert (one.touchpoints, one.named_touchpoints) == (("poster",), ("poster",))
+    assert make(touchpoints=["all"]).named_touchpoints == ("all",)
+    assert make(touchpoints=["all"]) != every
+    assert one.columns == (*plain.columns, "amount")
+    assert len(make(touchpoints=[f"s{i}" for i in range(63)]).named_touchpoints) == 63
+    assert 'touchpoints = "all"' in every.to_toml()
 
 
 def test_equal_however_written():
@@ -229,6 +250,8 @@ def rules(draw):
         log_start=draw(st.none() | st.just(start)),
         complete_history=draw(st.booleans()),
         horizons=draw(st.lists(durations, max_size=3)),
+        touchpoints=draw(st.just("all") | st.lists(names.map("t{}".format), unique=True, max_size=3)),
+        value=draw(st.none() | st.just("what it was worth")),
         limits=draw(st.just({}) | st.fixed_dictionaries({"unreadable": st.floats(0, 1)})),
     )
 

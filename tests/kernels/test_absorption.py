@@ -5,7 +5,7 @@ from fractions import Fraction
 import numpy as np
 import pytest
 
-from journeys.kernels import absorption
+from journeys.kernels import absorption, solvers
 from journeys.kernels.absorption import Passage, passage
 
 CHAINS = [f"b{x:02d}" for x in (1, 2, 3, 4, 5, 6, 7, 8, 9, 10, 14, 15, 16)]
@@ -74,7 +74,7 @@ def test_classical_ruin(reference, row: int) -> None:
 @pytest.mark.parametrize("most_dense", [0, 1000])
 def test_fair_ruin_among_a_thousand(reference, monkeypatch, most_dense: int) -> None:
     """Feller, vol. 1, ch. XIV; Stern, Math. Magazine 48 (1975) 200-203; closed forms (b12)."""
-    monkeypatch.setattr(absorption, "_DENSE", most_dense)
+    monkeypatch.setattr(solvers, "_DENSE", most_dense)
     case = reference("absorbing", "b12")
     p, close = ruin(0.5, 1000), case["tolerance"]
     lose, win, over = (walk_in_steps(p, 999, end) for end in ([999], [1000], [999, 1000]))
@@ -162,8 +162,8 @@ def test_sparse_and_dense_roads_agree(monkeypatch) -> None:
     values, mask = (p[i, j], 2 * p[i, j], 5 * p[i, j]), np.arange(91) == 90
     found = []
     for most_dense in (1000, 0):
-        monkeypatch.setattr(absorption, "_DENSE", most_dense)
-        monkeypatch.setattr(absorption, "_THIN", 1)
+        monkeypatch.setattr(solvers, "_DENSE", most_dense)
+        monkeypatch.setattr(solvers, "_THIN", 1)
         found.append(passage(89, 91, i, j, *values, mask).gradients(40))
     for measure, parts in found[0].items():
         for one, two in zip(parts, found[1][measure], strict=True):
@@ -235,3 +235,74 @@ def test_relabelling_states_changes_nothing() -> None:
     two = passage(6, 8, new[i], new[j], p, mean, second, np.arange(8) == 7)
     for name in ("probability", "mean_given", "sd_given"):
         np.testing.assert_allclose(getattr(two, name)[new[:6]], getattr(one, name), rtol=1e-12)
+
+
+def contracted(found: Passage, directions: list[np.ndarray], n_states: int) -> dict[str, np.ndarray]:
+    """Gradients of every start multiplied with the directions, by answer: (n_directions, n_states)."""
+    by_start = [found.gradients(start) for start in range(n_states)]
+    return {
+        name: np.stack([sum(d @ one[name][k] for k, d in enumerate(directions)) for one in by_start], axis=1)
+        for name in ("probability", "mean_given", "sd_given")
+    }
+
+
+@pytest.mark.parametrize("floats", [1, 2**22])
+@pytest.mark.parametrize("target", [[6], [5, 7], [2], [1, 6]])
+def test_changes_are_gradients_times_directions(monkeypatch, target: list[int], floats: int) -> None:
+    monkeypatch.setattr(absorption, "_FLOATS", floats)
+    rng = np.random.default_rng(21)
+    i, j, *moments = random_moves(rng, 5, 8)
+    found = passage(5, 8, i, j, *moments, np.isin(np.arange(8), target))
+    directions = [rng.normal(size=(11, len(i))) for _ in range(3)]
+    changes = found.changes(*directions)
+    for name, slow in contracted(found, directions, 5).items():
+        np.testing.assert_allclose(getattr(changes, name), slow, rtol=1e-10, atol=1e-10)
+    np.testing.assert_allclose(found.probability_changes(directions[0]), changes.probability, rtol=1e-13, atol=1e-15)
+    same = found.changes(directions[0], directions[0], directions[0])
+    for name, slow in contracted(found, [directions[0]] * 3, 5).items():
+        np.testing.assert_allclose(getattr(same, name), slow, rtol=1e-10, atol=1e-10)
+
+
+@pytest.mark.parametrize("target", [[6], [2]])
+def test_changes_against_differences(target: list[int]) -> None:
+    rng = np.random.default_rng(7)
+    i, j, *moments = random_moves(rng, 5, 8, share=0.85)
+    mask = np.isin(np.arange(8), target)
+    directions = [rng.normal(size=(4, len(i))) * x for x in moments]
+    changes = passage(5, 8, i, j, *moments, mask).changes(*directions)
+    step = 1e-6
+    for one in range(4):
+        up, down = (
+            passage(5, 8, i, j, *(x + sign * step * d[one] for x, d in zip(moments, directions, strict=True)), mask)
+            for sign in (1, -1)
+        )
+        for name in ("probability", "mean_given", "sd_given"):
+            slow = (getattr(up, name) - getattr(down, name)) / (2 * step)
+            np.testing.assert_allclose(getattr(changes, name)[one], slow, rtol=1e-6, atol=1e-7)
+
+
+def test_changes_where_an_answer_is_undefined() -> None:
+    """The chain of `test_reachability_is_decided_on_the_graph`, with the same conventions as its gradients."""
+    i = np.array([0, 0, 1, 3, 2, 4])
+    j = np.array([1, 2, 3, 1, 5, 6])
+    p = np.array([0.3, 0.7, 1.0, 1.0, 1.0, 1.0])
+    found = passage(5, 7, i, j, p, p, p, np.arange(7) == 5)
+    one = np.array([[-0.1, 0.1, 0.0, 0.0, 0.0, 0.0]])
+    changes = found.changes(one, one, one)
+    np.testing.assert_allclose(changes.probability, [[0.1, 0.0, 0.0, 0.0, 0.0]])
+    np.testing.assert_allclose(changes.mean_given, [[0.0, np.nan, 0.0, np.nan, np.nan]], atol=1e-15)
+    assert np.isnan(changes.sd_given).all()
+    arrived = passage(5, 7, i, j, p, p, p, np.arange(7) == 2).changes(one, one, one)
+    assert arrived.mean_given[0, 2] == arrived.sd_given[0, 2] == arrived.probability[0, 2] == 0.0
+
+
+def test_changes_do_not_meet_what_leads_away_unknown() -> None:
+    """No dwell is given for the move out of the way: it is no part of the way there."""
+    i, j, p = np.array([0, 0, 0]), np.array([0, 1, 2]), np.array([0.5, 0.25, 0.25])
+    mean = np.array([0.5, 0.25, np.nan])
+    found = passage(1, 3, i, j, p, mean, mean, np.arange(3) == 1)
+    assert found.mean_given.tolist() == [2.0]
+    one = np.array([[0.1, -0.1, 0.0]])
+    changes = found.changes(one, one, one)
+    assert np.isfinite(changes.mean_given).all()
+    assert np.isfinite(changes.sd_given).all()

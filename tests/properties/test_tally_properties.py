@@ -163,7 +163,8 @@ def fit_or_refusal(frame: pd.DataFrame, rules: dict[str, Any]) -> tuple[jn.Journ
 def answers(fit: jn.JourneyFit) -> pd.DataFrame:
     """Return point estimates: where journeys end, and how soon the conversions come."""
     ends = jn.outcomes(fit).to_frame().rename(columns={"outcome": "of"})
-    frames = [ends, *(jn.first_passage(fit, clock=clock).to_frame().rename(columns={"measure": "of"})
+    frames = [ends, *(jn.first_passage(fit, clock=clock, method="linearised").to_frame()
+                      .rename(columns={"measure": "of"})
                       .assign(of=lambda frame, clock=clock: clock + " " + frame["of"]) for clock in ("steps", "time"))]
     return pd.concat(frames).set_index(["start_state", "of"])[["estimate"]].sort_index()
 
@@ -172,7 +173,8 @@ def answers(fit: jn.JourneyFit) -> pd.DataFrame:
 @given(log=logs(), data=st.data())
 @pytest.mark.filterwarnings("ignore::journeys.errors.JourneysWarning")
 def test_relabelling_states_permutes_the_matrix(log: RandomLog, data: st.DataObject) -> None:
-    rules = {key: value for key, value in log.rules.items() if key not in ("states", "unmapped")}
+    named = ("states", "unmapped", "opens", "stages", "touchpoints")
+    rules = {key: value for key, value in log.rules.items() if key not in named}
     ends = {*rules["converted"], *rules["churned"]}
     names = sorted({str(name) for name in log.frame["event"].dropna() if name} - ends)
     ranks = data.draw(st.permutations(range(len(names))))
@@ -231,13 +233,16 @@ def test_renaming_customers_changes_no_estimate(log: RandomLog) -> None:
 @quick
 @given(log=logs(), days=st.integers(-4_000, 300))
 def test_shifting_all_times_by_whole_days(log: RandomLog, days: int) -> None:
+    """Where no group is bound to the calendar."""
     dates = log.slow["whole_days"]
+    settings = {key: value for key, value in log.rules.items() if key not in ("cohort", "timezone", "split_at", "by")}
+    settings["by"] = [name for name in log.rules.get("by", ()) if name not in ("cohort", "period")]
     step, times = timedelta(days=days), log.frame["time"]
     moved = times.map(lambda day: day + step, na_action="ignore") if dates else times + pd.Timedelta(step)
-    rules = log.rules | {
+    rules = settings | {
         key: as_text(log.slow[f"{key}_us"] + days * DAY_US, dates) for key in ("log_start", "as_of")
     }
-    first = jn.tally(log.frame, rules_of(log))
+    first = jn.tally(log.frame, jn.JourneyRules(**settings))
     later = jn.tally(log.frame.assign(time=moved), jn.JourneyRules(**rules))
     for name in TABLES:
         pd.testing.assert_frame_equal(first.table(name), later.table(name))

@@ -3,9 +3,12 @@ from __future__ import annotations
 import numpy as np
 import pandas as pd
 import pytest
+from club_log import club_fit
 from small_chains import ABSORBING, column, known_chain, one, ruin
 
 import journeys as jn
+from journeys.kernels.absorption import passage
+from journeys.questions.linear import passage_spread, probability_spread
 
 
 @pytest.mark.parametrize("start", ABSORBING)
@@ -89,3 +92,49 @@ def test_refusals() -> None:
         jn.outcomes(joined, confidence_level="high")
     with pytest.raises(ValueError, match="confidence_level: got 1.0"):
         jn.outcomes(joined).confidence_interval(1.0)
+
+
+def test_what_no_float_can_hold_is_not_called_unreachable() -> None:
+    frame = pd.DataFrame(
+        [[0.0, 1e-200, 0.0, 1.0], [0.0, 0.0, 1e-200, 1.0]], index=["a", "b"], columns=["a", "b", "won", "lost"]
+    )
+    result = jn.outcomes(jn.JourneyFit.from_matrix(frame))
+    assert one(result, start_state="b", outcome="won") == 1e-200
+    assert one(result, "flag", start_state="b", outcome="won") == ""
+    assert one(result, "flag", start_state="a", outcome="won") == "too extreme to compute"
+
+
+@pytest.mark.parametrize("to", ["joined", None])
+@pytest.mark.parametrize("steps", [True, False])
+def test_spreads_are_those_of_the_derivatives_start_by_start(steps: bool, to: str | None) -> None:
+    """The slow road: a derivative by every move from each start, times the influence of each bucket."""
+    fit = club_fit()
+    pulls, p = fit.influence, fit.probability
+    assert pulls is not None
+    mean, second = (p, p) if steps else (fit.mean, fit.second)
+    target = fit.target_mask(fit.outcomes if to is None else to)
+    found = passage(fit.nodes.n_rows, fit.nodes.n_nodes, fit.move_state, fit.move_target, p, mean, second, target)
+    spreads = passage_spread(fit, found, steps=steps)
+    parts = [pulls.probability] * 3 if steps else [pulls.probability, pulls.mean, pulls.second]
+    for name, (std_error, df) in spreads.items():
+        for start in range(fit.nodes.n_rows):
+            influence = sum(part @ by for part, by in zip(parts, found.gradients(start)[name], strict=True))
+            g = len(influence)
+            if name == "probability" and found.certain[start]:
+                assert std_error[start] == 0.0
+            else:
+                assert std_error[start] == pytest.approx(np.sqrt(g / (g - 1) * np.sum(influence**2)), rel=1e-9)
+                assert 1 <= df[start] <= g - 1
+    if to is not None:
+        np.testing.assert_array_equal(probability_spread(fit, found), spreads["probability"])
+        shown = column(jn.outcomes(fit), "std_error", "start_state", fit.nodes.labels[: fit.nodes.n_rows], outcome=to)
+        np.testing.assert_allclose(shown, spreads["probability"][0], rtol=1e-12)
+
+
+def test_a_known_chain_has_no_spread() -> None:
+    fit = jn.JourneyFit.from_matrix(pd.DataFrame([[0.5, 0.5]], index=["a"], columns=["a", "joined"]))
+    p = fit.probability
+    found = passage(2, 3, fit.move_state, fit.move_target, p, p, p, fit.target_mask("joined"))
+    for std_error, df in passage_spread(fit, found, steps=True).values():
+        assert std_error.tolist() == [0.0, 0.0]
+        assert df.tolist() == [np.inf, np.inf]

@@ -48,6 +48,7 @@ FINDING_CODES = (
     "repeated_outcome",
     "outcome_without_states",
     "first_visit_of_unsure_journey",
+    "missing_value",
 )
 
 
@@ -136,6 +137,7 @@ def compare(log: RandomLog, how: How) -> None:
         tally = count_log(
             source_of(log, how.batch), JourneyRules(**log.rules), n_workers=how.n_workers, compiled=how.compiled
         )
+    value = [] if tally.rules.value is None else ["value"]
     by = (tally.rules.by, period_names(tally.rules.splits_us)) if tally.rules.by else ()
     moves = keyed(tally.table("moves"), ["bucket", "state", "next", "bin", "busy"], ["n", "dwell"], by)
     assert moves == slow.moves
@@ -144,7 +146,7 @@ def compare(log: RandomLog, how: How) -> None:
     journeys = keyed(
         tally.table("journeys"),
         ["bucket", "state", "outcome", "bin", "sure"],
-        ["n", "steps", "steps_squared", "elapsed"],
+        ["n", "steps", "steps_squared", "elapsed", *value],
         by,
     )
     assert journeys == slow.journeys
@@ -152,9 +154,14 @@ def compare(log: RandomLog, how: How) -> None:
     assert gaps == slow.gaps
     stages = keyed(tally.table("stages"), ["bucket", "stage", "next", "bin", "sure", "bin_stage"], ["n"], by)
     assert stages == slow.stages
+    keys = ["bucket", "state", "outcome", "bin", "sure", "distinct"]
+    assert keyed(tally.table("touches"), keys, ["n", "first", "last", *value], by) == slow.touches
+    keys = ["bucket", "outcome", "bin", "sure", "set"]
+    assert keyed(tally.table("touch_sets"), keys, ["n", *value], by) == slow.touch_sets
     people = tally.table("customers")
     people = people[people["people"] > 0]
-    customers = keyed(people, ["bucket"], ["people", "j", "jj", "jx", "x", "xx", "largest_events"])
+    largest = [*value, "largest_value"] if value else []
+    customers = keyed(people, ["bucket"], ["people", "j", "jj", "jx", "x", "xx", "largest_events", *largest])
     assert customers == {(bucket,): sums for bucket, sums in slow.customers.items()}
     counted = tally.findings.groupby("code")["n"].sum().to_dict()
     assert {code: counted[code] for code in FINDING_CODES if counted.get(code)} == slow.findings
@@ -174,7 +181,7 @@ def test_seeded_random_logs(share: int) -> None:
 
 def test_busy_customers() -> None:
     n_busy = 0
-    for seed in range(8):
+    for seed in range(12):
         log = random_log(np.random.default_rng([77, seed]), n_rows=3_500)
         n_busy += any(busy for *_, busy in slow_tally(log).moves)
         compare(log, How(0 if seed % 2 else 170, 50, 2, is_built() and seed % 4 > 1))

@@ -1,0 +1,151 @@
+"""The walks to a target shared evenly among the states they touch, with derivatives by the moves."""
+
+from __future__ import annotations
+
+from math import factorial
+
+import numpy as np
+
+from journeys.kernels.arrays import FloatArray, IntArray
+from journeys.kernels.passage_moves import Moves, moves_to
+from journeys.kernels.removal import Road
+
+_FLOATS = 2**22  # numbers of one kind worked on at a time, about
+
+
+def equal_split(way: Road, players: IntArray, *, derive: bool = True) -> tuple[FloatArray, FloatArray]:
+    """Share of the walks to the target that falls to each of some states, split evenly among those touched.
+
+    Parameters
+    ----------
+    way : Road
+        From `journeys.kernels.removal.road`, with a positive probability of the target.
+    players : int array, shape (n_players,)
+        States, the start and the target not among them; 15 at most, since all subsets are solved for.
+    derive : bool
+        Also return derivatives.
+
+    Returns
+    -------
+    share : float array, shape (n_players + 1,)
+        Of each state, then of the walks that touch none of them; sums to 1. Exactly 0 for a state that no walk to
+        the target visits.
+    by_p : float array, shape (n_players + 1, n_moves)
+        Derivatives by the probability of each move, each taken as free. Of no rows where not asked for.
+
+    Notes
+    -----
+    The Shapley value of the game whose worth v(S) is the probability of the target when arrivals at states outside
+    S are lost. A walk that touches the set T adds 1 to v(S) where S holds T, and the value splits that evenly over
+    T. The chain is first reduced to the start and the players: Q(x, y) is the probability that y is the first of
+    players and target met after x. Each v(S) is then a small system, solved in batches.
+
+    References
+    ----------
+    L. S. Shapley, A value for n-person games, in Contributions to the Theory of Games II, Princeton 1953.
+
+    Examples
+    --------
+    >>> from journeys.kernels.removal import road
+    >>> p = np.array([0.5, 0.5, 0.5, 0.5, 0.5, 0.5])
+    >>> way = road(3, 5, np.array([0, 0, 1, 1, 2, 2]), np.array([1, 2, 2, 3, 3, 4]), p, p, np.arange(5) == 3)
+    >>> equal_split(way, np.array([1, 2]))[0].round(4).tolist()
+    [0.5, 0.5, 0.0]
+    """
+    v, total = way.moves, way.conversion
+    active = np.flatnonzero(np.isin(players, way.on_the_way(players)))
+    at = players[active]
+    ends = v.is_target.copy()
+    ends[at] = True
+    to_next = moves_to(v.n_states, len(ends), v.state, v.target, v.p, v.p, v.p, ends)
+    between, ahead = _first_met(way, to_next, at)
+    value, weight = _values(between)
+    share = np.zeros(len(players) + 1)
+    places = np.append(active, len(players))
+    share[places] = value / total
+    if not derive:
+        return share, np.zeros((0, len(v.p)))
+    by_p = np.zeros((len(players) + 1, len(v.p)))
+    behind = _visits_between(way, to_next, at)
+    plain = way.slope(way.visits, way.share)
+    for place, each, part in zip(places, weight, share[places], strict=True):
+        slope = np.einsum("mx,mx->m", (behind @ each)[v.state], ahead[v.target])
+        by_p[place] = (slope - part * plain) / total
+    return share, by_p
+
+
+def _first_met(way: Road, to_next: Moves, at: IntArray) -> tuple[FloatArray, FloatArray]:
+    """Reduce the chain to the start and the players.
+
+    Returns
+    -------
+    between : float array, shape (n + 1, n + 1)
+        From the start (first row) and the players, the probability that each player, or the target (last column),
+        is the first of them met.
+    ahead : float array, shape (n_nodes, n + 1)
+        The same from every node, itself where it is one of them.
+    """
+    v, k = way.moves, len(at)
+    ahead = np.zeros((len(v.is_target), k + 1))
+    ahead[at, np.arange(k)] = 1.0
+    ahead[v.is_target, k] = 1.0
+    direct = np.stack([v.pull(v.p * ahead[v.target, y]) for y in range(k + 1)], axis=1)
+    inside = np.flatnonzero(to_next.open_states)
+    ahead[inside] = to_next.solver.solve(direct[inside])
+    from_player = np.stack([v.pull(v.p * ahead[v.target, y])[at] for y in range(k + 1)], axis=1)
+    return np.concatenate([ahead[[way.start]], from_player]), ahead
+
+
+def _visits_between(way: Road, to_next: Moves, at: IntArray) -> FloatArray:
+    """Mean visits from the start and from each player until the next of players and target, (n_states, n + 1)."""
+    v, k = way.moves, len(at)
+    begin = np.zeros((v.n_states, k + 1))
+    begin[way.start, 0] = 1.0
+    place = np.full(v.n_states, -1)
+    place[at] = np.arange(1, k + 1)
+    out = (place[v.state] > 0) & (v.target < v.n_states)
+    np.add.at(begin, (v.target[out], place[v.state[out]]), v.p[out])
+    visits, inside = np.zeros(begin.shape), to_next.open_states
+    visits[inside] = to_next.solver.solve(begin[inside], transposed=True)
+    visits[at, np.arange(1, k + 1)] = 1.0
+    return visits
+
+
+def _values(between: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Shapley values of the players and the worth of no player, with their derivatives by the reduced chain.
+
+    Returns
+    -------
+    value : float array, shape (n + 1,)
+    weight : float array, shape (n + 1, n + 1, n + 1)
+        By each cell of `between`.
+    """
+    k = len(between) - 1
+    inner, end = between[1:, :k], between[1:, k]
+    value, weight = np.zeros(k + 1), np.zeros((k + 1, k + 1, k + 1))
+    step = max(1, _FLOATS // (k + 1) ** 2)
+    for first in range(0, 2**k, step):
+        sets = np.arange(first, min(first + step, 2**k))
+        present = (sets[:, None] >> np.arange(k)) & 1
+        mask = present.astype(np.float64)
+        system = np.eye(k) - mask[:, :, None] * inner * mask[:, None, :]
+        gain = np.linalg.solve(system, (mask * end)[:, :, None])[:, :, 0]
+        visits = np.linalg.solve(system.transpose(0, 2, 1), (mask * between[0, :k])[:, :, None])[:, :, 0]
+        worth = between[0, k] + gain @ between[0, :k]
+        counts = _shares(present, k)
+        value += counts.T @ worth
+        one = np.ones((len(sets), 1))
+        left, right = np.concatenate([one, visits], axis=1), np.concatenate([gain, one], axis=1)
+        for c in range(k + 1):
+            weight[c] += (left * counts[:, [c]]).T @ right
+    # all terms of a state cancel only to rounding
+    return np.maximum(value, 0.0), weight
+
+
+def _shares(present: IntArray, k: int) -> FloatArray:
+    """How the worth of each set counts in the value of each player, and (last) in the worth of no player."""
+    size = present.sum(axis=1)
+    joins = np.array([0.0, *(factorial(s - 1) * factorial(k - s) / factorial(k) for s in range(1, k + 1))])
+    lacks = np.array([*(factorial(s) * factorial(k - s - 1) / factorial(k) for s in range(k)), 0.0])
+    counts = np.where(present == 1, joins[size][:, None], -lacks[size][:, None])
+    return np.concatenate([counts, (size == 0)[:, None].astype(np.float64)], axis=1)

@@ -1,0 +1,164 @@
+"""Groups of journeys beside each other: a wide table for files, small ones for the page, and what columns mean."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from typing import TYPE_CHECKING, Any
+
+from journeys.checks import duration_us
+from journeys.questions.overview import Overview
+from journeys.questions.time_to_convert import IN_THE_END, SO_FAR
+from journeys.show.rows import amount, rows_of, share, tally_of
+from journeys.show.tables import markdown_table
+from journeys.show.words import length_words
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+# Longer tables of groups are not read on a page; they stand in groups.csv.
+LONGEST_TABLE = 40
+
+_MEANINGS = {
+    "section": "which question a row answers",
+    "start_state": "where journeys are followed from: entry, or a state",
+    "state": "state that a move leaves",
+    "next_state": "state or outcome that a move leads to",
+    "outcome": "how journeys end; lapsed: silent for longer than the silence of the rules",
+    "stage": "stage of the ordered list in the rules; entry and converted are the first and the last",
+    "after": "how the journey before ended",
+    "measure": "what is told",
+    "horizon": "within what time since entry; so far: by the end of the log; in the end: as time goes on",
+    "basis": "log: straight from the journeys; model: from the fitted chain",
+    "estimate": "the number: shares from 0 to 1, steps, or days; blank where infinite or undefined (see flag)",
+    "std_error": "standard error of the estimate, customers being what is redrawn",
+    "low": "lower end of the interval",
+    "high": "upper end of the interval",
+    "confidence_level": "level of the interval",
+    "n_effective": "independent trials that would tell as much",
+    "n_moves": "completed moves counted",
+    "n_undefined": "resamples in which the number has no value",
+    "n_absences": "journeys ended in that way, after which the customer could come back",
+    "n_back": "of these, customers who came back so far",
+    "n_reached": "journeys seen to reach the stage",
+    "n_open": "of these, journeys still under way",
+    "flag": "what to know before using the number; empty where there is nothing",
+    "group_column": "column that journeys are grouped by",
+    "group": "value of that column at a journey's first event",
+    "n_journeys": "journeys begun",
+    "people_at_least": "customers behind them, a lower bound",
+    "differs_p_value": "of the difference in the end from all other groups, corrected for the number of groups",
+}
+_OF_WIDE = {
+    "low": "lower end of the interval of the column before it",
+    "high": "upper end of the interval of the column two before it",
+}
+
+
+def wide_groups(overview: Overview) -> pd.DataFrame | None:
+    """Return one row per group, one column per measure with its interval; None where journeys are not grouped."""
+    import pandas as pd
+
+    if not overview.groups:
+        return None
+    rows: list[dict[str, Any]] = []
+    for column, result in overview.groups.items():
+        frame = result.to_frame()
+        parts = tally_of(overview).split(column)
+        p_values = _p_values(overview, column)
+        for (value,), part in parts.items():
+            row: dict[str, Any] = {
+                "group_column": column, "group": str(value), "n_journeys": part.n_journeys,
+                "people_at_least": part.n_people,
+            }  # fmt: skip
+            mine = rows_of(frame[frame[column] == value])
+            for one in mine:
+                if one["measure"]:
+                    name = _wide_name(str(one["measure"]), str(one["horizon"]), str(one["basis"]))
+                    row |= {name: one["estimate"], f"{name}_low": one["low"], f"{name}_high": one["high"]}
+            row["differs_p_value"] = p_values.get(value, math.nan)
+            row["flag"] = "; ".join(dict.fromkeys(str(one["flag"]) for one in mine if one["flag"]))
+            rows.append(row)
+    whole = pd.DataFrame(rows)
+    last = ["differs_p_value", "flag"]
+    return whole[[*(name for name in whole if name not in last), *last]]
+
+
+def group_sections(overview: Overview) -> list[tuple[str, str]]:
+    """Return a heading and a table for every group column: share converted and days, groups beside each other."""
+    return [(f"## By {column}", _group_table(overview, column)) for column in overview.groups]
+
+
+def column_meanings(frames: Sequence[pd.DataFrame]) -> pd.DataFrame:
+    """Return what every column of some tables holds: column, meaning."""
+    import pandas as pd
+
+    names = dict.fromkeys(str(name) for frame in frames for name in frame)
+    return pd.DataFrame([(name, _meaning(name)) for name in names], columns=["column", "meaning"])
+
+
+def _group_table(overview: Overview, column: str) -> str:
+    import pandas as pd
+
+    frame = overview.groups[column].to_frame()
+    values = list(dict.fromkeys(frame[column]))
+    if len(values) > LONGEST_TABLE:
+        return f"{len(values):,} groups: they stand in groups.csv."
+    p_values, parts = _p_values(overview, column), tally_of(overview).split(column)
+    horizons = [one for one in dict.fromkeys(frame["horizon"]) if one not in ("", SO_FAR, IN_THE_END)]
+    rows = []
+    for value in values:
+        mine = frame[frame[column] == value]
+        cells = [str(value), f"{parts[value,].n_journeys:,}"]
+        cells += [_cell(mine, "converted", horizon, "log") for horizon in horizons]
+        cells += [_cell(mine, "converted", IN_THE_END, "model"), _cell(mine, "median_days", IN_THE_END, "model")]
+        p_value = p_values.get(value, math.nan)
+        cells.append("" if math.isnan(p_value) else f"{p_value:.2g}")
+        cells.append("; ".join(dict.fromkeys(str(flag) for flag in mine["flag"] if flag)))
+        rows.append(cells)
+    within = [f"converted within {length_words(duration_us(one, 'horizon'))}" for one in horizons]
+    columns = [column, "journeys", *within, "expected in the end", "median days, if so", "differs from the rest: p"]
+    return markdown_table(pd.DataFrame(rows, columns=[*columns, "note"]))
+
+
+def _cell(frame: pd.DataFrame, measure: str, horizon: str, basis: str) -> str:
+    found = rows_of(frame, measure=measure, horizon=horizon, basis=basis)
+    if not found:
+        return ""
+    return share(found[0]) if measure == "converted" else amount(found[0])
+
+
+def _p_values(overview: Overview, column: str) -> dict[Any, float]:
+    result = overview.against.get(column)
+    if result is None:
+        return {}
+    frame = result.to_frame()
+    frame = frame[frame["measure"] == "reached"]
+    return dict(zip(frame[column], frame["p_value_corrected"], strict=True))
+
+
+def _wide_name(measure: str, horizon: str, basis: str) -> str:
+    if horizon == IN_THE_END:
+        return measure if measure != "converted" else "converted_in_the_end"
+    when = "so_far" if horizon == SO_FAR else f"within_{horizon}"
+    return f"{measure}_{when}_by_{basis}" if horizon != SO_FAR else f"{measure}_{when}"
+
+
+def _meaning(name: str) -> str:
+    if name in _MEANINGS:
+        return _MEANINGS[name]
+    for end, words in _OF_WIDE.items():
+        if name.endswith(f"_{end}"):
+            return words
+    for start, words in (
+        ("converted_so_far", "share of all journeys converted by the end of the log, undecided ones not accounted for"),
+        ("converted_within_", "share converted within that time since entry, undecided journeys accounted for"),
+        ("converted_in_the_end", "share expected to convert in the end, by the model"),
+        ("median_", "median given conversion, by the model"),
+        ("q90_", "what 90 % of the converted stay within, by the model"),
+        ("steps", "mean steps given conversion, by the model"),
+        ("days", "mean days given conversion, by the model"),
+    ):
+        if name.startswith(start):
+            return words
+    return "a column of the log that journeys are grouped by"

@@ -1,0 +1,310 @@
+"""Pictures of answers: cumulative curves with bands, and dots with intervals on one axis.
+
+Each function takes an answer and, if wanted, the Axes to draw on, and returns the Axes. They need matplotlib
+(`pip install "journeys[report]"`), which is loaded when the first picture is drawn.
+
+Examples
+--------
+>>> import matplotlib
+>>> matplotlib.use("Agg")
+>>> import pandas as pd
+>>> from journeys.models.fit import JourneyFit
+>>> from journeys.questions.outcomes import outcomes
+>>> chain = pd.DataFrame([[0.6, 0.4]], index=["basket"], columns=["joined", "declined"])
+>>> intervals(outcomes(JourneyFit.from_matrix(chain))).get_xlabel()
+'probability (%), with 95 % interval'
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from journeys.questions.compare import CompareResult
+from journeys.questions.curve_result import PassageCurve
+from journeys.questions.linear import TOO_FEW
+from journeys.results import Result, printable
+
+if TYPE_CHECKING:
+    import pandas as pd
+    from matplotlib.axes import Axes
+
+__all__ = ["intervals", "passage_curve"]
+
+INK = "#1f2328"
+GREY = "#8b9197"
+PALE = "#d9dcdf"
+# The one pair of colours: dark blue and orange stay apart for every kind of colour blindness.
+BLUE = "#1b4f8a"
+ORANGE = "#d97706"
+# The columns that an answer itself tells its rows apart by; columns of groups come before them.
+_OWN_KEYS = ("start_state", "state", "next_state", "stage", "outcome", "after", "touchpoint", "rule", "measure",
+             "horizon", "basis")  # fmt: skip
+# Shares are drawn in percent, their differences in points.
+_SHARES = ("probability", "converted", "reached", "of_stage_before", "went", "returned", "stage reached", "move")
+_HOLLOW: dict[str, Any] = {"markerfacecolor": "white", "markeredgewidth": 1.4, "label": "see its flag"}
+
+
+def passage_curve(curve: PassageCurve, ax: Axes | None = None, log: bool | None = None, **kwargs: Any) -> Axes:
+    """Draw how the share that has reached a target grows, with its band and the median on the axis.
+
+    Parameters
+    ----------
+    curve : PassageCurve
+        From `journeys.passage_curve`.
+    ax : matplotlib Axes, optional
+        Where to draw; default: a new figure.
+    log : bool, optional
+        Draw the log's own curve too, as a thin stepped line. Default: where there is one
+        (`curve.has_observed`).
+    **kwargs
+        For the line of the curve (`Axes.plot`).
+
+    Returns
+    -------
+    matplotlib Axes
+
+    Raises
+    ------
+    ValueError
+        If `log=True` where the log has no curve of its own.
+
+    Examples
+    --------
+    >>> import matplotlib
+    >>> matplotlib.use("Agg")
+    >>> import pandas as pd
+    >>> from journeys.models.fit import JourneyFit
+    >>> from journeys.questions.passage_curve import passage_curve as ask
+    >>> chain = pd.DataFrame([[0.5, 0.5]], index=["basket"], columns=["basket", "joined"])
+    >>> ax = passage_curve(ask(JourneyFit.from_matrix(chain), "joined", clock="steps"))
+    >>> ax.get_xlabel()
+    'steps from entry'
+    """
+    ax = _axes(ax, (6.4, 3.8))
+    frame = curve.to_frame()
+    last = float(frame[curve.clock].iloc[-1])
+    if not curve.whole:
+        # the axis is even, so the points are too
+        frame = curve.to_frame(np.linspace(0.0, last, 121))
+    elif frame[curve.clock].iloc[0] > 0:
+        frame = curve.to_frame(np.append(0.0, frame[curve.clock]))
+    time, share = frame[curve.clock].to_numpy(), 100 * frame["estimate"].to_numpy()
+    line: dict[str, Any] = {"color": BLUE, "linewidth": 1.8, "zorder": 3, "label": "by the chain"} | kwargs
+    if curve.whole:
+        line = {"drawstyle": "steps-post"} | line
+    low, high = (100 * frame[name].to_numpy() for name in ("low", "high"))
+    if np.isfinite(low).any() and (high > low).any():
+        label = f"{100 * curve.confidence_level:g} % interval at each {'step' if curve.clock == 'steps' else 'time'}"
+        ax.fill_between(
+            time, low, high, step="post" if curve.whole else None, color=BLUE, alpha=0.16, linewidth=0,
+            zorder=1, label=label,
+        )  # fmt: skip
+    ax.plot(time, share, **line)
+    if log if log is not None else curve.has_observed:
+        seen = curve.observed()
+        seen = seen[seen["time"] <= last]
+        ax.step(
+            np.append(0.0, seen["time"]), 100 * np.append(0.0, seen["estimate"]), where="post", color=GREY,
+            linewidth=0.9, zorder=4, label="by the log alone",
+        )  # fmt: skip
+    _mark_median(ax, curve)
+    whom = "of those who reach it" if curve.given else "of all who start"
+    unit = "" if curve.clock == "steps" else f" ({curve.unit})"
+    ax.set_xlabel(f"{'steps' if curve.clock == 'steps' else 'time'} from {printable(curve.start)}{unit}")
+    ax.set_ylabel(f"{printable(_listed(curve.to))}, % {whom}")
+    ax.set_xlim(0, last if last > 0 else None)
+    ax.set_ylim(0, None)
+    ax.legend(frameon=False, loc="lower right", fontsize="small", labelcolor=INK)
+    return ax
+
+
+def _mark_median(ax: Axes, curve: PassageCurve) -> None:
+    """Mark on the axis when half of those who reach it have done so."""
+    row = curve.given_reached().quantile(0.5).iloc[0]
+    if not np.isfinite(row["estimate"]):
+        return
+    x = float(row["estimate"])
+    y = 100 * float(curve.at([x])[0])
+    ax.plot([x, x], [0, y], color=INK, linewidth=0.8, linestyle=(0, (2, 2)), zorder=2)
+    ax.plot([x], [0], marker="^", markersize=7, color=ORANGE, clip_on=False, zorder=5)
+    text = f"half of those who reach it: {_number(x)}"
+    if np.isfinite(row["low"]) and row["high"] > row["low"]:
+        text += f" ({_number(row['low'])}–{_number(row['high'])})"
+    ax.annotate(
+        text, (x, 0), xytext=(6, 5), textcoords="offset points", fontsize="small", color=INK, ha="left", va="bottom"
+    )
+
+
+def intervals(
+    result: Result,
+    measure: str | None = None,
+    ax: Axes | None = None,
+    *,
+    horizon: str | None = None,
+    start: str | None = None,
+    **kwargs: Any,
+) -> Axes:
+    """Draw the numbers of an answer as dots with their intervals on one axis.
+
+    Parameters
+    ----------
+    result : Result
+        Such as from `journeys.first_passage` or `journeys.outcomes`, by group too, or from `journeys.compare`.
+    measure : str, optional
+        Which measure, where the answer has several; default: the first.
+    ax : matplotlib Axes, optional
+        Where to draw; default: a new figure.
+    horizon : str, optional
+        Such as "30d", of an answer by horizon; default: all of them, by group the end. By group, the log where the
+        answer has both it and the model.
+    start : str, optional
+        Of an answer by where journeys start; default: all states, by group the entry.
+    **kwargs
+        For the dots (`Axes.plot`).
+
+    Returns
+    -------
+    matplotlib Axes
+        Flagged numbers are hollow; infinite ones, groups without a number, and those with too few
+        journeys for one, stand in words at the edge.
+        Differences (`journeys.compare`) have a line at zero.
+
+    Raises
+    ------
+    ValueError
+        If the answer has no such measure, horizon or start.
+
+    Examples
+    --------
+    >>> import matplotlib
+    >>> matplotlib.use("Agg")
+    >>> import pandas as pd
+    >>> from journeys.models.fit import JourneyFit
+    >>> from journeys.questions.outcomes import outcomes
+    >>> chain = pd.DataFrame([[0.5, 0.3, 0.2]], index=["basket"], columns=["basket", "joined", "declined"])
+    >>> ax = intervals(outcomes(JourneyFit.from_matrix(chain)))
+    >>> [label.get_text() for label in ax.get_yticklabels()]
+    ['entry, joined', 'entry, declined', 'basket, joined', 'basket, declined']
+    """
+    frame, told = _rows(result, measure, horizon, start)
+    kind = told["measure"].split(" within ")[0]
+    is_share = kind in _SHARES or (not kind and bool(frame["estimate"].dropna().between(0, 1).all()))
+    factor = 100.0 if is_share else 1.0
+    values, low, high = (factor * frame[name].to_numpy(dtype=float) for name in ("estimate", "low", "high"))
+    flagged = (frame["flag"] != "").to_numpy()
+    ax = _axes(ax, (6.4, 0.9 + 0.3 * len(frame)))
+    y = np.arange(len(frame))[::-1]
+    if isinstance(result, CompareResult):
+        ax.axvline(0.0, color=INK, linewidth=0.8, zorder=1)
+    bounded = np.isfinite(values) & np.isfinite(low) & np.isfinite(high)
+    ax.hlines(y[bounded], low[bounded], high[bounded], color=GREY, linewidth=2.2, zorder=2)
+    _dots(ax, values, y, flagged, kwargs)
+    for at, name in zip(y[~np.isfinite(values)], frame["flag"][~np.isfinite(values)], strict=True):
+        ax.annotate(
+            printable(name) or "no number", (1.0, at), xycoords=("axes fraction", "data"), xytext=(-4, 0),
+            textcoords="offset points", ha="right", va="center", fontsize="small", color=INK, style="italic",
+        )  # fmt: skip
+    ax.set_yticks(y, [printable(name) for name in frame["name"]])
+    ax.set_ylim(-0.7, len(frame) - 0.3)
+    if not np.isfinite(values).any():
+        ax.set_xticks([])
+    ax.set_xlabel(_axis_name(result, told, is_share))
+    ax.grid(axis="x", color=PALE, linewidth=0.6, zorder=0)
+    ax.tick_params(axis="y", length=0)
+    ax.spines["left"].set_visible(False)
+    if (flagged & np.isfinite(values)).any():
+        ax.legend(frameon=False, loc="lower right", bbox_to_anchor=(1.0, 1.0), fontsize="small", labelcolor=INK)
+    return ax
+
+
+def _dots(ax: Axes, values: np.ndarray, y: np.ndarray, flagged: np.ndarray, kwargs: dict[str, Any]) -> None:
+    """Draw the dots, flagged ones hollow."""
+    dots: dict[str, Any] = {"linestyle": "none", "marker": "o", "markersize": 6, "color": BLUE, "zorder": 3} | kwargs
+    for mask, hollow in ((~flagged, False), (flagged, True)):
+        shown = mask & np.isfinite(values)
+        if shown.any():
+            ax.plot(values[shown], y[shown], **(dots | _HOLLOW if hollow else dots))
+
+
+def _rows(
+    result: Result, measure: str | None, horizon: str | None, start: str | None
+) -> tuple[pd.DataFrame, dict[str, str]]:
+    """Return the rows to draw with a name for each, and what they are of, by key."""
+    frame, columns = result.to_frame(), list(result.keys.columns)
+    groups = [name for name in columns if name not in _OWN_KEYS]
+    own = [name for name in columns if name in _OWN_KEYS]
+    # A group that could not be fitted is one row without keys: it stays, with the words that say why.
+    blank = (frame[own] == "").all(axis=1) & bool(groups)
+    told = {"measure": "", "horizon": ""}
+    for key, wanted, name in (
+        ("measure", measure, "measure"), ("horizon", horizon, "horizon"), ("start_state", start, "start"),
+        ("basis", None, "basis"),
+    ):  # fmt: skip
+        known = list(dict.fromkeys(frame.loc[~blank, key])) if key in own else []
+        if wanted is not None and wanted not in known:
+            raise ValueError(_not_there(name, wanted, known))
+        if known and wanted is None and (key == "measure" or groups):
+            wanted = known[0] if key != "horizon" else "in the end" if "in the end" in known else known[-1]
+        if wanted is not None:
+            told[key] = wanted
+            keep = blank | (frame[key] == wanted)
+            frame, blank = frame[keep].copy(), blank[keep]
+    shown = [name for name in own if name != "measure" and not told.get(name)]
+    if groups:
+        shown = [*groups, *(name for name in shown if frame.loc[~blank, name].nunique() > 1)]
+        # A share of two or three journeys has an interval so wide that no other could be read beside it.
+        frame.loc[frame["flag"].str.contains(TOO_FEW), ["estimate", "low", "high"]] = np.nan
+    between = " · " if groups else ", "
+    labels = [between.join(filter(None, map(str, parts))) for parts in frame[shown].to_numpy(dtype=object)]
+    return frame.assign(name=labels).reset_index(drop=True), told
+
+
+def _not_there(name: str, wanted: str, known: Sequence[str]) -> str:
+    if not known:
+        return f"{name}={wanted!r}: this answer has no {name}s to choose from; leave it out"
+    return f"{name}={wanted!r} is not in this answer; wanted one of {', '.join(map(repr, known))}"
+
+
+def _axis_name(result: Result, told: dict[str, str], is_share: bool) -> str:
+    measure = told["measure"]
+    what = f"mean {measure}" if measure in ("steps", "days") else measure.replace("_", " ")
+    what = what or ("probability" if is_share else "estimate")
+    differs = isinstance(result, CompareResult)
+    shown = ("points" if differs else "%") if is_share else getattr(result, "unit", "")
+    if (horizon := told["horizon"]) and is_share:
+        what += f" {'within ' if horizon[0].isdigit() else ''}{horizon}"
+    if told.get("basis") == "log":
+        what += " by the log"
+    if told.get("start_state", "entry") != "entry":
+        what += f" from {printable(told['start_state'])}"
+    level = f"with {100 * result.confidence_level:g} % interval"
+    return f"{'difference in ' if differs else ''}{what}{f' ({shown})' if shown else ''}, {level}"
+
+
+def _axes(ax: Axes | None, size: tuple[float, float]) -> Axes:
+    """Return the axes given, or new ones: ink on white, without a frame."""
+    if ax is None:
+        from matplotlib.figure import Figure
+        from matplotlib.pyplot import subplots
+
+        figure: Figure
+        figure, ax = subplots(figsize=size, layout="constrained")
+    for side in ("top", "right"):
+        ax.spines[side].set_visible(False)
+    for side in ("left", "bottom"):
+        ax.spines[side].set_color(GREY)
+    ax.tick_params(colors=INK, labelsize="small")
+    ax.xaxis.label.set_color(INK)
+    ax.yaxis.label.set_color(INK)
+    return ax
+
+
+def _number(value: float) -> str:
+    return f"{value:.3g}" if abs(value) < 100 else f"{value:,.0f}"
+
+
+def _listed(names: Sequence[str]) -> str:
+    return names[0] if len(names) == 1 else ", ".join(names[:-1]) + " or " + names[-1]

@@ -1,0 +1,128 @@
+"""Rows of results as words: what the text and the page of a summary both tell."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Hashable, Mapping
+from typing import TYPE_CHECKING, Any
+
+from journeys.checks import duration_us
+from journeys.questions.overview import Overview
+from journeys.questions.time_to_convert import IN_THE_END, SO_FAR
+from journeys.show.words import amount_with_interval, length_words, outcome_words, percent, share_with_interval
+from journeys.tally.tally import Tally
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+Row = Mapping[Hashable, Any]
+
+
+def tally_of(overview: Overview) -> Tally:
+    """Return the tally that an overview rests on."""
+    tally = overview.fit.tally
+    if tally is None:
+        msg = "overview: its fit has no tally; wanted the overview of a fit to a log"
+        raise ValueError(msg)
+    return tally
+
+
+def span_words(overview: Overview) -> str:
+    """Return from when to when the log reaches, and the level of the intervals."""
+    tally = tally_of(overview)
+    fine = "%Y-%m-%d" if tally.whole_days else "%Y-%m-%d %H:%M"
+    return (
+        f"Log from {tally.log_start.strftime(fine)} to {tally.as_of.strftime(fine)} UTC ({tally.days:.0f} days), "
+        f"{tally.n_rows:,} rows. Intervals at {100 * overview.conversion.confidence_level:g} %."
+    )
+
+
+def rows_of(frame: pd.DataFrame, **keys: str) -> list[dict[Hashable, Any]]:
+    """Return the rows with the given keys."""
+    for name, value in keys.items():
+        frame = frame[frame[name] == value]
+    return frame.to_dict("records")
+
+
+def share(row: Row, flag: str | None = None) -> str:
+    """Return the share in a row with its interval."""
+    return share_with_interval(row["estimate"], row["low"], row["high"], row["flag"] if flag is None else flag)
+
+
+def amount(row: Row) -> str:
+    """Return the number of steps or days in a row with its interval."""
+    return amount_with_interval(row["estimate"], row["low"], row["high"])
+
+
+def whole_amount(row: Row) -> str:
+    """Return a whole number of steps with its interval, where that is more than the number itself."""
+    if not all(math.isfinite(row[name]) for name in ("estimate", "low", "high")):
+        return amount(row)
+    steps, low, high = (f"{row[name]:,.0f}" for name in ("estimate", "low", "high"))
+    return steps if low == high else f"{steps} ({low}–{high})"
+
+
+def count(row: Row) -> str:
+    """Return how many of how many a row counts."""
+    return "" if math.isnan(row["n"]) else f"{int(row['n']):,} of {int(row['of']):,}"
+
+
+def notes_of(*flags: str) -> str:
+    """Return flags joined, each told once."""
+    return "; ".join(dict.fromkeys(part for flag in flags for part in parts_of(flag)))
+
+
+def parts_of(flag: str) -> list[str]:
+    """Return the texts that a flag is made of."""
+    return flag.split("; ") if flag else []
+
+
+def horizon_rows(overview: Overview) -> list[tuple[str, str, str, str]]:
+    """Return since when, share converted by the log and by the model, and note: within horizons and in the end."""
+    frame = overview.conversion.to_frame()
+    frame = frame[(frame["measure"] == "converted") & (frame["horizon"] != SO_FAR)]
+    told = []
+    for horizon in dict.fromkeys(frame["horizon"]):
+        by = {row["basis"]: row for row in rows_of(frame, horizon=horizon)}
+        since = horizon if horizon == IN_THE_END else f"within {length_words(duration_us(horizon, 'horizon'))}"
+        log, model = (share(by[basis]) if basis in by else "" for basis in ("log", "model"))
+        told.append((since, log, model, notes_of(*(row["flag"] for row in by.values()))))
+    return told
+
+
+def time_lines(overview: Overview) -> list[str]:
+    """Return how many steps and days the converted take, one sentence each."""
+    frame = overview.conversion.to_frame()
+    told = []
+    for unit, words in (("steps", "steps, the converting event counted"), ("days", "days from their first event")):
+        median, most, mean = (rows_of(frame, measure=name)[0] for name in (f"median_{unit}", f"q90_{unit}", unit))
+        told_as = whole_amount if unit == "steps" else amount
+        parts = (("half take at most", told_as(median)), ("90 % at most", told_as(most)), ("the mean is", amount(mean)))
+        said = [f"{start} {number}" for start, number in parts if number]
+        line = f"Of those who convert, {', '.join(said)} {words}" if said else f"{unit.capitalize()}: no answer"
+        notes = notes_of(*(row["flag"] for row in (median, most, mean)))
+        told.append(line + (f"; {notes}" if notes else ""))
+    return told
+
+
+def comeback_lines(overview: Overview) -> list[str]:
+    """Return how many of those whose journey ended have come back, a sentence per way of ending."""
+    if overview.back is None:
+        return []
+    frame, rules = overview.back.to_frame(), tally_of(overview).rules
+    told = []
+    for after in dict.fromkeys(frame["after"]):
+        mine = frame[(frame["after"] == after) & (frame["measure"] == "returned")]
+        so_far = rows_of(mine, horizon=SO_FAR)[0]
+        if not so_far["n_absences"]:
+            continue
+        ended = outcome_words(after, rules)
+        line = f"After {after}" if ended == after else f"Of those {ended}"
+        line += f", {percent(so_far['estimate'])} came back so far"
+        later = [row for row in rows_of(mine) if row["horizon"] != SO_FAR and not math.isnan(row["estimate"])]
+        if later:
+            row = later[-1]
+            within = length_words(duration_us(row["horizon"], "horizon"))
+            line += f"; {share(row)} within {within} of their last event, those still away accounted for"
+        told.append(line)
+    return told
