@@ -11,6 +11,11 @@ from journeys.checks import instant_text, instant_us, one_of
 COHORT, CAME_AFTER, PERIOD = "cohort", "came_after", "period"
 BUILT_IN = (COHORT, CAME_AFTER, PERIOD)
 COHORTS = ("day", "week", "month")
+# Columns that answers have of their own: a group column of that name could not stand beside them.
+OF_ANSWERS = (
+    "start_state", "state", "next_state", "stage", "outcome", "after", "touchpoint", "rule", "basis", "measure",
+    "horizon", "estimate", "std_error", "low", "high", "confidence_level", "flag", "section", "group", "bucket",
+)  # fmt: skip
 
 
 def columns(value: Any, name: str) -> tuple[str, ...]:
@@ -63,6 +68,11 @@ def group_faults(s: Mapping[str, Any]) -> list[str]:
         f"by: got {name!r}, which is the {role} column; wanted a column that tells groups of customers apart"
         for role in ("customer", "time", "sequence", "ended_before", "value")
         if (name := s[role]) is not None and name in s["by"]
+    ]
+    faults += [
+        f"by: got {name!r}, which is a column of the answers; wanted another name: rename it in the log"
+        for name in s["by"]
+        if name in OF_ANSWERS
     ]
     for column, setting, example in ((COHORT, "cohort", '"week"'), (PERIOD, "split_at", '["2026-01-01"]')):
         if column in s["by"] and not s[setting]:

@@ -15,9 +15,11 @@ from journeys.models.fit import JourneyFit
 from journeys.models.what_if import WhatIf
 from journeys.questions.comeback import ComebackResult, comeback
 from journeys.questions.compare import CompareResult, compare
+from journeys.questions.credit import CreditResult, credit
 from journeys.questions.first_passage import FirstPassageResult, first_passage
 from journeys.questions.moves import MovesResult, moves
 from journeys.questions.outcomes import OutcomesResult, outcomes
+from journeys.questions.removal import RemovalResult, removal
 from journeys.questions.stages import StagesResult, stages
 from journeys.questions.time_to_convert import IN_THE_END, SO_FAR, TimeToConvertResult, time_to_convert
 from journeys.tally.tally import Tally
@@ -26,8 +28,10 @@ if TYPE_CHECKING:
     import pandas as pd
 
 KEY_COLUMNS = (
-    "section", "start_state", "state", "next_state", "stage", "after", "outcome", "measure", "horizon", "basis",
+    "section", "start_state", "state", "next_state", "stage", "touchpoint", "rule", "after", "outcome", "measure",
+    "horizon", "basis",
 )  # fmt: skip
+CREDITED = ("even", "first", "last")
 # With more groups than these each is not fitted against all others.
 MOST_COMPARED = 30
 
@@ -80,6 +84,8 @@ class Overview:
         Who comes back after a lapse; None where nothing lapses.
     funnel : StagesResult or None
         The stages of the rules; None where none are named.
+    touched, credited : RemovalResult and CreditResult, or None
+        The touchpoints of the rules; None where none are named.
     groups : dict of str to TimeToConvertResult
         Conversion by each column that journeys are grouped by.
     against : dict of str to CompareResult
@@ -95,6 +101,8 @@ class Overview:
     matrix: MovesResult
     back: ComebackResult | None = None
     funnel: StagesResult | None = None
+    touched: RemovalResult | None = None
+    credited: CreditResult | None = None
     groups: dict[str, TimeToConvertResult] = field(default_factory=dict)
     against: dict[str, CompareResult] = field(default_factory=dict)
 
@@ -183,6 +191,8 @@ class Overview:
             "moves": self.matrix,
             "comeback": self.back,
             "stages": self.funnel,
+            "touchpoints": self.touched,
+            "credit": self.credited,
             **{f"by {column}": result for column, result in self.groups.items()},
             **{f"against the rest by {column}": result for column, result in self.against.items()},
         }
@@ -284,6 +294,8 @@ def summarise(
         matrix=moves(fit, confidence_level=level),
         back=None if rules.silence_us is None else comeback(tally, confidence_level=level),
         funnel=stages(fit, confidence_level=level) if rules.stages else None,
+        touched=removal(fit, confidence_level=level) if rules.touchpoints else None,
+        credited=credit(fit, rule=CREDITED, confidence_level=level) if rules.touchpoints else None,
         groups={name: time_to_convert(fit, horizons, by=name, confidence_level=level) for name in rules.by},
         against={
             name: compare(fit, by=name, confidence_level=level)

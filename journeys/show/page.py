@@ -2,10 +2,11 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Collection, Sequence
 from importlib.metadata import version
 
-from journeys.questions.overview import Overview
+from journeys.questions.overview import CREDITED, Overview
 from journeys.questions.time_to_convert import IN_THE_END
 from journeys.show.group_tables import group_sections
 from journeys.show.rows import (
@@ -90,6 +91,7 @@ def summary_markdown(overview: Overview) -> str:
         _horizons(overview),
         _lines(time_lines(overview)),
         *_section("## Stages", _stages(overview)),
+        *_section("## Touchpoints", _touchpoints(overview)),
         "## Where journeys end",
         _endings(overview),
         _lines(comeback_lines(overview)),
@@ -139,6 +141,23 @@ def _section(title: str, table: str) -> tuple[str, ...]:
 def _stages(overview: Overview) -> str:
     rows = stage_rows(overview)
     return _table(rows, ["stage", "reached", "of the stage before", "median days between", "the rest"]) if rows else ""
+
+
+def _touchpoints(overview: Overview) -> str:
+    touched, credited = overview.touched, overview.credited
+    if touched is None or credited is None:
+        return ""
+    shares = credited.to_frame()
+    rows = []
+    for row in rows_of(touched.to_frame()):
+        name = str(row["touchpoint"])
+        mine = {one["rule"]: share(one) for one in rows_of(shares, touchpoint=name)}
+        held = "" if math.isnan(row["order_held"]) else f"{row['order_held']:.0f} of 100"
+        told = (share(row), percent(row["share_in_log"]), held)
+        rows.append((name, *told, *(mine.get(rule, "") for rule in CREDITED), row["flag"]))
+    columns = ["touchpoint", "passed here, by the model", "by the log", "stayed ahead of the next"]
+    table = _table(rows, [*columns, *(f"credit, {rule}" for rule in CREDITED), "note"])
+    return f"{table}\n\n{_lines(list(dict.fromkeys((*touched.cautions, *credited.cautions))))}"
 
 
 def _endings(overview: Overview) -> str:
@@ -211,6 +230,7 @@ def _beliefs(overview: Overview) -> str:
 def _flag_lines(overview: Overview) -> list[str]:
     """Return what each flag on this page means, and which states it comes from."""
     shown = [overview.conversion.flag, overview.endings.flag]
+    shown += [part.flag for part in (overview.back, overview.touched) if part is not None]
     if len(overview.fit.states) <= WIDEST_MATRIX:
         # What was never seen is a dot on this page, without a note.
         shown.append(overview.matrix.flag[overview.matrix.estimates.value > 0])

@@ -13,6 +13,7 @@ from journeys.questions.comeback import NONE_SEEN, NOT_FOLLOWED, STILL_SILENCE
 from journeys.questions.linear import DOUBTFUL, TOO_FEW
 from journeys.questions.outcomes import UNREACHABLE
 from journeys.questions.time_to_convert import BETWEEN_BINS, NO_CURVE, TOO_LONG
+from journeys.questions.touch_shares import DIFFER, TOO_SHORT
 from journeys.questions.within import NO_UPPER_END
 
 UNDECIDED = "undecided yet"
@@ -29,6 +30,8 @@ FLAG_MEANINGS = {
     NO_UPPER_END: "the curve levels off within its interval, so the time has no upper bound",
     NO_CURVE: "the chain has too many states for a curve of time; ask first_passage for means",
     DOUBTFUL: "the number is too small or too large for the computer to tell it from nothing",
+    DIFFER: "the chain does not bear out what the journeys show: trust the log's share, and not the model's effect",
+    TOO_SHORT: "too many conversions of the chain lie beyond what the log has seen to compare the two",
     END_NOT_SEEN: "no stay there was followed as long as the silence, so the share that goes quiet is an upper bound",
     FEW_AT_END: f"fewer than {ENOUGH_AT_END} stays there were followed as long as the silence",
     COMPLETED_ONLY: "the longest stay there is still open, so only completed moves count; a silence would mend it",

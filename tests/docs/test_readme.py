@@ -23,6 +23,7 @@ from journeys.questions import (
     bootstrap,
     comeback,
     compare,
+    credit_by_log,
     curve_result,
     elapsed,
     linear,
@@ -35,7 +36,9 @@ from journeys.questions import (
     stage_rows,
     stages_by_log,
     time_to_convert,
+    touch_shares,
     within,
+    worth,
 )
 
 REPO = Path(__file__).resolve().parents[2]
@@ -203,9 +206,15 @@ def test_names_every_flag():
         quantiles.BY_CURVE, quantiles.TOO_LARGE, quantiles.NOT_IN_REACH, comeback.NOT_FOLLOWED,
         comeback.STILL_SILENCE, comeback.NONE_SEEN, within.NO_UPPER_END, stages_by_log.NOT_TO_THE_END,
         stage_rows.NEVER_SEEN, stage_rows.ABOVE_ONE, compare.ON_ONE_SIDE, removal.OFF_THE_WAY,
-        sensitivity.LESS_THAN_A_POINT, what_if.WHAT_IF, what_if.NEW_MOVE, "no sure entry",
+        touch_shares.DIFFER, touch_shares.TOO_SHORT, credit_by_log.BELOW_ZERO, credit_by_log.NOTHING_PAID,
+        worth.NOT_OF_A_PART, worth.NOTHING_IN_ALL, sensitivity.LESS_THAN_A_POINT, what_if.WHAT_IF, what_if.NEW_MOVE,
+        "no sure entry",
     }  # fmt: skip
-    with_numbers = {"11 of 30d followed", "followed for 29 days, no longer than the silence"}
+    with_numbers = {
+        "one customer holds 12 % of the value",
+        "11 of 30d followed",
+        "followed for 29 days, no longer than the silence",
+    }
     assert coded(table_after("Flags are words")) == known | with_numbers
 
 

@@ -97,6 +97,7 @@ def test_built_in_columns_come_with_their_settings() -> None:
         ({"by": ["period"]}, "by: got 'period', a built-in column, without split_at"),
         ({"by": ["who"]}, "by: got 'who', which is the customer column"),
         ({"by": ["a", "a"]}, "by: got 'a' twice"),
+        ({"by": ["state"]}, "by: got 'state', which is a column of the answers; wanted another name"),
         ({"by": 3}, "by: got 3; wanted the name of a column or a list"),
         ({"cohort": "year"}, "cohort: got 'year'; wanted one of 'day', 'week', 'month'"),
         ({"timezone": "Middle/Earth"}, "timezone: got 'Middle/Earth', which this machine does not know"),

@@ -274,3 +274,14 @@ def test_hostile_event_names_are_never_markup(name: str, tmp_path: Path) -> None
     from_csv = pd.read_csv(tmp_path / "summary.csv", keep_default_na=False).start_state
     assert ("'" + name if name.startswith("=") else name) in from_csv.tolist()
     assert name in pd.read_parquet(tmp_path / "summary.parquet").start_state.tolist()
+
+
+def test_touchpoints_have_a_section_with_their_cautions() -> None:
+    log = small_log()
+    basket = log[log["what"] == "visit"].iloc[::2].assign(what="basket")
+    log = pd.concat([log, basket.assign(when=basket["when"] + pd.Timedelta(minutes=5))])
+    page = summary_markdown(overview_of(log, touchpoints=["visit", "basket"]))
+    rows = table(section(page, "Touchpoints"))
+    assert list(rows["touchpoint"]) == ["visit", "basket"]
+    assert rows["passed here, by the model"][0].startswith("100.0 %")
+    assert "association, not cause" in section(page, "Touchpoints")

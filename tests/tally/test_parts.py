@@ -130,3 +130,18 @@ def test_too_many_groups_of_journeys(monkeypatch: pytest.MonkeyPatch) -> None:
 
 def test_sums_are_named_for_every_table() -> None:
     assert set(SUMS) == set(KEYS)
+
+
+def test_a_period_in_which_nobody_enters_keeps_the_people_who_move() -> None:
+    days = ["2025-01-30", "2025-02-02", "2025-02-05", "2025-02-03", "2025-02-04"]
+    frame = pd.DataFrame({
+        "member": [1, 1, 1, 2, 2], "event": ["visit", "visit", "joined", "visit", "joined"],
+        "happened": pd.to_datetime(days, utc=True),
+    })  # fmt: skip
+    cut = jn.JourneyRules(
+        "member", "happened", "event", converted="joined", silence="30d", split_at=["2025-02-01"],
+        complete_history=True, as_of="2025-04-01",
+    )  # fmt: skip
+    part = jn.tally(frame, cut).split("period")[("from 2025-02-01",)]
+    assert set(part.moves["bucket"]) <= set(np.flatnonzero(part.customers["people"]))
+    assert jn.JourneyModel().fit(part).matrix.loc["visit", "joined"] == 1
