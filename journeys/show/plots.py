@@ -23,8 +23,10 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from journeys.questions.compare import CompareResult
+from journeys.questions.credit import CreditResult
 from journeys.questions.curve_result import PassageCurve
 from journeys.questions.linear import TOO_FEW
+from journeys.questions.removal import RemovalResult
 from journeys.results import Result, printable
 
 if TYPE_CHECKING:
@@ -191,7 +193,7 @@ def intervals(
     """
     frame, told = _rows(result, measure, horizon, start)
     kind = told["measure"].split(" within ")[0]
-    is_share = kind in _SHARES or (not kind and bool(frame["estimate"].dropna().between(0, 1).all()))
+    is_share = kind in _SHARES or (not kind and bool(frame["estimate"].dropna().between(-1, 1).all()))
     factor = 100.0 if is_share else 1.0
     values, low, high = (factor * frame[name].to_numpy(dtype=float) for name in ("estimate", "low", "high"))
     flagged = (frame["flag"] != "").to_numpy()
@@ -257,6 +259,8 @@ def _rows(
         shown = [*groups, *(name for name in shown if frame.loc[~blank, name].nunique() > 1)]
         # A share of two or three journeys has an interval so wide that no other could be read beside it.
         frame.loc[frame["flag"].str.contains(TOO_FEW), ["estimate", "low", "high"]] = np.nan
+    elif isinstance(result, CreditResult):
+        shown = [name for name in shown if frame[name].nunique() > 1]
     between = " · " if groups else ", "
     labels = [between.join(filter(None, map(str, parts))) for parts in frame[shown].to_numpy(dtype=object)]
     return frame.assign(name=labels).reset_index(drop=True), told
@@ -271,7 +275,7 @@ def _not_there(name: str, wanted: str, known: Sequence[str]) -> str:
 def _axis_name(result: Result, told: dict[str, str], is_share: bool) -> str:
     measure = told["measure"]
     what = f"mean {measure}" if measure in ("steps", "days") else measure.replace("_", " ")
-    what = what or ("probability" if is_share else "estimate")
+    what = _of_touchpoints(result, measure) or what or ("probability" if is_share else "estimate")
     differs = isinstance(result, CompareResult)
     shown = ("points" if differs else "%") if is_share else getattr(result, "unit", "")
     if (horizon := told["horizon"]) and is_share:
@@ -282,6 +286,16 @@ def _axis_name(result: Result, told: dict[str, str], is_share: bool) -> str:
         what += f" from {printable(told['start_state'])}"
     level = f"with {100 * result.confidence_level:g} % interval"
     return f"{'difference in ' if differs else ''}{what}{f' ({shown})' if shown else ''}, {level}"
+
+
+def _of_touchpoints(result: Result, measure: str) -> str:
+    """Return what a number about touchpoints is, nothing of other answers."""
+    if isinstance(result, CreditResult):
+        return f"share of the {result.weight if result.weight == 'conversions' else 'value of conversions'}"
+    if isinstance(result, RemovalResult):
+        told = {"stop": "conversions that passed here", "divert": "conversions lost"}
+        return told.get(result.how, f"{measure} saved")
+    return ""
 
 
 def _axes(ax: Axes | None, size: tuple[float, float]) -> Axes:

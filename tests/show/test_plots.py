@@ -239,3 +239,20 @@ def test_matplotlib_is_loaded_when_the_first_picture_is_drawn() -> None:
         "assert 'intervals' in dir(jn.plots)"
     )
     subprocess.run([sys.executable, "-c", code], check=True)
+
+
+def test_numbers_about_touchpoints_say_what_they_are() -> None:
+    chain = pd.DataFrame(
+        [[0.0, 0.5, 0.3, 0.2], [0.2, 0.0, 0.5, 0.3]], index=["poster", "search"],
+        columns=["poster", "search", "joined", "left"],
+    )  # fmt: skip
+    fit = jn.JourneyFit.from_matrix(chain)
+    said = {
+        how: plots.intervals(jn.removal(fit, "joined", how=how)).get_xlabel() for how in ("stop", "divert", "pass")
+    }
+    assert said["stop"].startswith("conversions that passed here (%)")
+    assert said["divert"].startswith("conversions lost (%)")
+    assert said["pass"].startswith("steps saved")
+    credit = plots.intervals(jn.credit(fit, "joined", basis="model"))
+    assert credit.get_xlabel().startswith("share of the conversions (%)")
+    assert [label.get_text() for label in credit.get_yticklabels()] == ["poster", "search", "none of them"]
