@@ -156,6 +156,7 @@ def answers(asked: Sequence[Asked], truth: dict[str, float]) -> pd.DataFrame:
                         "method": [method for method, _ in one.names],
                         "answer": [name for _, name in one.names],
                         "level": level,
+                        "shown": ~np.isnan(one.low[:, i]),
                         "flagged": one.flagged | np.isnan(one.low[:, i]),
                         "width": one.high[:, i] - one.low[:, i],
                         "held": (one.low[:, i] <= aim) & (aim <= one.high[:, i]),
@@ -170,7 +171,8 @@ def answers(asked: Sequence[Asked], truth: dict[str, float]) -> pd.DataFrame:
 def coverage(found: pd.DataFrame) -> pd.DataFrame:
     """Return coverage, its Monte Carlo error, mean width and the flagged share, of each answer and of all moves.
 
-    Flagged answers are left out of all but the flagged share. The bias is in standard deviations of
+    Flagged answers are left out of all but the flagged share and `all %`, the coverage of all that have an interval,
+    flagged or not. The bias is in standard deviations of
     the answer; where many are flagged, those that are not are a choice of the larger ones.
     """
     moves = found[found["answer"].str.startswith(MOVE)].assign(answer="all moves together")
@@ -185,9 +187,10 @@ def coverage(found: pd.DataFrame) -> pd.DataFrame:
         sd = kept["error"].std()
         rows.append(
             (*key, n, 100 * group["flagged"].mean(), 100 * share, 100 * spread, kept["width"].mean(),
-             kept["error"].mean() / sd if sd > 0 else np.nan)
+             kept["error"].mean() / sd if sd > 0 else np.nan, 100 * group.loc[group["shown"], "held"].mean())
         )  # fmt: skip
     columns = ["method", "answer", "level", "logs", "flagged %", "coverage %", "MC error", "mean width", "bias in sd"]
+    columns.append("all %")
     return pd.DataFrame(rows, columns=columns)
 
 
@@ -199,7 +202,8 @@ def told(table: pd.DataFrame) -> str:
     at = [(name, level) for level in LEVELS for name in ("coverage %", "MC error", "mean width")]
     wide = wide.reindex(columns=pd.MultiIndex.from_tuples(at))
     wide.columns = [f"{name} at {100 * level:g} %" for name, level in at]
-    first = table[table["level"] == LEVELS[0]].set_index(["method", "answer"])[["logs", "flagged %", "bias in sd"]]
+    first = table[table["level"] == LEVELS[0]].set_index(["method", "answer"])
+    first = first[["logs", "flagged %", "bias in sd", "all %"]]
     return first.join(wide).reset_index().to_string(index=False, float_format="{:.4g}".format)
 
 

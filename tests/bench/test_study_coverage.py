@@ -53,6 +53,8 @@ def test_what_is_counted() -> None:
     assert table["flagged %"].tolist() == [25.0, 25.0]
     assert table["coverage %"].tolist() == pytest.approx([200 / 3, 100 / 3])
     assert table["MC error"].tolist() == pytest.approx([100 * np.sqrt(2 / 27)] * 2)
+    # the flagged one has an interval that holds the truth, at 95 % and at 90 %
+    assert table["all %"].tolist() == [75.0, 50.0]
     assert table["mean width"].tolist() == pytest.approx([0.25, 0.25])
 
 
