@@ -14,7 +14,7 @@ COHORTS = ("day", "week", "month")
 # Columns that answers have of their own: a group column of that name could not stand beside them.
 OF_ANSWERS = (
     "start_state", "state", "next_state", "stage", "outcome", "after", "touchpoint", "rule", "basis", "measure",
-    "horizon", "estimate", "std_error", "low", "high", "confidence_level", "flag", "section", "group", "bucket",
+    "horizon", "estimate", "std_error", "low", "high", "confidence_level", "flag", "section", "bucket",
 )  # fmt: skip
 
 

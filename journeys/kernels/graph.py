@@ -13,6 +13,9 @@ if TYPE_CHECKING:
     from scipy.sparse import csr_array
 
 
+_SWEEPS = 12
+
+
 @dataclass(frozen=True, eq=False)
 class Classes:
     """Classes of states that can reach one another.
@@ -64,6 +67,19 @@ def reachable_from(n: int, src: IntArray, dst: IntArray, starts: BoolArray) -> B
     >>> reachable_from(4, np.array([0, 1, 3]), np.array([1, 2, 0]), np.arange(4) == 1).tolist()
     [False, True, True, False]
     """
+    found = starts.copy()
+    # most chains are shallow: a few sweeps over the moves find all, before a search would have been set up
+    for _ in range(_SWEEPS):
+        further = found.copy()
+        further[dst[found[src]]] = True
+        if (further == found).all():
+            return found
+        found = further
+    return _searched(n, src, dst, found)
+
+
+def _searched(n: int, src: IntArray, dst: IntArray, starts: BoolArray) -> BoolArray:
+    """Do the same by one search, however deep the graph."""
     from scipy.sparse.csgraph import breadth_first_order
 
     # one more node leads to all starts, so that one search does
