@@ -9,7 +9,6 @@ from journeys.questions.comeback import comeback
 from journeys.questions.compare import compare
 from journeys.questions.credit import credit
 from journeys.questions.first_passage import first_passage
-from journeys.questions.later import Later
 from journeys.questions.outcomes import outcomes
 from journeys.questions.overview import summarise
 from journeys.questions.passage_curve import passage_curve
@@ -19,13 +18,11 @@ from journeys.questions.sensitivity import sensitivity
 from journeys.questions.stages import stages
 from journeys.questions.time_to_convert import time_to_convert
 from journeys.questions.worth import worth
+from journeys.show import plots
 from journeys.tally.count import count_log as tally
 from journeys.tally.tally import Tally
 
 __version__ = "0.1.0"
-
-# Pictures are few calls' business: the module is loaded when it is first used.
-plots = Later("journeys.show.plots")
 
 __all__ = [
     "JourneyFit",

@@ -155,7 +155,7 @@ def test_import_is_light() -> None:
     loaded = loaded_after("import journeys")
     assert "journeys.models.fit" in loaded
     extras = {"statsmodels", "matplotlib", "jinja2", "polars", "duckdb", "numba", "tqdm", "scipy.stats", "scipy.sparse"}
-    assert not loaded & {*extras, "pandas", "scipy.linalg", "journeys.show", "journeys.command"}
+    assert not loaded & {*extras, "pandas", "scipy.linalg", "journeys.show.summary", "journeys.command"}
 
 
 @pytest.mark.parametrize("kind", ["parquet", "csv", "arrow", "folder"])
@@ -170,7 +170,7 @@ def test_counting_files_is_light(kind: str, tmp_path: Path) -> None:
     words = ["tally", str(kept_as(kind, tmp_path)), "--rules", str(rules), "--out", str(tmp_path / "tally.parquet")]
     loaded = loaded_after(f"from journeys.command.main import main; assert main({words!r}) == 0")
     assert "journeys.tally.store" in loaded
-    assert not loaded & {"pandas", "scipy.stats", "journeys.show"}
+    assert not loaded & {"pandas", "scipy.stats", "journeys.show.summary"}
     counted = journeys.Tally.load(tmp_path / "tally.parquet")
     expected = journeys.tally(DEMO / "club_log.parquet", journeys.JourneyRules.from_toml(DEMO / "rules.toml"))
     for name in ("moves", "entries", "journeys", "customers"):

@@ -6,9 +6,10 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from journeys.kernels.bins import elapsed_edges
 from journeys.kernels.records import FIRST_OUTCOME
-from journeys.kernels.sojourn import fit_stays
 from journeys.models.stays import journey_stays, outcome_column
+from journeys.questions.within import ended_within
 from journeys.tally.tally import Tally
 
 if TYPE_CHECKING:
@@ -36,11 +37,10 @@ def converted_by_log(tally: Tally) -> pd.DataFrame:
     """
     import pandas as pd
 
-    stays, _ = journey_stays(tally)
-    found = fit_stays(stays, 0.0 if tally.whole_days else 0.5)
-    winning = np.isin(stays.target, outcome_column(FIRST_OUTCOME + np.arange(len(tally.rules.converted))))
-    share = np.bincount(stays.bin[winning], found.q[winning], stays.n_bins).cumsum()
-    followed = found.at_risk[0] > 0
-    return pd.DataFrame(
-        {"time": stays.upper[followed], "estimate": share[followed], "n_at_risk": found.at_risk[0][followed]}
-    )
+    edges = elapsed_edges(tally.rules.silence_us, tally.whole_days, tally.rules.horizons_us)
+    converted = outcome_column(FIRST_OUTCOME + np.arange(len(tally.rules.converted)))
+    curve = ended_within(*journey_stays(tally), converted, edges)
+    at_risk = curve.found.at_risk[0]
+    followed = at_risk > 0
+    times = curve.stays.upper[followed]
+    return pd.DataFrame({"time": times, "estimate": curve.share[followed], "n_at_risk": at_risk[followed]})
