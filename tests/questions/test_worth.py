@@ -108,7 +108,7 @@ def test_coverage() -> None:
     """Nominal 95 %, 40 logs of 300 journeys. What is seen of the journeys depends on when they began, not on worth;
     the truth is the mean of 12,000 journeys told to the end.
     """
-    _, all_of_them = slow_sums.told_log(12_000, np.random.default_rng(1), days=100_000)
+    _, all_of_them = slow_sums.told_log(12_000, np.random.default_rng(1), days=60_000)
     paid = np.array([one.worth for one in all_of_them])
     won = np.array([one.outcome == "joined" for one in all_of_them])
     truths = [paid.mean(), paid[won].mean()]
