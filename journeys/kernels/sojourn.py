@@ -8,12 +8,13 @@ from __future__ import annotations
 
 import numpy as np
 
-from journeys.kernels.arrays import FloatArray, IntArray, sum_at
+from journeys.kernels.arrays import BoolArray, FloatArray, IntArray, sum_at
 from journeys.kernels.stays import BucketStays, StayFit, Stays
 
 __all__ = ["BucketStays", "StayFit", "Stays", "cell_influence", "fit_stays", "move_influence"]
 
 _VERY_FEW = 2_000  # so few stays are summed one by one: a sparse product takes longer to set up
+_PANEL = 1 << 17  # numbers of one kind worked on together
 _FEW = 8  # below one filled place in so many, a sparse product is the quicker one
 
 
@@ -116,7 +117,7 @@ def fit_stays(stays: Stays, open_weight: float = 0.5) -> StayFit:
     moves, where = np.unique(keys, return_inverse=True)
     cell_move, survivor_move = where[: len(q)], np.full(m, -1, dtype=np.int64)
     survivor_move[keeps] = where[len(q) :]
-    w = stays.survivor_dwell
+    w = np.broadcast_to(stays.survivor_dwell, (m,))[keeps]
 
     def gather(per_cell: FloatArray, per_survivor: FloatArray) -> FloatArray:
         return sum_at(where, np.concatenate([per_cell, per_survivor]), len(moves))
@@ -173,6 +174,17 @@ def _by_state(state: IntArray, n_states: int) -> tuple[IntArray, IntArray]:
     return order, np.searchsorted(state[order], np.arange(n_states + 1))
 
 
+def _panels(size: IntArray, alone: BoolArray) -> list[tuple[int, int]]:
+    """Runs of rows to be worked on together: as many as stay small, those with many stays by themselves."""
+    found, first, held = [], 0, 0
+    for i, (more, own) in enumerate(zip(size.tolist(), alone.tolist(), strict=True)):
+        if i > first and (own or alone[i - 1] or held + more > _PANEL):
+            found.append((first, i))
+            first, held = i, 0
+        held += more
+    return [(i, j) for i, j in (*found, (first, len(size))) if size[i:j].any()]
+
+
 def move_influence(
     fit: StayFit, stays: Stays, buckets: BucketStays
 ) -> tuple[FloatArray, FloatArray, FloatArray]:
@@ -221,33 +233,44 @@ def move_influence(
     result = np.stack([sum_at(key, own * v[buckets.cell], g * n_moves).reshape(g, n_moves) for v in values])
 
     cells, cell_at = _by_state(stays.state, m)
-    ended, ended_at = _by_state(stays.state[buckets.cell], m)
+    of_ended = stays.state[buckets.cell]
+    ended, ended_at = _by_state(of_ended, m)
     still, still_at = _by_state(buckets.open_state, m)
     kept, kept_at = _by_state(buckets.survivor_state, m)
     move_at = np.searchsorted(fit.move_state, np.arange(m + 1))
-    powers = np.array([1.0, stays.survivor_dwell, stays.survivor_dwell**2])
-    for i in np.flatnonzero(np.diff(move_at)):
-        first, width = move_at[i], move_at[i + 1] - move_at[i]
-        c = cells[cell_at[i] : cell_at[i + 1]]
-        local = stays.bin[c] * width + fit.cell_move[c] - first
-        inflow = np.concatenate(
-            [sum_at(local, fit.q[c] * v[c], k * width).reshape(k, width) for v in values], axis=1
+    widths = np.diff(move_at)
+    powers = np.broadcast_to(stays.survivor_dwell, (m,))[:, None] ** np.arange(3)
+    for i, j in _panels(3 * k * widths, np.diff(ended_at) * _FEW >= g * k):
+        rows, width = j - i, int(widths[i:j].max())
+        c = cells[cell_at[i] : cell_at[j]]
+        own_row = stays.state[c] - i
+        local = (stays.bin[c] * rows + own_row) * width + fit.cell_move[c] - move_at[stays.state[c]]
+        inflow = np.stack(
+            [sum_at(local, fit.q[c] * v[c], k * rows * width).reshape(k, rows, width) for v in values], axis=2
         )
-        tail = np.zeros((3, width))
-        if fit.survivor_move[i] >= 0:
-            tail[:, fit.survivor_move[i] - first] = fit.survival_end[i] * powers
-        risk, hazard = fit.at_risk[i][:, None], fit.hazard_all[i][:, None]
-        takes, pull, sofar = _pull(inflow, tail.ravel(), hazard, risk)
-        e = ended[ended_at[i] : ended_at[i + 1]]
-        o = still[still_at[i] : still_at[i + 1]]
-        s = kept[kept_at[i] : kept_at[i + 1]]
-        block = _crossed(buckets.bucket[e], stays.bin[buckets.cell[e]], buckets.n[e], takes + sofar, g)
+        tail = np.zeros((rows, 3, width))
+        ends = np.flatnonzero(fit.survivor_move[i:j] >= 0)
+        tail[ends, :, fit.survivor_move[i + ends] - move_at[i + ends]] = fit.survival_end[i + ends, None] * powers[i + ends]
+        risk, hazard = (x[i:j].T[:, :, None, None] for x in (fit.at_risk, fit.hazard_all))
+        takes, pull, sofar = _pull(inflow, tail, hazard, risk)
+
+        def crossed(row: IntArray, bucket: IntArray, at: IntArray, n: FloatArray, weights: FloatArray) -> FloatArray:
+            flat = weights.reshape(k * rows, 3 * width)
+            return _crossed((row - i) * g + bucket, at * rows + row - i, n, flat, rows * g)
+
+        e = ended[ended_at[i] : ended_at[j]]
+        o = still[still_at[i] : still_at[j]]
+        s = kept[kept_at[i] : kept_at[j]]
+        block = crossed(of_ended[e], buckets.bucket[e], stays.bin[buckets.cell[e]], buckets.n[e], takes + sofar)
         if len(o):
             weights = sofar - fit.open_weight * pull
-            block += _crossed(buckets.open_bucket[o], buckets.open_bin[o], buckets.open_n[o], weights, g)
+            block += crossed(buckets.open_state[o], buckets.open_bucket[o], buckets.open_bin[o], buckets.open_n[o], weights)
+        block = block.reshape(rows, g, 3, width)
         if len(s):
-            block += np.outer(sum_at(buckets.survivor_bucket[s], buckets.survivor_n[s], g), sofar[-1])
-        result[:, :, first : first + width] -= block.reshape(g, 3, width).transpose(1, 0, 2)
+            place = (buckets.survivor_state[s] - i) * g + buckets.survivor_bucket[s]
+            block += sum_at(place, buckets.survivor_n[s], rows * g).reshape(rows, g, 1, 1) * sofar[-1][:, None]
+        has = np.arange(width) < widths[i:j, None]
+        result[:, :, move_at[i] : move_at[j]] -= block.transpose(2, 1, 0, 3)[:, :, has]
     return result[0], result[1], result[2]
 
 

@@ -205,8 +205,11 @@ def with_dead_ends(
         Where each move came from in the input, -1 for an added one.
     """
     rows = np.setdiff1d(np.arange(nodes.n_rows), state)
+    labels = nodes.labels
     for row in rows:
-        row_flags[nodes.labels[row]] = NO_WAY_OUT
+        # told last, whatever else was told of the row
+        row_flags.pop(labels[row], None)
+        row_flags[labels[row]] = NO_WAY_OUT
     if len(rows):
         names = ", ".join(nodes.labels[row] for row in rows[:5])
         warnings.warn(f"no move out of {names} was seen: taken as never left", DeadEndWarning, stacklevel=4)

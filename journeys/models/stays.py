@@ -7,10 +7,11 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from journeys.kernels.arrays import BoolArray, FloatArray, IntArray, sum_at
+from journeys.kernels.arrays import BoolArray, FloatArray, IntArray, distinct, sum_at
 from journeys.kernels.bins import DAY_US, bin_bounds_days, bin_of, dwell_edges, elapsed_edges
 from journeys.kernels.records import FIRST_OUTCOME, LAPSED, OPEN
 from journeys.kernels.stays import BucketStays, Stays
+from journeys.models.places import Places
 from journeys.tally.accumulate import Columns, join_limbs
 from journeys.tally.tally import Tally
 
@@ -67,37 +68,54 @@ def move_stays(tally: Tally, *, censored: bool) -> tuple[Stays, BucketStays]:
     by_bucket : BucketStays
         The same stays by non-empty bucket.
     """
-    nodes, rules, moves = nodes_of(tally), tally.rules, tally.moves
-    edges = dwell_edges(rules.silence_us, tally.whole_days)
-    bucket = live_buckets(tally)
-    place = _node_of_code(tally, nodes)
-    lapse_survives = rules.silence_us is not None and rules.repeats == "keep"
-    n_bins = int(moves["bin"].max()) + 1 if len(moves["n"]) else 1
-    if rules.silence_us is not None and lapse_survives:
-        n_bins = int(bin_of(np.array([rules.silence_us]), edges)[0]) + 1
-    lower, upper = bin_bounds_days(edges, n_bins)
+    nodes = nodes_of(tally)
+    own, first = _node_of_code(tally, nodes)[None], np.array([0, nodes.n_rows])
+    places = Places(own, first, nodes.n_rows, len(nodes.outcomes))
+    return placed_stays(tally, places, live_buckets(tally), censored=censored)
+
+
+def placed_stays(tally: Tally, places: Places, bucket: IntArray, *, censored: bool) -> tuple[Stays, BucketStays]:
+    """Return the stays in the rows of a chain of one or of several groups, in all and by bucket.
+
+    Parameters
+    ----------
+    tally : Tally
+        The counts.
+    places : Places
+        The rows.
+    bucket : int array
+        Number of each bucket; the largest tells how many there are.
+    censored : bool
+        As in `move_stays`.
+    """
+    moves, of_move = places.table(tally.moves)
+    sure = tally.entries["sure"] == 1
+    entries, of_entry = places.table({name: column[sure] for name, column in tally.entries.items()})
+    lapse_survives = tally.rules.silence_us is not None and tally.rules.repeats == "keep"
+    lower, upper, survivor_dwell = _bins(tally, places, moves, of_move, lapse_survives=lapse_survives)
+    n_bins, n_sure = len(lower), len(entries["n"])
 
     is_open = moves["next"] == OPEN
     survives = (moves["next"] == LAPSED) & lapse_survives
     ended = ~is_open & ~survives
-    sure = tally.entries["sure"] == 1
-    row = place[moves["state"]]
-    whose = np.concatenate([bucket[tally.entries["bucket"][sure]], bucket[moves["bucket"][ended]]])
-    state = np.concatenate([np.zeros(int(sure.sum()), np.int64), row[ended]])
-    target = np.concatenate([place[tally.entries["state"][sure]], place[moves["next"][ended]]])
-    at = np.concatenate([np.zeros(int(sure.sum()), np.int64), moves["bin"][ended]])
-    n = np.concatenate([tally.entries["n"][sure], moves["n"][ended]]).astype(np.float64)
-    dwell = join_limbs(moves, "dwell")[ended] / DAY_US
-    total = np.concatenate([np.zeros(int(sure.sum())), dwell])
-    key = (state * nodes.n_nodes + target) * n_bins + at
-    cells, cell = np.unique(key, return_inverse=True)
+    row = places.first[of_move] + places.own_node(of_move, moves["state"])
+    whose = bucket[np.concatenate([entries["bucket"], moves["bucket"][ended]])]
+    state = np.concatenate([places.first[of_entry], row[ended]])
+    own = np.concatenate(
+        [places.own_node(of_entry, entries["state"]), places.own_node(of_move[ended], moves["next"][ended])]
+    )
+    at = np.concatenate([np.zeros(n_sure, np.int64), moves["bin"][ended]])
+    n = np.concatenate([entries["n"], moves["n"][ended]]).astype(np.float64)
+    total = np.concatenate([np.zeros(n_sure), join_limbs(moves, "dwell")[ended] / DAY_US])
+    cells, cell = distinct((state * places.width + own) * n_bins + at, places.n_rows * places.width * n_bins)
     kept = is_open & censored
+    cell_state = cells // n_bins // places.width
     stays = Stays(
-        n_states=nodes.n_rows,
-        n_targets=nodes.n_nodes,
+        n_states=places.n_rows,
+        n_targets=places.n_nodes,
         n_bins=n_bins,
-        state=cells // n_bins // nodes.n_nodes,
-        target=cells // n_bins % nodes.n_nodes,
+        state=cell_state,
+        target=places.node(cell_state, cells // n_bins % places.width),
         bin=cells % n_bins,
         n=sum_at(cell, n, len(cells)),
         total=sum_at(cell, total, len(cells)),
@@ -106,9 +124,9 @@ def move_stays(tally: Tally, *, censored: bool) -> tuple[Stays, BucketStays]:
         open_state=row[kept],
         open_bin=moves["bin"][kept],
         open_n=moves["n"][kept].astype(np.float64),
-        survivor_n=sum_at(row[survives], moves["n"][survives], nodes.n_rows),
-        survivor_target=None if rules.silence_us is None else nodes.n_nodes - 1,
-        survivor_dwell=float(upper[-1]),
+        survivor_n=sum_at(row[survives], moves["n"][survives], places.n_rows),
+        survivor_target=None if tally.rules.silence_us is None else places.n_nodes - 1,
+        survivor_dwell=survivor_dwell,
     )
     by_bucket = BucketStays(
         n_buckets=int(bucket.max()) + 1,
@@ -125,6 +143,21 @@ def move_stays(tally: Tally, *, censored: bool) -> tuple[Stays, BucketStays]:
         survivor_n=moves["n"][survives].astype(np.float64),
     )
     return stays, by_bucket
+
+
+def _bins(
+    tally: Tally, places: Places, moves: Columns, of_move: IntArray, *, lapse_survives: bool
+) -> tuple[FloatArray, FloatArray, float | FloatArray]:
+    """Return the edges of the bins in days, and the dwell of a stay that outlives the last bin of its group."""
+    silence_us = tally.rules.silence_us
+    edges = dwell_edges(silence_us, tally.whole_days)
+    if silence_us is not None and lapse_survives:
+        lower, upper = bin_bounds_days(edges, int(bin_of(np.array([silence_us]), edges)[0]) + 1)
+        return lower, upper, float(upper[-1])
+    last = np.zeros(len(places.first) - 1, np.int64)
+    np.maximum.at(last, of_move, moves["bin"])
+    lower, upper = bin_bounds_days(edges, int(last.max()) + 1)
+    return lower, upper, float(upper[last[0]]) if len(last) == 1 else np.repeat(upper[last], np.diff(places.first))
 
 
 def without_open(stays: Stays, by_bucket: BucketStays, rows: np.ndarray) -> tuple[Stays, BucketStays]:
