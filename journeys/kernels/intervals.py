@@ -7,7 +7,7 @@ from typing import Literal
 import numpy as np
 import numpy.typing as npt
 
-from journeys.kernels.arrays import FloatArray
+from journeys.kernels.arrays import FloatArray, IntArray
 
 Side = Literal["both", "lower", "upper"]
 
@@ -65,7 +65,7 @@ def clopper_pearson(
 
 
 def variance_from_buckets(
-    influence: FloatArray, n_buckets: int | None = None
+    influence: FloatArray, n_buckets: int | IntArray | None = None
 ) -> tuple[FloatArray, FloatArray]:
     """Variance of an answer from the influence of each bucket of customers.
 
@@ -73,8 +73,8 @@ def variance_from_buckets(
     ----------
     influence : float array, shape (G, ...)
         Influence of each bucket; rows of empty buckets are 0.
-    n_buckets : int, optional
-        Number of buckets that are not empty; default all rows.
+    n_buckets : int or int array of shape (...), optional
+        Number of buckets that are not empty, of all answers or of each; default all rows.
 
     Returns
     -------
@@ -98,16 +98,15 @@ def variance_from_buckets(
     >>> round(float(variance), 4), round(float(df), 4)
     (0.1333, 3.0)
     """
-    g = len(influence) if n_buckets is None else n_buckets
     shape = influence.shape[1:]
-    if g < 2:
-        return np.full(shape, np.nan), np.full(shape, np.nan)
+    g = np.asarray(len(influence) if n_buckets is None else n_buckets, dtype=np.float64)
+    g = np.where(g < 2, np.nan, g)
     # scaled first: fourth powers of small influences would vanish
     scale = np.max(np.abs(influence), axis=0, initial=0.0)
     square = (influence / np.where(scale > 0, scale, 1.0)) ** 2
     m2, m4 = square.sum(axis=0) / g, (square**2).sum(axis=0) / g
     spread = m4 - m2**2
-    df = np.full(shape, np.inf)
+    df = np.where(np.isnan(g), np.nan, np.full(shape, np.inf))
     np.divide(2.0 * g * m2**2, spread, out=df, where=spread > 0)
     return g / (g - 1.0) * square.sum(axis=0) * scale**2, np.clip(df, 1.0, g - 1.0)
 

@@ -185,9 +185,7 @@ def _panels(size: IntArray, alone: BoolArray) -> list[tuple[int, int]]:
     return [(i, j) for i, j in (*found, (first, len(size))) if size[i:j].any()]
 
 
-def move_influence(
-    fit: StayFit, stays: Stays, buckets: BucketStays
-) -> tuple[FloatArray, FloatArray, FloatArray]:
+def move_influence(fit: StayFit, stays: Stays, buckets: BucketStays, n_moments: int = 3) -> tuple[FloatArray, ...]:
     """Influence of each bucket on every move.
 
     The derivative of `probability`, `mean` and `second` of each move by the number of
@@ -201,10 +199,12 @@ def move_influence(
         The stays of all buckets together.
     buckets : BucketStays
         The same stays by bucket.
+    n_moments : int, default 3
+        1 for the probability alone.
 
     Returns
     -------
-    tuple of three float arrays, each of shape (n_buckets, n_moves)
+    tuple of `n_moments` float arrays, each of shape (n_buckets, n_moves)
         For the probability, the mean and the second moment.
 
     References
@@ -229,7 +229,7 @@ def move_influence(
     m, k, g, n_moves = stays.n_states, stays.n_bins, buckets.n_buckets, len(fit.probability)
     own = buckets.n * _direct(fit, stays)[buckets.cell]
     key = buckets.bucket * n_moves + fit.cell_move[buckets.cell]
-    values = np.stack([np.ones_like(fit.tau), fit.tau, fit.tau2])
+    values = np.stack([np.ones_like(fit.tau), fit.tau, fit.tau2][:n_moments])
     result = np.stack([sum_at(key, own * v[buckets.cell], g * n_moves).reshape(g, n_moves) for v in values])
 
     cells, cell_at = _by_state(stays.state, m)
@@ -239,8 +239,8 @@ def move_influence(
     kept, kept_at = _by_state(buckets.survivor_state, m)
     move_at = np.searchsorted(fit.move_state, np.arange(m + 1))
     widths = np.diff(move_at)
-    powers = np.broadcast_to(stays.survivor_dwell, (m,))[:, None] ** np.arange(3)
-    for i, j in _panels(3 * k * widths, np.diff(ended_at) * _FEW >= g * k):
+    powers = np.broadcast_to(stays.survivor_dwell, (m,))[:, None] ** np.arange(n_moments)
+    for i, j in _panels(n_moments * k * widths, np.diff(ended_at) * _FEW >= g * k):
         rows, width = j - i, int(widths[i:j].max())
         c = cells[cell_at[i] : cell_at[j]]
         own_row = stays.state[c] - i
@@ -248,14 +248,14 @@ def move_influence(
         inflow = np.stack(
             [sum_at(local, fit.q[c] * v[c], k * rows * width).reshape(k, rows, width) for v in values], axis=2
         )
-        tail = np.zeros((rows, 3, width))
+        tail = np.zeros((rows, n_moments, width))
         ends = np.flatnonzero(fit.survivor_move[i:j] >= 0)
         tail[ends, :, fit.survivor_move[i + ends] - move_at[i + ends]] = fit.survival_end[i + ends, None] * powers[i + ends]
         risk, hazard = (x[i:j].T[:, :, None, None] for x in (fit.at_risk, fit.hazard_all))
         takes, pull, sofar = _pull(inflow, tail, hazard, risk)
 
         def crossed(row: IntArray, bucket: IntArray, at: IntArray, n: FloatArray, weights: FloatArray) -> FloatArray:
-            flat = weights.reshape(k * rows, 3 * width)
+            flat = weights.reshape(k * rows, n_moments * width)
             return _crossed((row - i) * g + bucket, at * rows + row - i, n, flat, rows * g)
 
         e = ended[ended_at[i] : ended_at[j]]
@@ -265,13 +265,13 @@ def move_influence(
         if len(o):
             weights = sofar - fit.open_weight * pull
             block += crossed(buckets.open_state[o], buckets.open_bucket[o], buckets.open_bin[o], buckets.open_n[o], weights)
-        block = block.reshape(rows, g, 3, width)
+        block = block.reshape(rows, g, n_moments, width)
         if len(s):
             place = (buckets.survivor_state[s] - i) * g + buckets.survivor_bucket[s]
             block += sum_at(place, buckets.survivor_n[s], rows * g).reshape(rows, g, 1, 1) * sofar[-1][:, None]
         has = np.arange(width) < widths[i:j, None]
         result[:, :, move_at[i] : move_at[j]] -= block.transpose(2, 1, 0, 3)[:, :, has]
-    return result[0], result[1], result[2]
+    return tuple(result)
 
 
 def cell_influence(

@@ -165,7 +165,7 @@ class Stack:
         return found
 
 
-def stacks(tally: Tally, parts: GroupParts, model: JourneyModel) -> Iterator[Stack]:
+def stacks(tally: Tally, parts: GroupParts, model: JourneyModel, *, n_moments: int = 3) -> Iterator[Stack]:
     """Fit all groups that can carry a fit, as many in one go as keep memory modest.
 
     Parameters
@@ -176,6 +176,8 @@ def stacks(tally: Tally, parts: GroupParts, model: JourneyModel) -> Iterator[Sta
         Its groups.
     model : JourneyModel
         How to fit.
+    n_moments : int, default 3
+        1 where only probabilities will be asked for: what each bucket pulls at times is then left NaN.
 
     Yields
     ------
@@ -188,10 +190,10 @@ def stacks(tally: Tally, parts: GroupParts, model: JourneyModel) -> Iterator[Sta
     cells = np.cumsum(rows[able] * (rows[able] + n_outcomes))
     for some in np.split(able, np.flatnonzero(np.diff(cells // _TOGETHER)) + 1):
         if len(some):
-            yield _stack(tally, parts, model, some)
+            yield _stack(tally, parts, model, some, n_moments)
 
 
-def _stack(tally: Tally, parts: GroupParts, model: JourneyModel, some: IntArray) -> Stack:
+def _stack(tally: Tally, parts: GroupParts, model: JourneyModel, some: IntArray, n_moments: int) -> Stack:
     """Fit some groups in one go."""
     place = np.full(len(parts.values), -1)
     place[some] = np.arange(len(some))
@@ -203,7 +205,7 @@ def _stack(tally: Tally, parts: GroupParts, model: JourneyModel, some: IntArray)
     stays, by_bucket = placed_stays(tally, places, np.arange(N_BUCKETS), censored=model.open_moves == "censored")
     with warnings.catch_warnings():
         warnings.simplefilter("ignore", JourneysWarning)
-        fit = model.fit_stays(tally, nodes, stays, by_bucket)
+        fit = model.fit_stays(tally, nodes, stays, by_bucket, n_moments=n_moments)
     return Stack(replace(fit, tally=None), some, places.first, states, parts.live[some])
 
 

@@ -98,8 +98,10 @@ class JourneyModel:
         stays, by_bucket = move_stays(tally, censored=self.open_moves == "censored")
         return self.fit_stays(tally, nodes_of(tally), stays, by_bucket)
 
-    def fit_stays(self, tally: Tally, nodes: Nodes, stays: Stays, by_bucket: BucketStays) -> JourneyFit:
-        """Fit the chain to stays that were taken from a tally."""
+    def fit_stays(
+        self, tally: Tally, nodes: Nodes, stays: Stays, by_bucket: BucketStays, *, n_moments: int = 3
+    ) -> JourneyFit:
+        """Fit the chain to stays that were taken from a tally; with one moment the influence on times is left NaN."""
         weight = 0.0 if tally.whole_days else 0.5
         found = fit_stays(stays, weight)
         row_flags: dict[str, str] = {}
@@ -119,7 +121,7 @@ class JourneyModel:
                 )
         else:
             self._look_at_ends(tally, stays, found, nodes.labels, row_flags)
-        d_probability, d_mean, d_second = move_influence(found, stays, by_bucket)
+        pulls = move_influence(found, stays, by_bucket, n_moments)
         completed = sum_at(found.cell_move, stays.n, len(found.probability))
         lapses = found.survivor_move >= 0
         np.add.at(completed, found.survivor_move[lapses], stays.survivor_n[lapses])
@@ -133,7 +135,8 @@ class JourneyModel:
         pad = kept < 0
         place = np.empty(len(found.probability), np.int64)
         place[kept[~pad]] = np.flatnonzero(~pad)
-        influence = Influence(*(np.where(pad, 0.0, part[:, kept]) for part in (d_probability, d_mean, d_second)))
+        pulls = tuple(np.where(pad, 0.0, part[:, kept]) if pad.any() else part for part in pulls)
+        unknown = np.broadcast_to(np.nan, pulls[0].shape)
         return JourneyFit(
             nodes=nodes,
             converted=tally.rules.converted,
@@ -146,7 +149,7 @@ class JourneyModel:
             row_flags=row_flags,
             open_moves=self.open_moves,
             tally=tally,
-            influence=influence,
+            influence=Influence(*pulls, *(unknown for _ in range(3 - n_moments))),
             fitted_stays=FittedStays(stays, by_bucket, found, place),
         )
 
