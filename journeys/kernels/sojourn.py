@@ -8,19 +8,11 @@ from __future__ import annotations
 
 import numpy as np
 
-from journeys.kernels.arrays import BoolArray, FloatArray, IntArray, sum_at
+from journeys.kernels.arrays import FloatArray, sum_at
+from journeys.kernels.later_bins import LaterBins, divide, pull_of
 from journeys.kernels.stays import BucketStays, StayFit, Stays
 
 __all__ = ["BucketStays", "StayFit", "Stays", "cell_influence", "fit_stays", "move_influence"]
-
-_VERY_FEW = 2_000  # so few stays are summed one by one: a sparse product takes longer to set up
-_PANEL = 1 << 17  # numbers of one kind worked on together
-_FEW = 8  # below one filled place in so many, a sparse product is the quicker one
-
-
-def _divide(top: FloatArray, below: FloatArray) -> FloatArray:
-    """Quotient, with 0 where the lower number is 0."""
-    return np.divide(top, below, out=np.zeros(np.broadcast(top, below).shape), where=below != 0)
 
 
 def second_moment(tau: FloatArray, lower: FloatArray, upper: FloatArray) -> FloatArray:
@@ -99,14 +91,14 @@ def fit_stays(stays: Stays, open_weight: float = 0.5) -> StayFit:
     leaving = np.concatenate([ended + still, stays.survivor_n[:, None]], axis=1)
     later = np.cumsum(leaving[:, :0:-1], axis=1)[:, ::-1]
     at_risk = later + ended + (1.0 - open_weight) * still
-    hazard_all = _divide(ended, at_risk)
+    hazard_all = divide(ended, at_risk)
     survival = np.cumprod(np.concatenate([np.ones((m, 1)), 1.0 - hazard_all], axis=1), axis=1)
 
     risk = at_risk.ravel()[place]
-    hazard = _divide(stays.n, risk)
+    hazard = divide(stays.n, risk)
     q = survival[:, :-1].ravel()[place] * hazard
     low, high = stays.lower[stays.bin], stays.upper[stays.bin]
-    tau = np.where(stays.n > 0, _divide(stays.total, stays.n), (low + high) / 2)
+    tau = np.where(stays.n > 0, divide(stays.total, stays.n), (low + high) / 2)
     tau2 = second_moment(tau, low, high)
 
     end = survival[:, -1].copy()
@@ -133,56 +125,10 @@ def fit_stays(stays: Stays, open_weight: float = 0.5) -> StayFit:
     )
 
 
-def _crossed(bucket: IntArray, at: IntArray, n: FloatArray, weights: FloatArray, g: int) -> FloatArray:
-    """Multiply counts (bucket x bin) by weights (bin x value), shape (g, n_values)."""
-    k, values = weights.shape
-    if len(n) < _VERY_FEW:
-        place = bucket[:, None] * values + np.arange(values)
-        return sum_at(place.ravel(), (n[:, None] * weights[at]).ravel(), g * values).reshape(g, values)
-    if len(n) * _FEW < g * k:
-        from scipy.sparse import csr_array
-
-        counts = csr_array((n, (bucket, at)), shape=(g, k))
-        return np.asarray(counts @ weights, dtype=np.float64)
-    return sum_at(bucket * k + at, n, g * k).reshape(g, k) @ weights
-
-
 def _direct(fit: StayFit, stays: Stays) -> FloatArray:
     """Return what one more stay of a cell adds to its own probability, all else held."""
     place = stays.state * stays.n_bins + stays.bin
-    return _divide(fit.survival_before.ravel()[place], fit.at_risk.ravel()[place])
-
-
-def _pull(
-    inflow: FloatArray, tail: FloatArray, hazard: FloatArray, at_risk: FloatArray
-) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """Weights of the indirect influence, along the first axis (bins).
-
-    Returns what an end in the bin takes from later bins, the pull of being at risk in
-    the bin, and that pull summed up to and with the bin.
-    """
-    after = tail + np.cumsum(inflow[::-1], axis=0)[::-1] - inflow
-    # nothing is left to take where all at risk end in the bin
-    takes = _divide(after, at_risk * (1.0 - hazard))
-    pull = _divide(inflow, at_risk) - hazard * takes
-    return takes, pull, np.cumsum(pull, axis=0)
-
-
-def _by_state(state: IntArray, n_states: int) -> tuple[IntArray, IntArray]:
-    """Order that sorts by state, and where each state begins in it."""
-    order = np.argsort(state, kind="stable")
-    return order, np.searchsorted(state[order], np.arange(n_states + 1))
-
-
-def _panels(size: IntArray, alone: BoolArray) -> list[tuple[int, int]]:
-    """Runs of rows to be worked on together: as many as stay small, those with many stays by themselves."""
-    found, first, held = [], 0, 0
-    for i, (more, own) in enumerate(zip(size.tolist(), alone.tolist(), strict=True)):
-        if i > first and (own or alone[i - 1] or held + more > _PANEL):
-            found.append((first, i))
-            first, held = i, 0
-        held += more
-    return [(i, j) for i, j in (*found, (first, len(size))) if size[i:j].any()]
+    return divide(fit.survival_before.ravel()[place], fit.at_risk.ravel()[place])
 
 
 def move_influence(fit: StayFit, stays: Stays, buckets: BucketStays, n_moments: int = 3) -> tuple[FloatArray, ...]:
@@ -226,51 +172,14 @@ def move_influence(fit: StayFit, stays: Stays, buckets: BucketStays, n_moments: 
     >>> move_influence(fit_stays(stays), stays, split)[0].tolist()
     [[0.125, -0.125], [-0.125, 0.125]]
     """
-    m, k, g, n_moves = stays.n_states, stays.n_bins, buckets.n_buckets, len(fit.probability)
+    g, n_moves = buckets.n_buckets, len(fit.probability)
     own = buckets.n * _direct(fit, stays)[buckets.cell]
     key = buckets.bucket * n_moves + fit.cell_move[buckets.cell]
     values = np.stack([np.ones_like(fit.tau), fit.tau, fit.tau2][:n_moments])
     result = np.stack([sum_at(key, own * v[buckets.cell], g * n_moves).reshape(g, n_moves) for v in values])
-
-    cells, cell_at = _by_state(stays.state, m)
-    of_ended = stays.state[buckets.cell]
-    ended, ended_at = _by_state(of_ended, m)
-    still, still_at = _by_state(buckets.open_state, m)
-    kept, kept_at = _by_state(buckets.survivor_state, m)
-    move_at = np.searchsorted(fit.move_state, np.arange(m + 1))
-    widths = np.diff(move_at)
-    powers = np.broadcast_to(stays.survivor_dwell, (m,))[:, None] ** np.arange(n_moments)
-    for i, j in _panels(n_moments * k * widths, np.diff(ended_at) * _FEW >= g * k):
-        rows, width = j - i, int(widths[i:j].max())
-        c = cells[cell_at[i] : cell_at[j]]
-        own_row = stays.state[c] - i
-        local = (stays.bin[c] * rows + own_row) * width + fit.cell_move[c] - move_at[stays.state[c]]
-        inflow = np.stack(
-            [sum_at(local, fit.q[c] * v[c], k * rows * width).reshape(k, rows, width) for v in values], axis=2
-        )
-        tail = np.zeros((rows, n_moments, width))
-        ends = np.flatnonzero(fit.survivor_move[i:j] >= 0)
-        tail[ends, :, fit.survivor_move[i + ends] - move_at[i + ends]] = fit.survival_end[i + ends, None] * powers[i + ends]
-        risk, hazard = (x[i:j].T[:, :, None, None] for x in (fit.at_risk, fit.hazard_all))
-        takes, pull, sofar = _pull(inflow, tail, hazard, risk)
-
-        def crossed(row: IntArray, bucket: IntArray, at: IntArray, n: FloatArray, weights: FloatArray) -> FloatArray:
-            flat = weights.reshape(k * rows, n_moments * width)
-            return _crossed((row - i) * g + bucket, at * rows + row - i, n, flat, rows * g)
-
-        e = ended[ended_at[i] : ended_at[j]]
-        o = still[still_at[i] : still_at[j]]
-        s = kept[kept_at[i] : kept_at[j]]
-        block = crossed(of_ended[e], buckets.bucket[e], stays.bin[buckets.cell[e]], buckets.n[e], takes + sofar)
-        if len(o):
-            weights = sofar - fit.open_weight * pull
-            block += crossed(buckets.open_state[o], buckets.open_bucket[o], buckets.open_bin[o], buckets.open_n[o], weights)
-        block = block.reshape(rows, g, n_moments, width)
-        if len(s):
-            place = (buckets.survivor_state[s] - i) * g + buckets.survivor_bucket[s]
-            block += sum_at(place, buckets.survivor_n[s], rows * g).reshape(rows, g, 1, 1) * sofar[-1][:, None]
-        has = np.arange(width) < widths[i:j, None]
-        result[:, :, move_at[i] : move_at[j]] -= block.transpose(2, 1, 0, 3)[:, :, has]
+    later = LaterBins(fit, stays, buckets, values)
+    for i, j in later.panels():
+        result[:, :, later.move_at[i] : later.move_at[j]] -= later.of_rows(i, j)
     return tuple(result)
 
 
@@ -319,7 +228,7 @@ def cell_influence(
     gather = csr_array((fit.q, (stays.bin * m + stays.state, np.arange(n_cells))), shape=(k * m, n_cells))
     inflow = np.asarray(gather @ tables).reshape(k, m, n_values)
     tail = fit.survival_end[:, None] * survivors
-    takes, pull, sofar = _pull(inflow, tail, fit.hazard_all.T[:, :, None], fit.at_risk.T[:, :, None])
+    takes, pull, sofar = pull_of(inflow, tail, fit.hazard_all.T[:, :, None], fit.at_risk.T[:, :, None])
 
     own = csr_array((buckets.n * _direct(fit, stays)[buckets.cell], (buckets.bucket, buckets.cell)), shape=(g, n_cells))
     found = np.asarray(own @ tables)

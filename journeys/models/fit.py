@@ -27,6 +27,21 @@ if TYPE_CHECKING:
 NO_WAY_OUT = "no move out was seen"
 
 
+class NotInChainError(ValueError):
+    """A name is neither a state nor an outcome of a chain.
+
+    Attributes
+    ----------
+    briefly : str
+        Which, in few words.
+    """
+
+    def __init__(self, name: str, message: str) -> None:
+        """Keep the name."""
+        super().__init__(message)
+        self.briefly = f"{name!r} is never seen"
+
+
 @dataclass(frozen=True, eq=False)
 class Influence:
     """Derivative of each move by the stays of each bucket, arrays of shape (n_buckets, n_moves)."""
@@ -150,8 +165,8 @@ class JourneyFit:
         Raises
         ------
         ValueError
-            If a name is neither a state nor an outcome, or nothing is named where the chain has no
-            converted outcomes.
+            If a name is neither a state nor an outcome (`NotInChainError`), or nothing is named where the chain
+            has no converted outcomes.
         """
         names = self.converted if to is None else (to,) if isinstance(to, str) else tuple(to)
         if not names:
@@ -159,8 +174,8 @@ class JourneyFit:
             raise ValueError(msg)
         unknown = [name for name in names if name not in self.nodes.labels[1:]]
         if unknown:
-            msg = f"to={unknown[0]!r} is not in this chain; wanted one or more of {_listed(self.nodes.labels[1:])}"
-            raise ValueError(msg)
+            wanted = f"one or more of {_listed(self.nodes.labels[1:])}"
+            raise NotInChainError(unknown[0], f"to={unknown[0]!r} is not in this chain; wanted {wanted}")
         return np.isin(np.array(self.nodes.labels, dtype=object), names)
 
     def save(self, path: str | os.PathLike[str]) -> None:

@@ -63,9 +63,10 @@ class Places:
 
     def own_node(self, group: IntArray, code: IntArray) -> IntArray:
         """Return the place of codes among their groups' own nodes."""
-        return self.own.ravel()[group * self.own.shape[1] + code]
+        own: IntArray = self.own.ravel()[group * self.own.shape[1] + code]
+        return own
 
     def node(self, row: IntArray, own: IntArray) -> IntArray:
         """Return the node of the chain from its place among the own nodes of the group that a row belongs to."""
-        first = self.first[np.searchsorted(self.first, row, side="right") - 1]
+        first = np.repeat(self.first[:-1], np.diff(self.first))[row]
         return np.where(own < self.most_rows, first + own, self.n_rows + own - self.most_rows)

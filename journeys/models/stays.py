@@ -90,7 +90,8 @@ def placed_stays(tally: Tally, places: Places, bucket: IntArray, *, censored: bo
     """
     moves, of_move = places.table(tally.moves)
     sure = tally.entries["sure"] == 1
-    entries, of_entry = places.table({name: column[sure] for name, column in tally.entries.items()})
+    needed = [name for name in ("group", "bucket", "state", "n") if name in tally.entries]
+    entries, of_entry = places.table({name: tally.entries[name][sure] for name in needed})
     lapse_survives = tally.rules.silence_us is not None and tally.rules.repeats == "keep"
     lower, upper, survivor_dwell = _bins(tally, places, moves, of_move, lapse_survives=lapse_survives)
     n_bins, n_sure = len(lower), len(entries["n"])

@@ -10,7 +10,7 @@ import numpy as np
 
 from journeys.errors import LogError
 from journeys.kernels.arrays import IntArray
-from journeys.models.fit import JourneyFit
+from journeys.models.fit import JourneyFit, NotInChainError
 from journeys.models.group_fits import group_fits, grouped_tally
 from journeys.models.group_stack import Stack, group_parts, stacks
 from journeys.models.model import JourneyModel
@@ -38,8 +38,8 @@ def by_group(fit: JourneyFit, by: str | Sequence[str], ask: Callable[[JourneyFit
     Returns
     -------
     Result
-        Of the kind that `ask` gives. A group that cannot carry a fit is one row without a number, whose flag
-        says why.
+        Of the kind that `ask` gives. A group that cannot carry a fit, or never sees a state that is asked about,
+        is one row without a number, whose flag says why.
 
     Raises
     ------
@@ -50,9 +50,16 @@ def by_group(fit: JourneyFit, by: str | Sequence[str], ask: Callable[[JourneyFit
     """
     names = [by] if isinstance(by, str) else list(by)
     found = group_fits(fit, names)
-    answers = [(ask(one.fit), g) for g, one in enumerate(found) if one.fit is not None]
-    blocks = [(answer, np.full(len(answer.keys), g)) for answer, g in answers]
-    return _one_under_another(names, [one.values for one in found], [one.why for one in found], blocks)
+    why, blocks = [one.why for one in found], []
+    for g, one in enumerate(found):
+        if one.fit is not None:
+            try:
+                answer = ask(one.fit)
+            except NotInChainError as error:
+                why[g] = error.briefly
+            else:
+                blocks.append((answer, np.full(len(answer.keys), g)))
+    return _one_under_another(names, [one.values for one in found], why, blocks)
 
 
 def by_stack(
