@@ -99,9 +99,7 @@ class StackStays:
             found.append((order, np.searchsorted(group[order], np.arange(len(self._first)))))
         return found
 
-    def _stays(
-        self, low: int, high: int, cells: slice, n_bins: int, dwell: float, by_bucket: BucketStays
-    ) -> Stays:
+    def _stays(self, low: int, high: int, cells: slice, n_bins: int, dwell: float, by_bucket: BucketStays) -> Stays:
         whole = self._whole.stays
         n_outcomes = whole.n_targets - whole.n_states
         n_targets = high - low + n_outcomes

@@ -62,9 +62,7 @@ def by_group(fit: JourneyFit, by: str | Sequence[str], ask: Callable[[JourneyFit
     return _one_under_another(names, [one.values for one in found], why, blocks)
 
 
-def by_stack(
-    fit: JourneyFit, by: str | Sequence[str], ask: Callable[[Stack], tuple[R, IntArray]]
-) -> R:
+def by_stack(fit: JourneyFit, by: str | Sequence[str], ask: Callable[[Stack], tuple[R, IntArray]]) -> R:
     """Do the same for a question that can be asked of many groups in one go.
 
     Parameters

@@ -92,8 +92,8 @@ def passage_curve(
     ------
     ValueError
         If an argument is none of those; if a column is not one that journeys are grouped by; if `start` is part
-        of `to`; if a known chain has dwells on the way
-        without a distribution; if a curve in time is asked of more than 500 states.
+        of `to`; if a known chain has dwells on the way without a distribution; if a curve in time is asked of more
+        than 500 states.
 
     Notes
     -----
@@ -130,9 +130,7 @@ def passage_curve(
         raise ValueError(msg)
     if by is not None:
         _start(fit, start, walk_to(fit, to))
-        ask = partial(
-            _curve, to=to, start=start, clock=clock, given=given, unit=unit, confidence_level=level
-        )
+        ask = partial(_curve, to=to, start=start, clock=clock, given=given, unit=unit, confidence_level=level)
         return group_curves(fit, by, ask)
     return _curve(fit, to, start, clock, given=given, unit=unit, confidence_level=level)
 
