@@ -111,7 +111,14 @@ def variance_from_buckets(
     return g / (g - 1.0) * square.sum(axis=0) * scale**2, np.clip(df, 1.0, g - 1.0)
 
 
-def _t_quantile(df: npt.ArrayLike, confidence_level: float) -> FloatArray:
+def t_quantile(df: npt.ArrayLike, confidence_level: float) -> FloatArray:
+    """Return the t quantile of a two-sided interval.
+
+    Examples
+    --------
+    >>> t_quantile([10, np.inf], 0.95).round(3).tolist()
+    [2.228, 1.96]
+    """
     from scipy.special import stdtrit
 
     upper = 0.5 + confidence_level / 2.0
@@ -147,7 +154,7 @@ def logit_interval(
 
     p, se = np.asarray(p, dtype=np.float64), np.asarray(se, dtype=np.float64)
     inside = np.where((p > 0) & (p < 1), p, np.nan)
-    half = _t_quantile(df, confidence_level) * se / (inside * (1.0 - inside))
+    half = t_quantile(df, confidence_level) * se / (inside * (1.0 - inside))
     middle = logit(inside)
     return np.asarray(expit(middle - half)), np.asarray(expit(middle + half))
 
@@ -181,7 +188,7 @@ def log_interval(
     inside = np.where((x > 0) & np.isfinite(x), x, np.nan)
     with np.errstate(over="ignore"):
         # A spread many times the number itself: nothing is known, from 0 to infinity.
-        factor = np.exp(_t_quantile(df, confidence_level) * se / inside)
+        factor = np.exp(t_quantile(df, confidence_level) * se / inside)
         return inside / factor, inside * factor
 
 
@@ -211,7 +218,7 @@ def t_interval(
     (-1.5211, 0.5211)
     """
     x = np.asarray(x, dtype=np.float64)
-    half = _t_quantile(df, confidence_level) * np.asarray(se, dtype=np.float64)
+    half = t_quantile(df, confidence_level) * np.asarray(se, dtype=np.float64)
     return x - half, x + half
 
 
