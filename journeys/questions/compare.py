@@ -85,14 +85,19 @@ def compare(
     Notes
     -----
     Customers are kept in the same 200 buckets whatever the log, so that the difference of the two influences of
-    each bucket tells its variance even where the same people stand on both sides. Two-sided t-tests. An interval
-    is symmetric about the difference; where either side rests on too few events there is none. A difference is
-    an association: what else changed between the two sides is in it.
+    each bucket tells its variance even where the same people stand on both sides. Shares are told apart by the
+    difference of their logits, steps and days by that of their logarithms, in two-sided t-tests: on the plain scale a
+    small number comes with a small standard error, and small groups are called lower far too often. The bounds of
+    that difference, less than the estimate and more, are turned back by moving both numbers, the less sure one
+    further, so that an interval holds 0 where its test finds nothing. std_error is that of the difference itself.
+    Where either side rests on too few events there is no interval. A difference is an association: what else changed
+    between the two sides is in it.
 
     References
     ----------
     B. Efron, The Jackknife, the Bootstrap and Other Resampling Plans, SIAM 1982, chapter 6. S. Holm, A simple
-    sequentially rejective multiple test procedure, Scand. J. Statist. 6 (1979) 65-70.
+    sequentially rejective multiple test procedure, Scand. J. Statist. 6 (1979) 65-70. B. Woolf, On estimating the
+    relation between blood group and disease, Ann. Human Genet. 19 (1955) 251-253 (logits of shares).
 
     Examples
     --------
