@@ -27,6 +27,21 @@ if TYPE_CHECKING:
 NO_WAY_OUT = "no move out was seen"
 
 
+class NotInChainError(ValueError):
+    """A name is neither a state nor an outcome of a chain.
+
+    Attributes
+    ----------
+    briefly : str
+        Which, in few words.
+    """
+
+    def __init__(self, name: str, message: str) -> None:
+        """Keep the name."""
+        super().__init__(message)
+        self.briefly = f"{name!r} is never seen"
+
+
 @dataclass(frozen=True, eq=False)
 class Influence:
     """Derivative of each move by the stays of each bucket, arrays of shape (n_buckets, n_moves)."""
@@ -151,8 +166,8 @@ class JourneyFit:
         Raises
         ------
         ValueError
-            If a name is neither a state nor an outcome, or nothing is named where the chain has no
-            converted outcomes.
+            If a name is neither a state nor an outcome (`NotInChainError`), or nothing is named where the chain
+            has no converted outcomes.
         """
         names = self.converted if to is None else (to,) if isinstance(to, str) else tuple(to)
         if not names:
@@ -161,8 +176,8 @@ class JourneyFit:
         last = ("entry", *self.nodes.last_states, *self.nodes.outcomes)
         unknown = [name for name in names if name not in self.nodes.labels[1:] and name not in last[1:]]
         if unknown:
-            msg = f"to={unknown[0]!r} is not in this chain; wanted one or more of {_listed(self.nodes.labels[1:])}"
-            raise ValueError(msg)
+            wanted = f"one or more of {_listed(self.nodes.labels[1:])}"
+            raise NotInChainError(unknown[0], f"to={unknown[0]!r} is not in this chain; wanted {wanted}")
         mask = np.isin(np.array(self.nodes.labels, dtype=object), names)
         return np.asarray(mask | np.isin(np.array(last, dtype=object), names), dtype=np.bool_)
 
@@ -208,8 +223,11 @@ def with_dead_ends(
         Where each move came from in the input, -1 for an added one.
     """
     rows = np.setdiff1d(np.arange(nodes.n_rows), state)
+    labels = nodes.labels
     for row in rows:
-        row_flags[nodes.labels[row]] = NO_WAY_OUT
+        # told last, whatever else was told of the row
+        row_flags.pop(labels[row], None)
+        row_flags[labels[row]] = NO_WAY_OUT
     if len(rows):
         names = ", ".join(nodes.labels[row] for row in rows[:5])
         warnings.warn(f"no move out of {names} was seen: taken as never left", DeadEndWarning, stacklevel=4)

@@ -1,4 +1,4 @@
-"""The nodes of a chain, and where moves lead among them: by the state alone, or by those before it too."""
+"""The states of a chain: those of the tally alone, or each told apart by the states before it."""
 
 from __future__ import annotations
 
@@ -7,9 +7,9 @@ from dataclasses import dataclass
 import numpy as np
 
 from journeys.errors import LogError
-from journeys.kernels.arrays import BoolArray, IntArray
+from journeys.kernels.arrays import IntArray
 from journeys.kernels.histories import ENTRY, UNKNOWN, extended, latest, slot
-from journeys.kernels.records import FIRST_OUTCOME, LAPSED
+from journeys.tally.accumulate import Columns
 from journeys.tally.tally import Tally
 
 _BITS = 16
@@ -71,102 +71,79 @@ class Nodes:
 
 
 @dataclass(frozen=True, eq=False)
-class Placed:
-    """Moves and entries of a tally among the nodes of a chain.
+class Chain:
+    """Moves and entries of a tally by the states of a chain of some order.
 
     Attributes
     ----------
-    nodes : Nodes
-        The nodes.
-    kept : ndarray of bool, shape (n_moves,)
-        Which moves have a known history.
-    row, target : ndarray of int64, shape (n_kept,)
-        Where the kept moves come from and lead to; -1 for an open stay.
-    first : ndarray of int64, shape (n_entries,)
-        Where the entries lead to.
+    states, last, order
+        As in `Nodes`.
+    moves, entries : dict of str to ndarray
+        The tables of the tally, their states being codes of the states of the chain: those of the ends as in the tally,
+        then those of `states`. Moves with an unknown history are left out.
     """
 
-    nodes: Nodes
-    kept: BoolArray
-    row: IntArray
-    target: IntArray
-    first: IntArray
+    states: tuple[str, ...]
+    last: tuple[str, ...]
+    order: int
+    moves: Columns
+    entries: Columns
+
+    def nodes(self, tally: Tally) -> Nodes:
+        """Return the nodes of the chain: its states and the outcomes, lapsed among them where a silence is given."""
+        return Nodes(self.states, ends_of(tally), self.last, self.order)
 
 
-def placed(tally: Tally, order: int) -> Placed:
-    """Return the nodes of the chain of some order, and where the moves of a tally lead among them.
+def ends_of(tally: Tally) -> tuple[str, ...]:
+    """Return the ways in which journeys end."""
+    return (*tally.rules.outcomes, *(() if tally.rules.silence_us is None else ("lapsed",)))
+
+
+def chain_of(tally: Tally, order: int) -> Chain:
+    """Return moves and entries of a tally by the states of the chain of some order.
 
     Parameters
     ----------
     tally : Tally
         Counted with at least that order.
     order : int
-        How many of the last states make a node.
-
-    Returns
-    -------
-    Placed
+        How many of the last states make a state of the chain.
 
     Raises
     ------
     LogError
-        If two nodes would have the same name.
+        If two states would have the same name.
     """
-    lapsed = () if tally.rules.silence_us is None else ("lapsed",)
-    outcomes = (*tally.rules.outcomes, *lapsed)
-    moves, entries = tally.moves, tally.entries
     if order == 1:
-        nodes = Nodes(tally.states, outcomes)
-        place = _ends(tally, nodes)
-        place[tally.first_state :] = 1 + np.arange(len(tally.states))
-        return Placed(
-            nodes, np.ones(len(moves["n"]), bool), place[moves["state"]], place[moves["next"]], place[entries["state"]]
-        )
-    n_slots = order - 1
-    before = latest(moves["before"], n_slots)
+        return Chain(tally.states, (), 1, tally.moves, tally.entries)
+    n_slots, first_state = order - 1, tally.first_state
+    before = latest(tally.moves["before"], n_slots)
     kept = np.ones(len(before), bool)
     for which in range(n_slots):
         kept &= slot(before, which) != UNKNOWN
-    before, next_code = before[kept], moves["next"][kept].astype(np.int64)
-    state, first_code = moves["state"][kept].astype(np.int64), entries["state"].astype(np.int64)
-    # One whole number per node: the states before in the upper bits, the state itself in the lowest.
+    moves = {name: column[kept] for name, column in tally.moves.items() if name != "before"}
+    before, state, to = before[kept], moves["state"].astype(np.int64), moves["next"].astype(np.int64)
+    first = tally.entries["state"].astype(np.int64)
+    # One whole number per state of the chain: the states before in the upper bits, the state itself in the lowest.
     here = before << _BITS | state
-    there = extended(before, state, n_slots) << _BITS | next_code
-    goes_on, begins = next_code >= tally.first_state, first_code >= tally.first_state
-    known = np.unique(np.concatenate([here, there[goes_on], first_code[begins]]))
+    there = extended(before, state, n_slots) << _BITS | to
+    goes_on, begins = to >= first_state, first >= first_state
+    known = np.unique(np.concatenate([here, there[goes_on], first[begins]]))
     known = known[np.lexsort((known, slot(known, 0)))]
-    nodes = Nodes(
-        tuple(_name(tally, number, n_slots) for number in known.tolist()),
-        outcomes,
-        tuple(tally.labels[code] for code in slot(known, 0).tolist()),
-        order,
-    )
-    _refuse_twice(nodes)
-    place, in_order = _ends(tally, nodes), np.argsort(known)
+    in_order = np.argsort(known)
 
-    def rows(number: IntArray) -> IntArray:
-        # Outcomes are looked up in vain, and taken from their own list.
+    def code(number: IntArray) -> IntArray:
+        # What is no state is looked up in vain, and keeps its own code.
         if not len(known):
-            return np.zeros_like(number)
+            return number
         at = np.minimum(np.searchsorted(known, number, sorter=in_order), len(known) - 1)
-        return 1 + in_order[at]
+        return first_state + in_order[at]
 
-    return Placed(
-        nodes,
-        kept,
-        rows(here),
-        np.where(goes_on, rows(there), place[next_code]),
-        np.where(begins, rows(first_code), place[first_code]),
-    )
-
-
-def _ends(tally: Tally, nodes: Nodes) -> IntArray:
-    """Return the node of each outcome's code in the tally's tables; -1 where there is none, and for the states."""
-    place = np.full(len(tally.labels), -1)
-    n_outcomes = len(tally.rules.outcomes)
-    place[LAPSED] = nodes.n_nodes - 1 if tally.rules.silence_us is not None else -1
-    place[FIRST_OUTCOME : FIRST_OUTCOME + n_outcomes] = nodes.n_rows + np.arange(n_outcomes)
-    return place
+    moves |= {"state": code(here), "next": np.where(goes_on, code(there), to)}
+    states = tuple(_name(tally, number, n_slots) for number in known.tolist())
+    _refuse_twice(("entry", *states, *ends_of(tally)))
+    last = tuple(tally.labels[one] for one in slot(known, 0).tolist())
+    return Chain(states, last, order, moves, {**tally.entries, "state": np.where(begins, code(first), first)})
 
 
 def _name(tally: Tally, number: int, n_slots: int) -> str:
@@ -178,9 +155,9 @@ def _name(tally: Tally, number: int, n_slots: int) -> str:
     return f"{tally.labels[codes[0]]} after {', '.join(passed)}"
 
 
-def _refuse_twice(nodes: Nodes) -> None:
+def _refuse_twice(names: tuple[str, ...]) -> None:
     seen: set[str] = set()
-    for name in nodes.labels:
+    for name in names:
         if name in seen:
             msg = f"two states of the chain would be called {name!r}; give their events other names with `states`"
             raise LogError(msg)

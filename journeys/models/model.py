@@ -13,9 +13,9 @@ from journeys.kernels.arrays import BoolArray, FloatArray, sum_at
 from journeys.kernels.bins import DAY_US
 from journeys.kernels.records import FIRST_OUTCOME
 from journeys.kernels.sojourn import StayFit, fit_stays, move_influence
-from journeys.kernels.stays import FittedStays, Stays
+from journeys.kernels.stays import BucketStays, FittedStays, Stays
 from journeys.models.fit import Influence, JourneyFit, with_dead_ends
-from journeys.models.memory import placed
+from journeys.models.memory import Nodes, chain_of
 from journeys.models.stays import move_stays, without_open
 from journeys.tally.tally import Tally
 
@@ -109,9 +109,14 @@ class JourneyModel:
 
     def fit_whatever(self, tally: Tally) -> JourneyFit:
         """Fit the chain to a tally whose faults have been looked for (see `fault_of`)."""
-        where = placed(tally, self.order)
-        nodes = where.nodes
-        stays, by_bucket = move_stays(tally, where, censored=self.open_moves == "censored")
+        chain = chain_of(tally, self.order)
+        stays, by_bucket = move_stays(tally, chain, censored=self.open_moves == "censored")
+        return self.fit_stays(tally, chain.nodes(tally), stays, by_bucket)
+
+    def fit_stays(
+        self, tally: Tally, nodes: Nodes, stays: Stays, by_bucket: BucketStays, *, n_moments: int = 3
+    ) -> JourneyFit:
+        """Fit the chain to stays that were taken from a tally; with one moment the influence on times is left NaN."""
         weight = 0.0 if tally.whole_days else 0.5
         found = fit_stays(stays, weight)
         row_flags: dict[str, str] = {}
@@ -131,7 +136,7 @@ class JourneyModel:
                 )
         else:
             self._look_at_ends(tally, stays, found, nodes.labels, row_flags)
-        d_probability, d_mean, d_second = move_influence(found, stays, by_bucket)
+        pulls = move_influence(found, stays, by_bucket, n_moments)
         completed = sum_at(found.cell_move, stays.n, len(found.probability))
         lapses = found.survivor_move >= 0
         np.add.at(completed, found.survivor_move[lapses], stays.survivor_n[lapses])
@@ -145,7 +150,8 @@ class JourneyModel:
         pad = kept < 0
         place = np.empty(len(found.probability), np.int64)
         place[kept[~pad]] = np.flatnonzero(~pad)
-        influence = Influence(*(np.where(pad, 0.0, part[:, kept]) for part in (d_probability, d_mean, d_second)))
+        pulls = tuple(np.where(pad, 0.0, part[:, kept]) if pad.any() else part for part in pulls)
+        unknown = np.broadcast_to(np.nan, pulls[0].shape)
         return JourneyFit(
             nodes=nodes,
             converted=tally.rules.converted,
@@ -158,7 +164,7 @@ class JourneyModel:
             row_flags=row_flags,
             open_moves=self.open_moves,
             tally=tally,
-            influence=influence,
+            influence=Influence(*pulls, *(unknown for _ in range(3 - n_moments))),
             fitted_stays=FittedStays(stays, by_bucket, found, place),
         )
 
@@ -172,7 +178,6 @@ class JourneyModel:
         unseen = (found.survival_end > 1e-12) & (seen_to_end == 0) & _has_stays(stays)
         if tally.rules.repeats == "merge":
             unseen = (found.survival_end > 1e-12) & _has_stays(stays)
-        unseen[0] = False
         few = ~unseen & (seen_to_end > 0) & (seen_to_end < ENOUGH_AT_END) & _has_open(stays)
         _flag(row_flags, labels, unseen, END_NOT_SEEN)
         _flag(row_flags, labels, few, FEW_AT_END)
@@ -195,18 +200,24 @@ class Fault:
 
 def fault_of(tally: Tally) -> Fault | None:
     """Return why no fit can be had of a tally, None where there is nothing in its way."""
+    sure = bool((tally.entries["sure"] == 1).any())
+    return fault_of_part(tally, tally.days_followed, sure=sure)
+
+
+def fault_of_part(tally: Tally, days_followed: float, *, sure: bool) -> Fault | None:
+    """Return why no fit can be had of some journeys of a tally, followed for so long, with any sure entry or none."""
     rules = tally.rules
-    if rules.silence_us is not None and tally.days_followed * DAY_US <= rules.silence_us:
+    if rules.silence_us is not None and days_followed * DAY_US <= rules.silence_us:
         silence_days = rules.silence_us / DAY_US
         what = f"the log is {tally.days:.1f} days long"
-        if tally.days_followed < tally.days:
-            what = f"these journeys were followed for {tally.days_followed:.1f} days at most"
+        if days_followed < tally.days:
+            what = f"these journeys were followed for {days_followed:.1f} days at most"
         return Fault(
-            f"followed for {tally.days_followed:.0f} days, no longer than the silence",
+            f"followed for {days_followed:.0f} days, no longer than the silence",
             f"{what}, no longer than the silence of {silence_days:g} days, so "
             "nobody can be seen to lapse; wanted a longer log or a shorter silence",
         )
-    if not (tally.entries["sure"] == 1).any():
+    if not sure:
         return Fault(
             "no sure entry",
             f"none of {tally.n_journeys:,} journeys has a sure entry (all may have begun before the log); wanted a "

@@ -45,7 +45,7 @@ def of_groups(tally: T, index: IntArray) -> T:
     for name, column in ((name, column) for name in KEYS for column in CODED):
         if column in tables[name]:
             seen[tables[name][column]] = True
-    for column, n_slots, name in _histories(tally):
+    for column, n_slots, name in histories(tally):
         for which in range(n_slots):
             seen[slot(tables[name][column], which)] = True
     seen[: tally.first_state] = True
@@ -169,7 +169,7 @@ def _renamed(tally: Tally, tables: Mapping[str, Columns], new: IntArray) -> dict
         name: table | {column: new[table[column]].astype(NARROW[column]) for column in CODED if column in table}
         for name, table in tables.items()
     }
-    for column, n_slots, name in _histories(tally):
+    for column, n_slots, name in histories(tally):
         renamed[name][column] = recoded(renamed[name][column], new, n_slots)
     if tally.rules.touchpoints == ALL and len(tables["touch_sets"]["n"]):
         bits = new[tally.first_state :] - tally.first_state
@@ -177,7 +177,7 @@ def _renamed(tally: Tally, tables: Mapping[str, Columns], new: IntArray) -> dict
     return renamed
 
 
-def _histories(tally: Tally) -> list[tuple[str, int, str]]:
+def histories(tally: Tally) -> list[tuple[str, int, str]]:
     """Return the columns that hold histories, how many states each holds, and their tables."""
     found = [(history_of(name, tally.order), name) for name in KEYS]
     return [(*history, name) for history, name in found if history is not None]
