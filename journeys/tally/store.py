@@ -4,18 +4,19 @@ from __future__ import annotations
 
 import json
 import os
+from concurrent.futures import ThreadPoolExecutor
 from hashlib import blake2b
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import pyarrow as pa
-import pyarrow.compute as pc
 import pyarrow.parquet as pq
+from numpy.typing import NDArray
 
 from journeys.errors import JourneysError, StoreError
 from journeys.files import written_whole
-from journeys.intake.arrays import from_numpy, from_texts
+from journeys.intake.arrays import from_numpy, from_texts, numbers
 from journeys.intake.findings import Findings
 from journeys.intake.rules import JourneyRules
 from journeys.tally.tables import NARROW, TABLES, customer_sums, parts_of, sums_of
@@ -24,9 +25,9 @@ from journeys.tally.tally import Tally
 if TYPE_CHECKING:
     from journeys.tally.accumulate import Columns
 
-FORMAT_VERSION = 4
+FORMAT_VERSION = 5
 HEAD = b"journeys"
-# Rows of a table written at once: the columns that it lacks take room too.
+# Rows of a table written at once.
 _ROWS_AT_ONCE = 1 << 18
 
 
@@ -52,7 +53,8 @@ def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | 
 
     Notes
     -----
-    All tables stand in one file, told apart by the column `table`; a column that a table lacks is null there.
+    All tables stand in one file. A row of it is a piece of a table, the column `table` telling which, and every other
+    column has a list there with a value for each row of the piece; where a table lacks a column there is no list.
     """
     head = {
         "format_version": FORMAT_VERSION,
@@ -66,41 +68,60 @@ def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | 
         "part": tally.part,
         "order": tally.order,
         "findings": tally.record.to_dict(),
-        "checksum": _checksum(tally),
     }
-    schema = _schema(tally.rules, tally.order).with_metadata({HEAD: json.dumps(head).encode(), **(more or {})})
-    # Dictionaries pay where a value runs on for many rows; elsewhere they only take time.
-    runs = ["table", "bucket", "state"]
+    schema = _schema(tally.rules, tally.order)
+    # The checksum is taken while the tables are written: the head goes into the end of the file. Arrow's own copy of the
+    # schema is left out, for it would hide what is added there.
     with (
         written_whole(path) as part,
-        pq.ParquetWriter(
-            part, schema, compression="zstd", compression_level=1, use_dictionary=runs, write_statistics=False
-        ) as writer,
+        ThreadPoolExecutor(1) as other,
+        pq.ParquetWriter(part, schema, store_schema=False, write_statistics=False, **_encodings(schema)) as writer,
     ):
+        checksum = other.submit(_checksum, tally)
         for name in TABLES:
             held = getattr(tally, name)
             for begin in range(0, max(len(held["bucket"]), 1), _ROWS_AT_ONCE):
                 piece = {column: values[begin : begin + _ROWS_AT_ONCE] for column, values in held.items()}
                 writer.write_table(_as_arrow(name, piece, schema))
+        head["checksum"] = checksum.result()
+        writer.add_key_value_metadata({HEAD: json.dumps(head).encode(), **(more or {})})
 
 
 def _schema(rules: JourneyRules, order: int) -> pa.Schema:
     """Return the columns of all tables, each with the type that is enough for it."""
     every = dict.fromkeys(column for table in TABLES for column in columns_of(table, rules, order))
     narrow = {name: pa.from_numpy_dtype(kind) for name, kind in NARROW.items()}
-    return pa.schema([("table", pa.string()), *((name, narrow.get(name, pa.int64())) for name in every)])
+    # Without a null in any list, none has to be looked for.
+    kinds = {name: pa.field("element", narrow.get(name, pa.int64()), nullable=False) for name in every}
+    return pa.schema([("table", pa.string()), *((name, pa.list_(kind)) for name, kind in kinds.items())])
+
+
+def _encodings(schema: pa.Schema) -> dict[str, Any]:
+    """Return how each column is written: in what takes least time, which also takes little room."""
+    paths = {field.name: f"{field.name}.list.element" for field in schema if field.name != "table"}
+    # Dictionaries pay where a value runs on for many rows. Numbers are split into their first, second, … bytes, most of
+    # which are all the same; a flag is a single bit anyway.
+    runs = ("bucket", "state")
+    flags = [field.name for field in schema if field.name in paths and pa.types.is_boolean(field.type.value_type)]
+    split = [path for name, path in paths.items() if name not in runs and name not in flags]
+    return {
+        "compression": "zstd",
+        "compression_level": 1,
+        "use_dictionary": ["table", *(paths[name] for name in runs)],
+        "column_encoding": dict.fromkeys(split, "BYTE_STREAM_SPLIT"),
+    }
 
 
 def _as_arrow(name: str, held: Columns, schema: pa.Schema) -> pa.Table:
-    """Return one table of the tally, the columns it lacks null."""
-    size = len(held["bucket"])
-    columns = {"table": pa.repeat(from_texts([name])[0], size)}
+    """Return a piece of one table of the tally as a row of the file."""
+    ends = pa.py_buffer(np.array([0, len(held["bucket"])], np.int32))
+    columns: dict[str, pa.Array] = {"table": from_texts([name])}
     for field in schema:
         if field.name in held:
-            values = held[field.name].astype(NARROW.get(field.name, np.int64), copy=False)
-            columns[field.name] = from_numpy(values, field.type)
+            values = from_numpy(held[field.name], field.type.value_type)
+            columns[field.name] = pa.Array.from_buffers(field.type, 1, [None, ends], children=[values])
         elif field.name != "table":
-            columns[field.name] = pa.nulls(size, field.type)
+            columns[field.name] = pa.nulls(1, field.type)
     return pa.table(columns, schema=schema)
 
 
@@ -167,11 +188,12 @@ def _checksum(tally: Tally) -> str:
 def _from_parts(table: pa.Table, head: dict[str, Any]) -> Tally:
     held: dict[str, Columns] = {}
     rules = JourneyRules.from_dict(head["rules"])
+    names = table["table"].to_pylist()
     for name in TABLES:
-        rows = table.filter(pc.equal(table["table"], name))
+        pieces = [table.slice(row, 1) for row, of in enumerate(names) if of == name]
         narrow = {} if name == "customers" else NARROW
         held[name] = {
-            column: rows[column].to_numpy().astype(narrow.get(column, np.int64))
+            column: _joined(pieces, column).astype(narrow.get(column, np.int64), copy=False)
             for column in columns_of(name, rules, head["order"])
         }
     return Tally(
@@ -187,3 +209,9 @@ def _from_parts(table: pa.Table, head: dict[str, Any]) -> Tally:
         record=Findings.from_dict(head["findings"]),
         **held,
     )
+
+
+def _joined(pieces: list[pa.Table], column: str) -> NDArray[Any]:
+    """Return the values of a column in all pieces of a table."""
+    lists = [chunk for piece in pieces for chunk in piece[column].chunks]
+    return np.concatenate([numbers(one.flatten()) for one in lists])
