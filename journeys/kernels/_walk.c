@@ -60,8 +60,7 @@ typedef struct {
     int64_t *g_away;
     int64_t *repeated, *bare, *again;
     /* cells: n_bins is 0 where there are none */
-    uint32_t *cell_n;
-    int64_t *cell_rest;
+    uint8_t *cells;
     uint32_t *contexts;
     const int64_t *lower, *upper;
     const int16_t *guess;
@@ -102,19 +101,64 @@ static int64_t lower_bound(const uint64_t *sorted, int64_t n, uint64_t value)
     return low;
 }
 
+/* Moves on their way to the cells. The cells are far too many for the processor's cache: each is called for when the
+ * move is made and changed some moves later, when it has come. */
+#define MOST_WAITING 32
+/* A cell: a count in 32 bits, then in 64 the dwell less the lower edges of its bin. */
+#define CELL_SIZE 12
+
+typedef struct {
+    uint8_t *cell;
+    int64_t rest, context;
+} Waiting;
+
+typedef struct {
+    Waiting moves[MOST_WAITING];
+    uint64_t n;
+} Queue;
+
+#if defined(__GNUC__) || defined(__clang__)
+#define CALL_FOR(address) __builtin_prefetch(address, 1)
+#else
+#define CALL_FOR(address) ((void)(address))
+#endif
+
+static void add_to_cells(Walk *w, const Waiting *move)
+{
+    uint32_t n;
+    int64_t rest;
+    memcpy(&n, move->cell, sizeof n);
+    memcpy(&rest, move->cell + sizeof n, sizeof rest);
+    n++;
+    rest += move->rest;
+    memcpy(move->cell, &n, sizeof n);
+    memcpy(move->cell + sizeof n, &rest, sizeof rest);
+    w->contexts[move->context]++;
+    w->gained += (double)move->rest;
+}
+
+static void add_waiting(Walk *w, const Queue *queue)
+{
+    uint64_t i = queue->n > MOST_WAITING ? queue->n - MOST_WAITING : 0;
+    for (; i < queue->n; i++)
+        add_to_cells(w, &queue->moves[i % MOST_WAITING]);
+}
+
 /* A move out of a state entered at `since`, with the history `before` (histories.py). */
-static void add_move(Walk *w, int64_t bucket, int64_t from, int64_t to, int64_t dwell, int64_t before, int64_t since,
-                     int busy)
+static void add_move(Walk *w, Queue *queue, int64_t bucket, int64_t from, int64_t to, int64_t dwell, int64_t before,
+                     int64_t since, int busy)
 {
     if (w->n_bins && !busy) {
         int64_t bin = bin_of(w, dwell);
         int64_t width = w->first_state + w->n_states;
         int64_t pair = ((bucket - w->first_bucket) * w->n_states + from - w->first_state) * width + to;
-        int64_t cell = pair * w->n_bins + bin;
-        w->cell_n[cell]++;
-        w->cell_rest[cell] += dwell - w->lower[bin];
-        w->gained += (double)(dwell - w->lower[bin]);
-        w->contexts[(pair * width + (before & SLOT)) * 2 + (since < w->mature_before)]++;
+        Waiting *move = &queue->moves[queue->n % MOST_WAITING];
+        if (queue->n++ >= MOST_WAITING)
+            add_to_cells(w, move);
+        move->cell = w->cells + (pair * w->n_bins + bin) * CELL_SIZE;
+        move->rest = dwell - w->lower[bin];
+        move->context = (pair * width + (before & SLOT)) * 2 + (since < w->mature_before);
+        CALL_FOR(move->cell);
         return;
     }
     int64_t i = w->n_moves++;
@@ -143,6 +187,7 @@ EXPORT int64_t journeys_walk(Walk *w)
 {
     const uint64_t *key = w->key;
     int64_t place, bucket, i = 0;
+    Queue queue = {.n = 0};
     const int64_t slots = (INT64_C(1) << (SLOT_BITS * w->n_slots)) - 1;
     if (!w->n_rows)
         return IN_ORDER;
@@ -185,8 +230,8 @@ EXPORT int64_t journeys_walk(Walk *w)
                     if (w->merge && steps == 1 && !sure)
                         w->unsure_visits++;
                     else
-                        add_move(w, bucket, prev, lapses ? LAPSED : what, (lapses ? last + w->silence : now) - visit,
-                                 before, visit, events > w->busy_after);
+                        add_move(w, &queue, bucket, prev, lapses ? LAPSED : what,
+                                 (lapses ? last + w->silence : now) - visit, before, visit, events > w->busy_after);
                     if (!lapses) {
                         before = (before << SLOT_BITS | prev) & slots;
                         steps++;
@@ -260,6 +305,7 @@ EXPORT int64_t journeys_walk(Walk *w)
                 w->f_visit[f] = visit;
         }
     }
+    add_waiting(w, &queue);
     return IN_ORDER;
 }
 

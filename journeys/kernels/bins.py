@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from functools import cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -11,6 +12,10 @@ DAY_US = 86_400_000_000
 HOUR_US = 3_600_000_000
 # Years 1 to 9999 in microseconds: no gap between two rows of a readable log is longer.
 LONGEST_US = 9_999 * 366 * DAY_US
+# Floating-point numbers that agree in their leading 18 bits lie within 1/64 of an octave; whole numbers of up to so many
+# bits are exact as such.
+SUB_OCTAVE_SHIFT = 46
+_EXACT_BITS = 52
 STEPS_TO_SILENCE = 219
 FINEST_SHARE = 43_200
 STANDARD_HORIZONS_US = (
@@ -85,23 +90,36 @@ def bin_of(duration_us: NDArray[np.int64], edges: NDArray[np.int64] | None) -> N
     """Return the bin of each duration (whole days where `edges` is None)."""
     if edges is None:
         return np.asarray(duration_us // DAY_US, np.int64)
-    if len(duration_us) < len(edges) or not _even(edges):
+    if len(duration_us) < len(edges):
         return np.asarray(np.searchsorted(edges, duration_us, side="left"), np.int64)
-    # Geometric edges: the logarithm tells the bin to within one, and a comparison settles it; far faster than a search.
-    scale = (len(edges) - 1) / np.log(edges[-1] / edges[0])
-    guess = np.log(np.maximum(duration_us, 1).astype(np.float32))
-    guess -= np.float32(np.log(edges[0]))
-    guess *= np.float32(scale)
-    bins = np.clip(np.ceil(guess, out=guess), 0, len(edges) - 1).astype(np.int64)
-    bins -= (bins > 0) & (duration_us <= edges[np.maximum(bins - 1, 0)])
-    bins += duration_us > edges[bins]
+    # The leading bits tell a bin that is not too high, and few steps up settle it: far faster than a search. What is
+    # taken off goes beyond what rounding to a floating-point number can add.
+    at_least = np.maximum(duration_us, 0)
+    at_least -= at_least >> _EXACT_BITS
+    bins = lowest_bins(edges.tobytes())[at_least.astype(np.float64).view(np.int64) >> SUB_OCTAVE_SHIFT]
+    bins = bins.astype(np.int64)
+    while (above := duration_us > edges[bins]).any():
+        bins += above
     return bins
 
 
-def _even(edges: NDArray[np.int64]) -> bool:
-    """Tell whether the logarithm of an edge gives its place to well within one bin."""
-    place = np.log(edges / edges[0]) * ((len(edges) - 1) / np.log(edges[-1] / edges[0]))
-    return bool(np.abs(place - np.arange(len(edges))).max() < 0.9)
+@cache
+def lowest_bins(edges: bytes) -> NDArray[np.int16]:
+    """Return, for the leading bits of a duration as a floating-point number, the lowest bin it can be in.
+
+    Parameters
+    ----------
+    edges : bytes
+        Upper edges of the bins, as int64.
+
+    Returns
+    -------
+    ndarray of int16
+        By the bits that `SUB_OCTAVE_SHIFT` leaves.
+    """
+    last = int(np.array(float(LONGEST_US)).view(np.int64)) >> SUB_OCTAVE_SHIFT
+    lowest = (np.arange(last + 1, dtype=np.int64) << SUB_OCTAVE_SHIFT).view(np.float64)
+    return np.searchsorted(np.frombuffer(edges, np.int64), np.ceil(lowest), side="left").astype(np.int16)
 
 
 def bin_bounds_days(edges: NDArray[np.int64] | None, n_bins: int) -> tuple[NDArray[np.float64], NDArray[np.float64]]:

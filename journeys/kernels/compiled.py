@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import ctypes
 import sys
-from dataclasses import replace
+from dataclasses import dataclass, replace
 from functools import cache
 from importlib.util import find_spec
 from typing import Any, TypeVar
@@ -16,13 +16,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from journeys.kernels.arrays import IntArray
-from journeys.kernels.bins import LONGEST_US
+from journeys.kernels.bins import lowest_bins
 from journeys.kernels.records import FIRST_OUTCOME, Carried, Cells, Counted, Ends, Entries, Gaps, Moves, Reading
 
 _OUT_OF_ORDER = 1
 _NO_SILENCE = -1
-# Floating-point numbers that agree in their leading 18 bits lie within 1/64 of an octave.
-_SUB_OCTAVE_SHIFT = 46
 
 T = TypeVar("T", Moves, Entries, Ends)
 
@@ -35,7 +33,7 @@ _FIELDS = (
     "m_bucket", "m_state", "m_next", "m_dwell", "m_before", "m_since", "m_busy",
     "e_bucket", "e_state", "e_outcome", "e_sure", "e_steps", "e_elapsed",
     "b_bucket", "b_state", "b_sure", "g_bucket", "g_outcome", "g_away", "repeated", "bare", "again",
-    "cell_n", "cell_rest", "contexts", "lower", "upper", "guess", "n_bins", "first_bucket", "n_states", "whole_days",
+    "cells", "contexts", "lower", "upper", "guess", "n_bins", "first_bucket", "n_states", "whole_days",
     "mature_before", "n_slots",
     "first_state", "first_churned", "silence", "same_outcome", "merge", "log_start", "complete", "busy_after",
     "n_moves", "n_ends", "n_begun", "n_gaps", "n_fresh", "n_repeated", "n_bare", "n_again", "unsure_visits",
@@ -74,6 +72,38 @@ def is_built() -> bool:
     return sys.byteorder == "little" and _library() is not None
 
 
+@dataclass(frozen=True)
+class Room:
+    """Where the loop writes, kept from one call to the next: new memory would have to be cleared first.
+
+    Attributes
+    ----------
+    n_rows : int
+        For how many rows there is room.
+    moves, ends, begun, gaps, marked, fresh
+        Moves outside the cells, ended journeys, entries, absences, positions of marked rows, records of new customers.
+    """
+
+    n_rows: int
+    moves: Moves
+    ends: Ends
+    begun: Entries
+    gaps: Gaps
+    marked: dict[str, IntArray]
+    fresh: Carried
+
+    @classmethod
+    def of(cls, n: int, *, merge: bool) -> Room:
+        """Return room for `n` rows; `merge` as in `Reading.merge_repeats`."""
+        # A row makes at most one move, and ends at most two journeys: one by its absence, one by itself.
+        moves = Moves(_bytes(n), _codes(n), _codes(n), _times(n), _times(n), _times(n), _flags(n))
+        ends = Ends(_bytes(2 * n), _codes(2 * n), _codes(2 * n), _flags(2 * n), _times(2 * n), _times(2 * n))
+        marked = {"repeated": _times(n), "bare": _times(n), "again": _times(n)}
+        fresh = Carried.zeros(n, ("visit_start",) if merge else ())
+        begun, gaps = Entries(_bytes(n), _codes(n), _flags(n)), Gaps(_bytes(n), _codes(n), _times(n), True)
+        return cls(n, moves, ends, begun, gaps, marked, fresh)
+
+
 def count_in_order(
     key: NDArray[np.uint64],
     time: IntArray,
@@ -82,6 +112,7 @@ def count_in_order(
     first_keys: NDArray[np.uint64],
     reading: Reading,
     cells: Cells,
+    room: Room,
 ) -> tuple[Counted, Carried | None, float] | None:
     """Return what rows in order add to the tally, and the records of new customers; change the others in place.
 
@@ -97,11 +128,13 @@ def count_in_order(
         The rules.
     cells : Cells
         Where moves are added, but for busy ones.
+    room : Room
+        For as many rows at least.
 
     Returns
     -------
     counted : Counted
-        Moves that are not in the cells, entries and ended journeys.
+        Moves that are not in the cells, entries and ended journeys; held in `room`, so until the next call.
     fresh : Carried or None
         Records of new customers.
     gained : float
@@ -114,16 +147,8 @@ def count_in_order(
         msg = "the compiled loop is not built; wanted a C compiler when the package was installed"
         raise ImportError(msg)
     n = len(key)
-    # A row makes at most a lapse and a move, and ends at most two journeys.
-    moves = Moves(
-        _bytes(2 * n), _codes(2 * n), _codes(2 * n), _times(2 * n), _times(2 * n), _times(2 * n), _flags(2 * n)
-    )
-    ends = Ends(_bytes(2 * n), _codes(2 * n), _codes(2 * n), _flags(2 * n), _times(2 * n), _times(2 * n))
-    begun = Entries(_bytes(n), _codes(n), _flags(n))
-    gaps = Gaps(_bytes(n), _codes(n), _times(n), True)
-    marked = {"repeated": _times(n), "bare": _times(n), "again": _times(n)}
-    fresh = Carried.zeros(n, ("visit_start",) if reading.merge_repeats else ())
-    guess = _bin_guess(cells.upper.tobytes())
+    moves, ends, begun, gaps, marked, fresh = room.moves, room.ends, room.begun, room.gaps, room.marked, room.fresh
+    guess = lowest_bins(cells.upper.tobytes())
     arrays = {
         "key": key, "time": time, "code": code, "first_keys": first_keys, **marked,
         **_prefixed("c", carried), **_prefixed("f", fresh),
@@ -132,14 +157,14 @@ def count_in_order(
         "e_bucket": ends.bucket, "e_state": ends.state, "e_outcome": ends.outcome,
         "e_sure": ends.sure, "e_steps": ends.steps, "e_elapsed": ends.elapsed, "b_bucket": begun.bucket,
         "b_state": begun.state, "b_sure": begun.sure, "g_bucket": gaps.bucket, "g_outcome": gaps.outcome,
-        "g_away": gaps.away, "cell_n": cells.n, "cell_rest": cells.rest, "contexts": cells.contexts,
+        "g_away": gaps.away, "cells": cells.cells, "contexts": cells.contexts,
         "lower": cells.lower, "upper": cells.upper, "guess": guess,
     }  # fmt: skip
     # Held until the loop is done: an array that had to be copied is in no other hands.
     held = {name: np.ascontiguousarray(array) for name, array in arrays.items()}
     walk = _Walk(
         **{name: array.ctypes.data for name, array in held.items()},
-        n_rows=n, n_buckets=len(first_keys), n_carried=len(carried.key), n_bins=len(cells.upper) if len(cells.n) else 0,
+        n_rows=n, n_buckets=len(first_keys), n_carried=len(carried.key), n_bins=len(cells.upper) if len(cells.cells) else 0,
         first_bucket=cells.first_bucket, n_states=cells.n_states, whole_days=cells.whole_days,
         mature_before=cells.mature_before, n_slots=reading.order,
         first_state=reading.first_state, first_churned=FIRST_OUTCOME + reading.n_converted,
@@ -236,15 +261,6 @@ def _prefixed(letter: str, records: Carried) -> dict[str, NDArray[Any]]:
         records.steps, records.n_events, records.decided, records.converted, records.before, records.sure,
     )  # fmt: skip
     return {f"{letter}_{name}": column for name, column in zip(_CARRIED, columns, strict=True)}
-
-
-@cache
-def _bin_guess(upper: bytes) -> NDArray[np.int16]:
-    """Return, for the leading bits of a dwell, the lowest bin it can be in."""
-    edges = np.frombuffer(upper, np.int64)
-    last = int(np.array(float(LONGEST_US)).view(np.int64)) >> _SUB_OCTAVE_SHIFT
-    lowest = (np.arange(last + 1, dtype=np.int64) << _SUB_OCTAVE_SHIFT).view(np.float64)
-    return np.searchsorted(edges, np.ceil(lowest), side="left").astype(np.int16)
 
 
 def _first(records: T, n: int) -> T:

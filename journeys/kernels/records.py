@@ -14,6 +14,8 @@ from journeys.kernels.arrays import IntArray as Ints
 from journeys.kernels.bins import DAY_US
 from journeys.kernels.grouping import Grouping
 
+# The two numbers of a cell side by side, so that adding to them asks for one place in memory.
+CELL = np.dtype([("n", np.uint32), ("rest", np.int64)])
 PutIn = Callable[[NDArray[Any], Ints, NDArray[Any]], NDArray[Any]]
 
 # Codes of what a row or a move can lead to: these two, then the outcomes, then the states.
@@ -186,7 +188,7 @@ class Cells:
 
     Attributes
     ----------
-    n, rest : ndarray of uint32 and of int64
+    cells : ndarray of CELL
         Counts, and sums of dwell less the lower edge of its bin, by bucket, state, next and bin.
     contexts : ndarray of uint32
         Counts by bucket, state, next, state before and whether entered before `mature_before`.
@@ -198,8 +200,7 @@ class Cells:
         Bin d holds the dwell of exactly d days.
     """
 
-    n: NDArray[np.uint32]
-    rest: Ints
+    cells: NDArray[np.void]
     contexts: NDArray[np.uint32]
     lower: Ints
     upper: Ints

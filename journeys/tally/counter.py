@@ -13,7 +13,7 @@ from journeys.intake.findings import Findings
 from journeys.intake.identity import FIRST_KEYS, bucket_of_major
 from journeys.intake.rows import Rows
 from journeys.kernels.arrays import BoolArray, IntArray
-from journeys.kernels.compiled import count_in_order, gathered, inserted
+from journeys.kernels.compiled import Room, count_in_order, gathered, inserted
 from journeys.kernels.counting import close_log, count_rows
 from journeys.kernels.openers import before_opener
 from journeys.kernels.records import FIRST_OUTCOME, Carried, Counted, Reading
@@ -84,6 +84,7 @@ class Counter:
             *(["value", "total_value"] if reading.values else []),
         ]
         self._carried = self._blank(0)
+        self._room = Room.of(0, merge=reading.merge_repeats)
         self._n_states = 0
         self._touch_of_code: NDArray[np.int8] | None = None
 
@@ -165,7 +166,9 @@ class Counter:
             rows = self._without_duplicates(rows, rows.starts())
             order, found = rows.order, (rows.key, rows.time, code_of_event[rows.event])
         cells = self._sums.cells(len(order), self._n_states)
-        result = count_in_order(*found, self._carried, FIRST_KEYS, self._reading, cells)
+        if len(order) > self._room.n_rows:
+            self._room = Room.of(len(order), merge=self._reading.merge_repeats)
+        result = count_in_order(*found, self._carried, FIRST_KEYS, self._reading, cells, self._room)
         if result is None:
             raise OutOfOrderError
         counted, fresh, gained = result

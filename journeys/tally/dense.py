@@ -8,7 +8,7 @@ from numpy.typing import NDArray
 from journeys.kernels.arrays import IntArray
 from journeys.kernels.bins import DAY_US, bin_of
 from journeys.kernels.histories import latest
-from journeys.kernels.records import Cells, Moves
+from journeys.kernels.records import CELL, Cells, Moves
 from journeys.tally.accumulate import Accumulator, Columns, Keyed, limbs, product_limbs
 from journeys.tally.keys import pack
 
@@ -54,8 +54,7 @@ class MoveSums:
         if longest_us is not None and not more:
             self._n_bins = int(bin_of(np.array([longest_us]), edges)[0]) + 1
         self._n_states = 0
-        self._n = np.zeros(0, np.uint32)
-        self._rest = np.zeros(0, np.int64)
+        self._cells = np.zeros(0, CELL)
         self._count, self._dwell = 0, 0.0
         self._sparse = Accumulator(("n", "dwell_high", "dwell_low"), more)
         bins = np.arange(self._n_bins)
@@ -73,9 +72,9 @@ class MoveSums:
         if n_states > self._n_states:
             self._grow(n_states)
         bins = bin_of(moves.dwell, self._edges)
-        rest = moves.dwell - self._lower[bins] if len(self._n) else moves.dwell
+        rest = moves.dwell - self._lower[bins] if len(self._cells) else moves.dwell
         total = float(rest.sum(dtype=np.float64))
-        if not len(self._n) or total > _MOST_DWELL:
+        if not len(self._cells) or total > _MOST_DWELL:
             self._add_sparse(moves, 0)
             return
         cell = moves.bucket.astype(np.int64)
@@ -89,8 +88,8 @@ class MoveSums:
         cell += bins
         self._make_room(len(cell), total)
         self._dwell += total
-        np.add.at(self._n, cell, np.uint32(1))
-        np.add.at(self._rest, cell, rest)
+        np.add.at(self._cells["n"], cell, np.uint32(1))
+        np.add.at(self._cells["rest"], cell, rest)
 
     def cells(self, n_rows: int, n_states: int, contexts: NDArray[np.uint32], mature_before: int) -> Cells:
         """Return the table of cells with room for the moves of `n_rows` rows, for a compiled loop to add to.
@@ -101,13 +100,13 @@ class MoveSums:
             self._grow(n_states)
         # A row makes at most one move and one lapse.
         most = 2.0 * n_rows * self._widest
-        fits = len(self._n) > 0 and most <= _MOST_DWELL and len(contexts) > 0
+        fits = len(self._cells) > 0 and most <= _MOST_DWELL and len(contexts) > 0
         if fits:
             self._make_room(2 * n_rows, most)
-        n, rest = (self._n, self._rest) if fits else (self._n[:0], self._rest[:0])
         upper = self._lower if self._edges is None else self._edges[: self._n_bins]
         place = self._buckets.start, self._n_states, self._edges is None
-        return Cells(n, rest, contexts if fits else contexts[:0], self._lower, upper, *place, mature_before)
+        cells, contexts = (self._cells, contexts) if fits else (self._cells[:0], contexts[:0])
+        return Cells(cells, contexts, self._lower, upper, *place, mature_before)
 
     def gained(self, dwell: float) -> None:
         """Note by how much a compiled loop has raised the cells' dwell."""
@@ -122,7 +121,7 @@ class MoveSums:
     def result(self) -> Keyed:
         """Return the distinct keys in order and their sums."""
         self._empty_cells()
-        self._n, self._rest = np.zeros(0, np.uint32), np.zeros(0, np.int64)
+        self._cells = np.zeros(0, CELL)
         return self._sparse.result()
 
     def _grow(self, n_states: int) -> None:
@@ -131,25 +130,24 @@ class MoveSums:
         self._n_states = n_states
         per_bucket = n_states * (self._first_state + n_states) * self._n_bins
         size = per_bucket * len(self._buckets) if per_bucket * 200 <= MOST_CELLS else 0
-        self._n, self._rest = np.zeros(size, np.uint32), np.zeros(size, np.int64)
+        self._cells = np.zeros(size, CELL)
 
     def _empty_cells(self) -> None:
         """Move what the cells hold to the sorted table."""
         # A few buckets at a time, to stay small.
-        size = max(len(self._n) // max(len(self._buckets), 1), 1) * _BUCKETS_AT_ONCE
-        for begin in range(0, len(self._n), size):
-            at = np.flatnonzero(self._n[begin : begin + size]) + begin
+        size = max(len(self._cells) // max(len(self._buckets), 1), 1) * _BUCKETS_AT_ONCE
+        for begin in range(0, len(self._cells), size):
+            at = np.flatnonzero(self._cells["n"][begin : begin + size]) + begin
             bins = at % self._n_bins
             above = at // self._n_bins
             next_code = above % (self._first_state + self._n_states)
             above //= self._first_state + self._n_states
             state = above % self._n_states + self._first_state
             bucket = above // self._n_states + self._buckets.start
-            n = self._n[at].astype(np.int64)
-            sums = product_limbs(n, self._lower[bins], self._rest[at], "dwell")
+            n = self._cells["n"][at].astype(np.int64)
+            sums = product_limbs(n, self._lower[bins], self._cells["rest"][at], "dwell")
             self._sparse.add(pack(bucket, state, next_code, bins), {"n": n, **sums})
-        self._n[:] = 0
-        self._rest[:] = 0
+        self._cells[:] = np.zeros((), CELL)
         self._count, self._dwell = 0, 0.0
 
     def _add_sparse(self, moves: Moves, busy: int) -> None:

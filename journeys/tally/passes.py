@@ -8,6 +8,7 @@ from dataclasses import dataclass
 from typing import Any, TypeVar
 
 import numpy as np
+import pyarrow as pa
 from numpy.typing import NDArray
 
 from journeys.errors import LogError
@@ -184,6 +185,8 @@ class Pass:
                 wait(jobs)
                 for job in jobs:
                     job.result()
+            # The log is read: its room is for the tables now.
+            pa.default_memory_pool().release_unused()
             final = self._final()
             tables = [job.result() for job in [pool.submit(worker.close, *final) for worker in self._workers]]
         return self._tally(tables)
@@ -230,7 +233,10 @@ class Pass:
     def _tally(self, parts: list[dict[str, Columns]]) -> Tally:
         findings = sum((worker.findings for worker in self._workers), self._normaliser.findings)
         findings.add("later_than_now", self._rules.time, self._look.n_later_than_now)
-        tables = {name: _side_by_side([part.pop(name) for part in parts]) for name in KEYS}
+        with ThreadPoolExecutor(len(self._workers)) as pool:
+            # In threads, which also get the memory that the workers have let go of.
+            joined = pool.map(lambda name: _side_by_side([part.pop(name) for part in parts]), KEYS)
+            tables = dict(zip(KEYS, joined, strict=True))
         if len(self._touchpoints.names) > MOST_IN_SETS:
             tables["touch_sets"] = {column: values[:0] for column, values in tables["touch_sets"].items()}
         groups = self._name_groups(tables)

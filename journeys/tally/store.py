@@ -70,8 +70,8 @@ def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | 
         "findings": tally.record.to_dict(),
     }
     schema = _schema(tally.rules, tally.order)
-    # The checksum is taken while the tables are written: the head goes into the end of the file. Arrow's own copy of the
-    # schema is left out, for it would hide what is added there.
+    # The checksum is taken while the tables are written: the head goes into the end of the file. Arrow's own copy of
+    # the schema is left out, for it would hide what is added there.
     with (
         written_whole(path) as part,
         ThreadPoolExecutor(1) as other,
