@@ -12,9 +12,9 @@ DAY_US = 86_400_000_000
 HOUR_US = 3_600_000_000
 # Years 1 to 9999 in microseconds: no gap between two rows of a readable log is longer.
 LONGEST_US = 9_999 * 366 * DAY_US
-# Floating-point numbers that agree in their leading 18 bits lie within 1/64 of an octave; whole numbers of up to so many
-# bits are exact as such.
+# Floating-point numbers that agree in their leading 18 bits lie within 1/64 of an octave.
 SUB_OCTAVE_SHIFT = 46
+# Whole numbers of so many bits are floating-point numbers without rounding.
 _EXACT_BITS = 52
 STEPS_TO_SILENCE = 219
 FINEST_SHARE = 43_200

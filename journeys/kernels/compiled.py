@@ -164,7 +164,8 @@ def count_in_order(
     held = {name: np.ascontiguousarray(array) for name, array in arrays.items()}
     walk = _Walk(
         **{name: array.ctypes.data for name, array in held.items()},
-        n_rows=n, n_buckets=len(first_keys), n_carried=len(carried.key), n_bins=len(cells.upper) if len(cells.cells) else 0,
+        n_rows=n, n_buckets=len(first_keys), n_carried=len(carried.key),
+        n_bins=len(cells.upper) if len(cells.cells) else 0,
         first_bucket=cells.first_bucket, n_states=cells.n_states, whole_days=cells.whole_days,
         mature_before=cells.mature_before, n_slots=reading.order,
         first_state=reading.first_state, first_churned=FIRST_OUTCOME + reading.n_converted,
