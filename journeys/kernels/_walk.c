@@ -159,6 +159,7 @@ static void add_move(Walk *w, Queue *queue, int64_t bucket, int64_t from, int64_
         move->rest = dwell - w->lower[bin];
         move->context = (pair * width + (before & SLOT)) * 2 + (since < w->mature_before);
         CALL_FOR(move->cell);
+        CALL_FOR(&w->contexts[move->context]);
         return;
     }
     int64_t i = w->n_moves++;

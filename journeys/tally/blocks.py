@@ -23,21 +23,25 @@ def cut_between_ties(blocks: Iterator[Rows]) -> Iterator[Rows]:
         The same rows in the same order. In a log in time order, rows of one moment stay together; in one
         grouped by customer, so do the rows of a customer unless they fill half a block.
     """
-    waiting: list[Rows] = []
+    waiting: Rows | None = None
     for block in blocks:
-        if not len(block.key):
+        if not len(block):
             continue
-        waiting.append(block)
-        del block
-        rows = concat_rows(waiting)
-        cut = _last_safe_cut(rows)
-        # A copy, so that the few rows that wait do not keep the whole block in memory.
-        waiting = [rows.take(np.arange(cut, len(rows)))]
-        if cut:
-            rows = rows.take(slice(0, cut))
-            yield rows
-        del rows
-    yield from waiting
+        if waiting is not None:
+            # Mostly nothing ties, and nothing is copied.
+            cut = len(waiting) if _apart(waiting, block) else _last_safe_cut(waiting)
+            if cut:
+                yield waiting.take(slice(0, cut))
+            if cut < len(waiting):
+                block = concat_rows([waiting.take(slice(cut, None)), block])
+        waiting = block
+    if waiting is not None:
+        yield waiting
+
+
+def _apart(rows: Rows, later: Rows) -> bool:
+    """Tell whether the next block begins with another moment and another customer."""
+    return bool(rows.time[-1] != later.time[0] and rows.key[-1] != later.key[0])
 
 
 def _last_safe_cut(rows: Rows) -> int:

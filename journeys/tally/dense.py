@@ -10,7 +10,7 @@ from journeys.kernels.bins import DAY_US, bin_of
 from journeys.kernels.histories import latest
 from journeys.kernels.records import CELL, Cells, Moves
 from journeys.tally.accumulate import Accumulator, Columns, Keyed, limbs, product_limbs
-from journeys.tally.keys import pack
+from journeys.tally.keys import pack, with_bins
 
 # Cells of all workers together: 12 bytes each.
 MOST_CELLS = 12_000_000
@@ -98,11 +98,11 @@ class MoveSums:
         """
         if n_states > self._n_states:
             self._grow(n_states)
-        # A row makes at most one move and one lapse.
-        most = 2.0 * n_rows * self._widest
+        # A row makes at most one move.
+        most = float(n_rows) * self._widest
         fits = len(self._cells) > 0 and most <= _MOST_DWELL and len(contexts) > 0
         if fits:
-            self._make_room(2 * n_rows, most)
+            self._make_room(n_rows, most)
         upper = self._lower if self._edges is None else self._edges[: self._n_bins]
         place = self._buckets.start, self._n_states, self._edges is None
         cells, contexts = (self._cells, contexts) if fits else (self._cells[:0], contexts[:0])
@@ -116,6 +116,7 @@ class MoveSums:
         """Empty the cells before they could overflow."""
         if self._count + count > _MOST_COUNT or self._dwell + dwell > _MOST_DWELL:
             self._empty_cells()
+            self._cells[:] = np.zeros((), CELL)
         self._count += count
 
     def result(self) -> Keyed:
@@ -133,21 +134,22 @@ class MoveSums:
         self._cells = np.zeros(size, CELL)
 
     def _empty_cells(self) -> None:
-        """Move what the cells hold to the sorted table."""
-        # A few buckets at a time, to stay small.
-        size = max(len(self._cells) // max(len(self._buckets), 1), 1) * _BUCKETS_AT_ONCE
-        for begin in range(0, len(self._cells), size):
-            at = np.flatnonzero(self._cells["n"][begin : begin + size]) + begin
-            bins = at % self._n_bins
+        """Move what the cells hold to the sorted table; the cells are then to be cleared or let go of."""
+        pairs = self._n_states, self._first_state + self._n_states
+        per_bucket = pairs[0] * pairs[1] * self._n_bins
+        for first in range(0, len(self._buckets) if len(self._cells) else 0, _BUCKETS_AT_ONCE):
+            # A few buckets at a time, to stay small.
+            some = self._buckets[first : first + _BUCKETS_AT_ONCE]
+            part = self._cells[first * per_bucket : (first + len(some)) * per_bucket]
+            at = np.flatnonzero(part["n"] != 0)
             above = at // self._n_bins
-            next_code = above % (self._first_state + self._n_states)
-            above //= self._first_state + self._n_states
-            state = above % self._n_states + self._first_state
-            bucket = above // self._n_states + self._buckets.start
-            n = self._cells["n"][at].astype(np.int64)
-            sums = product_limbs(n, self._lower[bins], self._cells["rest"][at], "dwell")
-            self._sparse.add(pack(bucket, state, next_code, bins), {"n": n, **sums})
-        self._cells[:] = np.zeros((), CELL)
+            bins = at - above * self._n_bins
+            # Everything but the bin is packed once for all the bins of a pair.
+            bucket, state, next_code = np.indices((len(some), *pairs)).reshape(3, -1)
+            key = pack(bucket + some.start, state + self._first_state, next_code)[above]
+            n, rest = part["n"][at].astype(np.int64), part["rest"][at]
+            sums = product_limbs(n, self._lower[bins], rest, "dwell")
+            self._sparse.add(with_bins(key, bins), {"n": n, **sums})
         self._count, self._dwell = 0, 0.0
 
     def _add_sparse(self, moves: Moves, busy: int) -> None:

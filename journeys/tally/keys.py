@@ -29,6 +29,11 @@ def pack(bucket: Whole, first: Whole, second: Whole | int = 0, bins: Whole | int
     return key
 
 
+def with_bins(key: Ints, bins: Ints) -> Ints:
+    """Return keys that were packed without a bin, with one."""
+    return key | (bins << 1)
+
+
 def bucket_in(key: Ints) -> Ints:
     """Return the bucket of each packed key."""
     return key >> (2 * _CODE_BITS + _BIN_BITS + 1)
