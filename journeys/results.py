@@ -13,6 +13,7 @@ from journeys import checks
 from journeys.kernels.arrays import BoolArray, FloatArray, IntArray
 from journeys.kernels.draw_intervals import drawn_interval
 from journeys.kernels.intervals import clopper_pearson, log_interval, logit_interval, t_interval
+from journeys.markup import frame_table, plain_number
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -236,7 +237,7 @@ class Result:
         from pandas.api.types import is_numeric_dtype
 
         frame = self.to_frame().drop(columns="confidence_level")
-        rows = [[_cell(value) for value in row] for row in frame.to_numpy(dtype=object)]
+        rows = [[plain_number(value) for value in row] for row in frame.to_numpy(dtype=object)]
         numbers = [i for i, name in enumerate(frame.columns) if is_numeric_dtype(frame[name])]
         table = text_table([[str(name) for name in frame.columns], *rows], right=numbers, width=0)
         return f"{self.title}, intervals at {100 * self.confidence_level:g} %\n{table}"
@@ -246,7 +247,9 @@ class Result:
         return f"<{type(self).__name__}: {len(self.keys)} rows at {100 * self.confidence_level:g} % confidence>"
 
     def _repr_html_(self) -> str:
-        return str(self.to_frame().to_html(index=False, escape=True))
+        frame = self.to_frame().drop(columns="confidence_level")
+        caption = f"{self.title}, intervals at {100 * self.confidence_level:g} %"
+        return frame_table(frame, caption, getattr(self, "cautions", ()), self.keys.shape[1])
 
 
 def joined_flags(parts: list[tuple[BoolArray, str]], n: int) -> np.ndarray:
@@ -312,10 +315,3 @@ def text_table(rows: Sequence[Sequence[str]], *, right: Collection[int] = (), wi
         lines.append(f"  {head}{last[0] if last else ''}".rstrip())
         lines += [" " * indent + more for more in last[1:]]
     return "\n".join(lines)
-
-
-def _cell(value: object) -> str:
-    """Return a cell of a result as text: four digits, a blank for no number."""
-    if isinstance(value, float):
-        return "" if np.isnan(value) else f"{value:.4g}" if abs(value) < 999.95 else f"{value:,.0f}"
-    return str(value)

@@ -20,7 +20,7 @@ from journeys.results import Result
 
 PACKAGE = Path(journeys.__file__).parent
 DEMO = PACKAGE.parent / "demo_data"
-STAGES = ("errors", "checks", "files", "kernels", "results", "intake", "tally", "models", "questions", "show",
+STAGES = ("errors", "checks", "files", "markup", "kernels", "results", "intake", "tally", "models", "questions", "show",
           "nightly", "command")
 
 # The one import that goes up: a method of the fit that forwards to a question, imported when it is called.

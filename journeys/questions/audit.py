@@ -12,6 +12,7 @@ import numpy as np
 from journeys.errors import JourneysWarning, LogError
 from journeys.intake.rules import JourneyRules
 from journeys.kernels.records import FIRST_OUTCOME, OPEN
+from journeys.markup import frame_table
 from journeys.models.model import JourneyModel, refuse_without_outcome
 from journeys.results import text_table
 from journeys.tally.count import count_log
@@ -77,7 +78,12 @@ class Audit:
         return f"<Audit: the log {says}; {n} kind{'' if n == 1 else 's'} of findings>"
 
     def _repr_html_(self) -> str:
-        return str(self.checks.to_html(index=False) + self.findings.to_html(index=False))
+        says = "can" if self.carries_model else "cannot"
+        found = self.findings.drop(columns="rows")
+        return (
+            frame_table(self.checks, f"Checks: this log {says} carry the model", n_keys=1)
+            + frame_table(found, "Findings" if len(found) else "Findings: none", n_keys=1)
+        )  # fmt: skip
 
 
 def audit(source: Any, rules: JourneyRules | None = None, *, progress: bool = False) -> Audit:

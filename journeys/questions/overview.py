@@ -11,6 +11,7 @@ import numpy as np
 from journeys import checks
 from journeys.errors import LogError
 from journeys.kernels.records import FIRST_OUTCOME, LAPSED, OPEN
+from journeys.markup import frame_table
 from journeys.models.fit import JourneyFit
 from journeys.models.what_if import WhatIf
 from journeys.questions.comeback import ComebackResult, comeback
@@ -232,7 +233,7 @@ class Overview:
         return f"<Overview: {self.plain.n_journeys:,} journeys of {self.plain.n_people:,} people>"
 
     def _repr_html_(self) -> str:
-        return str(self.reconciliation().to_html(index=False))
+        return frame_table(self.reconciliation(), "How the expected share comes out of the plain one", n_keys=1)
 
 
 def summarise(
