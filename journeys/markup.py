@@ -26,7 +26,7 @@ class Markup(str):
     __slots__ = ()
 
 
-def element(name: str, *inside: str, **attributes: str | int | float | None) -> Markup:
+def element(name: str, /, *inside: str, **attributes: str | int | float | None) -> Markup:
     """Return an element.
 
     Parameters

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import textwrap
-from collections.abc import Collection, Mapping, Sequence
+from collections.abc import Callable, Collection, Mapping, Sequence
 from dataclasses import dataclass, field, fields, replace
 from typing import TYPE_CHECKING, ClassVar
 
@@ -62,22 +62,21 @@ class Estimates:
         low, high = np.full(len(self.value), np.nan), np.full(len(self.value), np.nan)
         share = np.isin(self.scale, (LOGIT, CELL))
         one_sided = share & self.few
-        for mask, (lower, upper) in (
-            (
-                (self.scale == LOGIT) & ~self.few,
-                logit_interval(self.value, self.std_error, self.df, confidence_level),
-            ),
-            (
-                (self.scale == LOG) & ~self.few,
-                log_interval(self.value, self.std_error, self.df, confidence_level),
-            ),
-            ((self.scale == PLAIN) & ~self.few, t_interval(self.value, self.std_error, self.df, confidence_level)),
-            ((self.scale == CELL) & ~self.few, self._exact(confidence_level, "both")),
-            (one_sided & (self.value <= 0.5), self._exact(confidence_level, "upper")),
-            (one_sided & (self.value > 0.5), self._exact(confidence_level, "lower")),
-            ((self.scale == KNOWN) & np.isfinite(self.value), (self.value, self.value)),
-        ):
-            low[mask], high[mask] = lower[mask], upper[mask]
+        t_like = (self.value, self.std_error, self.df, confidence_level)
+        kinds: tuple[tuple[BoolArray, Callable[[], tuple[FloatArray, FloatArray]]], ...] = (
+            ((self.scale == LOGIT) & ~self.few, lambda: logit_interval(*t_like)),
+            ((self.scale == LOG) & ~self.few, lambda: log_interval(*t_like)),
+            ((self.scale == PLAIN) & ~self.few, lambda: t_interval(*t_like)),
+            ((self.scale == CELL) & ~self.few, lambda: self._exact(confidence_level, "both")),
+            (one_sided & (self.value <= 0.5), lambda: self._exact(confidence_level, "upper")),
+            (one_sided & (self.value > 0.5), lambda: self._exact(confidence_level, "lower")),
+            ((self.scale == KNOWN) & np.isfinite(self.value), lambda: (self.value, self.value)),
+        )
+        for mask, interval in kinds:
+            # most answers are of one kind, and exact bounds take long
+            if mask.any():
+                lower, upper = interval()
+                low[mask], high[mask] = lower[mask], upper[mask]
         return low, high
 
     def _exact(self, confidence_level: float, side: str) -> tuple[FloatArray, FloatArray]:

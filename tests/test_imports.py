@@ -29,7 +29,7 @@ FORWARDS = {("models.fit", "questions.moves")}
 PUBLIC = [
     "JourneyFit", "JourneyModel", "JourneyRules", "Tally", "__version__", "audit", "comeback", "compare", "credit",
     "first_passage", "from_wide", "outcomes", "passage_curve", "plots", "removal", "return_time", "sensitivity",
-    "stages", "summarise", "tally", "time_to_convert", "worth",
+    "stages", "summarise", "tally", "time_to_convert", "worth", "write_report",
 ]
 
 MODULES = {
