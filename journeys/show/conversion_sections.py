@@ -122,7 +122,7 @@ def _curve(overview: Overview) -> Curve | None:
         seen_time=seen["time"].to_numpy(),
         seen_share=100 * seen["estimate"].to_numpy(),
         median=float(half["estimate"]),
-        median_words=f"half of them by day {words}" if math.isfinite(half["estimate"]) else "",
+        median_words=f"half by day {words}" if math.isfinite(half["estimate"]) else "",
     )
 
 

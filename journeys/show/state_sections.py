@@ -11,7 +11,7 @@ from journeys.questions.overview import Overview
 from journeys.questions.stage_rows import CONVERTED
 from journeys.questions.time_to_convert import IN_THE_END, SO_FAR
 from journeys.show.conversion_sections import share_dot
-from journeys.show.parts import Dot, Dots, Lines, Section, Table, Words
+from journeys.show.parts import Dots, Lines, Section, Table, Words
 from journeys.show.rows import Row, amount, comeback_lines, notes_of, rows_of, share, tally_of, whole_amount
 from journeys.show.stage_table import stage_rows
 from journeys.show.words import length_words, outcome_words, percent
@@ -51,10 +51,12 @@ def from_each_state(overview: Overview) -> Section:
         name = short_name(state)
         rows.append((name, share(chance), whole_amount(step), amount(most), amount(day), amount(mean), notes))
         dots.append(share_dot(name, chance))
+    likely = max(rows_of(list(by_state[0].values()), measure="probability")[1:], key=lambda row: row["estimate"])
+    lead = f"Conversion is likeliest from {short_name(likely['start_state'])}: {share(likely)}."
     columns = ["from", "converts in the end", "median steps, if so", "mean steps", "median days, if so", "mean days"]
     table = Table("Conversion from entry and from every state, by the model", [*columns, "note"], rows)
     picture = [Dots("Converts in the end, from each state", "% of those who are there", dots)]
-    return Section("From each state", [table, *(picture if len(dots) <= MOST_DOTS else ())])
+    return Section("From each state", [Words(lead), table, *(picture if len(dots) <= MOST_DOTS else ())])
 
 
 def endings_from_each_state(overview: Overview) -> Section:
@@ -109,16 +111,12 @@ def who_comes_back(overview: Overview) -> list[Section]:
         told = (percent(mine[SO_FAR]["estimate"]), *(share(mine[one]) for one in horizons))
         notes = notes_of(*_flags(mine.values()), *(row["flag"] for row in half))
         rows.append((name, absences, *told, amount(half[0]) if half else "", notes))
-        dots += [_back_dot(name, one, mine[one]) for one in horizons]
+        dots += [share_dot(f"{length_words(duration_us(one, 'horizon'))}, {name}", mine[one]) for one in horizons]
     within = [f"within {length_words(duration_us(one, 'horizon'))}" for one in horizons]
     columns = ["after", "journeys ended so", "back so far", *within, "median days away", "note"]
     table = Table("Who came back, by how the journey before ended", columns, rows)
     picture = Dots("Back within a time of their last event", "% of those who had gone", dots)
     return [Section("Who comes back", [Lines(lines), table, *([picture] if dots else [])])]
-
-
-def _back_dot(name: str, horizon: str, row: Row) -> Dot:
-    return share_dot(f"{name}, {length_words(duration_us(horizon, 'horizon'))}", row)
 
 
 def _flags(rows: Iterable[Row]) -> list[str]:

@@ -29,6 +29,11 @@ def touchpoints(overview: Overview) -> list[Section]:
         held = "" if math.isnan(row["order_held"]) else f"{row['order_held']:.0f} of 100"
         told = (share(row), percent(row["share_in_log"]), held)
         rows.append((short_name(name), *told, *(mine.get(rule, "") for rule in CREDITED), row["flag"]))
+    first = frame[0]
+    lead = Words(
+        f"Of those who convert, {share(first)} passed {short_name(str(first['touchpoint']))} by the model, "
+        f"{percent(first['share_in_log'])} by the log."
+    )
     columns = ["touchpoint", "passed here, by the model", "by the log", "stayed ahead of the next"]
     heads = [*columns, *(f"credit, {rule}" for rule in CREDITED), "note"]
     table = Table("Of those who convert, who passed here, and what adds up", heads, rows)
@@ -36,7 +41,7 @@ def touchpoints(overview: Overview) -> list[Section]:
     unit = "% of those who convert: an upper limit of what could be lost"
     picture = [Dots("Passed here, by the model", unit, dots)] if len(dots) <= MOST_DOTS else []
     cautions = Lines(list(dict.fromkeys((*touched.cautions, *credited.cautions))))
-    return [Section("Touchpoints", [table, *picture, cautions])]
+    return [Section("Touchpoints", [lead, table, *picture, cautions])]
 
 
 def one_point_more(overview: Overview) -> list[Section]:

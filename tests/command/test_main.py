@@ -19,7 +19,7 @@ from club_log import LOG, RULES, club_overview, small_log
 import journeys as jn
 from journeys.command.main import DONE, FAILED, LIMITS, USAGE, main
 
-SUMMARY_FILES = {"summary.parquet", "summary.csv", "summary.md", "columns.csv"}
+SUMMARY_FILES = {"summary.parquet", "summary.csv", "summary.md", "summary.html", "columns.csv"}
 SMALL_RULES = """customer = "who"
 time = "when"
 event = "what"

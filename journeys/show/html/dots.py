@@ -9,7 +9,7 @@ from journeys.show.html.svg import CHARACTER, WIDTH, Axis, axis_over, cut, line,
 from journeys.show.parts import Dot, Dots
 
 _ROW = 20.0
-_LONGEST_LABEL = 26
+_LONGEST_LABEL = 28
 _MOST_TOLD = 30
 
 
@@ -67,7 +67,7 @@ def _row(dot: Dot, label: str, axis: Axis, y: float) -> list[Markup]:
     if math.isfinite(dot.low) and math.isfinite(dot.high):
         drawn.append(line(axis.at(dot.low), y, axis.at(dot.high), y, "span"))
     kind = "dot hollow" if dot.flag else "dot"
-    return [*drawn, element("circle", cx=place(axis.at(dot.estimate)), cy=place(y), r=4, class_=kind)]
+    return [*drawn, element("circle", cx=place(axis.at(dot.estimate)), cy=place(y), r=3.2, class_=kind)]
 
 
 def _told(part: Dots) -> str:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import re
 from collections.abc import Sequence
+from dataclasses import replace
 
 from journeys.markup import Markup, element, escaped, joined
 from journeys.questions.overview import Overview
@@ -18,9 +19,12 @@ from journeys.show.sections import sections, title
 # Nothing may be fetched, and nothing run, even if a name got through as markup.
 _POLICY = "default-src 'none'; style-src 'unsafe-inline'; img-src data:"
 _NUMBER = re.compile(r"[+−]?\d[\d,.]*( %)?( \([^()]*\d[^()]*\))?|\d+ of \d+|[\d,]+ of [\d,]+|some never do|·")
+# Up to a sign that joins words, or to a blank.
+_PIECE = re.compile(r"[^_/.:\-]*[_/.:\-]+|[^_/.:\-]+")
+_UNBROKEN = 18
 _INTERVAL = re.compile(r"(.*\S) (\([^()]*\))")
 # Tables of more numbers than these put intervals below their numbers.
-_WIDE = 7
+_WIDE = 5
 
 
 def summary_html(overview: Overview, told: Sequence[Section] | None = None) -> str:
@@ -95,6 +99,7 @@ def _part(part: Part, key: str) -> Markup:
 
 
 def _table(part: Table) -> Markup:
+    part = _without_empty(part)
     numeric = [i >= part.n_keys and _is_numeric([row[i] for row in part.rows]) for i in range(len(part.columns))]
     ours = [name in part.ours for name in part.columns]
     lengths = [max((len(row[i]) for row in part.rows), default=0) for i in range(len(part.columns))]
@@ -103,7 +108,7 @@ def _table(part: Table) -> Markup:
         for number, long in zip(numeric, lengths, strict=True)
     ]
     heads = [
-        element("th", element("bdi", name), scope="col", class_="number" if number else None)
+        element("th", _name(name), scope="col", class_="number" if number else None)
         for name, number in zip(part.columns, numeric, strict=True)
     ]
     rows = [
@@ -112,7 +117,8 @@ def _table(part: Table) -> Markup:
     ]
     table = element(
         "table",
-        element("caption", part.caption), element("thead", element("tr", *heads)), element("tbody", *rows),
+        element("caption", element("span", part.caption)), element("thead", element("tr", *heads)),
+        element("tbody", *rows),
     )  # fmt: skip
     # A box that can be scrolled must be reached by the keyboard, and named.
     kind = "box below" if sum(numeric) >= _WIDE else "box"
@@ -120,8 +126,21 @@ def _table(part: Table) -> Markup:
 
 
 def _cell(text: str, is_key: bool, kind: str | None, is_ours: bool) -> Markup:
-    inside = _with_code(text) if is_ours else _with_interval(text) if kind == "number" else element("bdi", text)
+    inside = _with_code(text) if is_ours else _with_interval(text) if kind == "number" else _name(text)
     return element("th", inside, scope="row") if is_key else element("td", inside, class_=kind)
+
+
+def _without_empty(part: Table) -> Table:
+    """Return the table without columns, such as notes, in which nothing stands."""
+    kept = [i for i in range(len(part.columns)) if i < part.n_keys or any(row[i] for row in part.rows)]
+    rows = [[row[i] for i in kept] for row in part.rows]
+    return replace(part, columns=[part.columns[i] for i in kept], rows=rows)
+
+
+def _name(text: str) -> Markup:
+    """Return a name from the data, set apart from the text around it, which may be broken where its parts meet."""
+    pieces = [piece[i : i + _UNBROKEN] for piece in _PIECE.findall(text) for i in range(0, len(piece), _UNBROKEN)]
+    return element("bdi", joined(pieces, "<wbr>"))
 
 
 def _is_numeric(cells: Sequence[str]) -> bool:

@@ -26,20 +26,21 @@ a { color: var(--first); text-underline-offset: 0.15em; }
 a:focus-visible, .box:focus-visible { outline: 3px solid var(--second); outline-offset: 2px; }
 .skip { position: absolute; left: -100vw; background: var(--paper); padding: 0.5rem 1rem; }
 .skip:focus { left: 0; top: 0; z-index: 3; }
-nav ol { columns: 16rem; padding-left: 1.25rem; margin: 0.5rem 0; font-size: 0.9375rem; }
+nav ol { columns: 17rem; column-gap: 2.5rem; padding-left: 1.25rem; margin: 0.5rem 0; font-size: 0.9375rem; }
 nav li, ul li { margin: 0.25rem 0; }
 ul { padding-left: 1.25rem; }
 .box { overflow-x: auto; margin: 1rem 0; }
-table { border-collapse: collapse; font-size: 0.9375rem; line-height: 1.4; overflow-wrap: normal;
+@media (min-width: 50rem) { .box { width: max-content; max-width: calc(100% + (100vw - 50rem) / 2); } }
+table { border-collapse: collapse; font-size: 0.9375rem; line-height: 1.4; overflow-wrap: break-word;
   font-variant-numeric: lining-nums tabular-nums; }
 caption, figcaption { text-align: left; font-size: 0.9375rem; font-style: italic; padding-bottom: 0.35rem; }
+caption span { display: block; position: sticky; left: 0; width: fit-content; max-width: calc(100vw - 2rem); }
 th, td { text-align: left; vertical-align: top; padding: 0.3rem 0.9rem 0.3rem 0; font-weight: normal; }
 th:last-child, td:last-child { padding-right: 0; }
 thead th { vertical-align: bottom; color: var(--grey); border-bottom: 1.5px solid var(--ink); min-width: 4.5rem;
   max-width: 11rem; }
 tbody th, tbody td { border-bottom: 1px solid var(--line); }
-tbody th { background: var(--paper); max-width: 12rem; overflow-wrap: anywhere; }
-tbody th:first-child { min-width: 6rem; }
+tbody th { background: var(--paper); max-width: 14rem; }
 .number { text-align: right; white-space: nowrap; }
 thead .number { white-space: normal; }
 .words { min-width: 11rem; max-width: 26rem; }
@@ -64,13 +65,13 @@ svg .half { stroke: var(--ink); stroke-width: 1; stroke-dasharray: 2 2; }
 svg .mark { fill: var(--second); }
 dt { font-weight: bold; margin-top: 0.6rem; }
 dd { margin: 0 0 0 1.25rem; }
-code, pre { font: 0.875rem/1.5 ui-monospace, "DejaVu Sans Mono", Menlo, Consolas, monospace; }
+code, pre { font: 0.875em/1.5 ui-monospace, "DejaVu Sans Mono", Menlo, Consolas, monospace; }
 pre { white-space: pre-wrap; background: var(--wash); padding: 0.75rem 1rem; margin: 1rem 0; }
 @media (max-width: 40rem) {
   body { font-size: 1rem; }
   h1 { font-size: 1.5rem; margin-top: 1.5rem; }
   table, caption, figcaption { font-size: 0.875rem; }
-  tbody th:first-child { position: sticky; left: 0; max-width: 8.5rem; min-width: 5.5rem; padding-right: 0.6rem; }
+  tbody th:first-child { position: sticky; left: 0; max-width: 8.5rem; padding-right: 0.6rem; }
 }
 @media print {
   @page { margin: 16mm 14mm; }
@@ -79,7 +80,7 @@ pre { white-space: pre-wrap; background: var(--wash); padding: 0.75rem 1rem; mar
   nav, .skip { display: none; }
   h1 { margin-top: 0; }
   h2 { break-after: avoid; margin-top: 1.5rem; }
-  .box { overflow: visible; }
+  .box { overflow: visible; width: auto; max-width: none; break-inside: avoid; }
   table, caption, figcaption { font-size: 8pt; }
   th, td { padding-right: 0.5rem; }
   thead th { min-width: 0; }

@@ -8,8 +8,8 @@ from dataclasses import dataclass
 from journeys.markup import Markup, element
 
 # Wide enough for a phone; a larger screen shows the same at up to one and a half times the size.
-WIDTH = 360.0
-CHARACTER = 5.9
+WIDTH = 348.0
+CHARACTER = 6.5
 
 
 @dataclass(frozen=True)
