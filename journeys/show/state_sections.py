@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterable
+from dataclasses import replace
 
 from journeys.checks import duration_us
 from journeys.markup import short_name
@@ -112,6 +113,9 @@ def who_comes_back(overview: Overview) -> list[Section]:
         notes = notes_of(*_flags(mine.values()), *(row["flag"] for row in half))
         rows.append((name, absences, *told, amount(half[0]) if half else "", notes))
         dots += [share_dot(f"{length_words(duration_us(one, 'horizon'))}, {name}", mine[one]) for one in horizons]
+    if len(rows) == 1:
+        # whom it is about stands in the table above
+        dots = [replace(dot, label=dot.label.split(",")[0]) for dot in dots]
     within = [f"within {length_words(duration_us(one, 'horizon'))}" for one in horizons]
     columns = ["after", "journeys ended so", "back so far", *within, "median days away", "note"]
     table = Table("Who came back, by how the journey before ended", columns, rows)

@@ -194,6 +194,13 @@ def test_touchpoints_and_stages_have_their_sections(touched: Overview) -> None:
     assert heads[:3] == ["touchpoint", "passed here, by the model", "by the log"]
 
 
+def test_long_names_may_be_broken_where_their_parts_meet_and_sentences_at_blanks_only() -> None:
+    text = summary_html(club_overview())
+    assert "friend_<wbr>invitation" in text
+    assert "<wbr>" not in "".join(re.findall(r"a conversion is seen at once.{60}|>2024-1[^<]*<.", text))
+    assert not re.search(r"\s<wbr>|<wbr>\s", text)
+
+
 def test_columns_in_which_nothing_stands_are_left_out(club_page: Page) -> None:
     assert club_page.tables["Journeys by how they end"][0][-1] == "expected in the end"
     assert club_page.tables["Conversion by cohort"][0][-1] == "note"

@@ -19,9 +19,9 @@ from journeys.show.sections import sections, title
 # Nothing may be fetched, and nothing run, even if a name got through as markup.
 _POLICY = "default-src 'none'; style-src 'unsafe-inline'; img-src data:"
 _NUMBER = re.compile(r"[+−]?\d[\d,.]*( %)?( \([^()]*\d[^()]*\))?|\d+ of \d+|[\d,]+ of [\d,]+|some never do|·")
-# Up to a sign that joins words, or to a blank.
+# A long word may be broken after a sign that joins two, or after so many characters.
 _PIECE = re.compile(r"[^_/.:\-]*[_/.:\-]+|[^_/.:\-]+")
-_UNBROKEN = 18
+_SHORT, _UNBROKEN = 9, 18
 _INTERVAL = re.compile(r"(.*\S) (\([^()]*\))")
 # Tables of more numbers than these put intervals below their numbers.
 _WIDE = 5
@@ -139,8 +139,12 @@ def _without_empty(part: Table) -> Table:
 
 def _name(text: str) -> Markup:
     """Return a name from the data, set apart from the text around it, which may be broken where its parts meet."""
-    pieces = [piece[i : i + _UNBROKEN] for piece in _PIECE.findall(text) for i in range(0, len(piece), _UNBROKEN)]
-    return element("bdi", joined(pieces, "<wbr>"))
+    return element("bdi", *(_breakable(word) if len(word) > _SHORT else word for word in re.split(r"(\s+)", text)))
+
+
+def _breakable(word: str) -> Markup:
+    pieces = [piece[i : i + _UNBROKEN] for piece in _PIECE.findall(word) for i in range(0, len(piece), _UNBROKEN)]
+    return joined(pieces, "<wbr>")
 
 
 def _is_numeric(cells: Sequence[str]) -> bool:
