@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 
-from journeys.markup import plain_number
+from journeys.markup import plain_number, short_name
 from journeys.questions.overview import Overview
 from journeys.show.parts import Lines, Part, Section, Table
 from journeys.show.rows import parts_of, rows_of, tally_of
@@ -77,6 +77,6 @@ def _flag_lines(overview: Overview) -> list[str]:
     lines = []
     for text, meaning in FLAG_MEANINGS.items():
         if text in seen:
-            names = ", ".join(name for name, flag in overview.fit.row_flags.items() if flag == text)
+            names = ", ".join(short_name(name) for name, flag in overview.fit.row_flags.items() if flag == text)
             lines.append(f"{text}{f' ({names})' if names else ''}: {meaning}.")
     return lines
