@@ -19,6 +19,7 @@ from journeys.questions.stages import stages
 from journeys.questions.time_to_convert import time_to_convert
 from journeys.questions.worth import worth
 from journeys.show import plots
+from journeys.show.report import write_report
 from journeys.tally.count import count_log as tally
 from journeys.tally.tally import Tally
 
@@ -47,4 +48,5 @@ __all__ = [
     "tally",
     "time_to_convert",
     "worth",
+    "write_report",
 ]

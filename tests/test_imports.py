@@ -20,7 +20,7 @@ from journeys.results import Result
 
 PACKAGE = Path(journeys.__file__).parent
 DEMO = PACKAGE.parent / "demo_data"
-STAGES = ("errors", "checks", "files", "kernels", "results", "intake", "tally", "models", "questions", "show",
+STAGES = ("errors", "checks", "files", "markup", "kernels", "results", "intake", "tally", "models", "questions", "show",
           "nightly", "command")
 
 # The one import that goes up: a method of the fit that forwards to a question, imported when it is called.
@@ -29,7 +29,7 @@ FORWARDS = {("models.fit", "questions.moves")}
 PUBLIC = [
     "JourneyFit", "JourneyModel", "JourneyRules", "Tally", "__version__", "audit", "comeback", "compare", "credit",
     "first_passage", "from_wide", "outcomes", "passage_curve", "plots", "removal", "return_time", "sensitivity",
-    "stages", "summarise", "tally", "time_to_convert", "worth",
+    "stages", "summarise", "tally", "time_to_convert", "worth", "write_report",
 ]
 
 MODULES = {

@@ -14,6 +14,7 @@ from journeys.kernels.bins import DAY_US
 from journeys.kernels.records import FIRST_OUTCOME
 from journeys.kernels.sojourn import StayFit, fit_stays, move_influence
 from journeys.kernels.stays import BucketStays, FittedStays, Stays
+from journeys.markup import short_name
 from journeys.models.fit import Influence, JourneyFit, with_dead_ends
 from journeys.models.memory import Nodes, chain_of
 from journeys.models.stays import move_stays, without_open
@@ -187,6 +188,7 @@ class JourneyModel:
                 unseen,
                 "no stay in {} was seen as long as the silence: the share that lapses there is an upper bound",
                 EndNotSeenWarning,
+                depth=5,
             )
 
 
@@ -274,7 +276,8 @@ def _flag(row_flags: dict[str, str], labels: tuple[str, ...], rows: BoolArray, t
         row_flags[labels[row]] = text
 
 
-def _warn_rows(labels: tuple[str, ...], rows: BoolArray, text: str, kind: type[Warning]) -> None:
-    names = [labels[row] for row in np.flatnonzero(rows)]
+def _warn_rows(labels: tuple[str, ...], rows: BoolArray, text: str, kind: type[Warning], depth: int = 4) -> None:
+    """Warn of some rows; `depth` calls lie between here and the line that asked for the fit, which is the one shown."""
+    names = [short_name(labels[row]) for row in np.flatnonzero(rows)]
     shown = ", ".join(names[:5]) + (f" and {len(names) - 5} more" if len(names) > 5 else "")
-    warnings.warn(text.format(shown), kind, stacklevel=4)
+    warnings.warn(text.format(shown), kind, stacklevel=depth)

@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Any
 from journeys.checks import duration_text
 from journeys.intake.read import open_log
 from journeys.intake.rules import JourneyRules
+from journeys.markup import frame_table
 from journeys.models.model import refuse_without_outcome
 from journeys.questions.audit_checks import NO, Check, of_counts, of_patterns, of_silences
 from journeys.questions.silences import COLUMNS, other_silences
@@ -82,8 +83,14 @@ class Audit:
         return f"<Audit: the log {says}; {n} kind{'' if n == 1 else 's'} of findings>"
 
     def _repr_html_(self) -> str:
-        frames = (self.checks, self.silences, self.findings)
-        return "".join(str(frame.to_html(index=False)) for frame in frames if len(frame))
+        says = "can" if self.carries_model else "cannot"
+        found = self.findings.drop(columns="rows")
+        silences = frame_table(self.silences, "Other silences", n_keys=1) if len(self.silences) else ""
+        return (
+            frame_table(self.checks, f"Checks: this log {says} carry the model", n_keys=1)
+            + silences
+            + frame_table(found, "Findings" if len(found) else "Findings: none", n_keys=1)
+        )
 
 
 def audit(source: Any, rules: JourneyRules | None = None, *, progress: bool = False) -> Audit:

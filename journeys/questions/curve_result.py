@@ -13,6 +13,7 @@ import numpy.typing as npt
 from journeys import checks
 from journeys.kernels.arrays import FloatArray
 from journeys.kernels.intervals import variance_from_buckets
+from journeys.markup import frame_table, plain_number, short_name
 from journeys.models.fit import JourneyFit
 from journeys.models.what_if import WhatIf
 from journeys.questions.counted import inverted, shares_about, up
@@ -226,13 +227,11 @@ class PassageCurve:
 
     def summary(self) -> str:
         """Return the answer as plain text: the share in the end, the median, and some points of the curve."""
-        frame = self.to_frame()
-        few = frame.iloc[np.unique(np.linspace(0, len(frame) - 1, 12).round().astype(int))]
-        shown = few.drop(columns="confidence_level")
-        rows = [[_cell(value) for value in row] for row in shown.to_numpy(dtype=object)]
+        shown = self._few().drop(columns="confidence_level")
+        rows = [[plain_number(value) for value in row] for row in shown.to_numpy(dtype=object)]
         heads = [str(name) for name in shown.columns]
         told = [
-            [_cell(share), _cell(estimate), f"{_cell(low)} to {_cell(high)}", str(flag)]
+            [plain_number(share), plain_number(estimate), f"{plain_number(low)} to {plain_number(high)}", str(flag)]
             for share, estimate, _, low, high, _, flag in self.given_reached().quantile((0.5, 0.9)).to_numpy(object)
         ]
         whom = "of those who reach it" if self.given else "of all who start"
@@ -247,6 +246,11 @@ class PassageCurve:
             ]
         )
 
+    def _few(self) -> pd.DataFrame:
+        """Return a dozen points of the curve."""
+        frame = self.to_frame()
+        return frame.iloc[np.unique(np.linspace(0, len(frame) - 1, 12).round().astype(int))]
+
     def __repr__(self) -> str:
         """Return one line."""
         return (
@@ -256,7 +260,10 @@ class PassageCurve:
         )
 
     def _repr_html_(self) -> str:
-        return str(self.to_frame().to_html(index=False, escape=True))
+        few = self._few().drop(columns="confidence_level")
+        whom = "of those who reach it" if self.given else "of all who start"
+        caption = f"From {short_name(self.start)} to {', '.join(map(short_name, self.to))}, share {whom} by {self.unit}"
+        return frame_table(few, f"{caption}, intervals at {100 * self.confidence_level:g} %", n_keys=1)
 
     @cached_property
     def _shown(self) -> tuple[FloatArray, Estimates, np.ndarray]:
@@ -342,9 +349,3 @@ def _times(times: npt.ArrayLike) -> FloatArray:
         msg = "times: not all are numbers from 0; wanted times since the start, in the unit of the curve"
         raise ValueError(msg)
     return asked
-
-
-def _cell(value: object) -> str:
-    if isinstance(value, float):
-        return "" if np.isnan(value) else f"{value:.4g}" if abs(value) < 999.95 else f"{value:,.0f}"
-    return str(value)

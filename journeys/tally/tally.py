@@ -18,6 +18,7 @@ from journeys.intake.rule_checks import ALL
 from journeys.intake.rules import JourneyRules
 from journeys.kernels.histories import slot
 from journeys.kernels.records import FIRST_OUTCOME, LAPSED, OPEN
+from journeys.markup import facts
 from journeys.tally.accumulate import Columns, exact_limbs
 from journeys.tally.groups import Group, gathered, picked
 from journeys.tally.parts import added, of_groups
@@ -319,23 +320,30 @@ class Tally:
 
     def summary(self) -> str:
         """Return the size of the tally in words."""
-        ended = self.journeys["outcome"] != OPEN
-        lapsed = self.journeys["outcome"] == LAPSED
-        n = self.journeys["n"]
-        first, last = (instant_text(us)[: len("2025-06-30")] for us in (self.log_start_us, self.as_of_us))
+        ended = ", ".join(f"{n:,} {name}" for name, n in self._n_by_ending().items())
         return (
-            f"{self.n_rows:,} rows from {first} to {last}: "
-            f"{self.n_journeys:,} journeys of {self.n_people:,} people through {len(self.states)} states; "
-            f"{int(n[ended & ~lapsed].sum()):,} ended in an outcome, {int(n[lapsed].sum()):,} lapsed, "
-            f"{int(n[~ended].sum()):,} open"
+            f"{self.n_rows:,} rows {self._span()}: {self.n_journeys:,} journeys of {self.n_people:,} people through "
+            f"{len(self.states)} states; {ended}"
         )
+
+    def _span(self) -> str:
+        first, last = (instant_text(us)[: len("2025-06-30")] for us in (self.log_start_us, self.as_of_us))
+        return f"from {first} to {last}"
+
+    def _n_by_ending(self) -> dict[str, int]:
+        outcome, n = self.journeys["outcome"], self.journeys["n"]
+        ended, lapsed = outcome != OPEN, outcome == LAPSED
+        parts = {"ended in an outcome": ended & ~lapsed, "lapsed": lapsed, "open": ~ended}
+        return {name: int(n[mask].sum()) for name, mask in parts.items()}
 
     def __repr__(self) -> str:
         """Return one line."""
         return f"<Tally: {self.summary()}>"
 
     def _repr_html_(self) -> str:
-        return f"<p>Tally: {self.summary()}</p>"
+        ended = {name: f"{n:,}" for name, n in self._n_by_ending().items()}
+        told = {"rows": f"{self.n_rows:,}", "people": f"{self.n_people:,}", "journeys": f"{self.n_journeys:,}"}
+        return facts(f"Tally: {self._span()}", {**told, "states": f"{len(self.states):,}", **ended})
 
 
 def _timestamp(us: int) -> pd.Timestamp:

@@ -106,7 +106,7 @@ def test_every_command_runs_as_written(clone: Path):
             assert (clone / words[words.index("--out") + 1]).exists()
     written = {path.name for path in (clone / "club_summary").iterdir()}
     assert written == {
-        "summary.md", "summary.csv", "summary.parquet", "groups.csv", "columns.csv", "tally.parquet",
+        "summary.md", "summary.html", "summary.csv", "summary.parquet", "groups.csv", "columns.csv", "tally.parquet",
     }  # fmt: skip
 
 
