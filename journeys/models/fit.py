@@ -15,7 +15,7 @@ from journeys.errors import DeadEndWarning
 from journeys.kernels.arrays import BoolArray, FloatArray, IntArray
 from journeys.kernels.graph import Classes, classify
 from journeys.kernels.stays import FittedStays
-from journeys.models.stays import Nodes
+from journeys.models.memory import Nodes
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -141,7 +141,8 @@ class JourneyFit:
         Parameters
         ----------
         to : str, collection of str or None
-            An outcome, a state or several of either; None for all converted outcomes.
+            An outcome, a state or several of either; None for all converted outcomes. In a chain of a higher order a
+            state may be named by itself ("basket") or with what came before ("basket after price page").
 
         Returns
         -------
@@ -157,11 +158,13 @@ class JourneyFit:
         if not names:
             msg = f"`to` is missing; wanted one or more of {_listed(self.nodes.labels[1:])}"
             raise ValueError(msg)
-        unknown = [name for name in names if name not in self.nodes.labels[1:]]
+        last = ("entry", *self.nodes.last_states, *self.nodes.outcomes)
+        unknown = [name for name in names if name not in self.nodes.labels[1:] and name not in last[1:]]
         if unknown:
             msg = f"to={unknown[0]!r} is not in this chain; wanted one or more of {_listed(self.nodes.labels[1:])}"
             raise ValueError(msg)
-        return np.isin(np.array(self.nodes.labels, dtype=object), names)
+        mask = np.isin(np.array(self.nodes.labels, dtype=object), names)
+        return np.asarray(mask | np.isin(np.array(last, dtype=object), names), dtype=np.bool_)
 
     def save(self, path: str | os.PathLike[str]) -> None:
         """Write the fit to one file (see `journeys.models.store`)."""

@@ -60,7 +60,7 @@ def group_fits(fit: JourneyFit, by: str | Sequence[str]) -> list[GroupFit]:
         If a column is not one that journeys are grouped by.
     """
     tally = _tally_of(fit)
-    model = JourneyModel(open_moves=fit.open_moves)
+    model = JourneyModel(order=fit.nodes.order, open_moves=fit.open_moves)
     return [_group_fit(model, values, part) for values, part in tally.split(by).items()]
 
 
@@ -99,4 +99,4 @@ def rest_fit(fit: JourneyFit, by: str | Sequence[str], without: Group) -> GroupF
     GroupFit
     """
     tally = _tally_of(fit)
-    return _group_fit(JourneyModel(open_moves=fit.open_moves), without, tally.rest(by, without))
+    return _group_fit(JourneyModel(order=fit.nodes.order, open_moves=fit.open_moves), without, tally.rest(by, without))

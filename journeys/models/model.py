@@ -15,7 +15,8 @@ from journeys.kernels.records import FIRST_OUTCOME
 from journeys.kernels.sojourn import StayFit, fit_stays, move_influence
 from journeys.kernels.stays import FittedStays, Stays
 from journeys.models.fit import Influence, JourneyFit, with_dead_ends
-from journeys.models.stays import move_stays, nodes_of, without_open
+from journeys.models.memory import placed
+from journeys.models.stays import move_stays, without_open
 from journeys.tally.tally import Tally
 
 END_NOT_SEEN = "end not seen"
@@ -31,13 +32,18 @@ class JourneyModel:
 
     Parameters
     ----------
+    order : int
+        How many of the last states say where a journey goes next, from 1 to 3; above 1 it needs a tally that was
+        counted with that order (`jn.tally(log, rules, order=2)`). The states of the chain then have names such as
+        "basket after price page"; targets, touchpoints and returns may be named by the last state alone.
     open_moves : {"censored", "ignored"}
         "censored" keeps stays still open at the end of the log, as lasting at least that long
         (Aalen-Johansen); "ignored" counts completed moves only, which overstates quick moves.
 
     Notes
     -----
-    The chain is first-order: what comes next depends on the state a customer is in. The probabilities are
+    By default the chain is first-order: what comes next depends on the state a customer is in. Of an unsure journey the
+    moves whose history is unknown stay out of a fit of higher order. The probabilities are
     Aalen-Johansen estimates on binned stays, open ones right-censored; intervals come from the influence of
     200 buckets of customers (infinitesimal jackknife), so the journeys of one customer may be alike.
 
@@ -48,14 +54,16 @@ class JourneyModel:
 
     Examples
     --------
-    >>> JourneyModel().open_moves
-    'censored'
+    >>> JourneyModel()
+    JourneyModel(order=1, open_moves='censored')
     """
 
+    order: int = 1
     open_moves: str = "censored"
 
     def __post_init__(self) -> None:
         """Check the choices."""
+        checks.whole(self.order, "order", 1)
         checks.one_of(self.open_moves, ("censored", "ignored"), "open_moves")
 
     def fit(self, tally: Tally) -> JourneyFit:
@@ -74,8 +82,8 @@ class JourneyModel:
         Raises
         ------
         LogError
-            If the log is no longer than the silence, no journey has a sure entry, or none of the outcomes
-            named in the rules was ever seen.
+            If the log is no longer than the silence, no journey has a sure entry, none of the outcomes
+            named in the rules was ever seen, or the tally was counted with a lower order.
 
         Warns
         -----
@@ -86,6 +94,12 @@ class JourneyModel:
         DeadEndWarning
             If no move out of a state was seen.
         """
+        if self.order > tally.order:
+            msg = (
+                f"order={self.order}, but the tally was counted with order={tally.order}; wanted "
+                f"jn.tally(log, rules, order={self.order})"
+            )
+            raise LogError(msg)
         fault = fault_of(tally)
         if fault is not None:
             raise LogError(fault.message)
@@ -95,8 +109,9 @@ class JourneyModel:
 
     def fit_whatever(self, tally: Tally) -> JourneyFit:
         """Fit the chain to a tally whose faults have been looked for (see `fault_of`)."""
-        nodes = nodes_of(tally)
-        stays, by_bucket = move_stays(tally, censored=self.open_moves == "censored")
+        where = placed(tally, self.order)
+        nodes = where.nodes
+        stays, by_bucket = move_stays(tally, where, censored=self.open_moves == "censored")
         weight = 0.0 if tally.whole_days else 0.5
         found = fit_stays(stays, weight)
         row_flags: dict[str, str] = {}

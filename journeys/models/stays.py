@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass, replace
+from dataclasses import replace
 
 import numpy as np
 
@@ -11,37 +11,9 @@ from journeys.kernels.arrays import BoolArray, FloatArray, IntArray, sum_at
 from journeys.kernels.bins import DAY_US, bin_bounds_days, bin_of, dwell_edges, elapsed_edges
 from journeys.kernels.records import FIRST_OUTCOME, LAPSED, OPEN
 from journeys.kernels.stays import BucketStays, Stays
+from journeys.models.memory import Placed
 from journeys.tally.accumulate import Columns, join_limbs
 from journeys.tally.tally import Tally
-
-
-@dataclass(frozen=True)
-class Nodes:
-    """Positions of entry, states and outcomes in the arrays of a fit: entry is 0, then the states, then ends."""
-
-    states: tuple[str, ...]
-    outcomes: tuple[str, ...]
-
-    @property
-    def labels(self) -> tuple[str, ...]:
-        """Names of all nodes."""
-        return ("entry", *self.states, *self.outcomes)
-
-    @property
-    def n_rows(self) -> int:
-        """Entry and the states."""
-        return 1 + len(self.states)
-
-    @property
-    def n_nodes(self) -> int:
-        """Rows and outcomes."""
-        return self.n_rows + len(self.outcomes)
-
-
-def nodes_of(tally: Tally) -> Nodes:
-    """Return the nodes of a tally's chain: its states and outcomes, and lapsed where a silence is given."""
-    lapsed = () if tally.rules.silence_us is None else ("lapsed",)
-    return Nodes(tally.states, (*tally.rules.outcomes, *lapsed))
 
 
 def live_buckets(tally: Tally) -> IntArray:
@@ -50,13 +22,15 @@ def live_buckets(tally: Tally) -> IntArray:
     return np.where(live, np.cumsum(live) - 1, -1)
 
 
-def move_stays(tally: Tally, *, censored: bool) -> tuple[Stays, BucketStays]:
+def move_stays(tally: Tally, placed: Placed, *, censored: bool) -> tuple[Stays, BucketStays]:
     """Return the stays in entry and every state, in all and by bucket.
 
     Parameters
     ----------
     tally : Tally
         The counts.
+    placed : Placed
+        Where its moves lead among the nodes of the chain.
     censored : bool
         Keep open stays, right-censored at the end of the log; False leaves them out.
 
@@ -67,10 +41,10 @@ def move_stays(tally: Tally, *, censored: bool) -> tuple[Stays, BucketStays]:
     by_bucket : BucketStays
         The same stays by non-empty bucket.
     """
-    nodes, rules, moves = nodes_of(tally), tally.rules, tally.moves
+    nodes, rules, row = placed.nodes, tally.rules, placed.row
+    moves = tally.moves if placed.kept.all() else {name: part[placed.kept] for name, part in tally.moves.items()}
     edges = dwell_edges(rules.silence_us, tally.whole_days)
     bucket = live_buckets(tally)
-    place = _node_of_code(tally, nodes)
     lapse_survives = rules.silence_us is not None and rules.repeats == "keep"
     n_bins = int(moves["bin"].max()) + 1 if len(moves["n"]) else 1
     if rules.silence_us is not None and lapse_survives:
@@ -81,10 +55,9 @@ def move_stays(tally: Tally, *, censored: bool) -> tuple[Stays, BucketStays]:
     survives = (moves["next"] == LAPSED) & lapse_survives
     ended = ~is_open & ~survives
     sure = tally.entries["sure"] == 1
-    row = place[moves["state"]]
     whose = np.concatenate([bucket[tally.entries["bucket"][sure]], bucket[moves["bucket"][ended]]])
     state = np.concatenate([np.zeros(int(sure.sum()), np.int64), row[ended]])
-    target = np.concatenate([place[tally.entries["state"][sure]], place[moves["next"][ended]]])
+    target = np.concatenate([placed.first[sure], placed.target[ended]])
     at = np.concatenate([np.zeros(int(sure.sum()), np.int64), moves["bin"][ended]])
     n = np.concatenate([tally.entries["n"][sure], moves["n"][ended]]).astype(np.float64)
     dwell = join_limbs(moves, "dwell")[ended] / DAY_US
@@ -239,13 +212,3 @@ def _one_row(
 def outcome_column(code: IntArray) -> IntArray:
     """Return the column of `journey_stays` for an outcome's code (column 0 is the journey itself)."""
     return code.astype(np.int64) + 1
-
-
-def _node_of_code(tally: Tally, nodes: Nodes) -> IntArray:
-    """Return the node of each code in the tally's tables; -1 where there is none."""
-    place = np.full(len(tally.labels), -1)
-    n_outcomes = len(tally.rules.outcomes)
-    place[LAPSED] = nodes.n_nodes - 1 if tally.rules.silence_us is not None else -1
-    place[FIRST_OUTCOME : FIRST_OUTCOME + n_outcomes] = nodes.n_rows + np.arange(n_outcomes)
-    place[tally.first_state :] = 1 + np.arange(len(tally.states))
-    return place

@@ -125,12 +125,13 @@ def passage_curve(
 
 
 def _start(fit: JourneyFit, start: str, walk: Walk) -> int:
-    labels = fit.nodes.labels[: fit.nodes.n_rows]
-    if start not in labels:
-        known = ", ".join(repr(name) for name in labels[:12])
-        msg = f"start={start!r} is no state of this chain; wanted one of {known}"
+    rows = np.array([0]) if start == "entry" else fit.nodes.rows_of(start)
+    if len(rows) != 1:
+        told = fit.nodes.labels[: fit.nodes.n_rows] if not len(rows) else [fit.states[row - 1] for row in rows]
+        what = f"stands for {len(rows)} states" if len(rows) else "is no state"
+        msg = f"start={start!r} {what} of this chain; wanted one of {', '.join(map(repr, told[:12]))}"
         raise ValueError(msg)
-    row = labels.index(start)
+    row = int(rows[0])
     if walk.is_target[row]:
         msg = f"start={start!r} is itself in `to`, so nothing is awaited; wanted another start, or return_time"
         raise ValueError(msg)

@@ -16,12 +16,13 @@ from journeys.checks import instant_text
 from journeys.intake.findings import Findings
 from journeys.intake.rule_checks import ALL
 from journeys.intake.rules import JourneyRules
+from journeys.kernels.histories import slot
 from journeys.kernels.records import FIRST_OUTCOME, LAPSED, OPEN
 from journeys.tally.accumulate import Columns, exact_limbs
 from journeys.tally.groups import Group, gathered, picked
 from journeys.tally.parts import added, of_groups
 from journeys.tally.spans import Span, longest_followed_us
-from journeys.tally.tables import CODED, FLAGS, NO_STATE, TABLES
+from journeys.tally.tables import CODED, FLAGS, HISTORY, NO_STATE, TABLES
 
 if TYPE_CHECKING:
     from typing import Self
@@ -45,7 +46,7 @@ class Tally:
         True where the log holds dates without a time.
     n_rows : int
         Rows read, whatever became of them.
-    moves, entries, journeys, gaps, stages, touches, touch_sets, customers : mapping of str to ndarray
+    moves, contexts, entries, journeys, gaps, stages, touches, touch_sets, customers : mapping of str to ndarray
         The tables, one array per column, sorted by their keys; states and outcomes as positions in `labels`,
         groups as positions in `groups`, sets of touchpoints as bits, the lowest for the first of `touchpoints`. A
         table that the rules do not ask for has no rows.
@@ -53,6 +54,8 @@ class Tally:
         What was left out or looked odd.
     groups : tuple of tuple
         Values of the columns `rules.by`, one tuple per group of journeys; empty where they are not grouped.
+    order : int
+        How many of the last states moves are told apart by.
     part : bool
         The tally holds some of the groups of another (see `where`).
 
@@ -74,6 +77,7 @@ class Tally:
     whole_days: bool
     n_rows: int
     moves: Columns
+    contexts: Columns
     entries: Columns
     journeys: Columns
     gaps: Columns
@@ -84,6 +88,7 @@ class Tally:
     record: Findings
     groups: tuple[Group, ...] = ()
     part: bool = False
+    order: int = 1
 
     @property
     def labels(self) -> tuple[str, ...]:
@@ -145,7 +150,7 @@ class Tally:
 
         Parameters
         ----------
-        name : {"moves", "entries", "journeys", "gaps", "stages", "touches", "touch_sets", "customers"}
+        name : {"moves", "contexts", "entries", "journeys", "gaps", "stages", "touches", "touch_sets", "customers"}
             Which table.
 
         Returns
@@ -173,6 +178,7 @@ class Tally:
             raise ValueError(msg)
         columns: Columns = getattr(self, name)
         labels = np.array(self.labels, dtype=object)
+        behind = np.array(["entry", "unknown", *self.labels[FIRST_OUTCOME:]], dtype=object)
         frame: dict[str, Any] = {}
         for column, values in columns.items():
             if column.endswith("_high"):
@@ -182,7 +188,11 @@ class Tally:
                 continue
             elif column in CODED:
                 nothing = NO_STATE.get((name, column), labels[0])
-                frame[column] = np.where(values == 0, nothing, labels[values])
+                frame[column] = np.where(values == 0, nothing, (behind if column == "previous" else labels)[values])
+            elif column in HISTORY.values():
+                first = 1 + (column == "earlier")
+                for which in range(self.order - 1):
+                    frame[f"previous_{first + which}"] = behind[slot(values, which)]
             elif column == "group":
                 for i, name_of_part in enumerate(self.rules.by):
                     frame[name_of_part] = np.array([group[i] for group in self.groups], dtype=object)[values]
@@ -202,6 +212,7 @@ class Tally:
             self.n_rows,
             self.groups,
             self.part,
+            self.order,
         ]
         digest = blake2b(json.dumps(head, sort_keys=True).encode(), digest_size=16)
         for table in TABLES:
