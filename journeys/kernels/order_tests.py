@@ -258,9 +258,9 @@ class Histories:
     @property
     def order(self) -> int:
         """How many states are known before each move."""
-        return self.states.shape[1]
+        return int(self.states.shape[1])
 
-    def counts(self, order: int) -> tuple[Counts, FloatArray]:
+    def counts(self, order: int) -> tuple[Counts, IntArray]:
         """Return the counts that set `order` states of memory against one state less.
 
         Returns
@@ -313,7 +313,7 @@ def information(histories: Histories, tests: list[TableTests]) -> FloatArray:
 
 def _ratio(top: npt.ArrayLike, below: npt.ArrayLike) -> FloatArray:
     x, y = np.asarray(top, np.float64), np.asarray(below, np.float64)
-    return np.divide(x, y, out=np.full(x.shape, np.nan), where=y > 0)
+    return np.asarray(np.divide(x, y, out=np.full(x.shape, np.nan), where=y > 0), np.float64)
 
 
 def _size(code: IntArray) -> int:

@@ -13,6 +13,7 @@ from journeys.errors import LogError
 from journeys.kernels.records import FIRST_OUTCOME, LAPSED, OPEN
 from journeys.models.fit import JourneyFit
 from journeys.models.what_if import WhatIf
+from journeys.questions.check import CheckResult, check
 from journeys.questions.comeback import ComebackResult, comeback
 from journeys.questions.compare import CompareResult, compare
 from journeys.questions.credit import CreditResult, credit
@@ -29,7 +30,7 @@ if TYPE_CHECKING:
 
 KEY_COLUMNS = (
     "section", "start_state", "state", "next_state", "stage", "touchpoint", "rule", "after", "outcome", "measure",
-    "horizon", "basis",
+    "horizon", "basis", "check_name", "about",
 )  # fmt: skip
 CREDITED = ("even", "first", "last")
 # With more groups than these each is not fitted against all others.
@@ -80,6 +81,8 @@ class Overview:
         From entry and every state to conversion.
     matrix : MovesResult
         Every move.
+    checks : CheckResult
+        Whether to believe the fit.
     back : ComebackResult or None
         Who comes back after a lapse; None where nothing lapses.
     funnel : StagesResult or None
@@ -99,6 +102,7 @@ class Overview:
     steps: FirstPassageResult
     days: FirstPassageResult
     matrix: MovesResult
+    checks: CheckResult
     back: ComebackResult | None = None
     funnel: StagesResult | None = None
     touched: RemovalResult | None = None
@@ -193,6 +197,7 @@ class Overview:
             "stages": self.funnel,
             "touchpoints": self.touched,
             "credit": self.credited,
+            "checks": self.checks,
             **{f"by {column}": result for column, result in self.groups.items()},
             **{f"against the rest by {column}": result for column, result in self.against.items()},
         }
@@ -292,6 +297,7 @@ def summarise(
         steps=first_passage(fit, clock="steps", method="linearised", confidence_level=level),
         days=first_passage(fit, clock="time", method="linearised", confidence_level=level),
         matrix=moves(fit, confidence_level=level),
+        checks=check(fit, confidence_level=level),
         back=None if rules.silence_us is None else comeback(tally, confidence_level=level),
         funnel=stages(fit, confidence_level=level) if rules.stages else None,
         touched=removal(fit, confidence_level=level) if rules.touchpoints else None,

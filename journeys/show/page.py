@@ -104,6 +104,7 @@ def summary_markdown(overview: Overview) -> str:
         _findings(tally),
         "## Whether to believe it",
         _beliefs(overview),
+        _checks(overview),
         "## Cautions",
         "\n".join(f"- {caution}" for caution in CAUTIONS),
         "## Made by",
@@ -225,6 +226,16 @@ def _beliefs(overview: Overview) -> str:
         )
     notes += _flag_lines(overview)
     return "\n".join(f"- {markdown_text(note)}" for note in notes)
+
+
+def _checks(overview: Overview) -> str:
+    rows = []
+    for row in rows_of(overview.checks.to_frame()):
+        name = f"{row['check_name']} ({row['about']})" if row["about"] else row["check_name"]
+        p_value = row["p_value_corrected"]
+        p_words = "" if math.isnan(p_value) else f"{p_value:.2g}"
+        rows.append((name, row["verdict"], row["compared"], p_words, row["advice"]))
+    return _table(rows, ["check", "verdict", "compared", "p, corrected", "what to do"])
 
 
 def _flag_lines(overview: Overview) -> list[str]:

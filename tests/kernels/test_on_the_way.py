@@ -33,9 +33,7 @@ def some_chain(seed: int, n: int = 5) -> np.ndarray:
 def solved(p: np.ndarray) -> tuple[Scale, Renewal]:
     n = len(p)
     state, target = np.divmod(np.arange(n * (n + 2)), n + 2)
-    walk = Renewal(
-        n, n + 2, state, target, p.ravel() > 0, np.arange(n + 2) == n, OneDayMoves(state, p.ravel())
-    )
+    walk = Renewal(n, n + 2, state, target, p.ravel() > 0, np.arange(n + 2) == n, OneDayMoves(state, p.ravel()))
     return walk.solve(1.0, 64), walk
 
 

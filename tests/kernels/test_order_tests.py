@@ -43,8 +43,8 @@ def matches(found: TableTests, expected: dict[str, Any], tolerance: dict[str, fl
 
 @pytest.mark.parametrize("name", SEQUENCES)
 def test_order_one_against_two(reference, name: str) -> None:
-    """Sources in tests/reference/order_tests.json. R's assessOrder (markovchain 0.9.1) agrees for e01; for the two states
-    of e06 it departs, since its chi-square test has a continuity correction; verifyMarkovProperty departs in
+    """Sources in tests/reference/order_tests.json. R's assessOrder (markovchain 0.9.1) agrees for e01; for the two
+    states of e06 it departs, since its chi-square test has a continuity correction; verifyMarkovProperty departs in
     statistic and degrees of freedom.
     """
     case = reference("order_tests", name)
@@ -72,7 +72,7 @@ def test_equality_of_five_tables_and_of_pairs_of_them(reference) -> None:
 
 
 def test_equality_of_two_tables_with_an_empty_column(reference) -> None:
-    """Kullback, Kupperman, Ku 1962. R's verifyHomogeneity tests the joint frequencies instead: 35 degrees of freedom."""
+    """Kullback, Kupperman and Ku. R's verifyHomogeneity tests the joint frequencies instead: 35 degrees of freedom."""
     case = reference("order_tests", "e03")
     tables = np.array(case["input"]["counts"]).transpose(1, 0, 2)
     expected = case["expected"]["transitions"]
