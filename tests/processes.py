@@ -8,11 +8,11 @@ that of a chain with one step of memory; the others:
 - `copied`: customers live in households of four, all in one bucket (see `tally`); a journey is that of the first of
   them again with probability .7, at another time. Each by itself obeys the law, and whether it is seen to its end does
   not depend on what it is, as it would where one customer did the same again the sooner it was over.
-- `two steps`: with strength k, where a journey goes from a state depends on the state before. Moves to states that
-  make a pair of `FAVOURED` with it have exp(1.4 k) times the weight, others exp(-1.4 k) times, and rows keep their
-  sums; outcomes keep theirs.
-- `kinds`: half the customers move on 1.25 times as readily, the others .75 times: they lapse the more.
-- `movers and stayers`: half the customers see a state again with probability .5 before they move on.
+- `two steps`: with strength k, where a journey goes from a state depends on the state before. Whoever came up the list
+  of states goes on up, and who came down goes on down, with exp(1.2 k) times the weight, and turns round with
+  exp(-1.2 k) times; rows keep their sums, and outcomes theirs.
+- `kinds`: half the customers move on 1.16 times as readily, the others .84 times: they lapse the more.
+- `movers and stayers`: a quarter of the customers see the state again with probability .8, and else go nowhere.
 - `tempi`: half the customers are quick, the others slow; moves are the same.
 """
 
@@ -52,8 +52,6 @@ COPYING = 0.7
 COMING_AGAIN = 0.5
 MEAN_DAYS_AWAY = 10.0
 BEFORE_SILENCES = 12.0
-# before + after modulo 2 decides which pairs of states are favoured by a second step of memory
-FAVOURED = (np.add.outer(np.arange(5), np.arange(5)) % 2) == 0
 PROCESSES = (
     "one step", "copied", "two steps .15", "two steps .3", "two steps .8", "kinds", "movers and stayers", "tempi",
 )  # fmt: skip
@@ -73,7 +71,9 @@ def law(going: Floats, strength: float = 0.0) -> Floats:
     """Return the moves by state before and state, shape (6, 5, 6): to each state, and to joined."""
     tilted = np.repeat(going[None], 6, axis=0)
     for before in range(5 if strength else 0):
-        weight = going * np.exp(np.where(FAVOURED[before], 1.4, -1.4) * strength)[None]
+        place = np.arange(5)
+        goes_on = np.sign(place - before)[:, None] * np.sign(place[None] - place[:, None])
+        weight = going * np.exp(1.2 * strength * goes_on)
         tilted[before] = weight * (going.sum(axis=1) / weight.sum(axis=1))[:, None]
     return np.concatenate([tilted, np.broadcast_to(JOINING[:, None], (6, 5, 1))], axis=2)
 
@@ -83,15 +83,13 @@ def kinds_of(process: str) -> tuple[Kind, ...]:
     if process.startswith("two steps"):
         return (Kind(law(GOING, float(process.split()[-1]))),)
     if process == "kinds":
-        return Kind(law(GOING * 1.25)), Kind(law(GOING * 0.75))
+        return Kind(law(GOING * 1.16)), Kind(law(GOING * 0.84))
     if process == "movers and stayers":
-        again = 0.5 * np.eye(5)
-        stayers = law(GOING)
-        stayers[:, :, :5] = 0.5 * stayers[:, :, :5] + again
-        stayers[:, :, 5] *= 0.5
-        return Kind(law(GOING)), Kind(stayers)
+        stayers = np.zeros((6, 5, 6))
+        stayers[:, :, :5] = 0.8 * np.eye(5)
+        return *[Kind(law(GOING))] * 3, Kind(stayers)
     if process == "tempi":
-        return Kind(law(GOING), 0.3), Kind(law(GOING), 1.7)
+        return Kind(law(GOING), 0.2), Kind(law(GOING), 1.8)
     return (Kind(law(GOING)),)
 
 

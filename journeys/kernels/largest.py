@@ -36,7 +36,9 @@ def largest_of(
     Notes
     -----
     Buckets multiplied by independent normal numbers give normal draws with the correlations that the buckets have
-    among the differences; each draw of the largest is compared with the largest found.
+    among the differences. Standard errors being estimates, each draw is divided by the root of a chi square over its
+    degrees of freedom, the median of the differences': multivariate t. The largest of each draw is compared with the
+    largest found.
 
     References
     ----------
@@ -53,7 +55,7 @@ def largest_of(
     >>> abs(p - 0.05) < 0.01
     True
     """
-    variance, _ = variance_from_buckets(influence)
+    variance, df = variance_from_buckets(influence)
     there = variance > 0
     z = np.zeros(len(difference))
     z[there] = difference[there] / np.sqrt(variance[there])
@@ -61,8 +63,10 @@ def largest_of(
         return z, 1.0
     unit = influence[:, there] / np.linalg.norm(influence[:, there], axis=0)
     largest, step = float(np.abs(z).max()), max(_AT_ONCE // max(unit.shape), 1)
-    above = 0
+    above, known = 0, float(np.median(df[there]))
     for first in range(0, n_draws, step):
-        draws = rng.standard_normal((min(step, n_draws - first), len(unit))) @ unit
+        n = min(step, n_draws - first)
+        draws = rng.standard_normal((n, len(unit))) @ unit
+        draws /= np.sqrt(rng.chisquare(known, n) / known)[:, None]
         above += int((np.abs(draws).max(axis=1) >= largest).sum())
     return z, (1.0 + above) / (1.0 + n_draws)

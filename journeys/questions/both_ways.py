@@ -96,6 +96,16 @@ class BothCurves:
         width = np.diff(times, prepend=0.0)
         return np.asarray((width + np.append(width[1:], 0.0)) / 2.0, np.float64)
 
+    def mean_by_model(self) -> float:
+        """Return the mean days of those converted by the last time, says the model."""
+        if self.solved.whole:
+            times = self.upper
+        else:
+            points = self.solved.curve.time
+            times = np.append(points[(points > 0) & (points < self.last)], self.last)
+        share = self.solved.at(times)
+        return self.last - float(self.area(times) @ share) / float(share[-1])
+
     def log_curve(self) -> tuple[FloatArray, FloatArray]:
         """Return the log's share at `few_times`, and the influence of each bucket on it."""
         journeys, stays = self.journeys, self.journeys.stays

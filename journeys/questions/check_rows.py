@@ -8,6 +8,7 @@ import numpy as np
 
 from journeys.kernels.arrays import FloatArray
 from journeys.kernels.intervals import t_test, variance_from_buckets
+from journeys.questions.linear import ENOUGH_DF
 
 NOT_RUN = "not run: "
 NOTE = "note: "
@@ -57,15 +58,25 @@ def not_run(check_name: str, why: str, advice: str = "", about: str = "") -> Che
     return CheckRow(check_name, about, verdict=NOT_RUN + why, advice=advice)
 
 
-def difference_row(
-    check_name: str, size: float, influence: FloatArray, unit: str, words: tuple[str, str, str]
-) -> CheckRow:
-    """Return the row of a test of a difference that is 0 in a right model.
+def beyond_rounding(size: FloatArray, error: float) -> FloatArray:
+    """Return differences drawn towards 0 by the error that one side is solved with."""
+    return np.asarray(np.sign(size) * np.maximum(np.abs(size) - error, 0.0), np.float64)
 
-    `words` are what was compared, how it differs if it does, and what to do about it.
+
+def difference_row(
+    check_name: str, size: float, influence: FloatArray, unit: str, words: tuple[str, str, str], error: float
+) -> CheckRow:
+    """Return the row of a test of a difference that is 0 in a right model; not run where its spread is not known.
+
+    `words` are what was compared, how it differs if it does, and what to do about it; `error` is that of the solution,
+    which is no difference.
     """
     variance, df = variance_from_buckets(influence)
     std_error = float(np.sqrt(variance))
+    if not std_error > error:
+        return not_run(check_name, "there is nothing in it that varies from customer to customer")
+    if df < ENOUGH_DF:
+        return not_run(check_name, "it hangs on very few customers")
     compared, verdict, advice = words
-    p = float(t_test(size, std_error, df))
+    p = float(t_test(beyond_rounding(np.array(size), error), std_error, df))
     return CheckRow(check_name, "", compared, size, unit, std_error, float(df), p, verdict, advice)

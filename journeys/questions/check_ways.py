@@ -12,7 +12,7 @@ from journeys.kernels.largest import largest_of
 from journeys.kernels.phase_type import DENSE
 from journeys.models.fit import JourneyFit
 from journeys.questions.both_ways import BothCurves
-from journeys.questions.check_rows import CheckRow, difference_row, not_run
+from journeys.questions.check_rows import CheckRow, beyond_rounding, difference_row, not_run
 from journeys.questions.elapsed import elapsed, walk_to
 from journeys.questions.ended import Sums, ended, rows_ended
 from journeys.questions.solved_curve import SolvedTime
@@ -23,6 +23,8 @@ DAYS, STEPS, CURVE = "days to convert", "steps to convert", "curve of conversion
 TOUCHES = "touchpoints of conversions"
 # Conversions in all, and on each side of a time or with and without a touchpoint looked at.
 ENOUGH = 20.0
+# The model's curves are solved to within so much.
+OFF = 2e-4
 # From one state to any other at every frequency: so many fill some 200 MB.
 MOST_ON_THE_WAY = 100
 MIXED = (
@@ -65,7 +67,7 @@ def _days(both: BothCurves) -> CheckRow:
     last, few = both.last, both.few_times
     n, days = _sums(both, "elapsed")
     log = days.over(n)
-    model = last - float(both.area(both.upper) @ both.by_model) / float(both.by_model[-1])
+    model = both.mean_by_model()
     area, share = both.area(both.upper[few]), both.by_model[few]
     slope = -area / share[-1]
     slope[-1] += float(area @ share) / share[-1] ** 2
@@ -73,7 +75,7 @@ def _days(both: BothCurves) -> CheckRow:
     influence = both.model_influence @ slope - log.influence[:, 0]
     compared = f"mean of those who convert within {last:.3g} days: model {model:.3g}, log {log.value[0]:.3g} days"
     differs = f"the model's times are too {'long' if size > 0 else 'short'}"
-    return difference_row(DAYS, size, influence, "days", (compared, differs, MIXED))
+    return difference_row(DAYS, size, influence, "days", (compared, differs, MIXED), OFF * model)
 
 
 def _steps(both: BothCurves) -> CheckRow:
@@ -86,7 +88,7 @@ def _steps(both: BothCurves) -> CheckRow:
     compared = f"mean of those who convert within {both.last:.3g} days: {both_means}"
     differs = f"the model's ways are too {'long' if size > 0 else 'short'}"
     influence = model.influence[:, 0] - log.influence[:, 0]
-    return difference_row(STEPS, size, influence, "steps", (compared, differs, MIXED))
+    return difference_row(STEPS, size, influence, "steps", (compared, differs, MIXED), OFF * float(model.value[0]))
 
 
 def _curve(both: BothCurves, rng: np.random.Generator) -> CheckRow:
@@ -98,7 +100,8 @@ def _curve(both: BothCurves, rng: np.random.Generator) -> CheckRow:
     log, log_influence = both.log_curve()
     model = both.by_model[both.few_times]
     difference = (model - log)[apart]
-    z, p = largest_of(difference, (both.model_influence - log_influence)[:, apart], rng)
+    influence = (both.model_influence - log_influence)[:, apart]
+    z, p = largest_of(beyond_rounding(difference, OFF), influence, rng)
     at = int(np.abs(z).argmax())
     time, size = both.upper[both.few_times[apart[at]]], 100.0 * float(difference[at])
     compared = (
@@ -126,7 +129,7 @@ def _touches(both: BothCurves, fit: JourneyFit, rng: np.random.Generator) -> Che
         return not_run(TOUCHES, f"no touchpoint has {ENOUGH:g} conversions with it and without it", LONGER)
     difference = model - log.value
     influence = np.concatenate([part.influence for part in parts], axis=1) - log.influence
-    z, p = largest_of(difference[mine], influence[:, mine], rng)
+    z, p = largest_of(beyond_rounding(difference[mine], OFF), influence[:, mine], rng)
     at = int(mine[np.abs(z).argmax()])
     compared = (
         f"conversions within {both.last:.3g} days that touch {names[at]}, of {len(mine)} touchpoints the one most "

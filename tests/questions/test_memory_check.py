@@ -75,7 +75,7 @@ def test_says_which_state_remembers() -> None:
     assert frame.loc[("order 1 or 2", "fair"), "verdict"].startswith("differs")
     assert frame.loc[("order 1 or 2", "club"), "verdict"] == "agrees: 2 states of the past tell no more than 1"
     assert frame.loc[("order 1 or 2", "fair"), "example"].startswith("from fair after ")
-    assert abs(frame.loc[("order 1 or 2", "fair"), "estimate"]) == pytest.approx(0.4, abs=0.05)
+    assert abs(frame.loc[("order 1 or 2", "fair"), "estimate"]) == pytest.approx(0.4, abs=0.1)
     bic = frame.loc[("order 1 or 2", "")]
     assert bic["bic_higher"] < bic["bic_lower"]
 
