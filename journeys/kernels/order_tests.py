@@ -31,12 +31,6 @@ class Counts:
     column: IntArray
     n: FloatArray
 
-    def of_stratum(self, stratum: int) -> Counts:
-        """Return the counts of one stratum, the others empty."""
-        mine = self.stratum == stratum
-        parts = (self.bucket, self.stratum, self.row, self.column, self.n)
-        return Counts(*(part[mine] for part in parts))
-
     @classmethod
     def of_tables(cls, tables: npt.ArrayLike) -> Counts:
         """Return the counts of full tables, shape (n_strata, n_rows, n_columns), all in one bucket."""
@@ -180,6 +174,8 @@ class Departure:
         Of the moves of its row and of those of its stratum, those that go to its column.
     n : float
         Moves of its row.
+    z : float
+        Its standardised residual, without its sign.
     """
 
     stratum: int
@@ -188,33 +184,46 @@ class Departure:
     share: float
     expected: float
     n: float
+    z: float
 
 
-def largest_departure(counts: Counts, least: float = 5.0) -> Departure | None:
-    """Return the cell with the largest standardised residual of those of which at least so many moves are expected.
+def departures(counts: Counts, least: float = 5.0) -> list[Departure | None]:
+    """Return, for each stratum, the cell with the largest standardised residual.
 
-    Cells in which nothing was counted are among them. None where no cell has as many.
+    Cells in which nothing was counted are among them. None where of no cell `least` moves are expected.
 
     References
     ----------
     S. J. Haberman, The analysis of residuals in cross-classified tables, Biometrics 29 (1973) 205-220.
     """
-    best, size = None, 0.0
-    width_row, width = _size(counts.row), _size(counts.column)
-    for stratum in range(_size(counts.stratum)):
-        mine = counts.stratum == stratum
-        key = counts.row[mine] * width + counts.column[mine]
-        o = sum_at(key, counts.n[mine], width_row * width).reshape(width_row, width)
-        by_row, by_column, total = o.sum(axis=1, keepdims=True), o.sum(axis=0), o.sum()
-        e = by_row * by_column / max(total, 1.0)
-        spread = e * (1.0 - by_row / max(total, 1.0)) * (1.0 - by_column / max(total, 1.0))
-        z = np.where((e >= least) & (spread > 0), np.abs(o - e) / np.sqrt(np.where(spread > 0, spread, 1.0)), 0.0)
-        if z.max(initial=0.0) > size:
-            size = float(z.max())
-            i, j = np.unravel_index(int(z.argmax()), z.shape)
-            n, of = float(by_row[i, 0]), float(by_column[j] / total)
-            best = Departure(stratum, int(i), int(j), float(o[i, j] / n), of, n)
-    return best
+    if not len(counts.n):
+        return []
+    order = np.argsort(counts.stratum, kind="stable")
+    first = np.searchsorted(counts.stratum[order], np.arange(int(counts.stratum.max()) + 2))
+    return [_departure(counts, order[first[i] : first[i + 1]], i, least) for i in range(len(first) - 1)]
+
+
+def _departure(counts: Counts, mine: IntArray, stratum: int, least: float) -> Departure | None:
+    rows, row = np.unique(counts.row[mine], return_inverse=True)
+    columns, column = np.unique(counts.column[mine], return_inverse=True)
+    if len(rows) < 2 or len(columns) < 2:
+        return None
+    size = (len(rows), len(columns))
+    o = sum_at(row * size[1] + column, counts.n[mine], size[0] * size[1]).reshape(size)
+    by_row, by_column, total = o.sum(axis=1, keepdims=True), o.sum(axis=0), o.sum()
+    e = by_row * by_column / total
+    spread = e * (1.0 - by_row / total) * (1.0 - by_column / total)
+    z = np.where(e >= least, np.abs(o - e) / np.sqrt(spread), 0.0)
+    i, j = np.unravel_index(int(z.argmax()), size)
+    if not z[i, j] > 0:
+        return None
+    n, expected = float(by_row[i, 0]), float(by_column[j] / total)
+    return Departure(stratum, int(rows[i]), int(columns[j]), float(o[i, j] / n), expected, n, float(z[i, j]))
+
+
+def largest_departure(found: list[Departure | None]) -> Departure | None:
+    """Return the one with the largest residual of all; None where there is none."""
+    return max((one for one in found if one is not None), key=lambda one: one.z, default=None)
 
 
 def nominal_df(n_strata: int, n_rows: int, n_columns: int) -> int:

@@ -6,7 +6,7 @@ import numpy as np
 
 from journeys.intake.group_checks import COHORT, PERIOD
 from journeys.kernels.arrays import IntArray, sum_at
-from journeys.kernels.order_tests import largest_departure, table_tests
+from journeys.kernels.order_tests import departures, largest_departure, table_tests
 from journeys.models.fit import JourneyFit
 from journeys.questions.check_rows import CheckRow, not_run
 from journeys.questions.contexts import tables_by_part
@@ -62,7 +62,7 @@ def _between(tally: Tally, name: str, check_name: str) -> CheckRow:
     if whole.n[0] < whole.df[0]:
         why = f"{whole.n[0]:,.0f} moves are too few for the {len(names)} parts by {name}"
         return not_run(check_name, why, "make the groups larger", about=name)
-    most, size, example = largest_departure(counts), np.nan, ""
+    most, size, example = largest_departure(departures(counts)), np.nan, ""
     if most is not None:
         size = 100.0 * (most.share - most.expected)
         example = (

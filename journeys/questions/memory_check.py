@@ -4,13 +4,22 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import cached_property
 from typing import ClassVar
 
 import numpy as np
 
 from journeys import checks
-from journeys.kernels.arrays import FloatArray
-from journeys.kernels.order_tests import Histories, TableTests, information, largest_departure, table_tests
+from journeys.kernels.arrays import IntArray
+from journeys.kernels.order_tests import (
+    Departure,
+    Histories,
+    TableTests,
+    departures,
+    information,
+    largest_departure,
+    table_tests,
+)
 from journeys.questions.contexts import histories_of, state_words
 from journeys.questions.corrected import corrected
 from journeys.results import PLAIN, Estimates, Result
@@ -127,60 +136,69 @@ def order_tests(tally: Tally) -> list[OrderTest]:
     if not len(histories.n):
         why = NO_SILENCE if tally.rules.silence_us is None else NO_MOVES
         return [_not_run(order, why) for order in range(1, histories.order + 1)]
-    by_state = [table_tests(histories.counts(order)[0]) for order in range(1, histories.order + 1)]
-    together = [one.together() for one in by_state]
-    bic = information(histories, together)
-    found = []
-    for order, one in enumerate(together, start=1):
-        found.append(_told(tally, histories, order, one, 0, None, bic))
-    last, (_, strata) = histories.order, histories.counts(histories.order)
-    for i, states in enumerate(strata):
-        if by_state[-1].df[i] > 0:
-            found.append(_told(tally, histories, last, by_state[-1], i, states, bic))
-    return found
+    each = [_Compared.of(tally, histories, order) for order in range(1, histories.order + 1)]
+    bic = information(histories, [one.whole for one in each])
+    whole = [one.together(float(bic[one.order - 1]), float(bic[one.order])) for one in each]
+    last = each[-1]
+    return whole + [last.of_state(i) for i in np.flatnonzero(last.by_state.df > 0).tolist()]
 
 
-def _told(
-    tally: Tally,
-    histories: Histories,
-    order: int,
-    tests: TableTests,
-    at: int,
-    states: np.ndarray | None,
-    bic: FloatArray,
-) -> OrderTest:
-    """Return a test with the move that departs most."""
-    counts, strata = histories.counts(order)
-    if states is not None:
-        counts = counts.of_stratum(at)
-    df, n = int(tests.df[at]), float(tests.n[at])
-    most = largest_departure(counts) if df > 0 else None
-    flag = NOTHING_TO_TELL if df == 0 else THIN if n < df else ""
-    example, size = "", np.nan
-    if most is not None:
-        size = most.share - most.expected
-        path = [int(most.row), *strata[most.stratum].tolist()]
-        *before, now = [state_words(tally, code) for code in path]
+@dataclass(frozen=True, eq=False)
+class _Compared:
+    """One order against the one below."""
+
+    tally: Tally
+    order: int
+    strata: IntArray
+    by_state: TableTests
+    most: list[Departure | None]
+
+    @classmethod
+    def of(cls, tally: Tally, histories: Histories, order: int) -> _Compared:
+        counts, strata = histories.counts(order)
+        return cls(tally, order, strata, table_tests(counts), departures(counts))
+
+    @cached_property
+    def whole(self) -> TableTests:
+        """All strata together."""
+        return self.by_state.together()
+
+    def together(self, bic_lower: float, bic_higher: float) -> OrderTest:
+        """Return the test of all states."""
+        return self._told(self.whole, 0, "", largest_departure(self.most), bic_lower, bic_higher)
+
+    def of_state(self, at: int) -> OrderTest:
+        """Return the test of one state, or of one history."""
+        name = " then ".join(state_words(self.tally, int(code)) for code in self.strata[at])
+        return self._told(self.by_state, at, name, self.most[at], np.nan, np.nan)
+
+    def _told(
+        self, tests: TableTests, at: int, state: str, most: Departure | None, bic_lower: float, bic_higher: float
+    ) -> OrderTest:
+        df, n = int(tests.df[at]), float(tests.n[at])
+        return OrderTest(
+            order=self.order,
+            state=state,
+            x2=float(tests.x2[at]) if df else np.nan,
+            df=df,
+            design_effect=float(tests.design_effect[at]),
+            n_moves=n,
+            p_alone=float(tests.p_value[at]),
+            size=np.nan if most is None else most.share - most.expected,
+            example="" if most is None else self._example(most),
+            bic_lower=bic_lower,
+            bic_higher=bic_higher,
+            flag=NOTHING_TO_TELL if df == 0 else THIN if n < df else "",
+        )
+
+    def _example(self, most: Departure) -> str:
+        path = [most.row, *self.strata[most.stratum].tolist()]
+        *before, now = [state_words(self.tally, code) for code in path]
         after = f"{now} after {' then '.join(before)}" if before else now
-        example = (
-            f"from {after} to {tally.labels[most.column]}: {100 * most.share:.1f} % of {most.n:,.0f}, "
+        return (
+            f"from {after} to {self.tally.labels[most.column]}: {100 * most.share:.1f} % of {most.n:,.0f}, "
             f"else {100 * most.expected:.1f} %"
         )
-    name = "" if states is None else " then ".join(state_words(tally, int(code)) for code in states)
-    return OrderTest(
-        order=order,
-        state=name,
-        x2=float(tests.x2[at]) if df else np.nan,
-        df=df,
-        design_effect=float(tests.design_effect[at]),
-        n_moves=n,
-        p_alone=float(tests.p_value[at]),
-        size=size,
-        example=example,
-        bic_lower=np.nan if name else float(bic[order - 1]),
-        bic_higher=np.nan if name else float(bic[order]),
-        flag=flag,
-    )
 
 
 def _not_run(order: int, why: str) -> OrderTest:

@@ -13,6 +13,7 @@ from journeys.kernels.order_tests import (
     Histories,
     TableTests,
     chi_square_p,
+    departures,
     information,
     largest_departure,
     nominal_df,
@@ -133,14 +134,20 @@ def test_nothing_to_tell_apart() -> None:
     found = table_tests(Counts.of_tables([[[5, 3]], [[2, 0]]]))
     assert found.df.tolist() == [0, 0]
     assert np.isnan(found.p_value).all()
-    assert largest_departure(Counts.of_tables([[[5, 3]]])) is None
+    assert departures(Counts.of_tables([[[5, 3]]])) == [None]
+    assert largest_departure([None]) is None
     none = np.zeros(0, np.int64)
-    assert len(table_tests(Counts(none, none, none, none, np.zeros(0))).x2) == 0
+    nothing = Counts(none, none, none, none, np.zeros(0))
+    assert len(table_tests(nothing).x2) == 0
+    assert departures(nothing) == []
 
 
 def test_the_cell_that_departs_most() -> None:
-    found = largest_departure(Counts.of_tables([[[50, 50], [50, 50]], [[90, 10], [60, 40]]]))
+    each = departures(Counts.of_tables([[[50, 50], [50, 50]], [[90, 10], [60, 40]]]))
+    assert each[0] is None
+    found = largest_departure(each)
     assert found is not None
+    assert found.z == pytest.approx(np.sqrt(chi2_contingency([[90, 10], [60, 40]], correction=False).statistic))
     assert (found.stratum, found.n) == (1, 100.0)
     assert abs(found.share - found.expected) == pytest.approx(0.15)
 
