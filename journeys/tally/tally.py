@@ -204,16 +204,9 @@ class Tally:
     def checksum(self) -> str:
         """Hexadecimal digest of the tables, the rules and the span; equal tallies have equal checksums."""
         head = [
-            self.rules.to_dict(),
-            self.states,
-            self.log_start_us,
-            self.as_of_us,
-            self.whole_days,
-            self.n_rows,
-            self.groups,
-            self.part,
-            self.order,
-        ]
+            self.rules.to_dict(), self.states, self.log_start_us, self.as_of_us, self.whole_days, self.n_rows,
+            self.groups, self.part, self.order,
+        ]  # fmt: skip
         digest = blake2b(json.dumps(head, sort_keys=True).encode(), digest_size=16)
         for table in TABLES:
             for name, column in getattr(self, table).items():
@@ -236,7 +229,7 @@ class Tally:
         Raises
         ------
         JourneysError
-            If rules, span or kind of times differ.
+            If rules, span, order or kind of times differ.
         """
         return added(self, other) if isinstance(other, Tally) else NotImplemented
 
@@ -304,6 +297,12 @@ class Tally:
         found = gathered(self.groups, self.rules.by, names)
         others = [index for group, index in found.items() if group != values]
         return of_groups(self, np.sort(np.concatenate(others)))
+
+    def shareable(self, min_customers: int = 10) -> pd.DataFrame:
+        """Return counts that can be handed on (see `journeys.tally.shareable.shareable`)."""
+        from journeys.tally.shareable import shareable
+
+        return shareable(self, min_customers)
 
     def save(self, path: str | os.PathLike[str]) -> None:
         """Write the tally to one Parquet file (see `journeys.tally.store.save`)."""
