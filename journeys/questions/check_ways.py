@@ -23,6 +23,8 @@ DAYS, STEPS, CURVE = "days to convert", "steps to convert", "curve of conversion
 TOUCHES = "touchpoints of conversions"
 # Conversions in all, and on each side of a time or with and without a touchpoint looked at.
 ENOUGH = 20.0
+# Buckets that are not empty: with fewer nobody knows how much customers differ.
+ENOUGH_BUCKETS = 10
 # The model's curves are solved to within so much.
 OFF = 2e-4
 # From one state to any other at every frequency: so many fill some 200 MB.
@@ -49,6 +51,8 @@ def way_rows(
     if it is None or fit.tally is None or not it.found.probability[0] > 0:
         return _none("nobody is expected to convert")
     both = BothCurves(ended(fit.tally), codes, SolvedTime(it, 0))
+    if both.journeys.by_bucket.n_buckets < ENOUGH_BUCKETS:
+        return _none(f"fewer than {ENOUGH_BUCKETS} groups of customers to tell chance by")
     n = float(both.n_by_bin.sum()) if both.last_bin >= 0 else 0.0
     if n < ENOUGH:
         return _none(f"{n:,.0f} conversions of journeys whose start was seen, fewer than {ENOUGH:g}", LONGER)

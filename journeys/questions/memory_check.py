@@ -29,6 +29,9 @@ ALPHA = 0.05
 NO_MOVES = "not run: no move with a known past was followed for a whole silence"
 NO_SILENCE = "not run: without a silence no stay is known to have been followed to its end"
 NOTHING_TO_TELL = "not run: nothing to tell apart"
+TOO_FEW_CUSTOMERS = "not run: fewer than 10 groups of customers to tell chance by"
+# Buckets that are not empty.
+ENOUGH_BUCKETS = 10
 THIN = "fewer moves than cells: p-values are rough"
 
 
@@ -136,6 +139,8 @@ def order_tests(tally: Tally) -> list[OrderTest]:
     if not len(histories.n):
         why = NO_SILENCE if tally.rules.silence_us is None else NO_MOVES
         return [_not_run(order, why) for order in range(1, histories.order + 1)]
+    if len(np.unique(histories.bucket)) < ENOUGH_BUCKETS:
+        return [_not_run(order, TOO_FEW_CUSTOMERS) for order in range(1, histories.order + 1)]
     each = [_Compared.of(tally, histories, order) for order in range(1, histories.order + 1)]
     bic = information(histories, [one.whole for one in each])
     whole = [one.together(float(bic[one.order - 1]), float(bic[one.order])) for one in each]

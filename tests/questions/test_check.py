@@ -264,6 +264,13 @@ def test_what_cannot_be_run_says_why() -> None:
     assert {found[name] for name in TESTS[:4]} == {why}
     assert found["memory"].startswith("not run: ")
     assert found["enough events"] == "note: only 9 journeys that ended without converting"
+    one_customer = pd.DataFrame(
+        [(1, START + pd.Timedelta(days=day), ("fair", "joined")[day % 2]) for day in range(60)],
+        columns=["who", "when", "what"],
+    )
+    rules = jn.JourneyRules("who", "when", "what", converted="joined", silence="30d", complete_history=True)
+    alone = verdicts(jn.check(jn.JourneyModel().fit(jn.tally(one_customer, rules))))
+    assert {alone[name] for name in TESTS[:4]} == {"not run: fewer than 10 groups of customers to tell chance by"}
     many = verdicts(jn.check(of_paths([["fair", "joined"], ["fair", "left"]] * 50, touchpoints=())))
     assert many["touchpoints of conversions"] == "not run: no touches were counted"
     assert many["days to convert"] == "agrees"

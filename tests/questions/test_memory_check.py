@@ -10,7 +10,7 @@ from scipy.stats import chi2_contingency
 from small_chains import START, one
 
 import journeys as jn
-from journeys.questions.memory_check import NO_MOVES, NO_SILENCE
+from journeys.questions.memory_check import NO_MOVES, NO_SILENCE, TOO_FEW_CUSTOMERS
 
 
 def counted(paths: list[list[str]], order: int = 1, **more: object) -> jn.Tally:
@@ -118,6 +118,8 @@ def test_what_cannot_be_run_says_why() -> None:
     assert short.to_frame()["verdict"].unique().tolist() == [NO_MOVES]
     endless = jn.memory_check(counted(paths, silence=None))
     assert endless.to_frame()["flag"].unique().tolist() == [NO_SILENCE]
+    few = jn.memory_check(counted([["post", "joined"], ["street", "left"]] * 3))
+    assert few.to_frame()["verdict"].unique().tolist() == [TOO_FEW_CUSTOMERS]
     alike = jn.memory_check(counted([["post", "joined"]] * 30)).to_frame()
     assert alike["verdict"].unique().tolist() == ["not run: nothing to tell apart"]
 
