@@ -34,6 +34,7 @@ from journeys.kernels.order_tests import chi_square_p  # noqa: E402
 
 ALPHA = 0.05
 TESTS = ("days to convert", "steps to convert", "curve of conversion", "touchpoints of conversions", "memory")
+BY_GROUP = ("between groups", "earlier and later")
 PLAIN, ANY, BIC, ALIKE = "memory, uncorrected", "any differs", "BIC: two steps", "journeys of one customer"
 
 
@@ -47,6 +48,7 @@ class Task:
     number: int
     customers: int
     running: bool
+    groups: bool = False
 
 
 def of_task(task: Task) -> dict[str, float]:
@@ -54,12 +56,17 @@ def of_task(task: Task) -> dict[str, float]:
     at = processes.PROCESSES.index(task.process)
     rng = np.random.default_rng([task.seed, at, round(10 * task.silences), task.customers, task.number])
     log = processes.simulate(task.process, task.customers, task.silences, rng, running=task.running)
-    tally = jn.tally(log, processes.rules_of(task.silences, complete_history=not task.running))
+    settings: dict[str, object] = {"complete_history": not task.running}
+    if task.groups:
+        side = rng.integers(0, 2, int(log["customer"].max()) + 1)
+        log["side"] = side[log["customer"].to_numpy()]
+        settings |= {"by": "side", "cohort": "week"}
+    tally = jn.tally(log, processes.rules_of(task.silences, **settings))
     with warnings.catch_warnings():
         warnings.simplefilter("ignore", JourneysWarning)
         result = jn.check(jn.JourneyModel().fit(tally))
     rows = result.to_frame().set_index("check_name")
-    found = {name: float(rows.loc[name, "p_value"]) for name in TESTS}
+    found = {name: float(rows.loc[name, "p_value"]) for name in (*TESTS, *(BY_GROUP if task.groups else ()))}
     found[ALIKE] = 0.0 if str(rows.loc[ALIKE, "verdict"]).startswith("note") else 1.0
     order = jn.memory_check(tally).to_frame()
     order = order[(order["check_name"] == "order 1 or 2") & (order["state"] == "")].iloc[0]
@@ -110,6 +117,7 @@ def main(argv: Sequence[str] | None = None) -> int:
     parser.add_argument(
         "--running", action="store_true", help="customers came before the log; their past is cut off"
     )
+    parser.add_argument("--groups", action="store_true", help="customers are of two sides that do not differ")
     parser.add_argument("--jobs", type=int, default=2)
     parser.add_argument("--seed", type=int, default=20250201)
     asked = parser.parse_args(argv)
@@ -118,7 +126,7 @@ def main(argv: Sequence[str] | None = None) -> int:
             began, rows = time.perf_counter(), {}
             for process in asked.process:
                 tasks = [
-                    Task(asked.seed, process, silences, number, customers, asked.running)
+                    Task(asked.seed, process, silences, number, customers, asked.running, asked.groups)
                     for number in range(asked.logs)
                 ]
                 rows[process] = rejected(list(studied(tasks, asked.jobs)))

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from study_checks import ANY, PLAIN, TESTS, Task, main, of_task, rejected
+from study_checks import ANY, BY_GROUP, PLAIN, TESTS, Task, main, of_task, rejected
 
 
 def test_a_tiny_study(capsys: pytest.CaptureFixture[str]) -> None:
@@ -19,6 +19,8 @@ def test_a_tiny_study(capsys: pytest.CaptureFixture[str]) -> None:
 def test_a_log_of_its_own_each() -> None:
     first, again, other = (of_task(Task(1, "tempi", 3.0, number, 300, running=True)) for number in (0, 0, 1))
     assert first == again
+    grouped = of_task(Task(1, "one step", 3.0, 0, 300, running=False, groups=True))
+    assert np.isfinite([grouped[name] for name in BY_GROUP]).all()
     assert first["memory"] != other["memory"]
 
 
