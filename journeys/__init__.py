@@ -5,10 +5,12 @@ from journeys.intake.wide import from_wide
 from journeys.models.fit import JourneyFit
 from journeys.models.model import JourneyModel
 from journeys.questions.audit import audit
+from journeys.questions.check import check
 from journeys.questions.comeback import comeback
 from journeys.questions.compare import compare
 from journeys.questions.credit import credit
 from journeys.questions.first_passage import first_passage
+from journeys.questions.memory_check import memory_check
 from journeys.questions.outcomes import outcomes
 from journeys.questions.overview import summarise
 from journeys.questions.passage_curve import passage_curve
@@ -32,11 +34,13 @@ __all__ = [
     "Tally",
     "__version__",
     "audit",
+    "check",
     "comeback",
     "compare",
     "credit",
     "first_passage",
     "from_wide",
+    "memory_check",
     "outcomes",
     "passage_curve",
     "plots",

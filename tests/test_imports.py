@@ -27,9 +27,9 @@ STAGES = ("errors", "checks", "files", "markup", "kernels", "results", "intake",
 FORWARDS = {("models.fit", "questions.moves")}
 
 PUBLIC = [
-    "JourneyFit", "JourneyModel", "JourneyRules", "Tally", "__version__", "audit", "comeback", "compare", "credit",
-    "first_passage", "from_wide", "outcomes", "passage_curve", "plots", "removal", "return_time", "sensitivity",
-    "stages", "summarise", "tally", "time_to_convert", "worth", "write_report",
+    "JourneyFit", "JourneyModel", "JourneyRules", "Tally", "__version__", "audit", "check", "comeback", "compare",
+    "credit", "first_passage", "from_wide", "memory_check", "outcomes", "passage_curve", "plots", "removal",
+    "return_time", "sensitivity", "stages", "summarise", "tally", "time_to_convert", "worth", "write_report",
 ]
 
 MODULES = {

@@ -15,6 +15,7 @@ from journeys.kernels.arrays import BoolArray, FloatArray
 from journeys.kernels.intervals import t_test, variance_from_buckets
 from journeys.models.fit import JourneyFit
 from journeys.models.group_fits import GroupFit, group_fits, rest_fit
+from journeys.questions.corrected import corrected
 from journeys.questions.differences import REACHED, TIMES, Answer, Key, Side, answers_of, live_mask
 from journeys.questions.distances import Differences, Distance, distance
 from journeys.results import KNOWN, PLAIN, Result
@@ -226,19 +227,7 @@ def _table(
             "estimate_a": a,
             "estimate_b": b,
             "p_value": p_value,
-            "p_value_corrected": _corrected(p_value, correction),
+            "p_value_corrected": corrected(p_value, correction),
         },
         confidence_level=level,
     )
-
-
-def _corrected(p_value: FloatArray, correction: str) -> FloatArray:
-    """Return p-values corrected for their number; those that are not there are not counted."""
-    there = np.isfinite(p_value)
-    if correction == "none" or not there.any():
-        return p_value
-    from statsmodels.stats.multitest import multipletests
-
-    corrected = np.full(len(p_value), np.nan)
-    corrected[there] = multipletests(p_value[there], method=correction)[1]
-    return corrected
