@@ -1,5 +1,6 @@
 """Customer-journey analytics from event logs: how many convert, how soon, where they are lost, how sure."""
 
+from journeys.intake.database import DatabaseLog
 from journeys.intake.rules import JourneyRules
 from journeys.intake.wide import from_wide
 from journeys.models.fit import JourneyFit
@@ -25,6 +26,7 @@ from journeys.tally.tally import Tally
 __version__ = "0.1.0"
 
 __all__ = [
+    "DatabaseLog",
     "JourneyFit",
     "JourneyModel",
     "JourneyRules",

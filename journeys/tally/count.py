@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 from contextlib import nullcontext
+from dataclasses import replace
 from functools import partial
 from typing import Any
 
@@ -12,6 +13,7 @@ import numpy as np
 from journeys import checks
 from journeys.errors import LogError
 from journeys.intake.look import Look, first_look
+from journeys.intake.people import People
 from journeys.intake.read import open_log
 from journeys.intake.rules import JourneyRules
 from journeys.kernels.bins import DAY_US
@@ -29,6 +31,7 @@ def count_log(
     source: Any,
     rules: JourneyRules,
     *,
+    identity: Any = None,
     n_workers: int | None = None,
     compiled: bool | None = None,
     progress: bool = False,
@@ -37,11 +40,15 @@ def count_log(
 
     Parameters
     ----------
-    source : path, list of paths, DataFrame, Arrow table or reader, iterator of record batches
+    source : path, list of paths, DataFrame, Arrow table or reader, iterator of record batches, DatabaseLog
         The log: Parquet, CSV or Arrow IPC files, folders of them, pandas frames, anything with
-        ``__arrow_c_stream__``. Only the columns that the rules name are read.
+        ``__arrow_c_stream__``, a database. Only the columns that the rules name are read.
     rules : JourneyRules
         What a journey is.
+    identity : path, DataFrame, Arrow table, optional
+        Table of people first seen under another id: columns `old` (the id that rows bear), `id` (the person's,
+        or another old one) and `since` (when that became known, or empty). All rows of an old id count as the
+        person's, and are counted in the findings.
     n_workers : int, optional
         Threads that count; default one per processor, at most 8. The tally does not depend on it.
     compiled : bool, optional
@@ -57,8 +64,10 @@ def count_log(
     Raises
     ------
     LogError
-        If columns are missing, times cannot be read, nothing is left to count, or a few rows lie far
-        outside the rest (a wrong clock).
+        If columns are missing, times cannot be read, nothing is left to count, a few rows lie far outside the
+        rest (a wrong clock), or the identity table contradicts itself.
+    RulesError
+        If the environment variable JOURNEYS_ID_KEY is set to something short enough to guess.
     ValueError
         If `n_workers` is not a whole number from 1.
     ImportError
@@ -68,6 +77,9 @@ def count_log(
     -----
     Memory grows with the customers, not with the rows. Rows of a customer may come in any order: where they
     are out of time order the log is spilled by customer to temporary files, and the answer is the same.
+
+    Where JOURNEYS_ID_KEY is set, each distinct id goes through a hash with that secret (BLAKE2b); it takes about a
+    microsecond for each in every block of half a million rows; tallies under different secrets cannot be added.
 
     Examples
     --------
@@ -83,17 +95,19 @@ def count_log(
     2
     """
     workers = min(os.cpu_count() or 1, MOST_WORKERS) if n_workers is None else checks.whole(n_workers, "n_workers", 1)
+    people = People.here(identity)
     log = open_log(source, rules.columns, text=(rules.event,))
     with log.spooled() if log.one_shot else nullcontext(log) as kept:
         look = first_look(kept, rules)
         pass_ = partial(
             Pass, kept, rules, look, _span(look, rules),
-            n_workers=workers, compiled=_compiles(compiled), progress=progress,
+            n_workers=workers, compiled=_compiles(compiled), progress=progress, people=people,
         )  # fmt: skip
         try:
-            return pass_().in_order()
+            tally = pass_().in_order()
         except OutOfOrderError:
-            return pass_().sorted_by_customer()
+            tally = pass_().sorted_by_customer()
+    return replace(tally, id_key=people.fingerprint)
 
 
 def _compiles(wanted: bool | None) -> bool:

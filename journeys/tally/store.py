@@ -24,7 +24,7 @@ from journeys.tally.tally import Tally
 if TYPE_CHECKING:
     from journeys.tally.accumulate import Columns
 
-FORMAT_VERSION = 3
+FORMAT_VERSION = 4
 HEAD = b"journeys"
 # Rows of a table written at once: the columns that it lacks take room too.
 _ROWS_AT_ONCE = 1 << 18
@@ -64,6 +64,7 @@ def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | 
         "n_rows": tally.n_rows,
         "groups": tally.groups,
         "part": tally.part,
+        "id_key": tally.id_key,
         "findings": tally.record.to_dict(),
         "checksum": _checksum(tally),
     }
@@ -177,6 +178,7 @@ def _from_parts(table: pa.Table, head: dict[str, Any]) -> Tally:
         rules=rules,
         groups=tuple(tuple(group) for group in head["groups"]),
         part=head["part"],
+        id_key=head["id_key"],
         states=tuple(head["states"]),
         log_start_us=head["log_start_us"],
         as_of_us=head["as_of_us"],

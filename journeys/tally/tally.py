@@ -55,6 +55,8 @@ class Tally:
         Values of the columns `rules.by`, one tuple per group of journeys; empty where they are not grouped.
     part : bool
         The tally holds some of the groups of another (see `where`).
+    id_key : str, optional
+        Fingerprint of the secret that the customers' ids were hashed with; None where there was none.
 
     Examples
     --------
@@ -84,6 +86,7 @@ class Tally:
     record: Findings
     groups: tuple[Group, ...] = ()
     part: bool = False
+    id_key: str | None = None
 
     @property
     def labels(self) -> tuple[str, ...]:
@@ -202,6 +205,8 @@ class Tally:
             self.n_rows,
             self.groups,
             self.part,
+            # Only where there is one: who sets none shall get the same numbers as ever.
+            *([self.id_key] if self.id_key else []),
         ]
         digest = blake2b(json.dumps(head, sort_keys=True).encode(), digest_size=16)
         for table in TABLES:
@@ -225,7 +230,7 @@ class Tally:
         Raises
         ------
         JourneysError
-            If rules, span or kind of times differ.
+            If rules, span, kind of times or the key of the ids differ.
         """
         return added(self, other) if isinstance(other, Tally) else NotImplemented
 
