@@ -21,6 +21,7 @@ from journeys.questions.time_to_convert import time_to_convert
 from journeys.questions.worth import worth
 from journeys.show import plots
 from journeys.tally.count import count_log as tally
+from journeys.tally.spark import tally_spark
 from journeys.tally.tally import Tally
 
 __version__ = "0.1.0"
@@ -47,6 +48,7 @@ __all__ = [
     "stages",
     "summarise",
     "tally",
+    "tally_spark",
     "time_to_convert",
     "worth",
 ]

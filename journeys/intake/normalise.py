@@ -89,6 +89,11 @@ class Normaliser:
         return bool(self._times.whole_days)
 
     @property
+    def all_midnight(self) -> bool:
+        """Whether the times of all rows kept so far are midnights."""
+        return self._all_midnight
+
+    @property
     def findings(self) -> Findings:
         """What was found so far, among it whether every time is a midnight."""
         extra = Findings()

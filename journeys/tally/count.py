@@ -100,7 +100,7 @@ def count_log(
     with log.spooled() if log.one_shot else nullcontext(log) as kept:
         look = first_look(kept, rules)
         pass_ = partial(
-            Pass, kept, rules, look, _span(look, rules),
+            Pass, kept, rules, look, span_of(look, rules),
             n_workers=workers, compiled=_compiles(compiled), progress=progress, people=people,
         )  # fmt: skip
         try:
@@ -118,8 +118,23 @@ def _compiles(wanted: bool | None) -> bool:
     return is_built() if wanted is None else wanted
 
 
-def _span(look: Look, rules: JourneyRules) -> Span:
-    """Return from when to when the log is read."""
+def span_of(look: Look, rules: JourneyRules) -> Span:
+    """Return from when to when a log is read.
+
+    Parameters
+    ----------
+    look : Look
+    rules : JourneyRules
+
+    Returns
+    -------
+    Span
+
+    Raises
+    ------
+    LogError
+        If the dates of the rules leave nothing, or a log of dates is too long.
+    """
     log_start = look.first_us if rules.log_start_us is None else rules.log_start_us
     as_of = look.last_us if rules.as_of_us is None else rules.as_of_us
     if log_start > as_of:

@@ -164,6 +164,11 @@ class Pass:
             for first, last in zip(cuts, cuts[1:], strict=False)
         ]
 
+    @property
+    def normaliser(self) -> Normaliser:
+        """What has turned the batches into rows, and counted them."""
+        return self._normaliser
+
     def in_order(self) -> Tally:
         """Count while rows stream by; raises OutOfOrderError where a customer's rows come out of order."""
         firsts = bucket_major(np.array([worker.parts.start * BUCKETS_PER_PART for worker in self._workers], np.uint64))

@@ -139,12 +139,13 @@ def test_never_the_whole_result_in_memory(places, monkeypatch):
     monkeypatch.setenv(VARIABLE, places["postgresql"])
     query = (
         "SELECT 'member-' || repeat('x', 100) || n AS who, "
-        "TIMESTAMP '2025-01-01' + n * INTERVAL '1 second' AS happened FROM generate_series(1, 800000) AS t(n) WHERE TIMESTAMP '2025-01-01' + n * INTERVAL '1 second' > $1"
+        "TIMESTAMP '2025-01-01' + n * INTERVAL '1 second' AS happened FROM generate_series(1, 600000) AS t(n) "
+        "WHERE TIMESTAMP '2025-01-01' + n * INTERVAL '1 second' > $1"
     )
     code = MEMORY.format(query=query, variable=VARIABLE, driver="postgresql")
     ran = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
     whole, grew = map(float, ran.stdout.split())
-    assert whole > 90
+    assert whole > 70
     assert grew < whole / 3
 
 
