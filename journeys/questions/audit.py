@@ -80,7 +80,9 @@ class Audit:
         return str(self.checks.to_html(index=False) + self.findings.to_html(index=False))
 
 
-def audit(source: Any, rules: JourneyRules | None = None, *, progress: bool = False) -> Audit:
+def audit(
+    source: Any, rules: JourneyRules | None = None, *, identity: Any = None, progress: bool = False
+) -> Audit:
     """Return what was left out of a log and whether it can carry the model.
 
     Parameters
@@ -89,6 +91,8 @@ def audit(source: Any, rules: JourneyRules | None = None, *, progress: bool = Fa
         Anything `journeys.tally` reads, or a tally.
     rules : JourneyRules, optional
         What a journey is; not needed for a tally.
+    identity : path, DataFrame, Arrow table, optional
+        Table of people first seen under another id, as `journeys.tally` takes it.
     progress : bool
         Show a progress bar on stderr.
 
@@ -122,7 +126,7 @@ def audit(source: Any, rules: JourneyRules | None = None, *, progress: bool = Fa
         msg = "rules are missing; wanted a JourneyRules beside a log"
         raise TypeError(msg)
     else:
-        tally = count_log(source, rules, progress=progress)
+        tally = count_log(source, rules, identity=identity, progress=progress)
     refuse_without_outcome(tally)
     rows = [
         _unreadable(tally),
