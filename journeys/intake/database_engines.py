@@ -66,16 +66,14 @@ def connected(driver: str, variable: str) -> Iterator[Any]:
     with ExitStack() as stack:
         try:
             connection = stack.enter_context(closing(_connect(driver, where)))
+            cursor = stack.enter_context(closing(connection.cursor()))
+            if driver == "postgresql":
+                cursor.execute("SET TRANSACTION READ ONLY")
+            cursor.execute("SET TimeZone = 'UTC'")
         except _faults() as fault:
             raise LogError(
                 f"no connection to the {driver} database that {variable} names: {_reason(str(fault))}"
             ) from None
-        cursor = stack.enter_context(closing(connection.cursor()))
-        if driver == "postgresql":
-            cursor.execute("SET TRANSACTION READ ONLY")
-            cursor.execute("SET TIME ZONE 'UTC'")
-        else:
-            cursor.execute("SET TimeZone = 'UTC'")
         yield cursor
 
 

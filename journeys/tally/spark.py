@@ -67,7 +67,8 @@ def tally_spark(df: DataFrame, rules: JourneyRules) -> Tally:
     partition, and counted there by the code that `journeys.tally` runs; the driver gets one small tally for each
     partition and adds them up. Rows of one customer and time keep the order that the frame has them in, unless
     `sequence` orders them. Findings have the same counts; they name no rows, since a frame of Spark numbers none.
-    Workers need this package and pyarrow; the key in JOURNEYS_ID_KEY is the driver's, and is sent to them.
+    Workers need this package and pyarrow; the key in JOURNEYS_ID_KEY is the driver's, and is sent to them. An identity
+    table is joined in Spark beforehand.
 
     Examples
     --------
