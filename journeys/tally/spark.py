@@ -128,7 +128,7 @@ def _numbered_columns(df: DataFrame, names: Sequence[str], *more: Column) -> Dat
 def _answers(df: DataFrame, work: _Work) -> list[Any]:
     """Do some work on every partition and return what came of it, or raise the fault that a worker met."""
     try:
-        answers = df.mapInArrow(partial(_on_worker, work=work), _ANSWER).collect()
+        answers = list(df.mapInArrow(partial(_on_worker, work=work), _ANSWER).collect())
     except Exception as fault:
         if "No module named 'journeys'" in str(fault):
             raise JourneysError(
