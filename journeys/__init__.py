@@ -1,5 +1,6 @@
 """Customer-journey analytics from event logs: how many convert, how soon, where they are lost, how sure."""
 
+from journeys.intake.database import DatabaseLog
 from journeys.intake.rules import JourneyRules
 from journeys.intake.wide import from_wide
 from journeys.models.fit import JourneyFit
@@ -23,11 +24,13 @@ from journeys.questions.worth import worth
 from journeys.show import plots
 from journeys.show.report import write_report
 from journeys.tally.count import count_log as tally
+from journeys.tally.spark import tally_spark
 from journeys.tally.tally import Tally
 
 __version__ = "0.1.0"
 
 __all__ = [
+    "DatabaseLog",
     "JourneyFit",
     "JourneyModel",
     "JourneyRules",
@@ -50,6 +53,7 @@ __all__ = [
     "stages",
     "summarise",
     "tally",
+    "tally_spark",
     "time_to_convert",
     "worth",
     "write_report",

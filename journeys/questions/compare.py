@@ -20,6 +20,7 @@ from journeys.questions.differences import REACHED, TIMES, Answer, Key, Side, an
 from journeys.questions.distances import Differences, Distance, distance
 from journeys.results import KNOWN, PLAIN, Result
 from journeys.tally.groups import Group
+from journeys.tally.parts import check_one_id_key
 from journeys.tally.tally import Tally
 
 CORRECTIONS = ("holm", "fdr_bh", "none")
@@ -82,6 +83,8 @@ def compare(
         If an argument is not one of those, `to` is not in the fits, or there is neither a second fit nor `by`.
     LogError
         If there are fewer than two groups, or `within` or `by` is asked of a chain without a log.
+    JourneysError
+        If the ids of the two logs were hashed with different secrets.
 
     Notes
     -----
@@ -119,6 +122,7 @@ def compare(
         msg = "compare: a tally that is not fitted can only be compared within a time; wanted within=... or fits"
         raise ValueError(msg)
     if fit_b is not None:
+        _check_one_id_key(fit_a, fit_b)
         found = _differences(fit_a, fit_b, to, horizons, moves, stages)
         return _table([((), one) for one in found], [], correction, level)
     names = [by] if isinstance(by, str) else list(by or ())
@@ -129,6 +133,13 @@ def compare(
         sides = (rest.fit or rest.tally, group.fit or group.tally)
         rows += [(group.values, one) for one in _differences(*sides, to, horizons, moves, stages)]
     return _table(rows, names, correction, level)
+
+
+def _check_one_id_key(fit_a: Side, fit_b: Side) -> None:
+    """Raise if the buckets of the two sides hold different people."""
+    tallies = [side if isinstance(side, Tally) else side.tally for side in (fit_a, fit_b)]
+    if tallies[0] is not None and tallies[1] is not None:
+        check_one_id_key(tallies[0], tallies[1], "compared")
 
 
 def _against_the_rest(fit: Side, names: list[str]) -> list[tuple[GroupFit, GroupFit]]:

@@ -59,6 +59,8 @@ class Tally:
         How many of the last states moves are told apart by.
     part : bool
         The tally holds some of the groups of another (see `where`).
+    id_key : str, optional
+        Fingerprint of the secret that the customers' ids were hashed with; None where there was none.
 
     Examples
     --------
@@ -90,6 +92,7 @@ class Tally:
     groups: tuple[Group, ...] = ()
     part: bool = False
     order: int = 1
+    id_key: str | None = None
 
     @property
     def labels(self) -> tuple[str, ...]:
@@ -207,6 +210,8 @@ class Tally:
         head = [
             self.rules.to_dict(), self.states, self.log_start_us, self.as_of_us, self.whole_days, self.n_rows,
             self.groups, self.part, self.order,
+            # Only where there is one: who sets none shall get the same numbers as ever.
+            *([self.id_key] if self.id_key else []),
         ]  # fmt: skip
         digest = blake2b(json.dumps(head, sort_keys=True).encode(), digest_size=16)
         for table in TABLES:
@@ -230,7 +235,7 @@ class Tally:
         Raises
         ------
         JourneysError
-            If rules, span, order or kind of times differ.
+            If rules, span, order, kind of times or the key of the ids differ.
         """
         return added(self, other) if isinstance(other, Tally) else NotImplemented
 
