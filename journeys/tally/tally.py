@@ -16,14 +16,13 @@ from journeys.checks import instant_text
 from journeys.intake.findings import Findings
 from journeys.intake.rule_checks import ALL
 from journeys.intake.rules import JourneyRules
-from journeys.kernels.histories import slot
 from journeys.kernels.records import FIRST_OUTCOME, LAPSED, OPEN
 from journeys.markup import facts
-from journeys.tally.accumulate import Columns, exact_limbs
+from journeys.tally.accumulate import Columns
 from journeys.tally.groups import Group, gathered, picked
 from journeys.tally.parts import added, of_groups
 from journeys.tally.spans import Span, longest_followed_us
-from journeys.tally.tables import CODED, FLAGS, HISTORY, NO_STATE, TABLES
+from journeys.tally.tables import TABLES
 
 if TYPE_CHECKING:
     from typing import Self
@@ -175,34 +174,9 @@ class Tally:
         ValueError
             If there is no table of that name.
         """
-        import pandas as pd
+        from journeys.tally.named import named_table
 
-        if name not in TABLES:
-            msg = f"table {name!r} is not known; wanted one of {', '.join(TABLES)}"
-            raise ValueError(msg)
-        columns: Columns = getattr(self, name)
-        labels = np.array(self.labels, dtype=object)
-        behind = np.array(["entry", "unknown", *self.labels[FIRST_OUTCOME:]], dtype=object)
-        frame: dict[str, Any] = {}
-        for column, values in columns.items():
-            if column.endswith("_high"):
-                total = column.removesuffix("_high")
-                frame[total] = pd.Series(exact_limbs(columns, total), dtype=object)
-            elif column.endswith("_low"):
-                continue
-            elif column in CODED:
-                nothing = NO_STATE.get((name, column), labels[0])
-                frame[column] = np.where(values == 0, nothing, (behind if column == "previous" else labels)[values])
-            elif column in HISTORY.values():
-                first = 1 + (column == "earlier")
-                for which in range(self.order - 1):
-                    frame[f"previous_{first + which}"] = behind[slot(values, which)]
-            elif column == "group":
-                for i, name_of_part in enumerate(self.rules.by):
-                    frame[name_of_part] = np.array([group[i] for group in self.groups], dtype=object)[values]
-            else:
-                frame[column] = values.astype(bool) if column in FLAGS else values
-        return pd.DataFrame(frame)
+        return named_table(self, name)
 
     @cached_property
     def checksum(self) -> str:
