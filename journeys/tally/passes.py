@@ -12,8 +12,7 @@ from numpy.typing import NDArray
 
 from journeys.errors import LogError
 from journeys.intake.findings import Findings
-from journeys.intake.group_checks import CAME_AFTER
-from journeys.intake.groups import MOST_GROUPS, cohort_calendar
+from journeys.intake.groups import MOST_GROUPS
 from journeys.intake.identity import bucket_major
 from journeys.intake.look import Look
 from journeys.intake.normalise import Normaliser
@@ -21,9 +20,8 @@ from journeys.intake.read import LogSource
 from journeys.intake.rows import Rows
 from journeys.intake.rules import JourneyRules
 from journeys.kernels.arrays import IntArray
-from journeys.kernels.bins import DAY_US, dwell_edges, elapsed_edges
-from journeys.kernels.grouping import MOST_PERIODS, Grouping
-from journeys.kernels.records import Reading
+from journeys.kernels.bins import dwell_edges, elapsed_edges
+from journeys.kernels.records import Carried, Reading
 from journeys.tally.accumulate import Columns, Keyed
 from journeys.tally.blocks import cut_between_ties
 from journeys.tally.codes import StateCodes
@@ -31,6 +29,7 @@ from journeys.tally.counter import Counter, LeaveOut
 from journeys.tally.dense import MoveSums
 from journeys.tally.groups import Group, named_groups
 from journeys.tally.order import by_customer
+from journeys.tally.rule_numbers import codes_of, cohorts_of, grouping_of
 from journeys.tally.spans import Span
 from journeys.tally.spill import BUCKETS_PER_PART, N_PARTS, Spill
 from journeys.tally.sums import Sums
@@ -39,6 +38,10 @@ from journeys.tally.tally import Tally
 from journeys.tally.touchpoints import Places, Touchpoints
 
 T = TypeVar("T")
+# Bins of dwell and of elapsed time.
+Edges = tuple[IntArray | None, IntArray | None]
+# Codes of the raw events, how many states there are, numbers of the touchpoints by code.
+Known = tuple[NDArray[np.int32], int, NDArray[np.int8] | None]
 
 
 @dataclass(frozen=True)
@@ -52,23 +55,37 @@ class _Block:
     touch_of_code: NDArray[np.int8] | None
 
 
+@dataclass(frozen=True)
+class Kept:
+    """What a count of some customers leaves for a later one to begin with: a record each, and sums under packed keys.
+
+    Codes in both are those of the count, so that its lists of names have to be kept too.
+    """
+
+    carried: Carried
+    tables: dict[str, Keyed]
+
+
 class _Worker:
     """Counts the customers of some neighbouring buckets."""
 
     def __init__(
-        self, parts: range, reading: Reading, leave_out: LeaveOut, span: Span, rules: JourneyRules, *, compiled: bool
+        self,
+        parts: range,
+        reading: Reading,
+        leave_out: LeaveOut,
+        edges: Edges,
+        longest_us: int | None,
+        *,
+        compiled: bool,
     ) -> None:
         self.parts, self._compiled = parts, compiled
         self.findings = Findings()
         self._reading, self._leave_out = reading, leave_out
         buckets = range(parts.start * BUCKETS_PER_PART, parts.stop * BUCKETS_PER_PART)
-        # Merged visits may last longer than the silence, and without one there is no longest stay at all.
-        longest = None if rules.repeats == "merge" else rules.silence_us
-        edges = dwell_edges(rules.silence_us, span.whole_days)
         group = () if reading.grouping is None else ("group",)
-        moves = MoveSums(edges, longest, reading.first_state, buckets, group)
-        edges = elapsed_edges(rules.silence_us, span.whole_days, rules.horizons_us)
-        self.sums = Sums(edges, moves, reading.grouping, valued=reading.values)
+        moves = MoveSums(edges[0], longest_us, reading.first_state, buckets, group)
+        self.sums = Sums(edges[1], moves, reading.grouping, valued=reading.values)
         self._counter = self._new_counter()
 
     def add(self, block: _Block, part: slice) -> None:
@@ -76,6 +93,22 @@ class _Worker:
         self._counter.add(
             block.rows, block.order[part], block.code_of_event, block.n_states, block.touch_of_code
         )
+
+    def add_rows(self, rows: Rows, known: Known) -> None:
+        """Count rows, all there are of their customers by now."""
+        self._counter.add(rows, by_customer(rows.key), *known)
+
+    def resume(self, kept: Kept | None, n_states: int) -> None:
+        """Begin with what an earlier count of these customers left."""
+        self._counter.resume(None if kept is None else kept.carried, n_states)
+        if kept is not None:
+            self.sums.resume(kept.tables)
+
+    def kept(self) -> Kept:
+        """Return what a later count is to begin with; the records are those at hand, not a copy."""
+        tables = {name: self.sums.result(name) for name in KEYS}
+        self.sums.resume(tables)
+        return Kept(self._counter.carried, tables)
 
     def close(self, code: IntArray, places: Places) -> dict[str, Columns]:
         """Close the log and return the tables, codes replaced by `code`."""
@@ -85,7 +118,7 @@ class _Worker:
     def add_parts(
         self,
         spill: Spill,
-        known: tuple[NDArray[np.int32], int, NDArray[np.int8] | None],
+        known: Known,
         code: IntArray,
         places: Places,
     ) -> dict[str, Columns]:
@@ -124,6 +157,8 @@ class Pass:
         Show a progress bar.
     """
 
+    goes_on = False
+
     def __init__(
         self,
         log: LogSource,
@@ -139,22 +174,29 @@ class Pass:
         named = (*rules.stages, *rules.opens, *rules.named_touchpoints)
         self._codes = StateCodes(rules.outcomes, tuple(dict.fromkeys(named)))
         self._touchpoints = Touchpoints(rules)
-        cohort_starts, self._cohorts = _cohorts(rules, span)
+        cohort_starts, self._cohorts = cohorts_of(rules, span)
+        grouping = grouping_of(rules, span, cohort_starts, goes_on=self.goes_on)
         reading = Reading(
             n_outcomes=len(rules.outcomes), n_converted=len(rules.converted), silence_us=rules.silence_us,
             same_outcome_us=rules.same_outcome_us, merge_repeats=rules.repeats == "merge",
             log_start_us=span.log_start_us, as_of_us=span.as_of_us, complete_history=rules.complete_history,
-            grouping=_grouping(rules, span, cohort_starts), stages=_codes_of(rules.stages, self._codes),
+            grouping=grouping, stages=codes_of(rules.stages, self._codes),
             touches=bool(rules.touchpoints), values=rules.value is not None,
         )  # fmt: skip
         self._normaliser = Normaliser(rules, log_start_us=span.log_start_us, as_of_us=span.as_of_us)
         leave_out = LeaveOut(
             rules.time, rules.event, rules.duplicates == "drop", rules.after_outcome == "stop",
-            _codes_of(rules.opens, self._codes), rules.value,
+            codes_of(rules.opens, self._codes), rules.value,
         )
+        edges = (
+            dwell_edges(rules.silence_us, span.whole_days),
+            elapsed_edges(rules.silence_us, span.whole_days, rules.horizons_us),
+        )
+        # Merged visits may last longer than the silence, and without one there is no longest stay at all.
+        longest = None if rules.repeats == "merge" else rules.silence_us
         cuts = [part * N_PARTS // n_workers for part in range(n_workers + 1)]
         self._workers = [
-            _Worker(range(first, last), reading, leave_out, span, rules, compiled=compiled)
+            _Worker(range(first, last), reading, leave_out, edges, longest, compiled=compiled)
             for first, last in zip(cuts, cuts[1:], strict=False)
         ]
 
@@ -249,37 +291,6 @@ class Pass:
             table["group"] = place[np.searchsorted(packed, table["group"])].astype(NARROW["group"])
             tables[name] = sorted_by_key(name, table)
         return groups
-
-
-def _cohorts(rules: JourneyRules, span: Span) -> tuple[IntArray | None, tuple[str, ...]]:
-    """Return starts and names of the cohorts; dates are the same days everywhere."""
-    if rules.cohort is None:
-        return None, ()
-    timezone = "UTC" if span.whole_days else rules.timezone
-    return cohort_calendar(rules.cohort, timezone, span.log_start_us, span.as_of_us)
-
-
-def _grouping(rules: JourneyRules, span: Span, cohort_starts: IntArray | None) -> Grouping | None:
-    if not rules.by:
-        return None
-    splits = np.array(rules.splits_us, np.int64)
-    if len(splits) >= MOST_PERIODS:
-        msg = f"split_at: got {len(splits):,} cuts; wanted fewer than {MOST_PERIODS:,}"
-        raise LogError(msg)
-    if span.whole_days and (splits % DAY_US).any():
-        msg = f"split_at: got {rules.split_at}, but the log holds dates; wanted cuts at whole days"
-        raise LogError(msg)
-    outside = (splits <= span.log_start_us) | (splits > span.as_of_us)
-    if outside.any():
-        msg = f"split_at: {rules.split_at[int(np.argmax(outside))]} does not lie inside the log; wanted cuts within it"
-        raise LogError(msg)
-    return Grouping(
-        CAME_AFTER in rules.by, cohort_starts, splits, rules.silence_us or 0, DAY_US if span.whole_days else 1
-    )
-
-
-def _codes_of(states: tuple[str, ...], codes: StateCodes) -> NDArray[np.int32] | None:
-    return np.array([codes.code(name) for name in states], np.int32) if states else None
 
 
 def _labelled(name: str, keyed: Keyed, code: IntArray, places: Places) -> Columns:

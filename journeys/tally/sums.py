@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import replace
 from typing import Any
 
@@ -82,6 +83,11 @@ class Sums:
     def result(self, name: str) -> Keyed:
         """Return the distinct keys of a table in order and their sums, and let go of it."""
         return self.moves.result() if name == "moves" else self._tables[name].result()
+
+    def resume(self, tables: Mapping[str, Keyed]) -> None:
+        """Begin with what `result` once gave, table by table."""
+        for name, table in tables.items():
+            (self.moves if name == "moves" else self._tables[name]).resume(table)
 
     def _empty(self, name: str) -> Accumulator:
         group = () if self._grouping is None else ("group",)

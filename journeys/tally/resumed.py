@@ -1,0 +1,195 @@
+"""A reading of a log that goes on where an earlier one left off: what was carried is loaded, what is new is added."""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Callable, Mapping
+from concurrent.futures import ThreadPoolExecutor
+from dataclasses import replace
+from itertools import chain
+from typing import Any
+
+import numpy as np
+
+from journeys.checks import MAX_TIME_US
+from journeys.intake.findings import Findings
+from journeys.intake.look import Look
+from journeys.intake.normalise import Normaliser
+from journeys.intake.read import LogSource
+from journeys.intake.rows import Rows, concat_rows
+from journeys.intake.rules import JourneyRules
+from journeys.kernels.arrays import BoolArray
+from journeys.tally.accumulate import Columns
+from journeys.tally.passes import Kept, Pass, ahead
+from journeys.tally.spans import Span
+from journeys.tally.spill import N_PARTS, Spill
+from journeys.tally.tally import Tally
+
+Load = Callable[[int], Kept | None]
+Keep = Callable[[int, Kept], None]
+_MOST_WORKERS = 8
+
+
+class ResumedPass(Pass):
+    """One reading of what has come in since the reading before, and the tally of all there has been.
+
+    The customers are dealt out into `N_PARTS` parts by their keys, each counted by itself, so that only one part for
+    each worker is in memory at a time.
+
+    Parameters
+    ----------
+    log : LogSource
+        What is new.
+    rules : JourneyRules
+        What a journey is.
+    span : Span
+        Start of the whole log, and up to when it is now read.
+    learned : mapping or None
+        What the reading before gave as `learned`; None: this is the first.
+    compiled : bool
+        Count in compiled loops.
+    """
+
+    goes_on = True
+
+    def __init__(
+        self, log: LogSource, rules: JourneyRules, span: Span, learned: Mapping[str, Any] | None, *, compiled: bool
+    ) -> None:
+        look = Look(span.log_start_us, span.as_of_us, log.n_rows or 0, span.whole_days, 0)
+        super().__init__(log, rules, look, span, n_workers=N_PARTS, compiled=compiled, progress=False)
+        # What is later than as_of waits for a later reading, so the normaliser is not to leave it out.
+        self._normaliser = Normaliser(rules, log_start_us=span.log_start_us, as_of_us=MAX_TIME_US)
+        self._counted_events = np.zeros(0, bool)
+        if learned is not None:
+            self._resume(learned)
+        self._n_rows_before = self._normaliser.n_rows
+        self._late = Findings()
+        self._found: list[Findings] = []
+        self._waiting = np.zeros(0, np.int64)
+
+    def _resume(self, learned: Mapping[str, Any]) -> None:
+        self._normaliser.resume(learned["rows"])
+        self._counted_events = np.isin(self._normaliser.codes.names, learned["counted_events"])
+        self._codes.resume(learned["states"], learned["seen"])
+        self._touchpoints.names = list(learned["touchpoints"])
+
+    def learned(self) -> dict[str, Any]:
+        """Return the lists of names that codes point into, and the findings, as plain values that JSON can hold.
+
+        What closing the log finds is not among the findings: the next reading closes it anew.
+        """
+        rows = self._normaliser.learned()
+        found = sum(self._found, Findings.from_dict(rows["findings"]) + self._late)
+        names = self._normaliser.codes.names
+        return {
+            "rows": rows | {"findings": found.to_dict()},
+            "counted_events": [name for name, is_in in zip(names, self._all_counted(), strict=True) if is_in],
+            "states": self._codes.states,
+            "seen": self._codes.seen,
+            "touchpoints": list(self._touchpoints.names),
+        }
+
+    @property
+    def n_rows(self) -> int:
+        """Rows read, here and before."""
+        return self._normaliser.n_rows
+
+    @property
+    def n_new_rows(self) -> int:
+        """Rows read here."""
+        return self._normaliser.n_rows - self._n_rows_before
+
+    @property
+    def n_too_late(self) -> int:
+        """Rows read here that came too late."""
+        return self._late.n("too_late")
+
+    def deal(
+        self, spill: Spill, held: Rows | None, *, late_before_us: int | None, until_us: int, now_us: int
+    ) -> Rows | None:
+        """Deal out the rows that are to be counted, and return those that are to wait.
+
+        Parameters
+        ----------
+        spill : Spill
+            Where they go.
+        held : Rows or None
+            Rows that have waited, earlier in the log than all new ones.
+        late_before_us : int or None
+            New rows earlier than this come too late: left out and counted.
+        until_us : int
+            Rows up to this moment are counted, later ones wait.
+        now_us : int
+            Later rows lie in the future, which is a finding.
+        """
+        waiting: list[Rows] = []
+        new = (self._in_time(rows, late_before_us, now_us) for rows in ahead(self._rows()))
+        for rows in chain([] if held is None else [held], new):
+            ready = rows.time <= until_us
+            counted = rows.take(ready)
+            # Names of rows that wait are no states yet.
+            self._all_counted()[np.unique(counted.event)] = True
+            spill.add(counted)
+            if not ready.all():
+                waiting.append(rows.take(~ready))
+        if not waiting:
+            return None
+        rest = concat_rows(waiting)
+        self._waiting = rest.row
+        return rest
+
+    def _in_time(self, rows: Rows, late_before_us: int | None, now_us: int) -> Rows:
+        self._late.add("later_than_now", self._rules.time, rows.row[rows.time > now_us])
+        if late_before_us is None:
+            return rows
+        late = rows.time < late_before_us
+        self._late.add("too_late", self._rules.time, rows.row[late])
+        return rows.take(~late) if late.any() else rows
+
+    def count(self, spill: Spill, load: Load, keep: Keep) -> Tally:
+        """Count the rows dealt out on top of what was kept, and return the tally of all there has been.
+
+        Parameters
+        ----------
+        spill : Spill
+            The rows.
+        load : callable
+            From the number of a part to what was kept of it, None where nothing was. Its records are changed. Called
+            from several threads, as is the next.
+        keep : callable
+            Gets the number of a part that changed and what is to be kept of it, before the log is closed.
+        """
+        targets = [
+            name if is_in else None
+            for name, is_in in zip(self._normaliser.targets, self._all_counted(), strict=True)
+        ]
+        code_of_event = self._codes.of_events(targets)
+        known = (code_of_event, len(self._codes.states), self._touchpoints.of_codes(self._codes))
+        final = self._final()
+        changed = spill.numbers
+        nothing = self._workers[0].close(*final)
+
+        def count(number: int) -> tuple[Findings, dict[str, Columns]]:
+            worker, kept = self._workers[number], load(number)
+            if kept is None and number not in changed:
+                return Findings(), {name: dict(table) for name, table in nothing.items()}
+            worker.resume(kept, known[1])
+            for rows in spill.parts(number, number + 1):
+                worker.add_rows(rows, known)
+            if number in changed:
+                keep(number, worker.kept())
+            return worker.findings + Findings(), worker.close(*final)
+
+        with ThreadPoolExecutor(min(os.cpu_count() or 1, _MOST_WORKERS)) as pool:
+            done = list(pool.map(count, range(N_PARTS)))
+        self._found = [found for found, _ in done]
+        tally = self._tally([tables for _, tables in done])
+        waiting = Findings()
+        waiting.add("after_as_of", self._rules.time, self._waiting)
+        return replace(tally, record=tally.record + self._late + waiting)
+
+    def _all_counted(self) -> BoolArray:
+        """Tell of each event known by now whether a row of it was ever counted."""
+        n = len(self._normaliser.targets) - len(self._counted_events)
+        self._counted_events = np.pad(self._counted_events, (0, n))
+        return self._counted_events
