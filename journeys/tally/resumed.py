@@ -63,6 +63,7 @@ class ResumedPass(Pass):
         if learned is not None:
             self._resume(learned)
         self._n_rows_before = self._normaliser.n_rows
+        self._n_unreadable_before = self._normaliser.findings.n_unreadable
         self._late = Findings()
         self._found: list[Findings] = []
         self._waiting = np.zeros(0, np.int64)
@@ -103,6 +104,11 @@ class ResumedPass(Pass):
     def n_too_late(self) -> int:
         """Rows read here that came too late."""
         return self._late.n("too_late")
+
+    @property
+    def n_unreadable(self) -> int:
+        """Rows read here without a readable customer, time or event."""
+        return self._normaliser.findings.n_unreadable - self._n_unreadable_before
 
     def deal(
         self, spill: Spill, held: Rows | None, *, late_before_us: int | None, until_us: int, now_us: int
