@@ -91,6 +91,12 @@ class Ledger:
             if not self._is_whole(stored):
                 raise StoreError(damaged(self.folder / stored.file))
 
+    def check_newest(self) -> None:
+        """Raise a StoreError if the newest counts are not what was written: a night leaves them unread."""
+        newest = None if self.manifest is None else self.manifest.newest
+        if newest is not None and not self._is_whole(newest.tally):
+            raise StoreError(damaged(self.folder / newest.tally.file))
+
     def clean(self) -> None:
         """Take away what runs that were cut off have left, and what the manifest no longer names."""
         named = {MANIFEST, LOCK, *(stored.file for stored in (self.manifest.files if self.manifest else ()))}

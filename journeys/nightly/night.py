@@ -100,6 +100,7 @@ def run_night(job: Job, *, rebuild: bool = False, dry_run: bool = False, now_us:
 def _new_inputs(job: Job, ledger: Ledger, inputs: Inputs, key: str | None) -> list[Input]:
     if ledger.manifest is not None:
         refuse_changes(job, ledger.manifest, key)
+        ledger.check_newest()
     return inputs.new(ledger.counted)
 
 

@@ -62,7 +62,7 @@ def reach_of(
         If the log begins and there is no usable time, or a few rows lie long before all others.
     """
     first, newest, whole_days = _times(log, rules, now_us)
-    log_start = None if before is None else before.log_start_us
+    log_start = _known_start(before, rules, first)
     learned = None if before is None else before.learned
     if learned is not None and learned["rows"]["whole_days"] is not None:
         whole_days = learned["rows"]["whole_days"]
@@ -81,6 +81,15 @@ def reach_of(
     if late_before is not None:
         until = max(until, late_before)
     return Reach(Span(log_start, until - tick, whole_days), late_before, until, newest)
+
+
+def _known_start(before: Manifest | None, rules: JourneyRules, first: int | None) -> int | None:
+    """Return the start of a log that has begun; as long as every row waits, an earlier one moves it."""
+    if before is None or before.log_start_us is None or before.counted_before_us is None:
+        return None
+    if first is None or rules.log_start_us is not None or before.counted_before_us > before.log_start_us:
+        return before.log_start_us
+    return min(before.log_start_us, max(first, before.counted_before_us))
 
 
 def _log_start(log: LogSource, rules: JourneyRules, first: int | None, now_us: int) -> int:
