@@ -172,7 +172,7 @@ def test_a_night_that_settles_nothing_only_waits(root: Path, published: list[Any
     job = make_job(root, lateness="30d")
     nights = invented(1, 3, 20)[:3]
     # A row from before all that came first: as long as nothing is counted, the log begins with it.
-    nights[1].loc[0, "happened"] = nights[0].happened.min() - pd.Timedelta("2d")
+    nights[1].loc[0, "happened"] = nights[0].happened.min() - pd.Timedelta(days=2)
     for day in (0, 1, 2):
         write_night(job, day, nights[day])
         done = run_night(job)
