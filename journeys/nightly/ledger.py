@@ -73,11 +73,6 @@ class Ledger:
         stored = None if self.manifest is None else self.manifest.held
         return None if stored is None else self._read(stored, rows_from)
 
-    def weeks(self) -> bytes | None:
-        """Return the counts by week."""
-        stored = None if self.manifest is None else self.manifest.weeks
-        return None if stored is None else self._read(stored, bytes)
-
     def tally(self, generation: Generation) -> Tally:
         """Return the counts of a generation."""
         path = self.folder / generation.tally.file
@@ -238,4 +233,4 @@ def without_old(manifest: Manifest, newest: Generation) -> Manifest:
 def _is_ours(name: str) -> bool:
     """Tell whether a name is one that a ledger gives its files."""
     stem = name.lstrip(".")
-    return stem.startswith(("part-", "held-", "weeks-", "tally-", MANIFEST))
+    return stem.startswith(("part-", "held-", "tally-", MANIFEST))

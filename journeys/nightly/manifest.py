@@ -72,6 +72,29 @@ class Generation:
 
 
 @dataclass(frozen=True)
+class Watched:
+    """What a ledger knows of the weeks.
+
+    Attributes
+    ----------
+    within_us : int
+        Time within which things are followed.
+    from_us : int
+        Weeks that begin earlier were not followed from their beginning.
+    shares, events : int
+        The last week looked at for changed shares and for events; -1 where none was.
+    by_week : dict of str to dict of str to int
+        How often each event came in each week.
+    """
+
+    within_us: int
+    from_us: int
+    shares: int = -1
+    events: int = -1
+    by_week: dict[str, dict[str, int]] = field(default_factory=dict)
+
+
+@dataclass(frozen=True)
 class Manifest:
     """What a ledger holds.
 
@@ -99,10 +122,8 @@ class Manifest:
         Rows that wait.
     generations : list of Generation
         Those kept, rising; empty before there was anything to count.
-    weeks : Stored or None
-        Counts by week for the change alarms.
-    watched_until_us : int or None
-        End of the last week that was looked at for changes.
+    watched : Watched or None
+        What the change alarms know of the weeks; None where there are none.
     rebuilt : int
         The generation in which the ledger was last begun anew.
     """
@@ -119,8 +140,7 @@ class Manifest:
     parts: dict[str, Stored] = field(default_factory=dict)
     held: Stored | None = None
     generations: list[Generation] = field(default_factory=list)
-    weeks: Stored | None = None
-    watched_until_us: int | None = None
+    watched: Watched | None = None
     rebuilt: int = 1
 
     @property
@@ -128,7 +148,8 @@ class Manifest:
         """All files the ledger consists of, beside the manifest itself."""
         yield from self.parts.values()
         yield from (one.tally for one in self.generations)
-        yield from (one for one in (self.held, self.weeks) if one is not None)
+        if self.held is not None:
+            yield self.held
 
     @property
     def newest(self) -> Generation | None:
@@ -180,11 +201,11 @@ def damaged(path: Path) -> str:
 
 
 def _from_dict(body: dict[str, Any]) -> Manifest:
-    stored = {name: None if body[name] is None else Stored(**body[name]) for name in ("held", "weeks")}
     return Manifest(
         **body
-        | stored
         | {
+            "held": None if body["held"] is None else Stored(**body["held"]),
+            "watched": None if body["watched"] is None else Watched(**body["watched"]),
             "inputs": [Counted(**one) for one in body["inputs"]],
             "parts": {number: Stored(**one) for number, one in body["parts"].items()},
             "generations": [Generation(**one | {"tally": Stored(**one["tally"])}) for one in body["generations"]],

@@ -12,17 +12,19 @@ from journeys.errors import LimitError
 from journeys.intake.findings import Findings
 from journeys.kernels.compiled import is_built
 from journeys.nightly import disk
+from journeys.nightly.alarms import begun, look, watch_of
 from journeys.nightly.fresh import begun_anew, fingerprint, refuse_changes, rules_checksum
 from journeys.nightly.inputs import FolderInputs, Input, InputLog, Inputs
 from journeys.nightly.job import Job
 from journeys.nightly.ledger import Draft, Ledger, opened, without_old
 from journeys.nightly.lock import held
-from journeys.nightly.manifest import Counted, Generation, Manifest
+from journeys.nightly.manifest import Counted, Generation, Manifest, Watched
 from journeys.nightly.publish import Publication, is_published, publish
 from journeys.nightly.times import Reach, reach_of
 from journeys.tally.resumed import ResumedPass
 from journeys.tally.spill import Spill
 from journeys.tally.tally import Tally
+from journeys.tally.weeks import Watch
 
 
 @dataclass(frozen=True)
@@ -43,6 +45,8 @@ class Night:
         What was published; None where nothing was.
     dry_run : bool
         Nothing was written.
+    alarms : list of dict
+        The change alarms that tripped.
     """
 
     generation: int
@@ -158,7 +162,8 @@ def _drafted(
 ) -> tuple[Ledger, Night, Tally | None]:
     """Write the next generation and make it the present one."""
     log, inputs, new = source
-    pass_ = ResumedPass(log, job.rules, reach.span, ledger.learned, compiled=is_built())
+    watched, watch = _watch(job, ledger, reach)
+    pass_ = ResumedPass(log, job.rules, reach.span, ledger.learned, compiled=is_built(), watch=watch)
     parts = {} if ledger.manifest is None else dict(ledger.manifest.parts)
     tally = None
     with Spill() as spill:
@@ -180,18 +185,31 @@ def _drafted(
         inputs=[*before.inputs, *(_record(one, log, number) for one in new)],
         parts=parts, held=None if waiting is None else draft.held(waiting),
     )  # fmt: skip
+    alarms: list[dict[str, Any]] = []
     if tally is not None:
+        if job.alarms is not None and watched is not None and watch is not None:
+            watched, alarms = look(pass_, watch, watched, job.alarms, job.rules, reach.span)
         generation = Generation(
             number, _utc(now_us), rules_checksum(job.rules), reach.span.as_of_us, pass_.n_rows,
             Findings.from_dict(learned["rows"]["findings"]).n("too_late"), draft.tally(number, tally),
-            rebuilt=after.rebuilt,
+            alarms, rebuilt=after.rebuilt,
         )  # fmt: skip
-        after = without_old(after, generation)
+        after = without_old(replace(after, watched=watched), generation)
     night = Night(
         number, tuple(one.name for one in new), pass_.n_new_rows, pass_.n_too_late,
-        0 if waiting is None else len(waiting), _as_of(reach),
+        0 if waiting is None else len(waiting), _as_of(reach), alarms=alarms,
     )  # fmt: skip
     return draft.commit(after), night, tally
+
+
+def _watch(job: Job, ledger: Ledger, reach: Reach) -> tuple[Watched | None, Watch | None]:
+    """Return what is known of the weeks, and what the night counts by week; nothing where no alarms are asked for."""
+    if job.alarms is None or _as_of(reach) is None:
+        return None, None
+    before = None if ledger.manifest is None else ledger.manifest.watched
+    events = [] if ledger.learned is None else ledger.learned["counted_events"]
+    watched = begun(before, job.alarms, job.rules, reach.span, reach.late_before_us, events)
+    return watched, watch_of(watched, job.alarms, job.rules, reach.span)
 
 
 def _again(job: Job, ledger: Ledger) -> Night:
@@ -205,7 +223,9 @@ def _again(job: Job, ledger: Ledger) -> Night:
     if manifest.newest is None or is_published(job.out, manifest.newest):
         return night
     publication = publish(job, manifest.newest, ledger.tally(manifest.newest))
-    return replace(night, publication=publication, as_of=instant_text(manifest.newest.as_of_us))
+    return replace(
+        night, publication=publication, as_of=instant_text(manifest.newest.as_of_us), alarms=manifest.newest.alarms
+    )
 
 
 def _record(one: Input, log: InputLog, number: int) -> Counted:

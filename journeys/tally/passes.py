@@ -21,6 +21,7 @@ from journeys.intake.rows import Rows
 from journeys.intake.rules import JourneyRules
 from journeys.kernels.arrays import IntArray
 from journeys.kernels.bins import dwell_edges, elapsed_edges
+from journeys.kernels.grouping import Grouping
 from journeys.kernels.records import Carried, Reading
 from journeys.tally.accumulate import Columns, Keyed
 from journeys.tally.blocks import cut_between_ties
@@ -29,13 +30,14 @@ from journeys.tally.counter import Counter, LeaveOut
 from journeys.tally.dense import MoveSums
 from journeys.tally.groups import Group, named_groups
 from journeys.tally.order import by_customer
-from journeys.tally.rule_numbers import codes_of, cohorts_of, grouping_of
+from journeys.tally.rule_numbers import codes_of, cohorts_of, grouping_of, ungrouped
 from journeys.tally.spans import Span
 from journeys.tally.spill import BUCKETS_PER_PART, N_PARTS, Spill
 from journeys.tally.sums import Sums
 from journeys.tally.tables import CODED, KEYS, MORE, MOST_IN_SETS, N_BUCKETS, NARROW, sorted_by_key, split_key
 from journeys.tally.tally import Tally
 from journeys.tally.touchpoints import Places, Touchpoints
+from journeys.tally.weeks import Watch, WatchedSums
 
 T = TypeVar("T")
 # Bins of dwell and of elapsed time.
@@ -77,15 +79,20 @@ class _Worker:
         edges: Edges,
         longest_us: int | None,
         *,
+        grouped: Grouping | None,
+        watch: Watch | None,
         compiled: bool,
     ) -> None:
         self.parts, self._compiled = parts, compiled
         self.findings = Findings()
         self._reading, self._leave_out = reading, leave_out
         buckets = range(parts.start * BUCKETS_PER_PART, parts.stop * BUCKETS_PER_PART)
-        group = () if reading.grouping is None else ("group",)
+        group = () if grouped is None else ("group",)
         moves = MoveSums(edges[0], longest_us, reading.first_state, buckets, group)
-        self.sums = Sums(edges[1], moves, reading.grouping, valued=reading.values)
+        if watch is None:
+            self.sums = Sums(edges[1], moves, grouped, valued=reading.values)
+        else:
+            self.sums = WatchedSums(edges[1], moves, grouped, valued=reading.values, watch=watch)
         self._counter = self._new_counter()
 
     def add(self, block: _Block, part: slice) -> None:
@@ -106,7 +113,7 @@ class _Worker:
 
     def kept(self) -> Kept:
         """Return what a later count is to begin with; the records are those at hand, not a copy."""
-        tables = {name: self.sums.result(name) for name in KEYS}
+        tables = {name: self.sums.result(name) for name in self.sums.names}
         self.sums.resume(tables)
         return Kept(self._counter.carried, tables)
 
@@ -158,6 +165,7 @@ class Pass:
     """
 
     goes_on = False
+    watch: Watch | None = None
 
     def __init__(
         self,
@@ -176,11 +184,13 @@ class Pass:
         self._touchpoints = Touchpoints(rules)
         cohort_starts, self._cohorts = cohorts_of(rules, span)
         grouping = grouping_of(rules, span, cohort_starts, goes_on=self.goes_on)
+        # A watch over the weeks asks when things began, which only what is grouped says.
+        told_apart = grouping if self.watch is None else grouping or ungrouped(rules, span)
         reading = Reading(
             n_outcomes=len(rules.outcomes), n_converted=len(rules.converted), silence_us=rules.silence_us,
             same_outcome_us=rules.same_outcome_us, merge_repeats=rules.repeats == "merge",
             log_start_us=span.log_start_us, as_of_us=span.as_of_us, complete_history=rules.complete_history,
-            grouping=grouping, stages=codes_of(rules.stages, self._codes),
+            grouping=told_apart, stages=codes_of(rules.stages, self._codes),
             touches=bool(rules.touchpoints), values=rules.value is not None,
         )  # fmt: skip
         self._normaliser = Normaliser(rules, log_start_us=span.log_start_us, as_of_us=span.as_of_us)
@@ -196,7 +206,10 @@ class Pass:
         longest = None if rules.repeats == "merge" else rules.silence_us
         cuts = [part * N_PARTS // n_workers for part in range(n_workers + 1)]
         self._workers = [
-            _Worker(range(first, last), reading, leave_out, edges, longest, compiled=compiled)
+            _Worker(
+                range(first, last), reading, leave_out, edges, longest,
+                grouped=grouping, watch=self.watch, compiled=compiled,
+            )  # fmt: skip
             for first, last in zip(cuts, cuts[1:], strict=False)
         ]
 

@@ -10,6 +10,7 @@ from itertools import chain
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from journeys.checks import MAX_TIME_US
 from journeys.intake.findings import Findings
@@ -19,15 +20,20 @@ from journeys.intake.read import LogSource
 from journeys.intake.rows import Rows, concat_rows
 from journeys.intake.rules import JourneyRules
 from journeys.kernels.arrays import BoolArray
-from journeys.tally.accumulate import Columns
+from journeys.tally.accumulate import Columns, Keyed
+from journeys.tally.groups import Group, named_groups
+from journeys.tally.keys import unpack
 from journeys.tally.passes import Kept, Pass, ahead
 from journeys.tally.spans import Span
 from journeys.tally.spill import N_PARTS, Spill
 from journeys.tally.tally import Tally
+from journeys.tally.weeks import NAME as WEEKS
+from journeys.tally.weeks import Watch, joined, kept_weeks
 
 Load = Callable[[int], Kept | None]
 Keep = Callable[[int, Kept], None]
 _MOST_WORKERS = 8
+WEEK_COLUMNS = ("bucket", "state", "next", "flag", "week", "group", "n")
 
 
 class ResumedPass(Pass):
@@ -48,13 +54,32 @@ class ResumedPass(Pass):
         What the reading before gave as `learned`; None: this is the first.
     compiled : bool
         Count in compiled loops.
+    watch : Watch, optional
+        Count by week too.
+
+    Attributes
+    ----------
+    weeks : Keyed or None
+        Once counted: what happened by week, codes as the count has them.
+    events_by_week : dict of str to dict of int to int
+        How often each event came in each week, of the rows dealt out to be counted.
     """
 
     goes_on = True
 
     def __init__(
-        self, log: LogSource, rules: JourneyRules, span: Span, learned: Mapping[str, Any] | None, *, compiled: bool
+        self,
+        log: LogSource,
+        rules: JourneyRules,
+        span: Span,
+        learned: Mapping[str, Any] | None,
+        *,
+        compiled: bool,
+        watch: Watch | None = None,
     ) -> None:
+        self.watch = watch
+        self.weeks: Keyed | None = None
+        self.events_by_week: dict[str, dict[int, int]] = {}
         look = Look(span.log_start_us, span.as_of_us, log.n_rows or 0, span.whole_days, 0)
         super().__init__(log, rules, look, span, n_workers=N_PARTS, compiled=compiled, progress=False)
         # What is later than as_of waits for a later reading, so the normaliser is not to leave it out.
@@ -136,6 +161,7 @@ class ResumedPass(Pass):
             # Names of rows that wait are no states yet.
             self._all_counted()[np.unique(counted.event)] = True
             spill.add(counted)
+            self._note_weeks(counted)
             if not ready.all():
                 waiting.append(rows.take(~ready))
         if not waiting:
@@ -143,6 +169,16 @@ class ResumedPass(Pass):
         rest = concat_rows(waiting)
         self._waiting = rest.row
         return rest
+
+    def _note_weeks(self, rows: Rows) -> None:
+        """Count events by week."""
+        if self.watch is None or not len(rows):
+            return
+        week = self.watch.week_of(rows.time)
+        pair, n = np.unique(np.stack([rows.event.astype(np.int64), week]), axis=1, return_counts=True)
+        for (event, at), count in zip(pair.T.tolist(), n.tolist(), strict=True):
+            weeks = self.events_by_week.setdefault(self._normaliser.codes.names[event], {})
+            weeks[at] = weeks.get(at, 0) + count
 
     def _in_time(self, rows: Rows, late_before_us: int | None, now_us: int) -> Rows:
         self._late.add("later_than_now", self._rules.time, rows.row[rows.time > now_us])
@@ -175,24 +211,60 @@ class ResumedPass(Pass):
         changed = spill.numbers
         nothing = self._workers[0].close(*final)
 
+        weeks: list[Keyed] = []
+
         def count(number: int) -> tuple[Findings, dict[str, Columns]]:
             worker, kept = self._workers[number], load(number)
             if kept is None and number not in changed:
                 return Findings(), {name: dict(table) for name, table in nothing.items()}
-            worker.resume(kept, known[1])
+            worker.resume(self._fitted(kept), known[1])
             for rows in spill.parts(number, number + 1):
                 worker.add_rows(rows, known)
             if number in changed:
                 keep(number, worker.kept())
-            return worker.findings + Findings(), worker.close(*final)
+            found, tables = worker.findings + Findings(), worker.close(*final)
+            if self.watch is not None:
+                weeks.append(worker.sums.result(WEEKS))
+            return found, tables
 
         with ThreadPoolExecutor(min(os.cpu_count() or 1, _MOST_WORKERS)) as pool:
             done = list(pool.map(count, range(N_PARTS)))
         self._found = [found for found, _ in done]
+        self.weeks = joined(weeks) if weeks else None
         tally = self._tally([tables for _, tables in done])
         waiting = Findings()
         waiting.add("after_as_of", self._rules.time, self._waiting)
         return replace(tally, record=tally.record + self._late + waiting)
+
+    def _fitted(self, kept: Kept | None) -> Kept | None:
+        """Return what was kept of a part as this pass needs it: with or without groups and weeks."""
+        if kept is None:
+            return None
+        tables = {name: table for name, table in kept.tables.items() if name != WEEKS or self.watch is not None}
+        if self.watch is not None and WEEKS in tables:
+            tables[WEEKS] = kept_weeks(tables[WEEKS], self.watch.first_kept)
+        grouped = bool(self._rules.by) or self.watch is not None
+        group = kept.carried.group
+        if grouped and group is None:
+            group = np.zeros(len(kept.carried.key), np.int64)
+        return Kept(replace(kept.carried, group=group if grouped else None), tables)
+
+    def named_weeks(self) -> tuple[dict[str, NDArray[Any]], list[str], tuple[Group, ...]]:
+        """Return the table by week, the names that its codes stand for, and the groups that its group numbers do.
+
+        Its columns are bucket, state, next, flag, week, group and n.
+        """
+        if self.weeks is None:
+            return {name: np.zeros(0, np.int64) for name in WEEK_COLUMNS}, [], ()
+        bucket, state, next_code, _, flag = (part() for part in unpack(self.weeks.key))
+        packed, group = np.unique(self.weeks.more["group"], return_inverse=True)
+        groups: tuple[Group, ...] = ((),)
+        if self._rules.by:
+            combinations = self._normaliser.groups.combinations
+            groups, place = named_groups(packed, self._rules, combinations, self._cohorts)
+            group = place[group]
+        columns = (bucket, state, next_code, flag, self.weeks.more["week"], group, self.weeks.sums["n"])
+        return dict(zip(WEEK_COLUMNS, columns, strict=True)), self._codes.names, groups
 
     def _all_counted(self) -> BoolArray:
         """Tell of each event known by now whether a row of it was ever counted."""

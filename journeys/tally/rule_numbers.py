@@ -46,6 +46,11 @@ def grouping_of(
     )
 
 
+def ungrouped(rules: JourneyRules, span: Span) -> Grouping:
+    """Return a grouping that puts all journeys into one group, for counts that ask when things began."""
+    return Grouping(False, None, np.zeros(0, np.int64), rules.silence_us or 0, DAY_US if span.whole_days else 1)
+
+
 def codes_of(states: tuple[str, ...], codes: StateCodes) -> NDArray[np.int32] | None:
     """Return the codes of some states; None where there are none."""
     return np.array([codes.code(name) for name in states], np.int32) if states else None

@@ -80,6 +80,11 @@ class Sums:
             self.customers = carried_over(self.customers)
             np.maximum.at(self.customers["largest_value"], bucket, value)
 
+    @property
+    def names(self) -> tuple[str, ...]:
+        """Tables there are, beside the customers."""
+        return ("moves", *self._tables)
+
     def result(self, name: str) -> Keyed:
         """Return the distinct keys of a table in order and their sums, and let go of it."""
         return self.moves.result() if name == "moves" else self._tables[name].result()
