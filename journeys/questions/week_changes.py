@@ -82,7 +82,8 @@ def week_changes(
     Notes
     -----
     Both shares are ratios of sums over customers; each of the 200 buckets pulls on the difference by what it holds of
-    both, so that customers seen in both weeks are allowed for.
+    both, so that customers seen in both weeks are allowed for. The variance is at least that of two shares of
+    independent trials that do not differ.
     """
     import pandas as pd
 
@@ -122,8 +123,10 @@ def _difference(
         return None
     live = (a.n + b.n) > 0
     variance, df = variance_from_buckets((b.pull - a.pull)[live])
-    difference, std_error = b.share - a.share, float(np.sqrt(variance))
-    low, high = t_interval(difference, std_error, df, level)
+    # All or nothing has no spread between buckets: then what chance alone would give if nothing had changed.
+    by_chance = pooled * (1 - pooled) * (1 / a.n.sum() + 1 / b.n.sum())
+    difference, std_error = b.share - a.share, float(np.sqrt(np.fmax(variance, by_chance)))
+    low, high = np.clip(t_interval(difference, std_error, df, level), -1, 1)
     p_value = float(t_test(difference, std_error, df))
     return (
         measure, state, next_state, int(a.n.sum()), int(b.n.sum()), a.share, b.share, difference, std_error,
