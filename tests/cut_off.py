@@ -130,16 +130,20 @@ def _night_of(path: str, with_summary: bool) -> None:
             run_night(job)
 
 
-def killer() -> Callable[[Stage, float, bool], bool]:
-    """Return what starts a night in a process of its own, kills it after so many seconds, and tells if it got to."""
+def killer() -> Callable[[Stage, float | None, bool], bool]:
+    """Return what starts a night in a process of its own, kills it after so many seconds, and tells if it got to.
+
+    None: it is left to end.
+    """
     context = multiprocessing.get_context("forkserver")
     context.set_forkserver_preload(["cut_off"])
 
-    def kill(stage: Stage, after_s: float, with_summary: bool) -> bool:
+    def kill(stage: Stage, after_s: float | None, with_summary: bool) -> bool:
         child = context.Process(target=_night_of, args=(str(stage.job.ledger.parent / "job.toml"), with_summary))
         child.start()
-        time.sleep(after_s)
-        alive = child.is_alive()
+        if after_s is not None:
+            time.sleep(after_s)
+        alive = after_s is not None and child.is_alive()
         if alive and child.pid is not None:
             os.kill(child.pid, signal.SIGKILL)
         child.join()
