@@ -69,7 +69,12 @@ def without_summaries() -> Iterator[list[int]]:
         seen.append(generation.number)
         return Publication(job.out, "", None, {}, generation.alarms)
 
-    with patch.multiple(night, publish=publish, is_published=lambda _, generation: generation.number in seen):
+    stubs = {
+        "publish": publish,
+        "answers_of": lambda _, tally: tally,
+        "is_published": lambda _, generation: generation.number in seen,
+    }
+    with patch.multiple(night, **stubs):
         yield seen
 
 

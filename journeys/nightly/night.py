@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import datetime as dt
 import time
+from concurrent.futures import Executor, Future, ThreadPoolExecutor
 from dataclasses import dataclass, field, replace
 from typing import Any
 
@@ -19,11 +20,10 @@ from journeys.nightly.job import Job
 from journeys.nightly.ledger import Draft, Ledger, opened, without_old
 from journeys.nightly.lock import held
 from journeys.nightly.manifest import Counted, Generation, Manifest, Watched
-from journeys.nightly.publish import Publication, is_published, publish
+from journeys.nightly.publish import Answers, Publication, answers_of, is_published, publish
 from journeys.nightly.times import Reach, reach_of
 from journeys.tally.resumed import ResumedPass
 from journeys.tally.spill import Spill
-from journeys.tally.tally import Tally
 from journeys.tally.weeks import Watch
 
 
@@ -140,15 +140,17 @@ def _counted(job: Job, ledger: Ledger, inputs: Inputs, new: list[Input], key: st
     log = inputs.open(new, job.rules)
     reach = reach_of(log, job.rules, ledger.manifest, job.lateness_us, now_us)
     draft = Draft(ledger)
-    try:
-        ledger, night, tally = _drafted(job, ledger, draft, (log, inputs, new), reach, key, now_us)
-    except BaseException:
-        draft.drop()
-        raise
-    ledger.clean()
-    if tally is None or ledger.manifest is None or ledger.manifest.newest is None:
-        return night
-    return replace(night, publication=publish(job, ledger.manifest.newest, tally))
+    # The answers are worked out while the ledger is written; they are published when it stands.
+    with ThreadPoolExecutor(1) as beside:
+        try:
+            ledger, night, answers = _drafted(job, ledger, draft, (log, inputs, new), reach, key, now_us, beside)
+        except BaseException:
+            draft.drop()
+            raise
+        ledger.clean()
+        if answers is None or ledger.manifest is None or ledger.manifest.newest is None:
+            return night
+        return replace(night, publication=publish(job, ledger.manifest.newest, answers.result()))
 
 
 def _drafted(
@@ -159,8 +161,9 @@ def _drafted(
     reach: Reach,
     key: str | None,
     now_us: int,
-) -> tuple[Ledger, Night, Tally | None]:
-    """Write the next generation and make it the present one."""
+    beside: Executor,
+) -> tuple[Ledger, Night, Future[Answers] | None]:
+    """Write the next generation and make it the present one; its answers are worked out beside."""
     log, inputs, new = source
     watched, watch = _watch(job, ledger, reach)
     pass_ = ResumedPass(log, job.rules, reach.span, ledger.learned, compiled=is_built(), watch=watch)
@@ -186,7 +189,9 @@ def _drafted(
         parts=parts, held=None if waiting is None else draft.held(waiting),
     )  # fmt: skip
     alarms: list[dict[str, Any]] = []
+    answers = None
     if tally is not None:
+        answers = beside.submit(answers_of, job, tally)
         if job.alarms is not None and watched is not None and watch is not None:
             watched, alarms = look(pass_, watch, watched, job.alarms, job.rules, reach.span)
         generation = Generation(
@@ -199,7 +204,7 @@ def _drafted(
         number, tuple(one.name for one in new), pass_.n_new_rows, pass_.n_too_late,
         0 if waiting is None else len(waiting), _as_of(reach), alarms=alarms,
     )  # fmt: skip
-    return draft.commit(after), night, tally
+    return draft.commit(after), night, answers
 
 
 def _watch(job: Job, ledger: Ledger, reach: Reach) -> tuple[Watched | None, Watch | None]:
@@ -222,7 +227,7 @@ def _again(job: Job, ledger: Ledger) -> Night:
     night = Night(manifest.number)
     if manifest.newest is None or is_published(job.out, manifest.newest):
         return night
-    publication = publish(job, manifest.newest, ledger.tally(manifest.newest))
+    publication = publish(job, manifest.newest, answers_of(job, ledger.tally(manifest.newest)))
     return replace(
         night, publication=publication, as_of=instant_text(manifest.newest.as_of_us), alarms=manifest.newest.alarms
     )

@@ -56,6 +56,15 @@ class Publication:
     alarms: list[dict[str, Any]]
 
 
+@dataclass(frozen=True, eq=False)
+class Answers:
+    """What counts say: a summary, or why there are counts only."""
+
+    tally: Tally
+    overview: Overview | None
+    counts_only: str | None
+
+
 def is_published(out: Path, generation: Generation) -> bool:
     """Tell whether a generation is what a folder of publications has as its latest."""
     try:
@@ -65,17 +74,25 @@ def is_published(out: Path, generation: Generation) -> bool:
         return False
 
 
-def publish(job: Job, generation: Generation, tally: Tally) -> Publication:
+def answers_of(job: Job, tally: Tally) -> Answers:
+    """Return the summary of counts, with the horizons of a job, or why they cannot carry one yet."""
+    try:
+        return Answers(tally, summarise(JourneyModel().fit(tally), job.horizons or None), None)
+    except LogError as fault:
+        return Answers(tally, None, str(fault))
+
+
+def publish(job: Job, generation: Generation, answers: Answers) -> Publication:
     """Write what a generation says.
 
     Parameters
     ----------
     job : Job
-        Where to, and with which horizons.
+        Where to.
     generation : Generation
         What it is stamped with.
-    tally : Tally
-        Its counts.
+    answers : Answers
+        What its counts say.
 
     Returns
     -------
@@ -86,8 +103,8 @@ def publish(job: Job, generation: Generation, tally: Tally) -> Publication:
     OSError
         If the folder cannot be written in.
     """
+    tally, overview, why = answers.tally, answers.overview, answers.counts_only
     plain = plain_count(tally)
-    overview, why = _overview(job, tally)
     text = _counts_text(tally, plain, why or "") if overview is None else summary_text(overview)
     job.out.mkdir(parents=True, exist_ok=True)
     name = f"{instant_text(generation.as_of_us)[:_DAY]}-{generation.number:06d}"
@@ -108,14 +125,6 @@ def publish(job: Job, generation: Generation, tally: Tally) -> Publication:
     _point(job.out, name)
     _clear(job.out)
     return Publication(job.out / name, text, why, rows[0], generation.alarms)
-
-
-def _overview(job: Job, tally: Tally) -> tuple[Overview | None, str | None]:
-    """Return the summary, or why the log cannot carry one yet."""
-    try:
-        return summarise(JourneyModel().fit(tally), job.horizons or None), None
-    except LogError as fault:
-        return None, str(fault)
 
 
 def _stamp(generation: Generation) -> dict[str, Any]:

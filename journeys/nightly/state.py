@@ -20,7 +20,7 @@ from journeys.tally.passes import Kept
 
 Table = dict[str, NDArray[Any]]
 
-_NAME, _FLAGS = b"table", b"flags"
+_NAME, _KINDS = b"table", b"kinds"
 _CARRIED, _ROWS = "carried", "rows"
 _SUM, _MORE = "sum ", "more "
 
@@ -52,7 +52,8 @@ def kept_from(data: bytes) -> Kept:
         msg = f"the ledger's records have columns that this program does not know: {sorted(set(columns) - known)}"
         raise StoreError(msg)
     keyed = {name: Keyed(table["key"], _those(table, _SUM), _those(table, _MORE)) for name, table in tables.items()}
-    return Kept(Carried(**{name: values.copy() for name, values in columns.items()}), keyed)
+    own = {name: values if values.flags.writeable else values.copy() for name, values in columns.items()}
+    return Kept(Carried(**own), keyed)
 
 
 def rows_bytes(rows: Rows) -> pa.Buffer:
@@ -70,39 +71,43 @@ def _those(table: Table, prefix: str) -> Table:
 
 
 def _packed(tables: Mapping[str, Table]) -> pa.Buffer:
+    """Return tables as bytes, each column in the fewest bytes that hold it."""
     sink = pa.BufferOutputStream()
     for name, table in tables.items():
-        # Flags as whole bytes: no copying of bits on the way in or out.
-        flags = [key for key, values in table.items() if values.dtype == np.bool_]
-        plain = {key: values.view(np.uint8) if values.dtype == np.bool_ else values for key, values in table.items()}
-        arrays = [from_numpy(values, pa.from_numpy_dtype(values.dtype)) for values in plain.values()]
-        batch = pa.record_batch(arrays, names=list(plain)).replace_schema_metadata(
-            {_NAME: name, _FLAGS: json.dumps(flags)}
-        )
+        kinds = {column: values.dtype.str for column, values in table.items()}
+        narrow = {column: _narrow(values) for column, values in table.items()}
+        arrays = [from_numpy(values, pa.from_numpy_dtype(values.dtype)) for values in narrow.values()]
+        about = {_NAME: name, _KINDS: json.dumps(kinds)}
+        batch = pa.record_batch(arrays, names=list(narrow)).replace_schema_metadata(about)
         with pa.ipc.new_stream(sink, batch.schema) as writer:
             writer.write_batch(batch)
     return sink.getvalue()
 
 
+def _narrow(values: NDArray[Any]) -> NDArray[Any]:
+    """Return whole numbers in the fewest bytes that hold them; flags as whole bytes, so that no bits are copied."""
+    if values.dtype == np.bool_:
+        return values.view(np.uint8)
+    least, most = (0, 0) if not len(values) else (int(values.min()), int(values.max()))
+    kinds = (np.uint8, np.uint16, np.uint32) if least >= 0 else (np.int8, np.int16, np.int32)
+    for kind in kinds:
+        if np.iinfo(kind).min <= least and most <= np.iinfo(kind).max:
+            return values.astype(kind, copy=False)
+    return values
+
+
 def _unpacked(data: bytes) -> dict[str, Table]:
-    """Return the tables; their columns lie in `data` itself and cannot be changed."""
+    """Return the tables; columns may lie in `data` itself, and then cannot be changed."""
     source, tables = pa.BufferReader(data), {}
     while source.tell() < len(data):
         with pa.ipc.open_stream(source) as reader:
-            name, flags = reader.schema.metadata[_NAME].decode(), json.loads(reader.schema.metadata[_FLAGS])
+            name, kinds = reader.schema.metadata[_NAME].decode(), json.loads(reader.schema.metadata[_KINDS])
             batch = reader.read_next_batch()
             tables[name] = {
-                column: values.view(np.bool_) if column in flags else values
-                for column, values in zip(batch.schema.names, (_numbers(one) for one in batch.columns), strict=True)
+                column: array.to_numpy(zero_copy_only=True).astype(np.dtype(kinds[column]), copy=False)
+                for column, array in zip(batch.schema.names, batch.columns, strict=True)
             }
-            _to_the_end(reader)
+            # The end of one stream is where the next begins.
+            for _ in reader:
+                pass
     return tables
-
-
-def _numbers(array: pa.Array) -> NDArray[Any]:
-    return array.to_numpy(zero_copy_only=True)  # type: ignore[no-any-return]
-
-
-def _to_the_end(reader: Any) -> None:
-    for _ in reader:
-        pass

@@ -37,5 +37,6 @@ def published(monkeypatch: pytest.MonkeyPatch) -> list[tuple[Generation, Tally]]
         return any(one.number == generation.number for one, _ in seen)
 
     monkeypatch.setattr(night, "publish", publish)
+    monkeypatch.setattr(night, "answers_of", lambda _, tally: tally)
     monkeypatch.setattr(night, "is_published", is_published)
     return seen
