@@ -5,15 +5,16 @@ from __future__ import annotations
 import json
 import os
 import re
+from collections.abc import Mapping, Sequence
 from hashlib import blake2b
 
 from journeys.errors import LogError, RulesError, StoreError
 from journeys.intake.rules import JourneyRules
 from journeys.nightly import disk
-from journeys.nightly.inputs import FolderInputs
+from journeys.nightly.inputs import FolderInputs, InputError
 from journeys.nightly.job import NONE, Job
 from journeys.nightly.ledger import Ledger
-from journeys.nightly.manifest import Manifest, read_manifest
+from journeys.nightly.manifest import Counted, Manifest, read_manifest
 
 ID_KEY = "JOURNEYS_ID_KEY"
 # Rules that say nothing of how rows are counted.
@@ -84,6 +85,26 @@ def refuse_changes(job: Job, manifest: Manifest, key: str | None) -> None:
             "with --rebuild"
         )
         raise RulesError(msg)
+
+
+def refuse_twice(new: Sequence[Counted], counted: Mapping[str, Counted]) -> None:
+    """Raise if an input is the same as another, under another name: its rows would count twice.
+
+    Raises
+    ------
+    InputError
+        Naming both.
+    """
+    seen = {one.checksum: one.name for one in counted.values()}
+    for one in new:
+        # Days without rows look alike.
+        if one.n_rows and one.checksum in seen:
+            msg = (
+                f"{one.name} is byte for byte {seen[one.checksum]}, which was counted: its rows would count twice; "
+                "take it away"
+            )
+            raise InputError(msg)
+        seen[one.checksum] = one.name
 
 
 def begun_anew(job: Job) -> Ledger:

@@ -11,15 +11,16 @@ from typing import Any
 from journeys.checks import instant_text
 from journeys.errors import LimitError
 from journeys.intake.findings import Findings
+from journeys.intake.rows import Rows
 from journeys.kernels.compiled import is_built
 from journeys.nightly import disk
 from journeys.nightly.alarms import begun, look, watch_of
-from journeys.nightly.fresh import begun_anew, fingerprint, refuse_changes, rules_checksum
+from journeys.nightly.fresh import begun_anew, fingerprint, refuse_changes, refuse_twice, rules_checksum
 from journeys.nightly.inputs import FolderInputs, Input, InputLog, Inputs
 from journeys.nightly.job import Job
 from journeys.nightly.ledger import Draft, Ledger, opened, without_old
 from journeys.nightly.lock import held
-from journeys.nightly.manifest import Counted, Generation, Manifest, Watched
+from journeys.nightly.manifest import Counted, Generation, Manifest, Stored, Watched
 from journeys.nightly.publish import Answers, Publication, answers_of, is_published, publish
 from journeys.nightly.times import Reach, reach_of
 from journeys.tally.resumed import ResumedPass
@@ -89,16 +90,35 @@ def run_night(job: Job, *, rebuild: bool = False, dry_run: bool = False, now_us:
     """
     now = time.time_ns() // 1_000 if now_us is None else now_us
     key = fingerprint(job)
-    if dry_run:
-        return _tried(job, opened(job.ledger), key, rebuild, now)
+    if dry_run and not job.ledger.is_dir():
+        return _tried(job, Ledger(job.ledger, None), key, now)
     disk.make_folder(job.ledger)
     with held(job.ledger):
         ledger = begun_anew(job) if rebuild else opened(job.ledger)
+        if dry_run:
+            return _tried(job, ledger, key, now)
         inputs = FolderInputs(job.log)
         new = _new_inputs(job, ledger, inputs, key)
+        before = _made_good(job, ledger, check=not new)
         if not new:
-            return _again(job, ledger)
-        return _counted(job, ledger, inputs, new, key, now)
+            return before
+        night = _counted(job, ledger, Source(inputs, new), key, now)
+        return replace(night, alarms=[*before.alarms, *night.alarms])
+
+
+@dataclass(frozen=True)
+class Source:
+    """The new inputs of a night."""
+
+    inputs: Inputs
+    new: list[Input]
+
+    def counted(self, log: InputLog, number: int) -> list[Counted]:
+        """Return what a ledger notes of them, once the log that they make up was read."""
+        return [
+            Counted(one.name, one.size, one.changed_ns, one.checksum, log.rows_of[one.name], number)
+            for one in self.new
+        ]
 
 
 def _new_inputs(job: Job, ledger: Ledger, inputs: Inputs, key: str | None) -> list[Input]:
@@ -108,9 +128,8 @@ def _new_inputs(job: Job, ledger: Ledger, inputs: Inputs, key: str | None) -> li
     return inputs.new(ledger.counted)
 
 
-def _tried(job: Job, ledger: Ledger, key: str | None, rebuild: bool, now_us: int) -> Night:
+def _tried(job: Job, ledger: Ledger, key: str | None, now_us: int) -> Night:
     """Say what a run would count."""
-    ledger = Ledger(job.ledger, None) if rebuild else ledger
     inputs = FolderInputs(job.log)
     new = _new_inputs(job, ledger, inputs, key)
     number = 0 if ledger.manifest is None else ledger.manifest.number
@@ -120,30 +139,39 @@ def _tried(job: Job, ledger: Ledger, key: str | None, rebuild: bool, now_us: int
     reach = reach_of(log, job.rules, ledger.manifest, job.lateness_us, now_us)
     pass_ = ResumedPass(log, job.rules, reach.span, ledger.learned, compiled=False)
     with Spill() as spill:
-        waiting = _dealt(pass_, spill, ledger, reach, now_us)
-    _check_limits(job, pass_)
-    return Night(
-        number, tuple(one.name for one in new), pass_.n_new_rows, pass_.n_too_late, waiting, _as_of(reach), dry_run=True
-    )
+        waiting, _ = _dealt(job, ledger, Source(inputs, new), log, pass_, spill, reach, now_us)
+    return replace(_told(number, new, pass_, waiting, reach), dry_run=True)
 
 
-def _dealt(pass_: ResumedPass, spill: Spill, ledger: Ledger, reach: Reach, now_us: int) -> int:
-    """Deal out the rows of a night, and return how many wait."""
-    rows = pass_.deal(
+def _dealt(
+    job: Job, ledger: Ledger, source: Source, log: InputLog, pass_: ResumedPass, spill: Spill, reach: Reach, now_us: int
+) -> tuple[Rows | None, list[Counted]]:
+    """Deal out a night's rows, unless they break a limit; return those that wait, and what is noted of the inputs."""
+    waiting = pass_.deal(
         spill, ledger.held(), late_before_us=reach.late_before_us, until_us=reach.span.as_of_us, now_us=now_us
     )
-    return 0 if rows is None else len(rows)
+    counted = source.counted(log, ledger.next_number)
+    # Told before the limits: rows that come a second time are late, too.
+    refuse_twice(counted, ledger.counted)
+    _check_limits(job, pass_)
+    source.inputs.confirm(source.new)
+    return waiting, counted
 
 
-def _counted(job: Job, ledger: Ledger, inputs: Inputs, new: list[Input], key: str | None, now_us: int) -> Night:
+def _told(number: int, new: list[Input], pass_: ResumedPass, waiting: Rows | None, reach: Reach) -> Night:
+    n_waiting = 0 if waiting is None else len(waiting)
+    names = tuple(one.name for one in new)
+    return Night(number, names, pass_.n_new_rows, pass_.n_too_late, n_waiting, _as_of(reach))
+
+
+def _counted(job: Job, ledger: Ledger, source: Source, key: str | None, now_us: int) -> Night:
     """Count the new inputs into a new generation, and publish it."""
-    log = inputs.open(new, job.rules)
-    reach = reach_of(log, job.rules, ledger.manifest, job.lateness_us, now_us)
     draft = Draft(ledger)
     # The answers are worked out while the ledger is written; they are published when it stands.
     with ThreadPoolExecutor(1) as beside:
         try:
-            ledger, night, answers = _drafted(job, ledger, draft, (log, inputs, new), reach, key, now_us, beside)
+            after, night, answers = _drafted(job, ledger, draft, source, beside, now_us)
+            ledger = draft.commit(replace(after, id_key=key))
         except BaseException:
             draft.drop()
             raise
@@ -154,57 +182,53 @@ def _counted(job: Job, ledger: Ledger, inputs: Inputs, new: list[Input], key: st
 
 
 def _drafted(
-    job: Job,
-    ledger: Ledger,
-    draft: Draft,
-    source: tuple[InputLog, Inputs, list[Input]],
-    reach: Reach,
-    key: str | None,
-    now_us: int,
-    beside: Executor,
-) -> tuple[Ledger, Night, Future[Answers] | None]:
-    """Write the next generation and make it the present one; its answers are worked out beside."""
-    log, inputs, new = source
+    job: Job, ledger: Ledger, draft: Draft, source: Source, beside: Executor, now_us: int
+) -> tuple[Manifest, Night, Future[Answers] | None]:
+    """Write the next generation, all but its manifest; its answers are worked out beside."""
+    number, log = ledger.next_number, source.inputs.open(source.new, job.rules)
+    reach = reach_of(log, job.rules, ledger.manifest, job.lateness_us, now_us)
     watched, watch = _watch(job, ledger, reach)
     pass_ = ResumedPass(log, job.rules, reach.span, ledger.learned, compiled=is_built(), watch=watch)
-    parts = {} if ledger.manifest is None else dict(ledger.manifest.parts)
-    tally = None
+    parts, tally, answers = {} if ledger.manifest is None else dict(ledger.manifest.parts), None, None
     with Spill() as spill:
-        waiting = pass_.deal(
-            spill, ledger.held(), late_before_us=reach.late_before_us, until_us=reach.span.as_of_us, now_us=now_us
-        )
-        _check_limits(job, pass_)
-        inputs.confirm(new)
+        waiting, counted = _dealt(job, ledger, source, log, pass_, spill, reach, now_us)
         if _as_of(reach) is not None:
             tally = pass_.count(
-                spill, ledger.part, lambda number, kept: parts.__setitem__(str(number), draft.part(number, kept))
+                spill, ledger.part, lambda part, kept: parts.__setitem__(str(part), draft.part(part, kept))
             )
-    number = ledger.next_number
+            answers = beside.submit(answers_of, job, tally)
     before = ledger.manifest or Manifest(number, {}, 0, None, rebuilt=number, generations=ledger.old_generations)
-    learned = pass_.learned()
     after = replace(
-        before, number=number, rules=job.rules.to_dict(), lateness_us=job.lateness_us, id_key=key, learned=learned,
+        before, number=number, rules=job.rules.to_dict(), lateness_us=job.lateness_us, learned=pass_.learned(),
         log_start_us=reach.span.log_start_us, newest_us=reach.newest_us, counted_before_us=reach.counted_before_us,
-        inputs=[*before.inputs, *(_record(one, log, number) for one in new)],
-        parts=parts, held=None if waiting is None else draft.held(waiting),
+        inputs=[*before.inputs, *counted], parts=parts, held=None if waiting is None else draft.held(waiting),
     )  # fmt: skip
+    night = _told(number, source.new, pass_, waiting, reach)
+    if tally is None:
+        return after, night, None
     alarms: list[dict[str, Any]] = []
-    answers = None
-    if tally is not None:
-        answers = beside.submit(answers_of, job, tally)
-        if job.alarms is not None and watched is not None and watch is not None:
-            watched, alarms = look(pass_, watch, watched, job.alarms, job.rules, reach.span)
-        generation = Generation(
-            number, _utc(now_us), rules_checksum(job.rules), reach.span.as_of_us, pass_.n_rows,
-            Findings.from_dict(learned["rows"]["findings"]).n("too_late"), draft.tally(number, tally),
-            alarms, rebuilt=after.rebuilt,
-        )  # fmt: skip
-        after = without_old(replace(after, watched=watched), generation)
-    night = Night(
-        number, tuple(one.name for one in new), pass_.n_new_rows, pass_.n_too_late,
-        0 if waiting is None else len(waiting), _as_of(reach), alarms=alarms,
+    if job.alarms is not None and watched is not None and watch is not None:
+        watched, alarms = look(pass_, watch, watched, job.alarms, job.rules, reach.span)
+    newest = _generation(job, after, pass_, reach, draft.tally(number, tally), alarms, now_us)
+    return without_old(replace(after, watched=watched), newest), replace(night, alarms=alarms), answers
+
+
+def _generation(
+    job: Job,
+    after: Manifest,
+    pass_: ResumedPass,
+    reach: Reach,
+    stored: Stored,
+    alarms: list[dict[str, Any]],
+    now_us: int,
+) -> Generation:
+    learned = pass_.learned()
+    n_too_late = Findings.from_dict(learned["rows"]["findings"]).n("too_late")
+    run = dt.datetime.fromtimestamp(now_us / 1e6, dt.UTC).isoformat(timespec="seconds")
+    return Generation(
+        after.number, run, rules_checksum(job.rules), reach.span.as_of_us, pass_.n_rows, n_too_late, stored, alarms,
+        after.rebuilt,
     )  # fmt: skip
-    return draft.commit(after), night, answers
 
 
 def _watch(job: Job, ledger: Ledger, reach: Reach) -> tuple[Watched | None, Watch | None]:
@@ -217,24 +241,20 @@ def _watch(job: Job, ledger: Ledger, reach: Reach) -> tuple[Watched | None, Watc
     return watched, watch_of(watched, job.alarms, job.rules, reach.span)
 
 
-def _again(job: Job, ledger: Ledger) -> Night:
-    """Publish the newest generation if a run was cut off before it could; else do nothing."""
-    ledger.check()
-    ledger.clean()
+def _made_good(job: Job, ledger: Ledger, *, check: bool) -> Night:
+    """Publish the newest generation if a run was cut off before it could; `check` looks at all files of the ledger."""
+    if check:
+        ledger.check()
+        ledger.clean()
     manifest = ledger.manifest
     if manifest is None:
         return Night(0)
-    night = Night(manifest.number)
-    if manifest.newest is None or is_published(job.out, manifest.newest):
-        return night
-    publication = publish(job, manifest.newest, answers_of(job, ledger.tally(manifest.newest)))
-    return replace(
-        night, publication=publication, as_of=instant_text(manifest.newest.as_of_us), alarms=manifest.newest.alarms
-    )
-
-
-def _record(one: Input, log: InputLog, number: int) -> Counted:
-    return Counted(one.name, one.size, one.changed_ns, one.checksum, log.rows_of[one.name], number)
+    newest = manifest.newest
+    if newest is None or is_published(job.out, newest):
+        return Night(manifest.number)
+    publication = publish(job, newest, answers_of(job, ledger.tally(newest)))
+    as_of = instant_text(newest.as_of_us)
+    return Night(manifest.number, publication=publication, as_of=as_of, alarms=newest.alarms)
 
 
 def _check_limits(job: Job, pass_: ResumedPass) -> None:
@@ -257,8 +277,4 @@ def _check_limits(job: Job, pass_: ResumedPass) -> None:
 def _as_of(reach: Reach) -> str | None:
     span = reach.span
     return None if span.as_of_us < span.log_start_us else instant_text(span.as_of_us)
-
-
-def _utc(us: int) -> str:
-    return dt.datetime.fromtimestamp(us / 1e6, dt.UTC).isoformat(timespec="seconds")
 

@@ -116,6 +116,19 @@ def test_inputs_may_go_when_they_are_counted_but_not_be_counted_anew(root: Path,
         run_night(job, rebuild=True)
 
 
+def test_the_same_input_under_another_name_is_refused(root: Path, published: list[object]):
+    job = make_job(root)
+    nights = invented(4, 2, 20)
+    write_night(job, 0, nights[0])
+    write_night(job, 1, nights[0].iloc[:0])
+    run_night(job)
+    again, empty = write_night(job, 2, nights[0]), write_night(job, 3, nights[0].iloc[:0])
+    with pytest.raises(InputError, match=r"day=002/rows.parquet is byte for byte day=000/rows.parquet, which was"):
+        run_night(job)
+    again.unlink()
+    assert run_night(job).new_inputs == (empty.relative_to(job.log).as_posix(),)
+
+
 @pytest.mark.parametrize("kind", ["parquet", "csv"])
 def test_inputs_cut_short_are_told(root: Path, published: list[object], kind: str):
     job = make_job(root)

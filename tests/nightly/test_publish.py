@@ -111,6 +111,16 @@ def test_what_was_not_published_is_published_by_the_next_run(job: Job):
     assert run_night(job).publication is None
 
 
+def test_a_night_first_publishes_what_the_one_before_could_not(job: Job):
+    (job.out / "latest" / "run.json").unlink()
+    history = read_history(job.out / "history.parquet")
+    history[history.generation < 4].to_parquet(job.out / "history.parquet", index=False)
+    rows = two_districts(invented(23, 37, 60, n_people=300)[36])
+    write_night(job, 41, rows)
+    assert run_night(job).generation == 5
+    assert read_history(job.out / "history.parquet").groupby("generation").size().tolist() == [1, 3, 3, 3, 3]
+
+
 def test_then_and_now(kept: Job, root: Path, capsys: pytest.CaptureFixture[str]):
     manifest = opened(kept.ledger).manifest
     assert manifest is not None
