@@ -23,6 +23,7 @@ MESSAGES = {
     "out_of_range_time": "left out: the time lies outside the years 1 to 9999; check the unit of the times",
     "before_log_start": "left out: earlier than log_start; set log_start earlier to count them",
     "after_as_of": "left out: later than as_of; set as_of later to count them",
+    "too_late": "left out: older than what the ledger had counted by then; a longer `lateness` waits for such rows",
     "unmapped_event": "left out: `states` and `unmapped` drop this event; name it in `states` to count it",
     "duplicate": 'equal to an earlier row in every column read; duplicates="drop" counts each once',
     "ended_before": "left out: the customer had ended before the log begins, says the ended_before column",

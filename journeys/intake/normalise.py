@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
+from typing import Any
+
 import numpy as np
 import pyarrow as pa
 from numpy.typing import NDArray
@@ -146,6 +149,40 @@ class Normaliser:
         self.n_kept += len(rows)
         self._all_midnight = self._all_midnight and not (rows.time % DAY_US).any()
         return rows
+
+    def learned(self) -> dict[str, Any]:
+        """Return what later batches are to be read with, as plain values that JSON can hold.
+
+        Returns
+        -------
+        dict
+        """
+        return {
+            "n_rows": self.n_rows, "n_kept": self.n_kept, "all_midnight": self._all_midnight,
+            "customer_kind": self._customer_kind, "whole_days": self._times.whole_days,
+            "events": list(self.codes.names), "groups": self.groups.to_dict(), "findings": self._found.to_dict(),
+        }  # fmt: skip
+
+    def resume(self, learned: Mapping[str, Any]) -> None:
+        """Go on where another reading of the same log left off.
+
+        Parameters
+        ----------
+        learned : mapping
+            What `learned` gave there.
+
+        Raises
+        ------
+        LogError
+            If the rules now give an event a reserved name.
+        """
+        self.n_rows, self.n_kept = learned["n_rows"], learned["n_kept"]
+        self._all_midnight, self._customer_kind = learned["all_midnight"], learned["customer_kind"]
+        self._times.whole_days = learned["whole_days"]
+        self.codes = EventCodes(list(learned["events"]))
+        self.targets = [self._target(name) for name in self.codes.names]
+        self.groups.resume(learned["groups"])
+        self._found = Findings.from_dict(learned["findings"])
 
     def _drop_times(self, kept: _Kept, times: Times) -> None:
         """Leave out what lies outside the calendar or outside the log's two dates."""

@@ -125,6 +125,10 @@ class MoveSums:
         self._n, self._rest = np.zeros(0, np.uint32), np.zeros(0, np.int64)
         return self._sparse.result()
 
+    def resume(self, table: Keyed) -> None:
+        """Begin with what `result` once gave."""
+        self._sparse.resume(table)
+
     def _grow(self, n_states: int) -> None:
         """Make room for more states."""
         self._empty_cells()

@@ -19,6 +19,7 @@ from journeys.command import main as command
 from journeys.intake.findings import MESSAGES
 from journeys.intake.rule_checks import LIMITS
 from journeys.models import model, what_if
+from journeys.nightly import job
 from journeys.questions import (
     bootstrap,
     comeback,
@@ -166,7 +167,7 @@ def _ignored(path: str) -> bool:
 
 def test_names_every_exit_code():
     stated = set(table_after("## The commands"))
-    known = {command.DONE, command.FAILED, command.USAGE, command.LIMITS}
+    known = {command.DONE, command.FAILED, command.USAGE, command.LIMITS, command.ALARM}
     assert stated == {str(code) for code in known}
     in_docstrings = {
         code
@@ -182,6 +183,43 @@ def test_names_every_key_of_the_rules():
     assert coded(table_after("## The rules file")) == {field.name for field in fields(jn.JourneyRules)}
     for limit in LIMITS.items():
         assert "{} = {}".format(*limit) in README
+
+
+def test_names_every_key_of_a_job():
+    assert coded(table_after("### The job file")) == {*job.KEYS, *job.ALARM_KEYS}
+    rows = re.findall(r"^\| `(\w+)` \| ([^|`]*) \|", README.split("### The job file")[1], re.MULTILINE)
+    stated = {key: default.strip() for key, default in rows if default.strip()}
+    defaults = {key: str(value) for key, value in {**job.DEFAULTS, **job.ALARM_DEFAULTS}.items()}
+    assert stated == defaults | {"horizons": "as the summary", "alarms": "none", "identity": "none"}
+
+
+def test_the_job_of_the_readme_runs(tmp_path: Path):
+    """The worked example: its job file, its two ways of being called, on the demo's log dealt out by day."""
+    import pandas as pd
+
+    (tmp_path / "job.toml").write_text(next(one for one in blocks(README, "toml") if "lateness" in one), encoding="utf-8")
+    rules = (REPO / "demo_data" / "rules.toml").read_text(encoding="utf-8")
+    rules = rules.replace('by = ["district"]', "").replace('cohort = "month"', "")
+    (tmp_path / "rules.toml").write_text(rules, encoding="utf-8")
+    log = pd.read_parquet(REPO / "demo_data" / "club_log.parquet")
+    log = log[log.happened < "2024-10-20"]
+    for number, (day, rows) in enumerate(log.groupby(log.happened.dt.strftime("%Y-%m-%d"))):
+        folder = tmp_path / "events" / f"day={day}"
+        folder.mkdir(parents=True)
+        rows.to_parquet(folder / f"rows-{number}.parquet", index=False)
+    lines = [line for block in blocks(README, "text") for line in block.splitlines() if " nightly " in line]
+    assert len(lines) == 2
+    for line, said in zip(lines, ("expected in the end", '"new_inputs": []'), strict=True):
+        words = re.search(r"journeys (nightly job\.toml[^>]*)", line)
+        assert words is not None
+        environment = os.environ | {"PYTHONPATH": str(REPO), "JOURNEYS_ID_KEY": "a long secret of the bicycle club"}
+        done = subprocess.run(
+            [sys.executable, "-m", "journeys", *shlex.split(words[1])],
+            cwd=tmp_path, env=environment, capture_output=True, text=True,
+        )  # fmt: skip
+        assert done.returncode in (command.DONE, command.ALARM), done.stderr
+        assert said in done.stdout
+    assert {path.name for path in (tmp_path / "published").iterdir()} >= {"latest", "history.parquet", "runs.jsonl"}
 
 
 def test_states_the_defaults_of_the_rules():
@@ -223,7 +261,7 @@ def test_names_every_flag():
 def test_names_every_option():
     helped = "".join(
         run([sys.executable, "-m", "journeys", name, "--help"], REPO).stdout
-        for name in ("summary", "audit", "tally")
+        for name in ("summary", "audit", "tally", "nightly", "forget")
     )
     options = set(re.findall(r"--[a-z][a-z-]+", helped)) - {"--help"}
     assert options == set(re.findall(r"(?<=[`\s])--[a-z][a-z-]+", README))
