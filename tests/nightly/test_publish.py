@@ -22,6 +22,7 @@ from journeys.nightly.job import Job
 from journeys.nightly.ledger import opened
 from journeys.nightly.night import run_night
 from journeys.nightly.then_and_now import then_and_now
+from journeys.tally.tally import Tally
 
 
 def two_districts(rows: pd.DataFrame) -> pd.DataFrame:
@@ -237,3 +238,8 @@ def test_forgets_nobody_without_a_ledger_or_with_another_key(
     monkeypatch.setenv("JOURNEYS_ID_KEY", "another secret of the bicycle club, also kept")
     with pytest.raises(RulesError, match="went through another key, or none"):
         forget(root / "ids.txt", kept.ledger)
+
+
+def test_a_ledger_does_where_a_log_is_asked_for(kept: Job, root: Path, capsys: pytest.CaptureFixture[str]):
+    assert main(["tally", str(kept.ledger), "--out", str(root / "tally.parquet")]) == DONE
+    assert Tally.load(root / "tally.parquet") == newest_tally(kept)
