@@ -27,6 +27,7 @@ class SlowTally:
     """The tables of counts and exact sums, keyed by plain tuples; where journeys are grouped, the group comes last."""
 
     moves: dict[tuple[Any, ...], tuple[int, ...]] = field(default_factory=dict)
+    contexts: dict[tuple[Any, ...], tuple[int, ...]] = field(default_factory=dict)
     entries: dict[tuple[Any, ...], int] = field(default_factory=dict)
     journeys: dict[tuple[Any, ...], tuple[int, ...]] = field(default_factory=dict)
     gaps: dict[tuple[Any, ...], tuple[int, ...]] = field(default_factory=dict)
@@ -67,6 +68,7 @@ class Journey:
     stage_start: int = 0
     touched: list[str] = field(default_factory=list)
     value: int = 0
+    passed: list[str] = field(default_factory=list)
 
 
 def read_log(
@@ -97,8 +99,12 @@ def read_log(
     dwell_bin: Callable[[int], int],
     elapsed_bin: Callable[[int], int],
     busy_after: int = 1000,
+    memory: int = 1,
 ) -> SlowTally:
-    """Return the tally of a log; with ``whole_days`` a bin is the number of days."""
+    """Return the tally of a log; with ``whole_days`` a bin is the number of days.
+
+    With a ``memory`` above 1 the moves are told apart by the ``memory - 1`` states before the one they leave.
+    """
     rules = Rules(**locals())
     rules.outcomes = {*converted, *churned}
     rules.exclude = exclude or {}
@@ -341,6 +347,7 @@ class CustomerReader:
         key = self.grouped(key, row.time)
         self.tally.entries[key] = self.tally.entries.get(key, 0) + 1
         self.journey = Journey(row.name, row.time, sure, 0, row.name, row.time, group, 0, row.time)
+        self.journey.passed = ["entry" if sure else "unknown"] * self.rules.memory
         self.touch(row)
         if self.is_outcome(row):
             found(self.tally, "outcome_without_states")
@@ -415,6 +422,7 @@ class CustomerReader:
             self.end_journey(row.name, row.time)
         else:
             self.journey.visits += 1
+            self.journey.passed.append(self.journey.visit_state)
             self.journey.visit_state = row.name
             self.journey.visit_start = row.time
             self.look_at_stage(row)
@@ -461,8 +469,17 @@ class CustomerReader:
         since, at, to = self.seen(self.journey.visit_start, at, to)
         dwell = at - since
         busy = n_rows_before >= self.rules.busy_after
-        key = (self.bucket, self.journey.visit_state, to, self.rules.dwell_bin(dwell), busy)
+        passed = tuple(self.journey.passed[: -self.rules.memory - 1 : -1])
+        key = (self.bucket, self.journey.visit_state, to, self.rules.dwell_bin(dwell), busy, *passed[:-1])
         self.add(self.tally.moves, key, since, 1, dwell)
+        if to != "open":
+            key = (self.bucket, self.journey.visit_state, to, self.is_mature(since), *passed)
+            self.add(self.tally.contexts, key, since, 1)
+
+    def is_mature(self, since: int) -> bool:
+        """Say whether the day that holds a moment was over one silence before the end of the log, or of the period."""
+        ends = [*self.rules.splits_us, self.rules.as_of_us]
+        return since // DAY_US < (ends[self.period(since)] - (self.rules.silence_us or 0)) // DAY_US
 
     def end_journey(self, outcome: str, at: int) -> None:
         """Count the journey with its steps and elapsed time; an open one is counted as far as it got."""

@@ -132,13 +132,15 @@ def _summary(options: argparse.Namespace) -> None:
 
 def _audit(options: argparse.Namespace) -> None:
     from journeys.questions.audit import audit
+    from journeys.tally.store import is_tally
 
-    seen = audit(_counted(options))
+    seen = audit(_counted(options)) if is_tally(options.log) else audit(options.log, _rules(options))
     if options.json:
         _print_json(
             {
                 "carries_model": seen.carries_model,
                 "checks": _records(seen.checks),
+                "silences": _records(seen.silences),
                 "findings": _records(seen.findings),
             }
         )

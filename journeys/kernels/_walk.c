@@ -12,6 +12,10 @@
 #define OUT_OF_ORDER 1
 #define DAY_US INT64_C(86400000000)
 #define SUB_OCTAVE_SHIFT 46
+/* A history: what the state before was in the lowest slot. */
+#define SLOT_BITS 16
+#define SLOT INT64_C(0xFFFF)
+#define NOTHING_KNOWN INT64_C(0x0001000100010001)
 
 #ifdef _WIN32
 #define EXPORT __declspec(dllexport)
@@ -31,16 +35,18 @@ typedef struct {
     const uint64_t *c_key;
     int64_t *c_time, *c_start, *c_visit;
     int32_t *c_code, *c_first, *c_steps, *c_events, *c_decided, *c_converted;
+    int64_t *c_before;
     uint8_t *c_sure;
     /* records of new customers */
     uint64_t *f_key;
     int64_t *f_time, *f_start, *f_visit;
     int32_t *f_code, *f_first, *f_steps, *f_events, *f_decided, *f_converted;
+    int64_t *f_before;
     uint8_t *f_sure;
     /* moves that are not added to the cells, ended journeys, journeys begun, marked rows */
     uint8_t *m_bucket;
     int32_t *m_state, *m_next;
-    int64_t *m_dwell;
+    int64_t *m_dwell, *m_before, *m_since;
     uint8_t *m_busy;
     uint8_t *e_bucket;
     int32_t *e_state, *e_outcome;
@@ -56,9 +62,10 @@ typedef struct {
     /* cells: n_bins is 0 where there are none */
     uint32_t *cell_n;
     int64_t *cell_rest;
+    uint32_t *contexts;
     const int64_t *lower, *upper;
     const int16_t *guess;
-    int64_t n_bins, first_bucket, n_states, whole_days;
+    int64_t n_bins, first_bucket, n_states, whole_days, mature_before, n_slots;
     /* the rules; silence is -1 where none is given */
     int64_t first_state, first_churned, silence, same_outcome, merge, log_start, complete, busy_after;
     /* how many of each were written, and what the cells gained */
@@ -95,15 +102,19 @@ static int64_t lower_bound(const uint64_t *sorted, int64_t n, uint64_t value)
     return low;
 }
 
-static void add_move(Walk *w, int64_t bucket, int64_t from, int64_t to, int64_t dwell, int busy)
+/* A move out of a state entered at `since`, with the history `before` (histories.py). */
+static void add_move(Walk *w, int64_t bucket, int64_t from, int64_t to, int64_t dwell, int64_t before, int64_t since,
+                     int busy)
 {
     if (w->n_bins && !busy) {
         int64_t bin = bin_of(w, dwell);
-        int64_t cell = (bucket - w->first_bucket) * w->n_states + from - w->first_state;
-        cell = (cell * (w->first_state + w->n_states) + to) * w->n_bins + bin;
+        int64_t width = w->first_state + w->n_states;
+        int64_t pair = ((bucket - w->first_bucket) * w->n_states + from - w->first_state) * width + to;
+        int64_t cell = pair * w->n_bins + bin;
         w->cell_n[cell]++;
         w->cell_rest[cell] += dwell - w->lower[bin];
         w->gained += (double)(dwell - w->lower[bin]);
+        w->contexts[(pair * width + (before & SLOT)) * 2 + (since < w->mature_before)]++;
         return;
     }
     int64_t i = w->n_moves++;
@@ -111,6 +122,8 @@ static void add_move(Walk *w, int64_t bucket, int64_t from, int64_t to, int64_t 
     w->m_state[i] = (int32_t)from;
     w->m_next[i] = (int32_t)to;
     w->m_dwell[i] = dwell;
+    w->m_before[i] = before;
+    w->m_since[i] = since;
     w->m_busy[i] = (uint8_t)busy;
 }
 
@@ -130,6 +143,7 @@ EXPORT int64_t journeys_walk(Walk *w)
 {
     const uint64_t *key = w->key;
     int64_t place, bucket, i = 0;
+    const int64_t slots = (INT64_C(1) << (SLOT_BITS * w->n_slots)) - 1;
     if (!w->n_rows)
         return IN_ORDER;
     place = lower_bound(w->c_key, w->n_carried, key[0]);
@@ -139,6 +153,7 @@ EXPORT int64_t journeys_walk(Walk *w)
     while (i < w->n_rows) {
         uint64_t who = key[i];
         int64_t last = 0, prev = 0, started = 0, visit = 0, first = 0, steps = 0, events = 0, decided = 0, won = 0;
+        int64_t before = 0;
         int sure = 0, held;
         while (bucket + 1 < w->n_buckets && who >= w->first_keys[bucket + 1])
             bucket++;
@@ -155,6 +170,7 @@ EXPORT int64_t journeys_walk(Walk *w)
             steps = w->c_steps[place];
             events = w->c_events[place];
             sure = w->c_sure[place];
+            before = w->c_before[place];
             visit = w->merge ? w->c_visit[place] : last;
         }
         for (; i < w->n_rows && key[i] == who; i++) {
@@ -170,8 +186,9 @@ EXPORT int64_t journeys_walk(Walk *w)
                         w->unsure_visits++;
                     else
                         add_move(w, bucket, prev, lapses ? LAPSED : what, (lapses ? last + w->silence : now) - visit,
-                                 events > w->busy_after);
+                                 before, visit, events > w->busy_after);
                     if (!lapses) {
+                        before = (before << SLOT_BITS | prev) & slots;
                         steps++;
                         visit = now;
                     }
@@ -198,6 +215,7 @@ EXPORT int64_t journeys_walk(Walk *w)
                 started = visit = now;
                 first = what;
                 steps = 1;
+                before = sure ? 0 : NOTHING_KNOWN & slots;
                 w->b_bucket[w->n_begun] = (uint8_t)bucket;
                 w->b_state[w->n_begun] = (int32_t)what;
                 w->b_sure[w->n_begun++] = (uint8_t)sure;
@@ -221,6 +239,7 @@ EXPORT int64_t journeys_walk(Walk *w)
             w->c_events[place] = (int32_t)events;
             w->c_decided[place] += (int32_t)decided;
             w->c_converted[place] += (int32_t)won;
+            w->c_before[place] = before;
             w->c_sure[place] = (uint8_t)sure;
             if (w->merge)
                 w->c_visit[place] = visit;
@@ -235,6 +254,7 @@ EXPORT int64_t journeys_walk(Walk *w)
             w->f_events[f] = (int32_t)events;
             w->f_decided[f] = (int32_t)decided;
             w->f_converted[f] = (int32_t)won;
+            w->f_before[f] = before;
             w->f_sure[f] = (uint8_t)sure;
             if (w->merge)
                 w->f_visit[f] = visit;

@@ -26,15 +26,17 @@ _SUB_OCTAVE_SHIFT = 46
 
 T = TypeVar("T", Moves, Entries, Ends)
 
-_CARRIED = ("key", "time", "start", "visit", "code", "first", "steps", "events", "decided", "converted", "sure")
+_CARRIED = ("key", "time", "start", "visit", "code", "first", "steps", "events", "decided", "converted", "before",
+            "sure")  # fmt: skip
 # In the order of the struct in _walk.c. What is named in the second list is a number, all else the address of an array.
 _FIELDS = (
     "n_rows", "key", "time", "code", "n_buckets", "first_keys",
     "n_carried", *(f"c_{name}" for name in _CARRIED), *(f"f_{name}" for name in _CARRIED),
-    "m_bucket", "m_state", "m_next", "m_dwell", "m_busy",
+    "m_bucket", "m_state", "m_next", "m_dwell", "m_before", "m_since", "m_busy",
     "e_bucket", "e_state", "e_outcome", "e_sure", "e_steps", "e_elapsed",
     "b_bucket", "b_state", "b_sure", "g_bucket", "g_outcome", "g_away", "repeated", "bare", "again",
-    "cell_n", "cell_rest", "lower", "upper", "guess", "n_bins", "first_bucket", "n_states", "whole_days",
+    "cell_n", "cell_rest", "contexts", "lower", "upper", "guess", "n_bins", "first_bucket", "n_states", "whole_days",
+    "mature_before", "n_slots",
     "first_state", "first_churned", "silence", "same_outcome", "merge", "log_start", "complete", "busy_after",
     "n_moves", "n_ends", "n_begun", "n_gaps", "n_fresh", "n_repeated", "n_bare", "n_again", "unsure_visits",
 )  # fmt: skip
@@ -113,7 +115,9 @@ def count_in_order(
         raise ImportError(msg)
     n = len(key)
     # A row makes at most a lapse and a move, and ends at most two journeys.
-    moves = Moves(_bytes(2 * n), _codes(2 * n), _codes(2 * n), _times(2 * n), _flags(2 * n))
+    moves = Moves(
+        _bytes(2 * n), _codes(2 * n), _codes(2 * n), _times(2 * n), _times(2 * n), _times(2 * n), _flags(2 * n)
+    )
     ends = Ends(_bytes(2 * n), _codes(2 * n), _codes(2 * n), _flags(2 * n), _times(2 * n), _times(2 * n))
     begun = Entries(_bytes(n), _codes(n), _flags(n))
     gaps = Gaps(_bytes(n), _codes(n), _times(n), True)
@@ -124,10 +128,11 @@ def count_in_order(
         "key": key, "time": time, "code": code, "first_keys": first_keys, **marked,
         **_prefixed("c", carried), **_prefixed("f", fresh),
         "m_bucket": moves.bucket, "m_state": moves.state, "m_next": moves.next_code, "m_dwell": moves.dwell,
-        "m_busy": moves.busy, "e_bucket": ends.bucket, "e_state": ends.state, "e_outcome": ends.outcome,
+        "m_before": moves.before, "m_since": moves.since, "m_busy": moves.busy,
+        "e_bucket": ends.bucket, "e_state": ends.state, "e_outcome": ends.outcome,
         "e_sure": ends.sure, "e_steps": ends.steps, "e_elapsed": ends.elapsed, "b_bucket": begun.bucket,
         "b_state": begun.state, "b_sure": begun.sure, "g_bucket": gaps.bucket, "g_outcome": gaps.outcome,
-        "g_away": gaps.away, "cell_n": cells.n, "cell_rest": cells.rest,
+        "g_away": gaps.away, "cell_n": cells.n, "cell_rest": cells.rest, "contexts": cells.contexts,
         "lower": cells.lower, "upper": cells.upper, "guess": guess,
     }  # fmt: skip
     # Held until the loop is done: an array that had to be copied is in no other hands.
@@ -136,6 +141,7 @@ def count_in_order(
         **{name: array.ctypes.data for name, array in held.items()},
         n_rows=n, n_buckets=len(first_keys), n_carried=len(carried.key), n_bins=len(cells.upper) if len(cells.n) else 0,
         first_bucket=cells.first_bucket, n_states=cells.n_states, whole_days=cells.whole_days,
+        mature_before=cells.mature_before, n_slots=reading.order,
         first_state=reading.first_state, first_churned=FIRST_OUTCOME + reading.n_converted,
         silence=_NO_SILENCE if reading.silence_us is None else reading.silence_us,
         same_outcome=reading.same_outcome_us, merge=reading.merge_repeats, log_start=reading.log_start_us,
@@ -227,7 +233,7 @@ def inserted(old: NDArray[Any], where: IntArray, new: NDArray[Any]) -> NDArray[A
 def _prefixed(letter: str, records: Carried) -> dict[str, NDArray[Any]]:
     columns: tuple[NDArray[Any], ...] = (
         records.key, records.time, records.journey_start, records.visit_began, records.code, records.first_code,
-        records.steps, records.n_events, records.decided, records.converted, records.sure,
+        records.steps, records.n_events, records.decided, records.converted, records.before, records.sure,
     )  # fmt: skip
     return {f"{letter}_{name}": column for name, column in zip(_CARRIED, columns, strict=True)}
 

@@ -75,13 +75,13 @@ def count_rows(block: Block, reading: Reading) -> tuple[Counted, Carried]:
         dwell_lapsed = np.full(len(silent), silence)
     moves = (
         Moves(
-            block.bucket[owner[moved]], marks.prev_code[moved], block.code[moved], dwell, _of(busy, moved),
-            *story.grouped(block.time[moved] - dwell, lambda: story.at(moved, owner[moved])),
+            block.bucket[owner[moved]], marks.prev_code[moved], block.code[moved], dwell, story.left_by(moved),
+            block.time[moved] - dwell, _of(busy, moved), story.group(lambda: story.at(moved, owner[moved])),
         ),
         Moves(
             block.bucket[owner[lapsed]], marks.prev_code[lapsed], np.full(len(lapsed), LAPSED, np.int32),
-            dwell_lapsed, _of(busy, lapsed),
-            *story.grouped(marks.prev_time[lapsed] + silence - dwell_lapsed, lambda: story.before(lapsed)),
+            dwell_lapsed, story.left_by(lapsed), marks.prev_time[lapsed] + silence - dwell_lapsed, _of(busy, lapsed),
+            story.group(lambda: story.before(lapsed)),
         ),
     )  # fmt: skip
     ends = (
@@ -164,9 +164,9 @@ def close_log(carried: Carried, bucket: Buckets, reading: Reading) -> Closed:
     if reading.merge_repeats:
         keep = (held.steps != 1) | held.sure
     moves = Moves(
-        bucket[keep], held.code[keep], next_code[keep], (until - held.visit_began)[keep],
-        (held.n_events >= reading.busy_after)[keep],
-        *(() if held.group is None else (held.visit_began[keep], held.group[keep])),
+        bucket[keep], held.code[keep], next_code[keep], (until - held.visit_began)[keep], held.before[keep],
+        held.visit_began[keep], (held.n_events >= reading.busy_after)[keep],
+        None if held.group is None else held.group[keep],
     )  # fmt: skip
     ends = Ends(
         bucket, held.first_code, next_code, held.sure, held.steps.astype(np.int64) + lapsed,
@@ -222,7 +222,7 @@ def _latest(
         key=block.key, time=block.time[last], journey_start=now.start,
         code=block.code[last], first_code=now.first_code, steps=now.steps.astype(np.int32),
         n_events=np.where(block.held, prior.n_events, none) + size,
-        decided=decided.astype(np.int32), converted=won.astype(np.int32),
+        decided=decided.astype(np.int32), converted=won.astype(np.int32), before=story.came_by(last, owner),
         sure=now.sure, story_over=np.zeros(n, bool),
         visit_start=story.visit_start(last, owner) if story.merging else None,
         group=now.group, seen=None if prior.seen is None else block.time[last], **also,

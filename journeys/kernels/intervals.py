@@ -7,7 +7,7 @@ from typing import Literal
 import numpy as np
 import numpy.typing as npt
 
-from journeys.kernels.arrays import FloatArray
+from journeys.kernels.arrays import FloatArray, IntArray
 
 Side = Literal["both", "lower", "upper"]
 
@@ -65,7 +65,7 @@ def clopper_pearson(
 
 
 def variance_from_buckets(
-    influence: FloatArray, n_buckets: int | None = None
+    influence: FloatArray, n_buckets: int | IntArray | None = None
 ) -> tuple[FloatArray, FloatArray]:
     """Variance of an answer from the influence of each bucket of customers.
 
@@ -73,8 +73,8 @@ def variance_from_buckets(
     ----------
     influence : float array, shape (G, ...)
         Influence of each bucket; rows of empty buckets are 0.
-    n_buckets : int, optional
-        Number of buckets that are not empty; default all rows.
+    n_buckets : int or int array of shape (...), optional
+        Number of buckets that are not empty, of all answers or of each; default all rows.
 
     Returns
     -------
@@ -98,21 +98,27 @@ def variance_from_buckets(
     >>> round(float(variance), 4), round(float(df), 4)
     (0.1333, 3.0)
     """
-    g = len(influence) if n_buckets is None else n_buckets
     shape = influence.shape[1:]
-    if g < 2:
-        return np.full(shape, np.nan), np.full(shape, np.nan)
+    g = np.asarray(len(influence) if n_buckets is None else n_buckets, dtype=np.float64)
+    g = np.where(g < 2, np.nan, g)
     # scaled first: fourth powers of small influences would vanish
     scale = np.max(np.abs(influence), axis=0, initial=0.0)
     square = (influence / np.where(scale > 0, scale, 1.0)) ** 2
     m2, m4 = square.sum(axis=0) / g, (square**2).sum(axis=0) / g
     spread = m4 - m2**2
-    df = np.full(shape, np.inf)
+    df = np.where(np.isnan(g), np.nan, np.full(shape, np.inf))
     np.divide(2.0 * g * m2**2, spread, out=df, where=spread > 0)
     return g / (g - 1.0) * square.sum(axis=0) * scale**2, np.clip(df, 1.0, g - 1.0)
 
 
-def _t_quantile(df: npt.ArrayLike, confidence_level: float) -> FloatArray:
+def t_quantile(df: npt.ArrayLike, confidence_level: float) -> FloatArray:
+    """Return the t quantile of a two-sided interval.
+
+    Examples
+    --------
+    >>> t_quantile([10, np.inf], 0.95).round(3).tolist()
+    [2.228, 1.96]
+    """
     from scipy.special import stdtrit
 
     upper = 0.5 + confidence_level / 2.0
@@ -148,7 +154,7 @@ def logit_interval(
 
     p, se = np.asarray(p, dtype=np.float64), np.asarray(se, dtype=np.float64)
     inside = np.where((p > 0) & (p < 1), p, np.nan)
-    half = _t_quantile(df, confidence_level) * se / (inside * (1.0 - inside))
+    half = t_quantile(df, confidence_level) * se / (inside * (1.0 - inside))
     middle = logit(inside)
     return np.asarray(expit(middle - half)), np.asarray(expit(middle + half))
 
@@ -182,7 +188,7 @@ def log_interval(
     inside = np.where((x > 0) & np.isfinite(x), x, np.nan)
     with np.errstate(over="ignore"):
         # A spread many times the number itself: nothing is known, from 0 to infinity.
-        factor = np.exp(_t_quantile(df, confidence_level) * se / inside)
+        factor = np.exp(t_quantile(df, confidence_level) * se / inside)
         return inside / factor, inside * factor
 
 
@@ -212,7 +218,7 @@ def t_interval(
     (-1.5211, 0.5211)
     """
     x = np.asarray(x, dtype=np.float64)
-    half = _t_quantile(df, confidence_level) * np.asarray(se, dtype=np.float64)
+    half = t_quantile(df, confidence_level) * np.asarray(se, dtype=np.float64)
     return x - half, x + half
 
 

@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from journeys.kernels.arrays import BoolArray as Bools
 from journeys.kernels.arrays import IntArray as Ints
+from journeys.kernels.bins import DAY_US
 from journeys.kernels.grouping import Grouping
 
 PutIn = Callable[[NDArray[Any], Ints, NDArray[Any]], NDArray[Any]]
@@ -27,7 +28,7 @@ class Reading:
 
     `n_outcomes` outcomes have the codes 2 to 1 + n_outcomes, the first `n_converted` of them are
     conversions, and states come after. Times are microseconds. `touches` and `values` tell whether what journeys touch,
-    and what their events are worth, is kept.
+    and what their events are worth, is kept; `order` by how many of the last states moves are told apart.
     """
 
     n_outcomes: int
@@ -43,6 +44,11 @@ class Reading:
     stages: NDArray[np.int32] | None = None
     touches: bool = False
     values: bool = False
+    order: int = 1
+
+    def mature_before(self, end_us: Ints) -> Ints:
+        """Return before when a state must be entered to be seen for the silence until `end_us`: starts of days."""
+        return (end_us - (self.silence_us or 0)) // DAY_US * DAY_US
 
     @property
     def first_state(self) -> int:
@@ -60,7 +66,7 @@ class Carried:
     an opening state are left out, `stage` (the stage reached) and `stage_start` where stages are named. Where there are
     touchpoints, `touched` has a bit for each that the journey has touched, `first_touch` and `last_touch` the numbers
     of the first and the last (from 1, 0 for none); where events have values, `value` is the journey's and
-    `total_value` the customer's.
+    `total_value` the customer's. `before` is the history of the latest visit (`kernels.histories`).
     """
 
     key: NDArray[np.uint64]
@@ -72,6 +78,7 @@ class Carried:
     n_events: NDArray[np.int32]
     decided: NDArray[np.int32]
     converted: NDArray[np.int32]
+    before: Ints
     sure: Bools
     story_over: Bools
     visit_start: Ints | None = None
@@ -88,8 +95,8 @@ class Carried:
     @classmethod
     def zeros(cls, n: int, also: Collection[str] = ()) -> Carried:
         """Return a table of `n` empty records, with the optional columns named."""
-        wide = ("time", "journey_start", "visit_start", "group", "seen", "stage_start", "value", "total_value")
-        kinds: dict[str, Any] = {**dict.fromkeys(wide, np.int64), "key": np.uint64, "touched": np.uint64}
+        wide = ("time", "journey_start", "before", "visit_start", "group", "seen", "stage_start")
+        kinds: dict[str, Any] = {**dict.fromkeys((*wide, *_AMOUNTS), np.int64), "key": np.uint64, "touched": np.uint64}
         kinds |= {"sure": np.bool_, "story_over": np.bool_}
         names = [f.name for f in fields(cls) if f.default is MISSING or f.name in also]
         return cls(**{name: np.zeros(n, kinds.get(name, np.int32)) for name in names})
@@ -151,6 +158,7 @@ class Carried:
             setattr(self, name, put_in(getattr(self, name), where, new))
 
 
+_AMOUNTS = ("value", "total_value")
 _ADDED = ("decided", "converted", "total_value")
 
 
@@ -158,15 +166,17 @@ _ADDED = ("decided", "converted", "total_value")
 class Moves:
     """One element per move: whose bucket, from which state, to what, after how long (microseconds).
 
-    Where journeys are grouped, also when the state was entered and the journey's group; so for what follows.
+    Then the history of the state, when it was entered, and whether the customer was busy. Where journeys are grouped,
+    also the journey's group; for what follows, also when it began.
     """
 
     bucket: NDArray[np.uint8]
     state: NDArray[np.int32]
     next_code: NDArray[np.int32]
     dwell: Ints
+    before: Ints
+    since: Ints
     busy: Bools | None = None
-    since: Ints | None = None
     group: Ints | None = None
 
 
@@ -178,6 +188,8 @@ class Cells:
     ----------
     n, rest : ndarray of uint32 and of int64
         Counts, and sums of dwell less the lower edge of its bin, by bucket, state, next and bin.
+    contexts : ndarray of uint32
+        Counts by bucket, state, next, state before and whether entered before `mature_before`.
     lower, upper : ndarray of int64, shape (n_bins,)
         Edges of the bins.
     first_bucket, n_states : int
@@ -188,11 +200,13 @@ class Cells:
 
     n: NDArray[np.uint32]
     rest: Ints
+    contexts: NDArray[np.uint32]
     lower: Ints
     upper: Ints
     first_bucket: int
     n_states: int
     whole_days: bool
+    mature_before: int
 
 
 @dataclass(frozen=True)

@@ -91,6 +91,7 @@ def return_walk(
     *,
     restart: bool = False,
     never_left: bool = False,
+    as_good: IntArray | None = None,
 ) -> Walk:
     """Walk from a state until it is met again.
 
@@ -106,6 +107,8 @@ def return_walk(
         Every move into an outcome leads to state 0 instead.
     never_left : bool, default False
         The state's only move, to itself, means staying there for good, which is no coming back.
+    as_good : int array, optional
+        Further states that count as coming back.
 
     Returns
     -------
@@ -123,4 +126,7 @@ def return_walk(
     leads = np.where(target < n_states, target, 0 if restart else target + 1)
     if never_left:
         leads = np.where(state == back_to, n_states, leads)
-    return Walk(n_states + 1, n_nodes + 1, comes, leads, np.arange(n_nodes + 1) == back_to, np.array([n_states]))
+    is_target = np.arange(n_nodes + 1) == back_to
+    if as_good is not None:
+        is_target[as_good] = True
+    return Walk(n_states + 1, n_nodes + 1, comes, leads, is_target, np.array([n_states]))

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from math import factorial
 
 import numpy as np
@@ -13,23 +14,24 @@ from journeys.kernels.removal import Road
 _FLOATS = 2**22  # numbers of one kind worked on at a time, about
 
 
-def equal_split(way: Road, players: IntArray, *, derive: bool = True) -> tuple[FloatArray, FloatArray]:
-    """Share of the walks to the target that falls to each of some states, split evenly among those touched.
+def equal_split(way: Road, players: Sequence[IntArray], *, derive: bool = True) -> tuple[FloatArray, FloatArray]:
+    """Share of the walks to the target that falls to each of some players, split evenly among those touched.
 
     Parameters
     ----------
     way : Road
         From `journeys.kernels.removal.road`, with a positive probability of the target.
-    players : int array, shape (n_players,)
-        States, the start and the target not among them; 15 at most, since all subsets are solved for.
+    players : sequence of int arrays
+        The states of each player, which is touched with any of them; the start and the target not among them. 15
+        players at most, since all subsets are solved for.
     derive : bool
         Also return derivatives.
 
     Returns
     -------
     share : float array, shape (n_players + 1,)
-        Of each state, then of the walks that touch none of them; sums to 1. Exactly 0 for a state that no walk to
-        the target visits.
+        Of each player, then of the walks that touch none of them; sums to 1. Exactly 0 for one that no walk to the
+        target touches.
     by_p : float array, shape (n_players + 1, n_moves)
         Derivatives by the probability of each move, each taken as free. Of no rows where not asked for.
 
@@ -49,19 +51,20 @@ def equal_split(way: Road, players: IntArray, *, derive: bool = True) -> tuple[F
     >>> from journeys.kernels.removal import road
     >>> p = np.array([0.5, 0.5, 0.5, 0.5, 0.5, 0.5])
     >>> way = road(3, 5, np.array([0, 0, 1, 1, 2, 2]), np.array([1, 2, 2, 3, 3, 4]), p, p, np.arange(5) == 3)
-    >>> equal_split(way, np.array([1, 2]))[0].round(4).tolist()
+    >>> equal_split(way, [np.array([1]), np.array([2])])[0].round(4).tolist()
     [0.5, 0.5, 0.0]
     """
     v, total = way.moves, way.conversion
-    active = np.flatnonzero(np.isin(players, way.on_the_way(players)))
-    at = players[active]
+    met = [way.on_the_way(states) for states in players]
+    at, whose = np.concatenate(met), np.repeat(np.arange(len(players)), [len(states) for states in met])
+    active, owner = np.unique(whose, return_inverse=True)
     ends = v.is_target.copy()
     ends[at] = True
     to_next = moves_to(v.n_states, len(ends), v.state, v.target, v.p, v.p, v.p, ends)
     between, ahead = _first_met(way, to_next, at)
-    value, weight = _values(between)
+    value, weight = _values(between, owner, len(active))
     share = np.zeros(len(players) + 1)
-    places = np.append(active, len(players))
+    places = np.array([*active, len(players)])
     share[places] = value / total
     if not derive:
         return share, np.zeros((0, len(v.p)))
@@ -75,13 +78,13 @@ def equal_split(way: Road, players: IntArray, *, derive: bool = True) -> tuple[F
 
 
 def _first_met(way: Road, to_next: Moves, at: IntArray) -> tuple[FloatArray, FloatArray]:
-    """Reduce the chain to the start and the players.
+    """Reduce the chain to the start and the states of the players.
 
     Returns
     -------
     between : float array, shape (n + 1, n + 1)
-        From the start (first row) and the players, the probability that each player, or the target (last column),
-        is the first of them met.
+        From the start (first row) and the players' states, the probability that each of these, or the target (last
+        column), is the first of them met.
     ahead : float array, shape (n_nodes, n + 1)
         The same from every node, itself where it is one of them.
     """
@@ -111,34 +114,41 @@ def _visits_between(way: Road, to_next: Moves, at: IntArray) -> FloatArray:
     return visits
 
 
-def _values(between: FloatArray) -> tuple[FloatArray, FloatArray]:
+def _values(between: FloatArray, owner: IntArray, k: int) -> tuple[FloatArray, FloatArray]:
     """Shapley values of the players and the worth of no player, with their derivatives by the reduced chain.
+
+    Parameters
+    ----------
+    between : float array, shape (n + 1, n + 1)
+        From `_first_met`.
+    owner : int array, shape (n,)
+        Whose the states are, of `k` players.
 
     Returns
     -------
-    value : float array, shape (n + 1,)
-    weight : float array, shape (n + 1, n + 1, n + 1)
+    value : float array, shape (k + 1,)
+    weight : float array, shape (k + 1, n + 1, n + 1)
         By each cell of `between`.
     """
-    k = len(between) - 1
-    inner, end = between[1:, :k], between[1:, k]
-    value, weight = np.zeros(k + 1), np.zeros((k + 1, k + 1, k + 1))
-    step = max(1, _FLOATS // (k + 1) ** 2)
+    n = len(between) - 1
+    inner, end = between[1:, :n], between[1:, n]
+    value, weight = np.zeros(k + 1), np.zeros((k + 1, n + 1, n + 1))
+    step = max(1, _FLOATS // (n + 1) ** 2)
     for first in range(0, 2**k, step):
         sets = np.arange(first, min(first + step, 2**k))
         present = (sets[:, None] >> np.arange(k)) & 1
-        mask = present.astype(np.float64)
-        system = np.eye(k) - mask[:, :, None] * inner * mask[:, None, :]
+        mask = present[:, owner].astype(np.float64)
+        system = np.eye(n) - mask[:, :, None] * inner * mask[:, None, :]
         gain = np.linalg.solve(system, (mask * end)[:, :, None])[:, :, 0]
-        visits = np.linalg.solve(system.transpose(0, 2, 1), (mask * between[0, :k])[:, :, None])[:, :, 0]
-        worth = between[0, k] + gain @ between[0, :k]
+        visits = np.linalg.solve(system.transpose(0, 2, 1), (mask * between[0, :n])[:, :, None])[:, :, 0]
+        worth = between[0, n] + gain @ between[0, :n]
         counts = _shares(present, k)
         value += counts.T @ worth
         one = np.ones((len(sets), 1))
         left, right = np.concatenate([one, visits], axis=1), np.concatenate([gain, one], axis=1)
         for c in range(k + 1):
             weight[c] += (left * counts[:, [c]]).T @ right
-    # all terms of a state cancel only to rounding
+    # all terms of a player cancel only to rounding
     return np.maximum(value, 0.0), weight
 
 

@@ -8,18 +8,11 @@ from __future__ import annotations
 
 import numpy as np
 
-from journeys.kernels.arrays import FloatArray, IntArray, sum_at
+from journeys.kernels.arrays import FloatArray, sum_at
+from journeys.kernels.later_bins import LaterBins, divide, pull_of
 from journeys.kernels.stays import BucketStays, StayFit, Stays
 
 __all__ = ["BucketStays", "StayFit", "Stays", "cell_influence", "fit_stays", "move_influence"]
-
-_VERY_FEW = 2_000  # so few stays are summed one by one: a sparse product takes longer to set up
-_FEW = 8  # below one filled place in so many, a sparse product is the quicker one
-
-
-def _divide(top: FloatArray, below: FloatArray) -> FloatArray:
-    """Quotient, with 0 where the lower number is 0."""
-    return np.divide(top, below, out=np.zeros(np.broadcast(top, below).shape), where=below != 0)
 
 
 def second_moment(tau: FloatArray, lower: FloatArray, upper: FloatArray) -> FloatArray:
@@ -98,14 +91,14 @@ def fit_stays(stays: Stays, open_weight: float = 0.5) -> StayFit:
     leaving = np.concatenate([ended + still, stays.survivor_n[:, None]], axis=1)
     later = np.cumsum(leaving[:, :0:-1], axis=1)[:, ::-1]
     at_risk = later + ended + (1.0 - open_weight) * still
-    hazard_all = _divide(ended, at_risk)
+    hazard_all = divide(ended, at_risk)
     survival = np.cumprod(np.concatenate([np.ones((m, 1)), 1.0 - hazard_all], axis=1), axis=1)
 
     risk = at_risk.ravel()[place]
-    hazard = _divide(stays.n, risk)
+    hazard = divide(stays.n, risk)
     q = survival[:, :-1].ravel()[place] * hazard
     low, high = stays.lower[stays.bin], stays.upper[stays.bin]
-    tau = np.where(stays.n > 0, _divide(stays.total, stays.n), (low + high) / 2)
+    tau = np.where(stays.n > 0, divide(stays.total, stays.n), (low + high) / 2)
     tau2 = second_moment(tau, low, high)
 
     end = survival[:, -1].copy()
@@ -116,7 +109,7 @@ def fit_stays(stays: Stays, open_weight: float = 0.5) -> StayFit:
     moves, where = np.unique(keys, return_inverse=True)
     cell_move, survivor_move = where[: len(q)], np.full(m, -1, dtype=np.int64)
     survivor_move[keeps] = where[len(q) :]
-    w = stays.survivor_dwell
+    w = np.broadcast_to(stays.survivor_dwell, (m,))[keeps]
 
     def gather(per_cell: FloatArray, per_survivor: FloatArray) -> FloatArray:
         return sum_at(where, np.concatenate([per_cell, per_survivor]), len(moves))
@@ -132,50 +125,13 @@ def fit_stays(stays: Stays, open_weight: float = 0.5) -> StayFit:
     )
 
 
-def _crossed(bucket: IntArray, at: IntArray, n: FloatArray, weights: FloatArray, g: int) -> FloatArray:
-    """Multiply counts (bucket x bin) by weights (bin x value), shape (g, n_values)."""
-    k, values = weights.shape
-    if len(n) < _VERY_FEW:
-        place = bucket[:, None] * values + np.arange(values)
-        return sum_at(place.ravel(), (n[:, None] * weights[at]).ravel(), g * values).reshape(g, values)
-    if len(n) * _FEW < g * k:
-        from scipy.sparse import csr_array
-
-        counts = csr_array((n, (bucket, at)), shape=(g, k))
-        return np.asarray(counts @ weights, dtype=np.float64)
-    return sum_at(bucket * k + at, n, g * k).reshape(g, k) @ weights
-
-
 def _direct(fit: StayFit, stays: Stays) -> FloatArray:
     """Return what one more stay of a cell adds to its own probability, all else held."""
     place = stays.state * stays.n_bins + stays.bin
-    return _divide(fit.survival_before.ravel()[place], fit.at_risk.ravel()[place])
+    return divide(fit.survival_before.ravel()[place], fit.at_risk.ravel()[place])
 
 
-def _pull(
-    inflow: FloatArray, tail: FloatArray, hazard: FloatArray, at_risk: FloatArray
-) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """Weights of the indirect influence, along the first axis (bins).
-
-    Returns what an end in the bin takes from later bins, the pull of being at risk in
-    the bin, and that pull summed up to and with the bin.
-    """
-    after = tail + np.cumsum(inflow[::-1], axis=0)[::-1] - inflow
-    # nothing is left to take where all at risk end in the bin
-    takes = _divide(after, at_risk * (1.0 - hazard))
-    pull = _divide(inflow, at_risk) - hazard * takes
-    return takes, pull, np.cumsum(pull, axis=0)
-
-
-def _by_state(state: IntArray, n_states: int) -> tuple[IntArray, IntArray]:
-    """Order that sorts by state, and where each state begins in it."""
-    order = np.argsort(state, kind="stable")
-    return order, np.searchsorted(state[order], np.arange(n_states + 1))
-
-
-def move_influence(
-    fit: StayFit, stays: Stays, buckets: BucketStays
-) -> tuple[FloatArray, FloatArray, FloatArray]:
+def move_influence(fit: StayFit, stays: Stays, buckets: BucketStays, n_moments: int = 3) -> tuple[FloatArray, ...]:
     """Influence of each bucket on every move.
 
     The derivative of `probability`, `mean` and `second` of each move by the number of
@@ -189,10 +145,12 @@ def move_influence(
         The stays of all buckets together.
     buckets : BucketStays
         The same stays by bucket.
+    n_moments : int, default 3
+        1 for the probability alone.
 
     Returns
     -------
-    tuple of three float arrays, each of shape (n_buckets, n_moves)
+    tuple of `n_moments` float arrays, each of shape (n_buckets, n_moves)
         For the probability, the mean and the second moment.
 
     References
@@ -214,41 +172,15 @@ def move_influence(
     >>> move_influence(fit_stays(stays), stays, split)[0].tolist()
     [[0.125, -0.125], [-0.125, 0.125]]
     """
-    m, k, g, n_moves = stays.n_states, stays.n_bins, buckets.n_buckets, len(fit.probability)
+    g, n_moves = buckets.n_buckets, len(fit.probability)
     own = buckets.n * _direct(fit, stays)[buckets.cell]
     key = buckets.bucket * n_moves + fit.cell_move[buckets.cell]
-    values = np.stack([np.ones_like(fit.tau), fit.tau, fit.tau2])
+    values = np.stack([np.ones_like(fit.tau), fit.tau, fit.tau2][:n_moments])
     result = np.stack([sum_at(key, own * v[buckets.cell], g * n_moves).reshape(g, n_moves) for v in values])
-
-    cells, cell_at = _by_state(stays.state, m)
-    ended, ended_at = _by_state(stays.state[buckets.cell], m)
-    still, still_at = _by_state(buckets.open_state, m)
-    kept, kept_at = _by_state(buckets.survivor_state, m)
-    move_at = np.searchsorted(fit.move_state, np.arange(m + 1))
-    powers = np.array([1.0, stays.survivor_dwell, stays.survivor_dwell**2])
-    for i in np.flatnonzero(np.diff(move_at)):
-        first, width = move_at[i], move_at[i + 1] - move_at[i]
-        c = cells[cell_at[i] : cell_at[i + 1]]
-        local = stays.bin[c] * width + fit.cell_move[c] - first
-        inflow = np.concatenate(
-            [sum_at(local, fit.q[c] * v[c], k * width).reshape(k, width) for v in values], axis=1
-        )
-        tail = np.zeros((3, width))
-        if fit.survivor_move[i] >= 0:
-            tail[:, fit.survivor_move[i] - first] = fit.survival_end[i] * powers
-        risk, hazard = fit.at_risk[i][:, None], fit.hazard_all[i][:, None]
-        takes, pull, sofar = _pull(inflow, tail.ravel(), hazard, risk)
-        e = ended[ended_at[i] : ended_at[i + 1]]
-        o = still[still_at[i] : still_at[i + 1]]
-        s = kept[kept_at[i] : kept_at[i + 1]]
-        block = _crossed(buckets.bucket[e], stays.bin[buckets.cell[e]], buckets.n[e], takes + sofar, g)
-        if len(o):
-            weights = sofar - fit.open_weight * pull
-            block += _crossed(buckets.open_bucket[o], buckets.open_bin[o], buckets.open_n[o], weights, g)
-        if len(s):
-            block += np.outer(sum_at(buckets.survivor_bucket[s], buckets.survivor_n[s], g), sofar[-1])
-        result[:, :, first : first + width] -= block.reshape(g, 3, width).transpose(1, 0, 2)
-    return result[0], result[1], result[2]
+    later = LaterBins(fit, stays, buckets, values)
+    for i, j in later.panels():
+        result[:, :, later.move_at[i] : later.move_at[j]] -= later.of_rows(i, j)
+    return tuple(result)
 
 
 def cell_influence(
@@ -296,7 +228,7 @@ def cell_influence(
     gather = csr_array((fit.q, (stays.bin * m + stays.state, np.arange(n_cells))), shape=(k * m, n_cells))
     inflow = np.asarray(gather @ tables).reshape(k, m, n_values)
     tail = fit.survival_end[:, None] * survivors
-    takes, pull, sofar = _pull(inflow, tail, fit.hazard_all.T[:, :, None], fit.at_risk.T[:, :, None])
+    takes, pull, sofar = pull_of(inflow, tail, fit.hazard_all.T[:, :, None], fit.at_risk.T[:, :, None])
 
     own = csr_array((buckets.n * _direct(fit, stays)[buckets.cell], (buckets.bucket, buckets.cell)), shape=(g, n_cells))
     found = np.asarray(own @ tables)

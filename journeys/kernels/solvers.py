@@ -11,12 +11,14 @@ import numpy as np
 from journeys.errors import LogError
 from journeys.kernels.arrays import FloatArray, IntArray, sum_at
 from journeys.kernels.ordering import all_at_once, plan
+from journeys.kernels.pieces import pieces
 from journeys.kernels.reduction import Reduction, reduce
 
 if TYPE_CHECKING:
     from scipy.sparse import csr_array
 
 _DENSE = 500  # most states of which a full matrix is made where few moves occur
+_WHOLE = 64  # up to so many states it is not worth while to look for parts
 _THIN = 50  # few: not one pair of states in so many
 _MOST_ENTRIES = 50_000_000  # most numbers that the factors may hold
 _RESIDUAL = 1e-10  # most that iteration may leave, relative to the right side
@@ -53,8 +55,9 @@ def solver(n: int, row: IntArray, column: IntArray, p: FloatArray, excess: Float
     Returns
     -------
     Solver
-        A `Reduction`, full up to 500 states or where many pairs of states have moves and sparse above; an
-        `Iteration` where its factors would hold more than 50 million numbers.
+        `Pieces` where the states fall into many small parts; else a `Reduction`, full up to 500 states or where many
+        pairs of states have moves and sparse above; an `Iteration` where its factors would hold more than 50 million
+        numbers.
 
     Raises
     ------
@@ -67,6 +70,9 @@ def solver(n: int, row: IntArray, column: IntArray, p: FloatArray, excess: Float
     >>> found.solve(np.array([0.0, 0.25])).tolist()
     [0.5, 1.0]
     """
+    apart = pieces(n, row, column, p, excess) if n > _WHOLE else None
+    if apart is not None:
+        return apart
     full = n <= _DENSE or len(p) * _THIN >= n * n
     order = all_at_once(n) if full else plan(n, row, column)
     if order.entries <= _MOST_ENTRIES:

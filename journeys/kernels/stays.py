@@ -27,8 +27,8 @@ class Stays:
         Stays that lapsed at the end of the last bin.
     survivor_target : int or None
         Column to which what survives the last bin goes; None: to no column.
-    survivor_dwell : float
-        Dwell of such a stay in days.
+    survivor_dwell : float, or float array of shape (n_states,)
+        Dwell of such a stay in days, the same for all states or state by state.
     """
 
     n_states: int
@@ -46,7 +46,7 @@ class Stays:
     open_n: FloatArray
     survivor_n: FloatArray
     survivor_target: int | None = None
-    survivor_dwell: float = 0.0
+    survivor_dwell: float | FloatArray = 0.0
 
 
 @dataclass(frozen=True, eq=False)

@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 from journeys.kernels.arrays import BoolArray as Bools
 from journeys.kernels.arrays import IntArray as Ints
 from journeys.kernels.grouping import NEW, Grouping
+from journeys.kernels.histories import along_visits, nothing_known
 from journeys.kernels.records import LAPSED, Carried, Reading
 
 Codes = NDArray[np.int32]
@@ -134,6 +135,7 @@ class Stories:
         if reading.merge_repeats:
             self._visits = np.cumsum(marks.visit, dtype=np.int32)
             self._visit_row = np.maximum.accumulate(np.where(marks.visit, np.arange(len(block.time)), -1))
+        self._before = self._histories(reading.order)
 
     def at(self, row: Ints, owner: Codes, first: Bools | None = None) -> Story:
         """Return the journeys of rows (their positions and owners); where `first`, the one carried."""
@@ -163,12 +165,43 @@ class Stories:
         owner = self._marks.owner[row]
         return self.at(row - 1, owner, first=row == self._block.start[owner])
 
+    def came_by(self, row: Ints, owner: Codes) -> Ints:
+        """Return the histories of the visits that rows belong to."""
+        if self._visits is None:
+            return self._before[row]
+        here = self._visit_row[row] >= self._block.start[owner]
+        return np.where(here, self._before[self._visit_row[row]], self._block.prior.before[owner])
+
+    def left_by(self, row: Ints) -> Ints:
+        """Return the histories of the visits just before rows, which they end."""
+        owner = self._marks.owner[row]
+        first = row == self._block.start[owner]
+        # What came before a customer's first row is not looked at: any row will do.
+        return np.where(first, self._block.prior.before[owner], self.came_by(np.where(first, row, row - 1), owner))
+
+    def _histories(self, n_slots: int) -> Ints:
+        """Return the history of each visit, at the row that it begins with."""
+        marks = self._marks
+        visit = np.flatnonzero(marks.visit)
+        of_row = np.zeros(len(marks.owner), np.int64)
+        of_row[self.begun] = np.where(self.sure_begun, 0, nothing_known(n_slots))
+        begun = of_row[visit]
+        # The visit before is the one carried for a customer's first visit here, unless a merged one goes on.
+        owner = marks.owner[visit]
+        first = np.ones(len(visit), bool)
+        first[1:] = owner[1:] != owner[:-1]
+        carried = np.where(first & self._block.held[owner], self._block.prior.before[owner], -1)
+        of_row[visit] = along_visits(marks.prev_code[visit], marks.moved[visit], begun, carried, n_slots)
+        return of_row
+
     def grouped(self, since: Ints, story: Callable[[], Story]) -> tuple[Ints, Ints] | tuple[()]:
         """Return when something began and its journey's group, nothing where journeys are not grouped."""
-        if self.group_begun is None:
-            return ()
-        group = story().group
+        group = self.group(story)
         return () if group is None else (since, group)
+
+    def group(self, story: Callable[[], Story]) -> Ints | None:
+        """Return the journey's group, None where journeys are not grouped."""
+        return None if self.group_begun is None else story().group
 
     def _groups(self, grouping: Grouping) -> Ints:
         """Return the groups of the journeys begun."""

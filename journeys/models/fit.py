@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import os
-import warnings
 from collections.abc import Collection, Sequence
 from dataclasses import dataclass
 from functools import cached_property
@@ -11,12 +10,12 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from journeys.errors import DeadEndWarning
+from journeys.errors import DeadEndWarning, warn
 from journeys.kernels.arrays import BoolArray, FloatArray, IntArray
 from journeys.kernels.graph import Classes, classify
 from journeys.kernels.stays import FittedStays
 from journeys.markup import facts, frame_table, short_name
-from journeys.models.stays import Nodes
+from journeys.models.memory import Nodes
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -28,6 +27,21 @@ if TYPE_CHECKING:
 NO_WAY_OUT = "no move out was seen"
 # A wider matrix is no longer read in a notebook.
 WIDEST_SHOWN = 30
+
+
+class NotInChainError(ValueError):
+    """A name is neither a state nor an outcome of a chain.
+
+    Attributes
+    ----------
+    briefly : str
+        Which, in few words.
+    """
+
+    def __init__(self, name: str, message: str) -> None:
+        """Keep the name."""
+        super().__init__(message)
+        self.briefly = f"{name!r} is never seen"
 
 
 @dataclass(frozen=True, eq=False)
@@ -144,7 +158,8 @@ class JourneyFit:
         Parameters
         ----------
         to : str, collection of str or None
-            An outcome, a state or several of either; None for all converted outcomes.
+            An outcome, a state or several of either; None for all converted outcomes. In a chain of a higher order a
+            state may be named by itself ("basket") or with what came before ("basket after price page").
 
         Returns
         -------
@@ -153,18 +168,20 @@ class JourneyFit:
         Raises
         ------
         ValueError
-            If a name is neither a state nor an outcome, or nothing is named where the chain has no
-            converted outcomes.
+            If a name is neither a state nor an outcome (`NotInChainError`), or nothing is named where the chain
+            has no converted outcomes.
         """
         names = self.converted if to is None else (to,) if isinstance(to, str) else tuple(to)
         if not names:
             msg = f"`to` is missing; wanted one or more of {_listed(self.nodes.labels[1:])}"
             raise ValueError(msg)
-        unknown = [name for name in names if name not in self.nodes.labels[1:]]
+        last = ("entry", *self.nodes.last_states, *self.nodes.outcomes)
+        unknown = [name for name in names if name not in self.nodes.labels[1:] and name not in last[1:]]
         if unknown:
-            msg = f"to={unknown[0]!r} is not in this chain; wanted one or more of {_listed(self.nodes.labels[1:])}"
-            raise ValueError(msg)
-        return np.isin(np.array(self.nodes.labels, dtype=object), names)
+            wanted = f"one or more of {_listed(self.nodes.labels[1:])}"
+            raise NotInChainError(unknown[0], f"to={unknown[0]!r} is not in this chain; wanted {wanted}")
+        mask = np.isin(np.array(self.nodes.labels, dtype=object), names)
+        return np.asarray(mask | np.isin(np.array(last, dtype=object), names), dtype=np.bool_)
 
     def save(self, path: str | os.PathLike[str]) -> None:
         """Write the fit to one file (see `journeys.models.store`)."""
@@ -193,7 +210,7 @@ class JourneyFit:
 
     def _repr_html_(self) -> str:
         if len(self.states) > WIDEST_SHOWN:
-            return facts(repr(self).strip("<>"), {"moves": f"{len(self.probability):,}"})
+            return facts(repr(self).strip("<>"), {"moves": len(self.probability)})
         frame = self.matrix.reset_index(names="from")
         known = "a known chain" if self.tally is None else f"fitted to {self.tally.n_journeys:,} journeys"
         flagged = [f"{short_name(name)}: {text}" for name, text in self.row_flags.items() if text]
@@ -213,11 +230,14 @@ def with_dead_ends(
         Where each move came from in the input, -1 for an added one.
     """
     rows = np.setdiff1d(np.arange(nodes.n_rows), state)
+    labels = nodes.labels
     for row in rows:
-        row_flags[nodes.labels[row]] = NO_WAY_OUT
+        # told last, whatever else was told of the row
+        row_flags.pop(labels[row], None)
+        row_flags[labels[row]] = NO_WAY_OUT
     if len(rows):
         names = ", ".join(nodes.labels[row] for row in rows[:5])
-        warnings.warn(f"no move out of {names} was seen: taken as never left", DeadEndWarning, stacklevel=4)
+        warn(f"no move out of {names} was seen: taken as never left", DeadEndWarning)
     state, target = np.concatenate([state, rows]), np.concatenate([target, rows])
     order = np.lexsort((target, state))
     kept = np.concatenate([np.arange(len(columns[0])), np.full(len(rows), -1)])[order]

@@ -8,6 +8,7 @@ from dataclasses import dataclass
 
 from journeys.errors import JourneysWarning, LogError
 from journeys.models.fit import JourneyFit
+from journeys.models.group_stack import group_parts, stacks
 from journeys.models.model import JourneyModel, fault_of
 from journeys.models.what_if import WhatIf
 from journeys.tally.groups import Group
@@ -59,12 +60,24 @@ def group_fits(fit: JourneyFit, by: str | Sequence[str]) -> list[GroupFit]:
     ValueError
         If a column is not one that journeys are grouped by.
     """
-    tally = _tally_of(fit)
-    model = JourneyModel(open_moves=fit.open_moves)
-    return [_group_fit(model, values, part) for values, part in tally.split(by).items()]
+    tally = grouped_tally(fit)
+    names = (by,) if isinstance(by, str) else tuple(by)
+    model = model_of(fit)
+    parts = group_parts(tally, names, model.order)
+    tallies = list(tally.split(names).values())
+    fits: dict[int, JourneyFit] = {}
+    for stack in stacks(tally, parts, model):
+        fits |= {g: stack.part(i, tallies[g]) for i, g in enumerate(stack.groups.tolist())}
+    return [GroupFit(parts.values[g], tallies[g], fits.get(g), why) for g, why in enumerate(parts.why)]
 
 
-def _tally_of(fit: JourneyFit) -> Tally:
+def model_of(fit: JourneyFit) -> JourneyModel:
+    """Return the model that a fit was made by."""
+    return JourneyModel(order=fit.nodes.order, open_moves=fit.open_moves)
+
+
+def grouped_tally(fit: JourneyFit) -> Tally:
+    """Return the tally behind a fit whose groups are asked for; a LogError if there is none."""
     if fit.tally is None:
         msg = "by: this chain was given, not fitted to a log, so it has no groups; fit a tally with `by` in its rules"
         raise LogError(msg)
@@ -73,15 +86,6 @@ def _tally_of(fit: JourneyFit) -> Tally:
         msg = "by: a what-if has no groups; wanted the fit it came from, or a what-if of the fit of one group"
         raise LogError(msg)
     return fit.tally
-
-
-def _group_fit(model: JourneyModel, values: Group, part: Tally) -> GroupFit:
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore", JourneysWarning)
-        fault = fault_of(part)
-        if fault is not None:
-            return GroupFit(values, part, None, fault.briefly)
-        return GroupFit(values, part, model.fit_whatever(part))
 
 
 def rest_fit(fit: JourneyFit, by: str | Sequence[str], without: Group) -> GroupFit:
@@ -98,5 +102,11 @@ def rest_fit(fit: JourneyFit, by: str | Sequence[str], without: Group) -> GroupF
     -------
     GroupFit
     """
-    tally = _tally_of(fit)
-    return _group_fit(JourneyModel(open_moves=fit.open_moves), without, tally.rest(by, without))
+    tally = grouped_tally(fit)
+    part = tally.rest(by, without)
+    fault = fault_of(part)
+    if fault is not None:
+        return GroupFit(without, part, None, fault.briefly)
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore", JourneysWarning)
+        return GroupFit(without, part, model_of(fit).fit_whatever(part))

@@ -9,7 +9,7 @@ import numpy as np
 
 from journeys.kernels.arrays import FloatArray
 from journeys.models.fit import JourneyFit, with_dead_ends
-from journeys.models.stays import Nodes
+from journeys.models.memory import Nodes
 
 if TYPE_CHECKING:
     import pandas as pd

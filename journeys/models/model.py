@@ -2,21 +2,21 @@
 
 from __future__ import annotations
 
-import warnings
 from dataclasses import dataclass
 
 import numpy as np
 
 from journeys import checks
-from journeys.errors import EndNotSeenWarning, JourneysWarning, LogError, ShortLogWarning
+from journeys.errors import EndNotSeenWarning, JourneysWarning, LogError, ShortLogWarning, warn
 from journeys.kernels.arrays import BoolArray, FloatArray, sum_at
 from journeys.kernels.bins import DAY_US
 from journeys.kernels.records import FIRST_OUTCOME
 from journeys.kernels.sojourn import StayFit, fit_stays, move_influence
-from journeys.kernels.stays import FittedStays, Stays
+from journeys.kernels.stays import BucketStays, FittedStays, Stays
 from journeys.markup import short_name
 from journeys.models.fit import Influence, JourneyFit, with_dead_ends
-from journeys.models.stays import move_stays, nodes_of, without_open
+from journeys.models.memory import Nodes, chain_of
+from journeys.models.stays import move_stays, without_open
 from journeys.tally.tally import Tally
 
 END_NOT_SEEN = "end not seen"
@@ -32,13 +32,18 @@ class JourneyModel:
 
     Parameters
     ----------
+    order : int
+        How many of the last states say where a journey goes next, from 1 to 3; above 1 it needs a tally that was
+        counted with that order (`jn.tally(log, rules, order=2)`). The states of the chain then have names such as
+        "basket after price page"; targets, touchpoints and returns may be named by the last state alone.
     open_moves : {"censored", "ignored"}
         "censored" keeps stays still open at the end of the log, as lasting at least that long
         (Aalen-Johansen); "ignored" counts completed moves only, which overstates quick moves.
 
     Notes
     -----
-    The chain is first-order: what comes next depends on the state a customer is in. The probabilities are
+    By default the chain is first-order: what comes next depends on the state a customer is in. Of an unsure journey the
+    moves whose history is unknown stay out of a fit of higher order. The probabilities are
     Aalen-Johansen estimates on binned stays, open ones right-censored; intervals come from the influence of
     200 buckets of customers (infinitesimal jackknife), so the journeys of one customer may be alike.
 
@@ -49,14 +54,16 @@ class JourneyModel:
 
     Examples
     --------
-    >>> JourneyModel().open_moves
-    'censored'
+    >>> JourneyModel()
+    JourneyModel(order=1, open_moves='censored')
     """
 
+    order: int = 1
     open_moves: str = "censored"
 
     def __post_init__(self) -> None:
         """Check the choices."""
+        checks.whole(self.order, "order", 1)
         checks.one_of(self.open_moves, ("censored", "ignored"), "open_moves")
 
     def fit(self, tally: Tally) -> JourneyFit:
@@ -75,8 +82,8 @@ class JourneyModel:
         Raises
         ------
         LogError
-            If the log is no longer than the silence, no journey has a sure entry, or none of the outcomes
-            named in the rules was ever seen.
+            If the log is no longer than the silence, no journey has a sure entry, none of the outcomes
+            named in the rules was ever seen, or the tally was counted with a lower order.
 
         Warns
         -----
@@ -87,6 +94,12 @@ class JourneyModel:
         DeadEndWarning
             If no move out of a state was seen.
         """
+        if self.order > tally.order:
+            msg = (
+                f"order={self.order}, but the tally was counted with order={tally.order}; wanted "
+                f"jn.tally(log, rules, order={self.order})"
+            )
+            raise LogError(msg)
         fault = fault_of(tally)
         if fault is not None:
             raise LogError(fault.message)
@@ -96,8 +109,14 @@ class JourneyModel:
 
     def fit_whatever(self, tally: Tally) -> JourneyFit:
         """Fit the chain to a tally whose faults have been looked for (see `fault_of`)."""
-        nodes = nodes_of(tally)
-        stays, by_bucket = move_stays(tally, censored=self.open_moves == "censored")
+        chain = chain_of(tally, self.order)
+        stays, by_bucket = move_stays(tally, chain, censored=self.open_moves == "censored")
+        return self.fit_stays(tally, chain.nodes(tally), stays, by_bucket)
+
+    def fit_stays(
+        self, tally: Tally, nodes: Nodes, stays: Stays, by_bucket: BucketStays, *, n_moments: int = 3
+    ) -> JourneyFit:
+        """Fit the chain to stays that were taken from a tally; with one moment the influence on times is left NaN."""
         weight = 0.0 if tally.whole_days else 0.5
         found = fit_stays(stays, weight)
         row_flags: dict[str, str] = {}
@@ -117,7 +136,7 @@ class JourneyModel:
                 )
         else:
             self._look_at_ends(tally, stays, found, nodes.labels, row_flags)
-        d_probability, d_mean, d_second = move_influence(found, stays, by_bucket)
+        pulls = move_influence(found, stays, by_bucket, n_moments)
         completed = sum_at(found.cell_move, stays.n, len(found.probability))
         lapses = found.survivor_move >= 0
         np.add.at(completed, found.survivor_move[lapses], stays.survivor_n[lapses])
@@ -131,7 +150,8 @@ class JourneyModel:
         pad = kept < 0
         place = np.empty(len(found.probability), np.int64)
         place[kept[~pad]] = np.flatnonzero(~pad)
-        influence = Influence(*(np.where(pad, 0.0, part[:, kept]) for part in (d_probability, d_mean, d_second)))
+        pulls = tuple(np.where(pad, 0.0, part[:, kept]) if pad.any() else part for part in pulls)
+        unknown = np.broadcast_to(np.nan, pulls[0].shape)
         return JourneyFit(
             nodes=nodes,
             converted=tally.rules.converted,
@@ -144,7 +164,7 @@ class JourneyModel:
             row_flags=row_flags,
             open_moves=self.open_moves,
             tally=tally,
-            influence=influence,
+            influence=Influence(*pulls, *(unknown for _ in range(3 - n_moments))),
             fitted_stays=FittedStays(stays, by_bucket, found, place),
         )
 
@@ -158,7 +178,6 @@ class JourneyModel:
         unseen = (found.survival_end > 1e-12) & (seen_to_end == 0) & _has_stays(stays)
         if tally.rules.repeats == "merge":
             unseen = (found.survival_end > 1e-12) & _has_stays(stays)
-        unseen[0] = False
         few = ~unseen & (seen_to_end > 0) & (seen_to_end < ENOUGH_AT_END) & _has_open(stays)
         _flag(row_flags, labels, unseen, END_NOT_SEEN)
         _flag(row_flags, labels, few, FEW_AT_END)
@@ -168,7 +187,6 @@ class JourneyModel:
                 unseen,
                 "no stay in {} was seen as long as the silence: the share that lapses there is an upper bound",
                 EndNotSeenWarning,
-                depth=5,
             )
 
 
@@ -182,18 +200,24 @@ class Fault:
 
 def fault_of(tally: Tally) -> Fault | None:
     """Return why no fit can be had of a tally, None where there is nothing in its way."""
+    sure = bool((tally.entries["sure"] == 1).any())
+    return fault_of_part(tally, tally.days_followed, sure=sure)
+
+
+def fault_of_part(tally: Tally, days_followed: float, *, sure: bool) -> Fault | None:
+    """Return why no fit can be had of some journeys of a tally, followed for so long, with any sure entry or none."""
     rules = tally.rules
-    if rules.silence_us is not None and tally.days_followed * DAY_US <= rules.silence_us:
+    if rules.silence_us is not None and days_followed * DAY_US <= rules.silence_us:
         silence_days = rules.silence_us / DAY_US
         what = f"the log is {tally.days:.1f} days long"
-        if tally.days_followed < tally.days:
-            what = f"these journeys were followed for {tally.days_followed:.1f} days at most"
+        if days_followed < tally.days:
+            what = f"these journeys were followed for {days_followed:.1f} days at most"
         return Fault(
-            f"followed for {tally.days_followed:.0f} days, no longer than the silence",
+            f"followed for {days_followed:.0f} days, no longer than the silence",
             f"{what}, no longer than the silence of {silence_days:g} days, so "
             "nobody can be seen to lapse; wanted a longer log or a shorter silence",
         )
-    if not (tally.entries["sure"] == 1).any():
+    if not sure:
         return Fault(
             "no sure entry",
             f"none of {tally.n_journeys:,} journeys has a sure entry (all may have begun before the log); wanted a "
@@ -208,11 +232,10 @@ def _warn_if_short(tally: Tally) -> None:
         what = f"the log of {tally.days:.1f} days"
         if tally.days_followed < tally.days:
             what = f"the time of {tally.days_followed:.1f} days for which these journeys were followed"
-        warnings.warn(
+        warn(
             f"{what} is shorter than one and a half silences: times given "
             "conversion will be too narrow in their intervals",
             ShortLogWarning,
-            stacklevel=3,
         )
 
 
@@ -250,8 +273,7 @@ def _flag(row_flags: dict[str, str], labels: tuple[str, ...], rows: BoolArray, t
         row_flags[labels[row]] = text
 
 
-def _warn_rows(labels: tuple[str, ...], rows: BoolArray, text: str, kind: type[Warning], depth: int = 4) -> None:
-    """Warn of some rows; `depth` calls lie between here and the line that asked for the fit, which is the one shown."""
+def _warn_rows(labels: tuple[str, ...], rows: BoolArray, text: str, kind: type[JourneysWarning]) -> None:
     names = [short_name(labels[row]) for row in np.flatnonzero(rows)]
     shown = ", ".join(names[:5]) + (f" and {len(names) - 5} more" if len(names) > 5 else "")
-    warnings.warn(text.format(shown), kind, stacklevel=depth)
+    warn(text.format(shown), kind)

@@ -3,45 +3,18 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass, replace
+from dataclasses import replace
 
 import numpy as np
 
-from journeys.kernels.arrays import BoolArray, FloatArray, IntArray, sum_at
+from journeys.kernels.arrays import BoolArray, FloatArray, IntArray, distinct, sum_at
 from journeys.kernels.bins import DAY_US, bin_bounds_days, bin_of, dwell_edges, elapsed_edges
 from journeys.kernels.records import FIRST_OUTCOME, LAPSED, OPEN
 from journeys.kernels.stays import BucketStays, Stays
+from journeys.models.memory import Chain, Nodes
+from journeys.models.places import Places
 from journeys.tally.accumulate import Columns, join_limbs
 from journeys.tally.tally import Tally
-
-
-@dataclass(frozen=True)
-class Nodes:
-    """Positions of entry, states and outcomes in the arrays of a fit: entry is 0, then the states, then ends."""
-
-    states: tuple[str, ...]
-    outcomes: tuple[str, ...]
-
-    @property
-    def labels(self) -> tuple[str, ...]:
-        """Names of all nodes."""
-        return ("entry", *self.states, *self.outcomes)
-
-    @property
-    def n_rows(self) -> int:
-        """Entry and the states."""
-        return 1 + len(self.states)
-
-    @property
-    def n_nodes(self) -> int:
-        """Rows and outcomes."""
-        return self.n_rows + len(self.outcomes)
-
-
-def nodes_of(tally: Tally) -> Nodes:
-    """Return the nodes of a tally's chain: its states and outcomes, and lapsed where a silence is given."""
-    lapsed = () if tally.rules.silence_us is None else ("lapsed",)
-    return Nodes(tally.states, (*tally.rules.outcomes, *lapsed))
 
 
 def live_buckets(tally: Tally) -> IntArray:
@@ -50,13 +23,15 @@ def live_buckets(tally: Tally) -> IntArray:
     return np.where(live, np.cumsum(live) - 1, -1)
 
 
-def move_stays(tally: Tally, *, censored: bool) -> tuple[Stays, BucketStays]:
+def move_stays(tally: Tally, chain: Chain, *, censored: bool) -> tuple[Stays, BucketStays]:
     """Return the stays in entry and every state, in all and by bucket.
 
     Parameters
     ----------
     tally : Tally
         The counts.
+    chain : Chain
+        Its moves and entries by the states of a chain.
     censored : bool
         Keep open stays, right-censored at the end of the log; False leaves them out.
 
@@ -67,37 +42,57 @@ def move_stays(tally: Tally, *, censored: bool) -> tuple[Stays, BucketStays]:
     by_bucket : BucketStays
         The same stays by non-empty bucket.
     """
-    nodes, rules, moves = nodes_of(tally), tally.rules, tally.moves
-    edges = dwell_edges(rules.silence_us, tally.whole_days)
-    bucket = live_buckets(tally)
-    place = _node_of_code(tally, nodes)
-    lapse_survives = rules.silence_us is not None and rules.repeats == "keep"
-    n_bins = int(moves["bin"].max()) + 1 if len(moves["n"]) else 1
-    if rules.silence_us is not None and lapse_survives:
-        n_bins = int(bin_of(np.array([rules.silence_us]), edges)[0]) + 1
-    lower, upper = bin_bounds_days(edges, n_bins)
+    nodes = chain.nodes(tally)
+    own, first = _node_of_code(tally, nodes)[None], np.array([0, nodes.n_rows])
+    places = Places(own, first, nodes.n_rows, len(nodes.outcomes))
+    return placed_stays(tally, chain, places, live_buckets(tally), censored=censored)
+
+
+def placed_stays(
+    tally: Tally, chain: Chain, places: Places, bucket: IntArray, *, censored: bool
+) -> tuple[Stays, BucketStays]:
+    """Return the stays in the rows of a chain of one or of several groups, in all and by bucket.
+
+    Parameters
+    ----------
+    tally, chain
+        As in `move_stays`.
+    places : Places
+        The rows.
+    bucket : int array
+        Number of each bucket; the largest tells how many there are.
+    censored : bool
+        As in `move_stays`.
+    """
+    moves, of_move = places.table(chain.moves)
+    sure = chain.entries["sure"] == 1
+    needed = [name for name in ("group", "bucket", "state", "n") if name in chain.entries]
+    entries, of_entry = places.table({name: chain.entries[name][sure] for name in needed})
+    lapse_survives = tally.rules.silence_us is not None and tally.rules.repeats == "keep"
+    lower, upper, survivor_dwell = _bins(tally, places, moves, of_move, lapse_survives=lapse_survives)
+    n_bins, n_sure = len(lower), len(entries["n"])
 
     is_open = moves["next"] == OPEN
     survives = (moves["next"] == LAPSED) & lapse_survives
     ended = ~is_open & ~survives
-    sure = tally.entries["sure"] == 1
-    row = place[moves["state"]]
-    whose = np.concatenate([bucket[tally.entries["bucket"][sure]], bucket[moves["bucket"][ended]]])
-    state = np.concatenate([np.zeros(int(sure.sum()), np.int64), row[ended]])
-    target = np.concatenate([place[tally.entries["state"][sure]], place[moves["next"][ended]]])
-    at = np.concatenate([np.zeros(int(sure.sum()), np.int64), moves["bin"][ended]])
-    n = np.concatenate([tally.entries["n"][sure], moves["n"][ended]]).astype(np.float64)
-    dwell = join_limbs(moves, "dwell")[ended] / DAY_US
-    total = np.concatenate([np.zeros(int(sure.sum())), dwell])
-    key = (state * nodes.n_nodes + target) * n_bins + at
-    cells, cell = np.unique(key, return_inverse=True)
+    row = places.first[of_move] + places.own_node(of_move, moves["state"])
+    whose = bucket[np.concatenate([entries["bucket"], moves["bucket"][ended]])]
+    state = np.concatenate([places.first[of_entry], row[ended]])
+    own = np.concatenate(
+        [places.own_node(of_entry, entries["state"]), places.own_node(of_move[ended], moves["next"][ended])]
+    )
+    at = np.concatenate([np.zeros(n_sure, np.int64), moves["bin"][ended]])
+    n = np.concatenate([entries["n"], moves["n"][ended]]).astype(np.float64)
+    total = np.concatenate([np.zeros(n_sure), join_limbs(moves, "dwell")[ended] / DAY_US])
+    cells, cell = distinct((state * places.width + own) * n_bins + at, places.n_rows * places.width * n_bins)
     kept = is_open & censored
+    cell_state = cells // n_bins // places.width
     stays = Stays(
-        n_states=nodes.n_rows,
-        n_targets=nodes.n_nodes,
+        n_states=places.n_rows,
+        n_targets=places.n_nodes,
         n_bins=n_bins,
-        state=cells // n_bins // nodes.n_nodes,
-        target=cells // n_bins % nodes.n_nodes,
+        state=cell_state,
+        target=places.node(cell_state, cells // n_bins % places.width),
         bin=cells % n_bins,
         n=sum_at(cell, n, len(cells)),
         total=sum_at(cell, total, len(cells)),
@@ -106,9 +101,9 @@ def move_stays(tally: Tally, *, censored: bool) -> tuple[Stays, BucketStays]:
         open_state=row[kept],
         open_bin=moves["bin"][kept],
         open_n=moves["n"][kept].astype(np.float64),
-        survivor_n=sum_at(row[survives], moves["n"][survives], nodes.n_rows),
-        survivor_target=None if rules.silence_us is None else nodes.n_nodes - 1,
-        survivor_dwell=float(upper[-1]),
+        survivor_n=sum_at(row[survives], moves["n"][survives], places.n_rows),
+        survivor_target=None if tally.rules.silence_us is None else places.n_nodes - 1,
+        survivor_dwell=survivor_dwell,
     )
     by_bucket = BucketStays(
         n_buckets=int(bucket.max()) + 1,
@@ -125,6 +120,21 @@ def move_stays(tally: Tally, *, censored: bool) -> tuple[Stays, BucketStays]:
         survivor_n=moves["n"][survives].astype(np.float64),
     )
     return stays, by_bucket
+
+
+def _bins(
+    tally: Tally, places: Places, moves: Columns, of_move: IntArray, *, lapse_survives: bool
+) -> tuple[FloatArray, FloatArray, float | FloatArray]:
+    """Return the edges of the bins in days, and the dwell of a stay that outlives the last bin of its group."""
+    silence_us = tally.rules.silence_us
+    edges = dwell_edges(silence_us, tally.whole_days)
+    if silence_us is not None and lapse_survives:
+        lower, upper = bin_bounds_days(edges, int(bin_of(np.array([silence_us]), edges)[0]) + 1)
+        return lower, upper, float(upper[-1])
+    last = np.zeros(len(places.first) - 1, np.int64)
+    np.maximum.at(last, of_move, moves["bin"])
+    lower, upper = bin_bounds_days(edges, int(last.max()) + 1)
+    return lower, upper, float(upper[last[0]]) if len(last) == 1 else np.repeat(upper[last], np.diff(places.first))
 
 
 def without_open(stays: Stays, by_bucket: BucketStays, rows: np.ndarray) -> tuple[Stays, BucketStays]:
@@ -243,9 +253,9 @@ def outcome_column(code: IntArray) -> IntArray:
 
 def _node_of_code(tally: Tally, nodes: Nodes) -> IntArray:
     """Return the node of each code in the tally's tables; -1 where there is none."""
-    place = np.full(len(tally.labels), -1)
+    place = np.full(tally.first_state + len(nodes.states), -1)
     n_outcomes = len(tally.rules.outcomes)
     place[LAPSED] = nodes.n_nodes - 1 if tally.rules.silence_us is not None else -1
     place[FIRST_OUTCOME : FIRST_OUTCOME + n_outcomes] = nodes.n_rows + np.arange(n_outcomes)
-    place[tally.first_state :] = 1 + np.arange(len(tally.states))
+    place[tally.first_state :] = 1 + np.arange(len(nodes.states))
     return place

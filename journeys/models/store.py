@@ -13,8 +13,8 @@ import pyarrow.parquet as pq
 
 from journeys.errors import StoreError
 from journeys.files import written_whole
+from journeys.models.memory import Nodes
 from journeys.models.model import JourneyModel
-from journeys.models.stays import Nodes
 from journeys.tally import store as tally_store
 
 if TYPE_CHECKING:
@@ -42,7 +42,8 @@ def save(fit: JourneyFit, path: str | os.PathLike[str]) -> None:
         parameters.
     """
     if fit.tally is not None:
-        tally_store.save(fit.tally, path, {HEAD: json.dumps({"open_moves": fit.open_moves}).encode()})
+        model = {"order": fit.nodes.order, "open_moves": fit.open_moves}
+        tally_store.save(fit.tally, path, {HEAD: json.dumps(model).encode()})
         return
     head = {
         "format_version": FORMAT_VERSION,
@@ -83,7 +84,7 @@ def load(path: str | os.PathLike[str]) -> JourneyFit:
     try:
         head = json.loads((pq.read_schema(path).metadata or {})[HEAD])
         if "open_moves" in head:
-            return JourneyModel(open_moves=head["open_moves"]).fit(tally_store.load(path))
+            return JourneyModel(order=head["order"], open_moves=head["open_moves"]).fit(tally_store.load(path))
         table = pq.read_table(path)
         columns = {name: table[name].to_numpy() for name in _COLUMNS}
     except FileNotFoundError:

@@ -2,26 +2,26 @@
 
 from __future__ import annotations
 
-import warnings
 from collections.abc import Sequence
+from contextlib import nullcontext
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
-import numpy as np
-
-from journeys.errors import JourneysWarning, LogError
+from journeys.checks import duration_text
+from journeys.intake.read import open_log
 from journeys.intake.rules import JourneyRules
-from journeys.kernels.records import FIRST_OUTCOME, OPEN
 from journeys.markup import frame_table
-from journeys.models.model import JourneyModel, refuse_without_outcome
+from journeys.models.model import refuse_without_outcome
+from journeys.questions.audit_checks import NO, Check, of_counts, of_patterns, of_silences
+from journeys.questions.silences import COLUMNS, other_silences
 from journeys.results import text_table
 from journeys.tally.count import count_log
+from journeys.tally.patterns import look_again
 from journeys.tally.tally import Tally
 
 if TYPE_CHECKING:
     import pandas as pd
 
-GOOD, CARE, NO = "good", "with care", "no"
 # Row numbers told per finding, and characters per cell, in the text for people.
 SHOWN, LONGEST = 5, 40
 
@@ -36,10 +36,14 @@ class Audit:
         The counts looked at.
     checks : DataFrame
         One row per check: check_name, value, verdict ("good", "with care", "no"), note.
+    silences : DataFrame
+        What other silences would say (see `journeys.questions.silences.other_silences`); no rows for a tally, of which
+        that cannot be told.
     """
 
     tally: Tally
     checks: pd.DataFrame
+    silences: pd.DataFrame
 
     @property
     def findings(self) -> pd.DataFrame:
@@ -67,6 +71,7 @@ class Audit:
         ]
         return (
             f"{self.tally.summary()}\nThis log {says} carry the model.\n\nChecks\n{text_table(_short(checks))}\n\n"
+            + _silences_text(self.silences)
             + ("Findings: kind, column, rows (their numbers count from 0 over the whole input)\n" if found else "")
             + (text_table(_short(found), right=[2]) if found else "Findings: none")
         )
@@ -80,10 +85,12 @@ class Audit:
     def _repr_html_(self) -> str:
         says = "can" if self.carries_model else "cannot"
         found = self.findings.drop(columns="rows")
-        return (
-            frame_table(self.checks, f"Checks: this log {says} carry the model", n_keys=1)
-            + frame_table(found, "Findings" if len(found) else "Findings: none", n_keys=1)
-        )  # fmt: skip
+        tables = [
+            (self.checks, f"Checks: this log {says} carry the model"),
+            (self.silences, "What other silences would say"),
+            (found, "Findings" if len(found) else "Findings: none"),
+        ]
+        return "".join(frame_table(frame, told, n_keys=1) for frame, told in tables if len(frame) or frame is found)
 
 
 def audit(source: Any, rules: JourneyRules | None = None, *, progress: bool = False) -> Audit:
@@ -92,7 +99,8 @@ def audit(source: Any, rules: JourneyRules | None = None, *, progress: bool = Fa
     Parameters
     ----------
     source : log or Tally
-        Anything `journeys.tally` reads, or a tally.
+        Anything `journeys.tally` reads, or a tally. A log is read once more for its patterns and once for every
+        silence; of a tally these are not told.
     rules : JourneyRules, optional
         What a journey is; not needed for a tally.
     progress : bool
@@ -123,22 +131,53 @@ def audit(source: Any, rules: JourneyRules | None = None, *, progress: bool = Fa
     import pandas as pd
 
     if isinstance(source, Tally):
-        tally = source
-    elif rules is None:
+        refuse_without_outcome(source)
+        return Audit(source, _frame(of_counts(source)), pd.DataFrame(columns=COLUMNS))
+    if rules is None:
         msg = "rules are missing; wanted a JourneyRules beside a log"
         raise TypeError(msg)
-    else:
-        tally = count_log(source, rules, progress=progress)
-    refuse_without_outcome(tally)
-    rows = [
-        _unreadable(tally),
-        _length(tally),
-        _sure(tally),
-        _undecided(tally),
-        *_outcomes(tally),
-        *_fit(tally),
-    ]
-    return Audit(tally, pd.DataFrame(rows, columns=["check_name", "value", "verdict", "note"]))
+    log = open_log(source, rules.columns, text=(rules.event,))
+    with log.spooled() if log.one_shot else nullcontext(log) as kept:
+        tally = count_log(kept, rules, progress=progress)
+        refuse_without_outcome(tally)
+        checks = of_counts(tally) + of_patterns(look_again(kept, rules, tally.log_start_us, tally.as_of_us), tally)
+        silences = other_silences(kept, tally, progress=progress)
+    if rules.silence_us is not None:
+        checks.append(of_silences(silences, duration_text(rules.silence_us)))
+    return Audit(tally, _frame(checks), silences)
+
+
+def _frame(checks: list[Check]) -> pd.DataFrame:
+    import pandas as pd
+
+    return pd.DataFrame(checks, columns=Check._fields)
+
+
+def _silences_text(silences: pd.DataFrame) -> str:
+    """Return the table of other silences for people."""
+    if not len(silences):
+        return ""
+    rows = [["silence", "fell quiet", "later came back", "soon back", "convert in the end", ""]]
+    for row in silences.to_dict("records"):
+        told = [_share(row, "came_back"), _share(row, "soon_back"), _share(row, "conversion")]
+        n = "" if _missing(row["n_silent"]) else f"{row['n_silent']:,.0f}"
+        rows.append([row["silence"], n, *told, row["note"] or ""])
+    about = "Other silences (soon back: within another quarter of it)\n"
+    return about + text_table(_short(rows), right=[1, 2, 3, 4]) + "\n\n"
+
+
+def _missing(value: Any) -> bool:
+    """Tell whether a cell holds no number."""
+    return value is None or value != value
+
+
+def _share(row: Any, name: str) -> str:
+    """Return a share of a row with its interval, if it has one."""
+    share, low, high = (row.get(name + end) for end in ("", "_low", "_high"))
+    if _missing(share):
+        return ""
+    told = f"{100 * share:.1f} %"
+    return told if _missing(low) or _missing(high) else f"{told} ({100 * low:.1f}-{100 * high:.1f})"
 
 
 def _where(rows: Sequence[int], n: int) -> str:
@@ -156,86 +195,3 @@ def _short(rows: list[list[str]]) -> list[list[str]]:
 
 def _percent(share: float, digits: int = 1) -> str:
     return f"{100 * share:.{digits}f} %"
-
-
-def _unreadable(tally: Tally) -> tuple[str, str, str, str]:
-    n = tally.record.n_unreadable
-    share, limit = n / max(tally.n_rows, 1), tally.rules.limits["unreadable"]
-    verdict = GOOD if share <= limit else NO
-    return (
-        "unreadable rows",
-        f"{n:,} of {tally.n_rows:,} ({_percent(share, 2)})",
-        verdict,
-        f"limit {_percent(limit, 2)}",
-    )
-
-
-def _length(tally: Tally) -> tuple[str, str, str, str]:
-    value = f"{tally.days:.1f} days"
-    if tally.rules.silence_us is None:
-        return "length of the log", value, GOOD, "no silence given: nothing lapses"
-    silences = tally.days / (tally.rules.silence_us / 86_400e6)
-    value += f", {silences:.1f} silences"
-    if silences <= 1:
-        return "length of the log", value, NO, "nobody can be seen to lapse: wanted more than one silence"
-    if silences < 1.5:
-        return (
-            "length of the log",
-            value,
-            CARE,
-            "under one and a half silences: times given conversion are shaky",
-        )
-    return "length of the log", value, GOOD, ""
-
-
-def _sure(tally: Tally) -> tuple[str, str, str, str]:
-    sure = int(tally.entries["n"][tally.entries["sure"] == 1].sum())
-    share = sure / max(tally.n_journeys, 1)
-    verdict = NO if not sure else GOOD if share >= 0.5 else CARE
-    note = "the others may have begun before the log" if share < 1 else ""
-    return "journeys whose start was seen", f"{sure:,} of {tally.n_journeys:,} ({_percent(share)})", verdict, note
-
-
-def _undecided(tally: Tally) -> tuple[str, str, str, str]:
-    n = int(tally.journeys["n"][tally.journeys["outcome"] == OPEN].sum())
-    share = n / max(tally.n_journeys, 1)
-    return (
-        "journeys undecided yet",
-        f"{n:,} of {tally.n_journeys:,} ({_percent(share)})",
-        GOOD if share < 0.5 else CARE,
-        "a plain count treats them as lost",
-    )
-
-
-def _outcomes(tally: Tally) -> list[tuple[str, str, str, str]]:
-    rows = []
-    for code, name in enumerate(tally.rules.outcomes, start=FIRST_OUTCOME):
-        n = int(tally.journeys["n"][tally.journeys["outcome"] == code].sum())
-        note = "" if n else "never seen: look at its spelling in the rules"
-        rows.append((f"journeys ended by {name}", f"{n:,}", GOOD if n >= 20 else CARE, note))
-    bare = tally.record.n("outcome_without_states")
-    share = bare / max(int(np.sum(tally.journeys["n"][tally.journeys["outcome"] >= FIRST_OUTCOME])), 1)
-    rows.append(
-        (
-            "outcomes with nothing before them",
-            f"{bare:,} ({_percent(share)} of outcomes)",
-            GOOD if share < 0.2 else CARE,
-            "are their earlier events missing from the log?" if bare else "",
-        )
-    )
-    return rows
-
-
-def _fit(tally: Tally) -> list[tuple[str, str, str, str]]:
-    """Fit once and tell what the rows of the matrix say of themselves."""
-    try:
-        with warnings.catch_warnings():
-            warnings.simplefilter("ignore", JourneysWarning)
-            fit = JourneyModel().fit(tally)
-    except LogError as error:
-        return [("a model can be fitted", "no", NO, str(error))]
-    rows = [("a model can be fitted", "yes", GOOD, "")]
-    for text in dict.fromkeys(fit.row_flags.values()):
-        names = [name for name, flag in fit.row_flags.items() if flag == text]
-        rows.append((text, ", ".join(names), CARE, f"answers that lean on these states are flagged {text!r}"))
-    return rows

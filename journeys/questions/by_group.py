@@ -9,9 +9,12 @@ from typing import Any, TypeVar
 import numpy as np
 
 from journeys.errors import LogError
-from journeys.models.fit import JourneyFit
-from journeys.models.group_fits import GroupFit, group_fits
+from journeys.kernels.arrays import IntArray
+from journeys.models.fit import JourneyFit, NotInChainError
+from journeys.models.group_fits import group_fits, grouped_tally, model_of
+from journeys.models.group_stack import Stack, group_parts, stacks
 from journeys.results import KNOWN, Estimates, Result
+from journeys.tally.groups import Group
 
 R = TypeVar("R", bound=Result)
 
@@ -34,8 +37,8 @@ def by_group(fit: JourneyFit, by: str | Sequence[str], ask: Callable[[JourneyFit
     Returns
     -------
     Result
-        Of the kind that `ask` gives. A group that cannot carry a fit is one row without a number, whose flag
-        says why.
+        Of the kind that `ask` gives. A group that cannot carry a fit, or never sees a state that is asked about,
+        is one row without a number, whose flag says why.
 
     Raises
     ------
@@ -46,39 +49,73 @@ def by_group(fit: JourneyFit, by: str | Sequence[str], ask: Callable[[JourneyFit
     """
     names = [by] if isinstance(by, str) else list(by)
     found = group_fits(fit, names)
-    answers = [None if one.fit is None else ask(one.fit) for one in found]
-    first = next((answer for answer in answers if answer is not None), None)
-    if first is None:
-        reasons = "; ".join(dict.fromkeys(one.why for one in found))
-        msg = f"by: no group of {', '.join(names)} can carry a fit ({reasons}); wanted larger groups or a longer log"
-        raise LogError(msg)
-    whole = [_blank(first, one) if answer is None else answer for one, answer in zip(found, answers, strict=True)]
-    return _one_under_another(first, names, found, whole)
+    why, blocks = [one.why for one in found], []
+    for g, one in enumerate(found):
+        if one.fit is not None:
+            try:
+                answer = ask(one.fit)
+            except NotInChainError as error:
+                why[g] = error.briefly
+            else:
+                blocks.append((answer, np.full(len(answer.keys), g)))
+    return _one_under_another(names, [one.values for one in found], why, blocks)
 
 
-def _one_under_another(first: R, names: list[str], found: list[GroupFit], answers: list[R]) -> R:
+def by_stack(fit: JourneyFit, by: str | Sequence[str], ask: Callable[[Stack], tuple[R, IntArray]]) -> R:
+    """Do the same for a question that can be asked of many groups in one go.
+
+    Parameters
+    ----------
+    fit, by
+        As in `by_group`.
+    ask : callable
+        From the fits of several groups to their answers, and which group of the stack each row is about. It is
+        about probabilities: what the buckets pull at times is not there.
+    """
+    names = [by] if isinstance(by, str) else list(by)
+    tally = grouped_tally(fit)
+    model = model_of(fit)
+    parts = group_parts(tally, names, model.order)
+    blocks = []
+    for stack in stacks(tally, parts, model, n_moments=1):
+        answer, group = ask(stack)
+        blocks.append((answer, stack.groups[group]))
+    return _one_under_another(names, parts.values, parts.why, blocks)
+
+
+def _one_under_another(
+    names: list[str], values: Sequence[Group], why: Sequence[str], blocks: list[tuple[R, IntArray]]
+) -> R:
+    """Return answers as one, group by group; `blocks` say to which group each of their rows belongs."""
     import pandas as pd
 
-    parts = []
-    for one, answer in zip(found, answers, strict=True):
-        values = dict(zip(names, one.values, strict=True))
-        group = pd.DataFrame({name: [value] * len(answer.keys) for name, value in values.items()})
-        parts.append(pd.concat([group, answer.keys.reset_index(drop=True)], axis=1))
+    if not blocks:
+        msg = (
+            f"by: no group of {', '.join(names)} can carry a fit ({'; '.join(dict.fromkeys(why))}); wanted larger "
+            "groups or a longer log"
+        )
+        raise LogError(msg)
+    first = blocks[0][0]
+    blocks = blocks + [(_blank(first, text), np.full(1, g)) for g, text in enumerate(why) if text]
+    answers, group = [answer for answer, _ in blocks], np.concatenate([of for _, of in blocks])
+    order = np.argsort(group, kind="stable")
+    columns = pd.DataFrame(list(values), columns=names).iloc[group].reset_index(drop=True)
+    keys = pd.concat([columns, pd.concat([answer.keys for answer in answers], ignore_index=True)], axis=1)
     extra: dict[str, Any] = {}
     for name in (f.name for f in fields(first) if f.name in _BY_ROW):
         held = [getattr(answer, name) for answer in answers]
-        extra[name] = None if any(one is None for one in held) else np.concatenate(held, axis=1)
+        extra[name] = None if any(one is None for one in held) else np.concatenate(held, axis=1)[:, order]
     return replace(
         first,
-        keys=pd.concat(parts, ignore_index=True),
-        estimates=Estimates.joined([answer.estimates for answer in answers]),
-        flag=np.concatenate([answer.flag for answer in answers]),
-        counts={name: np.concatenate([answer.counts[name] for answer in answers]) for name in first.counts},
+        keys=keys.iloc[order].reset_index(drop=True),
+        estimates=Estimates.joined([answer.estimates for answer in answers]).take(order),
+        flag=np.concatenate([answer.flag for answer in answers])[order],
+        counts={name: np.concatenate([answer.counts[name] for answer in answers])[order] for name in first.counts},
         **extra,
     )
 
 
-def _blank(like: R, group: GroupFit) -> R:
+def _blank(like: R, why: str) -> R:
     """Return the answer of a group that cannot carry a fit: one row without a number."""
     nothing = np.full(1, np.nan)
     keys = like.keys.iloc[:1].copy()
@@ -92,7 +129,7 @@ def _blank(like: R, group: GroupFit) -> R:
         like,
         keys=keys,
         estimates=Estimates(nothing, nothing, nothing, np.array([KNOWN], dtype=object), nothing, np.zeros(1, bool)),
-        flag=np.array([group.why], dtype=object),
+        flag=np.array([why], dtype=object),
         counts={name: np.zeros(1, values.dtype) for name, values in like.counts.items()},
         **extra,
     )

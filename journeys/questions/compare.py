@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Collection, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import partial
 from typing import ClassVar
 
@@ -15,8 +15,9 @@ from journeys.kernels.arrays import BoolArray, FloatArray
 from journeys.kernels.intervals import t_test, variance_from_buckets
 from journeys.models.fit import JourneyFit
 from journeys.models.group_fits import GroupFit, group_fits, rest_fit
-from journeys.questions.differences import REACHED, Answer, Key, Side, answers_of, live_mask
-from journeys.results import KNOWN, PLAIN, Estimates, Result
+from journeys.questions.differences import REACHED, TIMES, Answer, Key, Side, answers_of, live_mask
+from journeys.questions.distances import Differences, Distance, distance
+from journeys.results import KNOWN, PLAIN, Result
 from journeys.tally.groups import Group
 from journeys.tally.tally import Tally
 
@@ -84,14 +85,19 @@ def compare(
     Notes
     -----
     Customers are kept in the same 200 buckets whatever the log, so that the difference of the two influences of
-    each bucket tells its variance even where the same people stand on both sides. Two-sided t-tests. An interval
-    is symmetric about the difference; where either side rests on too few events there is none. A difference is
-    an association: what else changed between the two sides is in it.
+    each bucket tells its variance even where the same people stand on both sides. Shares are told apart by the
+    difference of their logits, steps and days by that of their logarithms, in two-sided t-tests: on the plain scale a
+    small number comes with a small standard error, and small groups are called lower far too often. The bounds of
+    that difference, less than the estimate and more, are turned back by moving both numbers, the less sure one
+    further, so that an interval holds 0 where its test finds nothing. std_error is that of the difference itself.
+    Where either side rests on too few events there is no interval. A difference is an association: what else changed
+    between the two sides is in it.
 
     References
     ----------
     B. Efron, The Jackknife, the Bootstrap and Other Resampling Plans, SIAM 1982, chapter 6. S. Holm, A simple
-    sequentially rejective multiple test procedure, Scand. J. Statist. 6 (1979) 65-70.
+    sequentially rejective multiple test procedure, Scand. J. Statist. 6 (1979) 65-70. B. Woolf, On estimating the
+    relation between blood group and disease, Ann. Human Genet. 19 (1955) 251-253 (logits of shares).
 
     Examples
     --------
@@ -145,6 +151,7 @@ class _Difference:
     b: float
     std_error: float
     df: float
+    apart: Distance
     known: bool
     flag: str
 
@@ -177,13 +184,17 @@ def _difference(a: Answer | None, b: Answer | None, key: Key, live: BoolArray, k
     flags = [] if a is not None and b is not None else [ON_ONE_SIDE]
     for side, one in (("a", a), ("b", b)):
         flags += [f"{side}: {one.flag}"] if one is not None and one.flag else []
-    std_error = np.nan if few and not known else float(np.sqrt(variance))
-    return _Difference(key, value_a, value_b, std_error, float(df), known, "; ".join(flags))
+    apart = distance(value_a, value_b, pull_a[live], pull_b[live], is_share=key[0] not in TIMES)
+    std_error = float(np.sqrt(variance))
+    if few and not known:
+        std_error, apart = np.nan, replace(apart, std_error=np.nan)
+    return _Difference(key, value_a, value_b, std_error, float(df), apart, known, "; ".join(flags))
 
 
 def _without_fit(group: GroupFit, rest: GroupFit) -> _Difference:
     why = group.why or f"the rest: {rest.why}"
-    return _Difference((REACHED, "entry", ""), np.nan, np.nan, np.nan, np.nan, False, why)
+    apart = Distance(PLAIN, np.nan, np.nan, np.nan, 0.5)
+    return _Difference((REACHED, "entry", ""), np.nan, np.nan, np.nan, np.nan, apart, False, why)
 
 
 def _table(
@@ -194,15 +205,21 @@ def _table(
     a, b, std_error, df = (
         np.array([getattr(one, name) for _, one in rows], np.float64) for name in ("a", "b", "std_error", "df")
     )
+    size, spread, spread_df, lean = (
+        np.array([getattr(one.apart, name) for _, one in rows], np.float64)
+        for name in ("size", "std_error", "df", "lean")
+    )
+    scales = np.array([one.apart.scale for _, one in rows], dtype=object)
     known = np.array([one.known for _, one in rows], bool)
-    p_value = t_test(b - a, std_error, df)
+    p_value = t_test(size, spread, spread_df)
     keys = {name: [group[i] for group, _ in rows] for i, name in enumerate(names)}
     keys |= {part: [one.key[i] for _, one in rows] for i, part in enumerate(("measure", "state", "next_state"))}
     no_interval = ~np.isfinite(std_error) & ~known
     return CompareResult(
         keys=pd.DataFrame(keys),
-        estimates=Estimates(
-            b - a, std_error, df, np.where(known, KNOWN, PLAIN).astype(object), np.full(len(a), np.nan), no_interval
+        estimates=Differences(
+            b - a, std_error, df, np.where(known, KNOWN, PLAIN).astype(object), np.full(len(a), np.nan), no_interval,
+            a=a, b=b, scales=scales, spread=spread, spread_df=spread_df, lean=lean,
         ),
         flag=np.array([one.flag for _, one in rows], dtype=object),
         counts={

@@ -212,7 +212,7 @@ def _by_model(fit: JourneyFit, to: str | Collection[str] | None, touchpoints: st
     n, known = len(it.names) + 1, fit.influence is None
     value, std_error, df = np.full(n, np.nan), np.full(n, np.nan), np.full(n, np.nan)
     if it.way.conversion > 0:
-        value, by_p = equal_split(it.way, np.concatenate(it.groups), derive=not known)
+        value, by_p = equal_split(it.way, it.groups, derive=not known)
         variance, df = (np.zeros(n), np.full(n, np.inf)) if known else variance_from_buckets(influenced(fit, by_p))
         std_error = np.sqrt(variance)
     estimates = probabilities(fit, value, std_error, df, np.full(n, it.n_conversions), LOGIT)

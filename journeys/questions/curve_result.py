@@ -16,7 +16,7 @@ from journeys.kernels.intervals import variance_from_buckets
 from journeys.markup import frame_table, plain_number, short_name
 from journeys.models.fit import JourneyFit
 from journeys.models.what_if import WhatIf
-from journeys.questions.counted import inverted, up
+from journeys.questions.counted import inverted, shares_about, up
 from journeys.questions.elapsed import Walk
 from journeys.questions.first_passage import UNIT_DAYS
 from journeys.questions.linear import TOO_FEW, leaning, probabilities, starts_counted
@@ -260,10 +260,9 @@ class PassageCurve:
         )
 
     def _repr_html_(self) -> str:
-        few = self._few().drop(columns="confidence_level")
         whom = "of those who reach it" if self.given else "of all who start"
-        caption = f"From {short_name(self.start)} to {', '.join(map(short_name, self.to))}, share {whom} by {self.unit}"
-        return frame_table(few, f"{caption}, intervals at {100 * self.confidence_level:g} %", n_keys=1)
+        told = f"From {short_name(self.start)} to {', '.join(map(short_name, self.to))}, share {whom} by {self.unit}"
+        return frame_table(self._few(), told, n_keys=1)
 
     @cached_property
     def _shown(self) -> tuple[FloatArray, Estimates, np.ndarray]:
@@ -318,12 +317,13 @@ class PassageCurve:
         spreads = [self._spread(one, shares) for one in points]
         larger = np.argmax(np.stack([np.nan_to_num(one[0]) for one in spreads]), axis=0)
         std_error, df = (np.stack([one[i] for one in spreads])[larger, np.arange(len(at))] for i in (0, 1))
-        low = self._solved.inverse(np.maximum(shares - std_error, 1e-12))
-        high = self._solved.inverse(shares + std_error)
+        # never met where there is no such share
+        asked = np.nan_to_num(shares_about(shares, std_error), nan=2.0)
+        about = self._solved.inverse(asked.ravel()).reshape(asked.shape)
         few = probabilities(self.fit, shares, np.nan_to_num(std_error), df, np.zeros(len(at)), LOGIT).few
         first = None if not whole else 0 if self.clock == "steps" else -1
         known = np.full(len(at), self.fit.influence is None)
-        estimates = inverted(at, low, high, df, few & np.isfinite(at), known, first)
+        estimates = inverted(at, about, df, few & np.isfinite(at), known, first)
         lost, never = ~np.isfinite(at), shares >= self.probability
         flags = [(np.full(len(at), self.probability <= 0), UNREACHABLE), (lost & never, NEVER_THAT_MANY)]
         flags += [(lost & ~never, NOT_IN_REACH), (estimates.few & ~lost, TOO_FEW)]

@@ -27,6 +27,8 @@ Key = tuple[str, str, str]
 Side = JourneyFit | Tally
 REACHED = "reached"
 STAGE = "stage reached"
+# Measures that are no shares.
+TIMES = ("steps", "days")
 THE_END_US = np.array([LONGEST_US], np.int64)
 
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from journeys.kernels.absorption import Passage
-from journeys.kernels.arrays import BoolArray, FloatArray, sum_at
+from journeys.kernels.arrays import BoolArray, FloatArray, IntArray, sum_at
 from journeys.kernels.intervals import variance_from_buckets
 from journeys.kernels.visits import often_visited
 from journeys.models.fit import JourneyFit
@@ -19,7 +19,9 @@ TOO_FEW = "too few"
 DOUBTFUL = "too extreme to compute"
 
 
-def probability_spread(fit: JourneyFit, found: Passage) -> tuple[FloatArray, FloatArray]:
+def probability_spread(
+    fit: JourneyFit, found: Passage, n_buckets: IntArray | None = None
+) -> tuple[FloatArray, FloatArray]:
     """Return standard error and degrees of freedom of the probability of a passage, from every start.
 
     Parameters
@@ -28,6 +30,8 @@ def probability_spread(fit: JourneyFit, found: Passage) -> tuple[FloatArray, Flo
         The chain; a known one gives zeros, and infinite degrees of freedom.
     found : Passage
         Through its moves.
+    n_buckets : ndarray of int, shape (n_states + 1,), optional
+        Buckets that are not empty, by start, where the chain is that of several groups; default: all.
 
     Returns
     -------
@@ -37,7 +41,7 @@ def probability_spread(fit: JourneyFit, found: Passage) -> tuple[FloatArray, Flo
     if fit.influence is None:
         n = len(found.probability)
         return np.zeros(n), np.full(n, np.inf)
-    return _probability_spread(found, found.probability_changes(fit.influence.probability))
+    return _probability_spread(found, found.probability_changes(fit.influence.probability), n_buckets)
 
 
 def passage_spread(fit: JourneyFit, found: Passage, *, steps: bool) -> dict[str, tuple[FloatArray, FloatArray]]:
@@ -69,13 +73,15 @@ def passage_spread(fit: JourneyFit, found: Passage, *, steps: bool) -> dict[str,
     }
 
 
-def _probability_spread(found: Passage, change: FloatArray) -> tuple[FloatArray, FloatArray]:
+def _probability_spread(
+    found: Passage, change: FloatArray, n_buckets: IntArray | None = None
+) -> tuple[FloatArray, FloatArray]:
     # where nothing else can happen the rows of the moves sum to 1, whatever the buckets; what is left is rounding
-    return _spread_of(np.where(found.certain, 0.0, change))
+    return _spread_of(np.where(found.certain, 0.0, change), n_buckets)
 
 
-def _spread_of(influence: FloatArray) -> tuple[FloatArray, FloatArray]:
-    variance, df = variance_from_buckets(influence)
+def _spread_of(influence: FloatArray, n_buckets: IntArray | None = None) -> tuple[FloatArray, FloatArray]:
+    variance, df = variance_from_buckets(influence, n_buckets)
     return np.sqrt(variance), df
 
 

@@ -5,16 +5,21 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import partial
-from typing import ClassVar
+from typing import TYPE_CHECKING, ClassVar
 
 import numpy as np
 
 from journeys import checks
 from journeys.kernels.absorption import passage
+from journeys.kernels.arrays import IntArray
 from journeys.models.fit import JourneyFit
-from journeys.questions.by_group import by_group
+from journeys.models.group_stack import Stack
+from journeys.questions.by_group import by_stack
 from journeys.questions.linear import DOUBTFUL, TOO_FEW, leaning, probabilities, probability_spread, starts_counted
 from journeys.results import LOGIT, Estimates, Result, joined_flags
+
+if TYPE_CHECKING:
+    import pandas as pd
 
 UNREACHABLE = "cannot be reached"
 
@@ -70,37 +75,56 @@ def outcomes(
     import pandas as pd
 
     level = checks.confidence_level(confidence_level)
-    if by is not None:
-        return by_group(fit, by, partial(outcomes, confidence_level=level))
-    nodes = fit.nodes
-    if not nodes.outcomes:
+    if not fit.nodes.outcomes:
         msg = "this chain has no outcomes; ask first_passage to a state instead"
         raise ValueError(msg)
+    if by is not None:
+        return by_stack(fit, by, partial(_of_stack, confidence_level=level))
+    estimates, flag = _answers(fit)
+    keys = pd.DataFrame(_keys(fit.nodes.labels[: fit.nodes.n_rows], fit.outcomes))
+    return _result(keys, estimates, flag, level)
+
+
+def _of_stack(stack: Stack, confidence_level: float) -> tuple[OutcomesResult, IntArray]:
+    """Return the answers of several groups at once, and which group of the stack each row is about."""
+    import pandas as pd
+
+    estimates, flag = _answers(stack.fit, stack.live.sum(axis=1)[stack.row_group])
+    names = [name for states in stack.states for name in ("entry", *states)]
+    outcomes = stack.fit.outcomes
+    result = _result(pd.DataFrame(_keys(names, outcomes)), estimates, flag, confidence_level)
+    return result, np.repeat(stack.row_group, len(outcomes))
+
+
+def _answers(fit: JourneyFit, n_buckets: IntArray | None = None) -> tuple[Estimates, np.ndarray]:
+    """Return estimates and flags, start by start."""
+    nodes, n_outcomes = fit.nodes, len(fit.outcomes)
     parts, unreachable, doubtful = [], [], []
     p, trials = fit.probability, starts_counted(fit)
-    for outcome in nodes.outcomes:
-        to = passage(nodes.n_rows, nodes.n_nodes, fit.move_state, fit.move_target, p, p, p, fit.target_mask(outcome))
-        std_error, df = probability_spread(fit, to)
+    for node in range(nodes.n_rows, nodes.n_nodes):
+        target = np.arange(nodes.n_nodes) == node
+        to = passage(nodes.n_rows, nodes.n_nodes, fit.move_state, fit.move_target, p, p, p, target)
+        std_error, df = probability_spread(fit, to, n_buckets)
         parts.append(probabilities(fit, to.probability, std_error, df, trials, LOGIT))
         unreachable.append((to.probability == 0) & ~to.doubtful)
         doubtful.append(to.doubtful)
     joined = Estimates.joined(parts)
-    lean = [(np.tile(mask, len(nodes.outcomes)), text) for text, mask in leaning(fit).items()]
+    lean = [(np.tile(mask, n_outcomes), text) for text, mask in leaning(fit).items()]
     n = len(joined.value)
     flags = [(np.concatenate(unreachable), UNREACHABLE), (np.concatenate(doubtful), DOUBTFUL), (joined.few, TOO_FEW)]
     flag = joined_flags([*flags, *lean], n)
-    # Computed outcome by outcome, told start by start.
-    order = np.arange(n).reshape(len(nodes.outcomes), nodes.n_rows).T.ravel()
-    keys = pd.DataFrame(
-        {
-            "start_state": np.repeat(np.array(nodes.labels[: nodes.n_rows], dtype=object), len(nodes.outcomes)),
-            "outcome": np.tile(np.array(nodes.outcomes, dtype=object), nodes.n_rows),
-        }
-    )
-    return OutcomesResult(
-        keys=keys,
-        estimates=joined.take(order),
-        flag=flag[order],
-        counts={"n_effective": joined.n_effective[order]},
-        confidence_level=level,
-    )
+    # computed outcome by outcome, told start by start
+    order = np.arange(n).reshape(n_outcomes, nodes.n_rows).T.ravel()
+    return joined.take(order), flag[order]
+
+
+def _keys(starts: Sequence[str], outcomes: Sequence[str]) -> dict[str, np.ndarray]:
+    return {
+        "start_state": np.repeat(np.array(starts, dtype=object), len(outcomes)),
+        "outcome": np.tile(np.array(outcomes, dtype=object), len(starts)),
+    }
+
+
+def _result(keys: pd.DataFrame, estimates: Estimates, flag: np.ndarray, level: float) -> OutcomesResult:
+    counts = {"n_effective": estimates.n_effective}
+    return OutcomesResult(keys=keys, estimates=estimates, flag=flag, counts=counts, confidence_level=level)

@@ -2,17 +2,48 @@
 
 from __future__ import annotations
 
-from collections.abc import Collection
+from collections.abc import Collection, Sequence
+from functools import partial
+from typing import overload
 
 import numpy as np
 
 from journeys import checks
 from journeys.kernels.phase_type import DENSE
-from journeys.models.fit import JourneyFit
+from journeys.models.fit import JourneyFit, NotInChainError
 from journeys.questions.curve_result import PassageCurve
 from journeys.questions.elapsed import NO_DISTRIBUTION, Walk, elapsed, timed, walk_to
 from journeys.questions.first_passage import UNIT_DAYS
+from journeys.questions.group_curves import GroupCurves, group_curves
 from journeys.questions.solved_curve import Solved, SolvedSteps, SolvedTime
+
+
+@overload
+def passage_curve(
+    fit: JourneyFit,
+    to: str | Collection[str] | None = None,
+    start: str = "entry",
+    clock: str = "time",
+    *,
+    by: None = None,
+    given: bool = False,
+    unit: str = "days",
+    confidence_level: float = 0.95,
+) -> PassageCurve: ...
+
+
+@overload
+def passage_curve(
+    fit: JourneyFit,
+    to: str | Collection[str] | None = None,
+    start: str = "entry",
+    clock: str = "time",
+    *,
+    by: str | Sequence[str],
+    given: bool = False,
+    unit: str = "days",
+    confidence_level: float = 0.95,
+) -> GroupCurves: ...
 
 
 def passage_curve(
@@ -21,10 +52,11 @@ def passage_curve(
     start: str = "entry",
     clock: str = "time",
     *,
+    by: str | Sequence[str] | None = None,
     given: bool = False,
     unit: str = "days",
     confidence_level: float = 0.95,
-) -> PassageCurve:
+) -> PassageCurve | GroupCurves:
     """Return the share that has reached `to` by any time, from one start.
 
     Parameters
@@ -37,6 +69,8 @@ def passage_curve(
         "entry" or a state.
     clock : {"time", "steps"}
         Elapsed time, or the number of moves (the one from entry counts).
+    by : str or sequence of str, optional
+        Columns that journeys are grouped by: one fit and one curve per group.
     given : bool
         False: the share of all who start, which ends at the probability of ever reaching `to`. True: the share
         of those who do reach it, which ends at 1.
@@ -49,13 +83,17 @@ def passage_curve(
     -------
     PassageCurve
         `.at(times)` for numbers, `.to_frame(times)` for numbers with bands, `.quantile(p)` for the time by
-        which a share has reached it. The bands hold at each time by itself.
+        which a share has reached it. The bands hold at each time by itself. With `by` the same of every group
+        (`GroupCurves`): `.at(times)` is an array of shape (n_groups, n_times), the frames have the columns of the
+        groups first, `.curves` holds the curve of each group by its values. A group that cannot carry a fit, or
+        never sees the start or a state of `to`, has rows without a number, whose flag says why.
 
     Raises
     ------
     ValueError
-        If an argument is none of those; if `start` is part of `to`; if a known chain has dwells on the way
-        without a distribution; if a curve in time is asked of more than 500 states.
+        If an argument is none of those; if a column is not one that journeys are grouped by; if `start` is part
+        of `to`; if a known chain has dwells on the way without a distribution; if a curve in time is asked of more
+        than 500 states.
 
     Notes
     -----
@@ -90,6 +128,18 @@ def passage_curve(
     if not isinstance(given, bool):
         msg = f"given: got {given!r}; wanted True (of those who reach it) or False (of all who start)"
         raise ValueError(msg)
+    if by is not None:
+        _start(fit, start, walk_to(fit, to))
+        ask = partial(_curve, to=to, start=start, clock=clock, given=given, unit=unit, confidence_level=level)
+        return group_curves(fit, by, ask)
+    return _curve(fit, to, start, clock, given=given, unit=unit, confidence_level=level)
+
+
+def _curve(
+    fit: JourneyFit, to: str | Collection[str] | None, start: str, clock: str, *, given: bool, unit: str,
+    confidence_level: float,
+) -> PassageCurve:  # fmt: skip
+    """Return the curve of one chain."""
     walk = walk_to(fit, to)
     row = _start(fit, start, walk)
     share = timed(fit, walk).probability
@@ -117,7 +167,7 @@ def passage_curve(
         clock=clock,
         given=given,
         unit=unit if clock == "time" else "steps",
-        confidence_level=level,
+        confidence_level=confidence_level,
         _walk=walk,
         _solved=solved,
         _share=share,
@@ -125,12 +175,15 @@ def passage_curve(
 
 
 def _start(fit: JourneyFit, start: str, walk: Walk) -> int:
-    labels = fit.nodes.labels[: fit.nodes.n_rows]
-    if start not in labels:
-        known = ", ".join(repr(name) for name in labels[:12])
-        msg = f"start={start!r} is no state of this chain; wanted one of {known}"
+    rows = np.array([0]) if start == "entry" else fit.nodes.rows_of(start)
+    if not len(rows):
+        known = ", ".join(repr(name) for name in fit.nodes.labels[: fit.nodes.n_rows][:12])
+        raise NotInChainError(start, f"start={start!r} is no state of this chain; wanted one of {known}")
+    if len(rows) > 1:
+        told = ", ".join(repr(fit.nodes.labels[row]) for row in rows[:12])
+        msg = f"start={start!r} stands for {len(rows)} states of this chain; wanted one of {told}"
         raise ValueError(msg)
-    row = labels.index(start)
+    row = int(rows[0])
     if walk.is_target[row]:
         msg = f"start={start!r} is itself in `to`, so nothing is awaited; wanted another start, or return_time"
         raise ValueError(msg)

@@ -13,7 +13,7 @@ from journeys.kernels.intervals import variance_from_buckets
 from journeys.kernels.phase_type import DENSE, Steps
 from journeys.kernels.renewal import Curve, curve, lattice_curve
 from journeys.models.fit import JourneyFit
-from journeys.questions.counted import inverted, up
+from journeys.questions.counted import SIDES, inverted, shares_about, up
 from journeys.questions.elapsed import NO_DISTRIBUTION, Elapsed, Walk, elapsed, reach_gradient, timed, walk_to
 from journeys.questions.linear import TOO_FEW, probabilities
 from journeys.questions.outcomes import UNREACHABLE
@@ -122,14 +122,13 @@ def quantiles_of_moves(
 class _Found:
     """Quantiles and their bands, arrays of shape (n_starts, n_levels).
 
-    `value` is what is told, `at` where the curve meets the level, `low` and `high` where it meets the level one
-    standard error down and up (NaN: no band), `std_error` and `df` those of the share reached.
+    `value` is what is told, `at` where the curve meets the level, `about`, shape (n_starts, n_levels, n_sides), where
+    it meets the level some standard errors down and up (NaN: no band), `std_error` and `df` those of the share reached.
     """
 
     value: FloatArray
     at: FloatArray
-    low: FloatArray
-    high: FloatArray
+    about: FloatArray
     std_error: FloatArray
     df: FloatArray
     why: str = ""
@@ -160,7 +159,7 @@ class _Ask:
     def nothing(self, why: str) -> _Found:
         """Return no answer, and why."""
         none = np.full(self.shape, np.nan)
-        return _Found(none, none, none, none, none, none, why)
+        return _Found(none, none, np.full((*self.shape, len(SIDES)), np.nan), none, none, why)
 
     def conditional(self, by_reached: FloatArray, which: IntArray, level: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Return standard error and degrees of freedom of shares of those who ever reach the target.
@@ -185,8 +184,8 @@ class _Ask:
         told = np.full(n, self.levels[i])
         finite: BoolArray = np.isfinite(value) & ~at_target
         few = probabilities(self.fit, told, std_error, df, np.zeros(n), LOGIT).few & finite
-        places = (np.where(at_target, 0.0, found.at[:, i]), found.low[:, i], found.high[:, i])
-        estimates = inverted(*places, df, few, at_target | known, found.first)
+        at = np.where(at_target, 0.0, found.at[:, i])
+        estimates = inverted(at, found.about[:, i], df, few, at_target | known, found.first)
         no_band: BoolArray = finite & np.isnan(found.std_error[:, i]) & (not known)
         flag = joined_flags(
             [
@@ -208,20 +207,19 @@ def _of_steps(ask: _Ask) -> _Found:
         walk.n_states, walk.n_nodes, walk.state, walk.target, fit.probability[walk.origin], walk.is_target
     )
     value, at = (one[ask.starts] for one in steps.quantiles(ask.wanted))
-    low, high, std_error, df = (np.full(ask.shape, np.nan) for _ in range(4))
+    std_error, df = (np.full(ask.shape, np.nan) for _ in range(2))
+    about = np.full((*ask.shape, len(SIDES)), np.nan)
     has = np.isfinite(value) & ~walk.is_target[ask.starts][:, None]
     too_much = steps.gradient_work(2.0 * value[has]) > STEP_WORK or value[has].max(initial=0.0) > 100_000
     if fit.influence is not None and has.any() and not too_much:
         who, level = np.nonzero(has)
         std_error[has], df[has] = _spread_of_steps(ask, steps, who, value[has].astype(np.int64))
-        for ends, sign in ((low, -1.0), (high, 1.0)):
+        shares = shares_about(np.array(ask.levels)[level], std_error[has]) * ask.share[ask.starts[who], None]
+        for side in range(len(SIDES)):
             shifted = np.full(ask.wanted.shape, np.nan)
-            shares = np.array(ask.levels)[level] + sign * std_error[has]
-            inside = (shares > 0) & (shares < 1)
-            shifted[ask.starts[who[inside]], level[inside]] = shares[inside] * ask.share[ask.starts[who[inside]]]
-            ends[:] = steps.quantiles(shifted)[1][ask.starts]
-            ends[who[~inside], level[~inside]] = np.inf if sign > 0 else 0.0
-    return _Found(value, at, low, high, std_error, df, no_band=BY_CURVE if too_much else TOO_FEW, first=0)
+            shifted[ask.starts[who], level] = shares[:, side]
+            about[..., side] = steps.quantiles(shifted)[1][ask.starts]
+    return _Found(value, at, about, std_error, df, no_band=BY_CURVE if too_much else TOO_FEW, first=0)
 
 
 def _spread_of_steps(ask: _Ask, steps: Steps, who: IntArray, n: IntArray) -> tuple[FloatArray, FloatArray]:
@@ -257,18 +255,18 @@ def _of_time(ask: _Ask) -> _Found:
     at = np.full(ask.shape, np.nan)
     for row in who:
         at[row] = curves[place[row]].inverse(ask.wanted[ask.starts[row]])
-    low, high, std_error, df = (np.full(ask.shape, np.nan) for _ in range(4))
+    std_error, df = (np.full(ask.shape, np.nan) for _ in range(2))
+    about = np.full((*ask.shape, len(SIDES)), np.nan)
     work = len(who) * n_levels * len(it.renewal.leading)
     if ask.fit.influence is not None and len(who) and work <= TIME_WORK:
         std_error[who], df[who] = _spread_of_time(ask, it, who, at[who])
         for row in who:
-            here, levels = curves[place[row]], np.array(ask.levels)
-            share = ask.share[ask.starts[row]]
-            low[row] = here.inverse(np.maximum(levels - std_error[row], 0.0) * share)
-            high[row] = np.where(levels + std_error[row] < 1, here.inverse((levels + std_error[row]) * share), np.inf)
+            shares = shares_about(np.array(ask.levels), std_error[row]) * ask.share[ask.starts[row]]
+            # never met where there is no such share
+            about[row] = curves[place[row]].inverse(np.nan_to_num(shares, nan=2.0))
     value = up(at) if it.lattice else at
     no_band = BY_CURVE if work > TIME_WORK else TOO_FEW
-    return _Found(value, at, low, high, std_error, df, no_band=no_band, first=-1 if it.lattice else None)
+    return _Found(value, at, about, std_error, df, no_band=no_band, first=-1 if it.lattice else None)
 
 
 def _curves(ask: _Ask, it: Elapsed) -> list[Curve]:

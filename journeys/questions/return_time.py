@@ -159,13 +159,14 @@ def _names(fit: JourneyFit, state: str | Collection[str] | None) -> list[str]:
             raise ValueError(msg)
         return list(fit.states)
     names = [state] if isinstance(state, str) else list(dict.fromkeys(state))
-    unknown = [name for name in names if name not in fit.states]
+    unknown = [name for name in names if not len(fit.nodes.rows_of(name))]
     if unknown or not names:
         got = repr(unknown[0]) if unknown else "none"
         more = f" and {len(fit.states) - 12} more" if len(fit.states) > 12 else ""
         msg = f"state: got {got}; wanted one or more of {', '.join(map(repr, fit.states[:12]))}{more}"
         raise ValueError(msg)
-    return names
+    rows = dict.fromkeys(np.concatenate([fit.nodes.rows_of(name) for name in names]).tolist())
+    return [fit.nodes.labels[row] for row in rows]
 
 
 def _walked(fit: JourneyFit, rows: IntArray, how: Plan, clock: str, restart: bool) -> Walked:
@@ -175,7 +176,10 @@ def _walked(fit: JourneyFit, rows: IntArray, how: Plan, clock: str, restart: boo
 
     def walks(state: IntArray, target: IntArray) -> list[Walk]:
         return [
-            return_walk(n_rows, fit.nodes.n_nodes, state, target, int(row), restart=restart, never_left=stuck)
+            return_walk(
+                n_rows, fit.nodes.n_nodes, state, target, int(row), restart=restart, never_left=stuck,
+                as_good=fit.nodes.rows_of(fit.nodes.last_states[row - 1]) if fit.nodes.last else None,
+            )
             for row, stuck in zip(rows, never_left, strict=True)
         ]
 

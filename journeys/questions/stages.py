@@ -139,7 +139,7 @@ def _named(fit: JourneyFit, given: Sequence[str] | None) -> tuple[str, ...]:
     if not names:
         msg = "stages: got none; wanted states in order"
         raise ValueError(msg)
-    known = tuple(dict.fromkeys((*fit.states, *counted)))
+    known = tuple(dict.fromkeys((*fit.nodes.last_states, *counted)))
     for name in names:
         if name not in known:
             raise ValueError(_unknown(name, known, fit))
@@ -161,10 +161,17 @@ def _answer(fit: JourneyFit, names: tuple[str, ...], within_us: int | None, leve
     import pandas as pd
 
     asked = (*names, CONVERTED) if fit.converted else names
-    told, rows = rows_by_model(fit, asked, within_us), None
+    by_model = fit.nodes.order == 1
+    told, rows = rows_by_model(fit, asked, within_us) if by_model else [], None
     if fit.tally is not None and fit.tally.rules.stages == names:
         rows = stage_rows(fit.tally)
         told += rows_by_log(fit.tally, rows, asked, within_us)
+    elif not by_model:
+        msg = (
+            "stages: a chain of a higher order has them by the log alone; wanted those that the rules name, or a fit "
+            "of order 1"
+        )
+        raise ValueError(msg)
     told = _in_order(told, (ENTRY, *asked), (*fit.outcomes, UNDECIDED))
     keys = [(row.stage, row.measure, row.outcome, row.basis) for row in told]
     return StagesResult(

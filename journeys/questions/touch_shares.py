@@ -82,7 +82,7 @@ def beside(fit: JourneyFit, it: Asked, effect: FloatArray, influence: FloatArray
     if codes is None or fit.tally is None or isinstance(fit, WhatIf) or not len(fit.tally.touches["n"]):
         return blank
     journeys = ended(fit.tally)
-    names = [[fit.states[row - 1] for row in group] for group in it.groups]
+    names = [list(dict.fromkeys(fit.nodes.last_states[row - 1] for row in group)) for group in it.groups]
     counted = np.array([_is_counted(fit.tally, group) for group in names])
     converted = journeys.share(codes)
     if not converted.value[0] > 0 or not counted.any():

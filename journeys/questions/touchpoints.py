@@ -76,7 +76,7 @@ def asked(
     if not groups:
         msg = "touchpoints: none is left; wanted one or more states of the chain that are not in `to`"
         raise ValueError(msg)
-    rows = [np.array([_row(fit, name, is_target) for name in group], dtype=np.int64) for group in groups]
+    rows = [np.concatenate([_rows(fit, name, is_target) for name in group]) for group in groups]
     names = tuple(" + ".join(group) for group in groups)
     twice = [name for i, name in enumerate(names) if name in names[:i]]
     twice += [group[0] for group in groups if len(set(group)) < len(group)]
@@ -120,8 +120,9 @@ def _several(fit: JourneyFit, touchpoints: Touchpoints, is_target: BoolArray) ->
             raise TypeError(msg)
         return list(touchpoints)
     named = () if fit.tally is None else fit.tally.rules.named_touchpoints
-    rows = {name: row for row, name in enumerate(fit.states, start=1)}
-    states = [name for name in named or fit.states if name in rows and not is_target[rows[name]]]
+    last = fit.nodes.last_states
+    there, aside = dict.fromkeys(last), {last[node - 1] for node in np.flatnonzero(is_target[: fit.nodes.n_rows])}
+    states = [name for name in named or there if name in there and name not in aside]
     if len(states) > MOST_UNNAMED:
         msg = f"touchpoints: the chain has {len(states):,} states; wanted those of interest named, above {MOST_UNNAMED}"
         raise ValueError(msg)
@@ -138,13 +139,13 @@ def _group(one: object, singly: bool) -> tuple[str, ...]:
     raise TypeError(msg)
 
 
-def _row(fit: JourneyFit, name: str, is_target: BoolArray) -> int:
-    if name not in fit.states:
-        listed = ", ".join(repr(each) for each in fit.states[:12])
+def _rows(fit: JourneyFit, name: str, is_target: BoolArray) -> IntArray:
+    rows = fit.nodes.rows_of(name)
+    if not len(rows):
+        listed = ", ".join(repr(each) for each in dict.fromkeys(fit.nodes.last_states[:12]))
         msg = f"touchpoints: {name!r} is not a state of this chain; wanted names among {listed}"
         raise ValueError(msg)
-    row = 1 + fit.states.index(name)
-    if is_target[row]:
+    if is_target[rows].any():
         msg = f"touchpoints: {name!r} is in `to` itself; wanted states that lead there"
         raise ValueError(msg)
-    return row
+    return rows

@@ -21,14 +21,14 @@ from __future__ import annotations
 from collections.abc import Sequence
 from typing import TYPE_CHECKING, Any
 
-import numpy as np
-
 from journeys.questions.curve_result import PassageCurve
+from journeys.questions.group_curves import GroupCurves
 from journeys.results import printable
-from journeys.show.axes import BLUE, GREY, INK, ORANGE
 from journeys.show.axes import axes as _axes
+from journeys.show.curves import draw_curve, draw_groups, draw_observed, last_of, mark_median
 from journeys.show.dots_plot import intervals
 from journeys.show.matrix_plot import matrix
+from journeys.show.palette import BLUE, GREY, INK
 from journeys.show.result_plots import (
     comeback,
     first_passage,
@@ -49,18 +49,21 @@ __all__ = [
 ]  # fmt: skip
 
 
-def passage_curve(curve: PassageCurve, ax: Axes | None = None, log: bool | None = None, **kwargs: Any) -> Axes:
+def passage_curve(
+    curve: PassageCurve | GroupCurves, ax: Axes | None = None, log: bool | None = None, **kwargs: Any
+) -> Axes:
     """Draw how the share that has reached a target grows, with its band and the median on the axis.
 
     Parameters
     ----------
-    curve : PassageCurve
-        From `journeys.passage_curve`.
+    curve : PassageCurve or GroupCurves
+        From `journeys.passage_curve`. By group: a curve for each, up to six, without a mark at the median; a group
+        without one is named in the legend.
     ax : matplotlib Axes, optional
         Where to draw; default: a new figure.
     log : bool, optional
         Draw the log's own curve too, as a thin stepped line. Default: where there is one
-        (`curve.has_observed`).
+        (`curve.has_observed`), not by group.
     **kwargs
         For the line of the curve (`Axes.plot`).
 
@@ -71,7 +74,7 @@ def passage_curve(curve: PassageCurve, ax: Axes | None = None, log: bool | None 
     Raises
     ------
     ValueError
-        If `log=True` where the log has no curve of its own.
+        If `log=True` where the log has no curve of its own, or there are more than six groups.
 
     Examples
     --------
@@ -86,62 +89,23 @@ def passage_curve(curve: PassageCurve, ax: Axes | None = None, log: bool | None 
     'steps from entry'
     """
     ax = _axes(ax, (6.4, 3.8))
-    frame = curve.to_frame()
-    last = float(frame[curve.clock].iloc[-1])
-    if not curve.whole:
-        # the axis is even, so the points are too
-        frame = curve.to_frame(np.linspace(0.0, last, 121))
-    elif frame[curve.clock].iloc[0] > 0:
-        frame = curve.to_frame(np.append(0.0, frame[curve.clock]))
-    time, share = frame[curve.clock].to_numpy(), 100 * frame["estimate"].to_numpy()
-    line: dict[str, Any] = {"color": BLUE, "linewidth": 1.8, "zorder": 3, "label": "by the chain"} | kwargs
-    if curve.whole:
-        line = {"drawstyle": "steps-post"} | line
-    low, high = (100 * frame[name].to_numpy() for name in ("low", "high"))
-    if np.isfinite(low).any() and (high > low).any():
-        label = f"{100 * curve.confidence_level:g} % interval at each {'step' if curve.clock == 'steps' else 'time'}"
-        ax.fill_between(
-            time, low, high, step="post" if curve.whole else None, color=BLUE, alpha=0.16, linewidth=0,
-            zorder=1, label=label,
-        )  # fmt: skip
-    ax.plot(time, share, **line)
-    if log if log is not None else curve.has_observed:
-        seen = curve.observed()
-        seen = seen[seen["time"] <= last]
-        ax.step(
-            np.append(0.0, seen["time"]), 100 * np.append(0.0, seen["estimate"]), where="post", color=GREY,
-            linewidth=0.9, zorder=4, label="by the log alone",
-        )  # fmt: skip
-    _mark_median(ax, curve)
-    whom = "of those who reach it" if curve.given else "of all who start"
-    unit = "" if curve.clock == "steps" else f" ({curve.unit})"
-    ax.set_xlabel(f"{'steps' if curve.clock == 'steps' else 'time'} from {printable(curve.start)}{unit}")
-    ax.set_ylabel(f"{printable(_listed(curve.to))}, % {whom}")
+    if isinstance(curve, GroupCurves):
+        one, last = curve.any_curve, draw_groups(ax, curve, bool(log), kwargs)
+    else:
+        one, last = curve, last_of(curve)
+        every = f"{100 * curve.confidence_level:g} % interval at each {'step' if curve.clock == 'steps' else 'time'}"
+        draw_curve(ax, curve, last, {"color": BLUE, "label": "by the chain"} | kwargs, every)
+        if log if log is not None else curve.has_observed:
+            draw_observed(ax, curve, last, {"color": GREY, "label": "by the log alone"})
+        mark_median(ax, curve)
+    whom = "of those who reach it" if one.given else "of all who start"
+    unit = "" if one.clock == "steps" else f" ({one.unit})"
+    ax.set_xlabel(f"{'steps' if one.clock == 'steps' else 'time'} from {printable(one.start)}{unit}")
+    ax.set_ylabel(f"{printable(_listed(one.to))}, % {whom}")
     ax.set_xlim(0, last if last > 0 else None)
     ax.set_ylim(0, None)
     ax.legend(frameon=False, loc="lower right", fontsize="small", labelcolor=INK)
     return ax
-
-
-def _mark_median(ax: Axes, curve: PassageCurve) -> None:
-    """Mark on the axis when half of those who reach it have done so."""
-    row = curve.given_reached().quantile(0.5).iloc[0]
-    if not np.isfinite(row["estimate"]):
-        return
-    x = float(row["estimate"])
-    y = 100 * float(curve.at([x])[0])
-    ax.plot([x, x], [0, y], color=INK, linewidth=0.8, linestyle=(0, (2, 2)), zorder=2)
-    ax.plot([x], [0], marker="^", markersize=7, color=ORANGE, clip_on=False, zorder=5)
-    text = f"half of those who reach it: {_number(x)}"
-    if np.isfinite(row["low"]) and row["high"] > row["low"]:
-        text += f" ({_number(row['low'])}–{_number(row['high'])})"
-    ax.annotate(
-        text, (x, 0), xytext=(6, 5), textcoords="offset points", fontsize="small", color=INK, ha="left", va="bottom"
-    )
-
-
-def _number(value: float) -> str:
-    return f"{value:.3g}" if abs(value) < 100 else f"{value:,.0f}"
 
 
 def _listed(names: Sequence[str]) -> str:

@@ -16,6 +16,7 @@ from journeys.intake.read import open_log
 from journeys.intake.rules import JourneyRules
 from journeys.kernels.bins import DAY_US
 from journeys.kernels.compiled import is_built
+from journeys.kernels.histories import MOST_SLOTS
 from journeys.tally.counter import OutOfOrderError
 from journeys.tally.keys import MOST_BINS
 from journeys.tally.passes import Pass
@@ -29,6 +30,7 @@ def count_log(
     source: Any,
     rules: JourneyRules,
     *,
+    order: int = 1,
     n_workers: int | None = None,
     compiled: bool | None = None,
     progress: bool = False,
@@ -42,6 +44,8 @@ def count_log(
         ``__arrow_c_stream__``. Only the columns that the rules name are read.
     rules : JourneyRules
         What a journey is.
+    order : int
+        From 1 to 3: moves are told apart by so many of the last states, which fits of that order need.
     n_workers : int, optional
         Threads that count; default one per processor, at most 8. The tally does not depend on it.
     compiled : bool, optional
@@ -60,7 +64,7 @@ def count_log(
         If columns are missing, times cannot be read, nothing is left to count, or a few rows lie far
         outside the rest (a wrong clock).
     ValueError
-        If `n_workers` is not a whole number from 1.
+        If `n_workers` is not a whole number from 1, or `order` not one from 1 to 3.
     ImportError
         If `compiled` is True and the compiled loop is not built.
 
@@ -83,12 +87,16 @@ def count_log(
     2
     """
     workers = min(os.cpu_count() or 1, MOST_WORKERS) if n_workers is None else checks.whole(n_workers, "n_workers", 1)
+    order = checks.whole(order, "order", 1)
+    if order > MOST_SLOTS:
+        msg = f"order={order}; wanted at most {MOST_SLOTS}: no log has journeys enough to tell longer memories apart"
+        raise ValueError(msg)
     log = open_log(source, rules.columns, text=(rules.event,))
     with log.spooled() if log.one_shot else nullcontext(log) as kept:
         look = first_look(kept, rules)
         pass_ = partial(
             Pass, kept, rules, look, _span(look, rules),
-            n_workers=workers, compiled=_compiles(compiled), progress=progress,
+            order=order, n_workers=workers, compiled=_compiles(compiled), progress=progress,
         )  # fmt: skip
         try:
             return pass_().in_order()

@@ -164,12 +164,12 @@ class Counter:
             rows = Ordered.of(block, order)
             rows = self._without_duplicates(rows, rows.starts())
             order, found = rows.order, (rows.key, rows.time, code_of_event[rows.event])
-        cells = self._sums.moves.cells(len(order), self._n_states)
+        cells = self._sums.cells(len(order), self._n_states)
         result = count_in_order(*found, self._carried, FIRST_KEYS, self._reading, cells)
         if result is None:
             raise OutOfOrderError
         counted, fresh, gained = result
-        self._sums.moves.gained(gained)
+        self._sums.gained(gained)
         self._note(counted, block, order)
         return fresh
 

@@ -3,9 +3,11 @@
 from __future__ import annotations
 
 import numpy as np
+from numpy.typing import NDArray
 
 from journeys.kernels.arrays import IntArray
 from journeys.kernels.bins import DAY_US, bin_of
+from journeys.kernels.histories import latest
 from journeys.kernels.records import Cells, Moves
 from journeys.tally.accumulate import Accumulator, Columns, Keyed, limbs, product_limbs
 from journeys.tally.keys import pack
@@ -32,7 +34,9 @@ class MoveSums:
     buckets : range
         Which buckets, for the size of the table of cells.
     more : tuple of str
-        Further parts of the key ("group"); with any there is no table of cells.
+        Further parts of the key ("group", "before"); with any there is no table of cells.
+    n_slots : int
+        How many states before that of a move are part of its key.
     """
 
     def __init__(
@@ -42,8 +46,10 @@ class MoveSums:
         first_state: int,
         buckets: range,
         more: tuple[str, ...] = (),
+        n_slots: int = 0,
     ) -> None:
         self._edges, self._first_state, self._buckets = edges, first_state, buckets
+        self._more, self._n_slots = more, n_slots
         self._n_bins = 0
         if longest_us is not None and not more:
             self._n_bins = int(bin_of(np.array([longest_us]), edges)[0]) + 1
@@ -86,18 +92,22 @@ class MoveSums:
         np.add.at(self._n, cell, np.uint32(1))
         np.add.at(self._rest, cell, rest)
 
-    def cells(self, n_rows: int, n_states: int) -> Cells:
-        """Return the table of cells with room for the moves of `n_rows` rows, for a compiled loop to add to."""
+    def cells(self, n_rows: int, n_states: int, contexts: NDArray[np.uint32], mature_before: int) -> Cells:
+        """Return the table of cells with room for the moves of `n_rows` rows, for a compiled loop to add to.
+
+        `contexts` are the cells of contexts for as many states; without any, no cells are used.
+        """
         if n_states > self._n_states:
             self._grow(n_states)
         # A row makes at most one move and one lapse.
         most = 2.0 * n_rows * self._widest
-        fits = len(self._n) > 0 and most <= _MOST_DWELL
+        fits = len(self._n) > 0 and most <= _MOST_DWELL and len(contexts) > 0
         if fits:
             self._make_room(2 * n_rows, most)
         n, rest = (self._n, self._rest) if fits else (self._n[:0], self._rest[:0])
         upper = self._lower if self._edges is None else self._edges[: self._n_bins]
-        return Cells(n, rest, self._lower, upper, self._buckets.start, self._n_states, self._edges is None)
+        place = self._buckets.start, self._n_states, self._edges is None
+        return Cells(n, rest, contexts if fits else contexts[:0], self._lower, upper, *place, mature_before)
 
     def gained(self, dwell: float) -> None:
         """Note by how much a compiled loop has raised the cells' dwell."""
@@ -145,12 +155,17 @@ class MoveSums:
     def _add_sparse(self, moves: Moves, busy: int) -> None:
         key = pack(moves.bucket, moves.state, moves.next_code, bin_of(moves.dwell, self._edges), busy)
         more = {} if moves.group is None else {"group": moves.group}
+        if "before" in self._more:
+            more["before"] = latest(moves.before, self._n_slots)
         self._sparse.add(key, {"dwell": moves.dwell}, _single_moves, more)
 
 
 def _part(moves: Moves, mask: np.ndarray) -> Moves:
     group = None if moves.group is None else moves.group[mask]
-    return Moves(moves.bucket[mask], moves.state[mask], moves.next_code[mask], moves.dwell[mask], group=group)
+    return Moves(
+        moves.bucket[mask], moves.state[mask], moves.next_code[mask], moves.dwell[mask], moves.before[mask],
+        moves.since[mask], group=group,
+    )  # fmt: skip
 
 
 def _single_moves(columns: Columns) -> Columns:

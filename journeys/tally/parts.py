@@ -11,9 +11,10 @@ import numpy as np
 from journeys.errors import JourneysError
 from journeys.intake.rule_checks import ALL
 from journeys.kernels.arrays import IntArray
+from journeys.kernels.histories import recoded, slot
 from journeys.tally.accumulate import Columns, add_up, carried_over
 from journeys.tally.groups import merged_groups, runs
-from journeys.tally.tables import CODED, KEYS, MOST_IN_SETS, NARROW, join_key, parts_of, split_key
+from journeys.tally.tables import CODED, KEYS, MOST_IN_SETS, NARROW, history_of, join_key, split_key
 from journeys.tally.touchpoints import check_number, moved_bits
 
 if TYPE_CHECKING:
@@ -44,6 +45,9 @@ def of_groups(tally: T, index: IntArray) -> T:
     for name, column in ((name, column) for name in KEYS for column in CODED):
         if column in tables[name]:
             seen[tables[name][column]] = True
+    for column, n_slots, name in histories(tally):
+        for which in range(n_slots):
+            seen[slot(tables[name][column], which)] = True
     seen[: tally.first_state] = True
     if not seen.all():
         tables = _renamed(tally, tables, np.cumsum(seen) - 1)
@@ -123,6 +127,7 @@ def _has_sets(tally: Tally) -> bool:
 def _check_alike(mine: Tally, theirs: Tally, kinds: tuple[bool, bool]) -> None:
     for what, one, other in (
         ("rules", mine.rules, theirs.rules),
+        ("orders", mine.order, theirs.order),
         ("parts of the groups", mine.part, theirs.part),
         ("as_of", mine.as_of, theirs.as_of),
         ("log_start", mine.log_start, theirs.log_start),
@@ -164,16 +169,23 @@ def _renamed(tally: Tally, tables: Mapping[str, Columns], new: IntArray) -> dict
         name: table | {column: new[table[column]].astype(NARROW[column]) for column in CODED if column in table}
         for name, table in tables.items()
     }
+    for column, n_slots, name in histories(tally):
+        renamed[name][column] = recoded(renamed[name][column], new, n_slots)
     if tally.rules.touchpoints == ALL and len(tables["touch_sets"]["n"]):
         bits = new[tally.first_state :] - tally.first_state
         renamed["touch_sets"]["set"] = moved_bits(tables["touch_sets"]["set"], bits)
     return renamed
 
 
+def histories(tally: Tally) -> list[tuple[str, int, str]]:
+    """Return the columns that hold histories, how many states each holds, and their tables."""
+    found = [(history_of(name, tally.order), name) for name in KEYS]
+    return [(*history, name) for history, name in found if history is not None]
+
+
 def _sum(name: str, mine: Columns, theirs: Columns) -> Columns:
     """Return two tables of one kind as one."""
     (key, more), (other_key, other_more) = join_key(name, mine), join_key(name, theirs)
-    keys = parts_of(name, grouped="group" in mine)
-    sums = {column: np.concatenate([mine[column], theirs[column]]) for column in mine if column not in keys}
+    sums = {column: np.concatenate([mine[column], theirs[column]]) for column in mine if column not in NARROW}
     both = {part: np.concatenate([more[part], other_more[part]]) for part in more}
     return split_key(name, *add_up(np.concatenate([key, other_key]), sums, both))

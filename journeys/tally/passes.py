@@ -23,18 +23,28 @@ from journeys.intake.rules import JourneyRules
 from journeys.kernels.arrays import IntArray
 from journeys.kernels.bins import DAY_US, dwell_edges, elapsed_edges
 from journeys.kernels.grouping import MOST_PERIODS, Grouping
+from journeys.kernels.histories import recoded
 from journeys.kernels.records import Reading
 from journeys.tally.accumulate import Columns, Keyed
 from journeys.tally.blocks import cut_between_ties
 from journeys.tally.codes import StateCodes
 from journeys.tally.counter import Counter, LeaveOut
-from journeys.tally.dense import MoveSums
 from journeys.tally.groups import Group, named_groups
 from journeys.tally.order import by_customer
 from journeys.tally.spans import Span
 from journeys.tally.spill import BUCKETS_PER_PART, N_PARTS, Spill
 from journeys.tally.sums import Sums
-from journeys.tally.tables import CODED, KEYS, MORE, MOST_IN_SETS, N_BUCKETS, NARROW, sorted_by_key, split_key
+from journeys.tally.tables import (
+    CODED,
+    KEYS,
+    MOST_IN_SETS,
+    N_BUCKETS,
+    NARROW,
+    history_of,
+    more_of,
+    sorted_by_key,
+    split_key,
+)
 from journeys.tally.tally import Tally
 from journeys.tally.touchpoints import Places, Touchpoints
 
@@ -64,11 +74,11 @@ class _Worker:
         buckets = range(parts.start * BUCKETS_PER_PART, parts.stop * BUCKETS_PER_PART)
         # Merged visits may last longer than the silence, and without one there is no longest stay at all.
         longest = None if rules.repeats == "merge" else rules.silence_us
-        edges = dwell_edges(rules.silence_us, span.whole_days)
-        group = () if reading.grouping is None else ("group",)
-        moves = MoveSums(edges, longest, reading.first_state, buckets, group)
-        edges = elapsed_edges(rules.silence_us, span.whole_days, rules.horizons_us)
-        self.sums = Sums(edges, moves, reading.grouping, valued=reading.values)
+        edges = (
+            dwell_edges(rules.silence_us, span.whole_days),
+            elapsed_edges(rules.silence_us, span.whole_days, rules.horizons_us),
+        )
+        self.sums = Sums(reading, edges, longest, buckets)
         self._counter = self._new_counter()
 
     def add(self, block: _Block, part: slice) -> None:
@@ -97,7 +107,8 @@ class _Worker:
         return self._tables(code, places)
 
     def _tables(self, code: IntArray, places: Places) -> dict[str, Columns]:
-        return {name: _labelled(name, self.sums.result(name), code, places) for name in KEYS}
+        order = self._reading.order
+        return {name: _labelled(name, self.sums.result(name), code, places, order) for name in KEYS}
 
     def _new_counter(self) -> Counter:
         return Counter(self._reading, self._leave_out, self.sums, self.findings, compiled=self._compiled)
@@ -116,6 +127,8 @@ class Pass:
         What a first look at the times told.
     span : Span
         From when to when the log is read.
+    order : int
+        How many states back moves are told apart by.
     n_workers : int
         Threads that count.
     compiled : bool
@@ -131,10 +144,12 @@ class Pass:
         look: Look,
         span: Span,
         *,
+        order: int,
         n_workers: int,
         compiled: bool,
         progress: bool,
     ) -> None:
+        self._order = order
         self._log, self._rules, self._look, self._span, self._progress = log, rules, look, span, progress
         named = (*rules.stages, *rules.opens, *rules.named_touchpoints)
         self._codes = StateCodes(rules.outcomes, tuple(dict.fromkeys(named)))
@@ -145,7 +160,7 @@ class Pass:
             same_outcome_us=rules.same_outcome_us, merge_repeats=rules.repeats == "merge",
             log_start_us=span.log_start_us, as_of_us=span.as_of_us, complete_history=rules.complete_history,
             grouping=_grouping(rules, span, cohort_starts), stages=_codes_of(rules.stages, self._codes),
-            touches=bool(rules.touchpoints), values=rules.value is not None,
+            touches=bool(rules.touchpoints), values=rules.value is not None, order=order,
         )  # fmt: skip
         self._normaliser = Normaliser(rules, log_start_us=span.log_start_us, as_of_us=span.as_of_us)
         leave_out = LeaveOut(
@@ -227,14 +242,15 @@ class Pass:
         return Tally(
             rules=self._rules, states=tuple(self._codes.seen), groups=groups, log_start_us=self._span.log_start_us,
             as_of_us=self._span.as_of_us, whole_days=self._span.whole_days, n_rows=self._normaliser.n_rows,
-            customers=customers, record=findings, **keyed,
+            customers=customers, record=findings, order=self._order, **keyed,
         )  # fmt: skip
 
     def _name_groups(self, tables: dict[str, Columns]) -> tuple[Group, ...]:
         """Return the groups in the order of their values, and put their places into the tables, sorted anew."""
         if not self._rules.by:
             # Buckets come first in the order of the other tables, which is that of the workers.
-            tables |= {name: sorted_by_key(name, tables[name]) for name in MORE}
+            further = [name for name in KEYS if more_of(name, grouped=False, order=self._order)]
+            tables |= {name: sorted_by_key(name, tables[name]) for name in further}
             return ()
         packed = np.unique(np.concatenate([table["group"] for table in tables.values()]))
         combinations = self._normaliser.groups.combinations
@@ -282,7 +298,7 @@ def _codes_of(states: tuple[str, ...], codes: StateCodes) -> NDArray[np.int32] |
     return np.array([codes.code(name) for name in states], np.int32) if states else None
 
 
-def _labelled(name: str, keyed: Keyed, code: IntArray, places: Places) -> Columns:
+def _labelled(name: str, keyed: Keyed, code: IntArray, places: Places, order: int) -> Columns:
     """Take the keys of a table apart, codes replaced by the positions of their names among the labels."""
     table = split_key(name, *keyed)
     if "group" in keyed.more:
@@ -296,6 +312,9 @@ def _labelled(name: str, keyed: Keyed, code: IntArray, places: Places) -> Column
     for column in CODED:
         if column in table:
             table[column] = code[table[column]].astype(NARROW[column])
+    if (histories := history_of(name, order)) is not None:
+        column, n_slots = histories
+        table[column] = recoded(table[column], code, n_slots)
     return sorted_by_key(name, table)
 
 

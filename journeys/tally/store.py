@@ -24,18 +24,18 @@ from journeys.tally.tally import Tally
 if TYPE_CHECKING:
     from journeys.tally.accumulate import Columns
 
-FORMAT_VERSION = 3
+FORMAT_VERSION = 4
 HEAD = b"journeys"
 # Rows of a table written at once: the columns that it lacks take room too.
 _ROWS_AT_ONCE = 1 << 18
 
 
-def columns_of(table: str, rules: JourneyRules) -> tuple[str, ...]:
+def columns_of(table: str, rules: JourneyRules, order: int) -> tuple[str, ...]:
     """Return the columns of a table in their order."""
     valued = rules.value is not None
     if table == "customers":
         return ("bucket", *customer_sums(valued=valued))
-    return (*parts_of(table, grouped=bool(rules.by)), *sums_of(table, valued=valued))
+    return (*parts_of(table, grouped=bool(rules.by), order=order), *sums_of(table, valued=valued))
 
 
 def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | None = None) -> None:
@@ -64,10 +64,11 @@ def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | 
         "n_rows": tally.n_rows,
         "groups": tally.groups,
         "part": tally.part,
+        "order": tally.order,
         "findings": tally.record.to_dict(),
         "checksum": _checksum(tally),
     }
-    schema = _schema(tally.rules).with_metadata({HEAD: json.dumps(head).encode(), **(more or {})})
+    schema = _schema(tally.rules, tally.order).with_metadata({HEAD: json.dumps(head).encode(), **(more or {})})
     # Dictionaries pay where a value runs on for many rows; elsewhere they only take time.
     runs = ["table", "bucket", "state"]
     with (
@@ -83,9 +84,9 @@ def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | 
                 writer.write_table(_as_arrow(name, piece, schema))
 
 
-def _schema(rules: JourneyRules) -> pa.Schema:
+def _schema(rules: JourneyRules, order: int) -> pa.Schema:
     """Return the columns of all tables, each with the type that is enough for it."""
-    every = dict.fromkeys(column for table in TABLES for column in columns_of(table, rules))
+    every = dict.fromkeys(column for table in TABLES for column in columns_of(table, rules, order))
     narrow = {name: pa.from_numpy_dtype(kind) for name, kind in NARROW.items()}
     return pa.schema([("table", pa.string()), *((name, narrow.get(name, pa.int64())) for name in every)])
 
@@ -171,12 +172,13 @@ def _from_parts(table: pa.Table, head: dict[str, Any]) -> Tally:
         narrow = {} if name == "customers" else NARROW
         held[name] = {
             column: rows[column].to_numpy().astype(narrow.get(column, np.int64))
-            for column in columns_of(name, rules)
+            for column in columns_of(name, rules, head["order"])
         }
     return Tally(
         rules=rules,
         groups=tuple(tuple(group) for group in head["groups"]),
         part=head["part"],
+        order=head["order"],
         states=tuple(head["states"]),
         log_start_us=head["log_start_us"],
         as_of_us=head["as_of_us"],

@@ -10,12 +10,34 @@ from numpy.typing import NDArray
 
 from journeys.kernels.arrays import BoolArray, IntArray
 from journeys.kernels.bins import bin_of
-from journeys.kernels.grouping import Grouping
-from journeys.kernels.records import LAPSED, OPEN, Carried, Closed, Counted, Ends, Entries, Gaps, Moves, Passed
+from journeys.kernels.records import (
+    LAPSED,
+    OPEN,
+    Carried,
+    Cells,
+    Closed,
+    Counted,
+    Ends,
+    Entries,
+    Gaps,
+    Moves,
+    Passed,
+    Reading,
+)
 from journeys.tally.accumulate import Accumulator, Columns, Keyed, More, carried_over, limbs
+from journeys.tally.contexts import ContextSums
 from journeys.tally.dense import MoveSums
 from journeys.tally.keys import pack
-from journeys.tally.tables import CUSTOMER_SUMS, MORE, MOST_IN_SETS, N_BUCKETS, SUMS, customer_sums, sums_of
+from journeys.tally.tables import (
+    CUSTOMER_SUMS,
+    HISTORY,
+    MOST_IN_SETS,
+    N_BUCKETS,
+    SUMS,
+    customer_sums,
+    more_of,
+    sums_of,
+)
 
 
 class Sums:
@@ -23,28 +45,31 @@ class Sums:
 
     Parameters
     ----------
-    elapsed_edges : ndarray of int64 or None
-        Bins of elapsed time, from `kernels.bins`.
-    moves : MoveSums
-        The moves table.
-    grouping : Grouping or None
-        How journeys are grouped.
-    valued : bool
-        Values are summed too.
+    reading : Reading
+        The rules.
+    edges : tuple of two ndarray of int64 or None
+        Bins of dwell and of elapsed time, from `kernels.bins`.
+    longest_us : int or None
+        The longest dwell that a move can have, None where there is no such.
+    buckets : range
+        Which buckets.
     """
 
     def __init__(
         self,
-        elapsed_edges: IntArray | None,
-        moves: MoveSums,
-        grouping: Grouping | None = None,
-        *,
-        valued: bool = False,
+        reading: Reading,
+        edges: tuple[IntArray | None, IntArray | None],
+        longest_us: int | None,
+        buckets: range,
     ) -> None:
-        self._elapsed_edges, self.moves, self._grouping, self._valued = elapsed_edges, moves, grouping, valued
-        self._tables = {name: self._empty(name) for name in SUMS if name != "moves"}
+        self._reading, self._grouping, self._valued = reading, reading.grouping, reading.values
+        dwell_edges, self._elapsed_edges = edges
+        order = reading.order
+        self._moves = MoveSums(dwell_edges, longest_us, reading.first_state, buckets, self._more("moves"), order - 1)
+        self._contexts = ContextSums(reading, buckets, self._more("contexts"))
+        self._tables = {name: self._empty(name) for name in SUMS if name not in HISTORY}
         self._sets = True
-        self.customers = {name: np.zeros(N_BUCKETS, np.int64) for name in customer_sums(valued=valued)}
+        self.customers = {name: np.zeros(N_BUCKETS, np.int64) for name in customer_sums(valued=self._valued)}
 
     def add(self, counted: Counted, n_states: int) -> None:
         """Add what a block of rows gave; `n_states` states are known by now."""
@@ -79,21 +104,38 @@ class Sums:
             self.customers = carried_over(self.customers)
             np.maximum.at(self.customers["largest_value"], bucket, value)
 
+    def cells(self, n_rows: int, n_states: int) -> Cells:
+        """Return cells for a compiled loop to add the moves of `n_rows` rows to, empty for a chain too large."""
+        contexts = self._contexts.cells(n_states)
+        if len(contexts):
+            self._contexts.make_room(2 * n_rows)
+        until = int(self._reading.mature_before(np.array([self._reading.as_of_us]))[0])
+        return self._moves.cells(n_rows, n_states, contexts, until)
+
+    def gained(self, dwell: float) -> None:
+        """Note by how much a compiled loop has raised the dwell in the cells."""
+        self._moves.gained(dwell)
+
     def result(self, name: str) -> Keyed:
         """Return the distinct keys of a table in order and their sums, and let go of it."""
-        return self.moves.result() if name == "moves" else self._tables[name].result()
+        if name == "moves":
+            return self._moves.result()
+        return self._contexts.result() if name == "contexts" else self._tables[name].result()
 
     def _empty(self, name: str) -> Accumulator:
-        group = () if self._grouping is None else ("group",)
-        return Accumulator(sums_of(name, valued=self._valued), (*group, *MORE.get(name, ())))
+        return Accumulator(sums_of(name, valued=self._valued), self._more(name))
+
+    def _more(self, name: str) -> tuple[str, ...]:
+        return more_of(name, grouped=self._grouping is not None, order=self._reading.order)
 
     def _add_moves(self, moves: Moves, n_states: int) -> None:
-        """Add moves under bucket, state, next, dwell bin and busy."""
+        """Add moves under bucket, state, next, dwell bin and busy, and under what came before."""
         if moves.group is not None:
             more, dwell, cut = self._in_period(moves, moves.dwell)
             next_code = np.where(cut, np.int32(OPEN), moves.next_code)
             moves = replace(moves, dwell=dwell, next_code=next_code, group=more["group"])
-        self.moves.add(moves, n_states)
+        self._moves.add(moves, n_states)
+        self._contexts.add(moves, n_states)
 
     def _add_ends(self, ends: Ends) -> None:
         """Add journeys under bucket, entry state, outcome, elapsed bin and sure.

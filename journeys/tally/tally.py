@@ -16,13 +16,14 @@ from journeys.checks import instant_text
 from journeys.intake.findings import Findings
 from journeys.intake.rule_checks import ALL
 from journeys.intake.rules import JourneyRules
+from journeys.kernels.histories import slot
 from journeys.kernels.records import FIRST_OUTCOME, LAPSED, OPEN
 from journeys.markup import facts
 from journeys.tally.accumulate import Columns, exact_limbs
 from journeys.tally.groups import Group, gathered, picked
 from journeys.tally.parts import added, of_groups
 from journeys.tally.spans import Span, longest_followed_us
-from journeys.tally.tables import CODED, FLAGS, NO_STATE, TABLES
+from journeys.tally.tables import CODED, FLAGS, HISTORY, NO_STATE, TABLES
 
 if TYPE_CHECKING:
     from typing import Self
@@ -46,7 +47,7 @@ class Tally:
         True where the log holds dates without a time.
     n_rows : int
         Rows read, whatever became of them.
-    moves, entries, journeys, gaps, stages, touches, touch_sets, customers : mapping of str to ndarray
+    moves, contexts, entries, journeys, gaps, stages, touches, touch_sets, customers : mapping of str to ndarray
         The tables, one array per column, sorted by their keys; states and outcomes as positions in `labels`,
         groups as positions in `groups`, sets of touchpoints as bits, the lowest for the first of `touchpoints`. A
         table that the rules do not ask for has no rows.
@@ -54,6 +55,8 @@ class Tally:
         What was left out or looked odd.
     groups : tuple of tuple
         Values of the columns `rules.by`, one tuple per group of journeys; empty where they are not grouped.
+    order : int
+        How many of the last states moves are told apart by.
     part : bool
         The tally holds some of the groups of another (see `where`).
 
@@ -75,6 +78,7 @@ class Tally:
     whole_days: bool
     n_rows: int
     moves: Columns
+    contexts: Columns
     entries: Columns
     journeys: Columns
     gaps: Columns
@@ -85,6 +89,7 @@ class Tally:
     record: Findings
     groups: tuple[Group, ...] = ()
     part: bool = False
+    order: int = 1
 
     @property
     def labels(self) -> tuple[str, ...]:
@@ -146,7 +151,7 @@ class Tally:
 
         Parameters
         ----------
-        name : {"moves", "entries", "journeys", "gaps", "stages", "touches", "touch_sets", "customers"}
+        name : {"moves", "contexts", "entries", "journeys", "gaps", "stages", "touches", "touch_sets", "customers"}
             Which table.
 
         Returns
@@ -174,6 +179,7 @@ class Tally:
             raise ValueError(msg)
         columns: Columns = getattr(self, name)
         labels = np.array(self.labels, dtype=object)
+        behind = np.array(["entry", "unknown", *self.labels[FIRST_OUTCOME:]], dtype=object)
         frame: dict[str, Any] = {}
         for column, values in columns.items():
             if column.endswith("_high"):
@@ -183,7 +189,11 @@ class Tally:
                 continue
             elif column in CODED:
                 nothing = NO_STATE.get((name, column), labels[0])
-                frame[column] = np.where(values == 0, nothing, labels[values])
+                frame[column] = np.where(values == 0, nothing, (behind if column == "previous" else labels)[values])
+            elif column in HISTORY.values():
+                first = 1 + (column == "earlier")
+                for which in range(self.order - 1):
+                    frame[f"previous_{first + which}"] = behind[slot(values, which)]
             elif column == "group":
                 for i, name_of_part in enumerate(self.rules.by):
                     frame[name_of_part] = np.array([group[i] for group in self.groups], dtype=object)[values]
@@ -195,15 +205,9 @@ class Tally:
     def checksum(self) -> str:
         """Hexadecimal digest of the tables, the rules and the span; equal tallies have equal checksums."""
         head = [
-            self.rules.to_dict(),
-            self.states,
-            self.log_start_us,
-            self.as_of_us,
-            self.whole_days,
-            self.n_rows,
-            self.groups,
-            self.part,
-        ]
+            self.rules.to_dict(), self.states, self.log_start_us, self.as_of_us, self.whole_days, self.n_rows,
+            self.groups, self.part, self.order,
+        ]  # fmt: skip
         digest = blake2b(json.dumps(head, sort_keys=True).encode(), digest_size=16)
         for table in TABLES:
             for name, column in getattr(self, table).items():
@@ -226,7 +230,7 @@ class Tally:
         Raises
         ------
         JourneysError
-            If rules, span or kind of times differ.
+            If rules, span, order or kind of times differ.
         """
         return added(self, other) if isinstance(other, Tally) else NotImplemented
 
@@ -295,6 +299,12 @@ class Tally:
         others = [index for group, index in found.items() if group != values]
         return of_groups(self, np.sort(np.concatenate(others)))
 
+    def shareable(self, min_customers: int = 10) -> pd.DataFrame:
+        """Return counts that can be handed on (see `journeys.tally.shareable.shareable`)."""
+        from journeys.tally.shareable import shareable
+
+        return shareable(self, min_customers)
+
     def save(self, path: str | os.PathLike[str]) -> None:
         """Write the tally to one Parquet file (see `journeys.tally.store.save`)."""
         from journeys.tally.store import save
@@ -312,18 +322,17 @@ class Tally:
         """Return the size of the tally in words."""
         ended = ", ".join(f"{n:,} {name}" for name, n in self._n_by_ending().items())
         return (
-            f"{self.n_rows:,} rows {self._span()}: {self.n_journeys:,} journeys of {self.n_people:,} people through "
-            f"{len(self.states)} states; {ended}"
+            f"{self.n_rows:,} rows from {self._span()}: {self.n_journeys:,} journeys of {self.n_people:,} people "
+            f"through {len(self.states)} states; {ended}"
         )
 
     def _span(self) -> str:
-        first, last = (instant_text(us)[: len("2025-06-30")] for us in (self.log_start_us, self.as_of_us))
-        return f"from {first} to {last}"
+        return " to ".join(instant_text(us)[: len("2025-06-30")] for us in (self.log_start_us, self.as_of_us))
 
     def _n_by_ending(self) -> dict[str, int]:
         outcome, n = self.journeys["outcome"], self.journeys["n"]
-        ended, lapsed = outcome != OPEN, outcome == LAPSED
-        parts = {"ended in an outcome": ended & ~lapsed, "lapsed": lapsed, "open": ~ended}
+        parts = {"ended in an outcome": (outcome != OPEN) & (outcome != LAPSED)}
+        parts |= {"lapsed": outcome == LAPSED, "open": outcome == OPEN}
         return {name: int(n[mask].sum()) for name, mask in parts.items()}
 
     def __repr__(self) -> str:
@@ -331,9 +340,8 @@ class Tally:
         return f"<Tally: {self.summary()}>"
 
     def _repr_html_(self) -> str:
-        ended = {name: f"{n:,}" for name, n in self._n_by_ending().items()}
-        told = {"rows": f"{self.n_rows:,}", "people": f"{self.n_people:,}", "journeys": f"{self.n_journeys:,}"}
-        return facts(f"Tally: {self._span()}", {**told, "states": f"{len(self.states):,}", **ended})
+        told = {"rows": self.n_rows, "people": self.n_people, "journeys": self.n_journeys, "states": len(self.states)}
+        return facts(f"Tally, {self._span()}", {**told, **self._n_by_ending()})
 
 
 def _timestamp(us: int) -> pd.Timestamp:

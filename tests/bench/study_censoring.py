@@ -48,7 +48,7 @@ def by_fit(tally: jn.Tally, open_moves: str = "censored") -> tuple[float, float]
     """Return conversion from entry and mean days to convert of a fit."""
     with warnings.catch_warnings():
         warnings.simplefilter("ignore", JourneysWarning)
-        fit = jn.JourneyModel(open_moves).fit(tally)
+        fit = jn.JourneyModel(open_moves=open_moves).fit(tally)
     frame = jn.first_passage(fit, clock="time").to_frame()
     entry = frame[frame["start_state"] == "entry"].set_index("measure")["estimate"]
     return float(entry["probability"]), float(entry["mean"])

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from itertools import combinations, product
 from math import factorial
 
@@ -41,6 +42,11 @@ def moves_of(p: FloatArray) -> tuple[np.ndarray, np.ndarray, FloatArray]:
 def way_of(p: FloatArray, mean: FloatArray | None = None):
     state, target, prob = moves_of(p)
     return road(len(p), p.shape[1], state, target, prob, prob if mean is None else mean, target_of(p))
+
+
+def singles(players: Iterable[int]) -> list[np.ndarray]:
+    """Return players of one state each."""
+    return [np.array([player]) for player in players]
 
 
 def reach(p: FloatArray) -> float:
@@ -104,13 +110,21 @@ def test_identities_of_who_touched_what(seed: int) -> None:
         assert single[state - 1] == pytest.approx(touching / total, abs=1e-12)
     assert single.sum() == pytest.approx(sum(len(done) * x for done, x in shares.items()) / total, abs=1e-12)
     for players in ([1, 2, 3, 4, 5], [2, 4], [3]):
-        split, _ = equal_split(way, np.array(players))
+        split, _ = equal_split(way, singles(players))
         for i, player in enumerate(players):
             expected = sum(x / len(done & set(players)) for done, x in shares.items() if player in done)
             assert split[i] == pytest.approx(expected / total, abs=1e-12)
         none = sum(x for done, x in shares.items() if not done & set(players))
         assert split[-1] == pytest.approx(none / total, abs=1e-12)
         assert split.sum() == pytest.approx(1.0, abs=1e-12)
+    # A player of several states is touched with any of them.
+    split, _ = equal_split(way, PAIRS[:2])
+    split_by_hand = [0.0, 0.0, 0.0]
+    for done, x in shares.items():
+        touched = [i for i, states in enumerate(PAIRS[:2]) if done & set(states.tolist())]
+        for i in touched or [2]:
+            split_by_hand[i] += x / max(len(touched), 1) / total
+    assert split.tolist() == pytest.approx(split_by_hand, abs=1e-12)
 
 
 @pytest.mark.parametrize("seed", SEEDS)
@@ -122,7 +136,7 @@ def test_the_split_is_the_shapley_value_by_all_subsets(seed: int) -> None:
         for size in range(len(players) + 1)
         for kept in combinations(players, size)
     }
-    split, _ = equal_split(way_of(p), np.array(players))
+    split, _ = equal_split(way_of(p), singles(players))
     k = len(players)
     for i, player in enumerate(players):
         value = 0.0
@@ -195,13 +209,15 @@ def differences(seed: int, ask, part: str) -> tuple[FloatArray, FloatArray]:
     return getattr(at(np.zeros(len(prob))), part), np.stack(found, axis=1)
 
 
+PAIRS = [np.array([1, 4]), np.array([2]), np.array([5, 3])]
 ASKS = {
     "stop": (lambda way: stopped(way, ARRAYS), "by_p"),
     "divert": (lambda way: diverted(way, ARRAYS[:-1]), "by_p"),
     "pass, days": (lambda way: passed(way, ARRAYS, steps=False), "by_p"),
     "pass, days, by mean": (lambda way: passed(way, ARRAYS, steps=False), "by_mean"),
-    "split": (lambda way: Removed(*equal_split(way, np.array([1, 2, 3, 5])), np.zeros(0)), "by_p"),
-    "split over all": (lambda way: Removed(*equal_split(way, np.arange(1, N)), np.zeros(0)), "by_p"),
+    "split": (lambda way: Removed(*equal_split(way, singles([1, 2, 3, 5])), np.zeros(0)), "by_p"),
+    "split among pairs": (lambda way: Removed(*equal_split(way, PAIRS), np.zeros(0)), "by_p"),
+    "split over all": (lambda way: Removed(*equal_split(way, singles(range(1, N))), np.zeros(0)), "by_p"),
 }
 
 
@@ -280,7 +296,7 @@ def test_what_the_graph_decides_is_exact() -> None:
     found = stopped(way, [np.array([c]) for c in (1, 2, 3, 4)])
     assert found.effect.tolist() == [1.0, 1.0, 0.0, 0.0]
     assert (found.by_p == 0).all()
-    split, by_p = equal_split(way, np.array([1, 2, 3, 4]))
+    split, by_p = equal_split(way, singles([1, 2, 3, 4]))
     assert split.tolist() == pytest.approx([0.5, 0.5, 0.0, 0.0, 0.0], abs=1e-15)
     assert (split[2:] == 0).all()
     assert (by_p[2:4] == 0).all()
@@ -308,6 +324,6 @@ def test_fifteen_players() -> None:
     p = np.zeros((k + 1, k + 1 + ENDS))
     p[np.arange(k + 1), np.arange(1, k + 2)] = 0.9
     p[:, -1] = 0.1
-    split, by_p = equal_split(way_of(p), np.arange(1, k + 1))
+    split, by_p = equal_split(way_of(p), singles(range(1, k + 1)))
     assert split == pytest.approx([1 / k] * k + [0.0], abs=1e-13)
     assert by_p.shape == (k + 1, 2 * (k + 1))

@@ -19,7 +19,7 @@ def rules(**more) -> jn.JourneyRules:
 
 
 def fitted(log: pd.DataFrame, open_moves: str = "censored", **more) -> jn.JourneyFit:
-    return jn.JourneyModel(open_moves).fit(jn.tally(log, rules(**more)))
+    return jn.JourneyModel(open_moves=open_moves).fit(jn.tally(log, rules(**more)))
 
 
 @pytest.mark.parametrize("open_moves", ["censored", "ignored"])

@@ -110,7 +110,7 @@ def test_end_not_seen() -> None:
     assert "end not seen" not in one(days, "flag", start_state="visit", measure="mean")
     with warnings.catch_warnings():
         warnings.simplefilter("error")
-        assert jn.JourneyModel("ignored").fit(tally).row_flags == {}
+        assert jn.JourneyModel(open_moves="ignored").fit(tally).row_flags == {}
 
 
 def test_a_hundredth_of_the_walks_is_too_little_to_flag() -> None:
@@ -161,7 +161,7 @@ def test_dead_end_of_a_fit() -> None:
     log = log_of_paths([["visit", "joined"], ["visit", "asleep"]], [1, 2], [[0, 1], [0, 1]])
     tally = jn.tally(log, rules(silence=None, complete_history=True))
     with pytest.warns(DeadEndWarning, match="no move out of asleep was seen: taken as never left"):
-        fit = jn.JourneyModel("ignored").fit(tally)
+        fit = jn.JourneyModel(open_moves="ignored").fit(tally)
     assert fit.row_flags == {"asleep": "no move out was seen"}
     assert fit.matrix.loc["asleep", "asleep"] == 1.0
     assert fit.classes.dead_end.tolist() == [name == "asleep" for name in fit.nodes.labels]

@@ -66,7 +66,7 @@ def test_tally_comes_back_whole(tally: jn.Tally, tmp_path: Path) -> None:
 @pytest.mark.parametrize("open_moves", ["censored", "ignored"])
 @pytest.mark.filterwarnings("ignore::journeys.errors.EndNotSeenWarning")
 def test_fit_comes_back_whole(tally: jn.Tally, tmp_path: Path, open_moves: str) -> None:
-    fit = jn.JourneyModel(open_moves).fit(tally)
+    fit = jn.JourneyModel(open_moves=open_moves).fit(tally)
     fit.save(tmp_path / "fit.parquet")
     back = jn.JourneyFit.load(tmp_path / "fit.parquet")
     same(fit, back)

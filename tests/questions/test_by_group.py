@@ -100,3 +100,92 @@ def test_what_has_no_groups() -> None:
         young = jn.JourneyModel().fit_whatever(tally.where(cohort="2024-03"))
     with pytest.raises(LogError, match="no group of cohort can carry a fit"):
         jn.outcomes(young, by="cohort")
+
+
+def test_a_state_that_a_group_never_sees() -> None:
+    log = simulated.simulate(600, LENGTH, np.random.default_rng(4))
+    log["country"] = np.array(["NL", "BE"])[log["customer"].to_numpy() % 2]
+    log.loc[(log["country"] == "BE") & (log["event"] == "poster"), "event"] = "tram"
+    rules = jn.JourneyRules(
+        "customer", "time", "event", converted=["joined"], silence="30d", by="country",
+        log_start=simulated.LOG_START, as_of=simulated.log_end(LENGTH),
+    )  # fmt: skip
+    whole = jn.JourneyModel().fit(jn.tally(log, rules))
+    frame = jn.first_passage(whole, "tram", method="linearised", by="country").to_frame()
+    assert (frame["country"] == "NL").sum() == 1
+    assert frame.loc[frame["country"] == "NL", "flag"].tolist() == ["'tram' is never seen"]
+    curves = jn.passage_curve(whole, start="tram", by="country")
+    assert curves.why == {("BE",): "", ("NL",): "'tram' is never seen"}
+    with pytest.raises(ValueError, match="to='bus' is not in this chain"):
+        jn.first_passage(whole, "bus", by="country")
+
+
+@pytest.mark.parametrize("clock", ["time", "steps"])
+def test_curves_are_those_of_each_part(clock: str) -> None:
+    curves, tally = jn.passage_curve(fit(), clock=clock, by="country", confidence_level=0.9), fit().tally
+    assert tally is not None
+    assert list(curves.curves) == [("BE",), ("FR",), ("NL",)]
+    alone = jn.passage_curve(jn.JourneyModel().fit(tally.where(country="FR")), clock=clock, confidence_level=0.9)
+    asked = np.array([[0.0, 3.0], [7.0, np.inf]])
+    assert curves.at(asked).shape == (3, 2, 2)
+    np.testing.assert_allclose(curves.at(asked)[1], alone.at(asked), rtol=1e-12)
+    assert curves.probability[1] == pytest.approx(alone.probability, rel=1e-12)
+    for mine, its in (
+        (curves.to_frame(), alone.to_frame()),
+        (curves.to_frame([1, 7]), alone.to_frame([1, 7])),
+        (curves.quantile(0.1), alone.quantile(0.1)),
+        (curves.given_reached().quantile(), alone.given_reached().quantile()),
+        (curves.given_reached().of_all().confidence_interval(0.8), alone.confidence_interval(0.8)),
+    ):
+        assert mine.columns[0] == "country"
+        assert list(dict.fromkeys(mine["country"])) == ["BE", "FR", "NL"]
+        pd.testing.assert_frame_equal(
+            mine[mine["country"] == "FR"].drop(columns="country").reset_index(drop=True), its, rtol=1e-9
+        )
+    assert repr(curves).startswith("<GroupCurves: 3 groups of country, PassageCurve: entry to joined in ")
+    told = curves.summary().splitlines()
+    assert told[0].startswith("From entry to joined: % who reach it in the end")
+    assert [line.split()[0] for line in told[1:]] == ["country", "BE", "FR", "NL"]
+
+
+def test_curves_of_groups_without_a_fit() -> None:
+    curves = jn.passage_curve(fit(), by=["cohort", "country"])
+    why = "followed for 15 days, no longer than the silence"
+    assert curves.why[("2024-03", "NL")] == why
+    assert np.isnan(curves.at([1.0, 5.0])[-1]).all()
+    assert not np.isnan(curves.at([1.0, 5.0])[0]).any()
+    for frame in (curves.to_frame([1.0, 5.0]), curves.quantile([0.1, 0.2])):
+        late = frame[(frame["cohort"] == "2024-03") & (frame["country"] == "NL")]
+        assert late["flag"].tolist() == [why]
+        assert late[["estimate", "std_error", "low", "high"]].isna().all(axis=None)
+        assert len(frame) == 6 * 2 + 3
+    assert why in curves.summary()
+    assert "<table" in curves._repr_html_()
+
+
+def test_what_has_no_curves_by_group() -> None:
+    with pytest.raises(ValueError, match="by: got 'city'; wanted columns that journeys are grouped by"):
+        jn.passage_curve(fit(), by="city")
+    with pytest.raises(ValueError, match="start='bus' is no state of this chain"):
+        jn.passage_curve(fit(), start="bus", by="country")
+    tally = fit().tally
+    assert tally is not None
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore", JourneysWarning)
+        young = jn.JourneyModel().fit_whatever(tally.where(cohort="2024-03"))
+    with pytest.raises(LogError, match="by: no group of cohort can carry a curve"):
+        jn.passage_curve(young, by="cohort")
+
+
+def test_curves_of_a_group_in_which_nobody_converts() -> None:
+    log = simulated.simulate(600, LENGTH, np.random.default_rng(4))
+    log["won"] = log.groupby("customer")["event"].transform(lambda events: (events == "joined").any())
+    rules = jn.JourneyRules(
+        "customer", "time", "event", converted=["joined"], silence="30d", by="won",
+        log_start=simulated.LOG_START, as_of=simulated.log_end(LENGTH),
+    )  # fmt: skip
+    curves = jn.passage_curve(jn.JourneyModel().fit(jn.tally(log, rules)), by="won")
+    nobody = curves.to_frame([5.0]).iloc[0]
+    assert nobody["estimate"] == 0
+    assert nobody["high"] > 0
+    assert "cannot be reached" in nobody["flag"]

@@ -72,7 +72,7 @@ def test_spread_is_that_of_refits() -> None:
     refits = refitter.refit(without).probability
     shape, players = (
         (fit.nodes.n_rows, fit.nodes.n_nodes, refitter.state, refitter.target),
-        np.arange(1, fit.nodes.n_rows),
+        [np.array([row]) for row in range(1, fit.nodes.n_rows)],
     )
     splits = np.array(
         [equal_split(road(*shape, p, p, fit.target_mask(None)), players, derive=False)[0] for p in refits.T]

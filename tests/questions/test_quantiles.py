@@ -17,7 +17,7 @@ from small_chains import START, known_chain, log_of_paths
 import journeys as jn
 from journeys.kernels.arrays import FloatArray
 from journeys.models.fit import JourneyFit
-from journeys.models.stays import Nodes
+from journeys.models.memory import Nodes
 from journeys.questions import quantiles
 from journeys.questions.elapsed import NO_DISTRIBUTION, Walk, timed, walk_to
 from journeys.questions.linear import TOO_FEW

@@ -10,6 +10,7 @@ import matplotlib
 import numpy as np
 import pandas as pd
 import pytest
+import simulated
 
 matplotlib.use("Agg")
 
@@ -22,7 +23,7 @@ from scipy import stats  # noqa: E402
 
 import journeys as jn  # noqa: E402
 from journeys.questions.passage_curve import passage_curve  # noqa: E402
-from journeys.show import plots  # noqa: E402
+from journeys.show import palette, plots  # noqa: E402
 
 
 @pytest.fixture(autouse=True)
@@ -228,7 +229,7 @@ def test_names_from_the_data_cannot_steer() -> None:
 
 def test_the_pair_of_colours_stays_apart_in_grey() -> None:
     """Dark blue and orange differ in lightness, so they do without colour too; weights of ITU-R BT.709."""
-    light = [float(np.dot([0.2126, 0.7152, 0.0722], to_rgb(one))) for one in (plots.BLUE, plots.ORANGE)]
+    light = [float(np.dot([0.2126, 0.7152, 0.0722], to_rgb(one))) for one in (palette.BLUE, palette.ORANGE)]
     assert abs(light[0] - light[1]) > 0.2
 
 
@@ -373,3 +374,40 @@ def test_numbers_about_touchpoints_say_what_they_are() -> None:
     credit = plots.intervals(jn.credit(fit, "joined", basis="model"))
     assert credit.get_xlabel().startswith("share of the conversions (%)")
     assert [label.get_text() for label in credit.get_yticklabels()] == ["poster", "search", "none of them"]
+
+
+def groups_fit(n_groups: int) -> jn.JourneyFit:
+    log = simulated.simulate(400, 2.5, np.random.default_rng(3))
+    log["team"] = log["customer"] % n_groups
+    rules = jn.JourneyRules(
+        "customer", "time", "event", converted=["joined"], silence="30d", by="team", cohort="month",
+        log_start=simulated.LOG_START, as_of=simulated.log_end(2.5),
+    )  # fmt: skip
+    return jn.JourneyModel().fit(jn.tally(log, rules))
+
+
+def test_a_curve_for_each_group() -> None:
+    curves = jn.passage_curve(groups_fit(3), by="team")
+    ax = plots.passage_curve(curves, log=True)
+    for i, name in enumerate("012"):
+        drawn = line(ax, name)
+        np.testing.assert_allclose(drawn[:, 1], 100 * curves.at(drawn[:, 0])[i])
+    assert len({one.get_color() for one in ax.lines if one.get_label() in ("0", "1", "2")}) == 3
+    assert len([one for one in ax.collections if isinstance(one, PolyCollection)]) == 3
+    assert len(ax.lines) == 6
+    legend = ax.get_legend()
+    assert legend is not None
+    assert [one.get_text() for one in legend.get_texts()] == ["0", "1", "2"]
+    steps = plots.passage_curve(jn.passage_curve(groups_fit(3), clock="steps", by="team"))
+    assert {one.get_drawstyle() for one in steps.lines} == {"steps-post"}
+
+
+def test_a_group_without_a_curve_is_named() -> None:
+    legend = plots.passage_curve(jn.passage_curve(groups_fit(2), by="cohort")).get_legend()
+    assert legend is not None
+    assert legend.get_texts()[-1].get_text() == "2024-03: followed for 15 days, no longer than the silence"
+
+
+def test_too_many_curves() -> None:
+    with pytest.raises(ValueError, match="got 7 groups of team; wanted at most 6 in one picture"):
+        plots.passage_curve(jn.passage_curve(groups_fit(7), clock="steps", by="team"))

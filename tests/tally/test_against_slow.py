@@ -75,10 +75,12 @@ def bins(silence_us: int | None, whole_days: bool) -> tuple[Callable[[int], int]
     return cache(dwell), cache(elapsed)
 
 
-def slow_tally(log: RandomLog) -> SlowTally:
+def slow_tally(log: RandomLog, memory: int = 1) -> SlowTally:
     """Return the slow reading of a log."""
     dwell_bin, elapsed_bin = bins(log.slow["silence_us"], log.slow["whole_days"])
-    return read_log(log.rows, **log.slow, bucket_of=bucket_of, dwell_bin=dwell_bin, elapsed_bin=elapsed_bin)
+    return read_log(
+        log.rows, **log.slow, bucket_of=bucket_of, dwell_bin=dwell_bin, elapsed_bin=elapsed_bin, memory=memory
+    )
 
 
 def source_of(log: RandomLog, chunk: int) -> pd.DataFrame | pa.RecordBatchReader:
@@ -118,29 +120,35 @@ class How:
     chunk: int = 1 << 16
     n_workers: int = 2
     compiled: bool = False
+    memory: int = 1
 
 
-WAYS = st.builds(How, st.integers(0, 7), st.integers(1, 9), st.integers(1, 4), st.sampled_from([False, is_built()]))
+COMPILED = st.sampled_from([False, is_built()])
+WAYS = st.builds(How, st.integers(0, 7), st.integers(1, 9), st.integers(1, 4), COMPILED, st.integers(1, 3))
 
 
 def drawn_way(rng: np.random.Generator) -> How:
     """Return a way of counting."""
     batch, chunk, n_workers = (int(rng.integers(low, high)) for low, high in ((0, 8), (1, 10), (1, 5)))
-    return How(batch, chunk, n_workers, is_built() and bool(rng.integers(2)))
+    return How(batch, chunk, n_workers, is_built() and bool(rng.integers(2)), int(rng.integers(1, 4)))
 
 
 def compare(log: RandomLog, how: How) -> None:
     """Hold every table and every finding of the package against the slow reading."""
-    slow = slow_tally(log)
+    slow = slow_tally(log, how.memory)
     # Batches stay as small as they are given, and so do the pieces that are counted.
     with patch.object(batches, "_FEW_ROWS", 1), patch.object(order, "CHUNK_ROWS", how.chunk):
         tally = count_log(
-            source_of(log, how.batch), JourneyRules(**log.rules), n_workers=how.n_workers, compiled=how.compiled
-        )
+            source_of(log, how.batch), JourneyRules(**log.rules), order=how.memory, n_workers=how.n_workers,
+            compiled=how.compiled,
+        )  # fmt: skip
     value = [] if tally.rules.value is None else ["value"]
     by = (tally.rules.by, period_names(tally.rules.splits_us)) if tally.rules.by else ()
-    moves = keyed(tally.table("moves"), ["bucket", "state", "next", "bin", "busy"], ["n", "dwell"], by)
+    before = [f"previous_{which}" for which in range(1, how.memory)]
+    moves = keyed(tally.table("moves"), ["bucket", "state", "next", "bin", "busy", *before], ["n", "dwell"], by)
     assert moves == slow.moves
+    before = ["previous", *(f"previous_{which}" for which in range(2, how.memory + 1))]
+    assert keyed(tally.table("contexts"), ["bucket", "state", "next", "mature", *before], ["n"], by) == slow.contexts
     entries = keyed(tally.table("entries"), ["bucket", "state", "sure"], ["n"], by)
     assert entries == {key: (n,) for key, n in slow.entries.items()}
     journeys = keyed(
