@@ -5,7 +5,7 @@ from __future__ import annotations
 import html
 import math
 import zlib
-from collections.abc import Mapping, Sequence
+from collections.abc import Collection, Mapping, Sequence
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
@@ -141,16 +141,16 @@ def plain_number(value: object) -> str:
     return "" if value is None else str(value)
 
 
-def facts(caption: str, counts: Mapping[str, int]) -> str:
-    """Return a few named counts as an HTML table for notebooks."""
-    left, right = _cell_style(False), _cell_style(True)
+def facts(caption: str, rows: Mapping[str, str], notes: Collection[str] = ()) -> str:
+    """Return a few named facts as an HTML table for notebooks."""
     lines = [
-        element("tr", element("th", name, scope="row", style=left), element("td", f"{n:,}", style=right))
-        for name, n in counts.items()
+        element("tr", element("th", name, scope="row", style=_cell_style(False)), element("td", value))
+        for name, value in rows.items()
     ]
     head = element("caption", caption, style="text-align:left;font-weight:bold;padding:0.2em 0")
+    below = [element("p", note, style="max-width:44em;margin:0.3em 0") for note in notes]
     table = element("table", head, element("tbody", *lines), style="border-collapse:collapse")
-    return str(element("div", table, style="overflow-x:auto"))
+    return str(element("div", table, *below, style="overflow-x:auto"))
 
 
 def _frame_cell(value: object, is_key: bool, is_number: bool) -> Markup:

@@ -85,9 +85,14 @@ def _parser() -> argparse.ArgumentParser:
         )
         command.set_defaults(run=run)
         command.add_argument(
-            "log", metavar="LOG", help="Parquet, CSV or Arrow file, a folder of them, or a saved tally"
+            "log",
+            metavar="LOG",
+            help="Parquet, CSV or Arrow file, a folder of them, a TOML file with a table [database], or a saved tally",
         )
         command.add_argument("--rules", metavar="FILE", help="rules file (TOML); not needed for a saved tally")
+        command.add_argument(
+            "--identity", metavar="FILE", help="table of people first seen under another id: columns old, id, since"
+        )
         command.add_argument("--debug", action="store_true", help="show where an error came from")
         if name == "summary":
             command.add_argument("--out", metavar="FOLDER", required=True, help="where the summary goes")
@@ -134,7 +139,10 @@ def _audit(options: argparse.Namespace) -> None:
     from journeys.questions.audit import audit
     from journeys.tally.store import is_tally
 
-    seen = audit(_counted(options)) if is_tally(options.log) else audit(options.log, _rules(options))
+    if is_tally(options.log):
+        seen = audit(_counted(options))
+    else:
+        seen = audit(options.log, _rules(options), identity=options.identity, progress=sys.stderr.isatty())
     if options.json:
         _print_json(
             {
@@ -180,6 +188,9 @@ def _counted(options: argparse.Namespace) -> Tally:
 
     if is_tally(options.log):
         tally = load(options.log)
+        if options.identity is not None:
+            msg = f"--identity: {options.log} is a saved tally, which holds no ids; count the log again"
+            raise RulesError(msg)
         if options.rules is not None and _rules(options) != tally.rules:
             msg = (
                 f"--rules {options.rules}: these are not the rules {options.log} was counted by; leave --rules out, "
@@ -189,7 +200,7 @@ def _counted(options: argparse.Namespace) -> Tally:
         return tally
     from journeys.tally.count import count_log
 
-    return count_log(options.log, _rules(options), progress=sys.stderr.isatty())
+    return count_log(options.log, _rules(options), identity=options.identity, progress=sys.stderr.isatty())
 
 
 def _rules(options: argparse.Namespace) -> JourneyRules:

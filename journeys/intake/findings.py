@@ -35,6 +35,8 @@ MESSAGES = {
     "first_visit_of_unsure_journey": "first visit of a journey whose start was not seen: its length is "
     "unknown, so its move is not counted",
     "tied_times": "same customer and time as the row before: ordered as they came in; `sequence` orders them",
+    "relinked": "the row bears an old id of a person in the identity table: counted as that person's",
+    "late_link": "rows of the identity table that came after rows of their old id were counted: rebuild to mend it",
     "naive_times": "time without a zone, read as UTC; write times with their zone if they are local",
     "later_than_now": "the time lies in the future; check that clock, or set as_of to leave the rows out",
     "midnight_times": "every time is a midnight; if only days were recorded, pass a column of dates",

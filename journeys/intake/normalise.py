@@ -12,7 +12,8 @@ from journeys.intake.arrays import indices_of, is_missing, numbers, plain, whole
 from journeys.intake.columns import as_text, decoded, event_names, is_in
 from journeys.intake.findings import Findings
 from journeys.intake.groups import GroupCodes
-from journeys.intake.identity import bucket_major, customer_keys
+from journeys.intake.identity import bucket_major
+from journeys.intake.people import People
 from journeys.intake.rows import EventCodes, Rows
 from journeys.intake.rule_checks import RESERVED
 from journeys.intake.rules import JourneyRules
@@ -34,6 +35,8 @@ class Normaliser:
     rules : JourneyRules
     log_start_us, as_of_us : int, optional
         First and last instant to keep, both included; left out, those of the rules, if any.
+    people : People, optional
+        How customer ids become keys; left out, with the key of the environment, if it is set.
 
     Attributes
     ----------
@@ -64,8 +67,10 @@ class Normaliser:
         *,
         log_start_us: int | None = None,
         as_of_us: int | None = None,
+        people: People | None = None,
     ) -> None:
         self.rules = rules
+        self._people = People.here() if people is None else people
         self.codes = EventCodes()
         self.targets: list[str | None] = []
         self.groups = GroupCodes(rules.group_columns)
@@ -82,6 +87,11 @@ class Normaliser:
     def whole_days(self) -> bool:
         """Whether the log holds dates without a time."""
         return bool(self._times.whole_days)
+
+    @property
+    def all_midnight(self) -> bool:
+        """Whether the times of all rows kept so far are midnights."""
+        return self._all_midnight
 
     @property
     def findings(self) -> Findings:
@@ -116,7 +126,7 @@ class Normaliser:
             kept.drop("excluded", column, is_in(batch.column(column), values, column))
         customer = plain(batch.column(rules.customer))
         kept.drop("missing_customer", rules.customer, is_missing(customer))
-        key64, self._customer_kind = customer_keys(customer, self._customer_kind)
+        key64, self._customer_kind, relinked = self._people.keys(customer, self._customer_kind)
         times = self._times.read(batch.column(rules.time))
         kept.drop("missing_time", rules.time, times.missing)
         event = event_names(batch.column(rules.event), rules.event)
@@ -126,6 +136,7 @@ class Normaliser:
         sequence = self._sequence(batch, kept)
         ended = self._ended(batch, kept)
         self._note_times(kept, times)
+        kept.note("relinked", rules.customer, relinked)
         by = None
         if rules.group_columns:
             by = self.groups.encode([batch.column(column) for column in rules.group_columns])

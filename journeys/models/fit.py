@@ -210,7 +210,7 @@ class JourneyFit:
 
     def _repr_html_(self) -> str:
         if len(self.states) > WIDEST_SHOWN:
-            return facts(repr(self).strip("<>"), {"moves": len(self.probability)})
+            return facts(repr(self).strip("<>"), {"moves": f"{len(self.probability):,}"})
         frame = self.matrix.reset_index(names="from")
         known = "a known chain" if self.tally is None else f"fitted to {self.tally.n_journeys:,} journeys"
         flagged = [f"{short_name(name)}: {text}" for name, text in self.row_flags.items() if text]

@@ -11,7 +11,6 @@ import numpy.typing as npt
 
 from journeys.errors import LogError
 from journeys.kernels.arrays import FloatArray
-from journeys.markup import frame_table
 from journeys.models.fit import JourneyFit, NotInChainError
 from journeys.models.group_fits import group_fits
 from journeys.questions.curve_result import PassageCurve
@@ -149,9 +148,7 @@ class GroupCurves:
         return f"<GroupCurves: {len(self.curves)} groups of {', '.join(self.by)}, {repr(self.any_curve)[1:-1]}>"
 
     def _repr_html_(self) -> str:
-        frame = self.quantile()
-        told = f"When shares of all groups have got there, intervals at {100 * self.any_curve.confidence_level:g} %"
-        return frame_table(frame.drop(columns="confidence_level"), told, n_keys=1)
+        return str(self.quantile().to_html(index=False, escape=True))
 
     def _of(self, kind: Callable[[PassageCurve], PassageCurve]) -> GroupCurves:
         return replace(

@@ -15,6 +15,7 @@ from journeys.kernels.phase_type import DENSE
 from journeys.markup import frame_table
 from journeys.models.fit import JourneyFit
 from journeys.models.what_if import WhatIf
+from journeys.questions.check import CheckResult, check
 from journeys.questions.comeback import ComebackResult, comeback
 from journeys.questions.compare import CompareResult, compare
 from journeys.questions.credit import CreditResult, credit
@@ -28,14 +29,13 @@ from journeys.questions.removal import RemovalResult, removal
 from journeys.questions.sensitivity import SensitivityResult, sensitivity
 from journeys.questions.stages import StagesResult, stages
 from journeys.questions.time_to_convert import IN_THE_END, SO_FAR, TimeToConvertResult, time_to_convert
-from journeys.results import Result
 
 if TYPE_CHECKING:
     import pandas as pd
 
 KEY_COLUMNS = (
-    "section", "start_state", "state", "next_state", "stage", "touchpoint", "rule", "after", "outcome", "check_name",
-    "measure", "horizon", "basis",
+    "section", "start_state", "state", "next_state", "stage", "touchpoint", "rule", "after", "outcome", "measure",
+    "horizon", "basis", "check_name", "about",
 )  # fmt: skip
 CREDITED = ("even", "first", "last")
 # Of larger chains nobody reads every move, and looking at all pairs takes long.
@@ -62,6 +62,8 @@ class Overview:
         From entry and every state to conversion.
     matrix : MovesResult
         Every move.
+    checks : CheckResult
+        Whether to believe the fit.
     back : ComebackResult or None
         Who comes back after a lapse; None where nothing lapses.
     funnel : StagesResult or None
@@ -70,8 +72,6 @@ class Overview:
         The touchpoints of the rules; None where none are named.
     shifts : SensitivityResult or None
         What one point more of each move would do; None for chains of more than 100 states.
-    checked : Result or None
-        Whether to believe the model: rows of check_name, size, p_value, verdict, advice; None where it was not asked.
     groups : dict of str to TimeToConvertResult
         Conversion by each column that journeys are grouped by.
     against : dict of str to CompareResult
@@ -85,12 +85,12 @@ class Overview:
     steps: FirstPassageResult
     days: FirstPassageResult
     matrix: MovesResult
+    checks: CheckResult
     back: ComebackResult | None = None
     funnel: StagesResult | None = None
     touched: RemovalResult | None = None
     credited: CreditResult | None = None
     shifts: SensitivityResult | None = None
-    checked: Result | None = None
     groups: dict[str, TimeToConvertResult] = field(default_factory=dict)
     against: dict[str, CompareResult] = field(default_factory=dict)
 
@@ -189,7 +189,7 @@ class Overview:
             "touchpoints": self.touched,
             "credit": self.credited,
             "sensitivity": self.shifts,
-            "checks": self.checked,
+            "checks": self.checks,
             **{f"by {column}": result for column, result in self.groups.items()},
             **{f"against the rest by {column}": result for column, result in self.against.items()},
         }
@@ -289,6 +289,7 @@ def summarise(
         steps=first_passage(fit, clock="steps", method="linearised", confidence_level=level),
         days=first_passage(fit, clock="time", method="linearised", confidence_level=level),
         matrix=moves(fit, confidence_level=level),
+        checks=check(fit, confidence_level=level),
         back=None if rules.silence_us is None else comeback(tally, confidence_level=level),
         funnel=stages(fit, confidence_level=level) if rules.stages else None,
         touched=removal(fit, confidence_level=level) if rules.touchpoints else None,

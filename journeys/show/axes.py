@@ -1,13 +1,20 @@
-"""What all pictures share: ink on white, axes without a frame."""
+"""What all pictures share: ink on white, one pair of colours, axes without a frame."""
 
 from __future__ import annotations
 
 from typing import TYPE_CHECKING
 
-from journeys.show.palette import GREY, INK
-
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
+
+INK = "#1f2328"
+GREY = "#8b9197"
+PALE = "#d9dcdf"
+# Grey dark enough to be read.
+QUIET = "#57606a"
+# The one pair of colours: dark blue and orange stay apart for every kind of colour blindness.
+BLUE = "#1b4f8a"
+ORANGE = "#d97706"
 
 
 def axes(ax: Axes | None, size: tuple[float, float]) -> Axes:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 
-from journeys.markup import plain_number, short_name
+from journeys.markup import short_name
 from journeys.questions.overview import Overview
 from journeys.show.parts import Lines, Part, Section, Table
 from journeys.show.rows import parts_of, rows_of, tally_of
@@ -52,15 +52,13 @@ def cautions() -> Section:
 
 
 def _checks(overview: Overview) -> list[Part]:
-    """Return the table of checks: what was looked at, how large it is, and what to do."""
-    if overview.checked is None:
-        return []
+    """Return the table of checks: what was looked at, what came of it, and what to do."""
     rows = []
-    for row in rows_of(overview.checked.to_frame()):
-        p_value = "" if math.isnan(row["p_value"]) else f"{row['p_value']:.2g}"
-        name = str(row["check_name"]).replace("_", " ")
-        rows.append((name, plain_number(row["size"]), p_value, str(row["verdict"]), str(row["advice"])))
-    return [Table("Checks of the model", ["check", "size", "p", "verdict", "what to do"], rows)]
+    for row in rows_of(overview.checks.to_frame()):
+        name = f"{row['check_name']} ({short_name(row['about'])})" if row["about"] else str(row["check_name"])
+        p_value = "" if math.isnan(row["p_value_corrected"]) else f"{row['p_value_corrected']:.2g}"
+        rows.append((name, str(row["verdict"]), str(row["compared"]), p_value, str(row["advice"])))
+    return [Table("Checks of the model", ["check", "verdict", "compared", "p, corrected", "what to do"], rows)]
 
 
 def _flag_lines(overview: Overview) -> list[str]:

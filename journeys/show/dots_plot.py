@@ -15,8 +15,7 @@ from journeys.questions.linear import TOO_FEW
 from journeys.questions.removal import RemovalResult
 from journeys.questions.sensitivity import SensitivityResult
 from journeys.results import Result, printable
-from journeys.show.axes import axes
-from journeys.show.palette import BLUE, GREY, INK, PALE
+from journeys.show.axes import BLUE, GREY, INK, PALE, axes
 
 if TYPE_CHECKING:
     import pandas as pd

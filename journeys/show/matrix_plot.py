@@ -9,9 +9,8 @@ import numpy as np
 from journeys.markup import short_name
 from journeys.questions.moves import MovesResult
 from journeys.results import printable
-from journeys.show.axes import axes
+from journeys.show.axes import INK, PALE, QUIET, axes
 from journeys.show.dots_plot import answer_to
-from journeys.show.palette import INK, PALE, QUIET
 from journeys.show.words import percent
 
 if TYPE_CHECKING:

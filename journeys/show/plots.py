@@ -24,11 +24,11 @@ from typing import TYPE_CHECKING, Any
 from journeys.questions.curve_result import PassageCurve
 from journeys.questions.group_curves import GroupCurves
 from journeys.results import printable
+from journeys.show.axes import BLUE, GREY, INK
 from journeys.show.axes import axes as _axes
 from journeys.show.curves import draw_curve, draw_groups, draw_observed, last_of, mark_median
 from journeys.show.dots_plot import intervals
 from journeys.show.matrix_plot import matrix
-from journeys.show.palette import BLUE, GREY, INK
 from journeys.show.result_plots import (
     comeback,
     first_passage,

@@ -7,6 +7,7 @@ from collections.abc import Hashable, Mapping, Sequence
 from typing import TYPE_CHECKING, Any
 
 from journeys.checks import duration_us
+from journeys.questions.check_rows import DIFFERS, NOTE
 from journeys.questions.overview import Overview
 from journeys.questions.time_to_convert import IN_THE_END, SO_FAR
 from journeys.show.words import amount_with_interval, length_words, outcome_words, percent, share_with_interval
@@ -118,6 +119,20 @@ def time_lines(overview: Overview) -> list[str]:
         notes = notes_of(*(row["flag"] for row in (median, most, mean)))
         told.append(line + (f"; {notes}" if notes else ""))
     return told
+
+
+def check_rows(overview: Overview) -> list[tuple[str, str]]:
+    """Return each check with its verdict, where it differs with what was compared."""
+    told = []
+    for row in rows_of(overview.checks.to_frame()):
+        name = f"{row['check_name']} ({row['about']})" if row["about"] else row["check_name"]
+        told.append((name, row["verdict"] + (f" ({row['compared']})" if is_matter(row["verdict"]) else "")))
+    return told
+
+
+def is_matter(verdict: str) -> bool:
+    """Tell whether a verdict is something to be told more of."""
+    return verdict.startswith((DIFFERS, NOTE))
 
 
 def comeback_lines(overview: Overview) -> list[str]:

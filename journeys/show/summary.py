@@ -15,7 +15,17 @@ from journeys.show.conversion_sections import opening
 from journeys.show.group_tables import column_meanings, wide_groups
 from journeys.show.html.page import summary_html
 from journeys.show.page import summary_markdown
-from journeys.show.rows import comeback_lines, count, horizon_rows, rows_of, share, span_words, tally_of, time_lines
+from journeys.show.rows import (
+    check_rows,
+    comeback_lines,
+    count,
+    horizon_rows,
+    rows_of,
+    share,
+    span_words,
+    tally_of,
+    time_lines,
+)
 from journeys.show.sections import sections
 from journeys.show.stage_table import stage_rows
 from journeys.show.tables import write_csv, write_parquet
@@ -38,6 +48,7 @@ def summary_text(overview: Overview) -> str:
     if overview.funnel is not None:
         stages = [("", "reached", "of the stage before", "median days"), *(row[:4] for row in stage_rows(overview))]
         parts.append(f"Stages, in this order\n{text_table(stages, width=0)}")
+    parts.append(f"Whether to believe the model\n{text_table(check_rows(overview))}")
     return "\n\n".join(parts) + "\n"
 
 

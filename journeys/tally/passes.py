@@ -17,6 +17,7 @@ from journeys.intake.groups import MOST_GROUPS, cohort_calendar
 from journeys.intake.identity import bucket_major
 from journeys.intake.look import Look
 from journeys.intake.normalise import Normaliser
+from journeys.intake.people import People
 from journeys.intake.read import LogSource
 from journeys.intake.rows import Rows
 from journeys.intake.rules import JourneyRules
@@ -135,6 +136,8 @@ class Pass:
         Count in compiled loops.
     progress : bool
         Show a progress bar.
+    people : People, optional
+        How customer ids become keys.
     """
 
     def __init__(
@@ -148,6 +151,7 @@ class Pass:
         n_workers: int,
         compiled: bool,
         progress: bool,
+        people: People | None = None,
     ) -> None:
         self._order = order
         self._log, self._rules, self._look, self._span, self._progress = log, rules, look, span, progress
@@ -162,7 +166,9 @@ class Pass:
             grouping=_grouping(rules, span, cohort_starts), stages=_codes_of(rules.stages, self._codes),
             touches=bool(rules.touchpoints), values=rules.value is not None, order=order,
         )  # fmt: skip
-        self._normaliser = Normaliser(rules, log_start_us=span.log_start_us, as_of_us=span.as_of_us)
+        self._normaliser = Normaliser(
+            rules, log_start_us=span.log_start_us, as_of_us=span.as_of_us, people=people
+        )
         leave_out = LeaveOut(
             rules.time, rules.event, rules.duplicates == "drop", rules.after_outcome == "stop",
             _codes_of(rules.opens, self._codes), rules.value,
@@ -172,6 +178,11 @@ class Pass:
             _Worker(range(first, last), reading, leave_out, span, rules, compiled=compiled)
             for first, last in zip(cuts, cuts[1:], strict=False)
         ]
+
+    @property
+    def normaliser(self) -> Normaliser:
+        """What has turned the batches into rows, and counted them."""
+        return self._normaliser
 
     def in_order(self) -> Tally:
         """Count while rows stream by; raises OutOfOrderError where a customer's rows come out of order."""

@@ -54,6 +54,28 @@ def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | 
     -----
     All tables stand in one file, told apart by the column `table`; a column that a table lacks is null there.
     """
+    with written_whole(path) as part:
+        _write(tally, part, more or {})
+
+
+def to_bytes(tally: Tally) -> bytes:
+    """Return what `save` would write to a file.
+
+    Parameters
+    ----------
+    tally : Tally
+
+    Returns
+    -------
+    bytes
+    """
+    sink = pa.BufferOutputStream()
+    _write(tally, sink, {})
+    return sink.getvalue().to_pybytes()  # type: ignore[no-any-return]
+
+
+def _write(tally: Tally, sink: Any, more: dict[bytes, bytes]) -> None:
+    """Write head and tables."""
     head = {
         "format_version": FORMAT_VERSION,
         "rules": tally.rules.to_dict(),
@@ -65,18 +87,16 @@ def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | 
         "groups": tally.groups,
         "part": tally.part,
         "order": tally.order,
+        "id_key": tally.id_key,
         "findings": tally.record.to_dict(),
         "checksum": _checksum(tally),
     }
-    schema = _schema(tally.rules, tally.order).with_metadata({HEAD: json.dumps(head).encode(), **(more or {})})
+    schema = _schema(tally.rules, tally.order).with_metadata({HEAD: json.dumps(head).encode(), **more})
     # Dictionaries pay where a value runs on for many rows; elsewhere they only take time.
     runs = ["table", "bucket", "state"]
-    with (
-        written_whole(path) as part,
-        pq.ParquetWriter(
-            part, schema, compression="zstd", compression_level=1, use_dictionary=runs, write_statistics=False
-        ) as writer,
-    ):
+    with pq.ParquetWriter(
+        sink, schema, compression="zstd", compression_level=1, use_dictionary=runs, write_statistics=False
+    ) as writer:
         for name in TABLES:
             held = getattr(tally, name)
             for begin in range(0, max(len(held["bucket"]), 1), _ROWS_AT_ONCE):
@@ -130,20 +150,44 @@ def load(path: str | os.PathLike[str]) -> Tally:
     StoreError
         If the file is missing, not a tally, of another format version, or damaged.
     """
+    return _read(path, repr(os.fspath(path)))
+
+
+def from_bytes(data: bytes) -> Tally:
+    """Return the tally that `to_bytes` made bytes of.
+
+    Parameters
+    ----------
+    data : bytes
+
+    Returns
+    -------
+    Tally
+
+    Raises
+    ------
+    StoreError
+        As `load`.
+    """
+    return _read(pa.BufferReader(data), "what a part of the log came back as")
+
+
+def _read(source: Any, name: str) -> Tally:
+    """Read head and tables."""
     try:
-        table = pq.read_table(path)
+        table = pq.read_table(source)
         head = json.loads((table.schema.metadata or {})[HEAD])
     except FileNotFoundError:
-        msg = f"no tally at {os.fspath(path)!r}; wanted a file written by tally.save"
+        msg = f"no tally at {name}; wanted a file written by tally.save"
         raise StoreError(msg) from None
     except (KeyError, pa.ArrowException, OSError, ValueError):
         msg = (
-            f"{os.fspath(path)!r} is not a whole tally; wanted a file written by tally.save: make it again from the log"
+            f"{name} is not a whole tally; wanted a file written by tally.save: make it again from the log"
         )
         raise StoreError(msg) from None
     if head.get("format_version") != FORMAT_VERSION:
         msg = (
-            f"{os.fspath(path)!r} has format version {head.get('format_version')}, this program reads "
+            f"{name} has format version {head.get('format_version')}, this program reads "
             f"{FORMAT_VERSION}; count the log again"
         )
         raise StoreError(msg)
@@ -153,7 +197,7 @@ def load(path: str | os.PathLike[str]) -> Tally:
     except (KeyError, TypeError, ValueError, AttributeError, pa.ArrowException, JourneysError):
         whole = False
     if not whole:
-        msg = f"{os.fspath(path)!r} is damaged (its checksum does not fit); count the log again"
+        msg = f"{name} is damaged (its checksum does not fit); count the log again"
         raise StoreError(msg)
     return tally
 
@@ -179,6 +223,7 @@ def _from_parts(table: pa.Table, head: dict[str, Any]) -> Tally:
         groups=tuple(tuple(group) for group in head["groups"]),
         part=head["part"],
         order=head["order"],
+        id_key=head["id_key"],
         states=tuple(head["states"]),
         log_start_us=head["log_start_us"],
         as_of_us=head["as_of_us"],

@@ -16,14 +16,13 @@ from journeys.checks import instant_text
 from journeys.intake.findings import Findings
 from journeys.intake.rule_checks import ALL
 from journeys.intake.rules import JourneyRules
-from journeys.kernels.histories import slot
 from journeys.kernels.records import FIRST_OUTCOME, LAPSED, OPEN
 from journeys.markup import facts
-from journeys.tally.accumulate import Columns, exact_limbs
+from journeys.tally.accumulate import Columns
 from journeys.tally.groups import Group, gathered, picked
 from journeys.tally.parts import added, of_groups
 from journeys.tally.spans import Span, longest_followed_us
-from journeys.tally.tables import CODED, FLAGS, HISTORY, NO_STATE, TABLES
+from journeys.tally.tables import TABLES
 
 if TYPE_CHECKING:
     from typing import Self
@@ -59,6 +58,8 @@ class Tally:
         How many of the last states moves are told apart by.
     part : bool
         The tally holds some of the groups of another (see `where`).
+    id_key : str, optional
+        Fingerprint of the secret that the customers' ids were hashed with; None where there was none.
 
     Examples
     --------
@@ -90,6 +91,7 @@ class Tally:
     groups: tuple[Group, ...] = ()
     part: bool = False
     order: int = 1
+    id_key: str | None = None
 
     @property
     def labels(self) -> tuple[str, ...]:
@@ -172,34 +174,9 @@ class Tally:
         ValueError
             If there is no table of that name.
         """
-        import pandas as pd
+        from journeys.tally.named import named_table
 
-        if name not in TABLES:
-            msg = f"table {name!r} is not known; wanted one of {', '.join(TABLES)}"
-            raise ValueError(msg)
-        columns: Columns = getattr(self, name)
-        labels = np.array(self.labels, dtype=object)
-        behind = np.array(["entry", "unknown", *self.labels[FIRST_OUTCOME:]], dtype=object)
-        frame: dict[str, Any] = {}
-        for column, values in columns.items():
-            if column.endswith("_high"):
-                total = column.removesuffix("_high")
-                frame[total] = pd.Series(exact_limbs(columns, total), dtype=object)
-            elif column.endswith("_low"):
-                continue
-            elif column in CODED:
-                nothing = NO_STATE.get((name, column), labels[0])
-                frame[column] = np.where(values == 0, nothing, (behind if column == "previous" else labels)[values])
-            elif column in HISTORY.values():
-                first = 1 + (column == "earlier")
-                for which in range(self.order - 1):
-                    frame[f"previous_{first + which}"] = behind[slot(values, which)]
-            elif column == "group":
-                for i, name_of_part in enumerate(self.rules.by):
-                    frame[name_of_part] = np.array([group[i] for group in self.groups], dtype=object)[values]
-            else:
-                frame[column] = values.astype(bool) if column in FLAGS else values
-        return pd.DataFrame(frame)
+        return named_table(self, name)
 
     @cached_property
     def checksum(self) -> str:
@@ -207,6 +184,8 @@ class Tally:
         head = [
             self.rules.to_dict(), self.states, self.log_start_us, self.as_of_us, self.whole_days, self.n_rows,
             self.groups, self.part, self.order,
+            # Only where there is one: who sets none shall get the same numbers as ever.
+            *([self.id_key] if self.id_key else []),
         ]  # fmt: skip
         digest = blake2b(json.dumps(head, sort_keys=True).encode(), digest_size=16)
         for table in TABLES:
@@ -230,7 +209,7 @@ class Tally:
         Raises
         ------
         JourneysError
-            If rules, span, order or kind of times differ.
+            If rules, span, order, kind of times or the key of the ids differ.
         """
         return added(self, other) if isinstance(other, Tally) else NotImplemented
 
@@ -322,17 +301,18 @@ class Tally:
         """Return the size of the tally in words."""
         ended = ", ".join(f"{n:,} {name}" for name, n in self._n_by_ending().items())
         return (
-            f"{self.n_rows:,} rows from {self._span()}: {self.n_journeys:,} journeys of {self.n_people:,} people "
-            f"through {len(self.states)} states; {ended}"
+            f"{self.n_rows:,} rows {self._span()}: {self.n_journeys:,} journeys of {self.n_people:,} people through "
+            f"{len(self.states)} states; {ended}"
         )
 
     def _span(self) -> str:
-        return " to ".join(instant_text(us)[: len("2025-06-30")] for us in (self.log_start_us, self.as_of_us))
+        first, last = (instant_text(us)[: len("2025-06-30")] for us in (self.log_start_us, self.as_of_us))
+        return f"from {first} to {last}"
 
     def _n_by_ending(self) -> dict[str, int]:
         outcome, n = self.journeys["outcome"], self.journeys["n"]
-        parts = {"ended in an outcome": (outcome != OPEN) & (outcome != LAPSED)}
-        parts |= {"lapsed": outcome == LAPSED, "open": outcome == OPEN}
+        ended, lapsed = outcome != OPEN, outcome == LAPSED
+        parts = {"ended in an outcome": ended & ~lapsed, "lapsed": lapsed, "open": ~ended}
         return {name: int(n[mask].sum()) for name, mask in parts.items()}
 
     def __repr__(self) -> str:
@@ -340,8 +320,9 @@ class Tally:
         return f"<Tally: {self.summary()}>"
 
     def _repr_html_(self) -> str:
-        told = {"rows": self.n_rows, "people": self.n_people, "journeys": self.n_journeys, "states": len(self.states)}
-        return facts(f"Tally, {self._span()}", {**told, **self._n_by_ending()})
+        ended = {name: f"{n:,}" for name, n in self._n_by_ending().items()}
+        told = {"rows": f"{self.n_rows:,}", "people": f"{self.n_people:,}", "journeys": f"{self.n_journeys:,}"}
+        return facts(f"Tally: {self._span()}", {**told, "states": f"{len(self.states):,}", **ended})
 
 
 def _timestamp(us: int) -> pd.Timestamp:

@@ -28,6 +28,7 @@ from journeys.questions import (
     elapsed,
     linear,
     measures,
+    memory_check,
     outcomes,
     quantiles,
     removal,
@@ -208,11 +209,12 @@ def test_names_every_flag():
         stage_rows.NEVER_SEEN, stage_rows.ABOVE_ONE, compare.ON_ONE_SIDE, removal.OFF_THE_WAY,
         touch_shares.DIFFER, touch_shares.TOO_SHORT, credit_by_log.BELOW_ZERO, credit_by_log.NOTHING_PAID,
         worth.NOT_OF_A_PART, worth.NOTHING_IN_ALL, sensitivity.LESS_THAN_A_POINT, what_if.WHAT_IF, what_if.NEW_MOVE,
-        "no sure entry",
+        "no sure entry", memory_check.THIN,
     }  # fmt: skip
     with_numbers = {
         "one customer holds 12 % of the value",
         "11 of 30d followed",
+        "not run: 11 conversions of journeys whose start was seen, fewer than 20",
         "followed for 29 days, no longer than the silence",
     }
     assert coded(table_after("Flags are words")) == known | with_numbers

@@ -23,7 +23,7 @@ from scipy import stats  # noqa: E402
 
 import journeys as jn  # noqa: E402
 from journeys.questions.passage_curve import passage_curve  # noqa: E402
-from journeys.show import palette, plots  # noqa: E402
+from journeys.show import axes, plots  # noqa: E402
 
 
 @pytest.fixture(autouse=True)
@@ -229,7 +229,7 @@ def test_names_from_the_data_cannot_steer() -> None:
 
 def test_the_pair_of_colours_stays_apart_in_grey() -> None:
     """Dark blue and orange differ in lightness, so they do without colour too; weights of ITU-R BT.709."""
-    light = [float(np.dot([0.2126, 0.7152, 0.0722], to_rgb(one))) for one in (palette.BLUE, palette.ORANGE)]
+    light = [float(np.dot([0.2126, 0.7152, 0.0722], to_rgb(one))) for one in (axes.BLUE, axes.ORANGE)]
     assert abs(light[0] - light[1]) > 0.2
 
 
