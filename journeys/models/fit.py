@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import os
-import warnings
 from collections.abc import Collection, Sequence
 from dataclasses import dataclass
 from functools import cached_property
@@ -11,7 +10,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from journeys.errors import DeadEndWarning
+from journeys.errors import DeadEndWarning, warn
 from journeys.kernels.arrays import BoolArray, FloatArray, IntArray
 from journeys.kernels.graph import Classes, classify
 from journeys.kernels.stays import FittedStays
@@ -238,7 +237,7 @@ def with_dead_ends(
         row_flags[labels[row]] = NO_WAY_OUT
     if len(rows):
         names = ", ".join(nodes.labels[row] for row in rows[:5])
-        warnings.warn(f"no move out of {names} was seen: taken as never left", DeadEndWarning, stacklevel=4)
+        warn(f"no move out of {names} was seen: taken as never left", DeadEndWarning)
     state, target = np.concatenate([state, rows]), np.concatenate([target, rows])
     order = np.lexsort((target, state))
     kept = np.concatenate([np.arange(len(columns[0])), np.full(len(rows), -1)])[order]

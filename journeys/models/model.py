@@ -2,13 +2,12 @@
 
 from __future__ import annotations
 
-import warnings
 from dataclasses import dataclass
 
 import numpy as np
 
 from journeys import checks
-from journeys.errors import EndNotSeenWarning, JourneysWarning, LogError, ShortLogWarning
+from journeys.errors import EndNotSeenWarning, JourneysWarning, LogError, ShortLogWarning, warn
 from journeys.kernels.arrays import BoolArray, FloatArray, sum_at
 from journeys.kernels.bins import DAY_US
 from journeys.kernels.records import FIRST_OUTCOME
@@ -188,7 +187,6 @@ class JourneyModel:
                 unseen,
                 "no stay in {} was seen as long as the silence: the share that lapses there is an upper bound",
                 EndNotSeenWarning,
-                depth=5,
             )
 
 
@@ -234,11 +232,10 @@ def _warn_if_short(tally: Tally) -> None:
         what = f"the log of {tally.days:.1f} days"
         if tally.days_followed < tally.days:
             what = f"the time of {tally.days_followed:.1f} days for which these journeys were followed"
-        warnings.warn(
+        warn(
             f"{what} is shorter than one and a half silences: times given "
             "conversion will be too narrow in their intervals",
             ShortLogWarning,
-            stacklevel=3,
         )
 
 
@@ -276,8 +273,7 @@ def _flag(row_flags: dict[str, str], labels: tuple[str, ...], rows: BoolArray, t
         row_flags[labels[row]] = text
 
 
-def _warn_rows(labels: tuple[str, ...], rows: BoolArray, text: str, kind: type[Warning], depth: int = 4) -> None:
-    """Warn of some rows; `depth` calls lie between here and the line that asked for the fit, which is the one shown."""
+def _warn_rows(labels: tuple[str, ...], rows: BoolArray, text: str, kind: type[JourneysWarning]) -> None:
     names = [short_name(labels[row]) for row in np.flatnonzero(rows)]
     shown = ", ".join(names[:5]) + (f" and {len(names) - 5} more" if len(names) > 5 else "")
-    warnings.warn(text.format(shown), kind, stacklevel=depth)
+    warn(text.format(shown), kind)

@@ -55,7 +55,7 @@ def _checks(overview: Overview) -> list[Part]:
     """Return the table of checks: what was looked at, what came of it, and what to do."""
     rows = []
     for row in rows_of(overview.checks.to_frame()):
-        name = f"{row['check_name']} ({row['about']})" if row["about"] else str(row["check_name"])
+        name = f"{row['check_name']} ({short_name(row['about'])})" if row["about"] else str(row["check_name"])
         p_value = "" if math.isnan(row["p_value_corrected"]) else f"{row['p_value_corrected']:.2g}"
         rows.append((name, str(row["verdict"]), str(row["compared"]), p_value, str(row["advice"])))
     return [Table("Checks of the model", ["check", "verdict", "compared", "p, corrected", "what to do"], rows)]
