@@ -6,6 +6,13 @@ that a person mends in the rules, in the log, or in a stored file.
 
 from __future__ import annotations
 
+import os
+import sys
+import warnings
+from pathlib import Path
+
+_PACKAGE = f"{Path(__file__).parent}{os.sep}"
+
 
 class JourneysError(Exception):
     """Base of every error the package raises by name.
@@ -47,3 +54,19 @@ class ShortLogWarning(JourneysWarning):
 
 class DeadEndWarning(JourneysWarning):
     """Some states lead to no outcome at all."""
+
+
+def warn(message: str, kind: type[JourneysWarning]) -> None:
+    """Warn at the line outside of the package that led here, however many calls lie between: that one can be mended.
+
+    Parameters
+    ----------
+    message : str
+        What happened, and what to do.
+    kind : type
+        The named warning.
+    """
+    depth, frame = 1, sys._getframe(1)
+    while frame.f_back is not None and frame.f_code.co_filename.startswith(_PACKAGE):
+        depth, frame = depth + 1, frame.f_back
+    warnings.warn(message, kind, stacklevel=depth + 1)

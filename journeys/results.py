@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import textwrap
-from collections.abc import Collection, Mapping, Sequence
+from collections.abc import Callable, Collection, Mapping, Sequence
 from dataclasses import dataclass, field, fields, replace
 from typing import TYPE_CHECKING, ClassVar
 
@@ -13,6 +13,7 @@ from journeys import checks
 from journeys.kernels.arrays import BoolArray, FloatArray, IntArray
 from journeys.kernels.draw_intervals import drawn_interval
 from journeys.kernels.intervals import clopper_pearson, log_interval, logit_interval, t_interval
+from journeys.markup import frame_table, plain_number
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -61,22 +62,21 @@ class Estimates:
         low, high = np.full(len(self.value), np.nan), np.full(len(self.value), np.nan)
         share = np.isin(self.scale, (LOGIT, CELL))
         one_sided = share & self.few
-        for mask, (lower, upper) in (
-            (
-                (self.scale == LOGIT) & ~self.few,
-                logit_interval(self.value, self.std_error, self.df, confidence_level),
-            ),
-            (
-                (self.scale == LOG) & ~self.few,
-                log_interval(self.value, self.std_error, self.df, confidence_level),
-            ),
-            ((self.scale == PLAIN) & ~self.few, t_interval(self.value, self.std_error, self.df, confidence_level)),
-            ((self.scale == CELL) & ~self.few, self._exact(confidence_level, "both")),
-            (one_sided & (self.value <= 0.5), self._exact(confidence_level, "upper")),
-            (one_sided & (self.value > 0.5), self._exact(confidence_level, "lower")),
-            ((self.scale == KNOWN) & np.isfinite(self.value), (self.value, self.value)),
-        ):
-            low[mask], high[mask] = lower[mask], upper[mask]
+        t_like = (self.value, self.std_error, self.df, confidence_level)
+        kinds: tuple[tuple[BoolArray, Callable[[], tuple[FloatArray, FloatArray]]], ...] = (
+            ((self.scale == LOGIT) & ~self.few, lambda: logit_interval(*t_like)),
+            ((self.scale == LOG) & ~self.few, lambda: log_interval(*t_like)),
+            ((self.scale == PLAIN) & ~self.few, lambda: t_interval(*t_like)),
+            ((self.scale == CELL) & ~self.few, lambda: self._exact(confidence_level, "both")),
+            (one_sided & (self.value <= 0.5), lambda: self._exact(confidence_level, "upper")),
+            (one_sided & (self.value > 0.5), lambda: self._exact(confidence_level, "lower")),
+            ((self.scale == KNOWN) & np.isfinite(self.value), lambda: (self.value, self.value)),
+        )
+        for mask, interval in kinds:
+            # most answers are of one kind, and exact bounds take long
+            if mask.any():
+                lower, upper = interval()
+                low[mask], high[mask] = lower[mask], upper[mask]
         return low, high
 
     def _exact(self, confidence_level: float, side: str) -> tuple[FloatArray, FloatArray]:
@@ -236,7 +236,7 @@ class Result:
         from pandas.api.types import is_numeric_dtype
 
         frame = self.to_frame().drop(columns="confidence_level")
-        rows = [[_cell(value) for value in row] for row in frame.to_numpy(dtype=object)]
+        rows = [[plain_number(value) for value in row] for row in frame.to_numpy(dtype=object)]
         numbers = [i for i, name in enumerate(frame.columns) if is_numeric_dtype(frame[name])]
         table = text_table([[str(name) for name in frame.columns], *rows], right=numbers, width=0)
         return f"{self.title}, intervals at {100 * self.confidence_level:g} %\n{table}"
@@ -246,7 +246,9 @@ class Result:
         return f"<{type(self).__name__}: {len(self.keys)} rows at {100 * self.confidence_level:g} % confidence>"
 
     def _repr_html_(self) -> str:
-        return str(self.to_frame().to_html(index=False, escape=True))
+        frame = self.to_frame().drop(columns="confidence_level")
+        caption = f"{self.title}, intervals at {100 * self.confidence_level:g} %"
+        return frame_table(frame, caption, getattr(self, "cautions", ()), self.keys.shape[1])
 
 
 def joined_flags(parts: list[tuple[BoolArray, str]], n: int) -> np.ndarray:
@@ -312,10 +314,3 @@ def text_table(rows: Sequence[Sequence[str]], *, right: Collection[int] = (), wi
         lines.append(f"  {head}{last[0] if last else ''}".rstrip())
         lines += [" " * indent + more for more in last[1:]]
     return "\n".join(lines)
-
-
-def _cell(value: object) -> str:
-    """Return a cell of a result as text: four digits, a blank for no number."""
-    if isinstance(value, float):
-        return "" if np.isnan(value) else f"{value:.4g}" if abs(value) < 999.95 else f"{value:,.0f}"
-    return str(value)

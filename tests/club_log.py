@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+import warnings
 from functools import cache
 from pathlib import Path
 
 import pandas as pd
 
 import journeys as jn
+from journeys.errors import JourneysWarning
 from journeys.questions.overview import Overview
 
 FOLDER = Path(__file__).resolve().parent.parent / "demo_data"
@@ -44,3 +46,12 @@ def small_log(n: int = 60, visit: str = "visit", won: str = "joined", lost: str 
             rows.append((who, start + pd.Timedelta(days=2), (won, lost)[who % 3]))
     rows.append((n, pd.Timestamp("2025-07-20T08:00:00Z"), visit))
     return pd.DataFrame(rows, columns=["who", "when", "what"]).sort_values("when", kind="stable", ignore_index=True)
+
+
+def overview_of(frame: pd.DataFrame, **settings: object) -> Overview:
+    """Return the summary of such a log, by rules as given."""
+    given = {"converted": ["joined"], "churned": ["declined"], "silence": "30d", "complete_history": True, **settings}
+    rules = jn.JourneyRules("who", "when", "what", **given)  # type: ignore[arg-type]
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore", JourneysWarning)
+        return jn.summarise(jn.JourneyModel().fit(jn.tally(frame, rules)))

@@ -20,16 +20,17 @@ from journeys.results import Result
 
 PACKAGE = Path(journeys.__file__).parent
 DEMO = PACKAGE.parent / "demo_data"
-STAGES = ("errors", "checks", "files", "kernels", "results", "intake", "tally", "models", "questions", "show",
+STAGES = ("errors", "checks", "files", "markup", "kernels", "results", "intake", "tally", "models", "questions", "show",
           "nightly", "command")
 
 # The one import that goes up: a method of the fit that forwards to a question, imported when it is called.
 FORWARDS = {("models.fit", "questions.moves")}
 
 PUBLIC = [
-    "JourneyFit", "JourneyModel", "JourneyRules", "Tally", "__version__", "audit", "comeback", "compare", "credit",
-    "first_passage", "from_wide", "outcomes", "passage_curve", "plots", "removal", "return_time", "sensitivity",
-    "stages", "summarise", "tally", "time_to_convert", "worth",
+    "DatabaseLog", "JourneyFit", "JourneyModel", "JourneyRules", "Tally", "__version__", "audit", "check", "comeback",
+    "compare", "credit", "first_passage", "from_wide", "memory_check", "outcomes", "passage_curve", "plots", "removal",
+    "return_time", "sensitivity", "stages", "summarise", "tally", "tally_spark", "time_to_convert", "worth",
+    "write_report",
 ]
 
 MODULES = {
@@ -154,8 +155,9 @@ def test_import_is_light() -> None:
     """What few calls need is imported by those; no extra, and no option, comes with the package."""
     loaded = loaded_after("import journeys")
     assert "journeys.models.fit" in loaded
-    extras = {"statsmodels", "matplotlib", "jinja2", "polars", "duckdb", "numba", "tqdm", "scipy.stats", "scipy.sparse"}
-    assert not loaded & {*extras, "pandas", "scipy.linalg", "journeys.show.summary", "journeys.command"}
+    extras = {"statsmodels", "matplotlib", "jinja2", "polars", "duckdb", "pyspark", "adbc_driver_manager", "numba"}
+    slow = {"pandas", "tqdm", "scipy.stats", "scipy.sparse", "scipy.linalg"}
+    assert not loaded & {*extras, *slow, "journeys.show.summary", "journeys.command"}
 
 
 @pytest.mark.parametrize("kind", ["parquet", "csv", "arrow", "folder"])

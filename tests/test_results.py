@@ -9,9 +9,10 @@ from functools import cache
 import numpy as np
 import pandas as pd
 import pytest
-from club_log import club_fit, small_log
+from club_log import club_fit, club_tally, small_log
 
 import journeys as jn
+from journeys.markup import escaped
 from journeys.questions.moves import moves
 from journeys.results import (
     CELL,
@@ -376,6 +377,39 @@ def test_html_is_escaped_and_text_cannot_steer_a_terminal(name: str) -> None:
     assert html.count("<table") == 1
     assert "\x1b" not in result.summary()
     assert len(result.summary().split("\n")) == len(result.to_frame()) + 2
+
+
+def test_notebooks_show_a_captioned_table_with_its_cautions() -> None:
+    answer = jn.sensitivity(club_fit())
+    html = answer._repr_html_()
+    assert "<caption" in html
+    assert "What one point more would do, intervals at 95 %" in html
+    assert html.count('scope="col"') == answer.to_frame().shape[1] - 1, "the level stands in the caption"
+    assert html.count("<tr>") == 61, "a head and the first sixty rows"
+    assert f"{len(answer.to_frame()) - 60} more rows: .to_frame() holds them all." in html
+    assert all(escaped(caution) in html for caution in answer.cautions)
+    assert "nan" not in html
+
+
+def test_every_thing_shown_in_a_notebook_is_a_table_whose_names_are_text() -> None:
+    fit = hostile_chain()
+    overview = jn.summarise(club_fit())
+    shown = [fit, jn.audit(club_tally()), club_tally(), overview, jn.passage_curve(club_fit()), club_fit()]
+    for thing in shown:
+        html = thing._repr_html_()
+        assert html.count("<table") >= 1
+        assert html.count("<caption") == html.count("<table")
+        assert html.count("<div") == html.count("</div")
+    assert "<script" not in fit._repr_html_()
+    assert "12,923" in club_tally()._repr_html_()
+
+
+def test_long_names_are_cut_and_infinite_numbers_shown_in_notebooks() -> None:
+    chain = pd.DataFrame([[0.5, 0.5]], index=["w" * 10_000], columns=["won", "lost"])
+    html = jn.first_passage(jn.JourneyFit.from_matrix(chain), "won")._repr_html_()
+    assert len(html) < 20_000
+    assert "(10,000 characters, " in html
+    assert "∞" in html
 
 
 @pytest.mark.parametrize(

@@ -7,22 +7,25 @@ import json
 import logging
 import sys
 import warnings
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, NoReturn
 
+from journeys.command import nightly
 from journeys.errors import JourneysError, JourneysWarning, LimitError, LogError, RulesError
 
 if TYPE_CHECKING:
     from journeys.intake.rules import JourneyRules
+    from journeys.nightly.then_and_now import ThenAndNow
     from journeys.tally.tally import Tally
 
-DONE, FAILED, USAGE, LIMITS = 0, 1, 2, 3
+DONE, FAILED, USAGE, LIMITS, ALARM = 0, 1, 2, 3, nightly.ALARM
 EXIT_CODES = """exit codes:
   0  done
   1  failed
   2  wrong usage or settings
   3  the log broke its quality limits, nothing was published
+  4  done, and a change alarm tripped (nightly)
 """
 logger = logging.getLogger("journeys")
 
@@ -50,7 +53,7 @@ def main(argv: Sequence[str] | None = None) -> int:
         warnings.showwarning = _log_warning
         warnings.simplefilter("always", JourneysWarning)
         try:
-            options.run(options)
+            return int(options.run(options) or DONE)
         except JourneysError as error:
             code = LIMITS if isinstance(error, LimitError) else USAGE if isinstance(error, RulesError) else FAILED
             return _refused(error, code, options.debug)
@@ -60,7 +63,6 @@ def main(argv: Sequence[str] | None = None) -> int:
         except Exception as error:
             fault = f"{type(error).__name__}: {error}; this should not happen, --debug shows where it did"
             return _refused(error, FAILED, options.debug, fault)
-    return DONE
 
 
 def _parser() -> argparse.ArgumentParser:
@@ -76,22 +78,22 @@ def _parser() -> argparse.ArgumentParser:
         ("audit", _audit, "what was left out of the log, and whether it can carry the model"),
         ("tally", _tally, "count the log and keep the counts"),
     ):
-        command = commands.add_parser(
-            name,
-            help=what,
-            description=what,
-            epilog=EXIT_CODES,
-            formatter_class=argparse.RawDescriptionHelpFormatter,
-        )
-        command.set_defaults(run=run)
+        command = _command(commands, name, run, what)
         command.add_argument(
-            "log", metavar="LOG", help="Parquet, CSV or Arrow file, a folder of them, or a saved tally"
+            "log",
+            metavar="LOG",
+            help="Parquet, CSV or Arrow file, a folder of them, a TOML file with a table [database], or a saved tally",
         )
         command.add_argument("--rules", metavar="FILE", help="rules file (TOML); not needed for a saved tally")
-        command.add_argument("--debug", action="store_true", help="show where an error came from")
+        command.add_argument(
+            "--identity", metavar="FILE", help="table of people first seen under another id: columns old, id, since"
+        )
         if name == "summary":
             command.add_argument("--out", metavar="FOLDER", required=True, help="where the summary goes")
             command.add_argument("--keep-tally", action="store_true", help="write the tally there too")
+            command.add_argument(
+                "--generation", type=int, metavar="N", help="LOG is a ledger: what it published then, and now, and why"
+            )
             command.add_argument(
                 "--horizon",
                 action="append",
@@ -102,7 +104,19 @@ def _parser() -> argparse.ArgumentParser:
             command.add_argument("--out", metavar="FILE", required=True, help="where the tally goes")
         else:
             command.add_argument("--json", action="store_true", help="print for machines")
+    nightly.add_nightly(_command(commands, "nightly", nightly.nightly, "count what is new into a ledger, and publish"))
+    nightly.add_forget(_command(commands, "forget", nightly.forget, "take customers out of a ledger"))
     return parser
+
+
+def _command(commands: Any, name: str, run: Callable[[argparse.Namespace], int | None], what: str) -> Any:
+    """Add a command, with what all commands have."""
+    command = commands.add_parser(
+        name, help=what, description=what, epilog=EXIT_CODES, formatter_class=argparse.RawDescriptionHelpFormatter
+    )
+    command.set_defaults(run=run)
+    command.add_argument("--debug", action="store_true", help="show where an error came from")
+    return command
 
 
 def _summary(options: argparse.Namespace) -> None:
@@ -115,6 +129,7 @@ def _summary(options: argparse.Namespace) -> None:
         msg = f"--out {out}: is a file; wanted a folder, new or there already"
         raise RulesError(msg)
     horizons = _horizons(options)
+    compared = _compared(options)
     tally = _counted(options)
     check_limits(tally)
     fit = JourneyModel().fit(tally)
@@ -122,6 +137,8 @@ def _summary(options: argparse.Namespace) -> None:
     written = write_summary(overview, out, keep_tally=options.keep_tally)
     for path in written:
         logger.info("wrote %s", path)
+    if compared is not None and not options.json:
+        sys.stdout.write(compared.summary() + "\n")
     if options.json:
         from journeys.show.tables import file_frame
 
@@ -130,11 +147,26 @@ def _summary(options: argparse.Namespace) -> None:
         sys.stdout.write(summary_text(overview))
 
 
+def _compared(options: argparse.Namespace) -> ThenAndNow | None:
+    """Return what a ledger published in a generation, beside its newest; None where none is asked for."""
+    if options.generation is None:
+        return None
+    from journeys.nightly.then_and_now import is_ledger, then_and_now
+
+    if not is_ledger(options.log):
+        msg = f"--generation {options.generation}: {options.log} is no ledger; wanted the folder that `nightly` keeps"
+        raise RulesError(msg)
+    return then_and_now(options.log, options.generation)
+
+
 def _audit(options: argparse.Namespace) -> None:
     from journeys.questions.audit import audit
     from journeys.tally.store import is_tally
 
-    seen = audit(_counted(options)) if is_tally(options.log) else audit(options.log, _rules(options))
+    if is_tally(options.log):
+        seen = audit(_counted(options))
+    else:
+        seen = audit(options.log, _rules(options), identity=options.identity, progress=sys.stderr.isatty())
     if options.json:
         _print_json(
             {
@@ -176,10 +208,15 @@ def _horizons(options: argparse.Namespace) -> list[str] | None:
 
 def _counted(options: argparse.Namespace) -> Tally:
     """Return the tally of LOG, or LOG itself where it is a saved one."""
+    from journeys.nightly.then_and_now import is_ledger, tally_of_ledger
     from journeys.tally.store import is_tally, load
 
-    if is_tally(options.log):
-        tally = load(options.log)
+    ledger = is_ledger(options.log)
+    if ledger or is_tally(options.log):
+        tally = tally_of_ledger(options.log, getattr(options, "generation", None)) if ledger else load(options.log)
+        if options.identity is not None:
+            msg = f"--identity: {options.log} is a saved tally, which holds no ids; count the log again"
+            raise RulesError(msg)
         if options.rules is not None and _rules(options) != tally.rules:
             msg = (
                 f"--rules {options.rules}: these are not the rules {options.log} was counted by; leave --rules out, "
@@ -189,7 +226,7 @@ def _counted(options: argparse.Namespace) -> Tally:
         return tally
     from journeys.tally.count import count_log
 
-    return count_log(options.log, _rules(options), progress=sys.stderr.isatty())
+    return count_log(options.log, _rules(options), identity=options.identity, progress=sys.stderr.isatty())
 
 
 def _rules(options: argparse.Namespace) -> JourneyRules:

@@ -23,6 +23,7 @@ MESSAGES = {
     "out_of_range_time": "left out: the time lies outside the years 1 to 9999; check the unit of the times",
     "before_log_start": "left out: earlier than log_start; set log_start earlier to count them",
     "after_as_of": "left out: later than as_of; set as_of later to count them",
+    "too_late": "left out: older than what the ledger had counted by then; a longer `lateness` waits for such rows",
     "unmapped_event": "left out: `states` and `unmapped` drop this event; name it in `states` to count it",
     "duplicate": 'equal to an earlier row in every column read; duplicates="drop" counts each once',
     "ended_before": "left out: the customer had ended before the log begins, says the ended_before column",
@@ -35,6 +36,8 @@ MESSAGES = {
     "first_visit_of_unsure_journey": "first visit of a journey whose start was not seen: its length is "
     "unknown, so its move is not counted",
     "tied_times": "same customer and time as the row before: ordered as they came in; `sequence` orders them",
+    "relinked": "the row bears an old id of a person in the identity table: counted as that person's",
+    "late_link": "rows of the identity table that came after rows of their old id were counted: rebuild to mend it",
     "naive_times": "time without a zone, read as UTC; write times with their zone if they are local",
     "later_than_now": "the time lies in the future; check that clock, or set as_of to leave the rows out",
     "midnight_times": "every time is a midnight; if only days were recorded, pass a column of dates",

@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import datetime as dt
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterator, Mapping, Sequence
+from typing import Any
 from zoneinfo import ZoneInfo
 
 import numpy as np
@@ -79,6 +80,30 @@ class GroupCodes:
         codes[order] = [self._of(tuple(int(part[row]) for part in parts)) for row in first[order]]
         return codes[which]
 
+    def to_dict(self) -> dict[str, Any]:
+        """Return the lists as plain values that JSON can hold.
+
+        Returns
+        -------
+        dict
+        """
+        return {
+            "columns": [{"kind": column.kind, "names": list(column.names)} for column in self._columns],
+            "combinations": [list(values) for values in self._code],
+        }
+
+    def resume(self, stored: Mapping[str, Any]) -> None:
+        """Go on with the lists that `to_dict` gave.
+
+        Parameters
+        ----------
+        stored : mapping
+        """
+        for column, held in zip(self._columns, stored["columns"], strict=True):
+            column.resume(held["kind"], held["names"])
+        for values in stored["combinations"]:
+            self._of(tuple(values))
+
     def _of(self, values: tuple[int, ...]) -> int:
         code = self._code.setdefault(values, len(self._code))
         if code == len(self.combinations):
@@ -101,7 +126,13 @@ class _Values:
         self.name = name
         self.names: list[Value] = []
         self._code: dict[Value, int] = {}
-        self._kind: str | None = None
+        self.kind: str | None = None
+
+    def resume(self, kind: str | None, names: Sequence[Value]) -> None:
+        """Go on with a list of values of a kind."""
+        self.kind = kind
+        for name in names:
+            self._of(name)
 
     def encode(self, array: pa.Array) -> NDArray[np.int64]:
         """Return the codes of the rows' values."""
@@ -148,10 +179,10 @@ class _Values:
                 "round or cut it into classes before"
             )
             raise LogError(msg)
-        if self._kind not in (None, held):
-            msg = f"by: column {self.name!r} changes between {self._kind} and {held}; write it as one of them"
+        if self.kind not in (None, held):
+            msg = f"by: column {self.name!r} changes between {self.kind} and {held}; write it as one of them"
             raise LogError(msg)
-        self._kind = held
+        self.kind = held
 
     @staticmethod
     def _value(value: object) -> Value:

@@ -2,7 +2,7 @@
 
 Whole numbers go through the finaliser of splitmix64, which no two numbers leave alike. Text goes by its UTF-8
 bytes, eight at a time: each word, offset by its place, goes through the same finaliser, and so does their
-sum together with the length. The key is no protection of the id: see the notes on privacy.
+sum together with the length. Such a key is no protection of the id: that takes a secret (`id_key`).
 """
 
 from __future__ import annotations
@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 
 from journeys.errors import LogError
 from journeys.intake.arrays import indices_of, is_missing, is_text, numbers, plain, whole_numbers
+from journeys.intake.id_key import IdKey
 from journeys.kernels import compiled
 
 N_BUCKETS = 200
@@ -31,7 +32,7 @@ _FIX = (
     "give customers whole numbers that fit in int64, or text: column.astype(str), "
     "or CAST(column AS VARCHAR) in SQL"
 )
-_KINDS = {"integer": "whole numbers", "text": "text"}
+KINDS = {"integer": "whole numbers", "text": "text"}
 
 
 def mix(values: NDArray[np.uint64]) -> NDArray[np.uint64]:
@@ -69,7 +70,9 @@ def mix(values: NDArray[np.uint64]) -> NDArray[np.uint64]:
     return out
 
 
-def customer_keys(array: pa.Array, kind: str | None = None) -> tuple[NDArray[np.uint64], str | None]:
+def customer_keys(
+    array: pa.Array, kind: str | None = None, id_key: IdKey | None = None
+) -> tuple[NDArray[np.uint64], str | None]:
     """64-bit keys of customer ids, and the kind of ids.
 
     Parameters
@@ -78,6 +81,8 @@ def customer_keys(array: pa.Array, kind: str | None = None) -> tuple[NDArray[np.
         Whole numbers of any width (also as floats, if all are whole), or text or bytes in any encoding.
     kind : {"integer", "text"} or None
         Kind of the ids seen before; None if none were.
+    id_key : IdKey, optional
+        Hash each distinct id with this secret instead.
 
     Returns
     -------
@@ -105,9 +110,12 @@ def customer_keys(array: pa.Array, kind: str | None = None) -> tuple[NDArray[np.
         return np.zeros(len(array), dtype=np.uint64), kind
     now = "text" if is_text(values.type) else "integer"
     if kind is not None and now != kind:
-        raise LogError(f"customer ids change from {_KINDS[kind]} to {_KINDS[now]} within the log; {_FIX}")
-    is_words = now == "text"
-    keys = _text_keys(values) if is_words else mix(whole_numbers(values, "customer id", _FIX).view(np.uint64))
+        raise LogError(f"customer ids change from {KINDS[kind]} to {KINDS[now]} within the log; {_FIX}")
+    if now == "text":
+        keys = _text_keys(values) if id_key is None else id_key.of_texts(values)
+    else:
+        whole = whole_numbers(values, "customer id", _FIX)
+        keys = mix(whole.view(np.uint64)) if id_key is None else id_key.of_numbers(whole)
     return (keys[indices_of(array)] if is_dictionary else keys), now
 
 

@@ -3,9 +3,11 @@
 from __future__ import annotations
 
 import time
+from collections.abc import Iterable
 from dataclasses import dataclass
 
 import numpy as np
+import pyarrow as pa
 from numpy.typing import NDArray
 
 from journeys.checks import DAY_US, MAX_TIME_US, MIN_TIME_US, instant_text
@@ -97,26 +99,98 @@ def first_look(source: LogSource, rules: JourneyRules, *, now_us: int | None = N
     now = time.time_ns() // 1_000 if now_us is None else now_us
     if (look := _look_at_ranges(source, rules, now)) is not None:
         return look
+    return glance(source.batches([rules.time]), rules, now).look(rules, source.describe())
+
+
+@dataclass(frozen=True, slots=True)
+class Glance:
+    """What the times of a part of a log say; those of all parts are added up before anything is concluded.
+
+    Attributes
+    ----------
+    days : _Days
+        Rows and first and last usable time of each day between the dates of the rules.
+    n_rows, n_later_than_now : int
+        As in `Look`.
+    whole_days : bool or None
+        The column holds dates; None where there was no time at all.
+    """
+
+    days: _Days
+    n_rows: int
+    n_later_than_now: int
+    whole_days: bool | None
+
+    def __add__(self, other: Glance) -> Glance:
+        """Return what both parts say together."""
+        return Glance(
+            self.days + other.days,
+            self.n_rows + other.n_rows,
+            self.n_later_than_now + other.n_later_than_now,
+            other.whole_days if self.whole_days is None else self.whole_days,
+        )
+
+    def look(self, rules: JourneyRules, where: str) -> Look:
+        """Conclude, or raise what `first_look` raises.
+
+        Parameters
+        ----------
+        rules : JourneyRules
+        where : str
+            What the log is, for the message.
+
+        Returns
+        -------
+        Look
+
+        Raises
+        ------
+        LogError
+        """
+        days, counts = self.days, (self.n_rows, bool(self.whole_days), self.n_later_than_now)
+        if not len(days.day):
+            if rules.log_start_us is not None and rules.as_of_us is not None:
+                # A part of a log, or a day on which nothing happened: its span is known all the same.
+                return Look(rules.log_start_us, rules.as_of_us, *counts)
+            between = " between log_start and as_of" if rules.log_start or rules.as_of else ""
+            raise LogError(f"column {rules.time!r} of {where} holds no usable time{between}")
+        if fixes := _clock_faults(days, rules):
+            raise LogError(f"column {rules.time!r}: " + "; ".join(fixes))
+        return Look(int(days.first[0]), int(days.last[-1]), *counts)
+
+
+def glance(batches: Iterable[pa.RecordBatch], rules: JourneyRules, now_us: int) -> Glance:
+    """Add up the times of a part of a log.
+
+    Parameters
+    ----------
+    batches : iterable of pyarrow.RecordBatch
+        With the time column alone.
+    rules : JourneyRules
+    now_us : int
+        What counts as the future.
+
+    Returns
+    -------
+    Glance
+
+    Raises
+    ------
+    LogError
+        If the column holds no times.
+    """
     reader, n_rows, n_later = TimeReader(rules.time), 0, 0
     empty = np.empty(0, dtype=np.int64)
     days = _Days(empty, empty, empty, empty)
-    for batch in source.batches([rules.time]):
+    for batch in batches:
         n_rows += batch.num_rows
         times = reader.read(batch.column(0))
         us = times.us[times.usable()]
-        n_later += int(np.count_nonzero(us > now))
+        n_later += int(np.count_nonzero(us > now_us))
         us = _between(us, rules)
         if len(us):
             days += _per_day(us)
-    if not len(days.day):
-        if rules.log_start_us is not None and rules.as_of_us is not None:
-            # A part of a log, or a day on which nothing happened: its span is known all the same.
-            return Look(rules.log_start_us, rules.as_of_us, n_rows, bool(reader.whole_days), n_later)
-        between = " between log_start and as_of" if rules.log_start or rules.as_of else ""
-        raise LogError(f"column {rules.time!r} of {source.describe()} holds no usable time{between}")
-    if fixes := _clock_faults(days, rules):
-        raise LogError(f"column {rules.time!r}: " + "; ".join(fixes))
-    return Look(int(days.first[0]), int(days.last[-1]), n_rows, bool(reader.whole_days), n_later)
+    return Glance(days, n_rows, n_later, reader.whole_days)
 
 
 def _look_at_ranges(source: LogSource, rules: JourneyRules, now: int) -> Look | None:

@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
+from typing import Any
+
 import numpy as np
 import pyarrow as pa
 from numpy.typing import NDArray
@@ -12,7 +15,8 @@ from journeys.intake.arrays import indices_of, is_missing, numbers, plain, whole
 from journeys.intake.columns import as_text, decoded, event_names, is_in
 from journeys.intake.findings import Findings
 from journeys.intake.groups import GroupCodes
-from journeys.intake.identity import bucket_major, customer_keys
+from journeys.intake.identity import bucket_major
+from journeys.intake.people import People
 from journeys.intake.rows import EventCodes, Rows
 from journeys.intake.rule_checks import RESERVED
 from journeys.intake.rules import JourneyRules
@@ -34,6 +38,8 @@ class Normaliser:
     rules : JourneyRules
     log_start_us, as_of_us : int, optional
         First and last instant to keep, both included; left out, those of the rules, if any.
+    people : People, optional
+        How customer ids become keys; left out, with the key of the environment, if it is set.
 
     Attributes
     ----------
@@ -64,8 +70,10 @@ class Normaliser:
         *,
         log_start_us: int | None = None,
         as_of_us: int | None = None,
+        people: People | None = None,
     ) -> None:
         self.rules = rules
+        self._people = People.here() if people is None else people
         self.codes = EventCodes()
         self.targets: list[str | None] = []
         self.groups = GroupCodes(rules.group_columns)
@@ -82,6 +90,11 @@ class Normaliser:
     def whole_days(self) -> bool:
         """Whether the log holds dates without a time."""
         return bool(self._times.whole_days)
+
+    @property
+    def all_midnight(self) -> bool:
+        """Whether the times of all rows kept so far are midnights."""
+        return self._all_midnight
 
     @property
     def findings(self) -> Findings:
@@ -116,7 +129,7 @@ class Normaliser:
             kept.drop("excluded", column, is_in(batch.column(column), values, column))
         customer = plain(batch.column(rules.customer))
         kept.drop("missing_customer", rules.customer, is_missing(customer))
-        key64, self._customer_kind = customer_keys(customer, self._customer_kind)
+        key64, self._customer_kind, relinked = self._people.keys(customer, self._customer_kind)
         times = self._times.read(batch.column(rules.time))
         kept.drop("missing_time", rules.time, times.missing)
         event = event_names(batch.column(rules.event), rules.event)
@@ -126,6 +139,7 @@ class Normaliser:
         sequence = self._sequence(batch, kept)
         ended = self._ended(batch, kept)
         self._note_times(kept, times)
+        kept.note("relinked", rules.customer, relinked)
         by = None
         if rules.group_columns:
             by = self.groups.encode([batch.column(column) for column in rules.group_columns])
@@ -135,6 +149,40 @@ class Normaliser:
         self.n_kept += len(rows)
         self._all_midnight = self._all_midnight and not (rows.time % DAY_US).any()
         return rows
+
+    def learned(self) -> dict[str, Any]:
+        """Return what later batches are to be read with, as plain values that JSON can hold.
+
+        Returns
+        -------
+        dict
+        """
+        return {
+            "n_rows": self.n_rows, "n_kept": self.n_kept, "all_midnight": self._all_midnight,
+            "customer_kind": self._customer_kind, "whole_days": self._times.whole_days,
+            "events": list(self.codes.names), "groups": self.groups.to_dict(), "findings": self._found.to_dict(),
+        }  # fmt: skip
+
+    def resume(self, learned: Mapping[str, Any]) -> None:
+        """Go on where another reading of the same log left off.
+
+        Parameters
+        ----------
+        learned : mapping
+            What `learned` gave there.
+
+        Raises
+        ------
+        LogError
+            If the rules now give an event a reserved name.
+        """
+        self.n_rows, self.n_kept = learned["n_rows"], learned["n_kept"]
+        self._all_midnight, self._customer_kind = learned["all_midnight"], learned["customer_kind"]
+        self._times.whole_days = learned["whole_days"]
+        self.codes = EventCodes(list(learned["events"]))
+        self.targets = [self._target(name) for name in self.codes.names]
+        self.groups.resume(learned["groups"])
+        self._found = Findings.from_dict(learned["findings"])
 
     def _drop_times(self, kept: _Kept, times: Times) -> None:
         """Leave out what lies outside the calendar or outside the log's two dates."""

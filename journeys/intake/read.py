@@ -12,6 +12,7 @@ from typing import Any
 import pyarrow as pa
 
 from journeys.errors import LogError
+from journeys.intake.database import DatabaseLog
 from journeys.intake.read_files import find_files
 from journeys.intake.sources import FileSource, LogSource, PandasSource, StreamSource, TableSource
 
@@ -19,7 +20,7 @@ __all__ = ["LogSource", "open_log"]
 
 _WANTED = (
     "wanted the path of a Parquet, CSV or Arrow file or of a folder of them, a data frame, an Arrow table or "
-    "reader, or an iterator of record batches"
+    "reader, an iterator of record batches, or a DatabaseLog"
 )
 # What database drivers call the method that gives a result as a reader of record batches.
 _CURSOR_METHODS = ("fetch_record_batch", "to_arrow_reader")
@@ -30,10 +31,10 @@ def open_log(source: Any, columns: Sequence[str], *, text: Sequence[str] = ()) -
 
     Parameters
     ----------
-    source : path, sequence of paths, data frame, Arrow data, iterator of record batches or cursor
-        Parquet, CSV or Arrow files or a folder of them; pandas frame; anything with `__arrow_c_stream__`
-        (polars frames, duckdb relations, Arrow tables and readers); an iterator of record batches; an object
-        with `fetch_record_batch`.
+    source : path, sequence of paths, data frame, Arrow data, iterator of record batches, cursor or DatabaseLog
+        Parquet, CSV or Arrow files or a folder of them; a TOML file with a table `[database]`; pandas frame;
+        anything with `__arrow_c_stream__` (polars frames, duckdb relations, Arrow tables and readers); an
+        iterator of record batches; an object with `fetch_record_batch`.
     columns : sequence of str
         Columns it must have.
     text : sequence of str
@@ -68,6 +69,8 @@ def _source(source: Any, text: tuple[str, ...]) -> LogSource:
     if isinstance(source, LogSource):
         return source
     if isinstance(source, str | os.PathLike):
+        if Path(source).suffix == ".toml":
+            return DatabaseLog.from_toml(source)
         return FileSource(find_files(source), text, Path(source).name)
     if _all_are(source, str | os.PathLike):
         return FileSource(find_files(source), text, Path(source[0]).name)

@@ -18,7 +18,7 @@ from journeys.intake import group_checks
 from journeys.intake.frozen import FrozenMap
 
 RESERVED = ("entry", "lapsed", "open", "unknown")
-LIMITS = {"unreadable": 0.01}
+LIMITS = {"unreadable": 0.01, "late": 0.001}
 # In place of a list of touchpoints: every state.
 ALL = "all"
 # What a journey has touched is kept as the bits of one whole number.

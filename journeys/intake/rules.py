@@ -76,7 +76,8 @@ class JourneyRules(Settings):
         outcome's too; an outcome merged with the one before it adds nothing). Kept to a millionth; negative for
         what is paid back; a missing one counts as 0 and is a finding.
     limits : mapping of str to float
-        "unreadable": largest share of rows that may lack a readable customer, time or event.
+        "unreadable": largest share of rows that may lack a readable customer, time or event. "late": largest share
+        of a night's rows that may come too late for its ledger.
 
     Raises
     ------

@@ -80,12 +80,7 @@ class Settings:
             If the file cannot be read, or what it says is wrong.
         """
         file = Path(path)
-        try:
-            settings = tomllib.loads(file.read_text(encoding="utf-8"))
-        except OSError as fault:
-            raise RulesError(f"rules file {file}: {fault.strerror or 'cannot be read'}") from None
-        except (tomllib.TOMLDecodeError, UnicodeDecodeError) as fault:
-            raise RulesError(f"rules file {file}: not TOML ({fault})") from None
+        settings = read_toml(file, "rules file")
         try:
             return cls.from_dict(settings)
         except RulesError as fault:
@@ -149,3 +144,29 @@ def _plain(value: Any) -> Any:
     if isinstance(value, Mapping):
         return {key: _plain(item) for key, item in value.items()}
     return list(value) if isinstance(value, tuple) else value
+
+
+def read_toml(file: Path, what: str) -> dict[str, Any]:
+    """Return what a TOML file says.
+
+    Parameters
+    ----------
+    file : Path
+    what : str
+        What the file is, for the message.
+
+    Returns
+    -------
+    dict
+
+    Raises
+    ------
+    RulesError
+        If it cannot be read.
+    """
+    try:
+        return tomllib.loads(file.read_text(encoding="utf-8"))
+    except OSError as fault:
+        raise RulesError(f"{what} {file}: {fault.strerror or 'cannot be read'}") from None
+    except (tomllib.TOMLDecodeError, UnicodeDecodeError) as fault:
+        raise RulesError(f"{what} {file}: not TOML ({fault})") from None

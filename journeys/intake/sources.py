@@ -149,13 +149,17 @@ class FileSource(LogSource):
 
     def _read(self, columns: list[str]) -> Iterator[pa.RecordBatch]:
         """Batches file by file."""
-        inner = [name for name in columns if name not in self._partition]
         for file in self._files:
-            check_columns(self._names_in(file), columns, f"{file.kind} file {file.path}")
-            # A row count is all that a file need give if its folders say the rest: read any column then.
-            read = inner or file_schema(file, self._text).names[:1]
-            for batch in file_batches(file, read, self._text):
-                yield self._with_partition(batch, file)
+            yield from self._read_file(file, columns)
+
+    def _read_file(self, file: LogFile, columns: list[str]) -> Iterator[pa.RecordBatch]:
+        """Batches of one file."""
+        check_columns(self._names_in(file), columns, f"{file.kind} file {file.path}")
+        inner = [name for name in columns if name not in self._partition]
+        # A row count is all that a file need give if its folders say the rest: read any column then.
+        read = inner or file_schema(file, self._text).names[:1]
+        for batch in file_batches(file, read, self._text):
+            yield self._with_partition(batch, file)
 
     def _with_partition(self, batch: pa.RecordBatch, file: LogFile) -> pa.RecordBatch:
         """Batch with the columns that the file's folders give."""

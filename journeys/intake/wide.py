@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import warnings
 from collections.abc import Mapping, Sequence
 from typing import Any
 
@@ -10,7 +9,7 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.compute as pc
 
-from journeys.errors import JourneysWarning, LogError
+from journeys.errors import JourneysWarning, LogError, warn
 from journeys.intake.arrays import from_numpy, from_texts, is_missing, is_text, numbers, plain
 from journeys.intake.columns import decoded
 from journeys.intake.read import open_log
@@ -212,9 +211,8 @@ def _cast(array: pa.Array, kind: pa.DataType) -> pa.Array:
 def _warn_of_none(seen: np.ndarray, n_rows: int) -> None:
     """Say how many rows have no event."""
     if len(seen) < n_rows:
-        warnings.warn(
+        warn(
             f"{n_rows - len(seen):,} of {n_rows:,} rows have no time in any of the columns: without an event their "
             "customers are not in the log (leave those rows out first, or give everybody a time of entry)",
             JourneysWarning,
-            stacklevel=3,
         )

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import os
-import warnings
 from collections.abc import Collection, Sequence
 from dataclasses import dataclass
 from functools import cached_property
@@ -11,10 +10,11 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from journeys.errors import DeadEndWarning
+from journeys.errors import DeadEndWarning, warn
 from journeys.kernels.arrays import BoolArray, FloatArray, IntArray
 from journeys.kernels.graph import Classes, classify
 from journeys.kernels.stays import FittedStays
+from journeys.markup import facts, frame_table, short_name
 from journeys.models.memory import Nodes
 
 if TYPE_CHECKING:
@@ -25,6 +25,8 @@ if TYPE_CHECKING:
     from journeys.tally.tally import Tally
 
 NO_WAY_OUT = "no move out was seen"
+# A wider matrix is no longer read in a notebook.
+WIDEST_SHOWN = 30
 
 
 class NotInChainError(ValueError):
@@ -207,7 +209,12 @@ class JourneyFit:
         return f"<JourneyFit: {len(self.states)} states, {len(self.outcomes)} outcomes, {known}>"
 
     def _repr_html_(self) -> str:
-        return str(self.matrix.to_html(float_format="{:.3f}".format))
+        if len(self.states) > WIDEST_SHOWN:
+            return facts(repr(self).strip("<>"), {"moves": f"{len(self.probability):,}"})
+        frame = self.matrix.reset_index(names="from")
+        known = "a known chain" if self.tally is None else f"fitted to {self.tally.n_journeys:,} journeys"
+        flagged = [f"{short_name(name)}: {text}" for name, text in self.row_flags.items() if text]
+        return frame_table(frame, f"Probability of each move, {known}", flagged, 1)
 
 
 def with_dead_ends(
@@ -230,7 +237,7 @@ def with_dead_ends(
         row_flags[labels[row]] = NO_WAY_OUT
     if len(rows):
         names = ", ".join(nodes.labels[row] for row in rows[:5])
-        warnings.warn(f"no move out of {names} was seen: taken as never left", DeadEndWarning, stacklevel=4)
+        warn(f"no move out of {names} was seen: taken as never left", DeadEndWarning)
     state, target = np.concatenate([state, rows]), np.concatenate([target, rows])
     order = np.lexsort((target, state))
     kept = np.concatenate([np.arange(len(columns[0])), np.full(len(rows), -1)])[order]

@@ -2,18 +2,18 @@
 
 from __future__ import annotations
 
-import warnings
 from dataclasses import dataclass
 
 import numpy as np
 
 from journeys import checks
-from journeys.errors import EndNotSeenWarning, JourneysWarning, LogError, ShortLogWarning
+from journeys.errors import EndNotSeenWarning, JourneysWarning, LogError, ShortLogWarning, warn
 from journeys.kernels.arrays import BoolArray, FloatArray, sum_at
 from journeys.kernels.bins import DAY_US
 from journeys.kernels.records import FIRST_OUTCOME
 from journeys.kernels.sojourn import StayFit, fit_stays, move_influence
 from journeys.kernels.stays import BucketStays, FittedStays, Stays
+from journeys.markup import short_name
 from journeys.models.fit import Influence, JourneyFit, with_dead_ends
 from journeys.models.memory import Nodes, chain_of
 from journeys.models.stays import move_stays, without_open
@@ -232,11 +232,10 @@ def _warn_if_short(tally: Tally) -> None:
         what = f"the log of {tally.days:.1f} days"
         if tally.days_followed < tally.days:
             what = f"the time of {tally.days_followed:.1f} days for which these journeys were followed"
-        warnings.warn(
+        warn(
             f"{what} is shorter than one and a half silences: times given "
             "conversion will be too narrow in their intervals",
             ShortLogWarning,
-            stacklevel=3,
         )
 
 
@@ -274,7 +273,7 @@ def _flag(row_flags: dict[str, str], labels: tuple[str, ...], rows: BoolArray, t
         row_flags[labels[row]] = text
 
 
-def _warn_rows(labels: tuple[str, ...], rows: BoolArray, text: str, kind: type[Warning]) -> None:
-    names = [labels[row] for row in np.flatnonzero(rows)]
+def _warn_rows(labels: tuple[str, ...], rows: BoolArray, text: str, kind: type[JourneysWarning]) -> None:
+    names = [short_name(labels[row]) for row in np.flatnonzero(rows)]
     shown = ", ".join(names[:5]) + (f" and {len(names) - 5} more" if len(names) > 5 else "")
-    warnings.warn(text.format(shown), kind, stacklevel=4)
+    warn(text.format(shown), kind)

@@ -8,8 +8,10 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 from journeys.checks import duration_text
+from journeys.intake.people import People
 from journeys.intake.read import open_log
 from journeys.intake.rules import JourneyRules
+from journeys.markup import frame_table
 from journeys.models.model import refuse_without_outcome
 from journeys.questions.audit_checks import NO, Check, of_counts, of_patterns, of_silences
 from journeys.questions.silences import COLUMNS, other_silences
@@ -82,11 +84,19 @@ class Audit:
         return f"<Audit: the log {says}; {n} kind{'' if n == 1 else 's'} of findings>"
 
     def _repr_html_(self) -> str:
-        frames = (self.checks, self.silences, self.findings)
-        return "".join(str(frame.to_html(index=False)) for frame in frames if len(frame))
+        says = "can" if self.carries_model else "cannot"
+        found = self.findings.drop(columns="rows")
+        silences = frame_table(self.silences, "Other silences", n_keys=1) if len(self.silences) else ""
+        return (
+            frame_table(self.checks, f"Checks: this log {says} carry the model", n_keys=1)
+            + silences
+            + frame_table(found, "Findings" if len(found) else "Findings: none", n_keys=1)
+        )
 
 
-def audit(source: Any, rules: JourneyRules | None = None, *, progress: bool = False) -> Audit:
+def audit(
+    source: Any, rules: JourneyRules | None = None, *, identity: Any = None, progress: bool = False
+) -> Audit:
     """Return what was left out of a log and whether it can carry the model.
 
     Parameters
@@ -96,6 +106,8 @@ def audit(source: Any, rules: JourneyRules | None = None, *, progress: bool = Fa
         silence; of a tally these are not told.
     rules : JourneyRules, optional
         What a journey is; not needed for a tally.
+    identity : path, DataFrame, Arrow table, optional
+        Table of people first seen under another id, as `journeys.tally` takes it.
     progress : bool
         Show a progress bar on stderr.
 
@@ -131,10 +143,10 @@ def audit(source: Any, rules: JourneyRules | None = None, *, progress: bool = Fa
         raise TypeError(msg)
     log = open_log(source, rules.columns, text=(rules.event,))
     with log.spooled() if log.one_shot else nullcontext(log) as kept:
-        tally = count_log(kept, rules, progress=progress)
+        tally = count_log(kept, rules, identity=identity, progress=progress)
         refuse_without_outcome(tally)
-        checks = of_counts(tally) + of_patterns(look_again(kept, rules, tally.log_start_us, tally.as_of_us), tally)
-        silences = other_silences(kept, tally, progress=progress)
+        checks = of_counts(tally) + of_patterns(look_again(kept, tally, People.here(identity)), tally)
+        silences = other_silences(kept, tally, identity=identity, progress=progress)
     if rules.silence_us is not None:
         checks.append(of_silences(silences, duration_text(rules.silence_us)))
     return Audit(tally, _frame(checks), silences)

@@ -102,8 +102,7 @@ def plan(
         why = f'the ends that method="{method}" reads off' if ends else "a standard error"
         msg = f"n_resamples: got {n_resamples}; wanted at least {least:,}, fewer do not carry {why}"
         raise ValueError(msg)
-    seed = int(fit.tally.checksum, 16) if fit.tally is not None else 0
-    chance = checks.rng(rng, seed)
+    chance = checks.rng(rng, 0)
     n_buckets = 0 if fit.influence is None else len(fit.influence.probability)
     if method != "linearised" and n_buckets and fit.fitted_stays is None:
         method = _of_what_if(method, n_resamples)
@@ -115,6 +114,9 @@ def plan(
             'method="linearised", or n_resamples given if it shall take its time'
         )
         raise ValueError(msg)
+    if rng is None and fit.tally is not None:
+        # only now: the checksum of a large tally takes a while
+        chance = checks.rng(None, int(fit.tally.checksum, 16))
     return Plan(method, n_resamples or (ENOUGH_FOR_ENDS if ends else ENOUGH_FOR_ERROR), n_buckets, chance)
 
 

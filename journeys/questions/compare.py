@@ -15,10 +15,12 @@ from journeys.kernels.arrays import BoolArray, FloatArray
 from journeys.kernels.intervals import t_test, variance_from_buckets
 from journeys.models.fit import JourneyFit
 from journeys.models.group_fits import GroupFit, group_fits, rest_fit
+from journeys.questions.corrected import corrected
 from journeys.questions.differences import REACHED, TIMES, Answer, Key, Side, answers_of, live_mask
 from journeys.questions.distances import Differences, Distance, distance
 from journeys.results import KNOWN, PLAIN, Result
 from journeys.tally.groups import Group
+from journeys.tally.parts import check_one_id_key
 from journeys.tally.tally import Tally
 
 CORRECTIONS = ("holm", "fdr_bh", "none")
@@ -81,6 +83,8 @@ def compare(
         If an argument is not one of those, `to` is not in the fits, or there is neither a second fit nor `by`.
     LogError
         If there are fewer than two groups, or `within` or `by` is asked of a chain without a log.
+    JourneysError
+        If the ids of the two logs were hashed with different secrets.
 
     Notes
     -----
@@ -118,6 +122,7 @@ def compare(
         msg = "compare: a tally that is not fitted can only be compared within a time; wanted within=... or fits"
         raise ValueError(msg)
     if fit_b is not None:
+        _check_one_id_key(fit_a, fit_b)
         found = _differences(fit_a, fit_b, to, horizons, moves, stages)
         return _table([((), one) for one in found], [], correction, level)
     names = [by] if isinstance(by, str) else list(by or ())
@@ -128,6 +133,13 @@ def compare(
         sides = (rest.fit or rest.tally, group.fit or group.tally)
         rows += [(group.values, one) for one in _differences(*sides, to, horizons, moves, stages)]
     return _table(rows, names, correction, level)
+
+
+def _check_one_id_key(fit_a: Side, fit_b: Side) -> None:
+    """Raise if the buckets of the two sides hold different people."""
+    tallies = [side if isinstance(side, Tally) else side.tally for side in (fit_a, fit_b)]
+    if tallies[0] is not None and tallies[1] is not None:
+        check_one_id_key(tallies[0], tallies[1], "compared")
 
 
 def _against_the_rest(fit: Side, names: list[str]) -> list[tuple[GroupFit, GroupFit]]:
@@ -226,19 +238,7 @@ def _table(
             "estimate_a": a,
             "estimate_b": b,
             "p_value": p_value,
-            "p_value_corrected": _corrected(p_value, correction),
+            "p_value_corrected": corrected(p_value, correction),
         },
         confidence_level=level,
     )
-
-
-def _corrected(p_value: FloatArray, correction: str) -> FloatArray:
-    """Return p-values corrected for their number; those that are not there are not counted."""
-    there = np.isfinite(p_value)
-    if correction == "none" or not there.any():
-        return p_value
-    from statsmodels.stats.multitest import multipletests
-
-    corrected = np.full(len(p_value), np.nan)
-    corrected[there] = multipletests(p_value[there], method=correction)[1]
-    return corrected

@@ -13,6 +13,7 @@ import numpy.typing as npt
 from journeys import checks
 from journeys.kernels.arrays import FloatArray
 from journeys.kernels.intervals import variance_from_buckets
+from journeys.markup import frame_table, plain_number, short_name
 from journeys.models.fit import JourneyFit
 from journeys.models.what_if import WhatIf
 from journeys.questions.counted import inverted, shares_about, up
@@ -226,13 +227,11 @@ class PassageCurve:
 
     def summary(self) -> str:
         """Return the answer as plain text: the share in the end, the median, and some points of the curve."""
-        frame = self.to_frame()
-        few = frame.iloc[np.unique(np.linspace(0, len(frame) - 1, 12).round().astype(int))]
-        shown = few.drop(columns="confidence_level")
-        rows = [[_cell(value) for value in row] for row in shown.to_numpy(dtype=object)]
+        shown = self._few().drop(columns="confidence_level")
+        rows = [[plain_number(value) for value in row] for row in shown.to_numpy(dtype=object)]
         heads = [str(name) for name in shown.columns]
         told = [
-            [_cell(share), _cell(estimate), f"{_cell(low)} to {_cell(high)}", str(flag)]
+            [plain_number(share), plain_number(estimate), f"{plain_number(low)} to {plain_number(high)}", str(flag)]
             for share, estimate, _, low, high, _, flag in self.given_reached().quantile((0.5, 0.9)).to_numpy(object)
         ]
         whom = "of those who reach it" if self.given else "of all who start"
@@ -247,6 +246,11 @@ class PassageCurve:
             ]
         )
 
+    def _few(self) -> pd.DataFrame:
+        """Return a dozen points of the curve."""
+        frame = self.to_frame()
+        return frame.iloc[np.unique(np.linspace(0, len(frame) - 1, 12).round().astype(int))]
+
     def __repr__(self) -> str:
         """Return one line."""
         return (
@@ -256,7 +260,10 @@ class PassageCurve:
         )
 
     def _repr_html_(self) -> str:
-        return str(self.to_frame().to_html(index=False, escape=True))
+        few = self._few().drop(columns="confidence_level")
+        whom = "of those who reach it" if self.given else "of all who start"
+        caption = f"From {short_name(self.start)} to {', '.join(map(short_name, self.to))}, share {whom} by {self.unit}"
+        return frame_table(few, f"{caption}, intervals at {100 * self.confidence_level:g} %", n_keys=1)
 
     @cached_property
     def _shown(self) -> tuple[FloatArray, Estimates, np.ndarray]:
@@ -306,8 +313,7 @@ class PassageCurve:
             return Estimates.joined([pair[0] for pair in pairs]), np.concatenate([pair[1] for pair in pairs])
         at = self._solved.inverse(shares)
         within = np.where(np.isfinite(at), at, 0.0)
-        whole = self._solved.whole
-        points = [up(within), np.maximum(up(within) - 1.0, 0.0)] if whole else [within]
+        points = [up(within), np.maximum(up(within) - 1.0, 0.0)] if self._solved.whole else [within]
         spreads = [self._spread(one, shares) for one in points]
         larger = np.argmax(np.stack([np.nan_to_num(one[0]) for one in spreads]), axis=0)
         std_error, df = (np.stack([one[i] for one in spreads])[larger, np.arange(len(at))] for i in (0, 1))
@@ -315,7 +321,7 @@ class PassageCurve:
         asked = np.nan_to_num(shares_about(shares, std_error), nan=2.0)
         about = self._solved.inverse(asked.ravel()).reshape(asked.shape)
         few = probabilities(self.fit, shares, np.nan_to_num(std_error), df, np.zeros(len(at)), LOGIT).few
-        first = None if not whole else 0 if self.clock == "steps" else -1
+        first = None if not self._solved.whole else 0 if self.clock == "steps" else -1
         known = np.full(len(at), self.fit.influence is None)
         estimates = inverted(at, about, df, few & np.isfinite(at), known, first)
         lost, never = ~np.isfinite(at), shares >= self.probability
@@ -329,22 +335,16 @@ def _tidy(key: str, asked: FloatArray, estimates: Estimates, level: float, flag:
     import pandas as pd
 
     low, high = estimates.bounds(level)
-    columns = {"estimate": estimates.value, "std_error": estimates.std_error, "low": low, "high": high}
-    return pd.DataFrame({key: asked, **columns, "confidence_level": level, "flag": flag})
+    told = {"estimate": estimates.value, "std_error": estimates.std_error, "low": low, "high": high}
+    return pd.DataFrame({key: asked, **told, "confidence_level": level, "flag": flag})
 
 
 def _times(times: npt.ArrayLike) -> FloatArray:
+    msg = "times: not all are numbers from 0; wanted times since the start, in the unit of the curve"
     try:
         asked = np.asarray(times, dtype=np.float64)
     except (TypeError, ValueError):
-        asked = np.full(1, np.nan)
+        raise ValueError(msg) from None
     if not (asked >= 0).all():
-        msg = "times: not all are numbers from 0; wanted times since the start, in the unit of the curve"
         raise ValueError(msg)
     return asked
-
-
-def _cell(value: object) -> str:
-    if isinstance(value, float):
-        return "" if np.isnan(value) else f"{value:.4g}" if abs(value) < 999.95 else f"{value:,.0f}"
-    return str(value)

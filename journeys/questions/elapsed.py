@@ -179,15 +179,39 @@ class Elapsed:
         One more journey through the move i to j with dwell u adds G_ij(t - u): the chance to come to i, take u,
         and go on from j to the target, all within t.
         """
-        size = len(self.renewal.open_states)
-        lead = self.renewal.leading
+        row, column, _ = self.pairs
+        return self.looked_up(scale, visits[:, row] * scale.reach[:, column], times)
+
+    @cached_property
+    def pairs(self) -> tuple[IntArray, IntArray, IntArray]:
+        """Places from and to which moves lead (see `Renewal.place`), each pair once, and the pair of each move."""
+        size, lead = len(self.renewal.open_states), self.renewal.leading
         row = self.renewal.place[self.walk.state[lead]]
         column = self.renewal.place[self.walk.target[lead]]
         key, where = np.unique(row * (size + 1) + column, return_inverse=True)
-        pairs = len(key)
+        return key // (size + 1), key % (size + 1), where
+
+    def looked_up(self, scale: Scale, gain_of: ComplexArray, times: FloatArray) -> FloatArray:
+        """Return the value tables of an answer up to each time.
+
+        Parameters
+        ----------
+        scale : Scale
+            A grid that reaches as far as the times.
+        gain_of : complex array, shape (n_freq, n_pairs)
+            Transform of what one more journey through each of the `pairs`, taking no time, adds.
+        times : float array, shape (n_times,)
+            Days.
+
+        Returns
+        -------
+        float array, shape (n_times, n_listed)
+            As `values`.
+        """
+        where, pairs = self.pairs[2], len(self.pairs[0])
         # a row of zeros in front, for dwells longer than the time
         gain = np.zeros((scale.n + 1, pairs))
-        gain[1:] = scale.summed(visits[:, key // (size + 1)] * scale.reach[:, key % (size + 1)])
+        gain[1:] = scale.summed(gain_of)
         flat = gain.ravel()
         move, dwell = self._cells
         has = np.flatnonzero(move >= 0)

@@ -74,6 +74,11 @@ class Ended:
         """Share not decided by the time to which journeys were followed."""
         return float(self.found.survival_end[0])
 
+    @property
+    def n_begun(self) -> float:
+        """How many journeys began."""
+        return float(self.stays.n.sum() + self.stays.open_n.sum())
+
     @cached_property
     def _bucket(self) -> IntArray:
         return live_buckets(self.tally)
@@ -133,7 +138,9 @@ def ended(tally: Tally) -> Ended:
     return Ended(tally, stays, by_bucket, fit_stays(stays, 0.0 if tally.whole_days else 0.5))
 
 
-def rows_ended(table: Columns, outcomes: IntArray) -> Columns:
-    """Return the rows of a table of journeys with a sure entry that ended in some outcomes (codes)."""
+def rows_ended(table: Columns, outcomes: IntArray, last_bin: int | None = None) -> Columns:
+    """Return the rows of a table of journeys with a sure entry that ended in some outcomes (codes), up to a bin."""
     mine = (table["sure"] == 1) & np.isin(table["outcome"], outcomes)
+    if last_bin is not None:
+        mine &= table["bin"] <= last_bin
     return {name: values[mine] for name, values in table.items()}

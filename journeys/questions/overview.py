@@ -4,62 +4,44 @@ from __future__ import annotations
 
 from collections.abc import Collection
 from dataclasses import dataclass, field
+from functools import cached_property
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from journeys import checks
 from journeys.errors import LogError
-from journeys.kernels.records import FIRST_OUTCOME, LAPSED, OPEN
+from journeys.kernels.phase_type import DENSE
+from journeys.markup import frame_table
 from journeys.models.fit import JourneyFit
 from journeys.models.what_if import WhatIf
+from journeys.questions.check import CheckResult, check
 from journeys.questions.comeback import ComebackResult, comeback
 from journeys.questions.compare import CompareResult, compare
 from journeys.questions.credit import CreditResult, credit
+from journeys.questions.curve_result import PassageCurve
 from journeys.questions.first_passage import FirstPassageResult, first_passage
 from journeys.questions.moves import MovesResult, moves
 from journeys.questions.outcomes import OutcomesResult, outcomes
+from journeys.questions.passage_curve import passage_curve
+from journeys.questions.plain_count import PlainCount, plain_count
 from journeys.questions.removal import RemovalResult, removal
+from journeys.questions.sensitivity import SensitivityResult, sensitivity
 from journeys.questions.stages import StagesResult, stages
 from journeys.questions.time_to_convert import IN_THE_END, SO_FAR, TimeToConvertResult, time_to_convert
-from journeys.tally.tally import Tally
 
 if TYPE_CHECKING:
     import pandas as pd
 
 KEY_COLUMNS = (
     "section", "start_state", "state", "next_state", "stage", "touchpoint", "rule", "after", "outcome", "measure",
-    "horizon", "basis",
+    "horizon", "basis", "check_name", "about",
 )  # fmt: skip
 CREDITED = ("even", "first", "last")
+# Of larger chains nobody reads every move, and looking at all pairs takes long.
+MOST_SHIFTED = 100
 # With more groups than these each is not fitted against all others.
 MOST_COMPARED = 30
-
-
-@dataclass(frozen=True)
-class PlainCount:
-    """What a plain count of the log says.
-
-    Attributes
-    ----------
-    n_people, n_journeys : int
-        Customers, and journeys begun.
-    n_sure : int
-        Journeys whose start was seen.
-    n_undecided : int
-        Journeys still open.
-    n_by_outcome : dict of str to int
-        Journeys ended so far, by outcome.
-    n_converted : int
-        Of these, the conversions.
-    """
-
-    n_people: int
-    n_journeys: int
-    n_sure: int
-    n_undecided: int
-    n_by_outcome: dict[str, int]
-    n_converted: int
 
 
 @dataclass(frozen=True, eq=False)
@@ -80,12 +62,16 @@ class Overview:
         From entry and every state to conversion.
     matrix : MovesResult
         Every move.
+    checks : CheckResult
+        Whether to believe the fit.
     back : ComebackResult or None
         Who comes back after a lapse; None where nothing lapses.
     funnel : StagesResult or None
         The stages of the rules; None where none are named.
     touched, credited : RemovalResult and CreditResult, or None
         The touchpoints of the rules; None where none are named.
+    shifts : SensitivityResult or None
+        What one point more of each move would do; None for chains of more than 100 states.
     groups : dict of str to TimeToConvertResult
         Conversion by each column that journeys are grouped by.
     against : dict of str to CompareResult
@@ -99,12 +85,21 @@ class Overview:
     steps: FirstPassageResult
     days: FirstPassageResult
     matrix: MovesResult
+    checks: CheckResult
     back: ComebackResult | None = None
     funnel: StagesResult | None = None
     touched: RemovalResult | None = None
     credited: CreditResult | None = None
+    shifts: SensitivityResult | None = None
     groups: dict[str, TimeToConvertResult] = field(default_factory=dict)
     against: dict[str, CompareResult] = field(default_factory=dict)
+
+    @cached_property
+    def curve(self) -> PassageCurve | None:
+        """By when how many have converted, of all who come in; None for chains of more than 500 states."""
+        if self.fit.nodes.n_rows > DENSE:
+            return None
+        return passage_curve(self.fit, confidence_level=self.conversion.confidence_level)
 
     def reconciliation(self) -> pd.DataFrame:
         """Return how the expected share comes out of the plain one, line by line.
@@ -193,6 +188,8 @@ class Overview:
             "stages": self.funnel,
             "touchpoints": self.touched,
             "credit": self.credited,
+            "sensitivity": self.shifts,
+            "checks": self.checks,
             **{f"by {column}": result for column, result in self.groups.items()},
             **{f"against the rest by {column}": result for column, result in self.against.items()},
         }
@@ -232,7 +229,7 @@ class Overview:
         return f"<Overview: {self.plain.n_journeys:,} journeys of {self.plain.n_people:,} people>"
 
     def _repr_html_(self) -> str:
-        return str(self.reconciliation().to_html(index=False))
+        return frame_table(self.reconciliation(), "How the expected share comes out of the plain one", n_keys=1)
 
 
 def summarise(
@@ -292,41 +289,16 @@ def summarise(
         steps=first_passage(fit, clock="steps", method="linearised", confidence_level=level),
         days=first_passage(fit, clock="time", method="linearised", confidence_level=level),
         matrix=moves(fit, confidence_level=level),
+        checks=check(fit, confidence_level=level),
         back=None if rules.silence_us is None else comeback(tally, confidence_level=level),
         funnel=stages(fit, confidence_level=level) if rules.stages else None,
         touched=removal(fit, confidence_level=level) if rules.touchpoints else None,
         credited=credit(fit, rule=CREDITED, confidence_level=level) if rules.touchpoints else None,
+        shifts=sensitivity(fit, confidence_level=level) if len(fit.states) <= MOST_SHIFTED else None,
         groups={name: time_to_convert(fit, horizons, by=name, confidence_level=level) for name in rules.by},
         against={
             name: compare(fit, by=name, confidence_level=level)
             for name in rules.by
             if 1 < len(tally.split(name)) <= MOST_COMPARED
         },
-    )
-
-
-def plain_count(tally: Tally) -> PlainCount:
-    """Return the plain counts of a tally.
-
-    Parameters
-    ----------
-    tally : Tally
-        The counts.
-
-    Returns
-    -------
-    PlainCount
-        Journeys by what became of them so far.
-    """
-    n, outcome = tally.journeys["n"], tally.journeys["outcome"]
-    ended = {name: int(n[outcome == code].sum()) for code, name in enumerate(tally.rules.outcomes, start=FIRST_OUTCOME)}
-    if tally.rules.silence_us is not None:
-        ended["lapsed"] = int(n[outcome == LAPSED].sum())
-    return PlainCount(
-        n_people=tally.n_people,
-        n_journeys=tally.n_journeys,
-        n_sure=int(n[tally.journeys["sure"] == 1].sum()),
-        n_undecided=int(n[outcome == OPEN].sum()),
-        n_by_outcome=ended,
-        n_converted=sum(ended[name] for name in tally.rules.converted),
     )

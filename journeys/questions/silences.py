@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import warnings
 from dataclasses import replace
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 from journeys.checks import duration_text
 from journeys.errors import JourneysWarning, LogError
@@ -30,7 +30,7 @@ COLUMNS = (
 )  # fmt: skip
 
 
-def other_silences(log: LogSource, tally: Tally, *, progress: bool = False) -> pd.DataFrame:
+def other_silences(log: LogSource, tally: Tally, *, identity: Any = None, progress: bool = False) -> pd.DataFrame:
     """Return, for silences of 7, 14, 30, 60 and 90 days and that of the rules, what they would say.
 
     Parameters
@@ -39,6 +39,8 @@ def other_silences(log: LogSource, tally: Tally, *, progress: bool = False) -> p
         A log that can be read again: it is, once for every silence.
     tally : Tally
         Its counts by the rules' own silence.
+    identity
+        As in `journeys.tally`.
     progress : bool
         Show progress bars on stderr.
 
@@ -60,7 +62,8 @@ def other_silences(log: LogSource, tally: Tally, *, progress: bool = False) -> p
             if tally.days * DAY_US <= silence_us:
                 rows.append({"silence": wanted[silence_us], "note": f"not told: the log is {tally.days:.0f} days long"})
                 continue
-            one = count_log(log, _with_silence(tally, wanted[silence_us]), progress=progress)
+            rules = _with_silence(tally, wanted[silence_us])
+            one = count_log(log, rules, identity=identity, progress=progress)
         rows.append({"silence": wanted[silence_us], **_told(one)})
     return pd.DataFrame(rows, columns=COLUMNS)
 

@@ -155,6 +155,13 @@ class SolvedTime:
         """Visits from the start on each scale, found together with the curve."""
         return {}
 
+    def scale_for(self, time: float) -> Scale:
+        """Return the grid on which the curve is read at a time."""
+        for hi, is_last, scale in self._parts:
+            if is_last or time > hi / 10.0:
+                return scale
+        raise ValueError(f"time: got {time!r}; wanted a number of days")
+
     @cached_property
     def curve(self) -> Curve:
         """The distribution function by points."""

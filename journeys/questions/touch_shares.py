@@ -83,11 +83,11 @@ def beside(fit: JourneyFit, it: Asked, effect: FloatArray, influence: FloatArray
         return blank
     journeys = ended(fit.tally)
     names = [list(dict.fromkeys(fit.nodes.last_states[row - 1] for row in group)) for group in it.groups]
-    counted = np.array([_is_counted(fit.tally, group) for group in names])
+    counted = np.array([is_counted(fit.tally, group) for group in names])
     converted = journeys.share(codes)
     if not converted.value[0] > 0 or not counted.any():
         return blank
-    shares = _touched(journeys, codes, names, counted).over(converted)
+    shares = touched(journeys, codes, names, counted).over(converted)
     value, std_error, _ = shares.share_spread()
     too_short = journeys.left > LEANS and _falls_short(fit, it, converted)
     # By whichever of the two expects more on the smaller side: a share of nothing may be what is odd.
@@ -117,15 +117,20 @@ def popcount(sets: np.ndarray) -> IntArray:
     return sum(((sets.astype(np.int64) >> bit) & 1 for bit in range(16)), np.zeros(len(sets), np.int64))
 
 
-def _is_counted(tally: Tally, group: Sequence[str]) -> bool:
+def is_counted(tally: Tally, group: Sequence[str]) -> bool:
     """Tell whether the touches of some states, taken together, were counted."""
     return set(group) <= set(tally.touchpoints) and (len(group) == 1 or len(tally.touch_sets["n"]) > 0)
 
 
-def _touched(journeys: Ended, codes: IntArray, names: list[list[str]], counted: BoolArray) -> Sums:
-    """Return, for each touchpoint, the weighted number of conversions that touch it, 0 where that was not counted."""
+def touched(
+    journeys: Ended, codes: IntArray, names: list[list[str]], counted: BoolArray, last_bin: int | None = None
+) -> Sums:
+    """Return, for each touchpoint, the weighted number of conversions that touch it, 0 where that was not counted.
+
+    Only those up to a bin of elapsed time, where one is given.
+    """
     tally = journeys.tally
-    touches, sets = rows_ended(tally.touches, codes), rows_ended(tally.touch_sets, codes)
+    touches, sets = (rows_ended(table, codes, last_bin) for table in (tally.touches, tally.touch_sets))
     parts, columns = [], []
     for i, group in enumerate(names):
         if not counted[i]:

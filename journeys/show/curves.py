@@ -9,7 +9,7 @@ import numpy as np
 from journeys.questions.curve_result import PassageCurve
 from journeys.questions.group_curves import GroupCurves
 from journeys.results import printable
-from journeys.show.palette import BLUE, GREY, INK, ORANGE
+from journeys.show.axes import BLUE, GREY, INK, ORANGE
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes

@@ -7,10 +7,12 @@ from collections.abc import Sequence
 from typing import TYPE_CHECKING, Any
 
 from journeys.checks import duration_us
+from journeys.markup import short_name
 from journeys.questions.overview import Overview
 from journeys.questions.time_to_convert import IN_THE_END, SO_FAR
-from journeys.show.rows import amount, rows_of, share, tally_of
-from journeys.show.tables import markdown_table
+from journeys.show.conversion_sections import share_dot
+from journeys.show.parts import Dot, Dots, Part, Section, Table, Words
+from journeys.show.rows import Row, amount, notes_of, points, rows_of, share, tally_of
 from journeys.show.words import length_words
 
 if TYPE_CHECKING:
@@ -34,8 +36,14 @@ _MEANINGS = {
     "std_error_in_log": "standard error of that share",
     "estimate_a": "the number of all other groups",
     "estimate_b": "the number of the group",
-    "p_value": "of a difference at least as large between groups that do not differ",
+    "p_value": "of a difference at least as large between groups that do not differ, or from a model that is right",
     "p_value_corrected": "the same, corrected for the number of comparisons",
+    "check_name": "what was looked at to tell whether the model may be believed",
+    "about": "the column or touchpoint that it was looked at in",
+    "unit": "unit of a disagreement between model and log",
+    "compared": "both sides of the comparison, in words",
+    "verdict": "what came of the check",
+    "advice": "what to do about it",
     "measure": "what is told",
     "horizon": "within what time since entry; so far: by the end of the log; in the end: as time goes on",
     "basis": "log: straight from the journeys; model: from the fitted chain",
@@ -46,6 +54,8 @@ _MEANINGS = {
     "confidence_level": "level of the interval",
     "n_effective": "independent trials that would tell as much",
     "n_moves": "completed moves counted",
+    "change": "by how much the move is made likelier, as a probability",
+    "derivative": "change of the number per unit of probability, for a small shift",
     "n_undefined": "resamples in which the number has no value",
     "n_absences": "journeys ended in that way, after which the customer could come back",
     "n_back": "of these, customers who came back so far",
@@ -93,9 +103,9 @@ def wide_groups(overview: Overview) -> pd.DataFrame | None:
     return whole[[*(name for name in whole if name not in last), *last]]
 
 
-def group_sections(overview: Overview) -> list[tuple[str, str]]:
-    """Return a heading and a table for every group column: share converted and days, groups beside each other."""
-    return [(f"## By {column}", _group_table(overview, column)) for column in overview.groups]
+def group_sections(overview: Overview) -> list[Section]:
+    """Return a section for every group column: share converted and days, groups beside each other, and what differs."""
+    return [Section(f"By {short_name(column)}", _group_parts(overview, column)) for column in overview.groups]
 
 
 def column_meanings(frames: Sequence[pd.DataFrame]) -> pd.DataFrame:
@@ -106,44 +116,67 @@ def column_meanings(frames: Sequence[pd.DataFrame]) -> pd.DataFrame:
     return pd.DataFrame([(name, _meaning(name)) for name in names], columns=["column", "meaning"])
 
 
-def _group_table(overview: Overview, column: str) -> str:
-    import pandas as pd
-
-    frame = overview.groups[column].to_frame()
-    values = list(dict.fromkeys(frame[column]))
-    if len(values) > LONGEST_TABLE:
-        return f"{len(values):,} groups: they stand in groups.csv."
-    p_values, parts = _p_values(overview, column), tally_of(overview).split(column)
-    horizons = [one for one in dict.fromkeys(frame["horizon"]) if one not in ("", SO_FAR, IN_THE_END)]
-    rows = []
-    for value in values:
-        mine = frame[frame[column] == value]
-        cells = [str(value), f"{parts[value,].n_journeys:,}"]
+def _group_parts(overview: Overview, column: str) -> list[Part]:
+    by_value: dict[Any, list[Row]] = {}
+    for row in rows_of(overview.groups[column].to_frame()):
+        by_value.setdefault(row[column], []).append(row)
+    if len(by_value) > LONGEST_TABLE:
+        return [Words(f"{len(by_value):,} groups: they stand in groups.csv.")]
+    differs, parts = _against_the_rest(overview, column), tally_of(overview).split(column)
+    told = dict.fromkeys(row["horizon"] for mine in by_value.values() for row in mine)
+    horizons = [one for one in told if one not in ("", SO_FAR, IN_THE_END)]
+    rows, dots = [], []
+    for value, mine in by_value.items():
+        name = short_name(str(value))
+        cells = [name, f"{parts[value,].n_journeys:,}"]
         cells += [_cell(mine, "converted", horizon, "log") for horizon in horizons]
         cells += [_cell(mine, "converted", IN_THE_END, "model"), _cell(mine, "median_days", IN_THE_END, "model")]
-        p_value = p_values.get(value, math.nan)
-        cells.append("" if math.isnan(p_value) else f"{p_value:.2g}")
-        cells.append("; ".join(dict.fromkeys(str(flag) for flag in mine["flag"] if flag)))
+        other = differs.get(value)
+        cells += ["", ""] if other is None else [points(other), _p_value(other)]
+        cells.append(_notes(mine))
         rows.append(cells)
+        dots.append(_dot(name, mine))
     within = [f"converted within {length_words(duration_us(one, 'horizon'))}" for one in horizons]
-    columns = [column, "journeys", *within, "expected in the end", "median days, if so", "differs from the rest: p"]
-    return markdown_table(pd.DataFrame(rows, columns=[*columns, "note"]))
+    columns = [short_name(column), "journeys", *within, "expected in the end", "median days, if so"]
+    columns += ["differs from the rest, points", "p", "note"]
+    table = Table(f"Conversion by {short_name(column)}", columns, rows)
+    caption = f"Expected in the end, by {short_name(column)}"
+    return [table, Dots(caption, "% of those who come in", dots, from_zero=False)]
 
 
-def _cell(frame: pd.DataFrame, measure: str, horizon: str, basis: str) -> str:
-    found = rows_of(frame, measure=measure, horizon=horizon, basis=basis)
+def _dot(name: str, rows: list[Row]) -> Dot:
+    found = rows_of(rows, measure="converted", horizon=IN_THE_END)
+    if not found:
+        return Dot(name, math.nan, math.nan, math.nan, _notes(rows))
+    return share_dot(name, found[0])
+
+
+def _notes(rows: list[Row]) -> str:
+    return notes_of(*(str(row["flag"]) for row in rows))
+
+
+def _p_value(row: Row) -> str:
+    p_value = row["p_value_corrected"]
+    return "" if math.isnan(p_value) else f"{p_value:.2g}"
+
+
+def _cell(rows: list[Row], measure: str, horizon: str, basis: str) -> str:
+    found = rows_of(rows, measure=measure, horizon=horizon, basis=basis)
     if not found:
         return ""
     return share(found[0]) if measure == "converted" else amount(found[0])
 
 
 def _p_values(overview: Overview, column: str) -> dict[Any, float]:
+    return {value: row["p_value_corrected"] for value, row in _against_the_rest(overview, column).items()}
+
+
+def _against_the_rest(overview: Overview, column: str) -> dict[Any, Row]:
+    """Return by group how its share that converts differs from that of all others; nothing where nobody looked."""
     result = overview.against.get(column)
     if result is None:
         return {}
-    frame = result.to_frame()
-    frame = frame[frame["measure"] == "reached"]
-    return dict(zip(frame[column], frame["p_value_corrected"], strict=True))
+    return {row[column]: row for row in rows_of(result.to_frame(), measure="reached")}
 
 
 def _wide_name(measure: str, horizon: str, basis: str) -> str:

@@ -3,10 +3,11 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Hashable, Mapping
+from collections.abc import Hashable, Mapping, Sequence
 from typing import TYPE_CHECKING, Any
 
 from journeys.checks import duration_us
+from journeys.questions.check_rows import DIFFERS, NOTE
 from journeys.questions.overview import Overview
 from journeys.questions.time_to_convert import IN_THE_END, SO_FAR
 from journeys.show.words import amount_with_interval, length_words, outcome_words, percent, share_with_interval
@@ -37,11 +38,10 @@ def span_words(overview: Overview) -> str:
     )
 
 
-def rows_of(frame: pd.DataFrame, **keys: str) -> list[dict[Hashable, Any]]:
-    """Return the rows with the given keys."""
-    for name, value in keys.items():
-        frame = frame[frame[name] == value]
-    return frame.to_dict("records")
+def rows_of(frame: pd.DataFrame | Sequence[Row], **keys: str) -> list[Row]:
+    """Return the rows with the given keys; of rows already taken out of a frame, without going through it again."""
+    rows: Sequence[Row] = frame if isinstance(frame, Sequence) else frame.to_dict("records")
+    return [row for row in rows if all(row[name] == value for name, value in keys.items())]
 
 
 def share(row: Row, flag: str | None = None) -> str:
@@ -60,6 +60,22 @@ def whole_amount(row: Row) -> str:
         return amount(row)
     steps, low, high = (f"{row[name]:,.0f}" for name in ("estimate", "low", "high"))
     return steps if low == high else f"{steps} ({low}–{high})"
+
+
+def points(row: Row) -> str:
+    """Return a change of a share in a row in percentage points, with its interval."""
+    return change({name: 100 * row[name] for name in ("estimate", "low", "high")})
+
+
+def change(row: Row) -> str:
+    """Return a change in a row, its sign always written, with its interval."""
+    estimate, low, high = (row[name] for name in ("estimate", "low", "high"))
+    if not math.isfinite(estimate):
+        return ""
+    digits = 1 if abs(estimate) >= 1 else 2
+    # what rounds to nothing has no sign
+    told, *ends = (f"{round(one, digits) or 0.0:+.{digits}f}".replace("-", "−") for one in (estimate, low, high))
+    return f"{told} ({ends[0]} to {ends[1]})" if math.isfinite(low) and math.isfinite(high) else told
 
 
 def count(row: Row) -> str:
@@ -105,6 +121,20 @@ def time_lines(overview: Overview) -> list[str]:
     return told
 
 
+def check_rows(overview: Overview) -> list[tuple[str, str]]:
+    """Return each check with its verdict, where it differs with what was compared."""
+    told = []
+    for row in rows_of(overview.checks.to_frame()):
+        name = f"{row['check_name']} ({row['about']})" if row["about"] else row["check_name"]
+        told.append((name, row["verdict"] + (f" ({row['compared']})" if is_matter(row["verdict"]) else "")))
+    return told
+
+
+def is_matter(verdict: str) -> bool:
+    """Tell whether a verdict is something to be told more of."""
+    return verdict.startswith((DIFFERS, NOTE))
+
+
 def comeback_lines(overview: Overview) -> list[str]:
     """Return how many of those whose journey ended have come back, a sentence per way of ending."""
     if overview.back is None:
@@ -117,7 +147,7 @@ def comeback_lines(overview: Overview) -> list[str]:
         if not so_far["n_absences"]:
             continue
         ended = outcome_words(after, rules)
-        line = f"After {after}" if ended == after else f"Of those {ended}"
+        line = f"Of those {ended}" if after == "lapsed" else f"After {ended}"
         line += f", {percent(so_far['estimate'])} came back so far"
         later = [row for row in rows_of(mine) if row["horizon"] != SO_FAR and not math.isnan(row["estimate"])]
         if later:

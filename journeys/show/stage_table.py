@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from journeys.markup import short_name
 from journeys.questions.overview import Overview
 from journeys.show.rows import amount, rows_of, share, tally_of
 from journeys.show.words import UNDECIDED, outcome_words, percent
@@ -14,11 +15,10 @@ def stage_rows(overview: Overview) -> list[tuple[str, str, str, str, str]]:
     """
     if overview.funnel is None:
         return []
-    frame = overview.funnel.to_frame()
-    frame = frame[frame["basis"] == "log"]
+    rows = rows_of(overview.funnel.to_frame(), basis="log")
     told = []
-    for stage in dict.fromkeys(frame["stage"]):
-        mine = frame[frame["stage"] == stage]
+    for stage in dict.fromkeys(row["stage"] for row in rows):
+        mine = rows_of(rows, stage=stage)
         names = ("reached", "of_stage_before", "median_days")
         reached, before, days = (next(iter(rows_of(mine, measure=name)), None) for name in names)
         went = [
@@ -27,7 +27,7 @@ def stage_rows(overview: Overview) -> list[tuple[str, str, str, str, str]]:
             if row["estimate"] > 0
         ]
         told.append((
-            str(stage),
+            short_name(str(stage)),
             share(reached) if reached else "",
             share(before) if before else "",
             amount(days) if days else "",

@@ -5,14 +5,28 @@ from __future__ import annotations
 import os
 import textwrap
 from collections.abc import Callable
+from functools import partial
 from pathlib import Path
 
 from journeys.files import written_together
 from journeys.questions.overview import Overview
 from journeys.results import printable, text_table
+from journeys.show.conversion_sections import opening
 from journeys.show.group_tables import column_meanings, wide_groups
-from journeys.show.page import opening, summary_markdown
-from journeys.show.rows import comeback_lines, count, horizon_rows, rows_of, share, span_words, tally_of, time_lines
+from journeys.show.html.page import summary_html
+from journeys.show.page import summary_markdown
+from journeys.show.rows import (
+    check_rows,
+    comeback_lines,
+    count,
+    horizon_rows,
+    rows_of,
+    share,
+    span_words,
+    tally_of,
+    time_lines,
+)
+from journeys.show.sections import sections
 from journeys.show.stage_table import stage_rows
 from journeys.show.tables import write_csv, write_parquet
 
@@ -34,6 +48,7 @@ def summary_text(overview: Overview) -> str:
     if overview.funnel is not None:
         stages = [("", "reached", "of the stage before", "median days"), *(row[:4] for row in stage_rows(overview))]
         parts.append(f"Stages, in this order\n{text_table(stages, width=0)}")
+    parts.append(f"Whether to believe the model\n{text_table(check_rows(overview))}")
     return "\n\n".join(parts) + "\n"
 
 
@@ -42,7 +57,7 @@ def _wrapped(line: str) -> str:
 
 
 def write_summary(overview: Overview, folder: str | os.PathLike[str], *, keep_tally: bool = False) -> list[Path]:
-    """Write summary.parquet, summary.csv, summary.md and columns.csv into a folder, all of them whole or none.
+    """Write summary.parquet, .csv, .md, .html and columns.csv into a folder, all of them whole or none.
 
     Where journeys are grouped, groups.csv too: one wide row per group. columns.csv says what the columns hold.
 
@@ -66,12 +81,14 @@ def write_summary(overview: Overview, folder: str | os.PathLike[str], *, keep_ta
         If the folder cannot be made or written in.
     """
     place = Path(folder)
-    frame, page, groups = overview.to_frame(), summary_markdown(overview), wide_groups(overview)
+    frame, groups = overview.to_frame(), wide_groups(overview)
+    told = sections(overview)
+    texts = {"summary.md": summary_markdown(overview, told), "summary.html": summary_html(overview, told)}
     meanings = column_meanings([frame] if groups is None else [frame, groups])
     writers: dict[str, Callable[[Path], object]] = {
         "summary.parquet": lambda part: write_parquet(frame, part),
         "summary.csv": lambda part: write_csv(frame, part),
-        "summary.md": lambda part: part.write_text(page, encoding="utf-8"),
+        **{name: partial(_write_text, text) for name, text in texts.items()},
         "columns.csv": lambda part: write_csv(meanings, part),
     }
     if groups is not None:
@@ -83,3 +100,8 @@ def write_summary(overview: Overview, folder: str | os.PathLike[str], *, keep_ta
         for write, part in zip(writers.values(), parts, strict=True):
             write(part)
     return [place / name for name in writers]
+
+
+def _write_text(text: str, path: Path) -> None:
+    # Half of a pair, which a log can hold in a name, is no text for a file.
+    path.write_bytes(text.encode("utf-8", "replace"))

@@ -7,6 +7,7 @@ import re
 
 from journeys.checks import duration_text
 from journeys.intake.rules import JourneyRules
+from journeys.markup import short_name
 from journeys.models.fit import NO_WAY_OUT
 from journeys.models.model import COMPLETED_ONLY, END_NOT_SEEN, ENOUGH_AT_END, FEW_AT_END
 from journeys.questions.comeback import NONE_SEEN, NOT_FOLLOWED, STILL_SILENCE
@@ -88,9 +89,9 @@ def amount_with_interval(estimate: float, low: float, high: float) -> str:
 
 
 def outcome_words(outcome: str, rules: JourneyRules) -> str:
-    """Return an outcome as readers call it: a lapse is a silence, the others go by their own names."""
+    """Return an outcome or state as readers call it: a lapse is a silence, the others go by their own names."""
     if outcome != "lapsed" or rules.silence_us is None:
-        return outcome
+        return short_name(outcome)
     return f"quiet for over {length_words(rules.silence_us)}"
 
 

@@ -131,6 +131,18 @@ class Accumulator:
             also = {name: column[piece].copy() for name, column in (more or {}).items()}
             self._parts.setdefault(number, _Part(self._names)).add(key[piece].copy(), kept, expand, also)
 
+    def resume(self, table: Keyed) -> None:
+        """Begin with what `result` once gave."""
+        if not len(table.key):
+            return
+        part = bucket_in(table.key) // _BUCKETS_PER_PART
+        # Within a part the further parts of the key go before the buckets, so that a part's rows stand together.
+        begin = np.flatnonzero(np.diff(part, prepend=-1))
+        for number, first, last in zip(part[begin].tolist(), begin, [*begin[1:], len(part)], strict=True):
+            piece = slice(first, last)
+            sums, more = ({name: column[piece] for name, column in of.items()} for of in (table.sums, table.more))
+            self._parts[number] = _Part(self._names, Keyed(table.key[piece], sums, more))
+
     def result(self) -> Keyed:
         """Return the distinct keys in order and their sums, and let go of them."""
         parts = [self._parts.pop(number).settled() for number in sorted(self._parts)]
@@ -145,11 +157,11 @@ class Accumulator:
 class _Part:
     """The sums of a few buckets: blocks wait in any order and are added up when they pile up."""
 
-    def __init__(self, names: tuple[str, ...]) -> None:
+    def __init__(self, names: tuple[str, ...], settled: Keyed | None = None) -> None:
         self._names = names
-        self._settled: Keyed | None = None
+        self._settled = settled
         self._blocks: list[tuple[IntArray, Columns, Expand | None, More]] = []
-        self._waiting = self._n_settled = 0
+        self._waiting, self._n_settled = 0, 0 if settled is None else len(settled.key)
 
     def add(self, key: IntArray, columns: Columns, expand: Expand | None, more: More) -> None:
         """Add one block."""

@@ -34,6 +34,13 @@ class StateCodes:
         """States that have turned up, in alphabetical order; a reserved one may not have."""
         return sorted(name for name in self.states if name in self._seen)
 
+    def resume(self, states: Sequence[str], seen: Sequence[str]) -> None:
+        """Go on with the states of an earlier count, in the order of their codes, and those that had turned up."""
+        for name in states:
+            if name not in self._code:
+                self._add(name)
+        self._seen.update(seen)
+
     def code(self, name: str) -> int:
         """Return the code of a name that has one."""
         return self._code[name]

@@ -6,15 +6,19 @@ import numpy as np
 from numpy.typing import NDArray
 
 from journeys.kernels.arrays import BoolArray, IntArray
-from journeys.kernels.grouping import Grouping
+from journeys.kernels.bins import DAY_US
+from journeys.kernels.grouping import Grouping, unpacked
 from journeys.kernels.histories import earlier, slot
 from journeys.kernels.records import OPEN, Moves, Reading
-from journeys.tally.accumulate import Accumulator, Keyed, More
+from journeys.tally.accumulate import Accumulator, Keyed, More, add_up
 from journeys.tally.keys import pack
 
 # Cells of all workers together: 4 bytes each.
 MOST_CELLS = 12_000_000
 _MOST_COUNT = (1 << 32) - 1
+# A further part of the key where the log goes on: the day a state was entered on, counted from one that no log reaches
+# back to, so that 0 is no day.
+_DAY, _DAY_0 = "day", 1_000_000
 
 
 class ContextSums:
@@ -28,14 +32,28 @@ class ContextSums:
         Which buckets, for the size of the table of cells.
     more : tuple of str
         Further parts of the key; with any there is no table of cells.
+    grouped : Grouping or None
+        How the table is grouped.
+    goes_on : bool
+        The log will go on after `as_of`: what is not mature yet, but may be later, is kept by the day on which the
+        state was entered.
     """
 
-    def __init__(self, reading: Reading, buckets: range, more: tuple[str, ...] = ()) -> None:
-        self._first_state, self._buckets, self._more = reading.first_state, buckets, more
-        self._last = _LastMoments(reading)
+    def __init__(
+        self,
+        reading: Reading,
+        buckets: range,
+        more: tuple[str, ...] = (),
+        grouped: Grouping | None = None,
+        *,
+        goes_on: bool = False,
+    ) -> None:
+        self._first_state, self._buckets = reading.first_state, buckets
+        self._more = (*more, _DAY) if goes_on else more
+        self._moments = _LastMoments(reading, grouped)
         self._n_states = self._count = 0
         self._n = np.zeros(0, np.uint32)
-        self._sparse = Accumulator(("n",), more)
+        self._sparse = Accumulator(("n",), self._more)
 
     def add(self, moves: Moves, n_states: int) -> None:
         """Add moves, but for stays that are still open; `n_states` states are known by now."""
@@ -45,13 +63,17 @@ class ContextSums:
         if n_states > self._n_states:
             self._grow(n_states)
         state, next_code, before = moves.state[over], moves.next_code[over], moves.before[over]
-        bucket, mature = moves.bucket[over], moves.since[over] < self._last.mature_before(moves.since[over])
+        bucket, since = moves.bucket[over], moves.since[over]
+        period = self._moments.period(since)
+        mature = since < self._moments.mature_before[period]
         if len(self._n):
             self.make_room(len(state))
             np.add.at(self._n, self._cell(bucket, state, next_code, slot(before, 0), mature), np.uint32(1))
             return
         found: More = {} if moves.group is None else {"group": moves.group[over]}
         found |= {"earlier": earlier(before)} if "earlier" in self._more else {}
+        if _DAY in self._more:
+            found[_DAY] = np.where(mature | self._moments.over[period], 0, since // DAY_US + _DAY_0)
         key = pack(bucket, state, next_code, slot(before, 0), mature)
         self._sparse.add(key, {"n": np.ones(len(key), np.int64)}, None, found)
 
@@ -66,6 +88,17 @@ class ContextSums:
         if self._count + count > _MOST_COUNT:
             self._empty_cells()
         self._count += count
+
+    def resume(self, table: Keyed) -> None:
+        """Begin with what `result` once gave; what has become mature since is counted so."""
+        day = table.more[_DAY]
+        period = unpacked(table.more["group"])[3] if "group" in table.more else np.zeros(len(day), np.int64)
+        waits = day > 0
+        mature = waits & ((day - _DAY_0) * DAY_US < self._moments.mature_before[period])
+        known = mature | (waits & self._moments.over[period])
+        more = {**table.more, _DAY: np.where(known, 0, day)}
+        # The flag is the lowest bit of a packed key.
+        self._sparse.add(table.key | mature, dict(table.sums), None, more)
 
     def result(self) -> Keyed:
         """Return the distinct keys in order and their sums."""
@@ -114,16 +147,29 @@ class ContextSums:
 
 
 class _LastMoments:
-    """Until when a state had to be entered to be seen for the silence: before the end of the log, or of its period."""
+    """Until when a state had to be entered to be seen for the silence: before the end of the log, or of its period.
 
-    def __init__(self, reading: Reading) -> None:
-        grouping: Grouping | None = reading.grouping
-        self._splits = np.zeros(0, np.int64) if grouping is None else grouping.splits
-        ends = np.append(self._splits, reading.as_of_us)
-        self._moments = reading.mature_before(ends)
+    Attributes
+    ----------
+    mature_before : ndarray of int64, shape (n_periods,)
+        That moment.
+    over : ndarray of bool, shape (n_periods,)
+        The period is over, so that no more of it will be seen.
+    """
 
-    def mature_before(self, since: IntArray) -> IntArray:
-        """Return the moment for states entered at `since`."""
-        if not len(self._splits):
-            return self._moments
-        return self._moments[np.searchsorted(self._splits, since, side="right")]
+    def __init__(self, reading: Reading, grouped: Grouping | None) -> None:
+        self._splits = np.zeros(0, np.int64) if grouped is None else grouped.splits
+        ends = np.append(np.minimum(self._splits, reading.as_of_us), reading.as_of_us)
+        self.mature_before = reading.mature_before(ends)
+        self.over = np.append(self._splits <= reading.as_of_us, False)
+
+    def period(self, since: IntArray) -> IntArray:
+        """Return the periods that times lie in."""
+        return np.searchsorted(self._splits, since, side="right")
+
+
+def without_days(table: Keyed) -> Keyed:
+    """Return a table without the days that states were entered on, what differs in these alone added up."""
+    if _DAY not in table.more:
+        return table
+    return add_up(table.key, dict(table.sums), {name: part for name, part in table.more.items() if name != _DAY})

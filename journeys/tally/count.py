@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 from contextlib import nullcontext
+from dataclasses import replace
 from functools import partial
 from typing import Any
 
@@ -12,6 +13,7 @@ import numpy as np
 from journeys import checks
 from journeys.errors import LogError
 from journeys.intake.look import Look, first_look
+from journeys.intake.people import People
 from journeys.intake.read import open_log
 from journeys.intake.rules import JourneyRules
 from journeys.kernels.bins import DAY_US
@@ -31,6 +33,7 @@ def count_log(
     rules: JourneyRules,
     *,
     order: int = 1,
+    identity: Any = None,
     n_workers: int | None = None,
     compiled: bool | None = None,
     progress: bool = False,
@@ -39,13 +42,17 @@ def count_log(
 
     Parameters
     ----------
-    source : path, list of paths, DataFrame, Arrow table or reader, iterator of record batches
+    source : path, list of paths, DataFrame, Arrow table or reader, iterator of record batches, DatabaseLog
         The log: Parquet, CSV or Arrow IPC files, folders of them, pandas frames, anything with
-        ``__arrow_c_stream__``. Only the columns that the rules name are read.
+        ``__arrow_c_stream__``, a database. Only the columns that the rules name are read.
     rules : JourneyRules
         What a journey is.
     order : int
         From 1 to 3: moves are told apart by so many of the last states, which fits of that order need.
+    identity : path, DataFrame, Arrow table, optional
+        Table of people first seen under another id: columns `old` (the id that rows bear), `id` (the person's,
+        or another old one) and `since` (when that became known, or empty). All rows of an old id count as the
+        person's, and are counted in the findings.
     n_workers : int, optional
         Threads that count; default one per processor, at most 8. The tally does not depend on it.
     compiled : bool, optional
@@ -61,8 +68,10 @@ def count_log(
     Raises
     ------
     LogError
-        If columns are missing, times cannot be read, nothing is left to count, or a few rows lie far
-        outside the rest (a wrong clock).
+        If columns are missing, times cannot be read, nothing is left to count, a few rows lie far outside the
+        rest (a wrong clock), or the identity table contradicts itself.
+    RulesError
+        If the environment variable JOURNEYS_ID_KEY is set to something short enough to guess.
     ValueError
         If `n_workers` is not a whole number from 1, or `order` not one from 1 to 3.
     ImportError
@@ -72,6 +81,9 @@ def count_log(
     -----
     Memory grows with the customers, not with the rows. Rows of a customer may come in any order: where they
     are out of time order the log is spilled by customer to temporary files, and the answer is the same.
+
+    Where JOURNEYS_ID_KEY is set, each distinct id goes through a hash with that secret (BLAKE2b); it takes about a
+    microsecond for each in every block of half a million rows; tallies under different secrets cannot be added.
 
     Examples
     --------
@@ -87,21 +99,29 @@ def count_log(
     2
     """
     workers = min(os.cpu_count() or 1, MOST_WORKERS) if n_workers is None else checks.whole(n_workers, "n_workers", 1)
-    order = checks.whole(order, "order", 1)
-    if order > MOST_SLOTS:
-        msg = f"order={order}; wanted at most {MOST_SLOTS}: no log has journeys enough to tell longer memories apart"
-        raise ValueError(msg)
+    order = checked_order(order)
+    people = People.here(identity)
     log = open_log(source, rules.columns, text=(rules.event,))
     with log.spooled() if log.one_shot else nullcontext(log) as kept:
         look = first_look(kept, rules)
         pass_ = partial(
-            Pass, kept, rules, look, _span(look, rules),
-            order=order, n_workers=workers, compiled=_compiles(compiled), progress=progress,
+            Pass, kept, rules, look, span_of(look, rules),
+            order=order, n_workers=workers, compiled=_compiles(compiled), progress=progress, people=people,
         )  # fmt: skip
         try:
-            return pass_().in_order()
+            tally = pass_().in_order()
         except OutOfOrderError:
-            return pass_().sorted_by_customer()
+            tally = pass_().sorted_by_customer()
+    return replace(tally, id_key=people.fingerprint)
+
+
+def checked_order(order: int) -> int:
+    """Return the order, if it is one that can be counted."""
+    order = checks.whole(order, "order", 1)
+    if order > MOST_SLOTS:
+        msg = f"order={order}; wanted at most {MOST_SLOTS}: no log has journeys enough to tell longer memories apart"
+        raise ValueError(msg)
+    return order
 
 
 def _compiles(wanted: bool | None) -> bool:
@@ -112,8 +132,23 @@ def _compiles(wanted: bool | None) -> bool:
     return is_built() if wanted is None else wanted
 
 
-def _span(look: Look, rules: JourneyRules) -> Span:
-    """Return from when to when the log is read."""
+def span_of(look: Look, rules: JourneyRules) -> Span:
+    """Return from when to when a log is read.
+
+    Parameters
+    ----------
+    look : Look
+    rules : JourneyRules
+
+    Returns
+    -------
+    Span
+
+    Raises
+    ------
+    LogError
+        If the dates of the rules leave nothing, or a log of dates is too long.
+    """
     log_start = look.first_us if rules.log_start_us is None else rules.log_start_us
     as_of = look.last_us if rules.as_of_us is None else rules.as_of_us
     if log_start > as_of:

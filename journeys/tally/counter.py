@@ -187,6 +187,31 @@ class Counter:
             self._sums.add_customers(carried, bucket)
         self._carried = self._blank(0)
 
+    @property
+    def carried(self) -> Carried:
+        """One record per customer seen."""
+        return self._carried
+
+    def resume(self, carried: Carried | None, n_states: int) -> None:
+        """Begin with the records of an earlier count; `n_states` states are known by now.
+
+        Parameters
+        ----------
+        carried : Carried or None
+            Changed in place; None: nobody was seen.
+        n_states : int
+
+        Raises
+        ------
+        ValueError
+            If the records have other columns than these rules ask for.
+        """
+        blank = self._blank(0)
+        if carried is not None and carried.names != blank.names:
+            msg = f"carried: got the columns {carried.names}; wanted {blank.names}"
+            raise ValueError(msg)
+        self._carried, self._n_states = blank if carried is None else carried, n_states
+
     def _count(self, rows: Ordered, code: Codes, start: IntArray, at: IntArray) -> Carried:
         """Add up a block and return its customers' new records."""
         try:

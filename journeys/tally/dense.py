@@ -125,6 +125,10 @@ class MoveSums:
         self._cells = np.zeros(0, CELL)
         return self._sparse.result()
 
+    def resume(self, table: Keyed) -> None:
+        """Begin with what `result` once gave."""
+        self._sparse.resume(table)
+
     def _grow(self, n_states: int) -> None:
         """Make room for more states."""
         self._empty_cells()

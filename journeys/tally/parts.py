@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, Any, TypeVar
 import numpy as np
 
 from journeys.errors import JourneysError
+from journeys.intake.id_key import VARIABLE
 from journeys.intake.rule_checks import ALL
 from journeys.kernels.arrays import IntArray
 from journeys.kernels.histories import recoded, slot
@@ -86,7 +87,8 @@ def added(mine: T, theirs: Tally) -> T:
     Raises
     ------
     JourneysError
-        If rules, span or kind of times differ, or there are too many states to count the touches of all.
+        If rules, span, kind of times or the key of the ids differ, or there are too many states to count the touches
+        of all.
     """
     kinds = _kinds_of_times(mine, theirs)
     _check_alike(mine, theirs, kinds)
@@ -124,7 +126,29 @@ def _has_sets(tally: Tally) -> bool:
     return bool(tally.touch_sets["n"].sum() == n_journeys)
 
 
+def check_one_id_key(mine: Tally, theirs: Tally, what: str) -> None:
+    """Raise if the ids of two tallies were hashed with different secrets: their buckets hold different people.
+
+    Parameters
+    ----------
+    mine, theirs : Tally
+    what : str
+        What cannot be done with them, for the message.
+
+    Raises
+    ------
+    JourneysError
+    """
+    if mine.id_key != theirs.id_key:
+        msg = (
+            f"tallies made under different {VARIABLE} cannot be {what} (fingerprints {mine.id_key or 'none'} and "
+            f"{theirs.id_key or 'none'}): one customer is two people to them; count one of the logs again"
+        )
+        raise JourneysError(msg)
+
+
 def _check_alike(mine: Tally, theirs: Tally, kinds: tuple[bool, bool]) -> None:
+    check_one_id_key(mine, theirs, "added")
     for what, one, other in (
         ("rules", mine.rules, theirs.rules),
         ("orders", mine.order, theirs.order),

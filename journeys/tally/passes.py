@@ -4,115 +4,46 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from concurrent.futures import ThreadPoolExecutor, wait
-from dataclasses import dataclass
 from typing import Any, TypeVar
 
 import numpy as np
 import pyarrow as pa
-from numpy.typing import NDArray
 
 from journeys.errors import LogError
-from journeys.intake.findings import Findings
-from journeys.intake.group_checks import CAME_AFTER
-from journeys.intake.groups import MOST_GROUPS, cohort_calendar
+from journeys.intake.groups import MOST_GROUPS
 from journeys.intake.identity import bucket_major
 from journeys.intake.look import Look
 from journeys.intake.normalise import Normaliser
+from journeys.intake.people import People
 from journeys.intake.read import LogSource
 from journeys.intake.rows import Rows
 from journeys.intake.rules import JourneyRules
 from journeys.kernels.arrays import IntArray
-from journeys.kernels.bins import DAY_US, dwell_edges, elapsed_edges
-from journeys.kernels.grouping import MOST_PERIODS, Grouping
-from journeys.kernels.histories import recoded
+from journeys.kernels.bins import dwell_edges, elapsed_edges
 from journeys.kernels.records import Reading
-from journeys.tally.accumulate import Columns, Keyed
+from journeys.tally.accumulate import Columns
 from journeys.tally.blocks import cut_between_ties
 from journeys.tally.codes import StateCodes
-from journeys.tally.counter import Counter, LeaveOut
+from journeys.tally.counter import LeaveOut
 from journeys.tally.groups import Group, named_groups
 from journeys.tally.order import by_customer
+from journeys.tally.rule_numbers import codes_of, cohorts_of, grouping_of, ungrouped
 from journeys.tally.spans import Span
 from journeys.tally.spill import BUCKETS_PER_PART, N_PARTS, Spill
-from journeys.tally.sums import Sums
 from journeys.tally.tables import (
-    CODED,
     KEYS,
     MOST_IN_SETS,
     N_BUCKETS,
     NARROW,
-    history_of,
     more_of,
     sorted_by_key,
-    split_key,
 )
 from journeys.tally.tally import Tally
 from journeys.tally.touchpoints import Places, Touchpoints
+from journeys.tally.weeks import Watch
+from journeys.tally.worker import Block, Worker
 
 T = TypeVar("T")
-
-
-@dataclass(frozen=True)
-class _Block:
-    """Rows with their order by customer and the codes of their events."""
-
-    rows: Rows
-    order: IntArray
-    code_of_event: NDArray[np.int32]
-    n_states: int
-    touch_of_code: NDArray[np.int8] | None
-
-
-class _Worker:
-    """Counts the customers of some neighbouring buckets."""
-
-    def __init__(
-        self, parts: range, reading: Reading, leave_out: LeaveOut, span: Span, rules: JourneyRules, *, compiled: bool
-    ) -> None:
-        self.parts, self._compiled = parts, compiled
-        self.findings = Findings()
-        self._reading, self._leave_out = reading, leave_out
-        buckets = range(parts.start * BUCKETS_PER_PART, parts.stop * BUCKETS_PER_PART)
-        # Merged visits may last longer than the silence, and without one there is no longest stay at all.
-        longest = None if rules.repeats == "merge" else rules.silence_us
-        edges = (
-            dwell_edges(rules.silence_us, span.whole_days),
-            elapsed_edges(rules.silence_us, span.whole_days, rules.horizons_us),
-        )
-        self.sums = Sums(reading, edges, longest, buckets)
-        self._counter = self._new_counter()
-
-    def add(self, block: _Block, part: slice) -> None:
-        """Count one part of a block in order."""
-        self._counter.add(
-            block.rows, block.order[part], block.code_of_event, block.n_states, block.touch_of_code
-        )
-
-    def close(self, code: IntArray, places: Places) -> dict[str, Columns]:
-        """Close the log and return the tables, codes replaced by `code`."""
-        self._counter.close()
-        return self._tables(code, places)
-
-    def add_parts(
-        self,
-        spill: Spill,
-        known: tuple[NDArray[np.int32], int, NDArray[np.int8] | None],
-        code: IntArray,
-        places: Places,
-    ) -> dict[str, Columns]:
-        """Count the parts of a spilled log that are this worker's, one after another, and return the tables."""
-        for rows in spill.parts(self.parts.start, self.parts.stop):
-            counter = self._new_counter()
-            counter.add(rows, by_customer(rows.key), *known)
-            counter.close()
-        return self._tables(code, places)
-
-    def _tables(self, code: IntArray, places: Places) -> dict[str, Columns]:
-        order = self._reading.order
-        return {name: _labelled(name, self.sums.result(name), code, places, order) for name in KEYS}
-
-    def _new_counter(self) -> Counter:
-        return Counter(self._reading, self._leave_out, self.sums, self.findings, compiled=self._compiled)
 
 
 class Pass:
@@ -136,7 +67,12 @@ class Pass:
         Count in compiled loops.
     progress : bool
         Show a progress bar.
+    people : People, optional
+        How customer ids become keys.
     """
+
+    goes_on = False
+    watch: Watch | None = None
 
     def __init__(
         self,
@@ -149,30 +85,50 @@ class Pass:
         n_workers: int,
         compiled: bool,
         progress: bool,
+        people: People | None = None,
     ) -> None:
         self._order = order
         self._log, self._rules, self._look, self._span, self._progress = log, rules, look, span, progress
         named = (*rules.stages, *rules.opens, *rules.named_touchpoints)
         self._codes = StateCodes(rules.outcomes, tuple(dict.fromkeys(named)))
         self._touchpoints = Touchpoints(rules)
-        cohort_starts, self._cohorts = _cohorts(rules, span)
+        cohort_starts, self._cohorts = cohorts_of(rules, span)
+        grouping = grouping_of(rules, span, cohort_starts, goes_on=self.goes_on)
+        # A watch over the weeks asks when things began, which only what is grouped says.
+        told_apart = grouping if self.watch is None else grouping or ungrouped(rules, span)
         reading = Reading(
             n_outcomes=len(rules.outcomes), n_converted=len(rules.converted), silence_us=rules.silence_us,
             same_outcome_us=rules.same_outcome_us, merge_repeats=rules.repeats == "merge",
             log_start_us=span.log_start_us, as_of_us=span.as_of_us, complete_history=rules.complete_history,
-            grouping=_grouping(rules, span, cohort_starts), stages=_codes_of(rules.stages, self._codes),
+            grouping=told_apart, stages=codes_of(rules.stages, self._codes),
             touches=bool(rules.touchpoints), values=rules.value is not None, order=order,
         )  # fmt: skip
-        self._normaliser = Normaliser(rules, log_start_us=span.log_start_us, as_of_us=span.as_of_us)
+        self._normaliser = Normaliser(
+            rules, log_start_us=span.log_start_us, as_of_us=span.as_of_us, people=people
+        )
         leave_out = LeaveOut(
             rules.time, rules.event, rules.duplicates == "drop", rules.after_outcome == "stop",
-            _codes_of(rules.opens, self._codes), rules.value,
+            codes_of(rules.opens, self._codes), rules.value,
         )
+        edges = (
+            dwell_edges(rules.silence_us, span.whole_days),
+            elapsed_edges(rules.silence_us, span.whole_days, rules.horizons_us),
+        )
+        # Merged visits may last longer than the silence, and without one there is no longest stay at all.
+        longest = None if rules.repeats == "merge" else rules.silence_us
         cuts = [part * N_PARTS // n_workers for part in range(n_workers + 1)]
         self._workers = [
-            _Worker(range(first, last), reading, leave_out, span, rules, compiled=compiled)
+            Worker(
+                range(first, last), reading, leave_out, edges, longest,
+                grouped=grouping, goes_on=self.goes_on, watch=self.watch, compiled=compiled,
+            )  # fmt: skip
             for first, last in zip(cuts, cuts[1:], strict=False)
         ]
+
+    @property
+    def normaliser(self) -> Normaliser:
+        """What has turned the batches into rows, and counted them."""
+        return self._normaliser
 
     def in_order(self) -> Tally:
         """Count while rows stream by; raises OutOfOrderError where a customer's rows come out of order."""
@@ -212,11 +168,11 @@ class Pass:
                 bar.update(batch.num_rows)
                 yield self._normaliser.rows(batch)
 
-    def _ordered(self) -> Iterator[_Block]:
+    def _ordered(self) -> Iterator[Block]:
         for rows in cut_between_ties(self._rows()):
             code_of_event = self._codes.of_events(self._normaliser.targets)
             touch_of_code = self._touchpoints.of_codes(self._codes)
-            yield _Block(rows, by_customer(rows.key), code_of_event, len(self._codes.states), touch_of_code)
+            yield Block(rows, by_customer(rows.key), code_of_event, len(self._codes.states), touch_of_code)
 
     def _final(self) -> tuple[IntArray, Places]:
         """Return where codes and touchpoints stand in the end."""
@@ -271,57 +227,6 @@ class Pass:
             table["group"] = place[np.searchsorted(packed, table["group"])].astype(NARROW["group"])
             tables[name] = sorted_by_key(name, table)
         return groups
-
-
-def _cohorts(rules: JourneyRules, span: Span) -> tuple[IntArray | None, tuple[str, ...]]:
-    """Return starts and names of the cohorts; dates are the same days everywhere."""
-    if rules.cohort is None:
-        return None, ()
-    timezone = "UTC" if span.whole_days else rules.timezone
-    return cohort_calendar(rules.cohort, timezone, span.log_start_us, span.as_of_us)
-
-
-def _grouping(rules: JourneyRules, span: Span, cohort_starts: IntArray | None) -> Grouping | None:
-    if not rules.by:
-        return None
-    splits = np.array(rules.splits_us, np.int64)
-    if len(splits) >= MOST_PERIODS:
-        msg = f"split_at: got {len(splits):,} cuts; wanted fewer than {MOST_PERIODS:,}"
-        raise LogError(msg)
-    if span.whole_days and (splits % DAY_US).any():
-        msg = f"split_at: got {rules.split_at}, but the log holds dates; wanted cuts at whole days"
-        raise LogError(msg)
-    outside = (splits <= span.log_start_us) | (splits > span.as_of_us)
-    if outside.any():
-        msg = f"split_at: {rules.split_at[int(np.argmax(outside))]} does not lie inside the log; wanted cuts within it"
-        raise LogError(msg)
-    return Grouping(
-        CAME_AFTER in rules.by, cohort_starts, splits, rules.silence_us or 0, DAY_US if span.whole_days else 1
-    )
-
-
-def _codes_of(states: tuple[str, ...], codes: StateCodes) -> NDArray[np.int32] | None:
-    return np.array([codes.code(name) for name in states], np.int32) if states else None
-
-
-def _labelled(name: str, keyed: Keyed, code: IntArray, places: Places, order: int) -> Columns:
-    """Take the keys of a table apart, codes replaced by the positions of their names among the labels."""
-    table = split_key(name, *keyed)
-    if "group" in keyed.more:
-        # Still packed numbers, which need more room than places among the groups.
-        table["group"] = keyed.more["group"]
-    if name in ("touches", "touch_sets"):
-        # Their outcomes need no new codes: those of the outcomes are fixed.
-        return places.placed(name, table)
-    if (code[1:] > code[:-1]).all():
-        return table
-    for column in CODED:
-        if column in table:
-            table[column] = code[table[column]].astype(NARROW[column])
-    if (histories := history_of(name, order)) is not None:
-        column, n_slots = histories
-        table[column] = recoded(table[column], code, n_slots)
-    return sorted_by_key(name, table)
 
 
 def _side_by_side(parts: list[Columns]) -> Columns:

@@ -10,11 +10,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from journeys.intake.normalise import Normaliser
+from journeys.intake.people import People
 from journeys.intake.read import LogSource
 from journeys.intake.rows import Rows
-from journeys.intake.rules import JourneyRules
 from journeys.kernels.arrays import IntArray
 from journeys.tally.accumulate import Accumulator
+from journeys.tally.tally import Tally
 
 MINUTE_US = 60_000_000
 # An event stamped for so many customers in one minute, and for so many times as many as in a minute on average, was not
@@ -62,17 +63,17 @@ class Patterns:
     looked_at_minutes: bool
 
 
-def look_again(log: LogSource, rules: JourneyRules, log_start_us: int, as_of_us: int) -> Patterns:
+def look_again(log: LogSource, tally: Tally, people: People | None = None) -> Patterns:
     """Read a log and tell how its events were recorded.
 
     Parameters
     ----------
     log : LogSource
         A log that can be read again.
-    rules : JourneyRules
-        What a journey is.
-    log_start_us, as_of_us : int
-        The span of the log.
+    tally : Tally
+        Its counts: their rules and the span.
+    people : People, optional
+        How ids become customers, as for the tally.
 
     Returns
     -------
@@ -86,16 +87,18 @@ def look_again(log: LogSource, rules: JourneyRules, log_start_us: int, as_of_us:
     --------
     >>> import pandas as pd
     >>> from journeys.intake.read import open_log
+    >>> from journeys.intake.rules import JourneyRules
+    >>> from journeys.tally.count import count_log
     >>> when = pd.to_datetime(["2025-01-01 09:00"] * 300 + ["2025-01-01 10:00", "2025-03-01 11:00"], utc=True)
     >>> frame = pd.DataFrame({"who": range(302), "when": when, "what": ["mailed"] * 300 + ["visit"] * 2})
     >>> rules = JourneyRules("who", "when", "what", silence="30d")
-    >>> start, end = (int(time.value) // 1000 for time in (when[0], when[-1]))
-    >>> for one in look_again(open_log(frame, rules.columns), rules, start, end).recorded:
+    >>> for one in look_again(open_log(frame, rules.columns), count_log(frame, rules)).recorded:
     ...     print(one.name, one.n_at_once, one.most)
     mailed 300 300
     visit 0 0
     """
-    normaliser = Normaliser(rules, log_start_us=log_start_us, as_of_us=as_of_us)
+    rules, span_us = tally.rules, tally.as_of_us - tally.log_start_us
+    normaliser = Normaliser(rules, log_start_us=tally.log_start_us, as_of_us=tally.as_of_us, people=people)
     first, last, n = (np.zeros(0, np.int64) for _ in range(3))
     minutes = Accumulator(("customers", "rows"))
     for batch in log.batches(rules.columns):
@@ -111,7 +114,7 @@ def look_again(log: LogSource, rules: JourneyRules, log_start_us: int, as_of_us:
         np.maximum.at(last, rows.event, rows.time)
         if not normaliser.whole_days:
             minutes.add(*_by_minute(rows))
-    per_minute = n / max((as_of_us - log_start_us) / MINUTE_US, 1.0)
+    per_minute = n / max(span_us / MINUTE_US, 1.0)
     at_once, most = _at_once(minutes, per_minute)
     return Patterns(_gathered(normaliser.targets, n, first, last, at_once, most), not normaliser.whole_days)
 

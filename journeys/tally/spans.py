@@ -43,7 +43,8 @@ def spans_of(rules: JourneyRules, groups: Sequence[Group], span: Span) -> list[t
         Microseconds since 1970.
     """
     first, last = span.log_start_us, span.as_of_us
-    cuts = (first, *rules.splits_us, last)
+    # A ledger may have cuts that lie ahead.
+    cuts = (first, *(min(cut, last) for cut in rules.splits_us), last)
     periods = {name: (cuts[i], cuts[i + 1]) for i, name in enumerate(period_names(rules.splits_us))}
     cohorts: dict[str, tuple[int, int]] = {}
     if rules.cohort is not None:

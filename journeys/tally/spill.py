@@ -48,6 +48,11 @@ class Spill:
                 self._files[number] = (Path(self._folder.name) / f"part-{number}").open("wb")
             piece.tofile(self._files[number])
 
+    @property
+    def numbers(self) -> set[int]:
+        """Parts that hold rows."""
+        return set(self._files)
+
     def parts(self, first: int, last: int) -> Iterator[Rows]:
         """Give the rows of the parts from `first` up to `last`, all rows of a customer in one part."""
         for number in sorted(self._files.keys() & set(range(first, last))):

@@ -56,6 +56,28 @@ def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | 
     All tables stand in one file. A row of it is a piece of a table, the column `table` telling which, and every other
     column has a list there with a value for each row of the piece; where a table lacks a column there is no list.
     """
+    with written_whole(path) as part:
+        _write(tally, part, more or {})
+
+
+def to_bytes(tally: Tally) -> bytes:
+    """Return what `save` would write to a file.
+
+    Parameters
+    ----------
+    tally : Tally
+
+    Returns
+    -------
+    bytes
+    """
+    sink = pa.BufferOutputStream()
+    _write(tally, sink, {})
+    return sink.getvalue().to_pybytes()  # type: ignore[no-any-return]
+
+
+def _write(tally: Tally, sink: Any, more: dict[bytes, bytes]) -> None:
+    """Write head and tables."""
     head = {
         "format_version": FORMAT_VERSION,
         "rules": tally.rules.to_dict(),
@@ -67,15 +89,15 @@ def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | 
         "groups": tally.groups,
         "part": tally.part,
         "order": tally.order,
+        "id_key": tally.id_key,
         "findings": tally.record.to_dict(),
     }
     schema = _schema(tally.rules, tally.order)
     # The checksum is taken while the tables are written: the head goes into the end of the file. Arrow's own copy of
     # the schema is left out, for it would hide what is added there.
     with (
-        written_whole(path) as part,
         ThreadPoolExecutor(1) as other,
-        pq.ParquetWriter(part, schema, store_schema=False, write_statistics=False, **_encodings(schema)) as writer,
+        pq.ParquetWriter(sink, schema, store_schema=False, write_statistics=False, **_encodings(schema)) as writer,
     ):
         checksum = other.submit(_checksum, tally)
         for name in TABLES:
@@ -84,7 +106,7 @@ def save(tally: Tally, path: str | os.PathLike[str], more: dict[bytes, bytes] | 
                 piece = {column: values[begin : begin + _ROWS_AT_ONCE] for column, values in held.items()}
                 writer.write_table(_as_arrow(name, piece, schema))
         head["checksum"] = checksum.result()
-        writer.add_key_value_metadata({HEAD: json.dumps(head).encode(), **(more or {})})
+        writer.add_key_value_metadata({HEAD: json.dumps(head).encode(), **more})
 
 
 def _schema(rules: JourneyRules, order: int) -> pa.Schema:
@@ -151,20 +173,44 @@ def load(path: str | os.PathLike[str]) -> Tally:
     StoreError
         If the file is missing, not a tally, of another format version, or damaged.
     """
+    return _read(path, repr(os.fspath(path)))
+
+
+def from_bytes(data: bytes) -> Tally:
+    """Return the tally that `to_bytes` made bytes of.
+
+    Parameters
+    ----------
+    data : bytes
+
+    Returns
+    -------
+    Tally
+
+    Raises
+    ------
+    StoreError
+        As `load`.
+    """
+    return _read(pa.BufferReader(data), "what a part of the log came back as")
+
+
+def _read(source: Any, name: str) -> Tally:
+    """Read head and tables."""
     try:
-        table = pq.read_table(path)
+        table = pq.read_table(source)
         head = json.loads((table.schema.metadata or {})[HEAD])
     except FileNotFoundError:
-        msg = f"no tally at {os.fspath(path)!r}; wanted a file written by tally.save"
+        msg = f"no tally at {name}; wanted a file written by tally.save"
         raise StoreError(msg) from None
     except (KeyError, pa.ArrowException, OSError, ValueError):
         msg = (
-            f"{os.fspath(path)!r} is not a whole tally; wanted a file written by tally.save: make it again from the log"
+            f"{name} is not a whole tally; wanted a file written by tally.save: make it again from the log"
         )
         raise StoreError(msg) from None
     if head.get("format_version") != FORMAT_VERSION:
         msg = (
-            f"{os.fspath(path)!r} has format version {head.get('format_version')}, this program reads "
+            f"{name} has format version {head.get('format_version')}, this program reads "
             f"{FORMAT_VERSION}; count the log again"
         )
         raise StoreError(msg)
@@ -174,7 +220,7 @@ def load(path: str | os.PathLike[str]) -> Tally:
     except (KeyError, TypeError, ValueError, AttributeError, pa.ArrowException, JourneysError):
         whole = False
     if not whole:
-        msg = f"{os.fspath(path)!r} is damaged (its checksum does not fit); count the log again"
+        msg = f"{name} is damaged (its checksum does not fit); count the log again"
         raise StoreError(msg)
     return tally
 
@@ -201,6 +247,7 @@ def _from_parts(table: pa.Table, head: dict[str, Any]) -> Tally:
         groups=tuple(tuple(group) for group in head["groups"]),
         part=head["part"],
         order=head["order"],
+        id_key=head["id_key"],
         states=tuple(head["states"]),
         log_start_us=head["log_start_us"],
         as_of_us=head["as_of_us"],

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import replace
 from typing import Any
 
@@ -10,6 +11,7 @@ from numpy.typing import NDArray
 
 from journeys.kernels.arrays import BoolArray, IntArray
 from journeys.kernels.bins import bin_of
+from journeys.kernels.grouping import Grouping
 from journeys.kernels.records import (
     LAPSED,
     OPEN,
@@ -53,6 +55,10 @@ class Sums:
         The longest dwell that a move can have, None where there is no such.
     buckets : range
         Which buckets.
+    grouped : Grouping or None
+        How the tables are grouped.
+    goes_on : bool
+        The log will go on after `as_of`, so that what is not known yet is kept apart.
     """
 
     def __init__(
@@ -61,12 +67,15 @@ class Sums:
         edges: tuple[IntArray | None, IntArray | None],
         longest_us: int | None,
         buckets: range,
+        *,
+        grouped: Grouping | None,
+        goes_on: bool = False,
     ) -> None:
-        self._reading, self._grouping, self._valued = reading, reading.grouping, reading.values
+        self._reading, self._grouping, self._valued = reading, grouped, reading.values
         dwell_edges, self._elapsed_edges = edges
         order = reading.order
         self._moves = MoveSums(dwell_edges, longest_us, reading.first_state, buckets, self._more("moves"), order - 1)
-        self._contexts = ContextSums(reading, buckets, self._more("contexts"))
+        self._contexts = ContextSums(reading, buckets, self._more("contexts"), grouped, goes_on=goes_on)
         self._tables = {name: self._empty(name) for name in SUMS if name not in HISTORY}
         self._sets = True
         self.customers = {name: np.zeros(N_BUCKETS, np.int64) for name in customer_sums(valued=self._valued)}
@@ -116,11 +125,24 @@ class Sums:
         """Note by how much a compiled loop has raised the dwell in the cells."""
         self._moves.gained(dwell)
 
+    @property
+    def names(self) -> tuple[str, ...]:
+        """Tables there are, beside the customers."""
+        return (*HISTORY, *self._tables)
+
     def result(self, name: str) -> Keyed:
         """Return the distinct keys of a table in order and their sums, and let go of it."""
         if name == "moves":
             return self._moves.result()
         return self._contexts.result() if name == "contexts" else self._tables[name].result()
+
+    def resume(self, tables: Mapping[str, Keyed]) -> None:
+        """Begin with what `result` once gave, table by table."""
+        for name, table in tables.items():
+            if name in HISTORY:
+                (self._moves if name == "moves" else self._contexts).resume(table)
+            else:
+                self._tables[name].resume(table)
 
     def _empty(self, name: str) -> Accumulator:
         return Accumulator(sums_of(name, valued=self._valued), self._more(name))

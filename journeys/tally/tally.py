@@ -16,13 +16,13 @@ from journeys.checks import instant_text
 from journeys.intake.findings import Findings
 from journeys.intake.rule_checks import ALL
 from journeys.intake.rules import JourneyRules
-from journeys.kernels.histories import slot
 from journeys.kernels.records import FIRST_OUTCOME, LAPSED, OPEN
-from journeys.tally.accumulate import Columns, exact_limbs
+from journeys.markup import facts
+from journeys.tally.accumulate import Columns
 from journeys.tally.groups import Group, gathered, picked
 from journeys.tally.parts import added, of_groups
 from journeys.tally.spans import Span, longest_followed_us
-from journeys.tally.tables import CODED, FLAGS, HISTORY, NO_STATE, TABLES
+from journeys.tally.tables import TABLES
 
 if TYPE_CHECKING:
     from typing import Self
@@ -58,6 +58,8 @@ class Tally:
         How many of the last states moves are told apart by.
     part : bool
         The tally holds some of the groups of another (see `where`).
+    id_key : str, optional
+        Fingerprint of the secret that the customers' ids were hashed with; None where there was none.
 
     Examples
     --------
@@ -89,6 +91,7 @@ class Tally:
     groups: tuple[Group, ...] = ()
     part: bool = False
     order: int = 1
+    id_key: str | None = None
 
     @property
     def labels(self) -> tuple[str, ...]:
@@ -171,34 +174,9 @@ class Tally:
         ValueError
             If there is no table of that name.
         """
-        import pandas as pd
+        from journeys.tally.named import named_table
 
-        if name not in TABLES:
-            msg = f"table {name!r} is not known; wanted one of {', '.join(TABLES)}"
-            raise ValueError(msg)
-        columns: Columns = getattr(self, name)
-        labels = np.array(self.labels, dtype=object)
-        behind = np.array(["entry", "unknown", *self.labels[FIRST_OUTCOME:]], dtype=object)
-        frame: dict[str, Any] = {}
-        for column, values in columns.items():
-            if column.endswith("_high"):
-                total = column.removesuffix("_high")
-                frame[total] = pd.Series(exact_limbs(columns, total), dtype=object)
-            elif column.endswith("_low"):
-                continue
-            elif column in CODED:
-                nothing = NO_STATE.get((name, column), labels[0])
-                frame[column] = np.where(values == 0, nothing, (behind if column == "previous" else labels)[values])
-            elif column in HISTORY.values():
-                first = 1 + (column == "earlier")
-                for which in range(self.order - 1):
-                    frame[f"previous_{first + which}"] = behind[slot(values, which)]
-            elif column == "group":
-                for i, name_of_part in enumerate(self.rules.by):
-                    frame[name_of_part] = np.array([group[i] for group in self.groups], dtype=object)[values]
-            else:
-                frame[column] = values.astype(bool) if column in FLAGS else values
-        return pd.DataFrame(frame)
+        return named_table(self, name)
 
     @cached_property
     def checksum(self) -> str:
@@ -206,6 +184,8 @@ class Tally:
         head = [
             self.rules.to_dict(), self.states, self.log_start_us, self.as_of_us, self.whole_days, self.n_rows,
             self.groups, self.part, self.order,
+            # Only where there is one: who sets none shall get the same numbers as ever.
+            *([self.id_key] if self.id_key else []),
         ]  # fmt: skip
         digest = blake2b(json.dumps(head, sort_keys=True).encode(), digest_size=16)
         for table in TABLES:
@@ -229,7 +209,7 @@ class Tally:
         Raises
         ------
         JourneysError
-            If rules, span, order or kind of times differ.
+            If rules, span, order, kind of times or the key of the ids differ.
         """
         return added(self, other) if isinstance(other, Tally) else NotImplemented
 
@@ -319,23 +299,30 @@ class Tally:
 
     def summary(self) -> str:
         """Return the size of the tally in words."""
-        ended = self.journeys["outcome"] != OPEN
-        lapsed = self.journeys["outcome"] == LAPSED
-        n = self.journeys["n"]
-        first, last = (instant_text(us)[: len("2025-06-30")] for us in (self.log_start_us, self.as_of_us))
+        ended = ", ".join(f"{n:,} {name}" for name, n in self._n_by_ending().items())
         return (
-            f"{self.n_rows:,} rows from {first} to {last}: "
-            f"{self.n_journeys:,} journeys of {self.n_people:,} people through {len(self.states)} states; "
-            f"{int(n[ended & ~lapsed].sum()):,} ended in an outcome, {int(n[lapsed].sum()):,} lapsed, "
-            f"{int(n[~ended].sum()):,} open"
+            f"{self.n_rows:,} rows {self._span()}: {self.n_journeys:,} journeys of {self.n_people:,} people through "
+            f"{len(self.states)} states; {ended}"
         )
+
+    def _span(self) -> str:
+        first, last = (instant_text(us)[: len("2025-06-30")] for us in (self.log_start_us, self.as_of_us))
+        return f"from {first} to {last}"
+
+    def _n_by_ending(self) -> dict[str, int]:
+        outcome, n = self.journeys["outcome"], self.journeys["n"]
+        ended, lapsed = outcome != OPEN, outcome == LAPSED
+        parts = {"ended in an outcome": ended & ~lapsed, "lapsed": lapsed, "open": ~ended}
+        return {name: int(n[mask].sum()) for name, mask in parts.items()}
 
     def __repr__(self) -> str:
         """Return one line."""
         return f"<Tally: {self.summary()}>"
 
     def _repr_html_(self) -> str:
-        return f"<p>Tally: {self.summary()}</p>"
+        ended = {name: f"{n:,}" for name, n in self._n_by_ending().items()}
+        told = {"rows": f"{self.n_rows:,}", "people": f"{self.n_people:,}", "journeys": f"{self.n_journeys:,}"}
+        return facts(f"Tally: {self._span()}", {**told, "states": f"{len(self.states):,}", **ended})
 
 
 def _timestamp(us: int) -> pd.Timestamp:

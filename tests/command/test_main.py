@@ -19,7 +19,7 @@ from club_log import LOG, RULES, club_overview, small_log
 import journeys as jn
 from journeys.command.main import DONE, FAILED, LIMITS, USAGE, main
 
-SUMMARY_FILES = {"summary.parquet", "summary.csv", "summary.md", "columns.csv"}
+SUMMARY_FILES = {"summary.parquet", "summary.csv", "summary.md", "summary.html", "columns.csv"}
 SMALL_RULES = """customer = "who"
 time = "when"
 event = "what"
@@ -103,7 +103,7 @@ def test_summary_writes_its_files_and_prints_the_headline(run: Run, tmp_path: Pa
     assert all_files(tmp_path / "new" / "folder") == {*SUMMARY_FILES, "groups.csv"}
     plain = club_overview().plain
     assert ran.out.startswith(f"joined so far {plain.n_converted:,} of {plain.n_journeys:,} journeys of ")
-    assert [line.split()[:2] for line in ran.err.splitlines()] == [["INFO", "wrote"]] * 5
+    assert [line.split()[:2] for line in ran.err.splitlines()] == [["INFO", "wrote"]] * 6
 
 
 def test_summary_files_hold_what_the_library_answers(run: Run, tmp_path: Path) -> None:

@@ -19,6 +19,7 @@ from journeys.command import main as command
 from journeys.intake.findings import MESSAGES
 from journeys.intake.rule_checks import LIMITS
 from journeys.models import model, what_if
+from journeys.nightly import job
 from journeys.questions import (
     bootstrap,
     comeback,
@@ -28,6 +29,7 @@ from journeys.questions import (
     elapsed,
     linear,
     measures,
+    memory_check,
     outcomes,
     quantiles,
     removal,
@@ -106,7 +108,7 @@ def test_every_command_runs_as_written(clone: Path):
             assert (clone / words[words.index("--out") + 1]).exists()
     written = {path.name for path in (clone / "club_summary").iterdir()}
     assert written == {
-        "summary.md", "summary.csv", "summary.parquet", "groups.csv", "columns.csv", "tally.parquet",
+        "summary.md", "summary.html", "summary.csv", "summary.parquet", "groups.csv", "columns.csv", "tally.parquet",
     }  # fmt: skip
 
 
@@ -165,7 +167,7 @@ def _ignored(path: str) -> bool:
 
 def test_names_every_exit_code():
     stated = set(table_after("## The commands"))
-    known = {command.DONE, command.FAILED, command.USAGE, command.LIMITS}
+    known = {command.DONE, command.FAILED, command.USAGE, command.LIMITS, command.ALARM}
     assert stated == {str(code) for code in known}
     in_docstrings = {
         code
@@ -181,6 +183,44 @@ def test_names_every_key_of_the_rules():
     assert coded(table_after("## The rules file")) == {field.name for field in fields(jn.JourneyRules)}
     for limit in LIMITS.items():
         assert "{} = {}".format(*limit) in README
+
+
+def test_names_every_key_of_a_job():
+    assert coded(table_after("### The job file")) == {*job.KEYS, *job.ALARM_KEYS}
+    rows = re.findall(r"^\| `(\w+)` \| ([^|`]*) \|", README.split("### The job file")[1], re.MULTILINE)
+    stated = {key: default.strip() for key, default in rows if default.strip()}
+    defaults = {key: str(value) for key, value in {**job.DEFAULTS, **job.ALARM_DEFAULTS}.items()}
+    assert stated == defaults | {"horizons": "as the summary", "alarms": "none", "identity": "none"}
+
+
+def test_the_job_of_the_readme_runs(tmp_path: Path):
+    """The worked example: its job file, its two ways of being called, on the demo's log dealt out by day."""
+    import pandas as pd
+
+    job_file = next(one for one in blocks(README, "toml") if "lateness" in one)
+    (tmp_path / "job.toml").write_text(job_file, encoding="utf-8")
+    rules = (REPO / "demo_data" / "rules.toml").read_text(encoding="utf-8")
+    rules = rules.replace('by = ["district"]', "").replace('cohort = "month"', "")
+    (tmp_path / "rules.toml").write_text(rules, encoding="utf-8")
+    log = pd.read_parquet(REPO / "demo_data" / "club_log.parquet")
+    log = log[log.happened < "2024-10-20"]
+    for number, (day, rows) in enumerate(log.groupby(log.happened.dt.strftime("%Y-%m-%d"))):
+        folder = tmp_path / "events" / f"day={day}"
+        folder.mkdir(parents=True)
+        rows.to_parquet(folder / f"rows-{number}.parquet", index=False)
+    lines = [line for block in blocks(README, "text") for line in block.splitlines() if " nightly " in line]
+    assert len(lines) == 2
+    for line, said in zip(lines, ("expected in the end", '"new_inputs": []'), strict=True):
+        words = re.search(r"journeys (nightly job\.toml[^>]*)", line)
+        assert words is not None
+        environment = os.environ | {"PYTHONPATH": str(REPO), "JOURNEYS_ID_KEY": "a long secret of the bicycle club"}
+        done = subprocess.run(
+            [sys.executable, "-m", "journeys", *shlex.split(words[1])],
+            cwd=tmp_path, env=environment, capture_output=True, text=True,
+        )  # fmt: skip
+        assert done.returncode in (command.DONE, command.ALARM), done.stderr
+        assert said in done.stdout
+    assert {path.name for path in (tmp_path / "published").iterdir()} >= {"latest", "history.parquet", "runs.jsonl"}
 
 
 def test_states_the_defaults_of_the_rules():
@@ -208,11 +248,12 @@ def test_names_every_flag():
         stage_rows.NEVER_SEEN, stage_rows.ABOVE_ONE, compare.ON_ONE_SIDE, removal.OFF_THE_WAY,
         touch_shares.DIFFER, touch_shares.TOO_SHORT, credit_by_log.BELOW_ZERO, credit_by_log.NOTHING_PAID,
         worth.NOT_OF_A_PART, worth.NOTHING_IN_ALL, sensitivity.LESS_THAN_A_POINT, what_if.WHAT_IF, what_if.NEW_MOVE,
-        "no sure entry",
+        "no sure entry", memory_check.THIN,
     }  # fmt: skip
     with_numbers = {
         "one customer holds 12 % of the value",
         "11 of 30d followed",
+        "not run: 11 conversions of journeys whose start was seen, fewer than 20",
         "followed for 29 days, no longer than the silence",
     }
     assert coded(table_after("Flags are words")) == known | with_numbers
@@ -221,7 +262,7 @@ def test_names_every_flag():
 def test_names_every_option():
     helped = "".join(
         run([sys.executable, "-m", "journeys", name, "--help"], REPO).stdout
-        for name in ("summary", "audit", "tally")
+        for name in ("summary", "audit", "tally", "nightly", "forget")
     )
     options = set(re.findall(r"--[a-z][a-z-]+", helped)) - {"--help"}
     assert options == set(re.findall(r"(?<=[`\s])--[a-z][a-z-]+", README))

@@ -91,8 +91,9 @@ def slow_state(n: int, last: float) -> pd.DataFrame:
 def test_end_not_seen() -> None:
     match = "no stay in basket was seen as long as the silence: the share that lapses there is an upper bound"
     tally = jn.tally(slow_state(90, 8.0), rules(as_of=at(100)))
-    with pytest.warns(EndNotSeenWarning, match=match):
+    with pytest.warns(EndNotSeenWarning, match=match) as told:
         fit = jn.JourneyModel().fit(tally)
+    assert {warning.filename for warning in told} == {__file__}, "the line that asked for the fit is the one shown"
     assert fit.row_flags == {"basket": "end not seen"}
     assert fit.matrix.sum(axis=1).to_numpy() == pytest.approx(1.0, abs=1e-12)
     # What joined on day 4 of three stays, one of them open since 2 days: 1 of 2; the rest counts as lapsed.

@@ -14,7 +14,7 @@ import simulated
 
 matplotlib.use("Agg")
 
-from club_log import club_fit  # noqa: E402
+from club_log import club_fit, club_tally, overview_of, small_log  # noqa: E402
 from matplotlib import pyplot as plt  # noqa: E402
 from matplotlib.axes import Axes  # noqa: E402
 from matplotlib.collections import LineCollection, PolyCollection  # noqa: E402
@@ -23,7 +23,7 @@ from scipy import stats  # noqa: E402
 
 import journeys as jn  # noqa: E402
 from journeys.questions.passage_curve import passage_curve  # noqa: E402
-from journeys.show import palette, plots  # noqa: E402
+from journeys.show import axes, plots  # noqa: E402
 
 
 @pytest.fixture(autouse=True)
@@ -229,7 +229,7 @@ def test_names_from_the_data_cannot_steer() -> None:
 
 def test_the_pair_of_colours_stays_apart_in_grey() -> None:
     """Dark blue and orange differ in lightness, so they do without colour too; weights of ITU-R BT.709."""
-    light = [float(np.dot([0.2126, 0.7152, 0.0722], to_rgb(one))) for one in (palette.BLUE, palette.ORANGE)]
+    light = [float(np.dot([0.2126, 0.7152, 0.0722], to_rgb(one))) for one in (axes.BLUE, axes.ORANGE)]
     assert abs(light[0] - light[1]) > 0.2
 
 
@@ -241,6 +241,122 @@ def test_matplotlib_is_loaded_when_the_first_picture_is_drawn() -> None:
         "import matplotlib; matplotlib.use('Agg'); jn.plots.intervals(answer)"
     )
     subprocess.run([sys.executable, "-c", code], check=True)
+
+
+def estimates(frame: pd.DataFrame, factor: float = 100.0) -> np.ndarray:
+    return factor * frame["estimate"].to_numpy(dtype=float)
+
+
+def test_one_picture_for_every_answer() -> None:
+    """Each is drawn by the function named as its question, and shows the numbers that a reader asks for first."""
+    fit = club_fit()
+    days = jn.first_passage(fit, clock="time", method="linearised")
+    passed = jn.removal(fit, touchpoints=["poster", "search"])
+    by_log = "measure == 'of_stage_before' and basis == 'log'"
+    answers = {
+        "outcomes": (jn.outcomes(fit), "start_state == 'entry'", 100.0, "probability (%)"),
+        "first_passage": (days, "measure == 'median'", 1.0, "median (days)"),
+        "return_time": (jn.return_time(fit, method="linearised"), "measure == 'probability'", 100.0, "probability (%)"),
+        "time_to_convert": (jn.time_to_convert(fit), "measure == 'converted'", 100.0, "converted (%)"),
+        "comeback": (jn.comeback(club_tally()), "measure == 'returned'", 100.0, "returned (%)"),
+        "stages": (jn.stages(fit), by_log, 100.0, "of stage before by the log (%)"),
+        "removal": (passed, "estimate == estimate", 100.0, "conversions that"),
+        "compare": (jn.compare(fit, by="district"), "measure == 'reached'", 100.0, "difference in reached (points)"),
+    }
+    for name, (answer, which, factor, said) in answers.items():
+        ax = getattr(plots, name)(answer)
+        mine = answer.to_frame().query(which)
+        assert ax.get_xlabel().startswith(said)
+        np.testing.assert_allclose(ax.lines[-1].get_xdata(), estimates(mine, factor))
+        plt.close("all")
+    assert set(plots.__all__) >= set(answers)
+
+
+def test_a_picture_of_one_question_refuses_the_answer_to_another() -> None:
+    with pytest.raises(TypeError, match="got OutcomesResult; wanted StagesResult, or plots.intervals for any answer"):
+        plots.stages(jn.outcomes(club_fit()))
+
+
+def test_the_moves_that_matter_most_come_first_in_points() -> None:
+    answer = jn.sensitivity(club_fit())
+    ax = plots.sensitivity(answer, most=5)
+    mine = answer.to_frame().query("measure == 'reached'").head(5)
+    zero, dots = ax.lines
+    assert list(zero.get_xdata()) == [0.0, 0.0]
+    np.testing.assert_allclose(dots.get_xdata(), estimates(mine))
+    assert told(ax)[0] == "price_page, basket"
+    assert ax.get_xlabel().startswith("difference in reached (points)")
+    with pytest.raises(ValueError, match="measure='money' is not in this answer"):
+        plots.sensitivity(answer, "money")
+
+
+def test_moves_out_of_one_state() -> None:
+    answer = club_fit().moves()
+    ax = plots.moves(answer, "basket")
+    mine = answer.to_frame().query("state == 'basket' and estimate > 0")
+    assert told(ax) == mine["next_state"].tolist()
+    np.testing.assert_allclose(ax.lines[0].get_xdata(), estimates(mine))
+    assert ax.get_xlabel() == "moves out of basket (%), with 95 % interval"
+    with pytest.raises(ValueError, match="state='cellar' is not in this answer; wanted one of 'entry', 'basket'"):
+        plots.moves(answer, "cellar")
+
+
+def test_the_matrix_is_a_table_with_intervals() -> None:
+    fit = club_fit()
+    ax = plots.matrix(fit.moves())
+    written: dict[tuple[int, int], list[str]] = {}
+    for text in ax.texts:
+        x, y = text.get_position()
+        written.setdefault((round(x), round(y)), []).append(text.get_text())
+    columns, rows = ([one.get_text() for one in labels] for labels in (ax.get_xticklabels(), ax.get_yticklabels()))
+    assert rows[::-1] == ["entry", *fit.states]
+    for state in ("basket", "search"):
+        for name in columns:
+            share = fit.matrix.loc[state, name]
+            cell = written[columns.index(name), rows.index(state)]
+            assert cell[0] == ("·" if share == 0 else f"{100 * share:.1f}")
+            assert len(cell) == (1 if share == 0 else 2)
+    with pytest.raises(ValueError, match="is by district; wanted moves without groups"):
+        plots.matrix(fit.moves(by="district"))
+
+
+def test_flagged_moves_of_the_matrix_stand_in_brackets() -> None:
+    ax = plots.matrix(overview_of(small_log(9)).matrix)
+    assert any(text.get_text().startswith("[") for text in ax.texts)
+    assert ax.get_xlabel().endswith("in brackets: see its flag")
+
+
+def test_too_wide_a_matrix_is_refused() -> None:
+    names = [f"s{i}" for i in range(30)]
+    chain = pd.DataFrame(np.eye(30, 31, 1), index=names, columns=[*names, "won"])
+    with pytest.raises(ValueError, match=r"has 31 states; wanted up to 25, or plots\.moves\(result, state\) of one"):
+        plots.matrix(jn.JourneyFit.from_matrix(chain).moves())
+
+
+def test_log_and_model_can_be_told_apart() -> None:
+    answer = jn.stages(club_fit())
+    both = plots.intervals(answer, "reached")
+    assert told(both)[:2] == ["entry, log", "entry, model"]
+    assert told(plots.stages(answer, "reached", "model"))[0] == "entry"
+    with pytest.raises(ValueError, match="basis='guess' is not in this answer; wanted one of 'log', 'model'"):
+        plots.stages(answer, basis="guess")
+
+
+def test_credit_and_money_have_their_pictures() -> None:
+    log = small_log().assign(fee=lambda frame: np.where(frame["what"] == "joined", 30.0, 0.0))
+    fit = overview_of(log, value="fee", touchpoints=["visit", "look"]).fit
+    assert plots.credit(jn.credit(fit)).get_xlabel().startswith("share of the conversions (%)")
+    money = plots.worth(jn.worth(fit))
+    assert money.get_xlabel() == "value per journey, with 95 % interval"
+    assert plots.worth(jn.worth(fit), "largest_customer_share").get_xlabel().startswith("largest customer share (%)")
+
+
+def test_long_names_are_cut_where_they_are_drawn() -> None:
+    chain = pd.DataFrame([[0.4, 0.6]], index=["w" * 10_000], columns=["won", "lost"])
+    fit = jn.JourneyFit.from_matrix(chain)
+    names = told(plots.intervals(jn.outcomes(fit)))
+    assert max(map(len, names)) < 80
+    assert "(10,000 characters, " in names[2]
 
 
 def test_numbers_about_touchpoints_say_what_they_are() -> None:

@@ -1,0 +1,168 @@
+"""Where a night's rows come from: what is new, whether what was counted is still the same, and a log of the new ones.
+
+A kind of input lists what there is and opens some of it; a ledger counts each input once, under its name.
+"""
+
+from __future__ import annotations
+
+from abc import ABC, abstractmethod
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass, replace
+from pathlib import Path
+
+import pyarrow as pa
+
+from journeys.errors import JourneysError, LogError
+from journeys.intake.read import LogSource
+from journeys.intake.read_files import LogFile, find_files
+from journeys.intake.rules import JourneyRules
+from journeys.intake.sources import FileSource
+from journeys.nightly import disk
+from journeys.nightly.manifest import Counted
+
+
+class InputError(JourneysError):
+    """An input that was counted is no longer what it was, or one is not whole (exit code 1)."""
+
+
+@dataclass(frozen=True)
+class Input:
+    """Something to count once: its name, its size in bytes, when it was last changed, and its checksum."""
+
+    name: str
+    size: int
+    changed_ns: int
+    checksum: str = ""
+
+
+class InputLog(LogSource):
+    """A log that knows how many rows came from each input when it was last read to its end."""
+
+    rows_of: dict[str, int]
+
+
+class Inputs(ABC):
+    """A kind of input."""
+
+    @abstractmethod
+    def new(self, counted: Mapping[str, Counted]) -> list[Input]:
+        """Return what has not been counted yet, in the order in which it counts.
+
+        Raises
+        ------
+        InputError
+            If something that was counted has changed since.
+        """
+
+    @abstractmethod
+    def open(self, inputs: Sequence[Input], rules: JourneyRules) -> InputLog:
+        """Return the log that some inputs, at least one, make up one after another."""
+
+    @abstractmethod
+    def confirm(self, inputs: Sequence[Input]) -> None:
+        """Raise an InputError if one of them has changed while it was read."""
+
+    @abstractmethod
+    def missing(self, counted: Mapping[str, Counted]) -> list[str]:
+        """Return the names of what was counted and is no longer there."""
+
+
+class FolderInputs(Inputs):
+    """Files below a folder, such as one for each day: Parquet, CSV or Arrow, by path.
+
+    A file that was counted and is as large, and was last changed, as it was then, is taken to be the same; where the
+    time differs, its checksum decides.
+    """
+
+    def __init__(self, folder: Path) -> None:
+        if not folder.is_dir():
+            raise LogError(f"{folder}: no such folder; wanted one that holds the log's files (`log` in the job file)")
+        self._folder = folder
+
+    def new(self, counted: Mapping[str, Counted]) -> list[Input]:
+        """Return the files that have not been counted yet, by path, with their checksums."""
+        found = []
+        for name, file in self._files().items():
+            there = _seen(name, file.path)
+            before = counted.get(name)
+            if before is None:
+                _check_end(file)
+                found.append(replace(there, checksum=disk.digest_of_file(file.path)))
+            elif not _is_same(there, before, file.path):
+                raise InputError(_changed(file.path, before, there))
+        return found
+
+    def open(self, inputs: Sequence[Input], rules: JourneyRules) -> InputLog:
+        """Return the log of some files."""
+        files = self._files()
+        log = _FileLog({one.name: files[one.name] for one in inputs}, (rules.event,), str(self._folder))
+        log.check(rules.columns)
+        return log
+
+    def confirm(self, inputs: Sequence[Input]) -> None:
+        """Raise an InputError if a file has another size or time than when its checksum was taken."""
+        for one in inputs:
+            there = _seen(one.name, self._folder / one.name)
+            if (there.size, there.changed_ns) != (one.size, one.changed_ns):
+                msg = f"{self._folder / one.name} was changed while it was read; run again when it has been written"
+                raise InputError(msg)
+
+    def missing(self, counted: Mapping[str, Counted]) -> list[str]:
+        """Return files that are gone."""
+        return sorted(set(counted) - set(self._files()))
+
+    def _files(self) -> dict[str, LogFile]:
+        files = find_files(self._folder)
+        return {file.path.relative_to(self._folder).as_posix(): file for file in files}
+
+
+class _FileLog(FileSource, InputLog):
+    """Files, their rows counted as they are read."""
+
+    def __init__(self, files: dict[str, LogFile], text: tuple[str, ...], where: str) -> None:
+        super().__init__(list(files.values()), text, where)
+        self._name_of = {file.path: name for name, file in files.items()}
+        self.rows_of = {}
+
+    def _read_file(self, file: LogFile, columns: list[str]) -> Iterator[pa.RecordBatch]:
+        name = self._name_of[file.path]
+        self.rows_of[name] = 0
+        for batch in super()._read_file(file, columns):
+            self.rows_of[name] += batch.num_rows
+            yield batch
+
+
+def _seen(name: str, path: Path) -> Input:
+    try:
+        there = path.stat()
+    except FileNotFoundError:
+        raise InputError(f"{path} went away while it was read; run again") from None
+    return Input(name, there.st_size, there.st_mtime_ns)
+
+
+def _is_same(there: Input, before: Counted, path: Path) -> bool:
+    if there.size != before.size:
+        return False
+    return there.changed_ns == before.changed_ns or disk.digest_of_file(path) == before.checksum
+
+
+def _changed(path: Path, before: Counted, there: Input) -> str:
+    was, now = f"{before.size:,} bytes", f"{there.size:,} bytes"
+    return (
+        f"{path} has changed since it was counted ({was} then, {now if now != was else 'as many others'} now); a "
+        "ledger counts an input once: put the old file back and give what is new as a file of its own, or count all "
+        "inputs anew with --rebuild"
+    )
+
+
+def _check_end(file: LogFile) -> None:
+    """Raise if a text file does not end with its last line: nothing else tells that it was cut off."""
+    if file.kind not in ("CSV", "TSV") or file.path.name.lower().endswith(".gz"):
+        return
+    with file.path.open("rb") as text:
+        size = text.seek(0, 2)
+        text.seek(max(size - 1, 0))
+        last = text.read(1)
+    if last not in (b"\n", b"\r"):
+        msg = f"{file.path}: the last line does not end, so the file may have been cut off; write it again"
+        raise InputError(msg)

@@ -1,0 +1,1 @@
+"""The summary as one page of HTML that needs nothing from elsewhere."""
