@@ -42,6 +42,33 @@ def as_text(name: Any) -> str:
     return name.decode(errors="replace") if isinstance(name, bytes) else name or ""
 
 
+def texts_of(array: pa.Array, column: str) -> list[Any]:
+    """Return the values of a plain array, its texts checked to be text.
+
+    Parameters
+    ----------
+    array : pyarrow.Array
+        Not a dictionary.
+    column : str
+        Name of the column, for the message.
+
+    Returns
+    -------
+    list
+
+    Raises
+    ------
+    LogError
+        If bytes called text are no UTF-8.
+    """
+    try:
+        values: list[Any] = array.to_pylist()
+    except (UnicodeDecodeError, OverflowError, ValueError):
+        msg = f"column {column!r} holds values that are not of its type {array.type} (text must be UTF-8); write it again"
+        raise LogError(msg) from None
+    return values
+
+
 def event_names(array: pa.Array, column: str) -> pa.DictionaryArray:
     """Event names as a dictionary of text; whole numbers are written out.
 

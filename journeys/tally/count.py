@@ -91,7 +91,7 @@ def count_log(
     if order > MOST_SLOTS:
         msg = f"order={order}; wanted at most {MOST_SLOTS}: no log has journeys enough to tell longer memories apart"
         raise ValueError(msg)
-    log = open_log(source, rules.columns, text=(rules.event,))
+    log = open_log(source, rules.columns, text=(rules.event,), ids=rules.id_columns)
     with log.spooled() if log.one_shot else nullcontext(log) as kept:
         look = first_look(kept, rules)
         pass_ = partial(

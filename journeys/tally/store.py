@@ -16,6 +16,7 @@ import pyarrow.parquet as pq
 from journeys.errors import JourneysError, StoreError
 from journeys.files import written_whole
 from journeys.intake.arrays import from_numpy, from_texts
+from journeys.intake.faults import UNREADABLE
 from journeys.intake.findings import Findings
 from journeys.intake.rules import JourneyRules
 from journeys.tally.tables import NARROW, TABLES, customer_sums, parts_of, sums_of
@@ -108,7 +109,7 @@ def is_tally(path: str | os.PathLike[str]) -> bool:
     """Tell whether a path is a saved tally (as against an event log)."""
     try:
         return Path(path).is_file() and HEAD in (pq.read_schema(path).metadata or {})
-    except (pa.ArrowInvalid, OSError):
+    except UNREADABLE:
         return False
 
 
@@ -132,11 +133,11 @@ def load(path: str | os.PathLike[str]) -> Tally:
     """
     try:
         table = pq.read_table(path)
-        head = json.loads((table.schema.metadata or {})[HEAD])
+        head = read_head(table.schema, HEAD)
     except FileNotFoundError:
         msg = f"no tally at {os.fspath(path)!r}; wanted a file written by tally.save"
         raise StoreError(msg) from None
-    except (KeyError, pa.ArrowException, OSError, ValueError):
+    except UNREADABLE:
         msg = (
             f"{os.fspath(path)!r} is not a whole tally; wanted a file written by tally.save: make it again from the log"
         )
@@ -150,12 +151,29 @@ def load(path: str | os.PathLike[str]) -> Tally:
     try:
         tally = _from_parts(table, head)
         whole = _checksum(tally) == head["checksum"]
-    except (KeyError, TypeError, ValueError, AttributeError, pa.ArrowException, JourneysError):
+    except (*UNREADABLE, LookupError, TypeError, AttributeError, JourneysError):
         whole = False
     if not whole:
         msg = f"{os.fspath(path)!r} is damaged (its checksum does not fit); count the log again"
         raise StoreError(msg)
     return tally
+
+
+def read_head(schema: pa.Schema, key: bytes) -> dict[str, Any]:
+    """Return the head of a file, which stands in its metadata.
+
+    Raises
+    ------
+    ValueError
+        If it is not there, or is not a table of JSON.
+    """
+    try:
+        head = json.loads((schema.metadata or {})[key])
+    except (KeyError, RecursionError):
+        head = None
+    if not isinstance(head, dict):
+        raise ValueError
+    return head
 
 
 def _checksum(tally: Tally) -> str:
@@ -171,7 +189,7 @@ def _from_parts(table: pa.Table, head: dict[str, Any]) -> Tally:
         rows = table.filter(pc.equal(table["table"], name))
         narrow = {} if name == "customers" else NARROW
         held[name] = {
-            column: rows[column].to_numpy().astype(narrow.get(column, np.int64))
+            column: _whole(rows[column]).astype(narrow.get(column, np.int64))
             for column in columns_of(name, rules, head["order"])
         }
     return Tally(
@@ -187,3 +205,10 @@ def _from_parts(table: pa.Table, head: dict[str, Any]) -> Tally:
         record=Findings.from_dict(head["findings"]),
         **held,
     )
+
+
+def _whole(column: pa.ChunkedArray) -> np.ndarray:
+    """Return the numbers of a column in which none is missing."""
+    if column.null_count:
+        raise ValueError
+    return column.to_numpy()
