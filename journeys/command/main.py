@@ -3,11 +3,14 @@
 from __future__ import annotations
 
 import argparse
+import io
 import json
 import logging
+import os
 import sys
 import warnings
 from collections.abc import Sequence
+from contextlib import suppress
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, NoReturn
 
@@ -24,6 +27,8 @@ EXIT_CODES = """exit codes:
   2  wrong usage or settings
   3  the log broke its quality limits, nothing was published
 """
+# Several faults are told at once; the name of a file may be thousands of signs long.
+_LONGEST_LINE = 4_000
 logger = logging.getLogger("journeys")
 
 
@@ -50,17 +55,25 @@ def main(argv: Sequence[str] | None = None) -> int:
         warnings.showwarning = _log_warning
         warnings.simplefilter("always", JourneysWarning)
         try:
-            options.run(options)
+            _tell(options.run(options))
         except JourneysError as error:
             code = LIMITS if isinstance(error, LimitError) else USAGE if isinstance(error, RulesError) else FAILED
             return _refused(error, code, options.debug)
+        except _PrintError as error:
+            return _refused(error, FAILED, options.debug)
         except OSError as error:
             place = f"{error.filename}: " if error.filename else ""
             return _refused(error, FAILED, options.debug, f"{place}{error.strerror or error}; nothing was written")
+        except MemoryError as error:
+            return _refused(error, FAILED, options.debug, "there is not memory enough for this; nothing was written")
         except Exception as error:
             fault = f"{type(error).__name__}: {error}; this should not happen, --debug shows where it did"
             return _refused(error, FAILED, options.debug, fault)
     return DONE
+
+
+class _PrintError(Exception):
+    """Standard output did not take the answer; what was written to files stands."""
 
 
 def _parser() -> argparse.ArgumentParser:
@@ -85,12 +98,12 @@ def _parser() -> argparse.ArgumentParser:
         )
         command.set_defaults(run=run)
         command.add_argument(
-            "log", metavar="LOG", help="Parquet, CSV or Arrow file, a folder of them, or a saved tally"
+            "log", metavar="LOG", type=_named, help="Parquet, CSV or Arrow file, a folder of them, or a saved tally"
         )
-        command.add_argument("--rules", metavar="FILE", help="rules file (TOML); not needed for a saved tally")
+        command.add_argument("--rules", metavar="FILE", type=_named, help="rules file (TOML); not needed for a saved tally")
         command.add_argument("--debug", action="store_true", help="show where an error came from")
         if name == "summary":
-            command.add_argument("--out", metavar="FOLDER", required=True, help="where the summary goes")
+            command.add_argument("--out", metavar="FOLDER", type=_named, required=True, help="where the summary goes")
             command.add_argument("--keep-tally", action="store_true", help="write the tally there too")
             command.add_argument(
                 "--horizon",
@@ -99,13 +112,26 @@ def _parser() -> argparse.ArgumentParser:
                 help='share converted within this time, such as "14d"; may be given several times',
             )
         if name == "tally":
-            command.add_argument("--out", metavar="FILE", required=True, help="where the tally goes")
+            command.add_argument("--out", metavar="FILE", type=_named, required=True, help="where the tally goes")
         else:
             command.add_argument("--json", action="store_true", help="print for machines")
     return parser
 
 
-def _summary(options: argparse.Namespace) -> None:
+def _named(path: str) -> str:
+    """Return a path that a file can have; an empty one is what a variable of the shell that is not set gives."""
+    try:
+        path.encode()
+    except UnicodeEncodeError:
+        msg = "the path is not UTF-8"
+        raise argparse.ArgumentTypeError(msg) from None
+    if not path or "\0" in path:
+        msg = "the path is empty" if not path else "the path holds a zero byte"
+        raise argparse.ArgumentTypeError(msg)
+    return path
+
+
+def _summary(options: argparse.Namespace) -> str:
     from journeys.models.model import JourneyModel
     from journeys.questions.overview import summarise
     from journeys.show.summary import summary_text, write_summary
@@ -125,18 +151,17 @@ def _summary(options: argparse.Namespace) -> None:
     if options.json:
         from journeys.show.tables import file_frame
 
-        _print_json({"tally": tally.checksum, "estimates": _records(file_frame(overview.to_frame()))})
-    else:
-        sys.stdout.write(summary_text(overview))
+        return _as_json({"tally": tally.checksum, "estimates": _records(file_frame(overview.to_frame()))})
+    return summary_text(overview)
 
 
-def _audit(options: argparse.Namespace) -> None:
+def _audit(options: argparse.Namespace) -> str:
     from journeys.questions.audit import audit
     from journeys.tally.store import is_tally
 
     seen = audit(_counted(options)) if is_tally(options.log) else audit(options.log, _rules(options))
     if options.json:
-        _print_json(
+        return _as_json(
             {
                 "carries_model": seen.carries_model,
                 "checks": _records(seen.checks),
@@ -144,11 +169,10 @@ def _audit(options: argparse.Namespace) -> None:
                 "findings": _records(seen.findings),
             }
         )
-    else:
-        sys.stdout.write(seen.summary() + "\n")
+    return seen.summary() + "\n"
 
 
-def _tally(options: argparse.Namespace) -> None:
+def _tally(options: argparse.Namespace) -> str:
     out = Path(options.out)
     if out.is_dir():
         msg = f"--out {out}: is a folder; wanted a file, such as {out / 'tally.parquet'}"
@@ -159,7 +183,7 @@ def _tally(options: argparse.Namespace) -> None:
     tally = _counted(options)
     tally.save(options.out)
     logger.info("wrote %s", options.out)
-    sys.stdout.write(tally.summary() + "\n")
+    return tally.summary() + "\n"
 
 
 def _horizons(options: argparse.Namespace) -> list[str] | None:
@@ -223,24 +247,47 @@ def _records(frame: Any) -> list[dict[str, Any]]:
     return records
 
 
-def _print_json(answer: dict[str, Any]) -> None:
-    sys.stdout.write(json.dumps(answer, indent=1, allow_nan=False) + "\n")
+def _as_json(answer: dict[str, Any]) -> str:
+    return json.dumps(answer, indent=1, allow_nan=False) + "\n"
+
+
+def _tell(answer: str) -> None:
+    """Print the answer to its end, whatever standard output can hold of it."""
+    if sys.stdout is None:  # closed by whoever started the program
+        return
+    if isinstance(sys.stdout, io.TextIOWrapper):
+        # A terminal that lacks a sign shows its number instead.
+        sys.stdout.reconfigure(errors="backslashreplace")
+    try:
+        sys.stdout.write(answer)
+        sys.stdout.flush()
+    except OSError as error:
+        # What is left in the buffer would be written, and fail, once more at the end.
+        with open(os.devnull, "w") as nowhere, suppress(OSError, ValueError):
+            os.dup2(nowhere.fileno(), sys.stdout.fileno())
+        msg = f"standard output: {error.strerror}; files named above are whole"
+        raise _PrintError(msg) from error
 
 
 def _refused(error: BaseException, code: int, debug: bool, told: str | None = None) -> int:
     """Say in one line what was wrong; several faults are told one after another."""
-    lines = [line.strip() for line in (told or str(error) or type(error).__name__).splitlines()]
-    line = "; and ".join(line for line in lines if line)
-    # What a file or a name holds must not steer the terminal.
-    logger.error("%s", "".join(char if char.isprintable() else " " for char in line), exc_info=error if debug else None)
+    logger.error("%s", _one_line(told or str(error) or type(error).__name__), exc_info=error if debug else None)
     return code
+
+
+def _one_line(message: str) -> str:
+    """Return a message as one line that does not steer the terminal, whatever a file or a name in it holds."""
+    line = "; and ".join(stripped for line in message.splitlines() if (stripped := line.strip()))
+    if len(line) > _LONGEST_LINE:
+        line = f"{line[: _LONGEST_LINE // 2]} … {line[-_LONGEST_LINE // 2 :]}"
+    return "".join(char if char.isprintable() else " " for char in line)
 
 
 class _Parser(argparse.ArgumentParser):
     """Tells wrong usage in one line, as every other fault is told."""
 
     def error(self, message: str) -> NoReturn:
-        self.exit(USAGE, f"ERROR {message}; `{self.prog} --help` says what is wanted\n")
+        self.exit(USAGE, f"ERROR {_one_line(message)}; `{self.prog} --help` says what is wanted\n")
 
 
 def _log_warning(message: Warning | str, *_: Any, **__: Any) -> None:

@@ -28,22 +28,8 @@ def decoded(array: pa.Array) -> pa.Array:
     return array.dictionary_decode() if pa.types.is_dictionary(array.type) else array
 
 
-def as_text(name: Any) -> str:
-    """Event name as text; bytes are UTF-8, None is empty.
-
-    Parameters
-    ----------
-    name : str, bytes or None
-
-    Returns
-    -------
-    str
-    """
-    return name.decode(errors="replace") if isinstance(name, bytes) else name or ""
-
-
 def texts_of(array: pa.Array, column: str) -> list[Any]:
-    """Return the values of a plain array, its texts checked to be text.
+    """Return the values of a plain array, bytes as text.
 
     Parameters
     ----------
@@ -62,11 +48,11 @@ def texts_of(array: pa.Array, column: str) -> list[Any]:
         If bytes called text are no UTF-8.
     """
     try:
-        values: list[Any] = array.to_pylist()
-    except (UnicodeDecodeError, OverflowError, ValueError):
-        msg = f"column {column!r} holds values that are not of its type {array.type} (text must be UTF-8); write it again"
+        return [value.decode() if isinstance(value, bytes) else value for value in array.to_pylist()]
+    except (OverflowError, ValueError):
+        # Replacing what cannot be read would make one name of several.
+        msg = f"column {column!r} holds values that are not UTF-8 text or not of its type {array.type}; write it again"
         raise LogError(msg) from None
-    return values
 
 
 def event_names(array: pa.Array, column: str) -> pa.DictionaryArray:

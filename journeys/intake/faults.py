@@ -24,6 +24,6 @@ def no_memory(path: str | os.PathLike[str]) -> str:
     Examples
     --------
     >>> no_memory("log.parquet")
-    'log.parquet: a piece of it takes more memory than there is; write it again in smaller pieces (row groups)'
+    'log.parquet: a piece of it takes more memory than there is; write it again in smaller pieces'
     """
-    return f"{os.fspath(path)}: a piece of it takes more memory than there is; write it again in smaller pieces (row groups)"
+    return f"{os.fspath(path)}: a piece of it takes more memory than there is; write it again in smaller pieces"

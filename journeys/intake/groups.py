@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 from journeys.checks import DAY_US
 from journeys.errors import LogError
 from journeys.intake.arrays import indices_of, is_missing, is_text, plain
-from journeys.intake.columns import as_text, texts_of
+from journeys.intake.columns import texts_of
 
 Value = str | int | bool
 
@@ -159,7 +159,7 @@ class _Values:
     def _value(value: object) -> Value:
         if isinstance(value, bool | int):
             return value
-        return value.isoformat() if isinstance(value, dt.date) else as_text(value)
+        return value.isoformat() if isinstance(value, dt.date) else str(value or "")
 
 
 def cohort_calendar(

@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 from journeys.checks import DAY_US
 from journeys.errors import LogError
 from journeys.intake.arrays import indices_of, is_missing, numbers, plain, whole_numbers
-from journeys.intake.columns import as_text, decoded, event_names, is_in, texts_of
+from journeys.intake.columns import decoded, event_names, is_in, texts_of
 from journeys.intake.findings import Findings
 from journeys.intake.groups import GroupCodes
 from journeys.intake.identity import bucket_major, customer_keys
@@ -174,7 +174,7 @@ class Normaliser:
         used = np.bincount(index if kept.mask is None else index[kept.mask], minlength=len(names)) > 0
         positions = np.flatnonzero(used)
         codes = np.zeros(len(names), dtype=np.int32)
-        codes[positions] = self.codes.encode([as_text(names[i]) for i in positions])
+        codes[positions] = self.codes.encode([names[i] for i in positions])
         for name in self.codes.names[len(self.targets) :]:
             self.targets.append(self._target(name))
         events = codes[index]

@@ -102,14 +102,17 @@ def file_schema(file: LogFile, text: Sequence[str]) -> pa.Schema:
     """
     try:
         if file.kind == "Parquet":
-            return pq.read_schema(file.path)
-        if file.kind == "Arrow":
-            return _open_arrow(file.path).schema
-        return csv_schema(file.path, text)
+            schema = pq.read_schema(file.path)
+        elif file.kind == "Arrow":
+            schema = _open_arrow(file.path).schema
+        else:
+            schema = csv_schema(file.path, text)
+        _ = schema.names  # raises where they are no text
     except LogError:
         raise
     except UNREADABLE as fault:
         raise LogError(_damaged(file, fault)) from None
+    return schema
 
 
 def file_batches(

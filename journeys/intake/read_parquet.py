@@ -44,7 +44,12 @@ def parquet_batches(path: Path, columns: Sequence[str], text: Sequence[str]) -> 
         _check_sizes(path, parquet.metadata, columns)
         # A few row groups at a time: asked for all of them, Arrow would hold the whole file.
         for groups in _together(parquet.metadata):
-            yield from parquet.iter_batches(batch_size=ROWS_AT_ONCE, row_groups=groups, columns=list(columns))
+            for batch in parquet.iter_batches(batch_size=ROWS_AT_ONCE, row_groups=groups, columns=list(columns)):
+                for column in batch.columns:
+                    # Arrow takes the codes of a damaged dictionary as they stand.
+                    if pa.types.is_dictionary(column.type):
+                        column.validate(full=True)
+                yield batch
 
 
 def _check_sizes(path: Path, metadata: pq.FileMetaData, columns: Sequence[str]) -> None:
