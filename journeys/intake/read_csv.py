@@ -41,8 +41,7 @@ def csv_schema(path: Path, text: Sequence[str]) -> pa.Schema:
     """
     try:
         _check_head(path)
-        with _open(path, text, None) as reader:
-            return reader.schema
+        return _schema(path, text, None)
     except LogError:
         raise
     except UNREADABLE as fault:
@@ -75,12 +74,12 @@ def csv_batches(
     """
     types: dict[str, pa.DataType] = {}
     try:
-        with _open(path, text, columns) as reader:
-            # Times without a fraction are inferred as seconds; later ones may have one.
-            for field in reader.schema:
-                if pa.types.is_timestamp(field.type) and field.type.unit == "s":
-                    types[field.name] = pa.timestamp("us", field.type.tz)
-            numbered = {name for name in ids if name in columns and reader.schema.field(name).type == pa.int64()}
+        schema = _schema(path, text, columns)
+        # Times without a fraction are inferred as seconds; later ones may have one.
+        for field in schema:
+            if pa.types.is_timestamp(field.type) and field.type.unit == "s":
+                types[field.name] = pa.timestamp("us", field.type.tz)
+        numbered = {name for name in ids if name in columns and schema.field(name).type == pa.int64()}
         written = _Written(path, numbered)
         with _open(path, text, columns, types | dict.fromkeys(numbered, pa.string())) as reader:
             for batch in reader:
@@ -89,6 +88,12 @@ def csv_batches(
         raise
     except UNREADABLE as fault:
         raise LogError(_fault(path, text, columns, types, fault)) from None
+
+
+def _schema(path: Path, text: Sequence[str], columns: Sequence[str] | None) -> pa.Schema:
+    """Columns as the first block shows them; the reader, which holds what it read ahead, is let go of on return."""
+    with _open(path, text, columns) as reader:
+        return reader.schema
 
 
 class _Written:

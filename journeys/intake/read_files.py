@@ -107,7 +107,7 @@ def file_schema(file: LogFile, text: Sequence[str]) -> pa.Schema:
             schema = _open_arrow(file.path).schema
         else:
             schema = csv_schema(file.path, text)
-        _ = schema.names  # raises where they are no text
+        str(schema)  # raises where names, or those of time zones, are no text
     except LogError:
         raise
     except UNREADABLE as fault:

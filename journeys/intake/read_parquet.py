@@ -12,6 +12,7 @@ import pyarrow.parquet as pq
 
 from journeys.errors import LogError
 from journeys.intake.arrays import from_numpy
+from journeys.intake.faults import UNREADABLE
 
 ROWS_AT_ONCE = 1 << 19
 # What a column of a row group may unpack to: a batch of it is in memory at once. A file of a few kB can say more.
@@ -42,6 +43,7 @@ def parquet_batches(path: Path, columns: Sequence[str], text: Sequence[str]) -> 
     names = [name for name in text if name in columns and schema.field(name).type in kinds]
     with pq.ParquetFile(path, read_dictionary=names) as parquet:
         _check_sizes(path, parquet.metadata, columns)
+        n_rows = 0
         # A few row groups at a time: asked for all of them, Arrow would hold the whole file.
         for groups in _together(parquet.metadata):
             for batch in parquet.iter_batches(batch_size=ROWS_AT_ONCE, row_groups=groups, columns=list(columns)):
@@ -49,7 +51,14 @@ def parquet_batches(path: Path, columns: Sequence[str], text: Sequence[str]) -> 
                     # Arrow takes the codes of a damaged dictionary as they stand.
                     if pa.types.is_dictionary(column.type):
                         column.validate(full=True)
+                n_rows += batch.num_rows
                 yield batch
+        if n_rows != parquet.metadata.num_rows:
+            # Where columns differ in length, Arrow stops with the shortest.
+            raise LogError(
+                f"{path}: not a whole Parquet file ({n_rows:,} rows instead of {parquet.metadata.num_rows:,}); write it "
+                "again"
+            )
 
 
 def _check_sizes(path: Path, metadata: pq.FileMetaData, columns: Sequence[str]) -> None:
@@ -57,6 +66,8 @@ def _check_sizes(path: Path, metadata: pq.FileMetaData, columns: Sequence[str]) 
     for number in range(metadata.num_row_groups):
         group = metadata.row_group(number)
         most = MOST_BYTES + MOST_BYTES_PER_ROW * group.num_rows
+        if group.total_byte_size <= most:
+            continue
         for place in range(group.num_columns):
             chunk = group.column(place)
             if chunk.path_in_schema in columns and chunk.total_uncompressed_size > most:
@@ -118,7 +129,7 @@ def column_ranges(paths: Sequence[Path], column: str) -> Ranges | None:
     for path in paths:
         metadata = pq.read_metadata(path)
         field = metadata.schema.to_arrow_schema().field(column)
-        if kind not in (None, field.type) or not _tells_ranges(field.type):
+        if kind not in (None, field.type) or not _tells_ranges(field.type) or not _are_sound(path, column):
             return None
         kind = field.type
         place = _place(metadata, column)
@@ -135,6 +146,18 @@ def column_ranges(paths: Sequence[Path], column: str) -> Ranges | None:
     if kind is None:
         return None
     return Ranges(from_numpy(np.array(first, np.int64), kind), from_numpy(np.array(last, np.int64), kind), n, n_rows)
+
+
+def _are_sound(path: Path, column: str) -> bool:
+    """Return whether a row of each group can be read: asked for the notes of a damaged one, Arrow ends the process."""
+    try:
+        with pq.ParquetFile(path) as parquet:
+            for number in range(parquet.num_row_groups):
+                next(parquet.iter_batches(batch_size=1, row_groups=[number], columns=[column]), None)
+    except UNREADABLE:
+        # Reading the rows will say what is wrong.
+        return False
+    return True
 
 
 def _place(metadata: pq.FileMetaData, column: str) -> int:

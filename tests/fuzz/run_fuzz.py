@@ -14,6 +14,7 @@ from __future__ import annotations
 import argparse
 import faulthandler
 import json
+import os
 import resource
 import shutil
 import subprocess
@@ -118,7 +119,10 @@ def fuzz(name: str, engine: str, tries: int, seed: int) -> dict[str, int] | str:
     folder = root / "work"
     folder.mkdir()
     words = [name, "--engine", engine, "--tries", tries, "--seed", seed, "--child", folder]
-    done = subprocess.run([sys.executable, __file__, "--target", *map(str, words)], capture_output=True, text=True)
+    # Allocators reserve address space that they never touch; the limit on it must not be about them.
+    env = os.environ | {"ARROW_DEFAULT_MEMORY_POOL": "system", "MALLOC_ARENA_MAX": "2", "OPENBLAS_NUM_THREADS": "1"}
+    command = [sys.executable, __file__, "--target", *map(str, words)]
+    done = subprocess.run(command, env=env, capture_output=True, text=True)
     counts = Path(str(folder) + ".counts")
     try:
         if done.returncode == 0:
