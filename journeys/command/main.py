@@ -100,7 +100,9 @@ def _parser() -> argparse.ArgumentParser:
         command.add_argument(
             "log", metavar="LOG", type=_named, help="Parquet, CSV or Arrow file, a folder of them, or a saved tally"
         )
-        command.add_argument("--rules", metavar="FILE", type=_named, help="rules file (TOML); not needed for a saved tally")
+        command.add_argument(
+            "--rules", metavar="FILE", type=_named, help="rules file (TOML); not needed for a saved tally"
+        )
         command.add_argument("--debug", action="store_true", help="show where an error came from")
         if name == "summary":
             command.add_argument("--out", metavar="FOLDER", type=_named, required=True, help="where the summary goes")
@@ -263,7 +265,7 @@ def _tell(answer: str) -> None:
         sys.stdout.flush()
     except OSError as error:
         # What is left in the buffer would be written, and fail, once more at the end.
-        with open(os.devnull, "w") as nowhere, suppress(OSError, ValueError):
+        with Path(os.devnull).open("w") as nowhere, suppress(OSError, ValueError):
             os.dup2(nowhere.fileno(), sys.stdout.fileno())
         msg = f"standard output: {error.strerror}; files named above are whole"
         raise _PrintError(msg) from error

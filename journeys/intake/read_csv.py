@@ -115,8 +115,8 @@ class _Written:
             if zeros.true_count:
                 row = self._n_rows + zeros.index(True).as_py() + 2
                 msg = (
-                    f"{self._path}: row {row} (the line of names is row 1), column {name!r}, has a leading zero, and the "
-                    "rows far above have none; whether they are numbers or text cannot be told: write the log as Parquet"
+                    f"{self._path}: row {row} (the line of names is row 1), column {name!r}, has a leading zero, and "
+                    "the rows far above have none; numbers or text? write the log as Parquet, where it is told"
                 )
                 raise LogError(msg)
             batch = batch.set_column(place, name, ids.cast(pa.int64()))

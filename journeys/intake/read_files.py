@@ -107,7 +107,8 @@ def file_schema(file: LogFile, text: Sequence[str]) -> pa.Schema:
             schema = _open_arrow(file.path).schema
         else:
             schema = csv_schema(file.path, text)
-        str(schema)  # raises where names, or those of time zones, are no text
+        # Raises here, not later, where names of columns or of time zones are no text.
+        _ = schema.names, [kind.tz for kind in schema.types if pa.types.is_timestamp(kind)]
     except LogError:
         raise
     except UNREADABLE as fault:

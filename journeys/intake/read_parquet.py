@@ -55,10 +55,8 @@ def parquet_batches(path: Path, columns: Sequence[str], text: Sequence[str]) -> 
                 yield batch
         if n_rows != parquet.metadata.num_rows:
             # Where columns differ in length, Arrow stops with the shortest.
-            raise LogError(
-                f"{path}: not a whole Parquet file ({n_rows:,} rows instead of {parquet.metadata.num_rows:,}); write it "
-                "again"
-            )
+            told = f"{n_rows:,} rows instead of {parquet.metadata.num_rows:,}"
+            raise LogError(f"{path}: not a whole Parquet file ({told}); write it again")
 
 
 def _check_sizes(path: Path, metadata: pq.FileMetaData, columns: Sequence[str]) -> None:

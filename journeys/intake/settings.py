@@ -13,7 +13,6 @@ from typing import TYPE_CHECKING, Any, ClassVar, Self
 from journeys.errors import RulesError
 from journeys.intake.frozen import toml_text
 
-
 _LONGEST = 4 << 20
 _DEEPEST = 100
 _TOO_DEEP = "its tables or lists lie deeper in one another than any setting has them"

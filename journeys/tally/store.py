@@ -211,4 +211,5 @@ def _whole(column: pa.ChunkedArray) -> np.ndarray:
     """Return the numbers of a column in which none is missing."""
     if column.null_count:
         raise ValueError
-    return column.to_numpy()
+    whole: np.ndarray = column.to_numpy()
+    return whole

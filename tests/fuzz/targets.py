@@ -238,10 +238,8 @@ def words_seeds(folder: Path) -> list[bytes]:
     """Give bytes of which each is the place of a word in the list."""
     good = ["summary", "log.parquet", "--rules", "rules.toml", "--out", "place"]
     place = {word: bytes([i]) for i, word in enumerate(WORDS)}
-    return [
-        b"".join(place[word] for word in words)
-        for words in (good, ["tally", *good[1:5], "place/new"], ["audit", *good[1:4], "--json"], [*good, "--keep-tally"])
-    ]
+    others = (["tally", *good[1:5], "place/new"], ["audit", *good[1:4], "--json"], [*good, "--keep-tally"])
+    return [b"".join(place[word] for word in words) for words in (good, *others)]
 
 
 def check_words(path: Path) -> str:

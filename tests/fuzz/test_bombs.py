@@ -39,9 +39,8 @@ def within(path: Path, mib: int, block: int = 16) -> str:
     """Tally a file with so many MiB of address space beyond the imports, blocks of CSV of so many; what is printed."""
     env = os.environ | {"PYTHONPATH": str(ROOT), "ARROW_DEFAULT_MEMORY_POOL": "system", "MALLOC_ARENA_MAX": "2",
                         "ARROW_IO_THREADS": "2", "OMP_NUM_THREADS": "2", "OPENBLAS_NUM_THREADS": "1"}  # fmt: skip
-    done = subprocess.run(
-        [sys.executable, "-c", LIMITED, str(path), str(mib), str(block)], env=env, capture_output=True, text=True, timeout=60
-    )
+    command = [sys.executable, "-c", LIMITED, str(path), str(mib), str(block)]
+    done = subprocess.run(command, env=env, capture_output=True, text=True, timeout=60)
     assert done.returncode == 0, done.stderr
     return done.stdout.strip()
 
