@@ -37,6 +37,7 @@ _WRITTEN_UNITS = ("d", "h", "min", "s", "ms", "us")
 _CALENDAR_UNITS = {"m", "mo", "mon", "month", "q", "quarter", "y", "yr", "year"}
 _PART = re.compile(r"\s*(\d+(?:\.\d+)?)\s*([a-zµ]+)\s*,?")
 _CLOCK = re.compile(r"\s*(\d+):([0-5]\d)(?::([0-5]\d(?:\.\d+)?))?")
+_LONGEST_DURATION = 200
 _NO_FIXED_LENGTH = 'months and years have no fixed length: give days, such as "30d"'
 _DURATION_HELP = 'wanted a duration such as "30d", "12h", "90min" or a datetime.timedelta'
 
@@ -245,7 +246,7 @@ def instant_us(value: Instant, name: str) -> int:
     TypeError
         If it is a number or another type.
     ValueError
-        If the text is not ISO 8601, or the instant is missing.
+        If the text is not ISO 8601, the instant is missing, or in UTC not within the years 1 to 9999.
 
     Examples
     --------
@@ -272,7 +273,10 @@ def instant_us(value: Instant, name: str) -> int:
     if not isinstance(moment, dt.datetime):
         moment = dt.datetime.combine(moment, dt.time())
     offset = moment.utcoffset() or dt.timedelta()
-    return (moment.replace(tzinfo=None) - offset - dt.datetime(1970, 1, 1)) // dt.timedelta(microseconds=1)
+    us = (moment.replace(tzinfo=None) - dt.datetime(1970, 1, 1) - offset) // dt.timedelta(microseconds=1)
+    if not MIN_TIME_US <= us <= MAX_TIME_US:
+        raise ValueError(f"{name}: got {value!r}, which in UTC is not within the years 1 to 9999; {wanted}")
+    return us
 
 
 def instant_text(us: int) -> str:
@@ -299,6 +303,8 @@ def instant_text(us: int) -> str:
 @lru_cache(1024)
 def _text_us(text: str, name: str) -> Fraction:
     """Read text part by part, exactly; only the ISO 8601 form ("P1DT2H") is left to pandas."""
+    if len(text) > _LONGEST_DURATION:
+        raise ValueError(f"{name}: got a text of {len(text):,} characters; {_DURATION_HELP}")
     lowered = text.strip().lower()
     if not re.search(r"[a-zµ:]", lowered):
         raise ValueError(f"{name}: got {text!r}, without a unit; {_DURATION_HELP}")

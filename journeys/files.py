@@ -27,7 +27,7 @@ def written_whole(path: str | os.PathLike[str]) -> Iterator[Path]:
     Raises
     ------
     OSError
-        If the folder is missing or may not be written in, or `path` is itself a folder.
+        If the folder is missing or may not be written in, or `path` is itself a folder, a pipe or a device.
 
     Examples
     --------
@@ -42,6 +42,14 @@ def written_whole(path: str | os.PathLike[str]) -> Iterator[Path]:
     if target.is_dir():
         # Told before the work is done, and before a file beside it has been replaced.
         raise IsADirectoryError(errno.EISDIR, os.strerror(errno.EISDIR), str(target))
+    try:
+        str(target).encode()
+    except UnicodeEncodeError:
+        # Arrow, which writes most of them, takes no other names.
+        raise OSError(errno.EILSEQ, "the name is not UTF-8", str(target)) from None
+    if target.exists() and not target.is_file():
+        # A pipe, or a device such as /dev/null, would be replaced by a file.
+        raise FileExistsError(errno.EEXIST, "is a pipe or a device, not a file", str(target))
     handle, name = tempfile.mkstemp(prefix=f".{target.name[:40]}-", suffix=".part", dir=target.parent)
     os.close(handle)
     part = Path(name)

@@ -12,6 +12,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any, NoReturn
 
 from journeys.command import nightly
+from journeys.command.words import PrintError, named, one_line, tell
 from journeys.errors import JourneysError, JourneysWarning, LimitError, LogError, RulesError
 
 if TYPE_CHECKING:
@@ -53,13 +54,19 @@ def main(argv: Sequence[str] | None = None) -> int:
         warnings.showwarning = _log_warning
         warnings.simplefilter("always", JourneysWarning)
         try:
-            return int(options.run(options) or DONE)
+            answer, code = options.run(options)
+            tell(answer)
+            return int(code)
         except JourneysError as error:
             code = LIMITS if isinstance(error, LimitError) else USAGE if isinstance(error, RulesError) else FAILED
             return _refused(error, code, options.debug)
+        except PrintError as error:
+            return _refused(error, FAILED, options.debug)
         except OSError as error:
             place = f"{error.filename}: " if error.filename else ""
             return _refused(error, FAILED, options.debug, f"{place}{error.strerror or error}; nothing was written")
+        except MemoryError as error:
+            return _refused(error, FAILED, options.debug, "there is not memory enough for this; nothing was written")
         except Exception as error:
             fault = f"{type(error).__name__}: {error}; this should not happen, --debug shows where it did"
             return _refused(error, FAILED, options.debug, fault)
@@ -82,14 +89,20 @@ def _parser() -> argparse.ArgumentParser:
         command.add_argument(
             "log",
             metavar="LOG",
+            type=named,
             help="Parquet, CSV or Arrow file, a folder of them, a TOML file with a table [database], or a saved tally",
         )
-        command.add_argument("--rules", metavar="FILE", help="rules file (TOML); not needed for a saved tally")
         command.add_argument(
-            "--identity", metavar="FILE", help="table of people first seen under another id: columns old, id, since"
+            "--rules", metavar="FILE", type=named, help="rules file (TOML); not needed for a saved tally"
+        )
+        command.add_argument(
+            "--identity",
+            metavar="FILE",
+            type=named,
+            help="table of people first seen under another id: columns old, id, since",
         )
         if name == "summary":
-            command.add_argument("--out", metavar="FOLDER", required=True, help="where the summary goes")
+            command.add_argument("--out", metavar="FOLDER", type=named, required=True, help="where the summary goes")
             command.add_argument("--keep-tally", action="store_true", help="write the tally there too")
             command.add_argument(
                 "--generation", type=int, metavar="N", help="LOG is a ledger: what it published then, and now, and why"
@@ -101,7 +114,7 @@ def _parser() -> argparse.ArgumentParser:
                 help='share converted within this time, such as "14d"; may be given several times',
             )
         if name == "tally":
-            command.add_argument("--out", metavar="FILE", required=True, help="where the tally goes")
+            command.add_argument("--out", metavar="FILE", type=named, required=True, help="where the tally goes")
         else:
             command.add_argument("--json", action="store_true", help="print for machines")
     nightly.add_nightly(_command(commands, "nightly", nightly.nightly, "count what is new into a ledger, and publish"))
@@ -109,7 +122,7 @@ def _parser() -> argparse.ArgumentParser:
     return parser
 
 
-def _command(commands: Any, name: str, run: Callable[[argparse.Namespace], int | None], what: str) -> Any:
+def _command(commands: Any, name: str, run: Callable[[argparse.Namespace], tuple[str, int]], what: str) -> Any:
     """Add a command, with what all commands have."""
     command = commands.add_parser(
         name, help=what, description=what, epilog=EXIT_CODES, formatter_class=argparse.RawDescriptionHelpFormatter
@@ -119,7 +132,7 @@ def _command(commands: Any, name: str, run: Callable[[argparse.Namespace], int |
     return command
 
 
-def _summary(options: argparse.Namespace) -> None:
+def _summary(options: argparse.Namespace) -> tuple[str, int]:
     from journeys.models.model import JourneyModel
     from journeys.questions.overview import summarise
     from journeys.show.summary import summary_text, write_summary
@@ -137,14 +150,11 @@ def _summary(options: argparse.Namespace) -> None:
     written = write_summary(overview, out, keep_tally=options.keep_tally)
     for path in written:
         logger.info("wrote %s", path)
-    if compared is not None and not options.json:
-        sys.stdout.write(compared.summary() + "\n")
     if options.json:
         from journeys.show.tables import file_frame
 
-        _print_json({"tally": tally.checksum, "estimates": _records(file_frame(overview.to_frame()))})
-    else:
-        sys.stdout.write(summary_text(overview))
+        return _as_json({"tally": tally.checksum, "estimates": _records(file_frame(overview.to_frame()))}), DONE
+    return ("" if compared is None else compared.summary() + "\n") + summary_text(overview), DONE
 
 
 def _compared(options: argparse.Namespace) -> ThenAndNow | None:
@@ -159,16 +169,17 @@ def _compared(options: argparse.Namespace) -> ThenAndNow | None:
     return then_and_now(options.log, options.generation)
 
 
-def _audit(options: argparse.Namespace) -> None:
+def _audit(options: argparse.Namespace) -> tuple[str, int]:
+    from journeys.nightly.then_and_now import is_ledger
     from journeys.questions.audit import audit
     from journeys.tally.store import is_tally
 
-    if is_tally(options.log):
+    if is_tally(options.log) or is_ledger(options.log):
         seen = audit(_counted(options))
     else:
         seen = audit(options.log, _rules(options), identity=options.identity, progress=sys.stderr.isatty())
     if options.json:
-        _print_json(
+        answer = _as_json(
             {
                 "carries_model": seen.carries_model,
                 "checks": _records(seen.checks),
@@ -176,11 +187,11 @@ def _audit(options: argparse.Namespace) -> None:
                 "findings": _records(seen.findings),
             }
         )
-    else:
-        sys.stdout.write(seen.summary() + "\n")
+        return answer, DONE
+    return seen.summary() + "\n", DONE
 
 
-def _tally(options: argparse.Namespace) -> None:
+def _tally(options: argparse.Namespace) -> tuple[str, int]:
     out = Path(options.out)
     if out.is_dir():
         msg = f"--out {out}: is a folder; wanted a file, such as {out / 'tally.parquet'}"
@@ -191,7 +202,7 @@ def _tally(options: argparse.Namespace) -> None:
     tally = _counted(options)
     tally.save(options.out)
     logger.info("wrote %s", options.out)
-    sys.stdout.write(tally.summary() + "\n")
+    return tally.summary() + "\n", DONE
 
 
 def _horizons(options: argparse.Namespace) -> list[str] | None:
@@ -260,16 +271,13 @@ def _records(frame: Any) -> list[dict[str, Any]]:
     return records
 
 
-def _print_json(answer: dict[str, Any]) -> None:
-    sys.stdout.write(json.dumps(answer, indent=1, allow_nan=False) + "\n")
+def _as_json(answer: dict[str, Any]) -> str:
+    return json.dumps(answer, indent=1, allow_nan=False) + "\n"
 
 
 def _refused(error: BaseException, code: int, debug: bool, told: str | None = None) -> int:
     """Say in one line what was wrong; several faults are told one after another."""
-    lines = [line.strip() for line in (told or str(error) or type(error).__name__).splitlines()]
-    line = "; and ".join(line for line in lines if line)
-    # What a file or a name holds must not steer the terminal.
-    logger.error("%s", "".join(char if char.isprintable() else " " for char in line), exc_info=error if debug else None)
+    logger.error("%s", one_line(told or str(error) or type(error).__name__), exc_info=error if debug else None)
     return code
 
 
@@ -277,7 +285,7 @@ class _Parser(argparse.ArgumentParser):
     """Tells wrong usage in one line, as every other fault is told."""
 
     def error(self, message: str) -> NoReturn:
-        self.exit(USAGE, f"ERROR {message}; `{self.prog} --help` says what is wanted\n")
+        self.exit(USAGE, f"ERROR {one_line(message)}; `{self.prog} --help` says what is wanted\n")
 
 
 def _log_warning(message: Warning | str, *_: Any, **__: Any) -> None:

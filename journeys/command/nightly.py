@@ -6,10 +6,10 @@ import argparse
 import datetime as dt
 import json
 import logging
-import sys
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
+from journeys.command.words import named
 from journeys.errors import JourneysError
 
 if TYPE_CHECKING:
@@ -23,7 +23,7 @@ logger = logging.getLogger("journeys")
 
 def add_nightly(command: argparse.ArgumentParser) -> None:
     """Add the options of `nightly`."""
-    command.add_argument("job", metavar="JOB", help="job file (TOML)")
+    command.add_argument("job", metavar="JOB", type=named, help="job file (TOML)")
     command.add_argument("--rebuild", action="store_true", help="count all inputs anew, in place of the ledger")
     command.add_argument("--dry-run", action="store_true", help="say what would be counted; write nothing")
     command.add_argument("--json", action="store_true", help="print for machines")
@@ -31,12 +31,12 @@ def add_nightly(command: argparse.ArgumentParser) -> None:
 
 def add_forget(command: argparse.ArgumentParser) -> None:
     """Add the options of `forget`."""
-    command.add_argument("ids", metavar="IDS", help="text file with one customer id a line")
-    command.add_argument("--ledger", metavar="FOLDER", required=True, help="the ledger to take them out of")
+    command.add_argument("ids", metavar="IDS", type=named, help="text file with one customer id a line")
+    command.add_argument("--ledger", metavar="FOLDER", type=named, required=True, help="the ledger to take them out of")
 
 
-def nightly(options: argparse.Namespace) -> int:
-    """Run the nightly job; 4 where a change alarm tripped."""
+def nightly(options: argparse.Namespace) -> tuple[str, int]:
+    """Run the nightly job and say what it did; 4 where a change alarm tripped."""
     from journeys.nightly.job import Job
     from journeys.nightly.night import run_night
 
@@ -51,16 +51,15 @@ def nightly(options: argparse.Namespace) -> int:
     told = _told(night)
     if not night.dry_run:
         _log_run(job, began, told)
-    sys.stdout.write(json.dumps(told, indent=1, allow_nan=False) + "\n" if options.json else _words(night))
-    return ALARM if night.alarms else DONE
+    answer = json.dumps(told, indent=1, allow_nan=False) + "\n" if options.json else _words(night)
+    return answer, ALARM if night.alarms else DONE
 
 
-def forget(options: argparse.Namespace) -> int:
+def forget(options: argparse.Namespace) -> tuple[str, int]:
     """Take customers out of a ledger."""
     from journeys.nightly.forget import forget as take_out
 
-    sys.stdout.write(take_out(Path(options.ids), Path(options.ledger).absolute()).summary())
-    return DONE
+    return take_out(Path(options.ids), Path(options.ledger).absolute()).summary(), DONE
 
 
 def _told(night: Night) -> dict[str, Any]:

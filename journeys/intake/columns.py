@@ -28,18 +28,31 @@ def decoded(array: pa.Array) -> pa.Array:
     return array.dictionary_decode() if pa.types.is_dictionary(array.type) else array
 
 
-def as_text(name: Any) -> str:
-    """Event name as text; bytes are UTF-8, None is empty.
+def texts_of(array: pa.Array, column: str) -> list[Any]:
+    """Return the values of a plain array, bytes as text.
 
     Parameters
     ----------
-    name : str, bytes or None
+    array : pyarrow.Array
+        Not a dictionary.
+    column : str
+        Name of the column, for the message.
 
     Returns
     -------
-    str
+    list
+
+    Raises
+    ------
+    LogError
+        If bytes called text are no UTF-8.
     """
-    return name.decode(errors="replace") if isinstance(name, bytes) else name or ""
+    try:
+        return [value.decode() if isinstance(value, bytes) else value for value in array.to_pylist()]
+    except (OverflowError, ValueError):
+        # Replacing what cannot be read would make one name of several.
+        msg = f"column {column!r} holds values that are not UTF-8 text or not of its type {array.type}; write it again"
+        raise LogError(msg) from None
 
 
 def event_names(array: pa.Array, column: str) -> pa.DictionaryArray:

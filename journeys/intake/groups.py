@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import datetime as dt
+from calendar import monthrange
 from collections.abc import Iterator, Mapping, Sequence
 from typing import Any
 from zoneinfo import ZoneInfo
@@ -14,7 +15,7 @@ from numpy.typing import NDArray
 from journeys.checks import DAY_US
 from journeys.errors import LogError
 from journeys.intake.arrays import indices_of, is_missing, is_text, plain
-from journeys.intake.columns import as_text
+from journeys.intake.columns import texts_of
 
 Value = str | int | bool
 
@@ -73,7 +74,8 @@ class GroupCodes:
             return np.zeros(0, np.int32)
         joined = parts[0]
         for values, part in zip(self._columns[1:], parts[1:], strict=True):
-            joined = joined * len(values.names) + part
+            # Numbered anew each time: the product of many columns' values would outgrow 64 bits.
+            joined = np.unique(joined, return_inverse=True)[1] * len(values.names) + part
         _, first, which = np.unique(joined, return_index=True, return_inverse=True)
         order = np.argsort(first)
         codes = np.empty(len(first), np.int32)
@@ -140,7 +142,7 @@ class _Values:
         if not pa.types.is_dictionary(array.type):
             array = array.dictionary_encode()
         self._check(array.dictionary.type)
-        values = [self._value(value) for value in array.dictionary.to_pylist()]
+        values = [self._value(value) for value in texts_of(array.dictionary, self.name)]
         index = indices_of(array)
         missing = is_missing(array)
         used = np.unique(index if missing is None else index[~missing])
@@ -188,7 +190,7 @@ class _Values:
     def _value(value: object) -> Value:
         if isinstance(value, bool | int):
             return value
-        return value.isoformat() if isinstance(value, dt.date) else as_text(value)
+        return value.isoformat() if isinstance(value, dt.date) else str(value or "")
 
 
 def cohort_calendar(
@@ -227,7 +229,8 @@ def cohort_calendar(
         raise LogError(msg)
     starts, names = [], []
     for day in _first_days(cohort, _local_day(log_start_us, timezone)):
-        start = _midnight_us(day, timezone)
+        # On the first days of the calendar a midnight may lie before it: the log begins at its start.
+        start = log_start_us if day == dt.date.min else _midnight_us(day, timezone)
         if start > as_of_us:
             break
         starts.append(start)
@@ -237,24 +240,31 @@ def cohort_calendar(
 
 def _first_days(cohort: str, day: dt.date) -> Iterator[dt.date]:
     """Give the first days of cohorts, from the one that holds `day` on."""
-    if cohort == "month":
-        day = day.replace(day=1)
-        while True:
-            yield day
-            day = dt.date(day.year + day.month // 12, day.month % 12 + 1, 1)
-    step = dt.timedelta(days=7 if cohort == "week" else 1)
+    # The calendar ends with the year 9999, and the cohorts with it. Its first day is a Monday and the first of a month.
+    step = 7 if cohort == "week" else 1
     if cohort == "week":
         day -= dt.timedelta(days=day.weekday())
+    elif cohort == "month":
+        day = day.replace(day=1)
     while True:
         yield day
-        day += step
+        if cohort == "month":
+            step = monthrange(day.year, day.month)[1]
+        if (dt.date.max - day).days < step:
+            return
+        day += dt.timedelta(days=step)
 
 
 def _local_day(us: int, timezone: str) -> dt.date:
+    """Return the day an instant lies in, the calendar's own first or last where the zone leads out of it."""
     instant = dt.datetime(1970, 1, 1, tzinfo=dt.UTC) + dt.timedelta(microseconds=us)
-    return instant.astimezone(ZoneInfo(timezone)).date()
+    try:
+        return instant.astimezone(ZoneInfo(timezone)).date()
+    except OverflowError:
+        return dt.date.min if us < 0 else dt.date.max
 
 
 def _midnight_us(day: dt.date, timezone: str) -> int:
-    instant = dt.datetime(day.year, day.month, day.day, tzinfo=ZoneInfo(timezone))
-    return int(instant.timestamp()) * _SECOND_US
+    instant = dt.datetime(day.year, day.month, day.day)
+    offset = instant.replace(tzinfo=ZoneInfo(timezone)).utcoffset() or dt.timedelta()
+    return (instant - dt.datetime(1970, 1, 1) - offset) // dt.timedelta(seconds=1) * _SECOND_US

@@ -142,7 +142,7 @@ def read_links(source: Any, id_key: IdKey | None = None) -> Links:
     >>> bool((links.people(keys) == keys[[2, 2, 2, 3]]).all())
     True
     """
-    old, person, since_us, kind = _columns(open_log(source, COLUMNS), id_key)
+    old, person, since_us, kind = _columns(open_log(source, COLUMNS, ids=(OLD, "id")), id_key)
     row = np.arange(len(old))
     # A link of an id to itself says nothing; of equal links the first known counts.
     order = np.lexsort((row, since_us, old))

@@ -33,6 +33,8 @@ class Look:
         The column holds dates without a time.
     n_later_than_now : int
         Rows dated in the future, `as_of` or not.
+    noted : bool
+        Files said so of their pieces; their rows were not looked at.
     """
 
     first_us: int
@@ -40,6 +42,29 @@ class Look:
     n_rows: int
     whole_days: bool
     n_later_than_now: int
+    noted: bool = False
+
+    def check(self, seen_us: tuple[int, int] | None, column: str) -> None:
+        """Hold what files note of their pieces against the rows, once these have been read.
+
+        Parameters
+        ----------
+        seen_us : tuple of (int, int), or None
+            First and last usable time of all rows.
+        column : str
+            Column of times, for the message.
+
+        Raises
+        ------
+        LogError
+            If the notes are wrong.
+        """
+        if self.noted and seen_us != (self.first_us, self.last_us):
+            msg = (
+                f"column {column!r}: the smallest and largest times that the Parquet files note are not those of their "
+                "rows; write the files again"
+            )
+            raise LogError(msg)
 
 
 @dataclass(frozen=True, slots=True)
@@ -210,7 +235,7 @@ def _look_at_ranges(source: LogSource, rules: JourneyRules, now: int) -> Look | 
     days = _apart(first.us, last.us, np.array(ranges.n))
     if fixes := _clock_faults(days, rules):
         raise LogError(f"column {rules.time!r}: " + "; ".join(fixes))
-    return Look(int(days.first[0]), int(days.last[-1]), ranges.n_rows, bool(reader.whole_days), 0)
+    return Look(int(days.first[0]), int(days.last[-1]), ranges.n_rows, bool(reader.whole_days), 0, noted=True)
 
 
 def _apart(first: NDArray[np.int64], last: NDArray[np.int64], n: NDArray[np.int64]) -> _Days:

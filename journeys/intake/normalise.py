@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from journeys.checks import DAY_US
 from journeys.errors import LogError
 from journeys.intake.arrays import indices_of, is_missing, numbers, plain, whole_numbers
-from journeys.intake.columns import as_text, decoded, event_names, is_in
+from journeys.intake.columns import decoded, event_names, is_in, texts_of
 from journeys.intake.findings import Findings
 from journeys.intake.groups import GroupCodes
 from journeys.intake.identity import bucket_major
@@ -53,6 +53,8 @@ class Normaliser:
         Values seen so far in the group columns.
     n_rows, n_kept : int
         Rows read, rows kept.
+    seen_us : tuple of (int, int), or None
+        First and last usable time so far, of rows left out too.
 
     Examples
     --------
@@ -79,6 +81,7 @@ class Normaliser:
         self.groups = GroupCodes(rules.group_columns)
         self.n_rows = 0
         self.n_kept = 0
+        self.seen_us: tuple[int, int] | None = None
         self._log_start_us = rules.log_start_us if log_start_us is None else log_start_us
         self._as_of_us = rules.as_of_us if as_of_us is None else as_of_us
         self._times = TimeReader(rules.time)
@@ -134,6 +137,7 @@ class Normaliser:
         kept.drop("missing_time", rules.time, times.missing)
         event = event_names(batch.column(rules.event), rules.event)
         kept.drop("missing_event", rules.event, is_missing(event))
+        self._see(times)
         self._drop_times(kept, times)
         events = self._codes(event, kept)
         sequence = self._sequence(batch, kept)
@@ -184,6 +188,15 @@ class Normaliser:
         self.groups.resume(learned["groups"])
         self._found = Findings.from_dict(learned["findings"])
 
+    def _see(self, times: Times) -> None:
+        """Note the first and the last time."""
+        plain = times.missing is None and times.out_of_range is None
+        us = times.us if plain else times.us[times.usable()]
+        if len(us):
+            ends = int(us.min()), int(us.max())
+            before = self.seen_us or ends
+            self.seen_us = min(before[0], ends[0]), max(before[1], ends[1])
+
     def _drop_times(self, kept: _Kept, times: Times) -> None:
         """Leave out what lies outside the calendar or outside the log's two dates."""
         column = self.rules.time
@@ -202,14 +215,14 @@ class Normaliser:
 
     def _codes(self, event: pa.DictionaryArray, kept: _Kept) -> NDArray[np.int32]:
         """Codes of the events, those of rows left out being 0; drops what the rules drop."""
-        names = event.dictionary.to_pylist()
+        names = texts_of(event.dictionary, self.rules.event)
         index = indices_of(event)
         if not names:
             return np.zeros(len(index), dtype=np.int32)
         used = np.bincount(index if kept.mask is None else index[kept.mask], minlength=len(names)) > 0
         positions = np.flatnonzero(used)
         codes = np.zeros(len(names), dtype=np.int32)
-        codes[positions] = self.codes.encode([as_text(names[i]) for i in positions])
+        codes[positions] = self.codes.encode([names[i] for i in positions])
         for name in self.codes.names[len(self.targets) :]:
             self.targets.append(self._target(name))
         events = codes[index]

@@ -26,7 +26,9 @@ _WANTED = (
 _CURSOR_METHODS = ("fetch_record_batch", "to_arrow_reader")
 
 
-def open_log(source: Any, columns: Sequence[str], *, text: Sequence[str] = ()) -> LogSource:
+def open_log(
+    source: Any, columns: Sequence[str], *, text: Sequence[str] = (), ids: Sequence[str] = ()
+) -> LogSource:
     """Log behind whatever the caller holds.
 
     Parameters
@@ -39,6 +41,9 @@ def open_log(source: Any, columns: Sequence[str], *, text: Sequence[str] = ()) -
         Columns it must have.
     text : sequence of str
         Those of them that hold names: a CSV file is not to guess that "007" is a number there.
+    ids : sequence of str
+        Those that hold names which may be whole numbers, such as the customer's id: in a CSV file they are
+        text all the same where they are written with leading zeros.
 
     Returns
     -------
@@ -58,22 +63,22 @@ def open_log(source: Any, columns: Sequence[str], *, text: Sequence[str] = ()) -
     >>> log.describe(), [batch.to_pydict() for batch in log.batches(["who"])]
     ('pandas frame, 2 rows', [{'who': [1, 2]}])
     """
-    log = _source(source, tuple(text))
+    log = _source(source, tuple(text), tuple(ids))
     log.check(columns)
     log.needed = tuple(columns)
     return log
 
 
-def _source(source: Any, text: tuple[str, ...]) -> LogSource:
+def _source(source: Any, text: tuple[str, ...], ids: tuple[str, ...]) -> LogSource:
     """Pick the adapter for what the caller holds."""
     if isinstance(source, LogSource):
         return source
     if isinstance(source, str | os.PathLike):
         if Path(source).suffix == ".toml":
             return DatabaseLog.from_toml(source)
-        return FileSource(find_files(source), text, Path(source).name)
+        return FileSource(find_files(source), text, ids, Path(source).name)
     if _all_are(source, str | os.PathLike):
-        return FileSource(find_files(source), text, Path(source[0]).name)
+        return FileSource(find_files(source), text, ids, Path(source[0]).name)
     if _is_pandas_frame(source):
         return PandasSource(source)
     if isinstance(source, pa.RecordBatch):

@@ -13,6 +13,7 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 
 from journeys.errors import LogError
+from journeys.intake.faults import UNREADABLE, no_memory
 from journeys.intake.read_csv import csv_batches, csv_schema
 from journeys.intake.read_parquet import parquet_batches
 
@@ -62,12 +63,12 @@ def find_files(source: str | os.PathLike[str] | Sequence[str | os.PathLike[str]]
         If there is none, one is missing, or they are of several kinds.
     """
     if isinstance(source, str | os.PathLike):
-        path = Path(source)
+        path = _path(source)
         if path.is_dir():
             return _one_kind(_in_folder(path), str(path))
         paths = [path]
     else:
-        paths = sorted((Path(item) for item in source), key=lambda item: (item.name, item.as_posix()))
+        paths = sorted((_path(item) for item in source), key=lambda item: (item.name, item.as_posix()))
         if not paths:
             raise LogError("the list of files is empty; wanted at least one path")
     for path in paths:
@@ -75,8 +76,9 @@ def find_files(source: str | os.PathLike[str] | Sequence[str | os.PathLike[str]]
             raise LogError(f"{path} is a folder in a list of files; give a folder by itself")
         if not path.exists():
             raise LogError(f"{path}: no such file")
-    if len({path.resolve() for path in paths}) < len(paths):
-        raise LogError("the list of files names a file twice; its rows would count twice: take one out")
+        if not path.is_file():
+            raise LogError(f"{path} is a pipe or a device; wanted a file, since a log is read twice")
+    _check_once(paths, "the list of files names")
     return _one_kind([LogFile(path, _kind(path)) for path in paths], "the list of files")
 
 
@@ -100,15 +102,23 @@ def file_schema(file: LogFile, text: Sequence[str]) -> pa.Schema:
     """
     try:
         if file.kind == "Parquet":
-            return pq.read_schema(file.path)
-        if file.kind == "Arrow":
-            return _open_arrow(file.path).schema
-        return csv_schema(file.path, text)
-    except (pa.ArrowInvalid, pa.ArrowNotImplementedError, OSError) as fault:
+            schema = pq.read_schema(file.path)
+        elif file.kind == "Arrow":
+            schema = _open_arrow(file.path).schema
+        else:
+            schema = csv_schema(file.path, text)
+        # Raises here, not later, where names of columns or of time zones are no text.
+        _ = schema.names, [kind.tz for kind in schema.types if pa.types.is_timestamp(kind)]
+    except LogError:
+        raise
+    except UNREADABLE as fault:
         raise LogError(_damaged(file, fault)) from None
+    return schema
 
 
-def file_batches(file: LogFile, columns: Sequence[str], text: Sequence[str]) -> Iterator[pa.RecordBatch]:
+def file_batches(
+    file: LogFile, columns: Sequence[str], text: Sequence[str], ids: Sequence[str] = ()
+) -> Iterator[pa.RecordBatch]:
     """Batches of some columns of a file.
 
     Parameters
@@ -118,6 +128,8 @@ def file_batches(file: LogFile, columns: Sequence[str], text: Sequence[str]) -> 
         All of them in the file.
     text : sequence of str
         Columns that hold names: read as text from CSV, as dictionaries from Parquet.
+    ids : sequence of str
+        Columns of names that may be numbers: read as text from CSV if they have leading zeros.
 
     Yields
     ------
@@ -129,14 +141,16 @@ def file_batches(file: LogFile, columns: Sequence[str], text: Sequence[str]) -> 
         If the file is damaged, or a CSV column changes kind.
     """
     if file.kind in ("CSV", "TSV"):
-        yield from csv_batches(file.path, columns, text)
+        yield from csv_batches(file.path, columns, text, ids)
         return
     is_parquet = file.kind == "Parquet"
     batches = parquet_batches(file.path, columns, text) if is_parquet else _arrow_batches(file, columns)
     while True:
         try:
             batch = next(batches, None)
-        except (pa.ArrowInvalid, pa.ArrowNotImplementedError, OSError) as fault:
+        except LogError:
+            raise
+        except UNREADABLE as fault:
             raise LogError(_damaged(file, fault)) from None
         if batch is None:
             return
@@ -177,18 +191,59 @@ def _is_plain_int(text: str) -> bool:
 
 def _in_folder(folder: Path) -> list[LogFile]:
     """Files below a folder, by path."""
-    found = []
-    for path in sorted(folder.rglob("*"), key=lambda item: item.relative_to(folder).parts):
-        parts = path.relative_to(folder).parts
-        if path.is_file() and not any(part.startswith((".", "_")) for part in parts):
-            pairs = [part.partition("=") for part in parts[:-1] if "=" in part]
-            partition = tuple(
-                (unquote(key), None if value == _HIVE_NULL else unquote(value)) for key, _, value in pairs
-            )
-            found.append(LogFile(path, _kind(path), partition))
-    if not found:
+    paths = sorted(_below(folder), key=lambda item: item.relative_to(folder).parts)
+    if not paths:
         raise LogError(f"folder {folder} holds no file to read; {_WANTED}")
-    return found
+    _check_once(paths, f"folder {folder} holds")
+    return [LogFile(path, _kind(path), _partition(path.relative_to(folder).parts[:-1])) for path in paths]
+
+
+def _below(folder: Path) -> Iterator[Path]:
+    """Files in a folder and its folders; whatever else is there, and not hidden, is refused, never passed over."""
+    try:
+        entries = [_path(entry) for entry in folder.iterdir() if not entry.name.startswith((".", "_"))]
+    except OSError as fault:
+        raise LogError(f"folder {folder}: {fault.strerror or 'cannot be read'}") from None
+    for entry in entries:
+        if entry.is_file():
+            yield entry
+        elif entry.is_dir() and not entry.is_symlink():
+            yield from _below(entry)
+        else:
+            kind = "a link to a folder, or to nothing" if entry.is_symlink() else "a pipe or a device"
+            raise LogError(f"{entry} is {kind}; wanted files: take it out, or give a list of files")
+
+
+def _partition(folders: Sequence[str]) -> tuple[tuple[str, str | None], ...]:
+    """Columns that folders give by their names."""
+    pairs = [folder.partition("=") for folder in folders if "=" in folder]
+    return tuple((unquote(key), None if value == _HIVE_NULL else unquote(value)) for key, _, value in pairs)
+
+
+def _path(source: str | os.PathLike[str]) -> Path:
+    """Path that Arrow can open."""
+    text = os.fspath(source)
+    if not text:
+        raise LogError("the path of the log is empty; wanted the path of a file or a folder")
+    try:
+        text.encode()
+        Path(text).exists()
+    except ValueError:
+        raise LogError(f"{text!r}: the name is not UTF-8, so the file cannot be opened; rename it") from None
+    except OSError as fault:
+        raise LogError(f"{text[:200]}: {fault.strerror}") from None
+    return Path(text)
+
+
+def _check_once(paths: Sequence[Path], what: str) -> None:
+    """Raise if two paths lead to one file."""
+    seen: dict[tuple[int, int], Path] = {}
+    for path in paths:
+        status = path.stat()
+        key = status.st_dev, status.st_ino
+        if key in seen:
+            raise LogError(f"{what} a file twice ({seen[key]}, {path}); its rows would count twice: take one out")
+        seen[key] = path
 
 
 def _one_kind(files: list[LogFile], where: str) -> list[LogFile]:
@@ -222,12 +277,17 @@ def _arrow_batches(file: LogFile, columns: Sequence[str]) -> Iterator[pa.RecordB
     options = pa.ipc.IpcReadOptions(included_fields=[names.index(column) for column in columns])
     reader = _open_arrow(file.path, options)
     if isinstance(reader, pa.ipc.RecordBatchFileReader):
-        for number in range(reader.num_record_batches):
-            yield reader.get_batch(number)
+        batches: Iterator[pa.RecordBatch] = map(reader.get_batch, range(reader.num_record_batches))
     else:
-        yield from reader
+        batches = iter(reader)
+    for batch in batches:
+        # Unlike Parquet's, its offsets and codes are taken as they stand: wrong ones would lead out of the file.
+        batch.validate(full=True)
+        yield batch
 
 
 def _damaged(file: LogFile, fault: Exception) -> str:
     """Say what is wrong with a file, without the cells that Arrow's own messages quote."""
+    if isinstance(fault, MemoryError):
+        return no_memory(file.path)
     return f"{file.path}: not a whole {file.kind} file ({type(fault).__name__}); write it again"

@@ -168,9 +168,10 @@ def _exclude(value: object, name: str) -> FrozenMap[tuple[str | int | bool, ...]
         items = [given] if isinstance(given, str | int) else given
         if isinstance(items, Mapping) or not isinstance(items, Iterable):
             raise TypeError(f"{name}[{column!r}]: got {given!r}; wanted a value or a list of values")
-        values = {(type(item).__name__, item) for item in items}
-        if not values or not all(isinstance(item, str | int) for _, item in values):
+        items = list(items)
+        if not items or not all(isinstance(item, str | int) for item in items):
             raise TypeError(f"{name}[{column!r}]: got {given!r}; wanted texts, whole numbers or true/false")
+        values = {(type(item).__name__, item) for item in items}
         if len({kind for kind, _ in values}) > 1:
             raise TypeError(f"{name}[{column!r}]: got {given!r}; wanted values all of one kind")
         clean = tuple(_utf8(i, f"{name}[{column!r}]") if isinstance(i, str) else i for _, i in sorted(values))

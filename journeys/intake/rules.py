@@ -217,6 +217,11 @@ class JourneyRules(Settings):
         named = [column for column in roles if column is not None]
         return tuple(dict.fromkeys([*named, *self.exclude, *self.group_columns]))
 
+    @property
+    def id_columns(self) -> tuple[str, ...]:
+        """Columns whose whole numbers are only names: the customer's id, groups, what tells rows to leave out."""
+        return (self.customer, *self.exclude, *self.group_columns)
+
     def target(self, event: str) -> str | None:
         """State or outcome an event counts as; None if the rules drop it.
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import difflib
+import re
 import tomllib
 from collections.abc import Mapping
 from dataclasses import fields
@@ -11,6 +12,10 @@ from typing import TYPE_CHECKING, Any, ClassVar, Self
 
 from journeys.errors import RulesError
 from journeys.intake.frozen import toml_text
+
+_LONGEST = 4 << 20
+_DEEPEST = 100
+_TOO_DEEP = "its tables or lists lie deeper in one another than any setting has them"
 
 
 class Settings:
@@ -165,8 +170,24 @@ def read_toml(file: Path, what: str) -> dict[str, Any]:
         If it cannot be read.
     """
     try:
-        return tomllib.loads(file.read_text(encoding="utf-8"))
+        with file.open("rb") as opened:
+            written = opened.read(_LONGEST + 1)
+        return _parsed(written)
     except OSError as fault:
         raise RulesError(f"{what} {file}: {fault.strerror or 'cannot be read'}") from None
-    except (tomllib.TOMLDecodeError, UnicodeDecodeError) as fault:
+    except RecursionError:
+        raise RulesError(f"{what} {file}: {_TOO_DEEP}") from None
+    except ValueError as fault:
+        # Faults of the text, numbers of thousands of digits, names of files that no file can have.
         raise RulesError(f"{what} {file}: not TOML ({fault})") from None
+
+
+def _parsed(written: bytes) -> dict[str, Any]:
+    """Return the settings in the text of a TOML file; what would take the parser minutes is refused."""
+    if len(written) > _LONGEST:
+        raise ValueError(f"longer than {_LONGEST >> 20} MiB")
+    text = written.decode()
+    bare = re.sub(r"\"[^\"\n]*\"|'[^'\n]*'|#.*", "", text)
+    if any(line.count(".") > _DEEPEST for line in bare.splitlines()):
+        raise ValueError(_TOO_DEEP)
+    return tomllib.loads(text.replace("\r\n", "\n"))

@@ -117,8 +117,8 @@ class LogSource(ABC):
 class FileSource(LogSource):
     """Files on disk."""
 
-    def __init__(self, files: list[LogFile], text: tuple[str, ...], where: str) -> None:
-        self._files, self._text = files, text
+    def __init__(self, files: list[LogFile], text: tuple[str, ...], ids: tuple[str, ...], where: str) -> None:
+        self._files, self._text, self._ids = files, text, ids
         kind = files[0].kind
         self.kind = f"{kind} file {where}" if len(files) == 1 else f"{len(files)} {kind} files"
         self._partition = partition_types(files)
@@ -158,7 +158,7 @@ class FileSource(LogSource):
         inner = [name for name in columns if name not in self._partition]
         # A row count is all that a file need give if its folders say the rest: read any column then.
         read = inner or file_schema(file, self._text).names[:1]
-        for batch in file_batches(file, read, self._text):
+        for batch in file_batches(file, read, self._text, self._ids):
             yield self._with_partition(batch, file)
 
     def _with_partition(self, batch: pa.RecordBatch, file: LogFile) -> pa.RecordBatch:

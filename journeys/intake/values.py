@@ -90,6 +90,8 @@ def _of_decimals(array: pa.Array, column: str) -> NDArray[np.int64]:
     """Millionths of decimals; 0 where null."""
     _check_size(np.abs(numbers(array.cast(pa.float64()))) > MOST, column)
     if array.type.scale > 6:
+        # The widest decimals: others cannot be rounded, or have no room for a digit more.
+        array = array.cast(pa.decimal256(76, min(array.type.scale, 60)), safe=False)
         array = pc.round(array, 6, round_mode="half_to_even")
     array = array.cast(pa.decimal128(19, 6))
     # A decimal is a whole number of sixteen bytes, of which these need the lower eight.

@@ -86,7 +86,7 @@ def from_wide(
     """
     kept = [keep] if isinstance(keep, str) else list(keep)
     _check(customer, times, (time, event), kept)
-    wide = _read(frame, [customer, *times.values(), *kept])
+    wide = _read(frame, [customer, *times.values(), *kept], [customer, *kept])
     columns = [_times_of(wide, column) for column in times.values()]
     kind = _common(dict(zip(times.values(), columns, strict=True)))
     rows, stamps = [], []
@@ -139,10 +139,10 @@ def _check_text(value: object, name: str) -> None:
         raise TypeError(msg)
 
 
-def _read(frame: Any, columns: list[str]) -> pa.Table:
+def _read(frame: Any, columns: list[str], ids: list[str]) -> pa.Table:
     """Return the columns of the frame, whatever it is."""
     wanted = list(dict.fromkeys(columns))
-    batches = list(open_log(frame, wanted).batches(wanted))
+    batches = list(open_log(frame, wanted, ids=ids).batches(wanted))
     if not batches:
         return pa.table({name: pa.nulls(0) for name in wanted})
     try:

@@ -13,14 +13,16 @@ import pyarrow.parquet as pq
 
 from journeys.errors import StoreError
 from journeys.files import written_whole
+from journeys.intake.faults import UNREADABLE
 from journeys.models.memory import Nodes
 from journeys.models.model import JourneyModel
 from journeys.tally import store as tally_store
 
 if TYPE_CHECKING:
     from journeys.models.fit import JourneyFit
+    from journeys.tally.tally import Tally
 
-FORMAT_VERSION = 1
+FORMAT_VERSION = 2
 HEAD = b"journeys fit"
 _COLUMNS = ("move_state", "move_target", "n_moves", "probability", "mean", "second")
 
@@ -43,6 +45,7 @@ def save(fit: JourneyFit, path: str | os.PathLike[str]) -> None:
     """
     if fit.tally is not None:
         model = {"order": fit.nodes.order, "open_moves": fit.open_moves}
+        model["checksum"] = _checksum({**model, "tally": fit.tally.checksum}, {})
         tally_store.save(fit.tally, path, {HEAD: json.dumps(model).encode()})
         return
     head = {
@@ -82,17 +85,17 @@ def load(path: str | os.PathLike[str]) -> JourneyFit:
     from journeys.models.fit import JourneyFit
 
     try:
-        head = json.loads((pq.read_schema(path).metadata or {})[HEAD])
+        head = tally_store.read_head(pq.read_schema(path), HEAD)
         if "open_moves" in head:
-            return JourneyModel(order=head["order"], open_moves=head["open_moves"]).fit(tally_store.load(path))
+            return _fitted_again(head, tally_store.load(path), path)
         table = pq.read_table(path)
         columns = {name: table[name].to_numpy() for name in _COLUMNS}
     except FileNotFoundError:
         msg = f"no fit at {os.fspath(path)!r}; wanted a file written by fit.save"
         raise StoreError(msg) from None
-    except (KeyError, ValueError, pa.ArrowException, OSError) as error:
-        if isinstance(error, StoreError):
-            raise
+    except StoreError:
+        raise
+    except (*UNREADABLE, KeyError):
         msg = f"{os.fspath(path)!r} is not a whole fit; wanted a file written by fit.save: fit it again"
         raise StoreError(msg) from None
     if head.get("format_version") != FORMAT_VERSION:
@@ -101,8 +104,7 @@ def load(path: str | os.PathLike[str]) -> JourneyFit:
         )
         raise StoreError(msg)
     if _checksum(head, columns) != head.get("checksum"):
-        msg = f"{os.fspath(path)!r} is damaged (its checksum does not fit); make the chain again"
-        raise StoreError(msg)
+        raise _damaged(path, "make the chain again")
     return JourneyFit(
         nodes=Nodes(tuple(head["states"]), tuple(head["outcomes"])),
         converted=tuple(head["converted"]),
@@ -113,12 +115,26 @@ def load(path: str | os.PathLike[str]) -> JourneyFit:
     )
 
 
+def _fitted_again(head: dict[str, Any], tally: Tally, path: str | os.PathLike[str]) -> JourneyFit:
+    """Return the fit of a tally by the choices that stand beside it."""
+    model = {key: value for key, value in head.items() if key != "checksum"}
+    if _checksum({**model, "tally": tally.checksum}, {}) != head.get("checksum"):
+        raise _damaged(path, "fit the tally again")
+    return JourneyModel(order=model["order"], open_moves=model["open_moves"]).fit(tally)
+
+
+def _damaged(path: str | os.PathLike[str], fix: str) -> StoreError:
+    return StoreError(f"{os.fspath(path)!r} is damaged (its checksum does not fit); {fix}")
+
+
 def _checksum(head: dict[str, Any], columns: dict[str, np.ndarray]) -> str:
-    """Return the digest of all that a known chain's file holds."""
+    """Return the digest of all that a file holds beside a tally."""
     told = {key: value for key, value in head.items() if key != "checksum"}
     digest = blake2b(json.dumps(told, sort_keys=True).encode(), digest_size=16)
-    for name in _COLUMNS:
-        digest.update(np.ascontiguousarray(columns[name]).tobytes())
+    for name, values in columns.items():
+        # The same bytes of another type are other numbers.
+        digest.update(f"{name} {values.dtype.str}".encode())
+        digest.update(np.ascontiguousarray(values).tobytes())
     return digest.hexdigest()
 
 

@@ -95,7 +95,7 @@ class FolderInputs(Inputs):
     def open(self, inputs: Sequence[Input], rules: JourneyRules) -> InputLog:
         """Return the log of some files."""
         files = self._files()
-        log = _FileLog({one.name: files[one.name] for one in inputs}, (rules.event,), str(self._folder))
+        log = _FileLog({one.name: files[one.name] for one in inputs}, (rules.event,), rules.id_columns, str(self._folder))
         log.check(rules.columns)
         return log
 
@@ -119,8 +119,8 @@ class FolderInputs(Inputs):
 class _FileLog(FileSource, InputLog):
     """Files, their rows counted as they are read."""
 
-    def __init__(self, files: dict[str, LogFile], text: tuple[str, ...], where: str) -> None:
-        super().__init__(list(files.values()), text, where)
+    def __init__(self, files: dict[str, LogFile], text: tuple[str, ...], ids: tuple[str, ...], where: str) -> None:
+        super().__init__(list(files.values()), text, ids, where)
         self._name_of = {file.path: name for name, file in files.items()}
         self.rows_of = {}
 

@@ -141,7 +141,7 @@ def audit(
     if rules is None:
         msg = "rules are missing; wanted a JourneyRules beside a log"
         raise TypeError(msg)
-    log = open_log(source, rules.columns, text=(rules.event,))
+    log = open_log(source, rules.columns, text=(rules.event,), ids=rules.id_columns)
     with log.spooled() if log.one_shot else nullcontext(log) as kept:
         tally = count_log(kept, rules, identity=identity, progress=progress)
         refuse_without_outcome(tally)

@@ -101,7 +101,7 @@ def count_log(
     workers = min(os.cpu_count() or 1, MOST_WORKERS) if n_workers is None else checks.whole(n_workers, "n_workers", 1)
     order = checked_order(order)
     people = People.here(identity)
-    log = open_log(source, rules.columns, text=(rules.event,))
+    log = open_log(source, rules.columns, text=(rules.event,), ids=rules.id_columns)
     with log.spooled() if log.one_shot else nullcontext(log) as kept:
         look = first_look(kept, rules)
         pass_ = partial(

@@ -187,6 +187,7 @@ class Pass:
         return np.array([*range(fixed), *(place.get(name, 0) for name in self._codes.states)])
 
     def _tally(self, parts: list[dict[str, Columns]]) -> Tally:
+        self._look.check(self._normaliser.seen_us, self._rules.time)
         findings = sum((worker.findings for worker in self._workers), self._normaliser.findings)
         findings.add("later_than_now", self._rules.time, self._look.n_later_than_now)
         with ThreadPoolExecutor(len(self._workers)) as pool:

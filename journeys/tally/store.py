@@ -17,6 +17,7 @@ from numpy.typing import NDArray
 from journeys.errors import JourneysError, StoreError
 from journeys.files import written_whole
 from journeys.intake.arrays import from_numpy, from_texts, numbers
+from journeys.intake.faults import UNREADABLE
 from journeys.intake.findings import Findings
 from journeys.intake.rules import JourneyRules
 from journeys.tally.tables import NARROW, TABLES, customer_sums, parts_of, sums_of
@@ -151,7 +152,7 @@ def is_tally(path: str | os.PathLike[str]) -> bool:
     """Tell whether a path is a saved tally (as against an event log)."""
     try:
         return Path(path).is_file() and HEAD in (pq.read_schema(path).metadata or {})
-    except (pa.ArrowInvalid, OSError):
+    except UNREADABLE:
         return False
 
 
@@ -199,11 +200,11 @@ def _read(source: Any, name: str) -> Tally:
     """Read head and tables."""
     try:
         table = pq.read_table(source)
-        head = json.loads((table.schema.metadata or {})[HEAD])
+        head = read_head(table.schema, HEAD)
     except FileNotFoundError:
         msg = f"no tally at {name}; wanted a file written by tally.save"
         raise StoreError(msg) from None
-    except (KeyError, pa.ArrowException, OSError, ValueError):
+    except UNREADABLE:
         msg = (
             f"{name} is not a whole tally; wanted a file written by tally.save: make it again from the log"
         )
@@ -217,12 +218,29 @@ def _read(source: Any, name: str) -> Tally:
     try:
         tally = _from_parts(table, head)
         whole = _checksum(tally) == head["checksum"]
-    except (KeyError, TypeError, ValueError, AttributeError, pa.ArrowException, JourneysError):
+    except (*UNREADABLE, LookupError, TypeError, AttributeError, JourneysError):
         whole = False
     if not whole:
         msg = f"{name} is damaged (its checksum does not fit); count the log again"
         raise StoreError(msg)
     return tally
+
+
+def read_head(schema: pa.Schema, key: bytes) -> dict[str, Any]:
+    """Return the head of a file, which stands in its metadata.
+
+    Raises
+    ------
+    ValueError
+        If it is not there, or is not a table of JSON.
+    """
+    try:
+        head = json.loads((schema.metadata or {})[key])
+    except (KeyError, RecursionError):
+        head = None
+    if not isinstance(head, dict):
+        raise ValueError
+    return head
 
 
 def _checksum(tally: Tally) -> str:
@@ -259,6 +277,8 @@ def _from_parts(table: pa.Table, head: dict[str, Any]) -> Tally:
 
 
 def _joined(pieces: list[pa.Table], column: str) -> NDArray[Any]:
-    """Return the values of a column in all pieces of a table."""
+    """Return the values of a column in all pieces of a table, in which none is missing."""
     lists = [chunk for piece in pieces for chunk in piece[column].chunks]
+    if any(one.null_count or one.flatten().null_count for one in lists):
+        raise ValueError
     return np.concatenate([numbers(one.flatten()) for one in lists])
