@@ -95,7 +95,8 @@ class FolderInputs(Inputs):
     def open(self, inputs: Sequence[Input], rules: JourneyRules) -> InputLog:
         """Return the log of some files."""
         files = self._files()
-        log = _FileLog({one.name: files[one.name] for one in inputs}, (rules.event,), rules.id_columns, str(self._folder))
+        mine = {one.name: files[one.name] for one in inputs}
+        log = _FileLog(mine, (rules.event,), rules.id_columns, str(self._folder))
         log.check(rules.columns)
         return log
 
