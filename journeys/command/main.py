@@ -160,10 +160,11 @@ def _compared(options: argparse.Namespace) -> ThenAndNow | None:
 
 
 def _audit(options: argparse.Namespace) -> None:
+    from journeys.nightly.then_and_now import is_ledger
     from journeys.questions.audit import audit
     from journeys.tally.store import is_tally
 
-    if is_tally(options.log):
+    if is_ledger(options.log) or is_tally(options.log):
         seen = audit(_counted(options))
     else:
         seen = audit(options.log, _rules(options), identity=options.identity, progress=sys.stderr.isatty())
