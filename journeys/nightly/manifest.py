@@ -12,7 +12,7 @@ from journeys.errors import StoreError
 from journeys.nightly import disk
 
 NAME = "manifest.json"
-FORMAT_VERSION = 1
+FORMAT_VERSION = 2
 
 
 @dataclass(frozen=True)
