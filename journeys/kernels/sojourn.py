@@ -223,18 +223,15 @@ def cell_influence(
     m, k, g, n_cells = stays.n_states, stays.n_bins, buckets.n_buckets, len(fit.q)
     tables, survivors = np.atleast_2d(phi).T, np.atleast_2d(phi_survivor).T
     n_values = tables.shape[1]
-    place = stays.state * k + stays.bin
     # sparse products, so that many tables cost one pass over the cells; bins first for the sums along them
     gather = csr_array((fit.q, (stays.bin * m + stays.state, np.arange(n_cells))), shape=(k * m, n_cells))
     inflow = np.asarray(gather @ tables).reshape(k, m, n_values)
     tail = fit.survival_end[:, None] * survivors
     takes, pull, sofar = pull_of(inflow, tail, fit.hazard_all.T[:, :, None], fit.at_risk.T[:, :, None])
 
-    own = csr_array((buckets.n * _direct(fit, stays)[buckets.cell], (buckets.bucket, buckets.cell)), shape=(g, n_cells))
-    found = np.asarray(own @ tables)
-    at = place[buckets.cell]
-    ended = csr_array((buckets.n, (buckets.bucket, at % k * m + at // k)), shape=(g, k * m))
-    found -= ended @ (takes + sofar).reshape(k * m, n_values)
+    pulled = _direct(fit, stays)[:, None] * tables
+    pulled -= (takes + sofar).reshape(k * m, n_values)[stays.bin * m + stays.state]
+    found = np.asarray(buckets.by_cell @ pulled[: buckets.by_cell.shape[1]])
     if len(buckets.open_n):
         at = buckets.open_bin * m + buckets.open_state
         still = csr_array((buckets.open_n, (buckets.open_bucket, at)), shape=(g, k * m))

@@ -3,8 +3,13 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
+from typing import TYPE_CHECKING
 
 from journeys.kernels.arrays import FloatArray, IntArray
+
+if TYPE_CHECKING:
+    from scipy.sparse import csr_array
 
 
 @dataclass(frozen=True, eq=False)
@@ -120,6 +125,14 @@ class BucketStays:
     survivor_bucket: IntArray
     survivor_state: IntArray
     survivor_n: FloatArray
+
+    @cached_property
+    def by_cell(self) -> csr_array:
+        """Numbers of ended stays, shape (n_buckets, last cell that occurs + 1); kept, since sorting takes its time."""
+        from scipy.sparse import csr_array
+
+        shape = (self.n_buckets, int(self.cell.max(initial=-1)) + 1)
+        return csr_array((self.n, (self.bucket, self.cell)), shape=shape)
 
 
 @dataclass(frozen=True, eq=False)

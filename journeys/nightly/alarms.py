@@ -15,6 +15,7 @@ from journeys.intake.rules import JourneyRules
 from journeys.kernels.arrays import IntArray
 from journeys.nightly.job import Alarms
 from journeys.nightly.manifest import Watched
+from journeys.questions.corrected import corrected
 from journeys.questions.week_changes import CONVERTED, event_changes, week_changes
 from journeys.tally.groups import Group
 from journeys.tally.resumed import ResumedPass
@@ -139,12 +140,7 @@ def _shares(
     for by, value, keep in _slices(table["group"], rules, groups):
         frames.append(week_changes(table, states, before, week, keep=keep).assign(by=by, group=value))
     found = pd.concat(frames, ignore_index=True)
-    tested = found.p_value.notna()
-    if not tested.any():
-        return []
-    from statsmodels.stats.multitest import multipletests
-
-    found.loc[tested, "p_value_corrected"] = multipletests(found.p_value[tested], method="holm")[1]
+    found["p_value_corrected"] = corrected(found.p_value.to_numpy(dtype=float))
     tripped = found[(found.p_value_corrected < LEVEL) & (found.difference.abs() >= alarms.at_least)]
     return [_alarm(one, names[week], alarms) for one in tripped.to_dict("records")]
 

@@ -12,10 +12,11 @@ from journeys.intake.id_key import VARIABLE as ID_KEY
 from journeys.intake.id_key import IdKey
 from journeys.intake.rules import JourneyRules
 from journeys.nightly import disk
-from journeys.nightly.inputs import FolderInputs, InputError
+from journeys.nightly.inputs import FILE, FolderInputs, InputError, Inputs
 from journeys.nightly.job import NONE, Job
 from journeys.nightly.ledger import Ledger
 from journeys.nightly.manifest import Counted, Manifest, read_manifest
+from journeys.nightly.queries import QueryInputs
 
 # Rules that say nothing of how rows are counted.
 _FREE = ("limits", "as_of")
@@ -84,6 +85,14 @@ def refuse_changes(job: Job, manifest: Manifest, key: str | None) -> None:
         raise RulesError(msg)
 
 
+def inputs_of(job: Job, ledger: Ledger) -> Inputs:
+    """Return where a job's rows come from."""
+    if job.log.suffix != ".toml":
+        return FolderInputs(job.log)
+    counted_before = None if ledger.manifest is None else ledger.manifest.counted_before_us
+    return QueryInputs(job.log, counted_before, ledger.next_number)
+
+
 def refuse_twice(new: Sequence[Counted], counted: Mapping[str, Counted]) -> None:
     """Raise if an input is the same as another, under another name: its rows would count twice.
 
@@ -92,8 +101,10 @@ def refuse_twice(new: Sequence[Counted], counted: Mapping[str, Counted]) -> None
     InputError
         Naming both.
     """
-    seen = {one.checksum: one.name for one in counted.values()}
+    seen = {one.checksum: one.name for one in counted.values() if one.kind == FILE}
     for one in new:
+        if one.kind != FILE:
+            continue
         # Days without rows look alike.
         if one.n_rows and one.checksum in seen:
             msg = (
@@ -119,7 +130,7 @@ def begun_anew(job: Job) -> Ledger:
     found = [int(name[1]) for path in disk.files_in(job.ledger) if (name := _TALLY_NAME.match(path.name))]
     number = max([*found, 0 if old is None else old.number]) + 1
     if old is not None:
-        missing = FolderInputs(job.log).missing({one.name: one for one in old.inputs})
+        missing = inputs_of(job, Ledger(job.ledger, None)).missing({one.name: one for one in old.inputs})
         if missing:
             msg = (
                 f"--rebuild: {len(missing):,} inputs of the ledger are no longer in {job.log}, such as {missing[0]}; "

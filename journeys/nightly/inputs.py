@@ -7,18 +7,21 @@ from __future__ import annotations
 
 from abc import ABC, abstractmethod
 from collections.abc import Iterator, Mapping, Sequence
+from contextlib import AbstractContextManager, contextmanager
 from dataclasses import dataclass, replace
 from pathlib import Path
 
 import pyarrow as pa
 
-from journeys.errors import JourneysError, LogError
+from journeys.errors import JourneysError, LogError, RulesError
 from journeys.intake.read import LogSource
 from journeys.intake.read_files import LogFile, find_files
 from journeys.intake.rules import JourneyRules
 from journeys.intake.sources import FileSource
 from journeys.nightly import disk
 from journeys.nightly.manifest import Counted
+
+FILE, QUERY = "file", "query"
 
 
 class InputError(JourneysError):
@@ -27,18 +30,33 @@ class InputError(JourneysError):
 
 @dataclass(frozen=True)
 class Input:
-    """Something to count once: its name, its size in bytes, when it was last changed, and its checksum."""
+    """Something to count once: see `Counted`."""
 
     name: str
-    size: int
-    changed_ns: int
+    size: int = 0
+    changed_ns: int = 0
     checksum: str = ""
+    kind: str = FILE
+    since_us: int | None = None
 
 
 class InputLog(LogSource):
-    """A log that knows how many rows came from each input when it was last read to its end."""
+    """A log that knows how many rows came from each input when it was last read to its end.
+
+    Attributes
+    ----------
+    rows_of : dict of str to int
+        By the name of the input.
+    again : LogSource or None
+        Rows that are read now, and anew the next night, since they are too young to be counted; None: there are none,
+        the ledger itself keeps what waits.
+    """
 
     rows_of: dict[str, int]
+    again: LogSource | None = None
+
+    def up_to(self, as_of_us: int) -> None:
+        """Set apart what the next night will read anew."""
 
 
 class Inputs(ABC):
@@ -55,8 +73,8 @@ class Inputs(ABC):
         """
 
     @abstractmethod
-    def open(self, inputs: Sequence[Input], rules: JourneyRules) -> InputLog:
-        """Return the log that some inputs, at least one, make up one after another."""
+    def open(self, inputs: Sequence[Input], rules: JourneyRules) -> AbstractContextManager[InputLog]:
+        """Give the log that some inputs, at least one, make up one after another."""
 
     @abstractmethod
     def confirm(self, inputs: Sequence[Input]) -> None:
@@ -81,6 +99,7 @@ class FolderInputs(Inputs):
 
     def new(self, counted: Mapping[str, Counted]) -> list[Input]:
         """Return the files that have not been counted yet, by path, with their checksums."""
+        refuse_other_kind(counted, FILE, f"the files of {self._folder}")
         found = []
         for name, file in self._files().items():
             there = _seen(name, file.path)
@@ -92,13 +111,14 @@ class FolderInputs(Inputs):
                 raise InputError(_changed(file.path, before, there))
         return found
 
-    def open(self, inputs: Sequence[Input], rules: JourneyRules) -> InputLog:
-        """Return the log of some files."""
+    @contextmanager
+    def open(self, inputs: Sequence[Input], rules: JourneyRules) -> Iterator[InputLog]:
+        """Give the log of some files."""
         files = self._files()
         mine = {one.name: files[one.name] for one in inputs}
         log = _FileLog(mine, (rules.event,), rules.id_columns, str(self._folder))
         log.check(rules.columns)
-        return log
+        yield log
 
     def confirm(self, inputs: Sequence[Input]) -> None:
         """Raise an InputError if a file has another size or time than when its checksum was taken."""
@@ -110,7 +130,7 @@ class FolderInputs(Inputs):
 
     def missing(self, counted: Mapping[str, Counted]) -> list[str]:
         """Return files that are gone."""
-        return sorted(set(counted) - set(self._files()))
+        return sorted({name for name, one in counted.items() if one.kind == FILE} - set(self._files()))
 
     def _files(self) -> dict[str, LogFile]:
         files = find_files(self._folder)
@@ -131,6 +151,13 @@ class _FileLog(FileSource, InputLog):
         for batch in super()._read_file(file, columns):
             self.rows_of[name] += batch.num_rows
             yield batch
+
+
+def refuse_other_kind(counted: Mapping[str, Counted], kind: str, now: str) -> None:
+    """Raise a RulesError if a ledger has counted inputs of another kind: what they have in common would count twice."""
+    if other := next((one.name for one in counted.values() if one.kind != kind), None):
+        msg = f"log: {now} now, but the ledger has counted {other}; put `log` back, or count all anew with --rebuild"
+        raise RulesError(msg)
 
 
 def _seen(name: str, path: Path) -> Input:

@@ -50,7 +50,7 @@ class Job:
     Attributes
     ----------
     log, ledger, out : Path
-        Folders of the inputs, of the ledger, and of what is published.
+        Folders of the inputs (or a TOML file with a table `[database]`), of the ledger, and of what is published.
     rules : JourneyRules
         How the log is read.
     lateness_us : int

@@ -12,7 +12,7 @@ from journeys.errors import StoreError
 from journeys.nightly import disk
 
 NAME = "manifest.json"
-FORMAT_VERSION = 1
+FORMAT_VERSION = 2
 
 
 @dataclass(frozen=True)
@@ -26,7 +26,10 @@ class Stored:
 
 @dataclass(frozen=True)
 class Counted:
-    """An input that has been counted: what tells whether it is still the same, and in which generation it came in."""
+    """An input that has been counted: what tells whether it is still the same, and in which generation it came in.
+
+    Of a night of a query the checksum is that of its text, `since_us` the watermark, size and time are 0.
+    """
 
     name: str
     size: int
@@ -34,6 +37,8 @@ class Counted:
     checksum: str
     n_rows: int
     generation: int
+    kind: str = "file"
+    since_us: int | None = None
 
 
 @dataclass(frozen=True)
@@ -150,6 +155,13 @@ class Manifest:
         yield from (one.tally for one in self.generations)
         if self.held is not None:
             yield self.held
+
+    @property
+    def n_waiting_rows(self) -> int | None:
+        """Rows that the newest generation read and that are to be read anew; None where there is no generation."""
+        if self.newest is None or self.learned is None:
+            return None
+        return self.newest.n_rows - int(self.learned["rows"]["n_rows"])
 
     @property
     def newest(self) -> Generation | None:

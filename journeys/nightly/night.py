@@ -5,7 +5,7 @@ from __future__ import annotations
 import datetime as dt
 import time
 from concurrent.futures import Executor, Future, ThreadPoolExecutor
-from dataclasses import dataclass, field, replace
+from dataclasses import asdict, dataclass, field, replace
 from typing import Any
 
 from journeys.checks import instant_text
@@ -16,8 +16,8 @@ from journeys.intake.rows import Rows
 from journeys.kernels.compiled import is_built
 from journeys.nightly import disk
 from journeys.nightly.alarms import begun, look, watch_of
-from journeys.nightly.fresh import begun_anew, fingerprint, refuse_changes, refuse_twice, rules_checksum
-from journeys.nightly.inputs import FolderInputs, Input, InputLog, Inputs
+from journeys.nightly.fresh import begun_anew, fingerprint, inputs_of, refuse_changes, refuse_twice, rules_checksum
+from journeys.nightly.inputs import Input, InputLog, Inputs
 from journeys.nightly.job import Job
 from journeys.nightly.ledger import Draft, Ledger, opened, without_old
 from journeys.nightly.lock import held
@@ -98,12 +98,12 @@ def run_night(job: Job, *, rebuild: bool = False, dry_run: bool = False, now_us:
         ledger = begun_anew(job) if rebuild else opened(job.ledger)
         if dry_run:
             return _tried(job, ledger, key, now)
-        inputs = FolderInputs(job.log)
+        inputs = inputs_of(job, ledger)
         new = _new_inputs(job, ledger, inputs, key)
         before = _made_good(job, ledger, check=not new)
-        if not new:
+        night = _counted(job, ledger, Source(inputs, new), key, now) if new else None
+        if night is None:
             return before
-        night = _counted(job, ledger, Source(inputs, new), key, now)
         return replace(night, alarms=[*before.alarms, *night.alarms])
 
 
@@ -116,10 +116,7 @@ class Source:
 
     def counted(self, log: InputLog, number: int) -> list[Counted]:
         """Return what a ledger notes of them, once the log that they make up was read."""
-        return [
-            Counted(one.name, one.size, one.changed_ns, one.checksum, log.rows_of[one.name], number)
-            for one in self.new
-        ]
+        return [Counted(**asdict(one), n_rows=log.rows_of[one.name], generation=number) for one in self.new]
 
 
 def _new_inputs(job: Job, ledger: Ledger, inputs: Inputs, key: str | None) -> list[Input]:
@@ -131,17 +128,31 @@ def _new_inputs(job: Job, ledger: Ledger, inputs: Inputs, key: str | None) -> li
 
 def _tried(job: Job, ledger: Ledger, key: str | None, now_us: int) -> Night:
     """Say what a run would count."""
-    inputs = FolderInputs(job.log)
+    inputs = inputs_of(job, ledger)
     new = _new_inputs(job, ledger, inputs, key)
     number = 0 if ledger.manifest is None else ledger.manifest.number
     if not new:
         return Night(number, dry_run=True)
-    log = inputs.open(new, job.rules)
+    source, people = Source(inputs, new), People.here(job.identity)
+    with inputs.open(new, job.rules) as log:
+        reach = _reach(job, ledger, log, now_us)
+        if reach is None:
+            return Night(number, dry_run=True)
+        pass_ = ResumedPass(log, job.rules, reach.span, ledger.learned, compiled=False, people=people)
+        with Spill() as spill:
+            _dealt(job, ledger, source, log, pass_, spill, reach, now_us)
+    return replace(_told(number, new, pass_, reach), dry_run=True)
+
+
+def _reach(job: Job, ledger: Ledger, log: InputLog, now_us: int) -> Reach | None:
+    """Return from when to when a night counts; None where all there is was there the night before, and still waits."""
     reach = reach_of(log, job.rules, ledger.manifest, job.lateness_us, now_us)
-    pass_ = ResumedPass(log, job.rules, reach.span, ledger.learned, compiled=False, people=People.here(job.identity))
-    with Spill() as spill:
-        waiting, _ = _dealt(job, ledger, Source(inputs, new), log, pass_, spill, reach, now_us)
-    return replace(_told(number, new, pass_, waiting, reach), dry_run=True)
+    log.up_to(reach.span.as_of_us)
+    before = ledger.manifest
+    if log.again is None or before is None or reach.counted_before_us != before.counted_before_us:
+        return reach
+    n_new, n_waiting = (sum(batch.num_rows for batch in rows.batches([job.rules.time])) for rows in (log, log.again))
+    return None if not n_new and before.n_waiting_rows in (None, n_waiting) else reach
 
 
 def _dealt(
@@ -149,8 +160,9 @@ def _dealt(
 ) -> tuple[Rows | None, list[Counted]]:
     """Deal out a night's rows, unless they break a limit; return those that wait, and what is noted of the inputs."""
     waiting = pass_.deal(
-        spill, ledger.held(), late_before_us=reach.late_before_us, until_us=reach.span.as_of_us, now_us=now_us
-    )
+        spill, ledger.held(), late_before_us=reach.late_before_us, until_us=reach.span.as_of_us, now_us=now_us,
+        again=log.again,
+    )  # fmt: skip
     counted = source.counted(log, ledger.next_number)
     # Told before the limits: rows that come a second time are late, too.
     refuse_twice(counted, ledger.counted)
@@ -159,19 +171,22 @@ def _dealt(
     return waiting, counted
 
 
-def _told(number: int, new: list[Input], pass_: ResumedPass, waiting: Rows | None, reach: Reach) -> Night:
-    n_waiting = 0 if waiting is None else len(waiting)
+def _told(number: int, new: list[Input], pass_: ResumedPass, reach: Reach) -> Night:
     names = tuple(one.name for one in new)
-    return Night(number, names, pass_.n_new_rows, pass_.n_too_late, n_waiting, _as_of(reach))
+    return Night(number, names, pass_.n_new_rows, pass_.n_too_late, pass_.n_waiting, _as_of(reach))
 
 
-def _counted(job: Job, ledger: Ledger, source: Source, key: str | None, now_us: int) -> Night:
-    """Count the new inputs into a new generation, and publish it."""
+def _counted(job: Job, ledger: Ledger, source: Source, key: str | None, now_us: int) -> Night | None:
+    """Count the new inputs into a new generation, and publish it; None where there is nothing new in them."""
     draft = Draft(ledger)
     # The answers are worked out while the ledger is written; they are published when it stands.
-    with ThreadPoolExecutor(1) as beside:
+    with ThreadPoolExecutor(1) as beside, source.inputs.open(source.new, job.rules) as log:
+        reach = _reach(job, ledger, log, now_us)
+        if reach is None:
+            ledger.check()
+            return None
         try:
-            after, night, answers = _drafted(job, ledger, draft, source, beside, now_us)
+            after, night, answers = _drafted(job, ledger, draft, source, log, reach, beside, now_us)
             ledger = draft.commit(replace(after, id_key=key))
         except BaseException:
             draft.drop()
@@ -183,11 +198,17 @@ def _counted(job: Job, ledger: Ledger, source: Source, key: str | None, now_us: 
 
 
 def _drafted(
-    job: Job, ledger: Ledger, draft: Draft, source: Source, beside: Executor, now_us: int
+    job: Job,
+    ledger: Ledger,
+    draft: Draft,
+    source: Source,
+    log: InputLog,
+    reach: Reach,
+    beside: Executor,
+    now_us: int,
 ) -> tuple[Manifest, Night, Future[Answers] | None]:
     """Write the next generation, all but its manifest; its answers are worked out beside."""
-    number, log = ledger.next_number, source.inputs.open(source.new, job.rules)
-    reach = reach_of(log, job.rules, ledger.manifest, job.lateness_us, now_us)
+    number = ledger.next_number
     watched, watch = _watch(job, ledger, reach)
     people = People.here(job.identity)
     pass_ = ResumedPass(log, job.rules, reach.span, ledger.learned, compiled=is_built(), people=people, watch=watch)
@@ -205,7 +226,7 @@ def _drafted(
         log_start_us=reach.span.log_start_us, newest_us=reach.newest_us, counted_before_us=reach.counted_before_us,
         inputs=[*before.inputs, *counted], parts=parts, held=None if waiting is None else draft.held(waiting),
     )  # fmt: skip
-    night = _told(number, source.new, pass_, waiting, reach)
+    night = _told(number, source.new, pass_, reach)
     if tally is None:
         return after, night, None
     alarms: list[dict[str, Any]] = []

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Hashable, Mapping
 from dataclasses import dataclass
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, TypeVar
 
 import numpy as np
 
@@ -21,6 +21,8 @@ from journeys.tally.tally import Tally
 
 if TYPE_CHECKING:
     import pandas as pd
+
+T = TypeVar("T")
 
 
 @dataclass(frozen=True, eq=False)
@@ -60,8 +62,10 @@ def is_ledger(path: str | Path) -> bool:
 
 def tally_of_ledger(path: str | Path, number: int | None = None) -> Tally:
     """Return the counts of a generation of a ledger, the newest if none is named."""
-    ledger = opened(Path(path))
-    return ledger.tally(_generation(ledger, number))
+    def newest_or(ledger: Ledger) -> Tally:
+        return ledger.tally(_generation(ledger, number))
+
+    return _read(Path(path), newest_or)
 
 
 def then_and_now(path: str | Path, number: int) -> ThenAndNow:
@@ -87,9 +91,11 @@ def then_and_now(path: str | Path, number: int) -> ThenAndNow:
     """
     import pandas as pd
 
-    ledger = opened(Path(path))
-    then, now = _generation(ledger, number), _generation(ledger, None)
-    tallies = [ledger.tally(one) for one in (then, now)]
+    def both(ledger: Ledger) -> list[tuple[Generation, Tally]]:
+        return [(one, ledger.tally(one)) for one in (_generation(ledger, number), _generation(ledger, None))]
+
+    (then, was), (now, is_) = _read(Path(path), both)
+    tallies = [was, is_]
     counts = [plain_count(tally) for tally in tallies]
     read: dict[str, Callable[[PlainCount, Tally], int]] = {
         "rows read": lambda _, tally: tally.n_rows,
@@ -106,6 +112,18 @@ def then_and_now(path: str | Path, number: int) -> ThenAndNow:
     rows.append((_EXPECTED, *a3, *b3, b3[0] - a3[0]))
     names = ["line", "then", "then_low", "then_high", "now", "now_low", "now_high", "difference"]
     return ThenAndNow(then, now, pd.DataFrame(rows, columns=names), _why(then, now, *counts))
+
+
+def _read(path: Path, what: Callable[[Ledger], T]) -> T:
+    """Return something of a ledger; read once more where a night may have replaced its files meanwhile."""
+    ledger = opened(path)
+    try:
+        return what(ledger)
+    except (StoreError, FileNotFoundError):
+        again = opened(path)
+        if again.manifest == ledger.manifest:
+            raise
+        return what(again)
 
 
 _EXPECTED = "expected to convert in the end"

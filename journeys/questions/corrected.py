@@ -31,8 +31,23 @@ def corrected(p_value: FloatArray, method: str = "holm") -> FloatArray:
     there = np.isfinite(p_value)
     if method == "none" or not there.any():
         return p_value
+    found = np.full(len(p_value), np.nan)
+    found[there] = _holm(p_value[there]) if method == "holm" else _by_method(p_value[there], method)
+    return found
+
+
+def _holm(p: FloatArray) -> FloatArray:
+    """Return p values times how many are at least as large, and never below a smaller one's.
+
+    Written out, since nearly every summary asks for it and importing the library takes longer than all its tests.
+    """
+    order = np.argsort(p, kind="stable")
+    found = np.empty(len(p))
+    found[order] = np.minimum(np.maximum.accumulate(p[order] * np.arange(len(p), 0, -1)), 1.0)
+    return found
+
+
+def _by_method(p: FloatArray, method: str) -> FloatArray:
     from statsmodels.stats.multitest import multipletests
 
-    found = np.full(len(p_value), np.nan)
-    found[there] = multipletests(p_value[there], method=method)[1]
-    return found
+    return np.asarray(multipletests(p, method=method)[1])

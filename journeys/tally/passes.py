@@ -160,11 +160,13 @@ class Pass:
             tables = [job.result() for job in jobs]
         return self._tally(tables)
 
-    def _rows(self) -> Iterator[Rows]:
+    def _rows(self, log: LogSource | None = None) -> Iterator[Rows]:
         from tqdm import tqdm
 
+        source = self._log if log is None else log
+
         with tqdm(total=self._look.n_rows, unit=" rows", unit_scale=True, disable=not self._progress) as bar:
-            for batch in self._log.batches(self._rules.columns):
+            for batch in source.batches(self._rules.columns):
                 bar.update(batch.num_rows)
                 yield self._normaliser.rows(batch)
 

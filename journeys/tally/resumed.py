@@ -103,6 +103,8 @@ class ResumedPass(Pass):
         self._late = Findings()
         self._found: list[Findings] = []
         self._waiting = np.zeros(0, np.int64)
+        # What was known before the rows that are to be read anew.
+        self._settled: tuple[dict[str, Any], Findings] | None = None
 
     def _resume(self, learned: Mapping[str, Any]) -> None:
         self._normaliser.resume(learned["rows"])
@@ -115,12 +117,12 @@ class ResumedPass(Pass):
 
         What closing the log finds is not among the findings: the next reading closes it anew.
         """
-        rows = self._normaliser.learned()
-        found = sum(self._found, Findings.from_dict(rows["findings"]) + self._late)
-        names = self._normaliser.codes.names
+        rows, late = self._settled or (self._normaliser.learned(), self._late)
+        found = sum(self._found, Findings.from_dict(rows["findings"]) + late)
+        names = rows["events"]
         return {
             "rows": rows | {"findings": found.to_dict()},
-            "counted_events": [name for name, is_in in zip(names, self._all_counted(), strict=True) if is_in],
+            "counted_events": [name for name, is_in in zip(names, self._all_counted(), strict=False) if is_in],
             "states": self._codes.states,
             "seen": self._codes.seen,
             "touchpoints": list(self._touchpoints.names),
@@ -146,8 +148,20 @@ class ResumedPass(Pass):
         """Rows read here without a readable customer, time or event."""
         return self._normaliser.findings.n_unreadable - self._n_unreadable_before
 
+    @property
+    def n_waiting(self) -> int:
+        """Rows that wait, here or where they are read anew."""
+        return len(self._waiting)
+
     def deal(
-        self, spill: Spill, held: Rows | None, *, late_before_us: int | None, until_us: int, now_us: int
+        self,
+        spill: Spill,
+        held: Rows | None,
+        *,
+        late_before_us: int | None,
+        until_us: int,
+        now_us: int,
+        again: LogSource | None = None,
     ) -> Rows | None:
         """Deal out the rows that are to be counted, and return those that are to wait.
 
@@ -163,6 +177,9 @@ class ResumedPass(Pass):
             Rows up to this moment are counted, later ones wait.
         now_us : int
             Later rows lie in the future, which is a finding.
+        again : LogSource, optional
+            Rows that the next reading reads anew: they are in the tally as rows that wait, but not among what was
+            learned, and are not returned.
         """
         waiting: list[Rows] = []
         new = (self._in_time(rows, late_before_us, now_us) for rows in ahead(self._rows()))
@@ -175,10 +192,12 @@ class ResumedPass(Pass):
             self._note_weeks(counted)
             if not ready.all():
                 waiting.append(rows.take(~ready))
-        if not waiting:
-            return None
-        rest = concat_rows(waiting)
-        self._waiting = rest.row
+        rest = concat_rows(waiting) if waiting else None
+        self._waiting = np.zeros(0, np.int64) if rest is None else rest.row
+        if again is not None:
+            self._settled = (self._normaliser.learned(), self._late + Findings())
+            young = [self._in_time(rows, None, now_us) for rows in ahead(self._rows(again))]
+            self._waiting = np.concatenate([self._waiting, *(rows.row for rows in young)])
         return rest
 
     def _note_weeks(self, rows: Rows) -> None:

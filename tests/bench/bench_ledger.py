@@ -40,6 +40,7 @@ ledger = "ledger"
 out = "out"
 id_key = "none"
 """
+KEPT = ("ledger", "out")
 # What DESIGN asks of a night of a hundredth of the log.
 MOST_OF_THE_PASS = 1 / 8
 
@@ -65,16 +66,18 @@ class Bench:
         begin = START_US + DAYS * DAY_US
         more = batch(rng, night, begin, begin + DAY_US, (0, customers), "integer")
         pq.write_table(more, self.folder / "events" / "night.parquet")
-        shutil.copytree(self.folder / "ledger", self.folder / "spare")
+        for name in KEPT:
+            shutil.copytree(self.folder / name, self.folder / "spare" / name, symlinks=True)
 
     def night(self) -> Cost:
         """Run a night."""
         return run([*JOURNEYS, "nightly", str(self.folder / "job.toml")])
 
     def again(self) -> None:
-        """Put the ledger back to before the night."""
-        shutil.rmtree(self.folder / "ledger")
-        shutil.copytree(self.folder / "spare", self.folder / "ledger")
+        """Put the ledger back to before the night, and what it had published: else it would be published anew."""
+        for name in KEPT:
+            shutil.rmtree(self.folder / name)
+            shutil.copytree(self.folder / "spare" / name, self.folder / name, symlinks=True)
 
     def whole(self, command: str, as_of: str) -> Cost:
         """Run the full pass."""

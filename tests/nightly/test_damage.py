@@ -54,8 +54,8 @@ def test_a_file_that_is_gone_is_told(job: Job):
 def test_a_manifest_of_another_version(job: Job):
     path = job.ledger / "manifest.json"
     text = path.read_text()
-    path.write_text(text.replace('"format_version": 1', '"format_version": 99'))
-    with pytest.raises(StoreError, match="has format version 99, this program reads 1; count anew with --rebuild"):
+    path.write_text(text.replace('"format_version": 2', '"format_version": 99'))
+    with pytest.raises(StoreError, match="has format version 99, this program reads 2; count anew with --rebuild"):
         run_night(job)
     path.write_text(text)
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import json
 import shutil
 from collections.abc import Iterator
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -19,9 +20,9 @@ from journeys.intake.identity import bucket_major, customer_keys
 from journeys.nightly.forget import forget
 from journeys.nightly.history import COLUMNS, read_history
 from journeys.nightly.job import Job
-from journeys.nightly.ledger import opened
+from journeys.nightly.ledger import Ledger, opened
 from journeys.nightly.night import run_night
-from journeys.nightly.then_and_now import then_and_now
+from journeys.nightly.then_and_now import tally_of_ledger, then_and_now
 from journeys.tally.tally import Tally
 
 
@@ -243,3 +244,27 @@ def test_forgets_nobody_without_a_ledger_or_with_another_key(
 def test_a_ledger_does_where_a_log_is_asked_for(kept: Job, root: Path, capsys: pytest.CaptureFixture[str]):
     assert main(["tally", str(kept.ledger), "--out", str(root / "tally.parquet")]) == DONE
     assert Tally.load(root / "tally.parquet") == newest_tally(kept)
+    said = []
+    for path in (kept.ledger, root / "tally.parquet"):
+        capsys.readouterr()
+        assert main(["audit", str(path)]) == DONE
+        said.append(capsys.readouterr().out)
+    assert said[0] == said[1]
+    assert "of 300 people" in said[0]
+
+
+def test_a_night_that_replaces_files_meanwhile_is_no_damage(
+    kept: Job, root: Path, monkeypatch: pytest.MonkeyPatch
+):
+    old = opened(kept.ledger)
+    assert old.manifest is not None
+    gone = replace(old.manifest.generations[-1].tally, file="tally-000000-gone.parquet")
+    newest = replace(old.manifest.generations[-1], tally=gone)
+    before = Ledger(kept.ledger, replace(old.manifest, generations=[newest]))
+    seen = [before, old]
+    monkeypatch.setattr("journeys.nightly.then_and_now.opened", lambda _: seen.pop(0))
+    assert tally_of_ledger(kept.ledger) == newest_tally(kept)
+    seen = [before, before]
+    with pytest.raises(StoreError, match="is damaged"):
+        tally_of_ledger(kept.ledger)
+    assert seen == []
