@@ -197,7 +197,8 @@ def test_the_job_of_the_readme_runs(tmp_path: Path):
     """The worked example: its job file, its two ways of being called, on the demo's log dealt out by day."""
     import pandas as pd
 
-    (tmp_path / "job.toml").write_text(next(one for one in blocks(README, "toml") if "lateness" in one), encoding="utf-8")
+    job_file = next(one for one in blocks(README, "toml") if "lateness" in one)
+    (tmp_path / "job.toml").write_text(job_file, encoding="utf-8")
     rules = (REPO / "demo_data" / "rules.toml").read_text(encoding="utf-8")
     rules = rules.replace('by = ["district"]', "").replace('cohort = "month"', "")
     (tmp_path / "rules.toml").write_text(rules, encoding="utf-8")
