@@ -1,7 +1,7 @@
 """Run notebooks from top to bottom with the interpreter that runs this file.
 
-``python tests/notebooks/run_notebooks.py`` runs all of them and writes their outputs back: do this after a
-change that alters what a notebook shows. The tests run them in memory.
+``python tests/notebooks/run_notebooks.py`` runs all of them and writes their outputs back, or those that are named:
+``run_notebooks.py nights``. Do this after a change that alters what a notebook shows. The tests run them in memory.
 """
 
 from __future__ import annotations
@@ -37,7 +37,7 @@ def executed(path: Path, more: str = "") -> Any:
     client = NotebookClient(
         notebook,
         kernel_manager_class=ThisInterpreter,
-        timeout=60,
+        timeout=180,
         record_timing=False,
         coalesce_streams=True,
         resources={"metadata": {"path": path.parent}},
@@ -58,7 +58,11 @@ def text_outputs(notebook: Any) -> list[str]:
 
 
 if __name__ == "__main__":
-    for each in NOTEBOOKS:
+    unknown = set(sys.argv[1:]) - {each.stem for each in NOTEBOOKS}
+    if unknown:
+        known = ", ".join(each.stem for each in NOTEBOOKS)
+        sys.exit(f"no such notebook: {', '.join(sorted(unknown))}; there are {known}")
+    for each in [one for one in NOTEBOOKS if one.stem in sys.argv[1:] or len(sys.argv) == 1]:
         fresh = executed(each)
         fresh.metadata = {
             "kernelspec": {"display_name": "Python 3", "language": "python", "name": "python3"},
