@@ -13,12 +13,12 @@ from journeys.questions.credit import credit
 from journeys.questions.first_passage import first_passage
 from journeys.questions.memory_check import memory_check
 from journeys.questions.outcomes import outcomes
-from journeys.questions.overview import summarise
 from journeys.questions.passage_curve import passage_curve
 from journeys.questions.removal import removal
 from journeys.questions.return_time import return_time
 from journeys.questions.sensitivity import sensitivity
 from journeys.questions.stages import stages
+from journeys.questions.summarise import summarise
 from journeys.questions.time_to_convert import time_to_convert
 from journeys.questions.worth import worth
 from journeys.show import plots

@@ -15,6 +15,8 @@ if TYPE_CHECKING:
 LONGEST_NAME = 48
 # A notebook shows so many rows of an answer; its frame holds them all.
 MOST_ROWS = 60
+# What stands where a number is left out because it describes too few people.
+LEFT_OUT = "–"
 _EMPTY = frozenset({"br", "circle", "hr", "line", "link", "meta", "path", "polygon", "rect"})
 # Notebooks bring their own colours, light or dark: these only say how strong a line is beside the text.
 _LINE = "border-bottom:1px solid color-mix(in srgb, currentColor 25%, transparent)"
@@ -164,3 +166,14 @@ def _frame_cell(value: object, is_key: bool, is_number: bool) -> Markup:
 
 def _cell_style(is_number: bool) -> str:
     return f"text-align:{'right' if is_number else 'left'};padding:0.15em 0.6em;font-weight:normal;{_LINE}"
+
+
+def count_text(n: float) -> str:
+    """Return a whole number, or what stands in its place where it is left out (NaN).
+
+    Examples
+    --------
+    >>> count_text(1204), count_text(float("nan"))
+    ('1,204', '–')
+    """
+    return LEFT_OUT if math.isnan(n) else f"{n:,.0f}"

@@ -48,10 +48,10 @@ def small_log(n: int = 60, visit: str = "visit", won: str = "joined", lost: str 
     return pd.DataFrame(rows, columns=["who", "when", "what"]).sort_values("when", kind="stable", ignore_index=True)
 
 
-def overview_of(frame: pd.DataFrame, **settings: object) -> Overview:
-    """Return the summary of such a log, by rules as given."""
+def overview_of(frame: pd.DataFrame, min_customers: int = 0, **settings: object) -> Overview:
+    """Return the summary of such a log, by rules as given; by default nothing in it is left out."""
     given = {"converted": ["joined"], "churned": ["declined"], "silence": "30d", "complete_history": True, **settings}
     rules = jn.JourneyRules("who", "when", "what", **given)  # type: ignore[arg-type]
     with warnings.catch_warnings():
         warnings.simplefilter("ignore", JourneysWarning)
-        return jn.summarise(jn.JourneyModel().fit(jn.tally(frame, rules)))
+        return jn.summarise(jn.JourneyModel().fit(jn.tally(frame, rules)), min_customers=min_customers)

@@ -113,6 +113,12 @@ def _parser() -> argparse.ArgumentParser:
                 metavar="TIME",
                 help='share converted within this time, such as "14d"; may be given several times',
             )
+            command.add_argument(
+                "--min-customers",
+                type=int,
+                metavar="N",
+                help="leave out numbers about fewer people than this (default 10); 0 leaves none out",
+            )
         if name == "tally":
             command.add_argument("--out", metavar="FILE", type=named, required=True, help="where the tally goes")
         else:
@@ -134,19 +140,19 @@ def _command(commands: Any, name: str, run: Callable[[argparse.Namespace], tuple
 
 def _summary(options: argparse.Namespace) -> tuple[str, int]:
     from journeys.models.model import JourneyModel
-    from journeys.questions.overview import summarise
+    from journeys.questions.summarise import summarise
     from journeys.show.summary import summary_text, write_summary
 
     out = Path(options.out)
     if out.exists() and not out.is_dir():
         msg = f"--out {out}: is a file; wanted a folder, new or there already"
         raise RulesError(msg)
-    horizons = _horizons(options)
+    horizons, least = _horizons(options), _min_customers(options)
     compared = _compared(options)
     tally = _counted(options)
     check_limits(tally)
     fit = JourneyModel().fit(tally)
-    overview = summarise(fit, horizons)
+    overview = summarise(fit, horizons, min_customers=least)
     written = write_summary(overview, out, keep_tally=options.keep_tally)
     for path in written:
         logger.info("wrote %s", path)
@@ -215,6 +221,16 @@ def _horizons(options: argparse.Namespace) -> list[str] | None:
         except ValueError as fault:
             raise RulesError(str(fault)) from None
     return options.horizon  # type: ignore[no-any-return]
+
+
+def _min_customers(options: argparse.Namespace) -> int:
+    """Return --min-customers, once it can be told."""
+    from journeys.questions.summarise import MIN_CUSTOMERS, few_limit
+
+    try:
+        return MIN_CUSTOMERS if options.min_customers is None else few_limit(options.min_customers, "--min-customers")
+    except ValueError as fault:
+        raise RulesError(str(fault)) from None
 
 
 def _counted(options: argparse.Namespace) -> Tally:

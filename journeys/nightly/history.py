@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -11,6 +12,7 @@ from journeys.checks import instant_text
 from journeys.errors import StoreError
 from journeys.files import written_whole
 from journeys.nightly.manifest import Generation
+from journeys.questions.few_people import FewPeople
 from journeys.questions.overview import Overview
 from journeys.questions.plain_count import PlainCount, plain_count
 from journeys.questions.time_to_convert import IN_THE_END
@@ -29,7 +31,8 @@ COLUMNS = (*STAMPS, *COUNTS, *(f"{name}{bound}" for name in MEASURES.values() fo
 
 
 def history_rows(
-    generation: Generation, tally: Tally, plain: PlainCount, overview: Overview | None, why: str | None
+    generation: Generation, tally: Tally, plain: PlainCount, overview: Overview | None, why: str | None,
+    few: FewPeople | None = None,
 ) -> list[dict[str, Any]]:
     """Return the rows of one run: all customers together first, then each group of each column.
 
@@ -43,6 +46,8 @@ def history_rows(
         None: counts only.
     why : str or None
         Why there are counts only.
+    few : FewPeople or None
+        What describes too few people to be told; of all customers together `plain` leaves it out already.
     """
     stamps: dict[str, Any] = {
         "generation": generation.number, "run": generation.run, "as_of": instant_text(generation.as_of_us),
@@ -52,7 +57,8 @@ def history_rows(
     for column in () if overview is None else tally.rules.by:
         frame = overview.groups[column].to_frame()  # type: ignore[union-attr]
         for (value,), part in tally.split(column).items():
-            row = stamps | {"by": column, "group": str(value)} | _counts(plain_count(part))
+            counts = _counts(plain_count(part)) | ({} if few is None else dict.fromkeys(_left_out(few, column, value)))
+            row = stamps | {"by": column, "group": str(value)} | counts
             found.append(row | _estimates(frame[frame[column] == value], why))
     return found
 
@@ -67,7 +73,7 @@ def write_history(path: Path, rows: list[dict[str, Any]], generation: int) -> No
     """
     import pandas as pd
 
-    frame = pd.DataFrame(rows, columns=list(COLUMNS))
+    frame = pd.DataFrame(rows, columns=list(COLUMNS)).astype(dict.fromkeys(COUNTS, "Int64"))
     if path.exists():
         before = read_history(path)
         before = before[before.generation != generation]
@@ -94,8 +100,19 @@ def read_history(path: Path) -> pd.DataFrame:
         raise StoreError(msg) from None
 
 
-def _counts(plain: PlainCount) -> dict[str, int]:
-    return {name: getattr(plain, name) for name in COUNTS}
+def _counts(plain: PlainCount) -> dict[str, int | None]:
+    found = {name: getattr(plain, name) for name in COUNTS}
+    return {name: None if math.isnan(n) else n for name, n in found.items()}
+
+
+def _left_out(few: FewPeople, column: str, value: Any) -> list[str]:
+    """Return the counts of a group that are not told."""
+    hidden = few.groups[column]
+    return [
+        *(COUNTS if few.log or value in hidden.size else ()),
+        *(["n_converted"] if value in hidden.conversion else ()),
+        *(["n_undecided"] if value in hidden.undecided else ()),
+    ]
 
 
 def _estimates(frame: pd.DataFrame | None, why: str | None) -> dict[str, Any]:

@@ -13,11 +13,12 @@ from typing import Any
 from journeys.checks import duration_us
 from journeys.errors import RulesError
 from journeys.intake.rules import JourneyRules
+from journeys.questions.summarise import MIN_CUSTOMERS, few_limit
 
 # The keys of a job file, and of its table of alarms; the first four must be given.
-KEYS = ("log", "rules", "ledger", "out", "lateness", "id_key", "identity", "horizons", "alarms")
+KEYS = ("log", "rules", "ledger", "out", "lateness", "id_key", "identity", "horizons", "min_customers", "alarms")
 ALARM_KEYS = ("within", "at_least", "weeks")
-DEFAULTS: dict[str, Any] = {"lateness": "none", "id_key": "required"}
+DEFAULTS: dict[str, Any] = {"lateness": "none", "id_key": "required", "min_customers": MIN_CUSTOMERS}
 ALARM_DEFAULTS: dict[str, Any] = {"at_least": "1 point", "weeks": 8}
 REQUIRED, NONE = "required", "none"
 _NEEDED = 4
@@ -61,6 +62,8 @@ class Job:
         Table of people first seen under another id.
     horizons : tuple of str
         For the summary.
+    min_customers : int
+        What is published tells nothing of fewer people; 0 leaves nothing out.
     alarms : Alarms or None
         None: changes are not looked for.
     """
@@ -73,6 +76,7 @@ class Job:
     id_key: str = REQUIRED
     identity: Path | None = None
     horizons: tuple[str, ...] = ()
+    min_customers: int = MIN_CUSTOMERS
     alarms: Alarms | None = None
 
     @classmethod
@@ -106,6 +110,7 @@ class Job:
         paths = {key: file.parent / read(key, _text) for key in KEYS[:_NEEDED] if key in settings}
         lateness, id_key = read("lateness", _lateness), read("id_key", _id_key)
         horizons, alarms = read("horizons", _horizons), read("alarms", _alarms)
+        least = read("min_customers", few_limit)
         identity = file.parent / read("identity", _text) if "identity" in settings else None
         problems += _place_faults(paths)
         if problems:
@@ -113,7 +118,7 @@ class Job:
         rules = JourneyRules.from_toml(paths.pop("rules"))
         return cls(
             **paths, rules=rules, lateness_us=lateness, id_key=id_key, identity=identity, horizons=horizons,
-            alarms=alarms,
+            min_customers=least, alarms=alarms,
         )
 
 

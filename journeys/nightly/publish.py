@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import contextlib
 import json
+import math
 import os
 import shutil
 import tempfile
@@ -17,12 +18,16 @@ from typing import Any
 from journeys.checks import instant_text
 from journeys.errors import LogError
 from journeys.files import written_whole
+from journeys.markup import count_text
 from journeys.models.model import JourneyModel
 from journeys.nightly.history import history_rows, write_history
 from journeys.nightly.job import Job
 from journeys.nightly.manifest import Generation
-from journeys.questions.overview import Overview, summarise
+from journeys.questions.few_people import few_in_counts
+from journeys.questions.hidden import shown_counts
+from journeys.questions.overview import Overview
 from journeys.questions.plain_count import PlainCount, plain_count
+from journeys.questions.summarise import summarise
 from journeys.show.summary import summary_text, write_summary
 from journeys.tally.tally import Tally
 
@@ -78,7 +83,8 @@ def is_published(out: Path, generation: Generation) -> bool:
 def answers_of(job: Job, tally: Tally) -> Answers:
     """Return the summary of counts, with the horizons of a job, or why they cannot carry one yet."""
     try:
-        return Answers(tally, summarise(JourneyModel().fit(tally), job.horizons or None), None)
+        fit = JourneyModel().fit(tally)
+        return Answers(tally, summarise(fit, job.horizons or None, min_customers=job.min_customers), None)
     except LogError as fault:
         return Answers(tally, None, str(fault))
 
@@ -105,7 +111,8 @@ def publish(job: Job, generation: Generation, answers: Answers) -> Publication:
         If the folder cannot be written in.
     """
     tally, overview, why = answers.tally, answers.overview, answers.counts_only
-    plain = plain_count(tally)
+    few = few_in_counts(tally, job.min_customers) if job.min_customers > 1 else None
+    plain = plain_count(tally) if few is None else shown_counts(plain_count(tally), few)
     text = _counts_text(tally, plain, why or "") if overview is None else summary_text(overview)
     job.out.mkdir(parents=True, exist_ok=True)
     name = f"{instant_text(generation.as_of_us)[:_DAY]}-{generation.number:06d}"
@@ -121,7 +128,7 @@ def publish(job: Job, generation: Generation, answers: Answers) -> Publication:
     except BaseException:
         shutil.rmtree(part, ignore_errors=True)
         raise
-    rows = history_rows(generation, tally, plain, overview, why)
+    rows = history_rows(generation, tally, plain, overview, why, few)
     write_history(job.out / HISTORY, rows, generation.number)
     _point(job.out, name)
     _clear(job.out)
@@ -141,14 +148,22 @@ def _counts_text(tally: Tally, plain: PlainCount, why: str) -> str:
         ("undecided yet", plain.n_undecided), *((f"ended: {name}", n) for name, n in plain.n_by_outcome.items()),
     ]  # fmt: skip
     width = max(len(name) for name, _ in rows)
-    lines = "\n".join(f"{name:<{width}}  {n:>12,}" for name, n in rows)
-    return f"{tally.summary()}\n\n{lines}\n\nCounts only: {why}\n"
+    lines = "\n".join(f"{name:<{width}}  {count_text(n):>12}" for name, n in rows)
+    said = tally.summary() if math.isfinite(sum([*plain.n_by_outcome.values(), plain.n_undecided])) else "Counts"
+    return f"{said}\n\n{lines}\n\nCounts only: {why}\n"
 
 
 def _write_counts(folder: Path, text: str, plain: PlainCount) -> None:
     counts = {name: n for name, n in asdict(plain).items() if name != "n_by_outcome"} | {"ended": plain.n_by_outcome}
     (folder / "summary.md").write_text(text, encoding="utf-8")
-    (folder / "counts.json").write_text(json.dumps(counts, indent=1) + "\n", encoding="utf-8")
+    (folder / "counts.json").write_text(json.dumps(_nulls(counts), indent=1) + "\n", encoding="utf-8")
+
+
+def _nulls(counts: dict[str, Any]) -> dict[str, Any]:
+    """Return counts for machines: null for those that are left out."""
+    return {
+        name: _nulls(n) if isinstance(n, dict) else None if math.isnan(n) else n for name, n in counts.items()
+    }
 
 
 def _put_in_place(part: Path, target: Path) -> None:

@@ -2,33 +2,31 @@
 
 from __future__ import annotations
 
-from collections.abc import Collection
+import math
 from dataclasses import dataclass, field
 from functools import cached_property
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from journeys import checks
-from journeys.errors import LogError
 from journeys.kernels.phase_type import DENSE
-from journeys.markup import frame_table
+from journeys.markup import count_text, frame_table
 from journeys.models.fit import JourneyFit
-from journeys.models.what_if import WhatIf
-from journeys.questions.check import CheckResult, check
-from journeys.questions.comeback import ComebackResult, comeback
-from journeys.questions.compare import CompareResult, compare
-from journeys.questions.credit import CreditResult, credit
+from journeys.questions.check import CheckResult
+from journeys.questions.comeback import ComebackResult
+from journeys.questions.compare import CompareResult
+from journeys.questions.credit import CreditResult
 from journeys.questions.curve_result import PassageCurve
-from journeys.questions.first_passage import FirstPassageResult, first_passage
-from journeys.questions.moves import MovesResult, moves
-from journeys.questions.outcomes import OutcomesResult, outcomes
+from journeys.questions.few_people import FewPeople
+from journeys.questions.first_passage import FirstPassageResult
+from journeys.questions.moves import MovesResult
+from journeys.questions.outcomes import OutcomesResult
 from journeys.questions.passage_curve import passage_curve
-from journeys.questions.plain_count import PlainCount, plain_count
-from journeys.questions.removal import RemovalResult, removal
-from journeys.questions.sensitivity import SensitivityResult, sensitivity
-from journeys.questions.stages import StagesResult, stages
-from journeys.questions.time_to_convert import IN_THE_END, SO_FAR, TimeToConvertResult, time_to_convert
+from journeys.questions.plain_count import PlainCount
+from journeys.questions.removal import RemovalResult
+from journeys.questions.sensitivity import SensitivityResult
+from journeys.questions.stages import StagesResult
+from journeys.questions.time_to_convert import IN_THE_END, SO_FAR, TimeToConvertResult
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -38,10 +36,6 @@ KEY_COLUMNS = (
     "horizon", "basis", "check_name", "about",
 )  # fmt: skip
 CREDITED = ("even", "first", "last")
-# Of larger chains nobody reads every move, and looking at all pairs takes long.
-MOST_SHIFTED = 100
-# With more groups than these each is not fitted against all others.
-MOST_COMPARED = 30
 
 
 @dataclass(frozen=True, eq=False)
@@ -76,6 +70,8 @@ class Overview:
         Conversion by each column that journeys are grouped by.
     against : dict of str to CompareResult
         Each group against all others, for columns of few groups.
+    few : FewPeople or None
+        What was taken out of all of these because it describes too few people; None where nothing was to be.
     """
 
     fit: JourneyFit
@@ -93,11 +89,12 @@ class Overview:
     shifts: SensitivityResult | None = None
     groups: dict[str, TimeToConvertResult] = field(default_factory=dict)
     against: dict[str, CompareResult] = field(default_factory=dict)
+    few: FewPeople | None = None
 
     @cached_property
     def curve(self) -> PassageCurve | None:
-        """By when how many have converted, of all who come in; None for chains of more than 500 states."""
-        if self.fit.nodes.n_rows > DENSE:
+        """By when how many have converted, of all who come in; None for chains of more than 500 states, or if few."""
+        if self.fit.nodes.n_rows > DENSE or (self.few is not None and (self.few.log or self.few.conversion)):
             return None
         return passage_curve(self.fit, confidence_level=self.conversion.confidence_level)
 
@@ -165,7 +162,10 @@ class Overview:
                 end.flag,
             ),
         ]
-        return pd.DataFrame(rows, columns=["line", "n", "of", "estimate", "low", "high", "note"])
+        lines = pd.DataFrame(rows, columns=["line", "n", "of", "estimate", "low", "high", "note"])
+        if self.few is not None:
+            lines.loc[lines[["n", "of"]].isna().any(axis=1) & (lines.index < len(lines) - 1), "note"] = self.few.text
+        return lines
 
     def to_frame(self) -> pd.DataFrame:
         """Return every number of the summary, one tidy row each.
@@ -220,85 +220,13 @@ class Overview:
             "estimate": np.array(n, dtype=np.float64),
             "section": "counts",
             "basis": "log",
-            "flag": "",
+            "flag": ["" if math.isfinite(one) or self.few is None else self.few.text for one in n],
             **dict.fromkeys(("std_error", "low", "high", "confidence_level"), np.nan),
         }
 
     def __repr__(self) -> str:
         """Return one line."""
-        return f"<Overview: {self.plain.n_journeys:,} journeys of {self.plain.n_people:,} people>"
+        return f"<Overview: {count_text(self.plain.n_journeys)} journeys of {count_text(self.plain.n_people)} people>"
 
     def _repr_html_(self) -> str:
         return frame_table(self.reconciliation(), "How the expected share comes out of the plain one", n_keys=1)
-
-
-def summarise(
-    fit: JourneyFit, horizons: Collection[checks.Duration] | None = None, *, confidence_level: float = 0.95
-) -> Overview:
-    """Return the summary of a fit: counts, conversion, times, endings, moves, and the plain count beside.
-
-    Parameters
-    ----------
-    fit : JourneyFit
-        A fit to a tally.
-    horizons : collection of durations, optional
-        As in `time_to_convert`.
-    confidence_level : float
-        Between 0 and 1.
-
-    Returns
-    -------
-    Overview
-        Its `to_frame` is what the command writes.
-
-    Raises
-    ------
-    LogError
-        If the fit is a known chain without a log, or a what-if.
-    ValueError
-        If a horizon is not a duration, or the level is not between 0 and 1.
-
-    Examples
-    --------
-    >>> import pandas as pd
-    >>> from journeys.intake.rules import JourneyRules
-    >>> from journeys.models.model import JourneyModel
-    >>> from journeys.tally.count import count_log
-    >>> days = ["2025-01-01", "2025-01-03", "2025-01-02", "2025-01-02", "2025-01-05"]
-    >>> log = pd.DataFrame({"member": [1, 1, 2, 3, 3], "event": ["visit", "joined", "visit", "visit", "left"],
-    ...                     "happened": pd.to_datetime(days, utc=True)})
-    >>> rules = JourneyRules("member", "happened", "event", converted="joined", churned="left", silence="30d",
-    ...                      complete_history=True, as_of="2025-03-01")
-    >>> overview = summarise(JourneyModel().fit(count_log(log, rules)))
-    >>> overview.plain.n_converted, overview.plain.n_by_outcome["lapsed"]
-    (1, 1)
-    """
-    if fit.tally is None:
-        msg = "this chain was given, not fitted to a log; ask outcomes or first_passage instead"
-        raise LogError(msg)
-    if isinstance(fit, WhatIf):
-        msg = "this chain was changed by hand, so the log's counts do not go with it; wanted its fit, or ask compare"
-        raise LogError(msg)
-    level = checks.confidence_level(confidence_level)
-    tally, rules = fit.tally, fit.tally.rules
-    return Overview(
-        fit=fit,
-        plain=plain_count(fit.tally),
-        conversion=time_to_convert(fit, horizons, confidence_level=level),
-        endings=outcomes(fit, confidence_level=level),
-        steps=first_passage(fit, clock="steps", method="linearised", confidence_level=level),
-        days=first_passage(fit, clock="time", method="linearised", confidence_level=level),
-        matrix=moves(fit, confidence_level=level),
-        checks=check(fit, confidence_level=level),
-        back=None if rules.silence_us is None else comeback(tally, confidence_level=level),
-        funnel=stages(fit, confidence_level=level) if rules.stages else None,
-        touched=removal(fit, confidence_level=level) if rules.touchpoints else None,
-        credited=credit(fit, rule=CREDITED, confidence_level=level) if rules.touchpoints else None,
-        shifts=sensitivity(fit, confidence_level=level) if len(fit.states) <= MOST_SHIFTED else None,
-        groups={name: time_to_convert(fit, horizons, by=name, confidence_level=level) for name in rules.by},
-        against={
-            name: compare(fit, by=name, confidence_level=level)
-            for name in rules.by
-            if 1 < len(tally.split(name)) <= MOST_COMPARED
-        },
-    )

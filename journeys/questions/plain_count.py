@@ -10,7 +10,7 @@ from journeys.tally.tally import Tally
 
 @dataclass(frozen=True)
 class PlainCount:
-    """What a plain count of the log says.
+    """What a plain count of the log says; in a summary, NaN in the place of what describes too few people.
 
     Attributes
     ----------

@@ -7,7 +7,7 @@ import math
 from journeys.markup import short_name
 from journeys.questions.overview import Overview
 from journeys.show.parts import Lines, Part, Section, Table
-from journeys.show.rows import parts_of, rows_of, tally_of
+from journeys.show.rows import left_out_words, parts_of, rows_of, tally_of
 from journeys.show.state_sections import FROM_STATE, WIDEST_MATRIX
 from journeys.show.words import FLAG_MEANINGS, length_words, percent
 
@@ -35,7 +35,10 @@ def beliefs(overview: Overview) -> Section:
         ratio = tally.days / (silence / 86_400e6)
         shaky = "; under one and a half, times are shaky." if ratio < 1.5 else "."
         notes.append(f"The log is {ratio:.1f} silences of {length_words(silence)} long{shaky}")
-    notes.append(f"The start of {percent(plain.n_sure / plain.n_journeys)} of the journeys was seen.")
+    if math.isfinite(plain.n_sure):
+        notes.append(f"The start of {percent(plain.n_sure / plain.n_journeys)} of the journeys was seen.")
+    if left_out := left_out_words(overview):
+        notes.append(left_out)
     again = tally.record.n("began_after_outcome")
     if again > OFTEN_AGAIN * plain.n_journeys:
         notes.append(

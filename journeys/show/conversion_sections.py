@@ -6,8 +6,9 @@ import math
 
 import numpy as np
 
-from journeys.markup import short_name
+from journeys.markup import LEFT_OUT, count_text, short_name
 from journeys.questions.overview import Overview
+from journeys.questions.plain_count import PlainCount
 from journeys.questions.time_to_convert import IN_THE_END
 from journeys.show.parts import Curve, Dot, Dots, Lines, Part, Section, Table, Words
 from journeys.show.rows import (
@@ -28,8 +29,9 @@ def opening(overview: Overview) -> str:
     plain = overview.plain
     end = rows_of(overview.conversion.to_frame(), measure="converted", horizon=IN_THE_END)[0]
     return (
-        f"{converted_words(overview)} so far {plain.n_converted:,} of {plain.n_journeys:,} journeys of "
-        f"{plain.n_people:,} people, {percent(plain.n_converted / plain.n_journeys)}; {plain.n_undecided:,} undecided "
+        f"{converted_words(overview)} so far {count_text(plain.n_converted)} of {count_text(plain.n_journeys)} "
+        f"journeys of {count_text(plain.n_people)} people, {_of_all(plain.n_converted, plain)}; "
+        f"{count_text(plain.n_undecided)} undecided "
         f"yet; expected in the end {share(end, end['flag'])}"
     )
 
@@ -55,8 +57,8 @@ def the_log(overview: Overview) -> Section:
     """Return what the numbers rest on: dates, people, journeys, and what was left out."""
     tally, plain = tally_of(overview), overview.plain
     size = (
-        f"{plain.n_journeys:,} journeys of {plain.n_people:,} people; the start of {plain.n_sure:,} was seen, "
-        f"{plain.n_undecided:,} are {UNDECIDED}."
+        f"{count_text(plain.n_journeys)} journeys of {count_text(plain.n_people)} people; the start of "
+        f"{count_text(plain.n_sure)} was seen, {count_text(plain.n_undecided)} are {UNDECIDED}."
     )
     found = rows_of(tally.findings)
     rows = [(row["code"], row["column"], f"{row['n']:,}", row["message"]) for row in found]
@@ -79,10 +81,10 @@ def endings(overview: Overview) -> Section:
     for outcome, n in plain.n_by_outcome.items():
         row = rows_of(frame, start_state="entry", outcome=outcome)[0]
         name = outcome_words(outcome, rules)
-        rows.append((name, f"{n:,}", percent(n / plain.n_journeys), share(row, row["flag"]), row["flag"]))
+        rows.append((name, count_text(n), _of_all(n, plain), share(row), row["flag"]))
         dots.append(share_dot(name, row))
-    rows.append((UNDECIDED, f"{plain.n_undecided:,}", percent(plain.n_undecided / plain.n_journeys), "", ""))
-    rows.append(("all journeys", f"{plain.n_journeys:,}", percent(1.0), "", ""))
+    rows.append((UNDECIDED, count_text(plain.n_undecided), _of_all(plain.n_undecided, plain), "", ""))
+    rows.append(("all journeys", count_text(plain.n_journeys), percent(1.0), "", ""))
     caption = "Journeys by how they end"
     columns = ["outcome", "journeys so far", "share so far", "expected in the end", "note"]
     picture = Dots("Expected in the end, of all who come in", "% of journeys", dots)
@@ -124,6 +126,10 @@ def _curve(overview: Overview) -> Curve | None:
         median=float(half["estimate"]),
         median_words=f"half by day {words}" if math.isfinite(half["estimate"]) else "",
     )
+
+
+def _of_all(n: float, plain: PlainCount) -> str:
+    return percent(n / plain.n_journeys) or LEFT_OUT
 
 
 def share_dot(label: str, row: Row) -> Dot:

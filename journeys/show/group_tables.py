@@ -7,13 +7,14 @@ from collections.abc import Sequence
 from typing import TYPE_CHECKING, Any
 
 from journeys.checks import duration_us
-from journeys.markup import short_name
+from journeys.markup import LEFT_OUT, short_name
 from journeys.questions.overview import Overview
 from journeys.questions.time_to_convert import IN_THE_END, SO_FAR
 from journeys.show.conversion_sections import share_dot
 from journeys.show.parts import Dot, Dots, Part, Section, Table, Words
 from journeys.show.rows import Row, amount, notes_of, points, rows_of, share, tally_of
 from journeys.show.words import length_words
+from journeys.tally.tally import Tally
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -86,9 +87,10 @@ def wide_groups(overview: Overview) -> pd.DataFrame | None:
         parts = tally_of(overview).split(column)
         p_values = _p_values(overview, column)
         for (value,), part in parts.items():
+            size = _size(overview, column, value, part)
             row: dict[str, Any] = {
-                "group_column": column, "group": str(value), "n_journeys": part.n_journeys,
-                "people_at_least": part.n_people,
+                "group_column": column, "group": str(value), "n_journeys": size and size.n_journeys,
+                "people_at_least": size and size.n_people,
             }  # fmt: skip
             mine = rows_of(frame[frame[column] == value])
             for one in mine:
@@ -98,7 +100,7 @@ def wide_groups(overview: Overview) -> pd.DataFrame | None:
             row["differs_p_value"] = p_values.get(value, math.nan)
             row["flag"] = "; ".join(dict.fromkeys(str(one["flag"]) for one in mine if one["flag"]))
             rows.append(row)
-    whole = pd.DataFrame(rows)
+    whole = pd.DataFrame(rows).astype({"n_journeys": "Int64", "people_at_least": "Int64"})
     last = ["differs_p_value", "flag"]
     return whole[[*(name for name in whole if name not in last), *last]]
 
@@ -128,7 +130,8 @@ def _group_parts(overview: Overview, column: str) -> list[Part]:
     rows, dots = [], []
     for value, mine in by_value.items():
         name = short_name(str(value))
-        cells = [name, f"{parts[value,].n_journeys:,}"]
+        size = _size(overview, column, value, parts[value,])
+        cells = [name, LEFT_OUT if size is None else f"{size.n_journeys:,}"]
         cells += [_cell(mine, "converted", horizon, "log") for horizon in horizons]
         cells += [_cell(mine, "converted", IN_THE_END, "model"), _cell(mine, "median_days", IN_THE_END, "model")]
         other = differs.get(value)
@@ -142,6 +145,12 @@ def _group_parts(overview: Overview, column: str) -> list[Part]:
     table = Table(f"Conversion by {short_name(column)}", columns, rows)
     caption = f"Expected in the end, by {short_name(column)}"
     return [table, Dots(caption, "% of those who come in", dots, from_zero=False)]
+
+
+def _size(overview: Overview, column: str, value: Any, part: Tally) -> Tally | None:
+    """Return the part of the tally that a group is, None where its size is not to be told."""
+    hidden = overview.few is not None and (overview.few.log or value in overview.few.groups[column].size)
+    return None if hidden else part
 
 
 def _dot(name: str, rows: list[Row]) -> Dot:

@@ -8,7 +8,7 @@ from pathlib import Path
 
 from journeys.checks import Duration
 from journeys.models.fit import JourneyFit
-from journeys.questions.overview import summarise
+from journeys.questions.summarise import MIN_CUSTOMERS, summarise
 
 
 def write_report(
@@ -17,6 +17,7 @@ def write_report(
     horizons: Collection[Duration] | None = None,
     *,
     confidence_level: float = 0.95,
+    min_customers: int = MIN_CUSTOMERS,
 ) -> list[Path]:
     """Write the whole summary of a fit into a folder: a page to read and to send, and every number of it as a table.
 
@@ -30,6 +31,8 @@ def write_report(
         Such as ["7d", "30d"]: times within which the share converted is told; default: as in `time_to_convert`.
     confidence_level : float
         Between 0 and 1.
+    min_customers : int
+        As in `summarise`: numbers that describe fewer people are left out; 0 leaves none out.
 
     Returns
     -------
@@ -43,7 +46,7 @@ def write_report(
     LogError
         If the fit is a known chain without a log, or a what-if.
     ValueError
-        If a horizon is not a duration, or the level is not between 0 and 1.
+        If a horizon is not a duration, the level is not between 0 and 1, or `min_customers` not from 0 to 200.
     OSError
         If the folder cannot be made or written in.
 
@@ -66,4 +69,5 @@ def write_report(
     """
     from journeys.show.summary import write_summary
 
-    return write_summary(summarise(fit, horizons, confidence_level=confidence_level), folder)
+    overview = summarise(fit, horizons, confidence_level=confidence_level, min_customers=min_customers)
+    return write_summary(overview, folder)

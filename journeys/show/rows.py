@@ -7,7 +7,9 @@ from collections.abc import Hashable, Mapping, Sequence
 from typing import TYPE_CHECKING, Any
 
 from journeys.checks import duration_us
+from journeys.markup import LEFT_OUT, count_text
 from journeys.questions.check_rows import DIFFERS, NOTE
+from journeys.questions.few_people import is_hidden
 from journeys.questions.overview import Overview
 from journeys.questions.time_to_convert import IN_THE_END, SO_FAR
 from journeys.show.words import amount_with_interval, length_words, outcome_words, percent, share_with_interval
@@ -17,6 +19,16 @@ if TYPE_CHECKING:
     import pandas as pd
 
 Row = Mapping[Hashable, Any]
+
+
+def left_out_words(overview: Overview) -> str:
+    """Return what a reader should know of the numbers that are not there; nothing where all are."""
+    if overview.few is None or not overview.few.anything:
+        return ""
+    return (
+        f"{LEFT_OUT} stands for numbers about fewer than {overview.few.least} people, and for others beside them that "
+        "would tell what they are."
+    )
 
 
 def tally_of(overview: Overview) -> Tally:
@@ -46,11 +58,15 @@ def rows_of(frame: pd.DataFrame | Sequence[Row], **keys: str) -> list[Row]:
 
 def share(row: Row, flag: str | None = None) -> str:
     """Return the share in a row with its interval."""
+    if is_hidden(row["flag"] if flag is None else flag):
+        return LEFT_OUT
     return share_with_interval(row["estimate"], row["low"], row["high"], row["flag"] if flag is None else flag)
 
 
 def amount(row: Row) -> str:
     """Return the number of steps or days in a row with its interval."""
+    if is_hidden(row["flag"]):
+        return LEFT_OUT
     return amount_with_interval(row["estimate"], row["low"], row["high"])
 
 
@@ -64,11 +80,13 @@ def whole_amount(row: Row) -> str:
 
 def points(row: Row) -> str:
     """Return a change of a share in a row in percentage points, with its interval."""
-    return change({name: 100 * row[name] for name in ("estimate", "low", "high")})
+    return change({**row, **{name: 100 * row[name] for name in ("estimate", "low", "high")}})
 
 
 def change(row: Row) -> str:
     """Return a change in a row, its sign always written, with its interval."""
+    if is_hidden(row["flag"]):
+        return LEFT_OUT
     estimate, low, high = (row[name] for name in ("estimate", "low", "high"))
     if not math.isfinite(estimate):
         return ""
@@ -80,7 +98,9 @@ def change(row: Row) -> str:
 
 def count(row: Row) -> str:
     """Return how many of how many a row counts."""
-    return "" if math.isnan(row["n"]) else f"{int(row['n']):,} of {int(row['of']):,}"
+    if math.isnan(row["n"]) and not is_hidden(row["note"]):
+        return ""
+    return f"{count_text(row['n'])} of {count_text(row['of'])}"
 
 
 def notes_of(*flags: str) -> str:
@@ -115,7 +135,8 @@ def time_lines(overview: Overview) -> list[str]:
         told_as = whole_amount if unit == "steps" else amount
         parts = (("half take at most", told_as(median)), ("90 % at most", told_as(most)), ("the mean is", amount(mean)))
         said = [f"{start} {number}" for start, number in parts if number]
-        line = f"Of those who convert, {', '.join(said)} {words}" if said else f"{unit.capitalize()}: no answer"
+        known = said and not is_hidden(mean["flag"])
+        line = f"Of those who convert, {', '.join(said)} {words}" if known else f"{unit.capitalize()}: no answer"
         notes = notes_of(*(row["flag"] for row in (median, most, mean)))
         told.append(line + (f"; {notes}" if notes else ""))
     return told
@@ -144,7 +165,7 @@ def comeback_lines(overview: Overview) -> list[str]:
     for after in dict.fromkeys(frame["after"]):
         mine = frame[(frame["after"] == after) & (frame["measure"] == "returned")]
         so_far = rows_of(mine, horizon=SO_FAR)[0]
-        if not so_far["n_absences"]:
+        if is_hidden(so_far["flag"]) or not so_far["n_absences"]:
             continue
         ended = outcome_words(after, rules)
         line = f"Of those {ended}" if after == "lapsed" else f"After {ended}"

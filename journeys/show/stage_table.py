@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from journeys.markup import short_name
+from journeys.markup import LEFT_OUT, short_name
+from journeys.questions.few_people import is_hidden
 from journeys.questions.overview import Overview
 from journeys.show.rows import amount, rows_of, share, tally_of
 from journeys.show.words import UNDECIDED, outcome_words, percent
@@ -22,9 +23,9 @@ def stage_rows(overview: Overview) -> list[tuple[str, str, str, str, str]]:
         names = ("reached", "of_stage_before", "median_days")
         reached, before, days = (next(iter(rows_of(mine, measure=name)), None) for name in names)
         went = [
-            f"{_name(str(row['outcome']), overview)} {percent(row['estimate'])}"
+            f"{_name(str(row['outcome']), overview)} {percent(row['estimate']) or LEFT_OUT}"
             for row in rows_of(mine, measure="went")
-            if row["estimate"] > 0
+            if row["estimate"] > 0 or is_hidden(row["flag"])
         ]
         told.append((
             short_name(str(stage)),

@@ -8,6 +8,7 @@ from dataclasses import replace
 
 from journeys.checks import duration_us
 from journeys.markup import short_name
+from journeys.questions.few_people import is_hidden
 from journeys.questions.overview import Overview
 from journeys.questions.stage_rows import CONVERTED
 from journeys.questions.time_to_convert import IN_THE_END, SO_FAR
@@ -34,7 +35,8 @@ def stages(overview: Overview) -> list[Section]:
     dots = [share_dot(short_name(str(row["stage"])), row) for row in rows_of(frame, measure="of_stage_before")]
     picture = Dots("Of those who reached the stage before", "% of the stage before, by the log", dots)
     whole = rows_of(frame, stage=CONVERTED, measure="reached")
-    lead = [Words(f"{share(row)} pass all stages in this order and convert." )for row in whole if share(row)]
+    lead = [Words(f"{share(row)} pass all stages in this order and convert." )for row in whole
+            if share(row) and not is_hidden(row["flag"])]  # fmt: skip
     return [Section("Stages", [*lead, table, picture])]
 
 
@@ -52,12 +54,15 @@ def from_each_state(overview: Overview) -> Section:
         name = short_name(state)
         rows.append((name, share(chance), whole_amount(step), amount(most), amount(day), amount(mean), notes))
         dots.append(share_dot(name, chance))
-    likely = max(rows_of(list(by_state[0].values()), measure="probability")[1:], key=lambda row: row["estimate"])
-    lead = f"Conversion is likeliest from {short_name(likely['start_state'])}: {share(likely)}."
+    chances = rows_of(list(by_state[0].values()), measure="probability")[1:]
+    told = [row for row in chances if not is_hidden(row["flag"])]
+    likely = max(told, key=lambda row: row["estimate"], default=None)
+    lead = f"Conversion is likeliest from {short_name(likely['start_state'])}: {share(likely)}." if likely else ""
     columns = ["from", "converts in the end", "median steps, if so", "mean steps", "median days, if so", "mean days"]
     table = Table("Conversion from entry and from every state, by the model", [*columns, "note"], rows)
     picture = [Dots("Converts in the end, from each state", "% of those who are there", dots)]
-    return Section("From each state", [Words(lead), table, *(picture if len(dots) <= MOST_DOTS else ())])
+    shown = picture if len(dots) <= MOST_DOTS else []
+    return Section("From each state", [*([Words(lead)] if lead else []), table, *shown])
 
 
 def endings_from_each_state(overview: Overview) -> Section:
@@ -106,7 +111,7 @@ def who_comes_back(overview: Overview) -> list[Section]:
     for after in dict.fromkeys(row["after"] for row in frame):
         mine = {row["horizon"]: row for row in rows_of(frame, after=after, measure="returned")}
         half = rows_of(frame, after=after, measure="median_days")
-        if not mine[SO_FAR]["n_absences"]:
+        if is_hidden(mine[SO_FAR]["flag"]) or not mine[SO_FAR]["n_absences"]:
             continue
         name, absences = outcome_words(after, rules), f"{mine[SO_FAR]['n_absences']:,.0f}"
         told = (percent(mine[SO_FAR]["estimate"]), *(share(mine[one]) for one in horizons))
@@ -124,4 +129,4 @@ def who_comes_back(overview: Overview) -> list[Section]:
 
 
 def _flags(rows: Iterable[Row]) -> list[str]:
-    return [row["flag"] for row in rows if not math.isnan(row["estimate"])]
+    return [row["flag"] for row in rows if not math.isnan(row["estimate"]) or is_hidden(row["flag"])]

@@ -20,6 +20,7 @@ from journeys.show.rows import (
     comeback_lines,
     count,
     horizon_rows,
+    left_out_words,
     rows_of,
     share,
     span_words,
@@ -49,6 +50,8 @@ def summary_text(overview: Overview) -> str:
         stages = [("", "reached", "of the stage before", "median days"), *(row[:4] for row in stage_rows(overview))]
         parts.append(f"Stages, in this order\n{text_table(stages, width=0)}")
     parts.append(f"Whether to believe the model\n{text_table(check_rows(overview))}")
+    if left_out := left_out_words(overview):
+        parts.append(_wrapped(left_out))
     return "\n\n".join(parts) + "\n"
 
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 
 from journeys.markup import short_name
+from journeys.questions.few_people import is_hidden
 from journeys.questions.overview import CREDITED, Overview
 from journeys.show.conversion_sections import share_dot
 from journeys.show.parts import Dots, Lines, Section, Table, Words
@@ -27,13 +28,16 @@ def touchpoints(overview: Overview) -> list[Section]:
         name = str(row["touchpoint"])
         mine = {one["rule"]: share(one) for one in rows_of(shares, touchpoint=name)}
         held = "" if math.isnan(row["order_held"]) else f"{row['order_held']:.0f} of 100"
-        told = (share(row), percent(row["share_in_log"]), held)
+        told = (share(row), percent(row["share_in_log"]) or share(row) * is_hidden(row["flag"]), held)
         rows.append((short_name(name), *told, *(mine.get(rule, "") for rule in CREDITED), row["flag"]))
-    first = frame[0]
-    lead = Words(
-        f"Of those who convert, {share(first)} passed {short_name(str(first['touchpoint']))} by the model, "
-        f"{percent(first['share_in_log'])} by the log."
-    )
+    lead = [
+        Words(
+            f"Of those who convert, {share(row)} passed {short_name(str(row['touchpoint']))} by the model, "
+            f"{percent(row['share_in_log'])} by the log."
+        )
+        for row in frame
+        if not is_hidden(row["flag"])
+    ][:1]
     columns = ["touchpoint", "passed here, by the model", "by the log", "stayed ahead of the next"]
     heads = [*columns, *(f"credit, {rule}" for rule in CREDITED), "note"]
     table = Table("Of those who convert, who passed here, and what adds up", heads, rows)
@@ -41,7 +45,7 @@ def touchpoints(overview: Overview) -> list[Section]:
     unit = "% of those who convert: an upper limit of what could be lost"
     picture = [Dots("Passed here, by the model", unit, dots)] if len(dots) <= MOST_DOTS else []
     cautions = Lines(list(dict.fromkeys((*touched.cautions, *credited.cautions))))
-    return [Section("Touchpoints", [lead, table, *picture, cautions])]
+    return [Section("Touchpoints", [*lead, table, *picture, cautions])]
 
 
 def one_point_more(overview: Overview) -> list[Section]:
@@ -49,7 +53,7 @@ def one_point_more(overview: Overview) -> list[Section]:
     if overview.shifts is None:
         return []
     frame = rows_of(overview.shifts.to_frame())
-    told = rows_of(frame, measure="reached")[:MOST_MOVES]
+    told = [row for row in rows_of(frame, measure="reached") if not is_hidden(row["flag"])][:MOST_MOVES]
     if not told or not math.isfinite(told[0]["estimate"]):
         return []
     rules = tally_of(overview).rules
