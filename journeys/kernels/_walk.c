@@ -394,6 +394,12 @@ EXPORT void journeys_bucket_major(int64_t n, const uint64_t *key, const uint64_t
     }
 }
 
+/* How large the struct is that this library was built for, held against that of compiled.py. */
+EXPORT int64_t journeys_walk_size(void)
+{
+    return (int64_t)sizeof(Walk);
+}
+
 /* A module without functions: it is there so that the build puts the library where Python finds it. */
 static struct PyModuleDef definition = {PyModuleDef_HEAD_INIT, "_walk", NULL, -1, NULL, NULL, NULL, NULL, NULL};
 

@@ -53,6 +53,10 @@ def _library() -> Any:
     if found is None or found.origin is None:
         return None
     library = ctypes.CDLL(found.origin)
+    size = getattr(library, "journeys_walk_size", None)
+    if size is None or size() != ctypes.sizeof(_Walk):
+        # Built from other sources than these: it would write where it must not.
+        return None
     library.journeys_walk.argtypes = [ctypes.POINTER(_Walk)]
     library.journeys_walk.restype = ctypes.c_int64
     number, address = ctypes.c_int64, ctypes.c_void_p
