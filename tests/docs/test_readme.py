@@ -273,6 +273,42 @@ def test_names_only_what_python_has():
         assert name in jn.__all__, name
 
 
+def test_the_query_of_a_colleague_gives_what_is_said(monkeypatch: pytest.MonkeyPatch):
+    duckdb = pytest.importorskip("duckdb")
+    monkeypatch.chdir(REPO)
+    (query,) = blocks(README, "sql")
+    people, _, percent, days = duckdb.connect().sql(query).fetchall()[0]
+    assert f"It says {percent:.1f} % and {days:.1f} days." in README
+    assert f"{people:,} people" in README
+
+
+def test_its_numbers_of_the_club_are_those_of_today():
+    """The tables of the section on SQL, of silences and of `repeats`."""
+    rules = jn.JourneyRules.from_toml(REPO / "demo_data" / "rules.toml")
+    log = REPO / "demo_data" / "club_log.parquet"
+    tally = jn.tally(log, rules)
+    fit = jn.JourneyModel().fit(tally)
+    lines = jn.summarise(fit).reconciliation().itertuples()
+    so_far, decided, undecided, unsure, expected = lines
+    for one in (so_far, decided):
+        assert f"| {int(one.n):,} of {int(one.of):,} | {100 * one.estimate:.1f} %" in README
+    for one in (undecided, unsure):
+        assert f"{int(one.n):,} journeys" in README
+    share = f"{100 * expected.estimate:.1f} % ({100 * expected.low:.1f}–{100 * expected.high:.1f})"
+    assert f"| {share}: each" in README
+    joined = tally.table("journeys").query("outcome == 'joined' and sure")
+    assert f"joined so far | {joined.elapsed.sum() / joined.n.sum() / 86_400e6:.1f}: too short" in README
+    days = jn.time_to_convert(fit).to_frame().query("measure == 'days'").iloc[0]
+    assert f"by the model | {days.estimate:.1f} ({days.low:.1f}–{days.high:.1f}): too long" in README
+    by_log = jn.check(fit).to_frame().set_index("check_name").loc["days to convert", "compared"]
+    within, log_days = re.search(r"within (\d+ days): .* log ([\d.]+) days", by_log).groups()  # type: ignore[union-attr]
+    assert f"within {within}, by the log (`jn.check`) | {log_days}: undecided" in README
+    for one in jn.audit(log, rules).silences.itertuples():
+        shares = (one.came_back, one.soon_back, one.conversion)
+        cells = " | ".join(f"{100 * share:.1f} %" for share in shares)
+        assert f"| {one.silence} | {one.n_silent:,} | {cells} |" in README
+
+
 def test_ci_runs_the_test_commands_of_the_readme(tmp_path: Path):
     """`.ci/run --show` prints the commands it found, without running them."""
     assert os.access(CI, os.X_OK)
