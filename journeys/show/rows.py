@@ -85,7 +85,7 @@ def points(row: Row) -> str:
 
 def change(row: Row) -> str:
     """Return a change in a row, its sign always written, with its interval."""
-    if is_hidden(row["flag"]):
+    if is_hidden(row.get("flag", "")):
         return LEFT_OUT
     estimate, low, high = (row[name] for name in ("estimate", "low", "high"))
     if not math.isfinite(estimate):
