@@ -95,12 +95,12 @@ def test_killed_at_any_moment(stage: Stage, kill: Callable[[Stage, float | None,
     kill(stage, None, False)
     whole = time.monotonic() - began
     n_killed = 0
-    for moment in rng.random(14):
+    for moment in rng.random(7):
         stage.again()
         n_killed += kill(stage, float(moment) * whole, False)
         with without_summaries():
             stage.check(published=False)
-    assert n_killed > 5
+    assert n_killed > 2
 
 
 def test_killed_while_it_publishes(kill: Callable[[Stage, float | None, bool], bool]):
