@@ -58,7 +58,8 @@ def history_rows(
         frame = overview.groups[column].to_frame()  # type: ignore[union-attr]
         for (value,), part in tally.split(column).items():
             counts = _counts(plain_count(part)) | ({} if few is None else dict.fromkeys(_left_out(few, column, value)))
-            row = stamps | {"by": column, "group": str(value)} | counts
+            # How many people a group has is known for the whole only.
+            row = stamps | {"by": column, "group": str(value)} | counts | {"n_people": None}
             found.append(row | _estimates(frame[frame[column] == value], why))
     return found
 

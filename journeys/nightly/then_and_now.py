@@ -171,7 +171,9 @@ def _why(then: Generation, now: Generation, was: PlainCount, is_: PlainCount) ->
             f"before ({then.n_too_late:,} by then) are in the number now"
         )
     elif now.n_too_late != then.n_too_late:
-        lines.append(f"{now.n_too_late - then.n_too_late:,} rows have come too late since and are in neither number")
+        n = now.n_too_late - then.n_too_late
+        rows = "1 row has come too late since and is" if n == 1 else f"{n:,} rows have come too late since and are"
+        lines.append(f"{rows} in neither number")
     if now.rules != then.rules:
         lines.append(f"the rules are others: {then.rules} then, {now.rules} now (checksums)")
     return tuple(lines)
