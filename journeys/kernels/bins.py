@@ -96,8 +96,8 @@ def bin_of(duration_us: NDArray[np.int64], edges: NDArray[np.int64] | None) -> N
     # taken off goes beyond what rounding to a floating-point number can add.
     at_least = np.maximum(duration_us, 0)
     at_least -= at_least >> _EXACT_BITS
-    bins = lowest_bins(edges.tobytes())[at_least.astype(np.float64).view(np.int64) >> SUB_OCTAVE_SHIFT]
-    bins = bins.astype(np.int64)
+    lowest = lowest_bins(edges.tobytes())[at_least.astype(np.float64).view(np.int64) >> SUB_OCTAVE_SHIFT]
+    bins: NDArray[np.int64] = lowest.astype(np.int64)
     while (above := duration_us > edges[bins]).any():
         bins += above
     return bins
