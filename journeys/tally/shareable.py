@@ -84,7 +84,7 @@ def shareable(tally: Tally, min_customers: int = 10) -> pd.DataFrame:
     >>> import pandas as pd
     >>> from journeys.intake.rules import JourneyRules
     >>> from journeys.tally.count import count_log
-    >>> log = pd.DataFrame({"member": range(120), "event": ["visit"] * 117 + ["lecture"] * 3,
+    >>> log = pd.DataFrame({"member": range(120), "event": ["visit"] * 117 + ["workshop"] * 3,
     ...                     "happened": pd.Timestamp("2025-03-01", tz="UTC")})
     >>> rules = JourneyRules("member", "happened", "event", silence="30d", log_start="2025-01-01", as_of="2025-06-01")
     >>> shareable(count_log(log, rules)).loc[lambda frame: frame.what == "moves", ["state", "next_state", "n"]]

@@ -18,7 +18,7 @@ def log(seed: int) -> pd.DataFrame:
     n = 3_000
     frame = pd.DataFrame({
         "member": rng.integers(0, 900, n),
-        "event": rng.choice(["visit", "price", "basket", "lecture", "joined"], n, p=[0.5, 0.3, 0.145, 0.005, 0.05]),
+        "event": rng.choice(["visit", "price", "basket", "workshop", "joined"], n, p=[0.5, 0.3, 0.145, 0.005, 0.05]),
         "happened": pd.Timestamp("2025-01-01", tz="UTC") + pd.to_timedelta(rng.uniform(0, 150, n), unit="D"),
     })  # fmt: skip
     frame["town"] = np.select([frame["member"] < 6, frame["member"] < 40], ["Yerseke", "Goes"], "Utrecht")
