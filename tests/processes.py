@@ -94,7 +94,13 @@ def kinds_of(process: str) -> tuple[Kind, ...]:
 
 
 def simulate(
-    process: str, n_customers: int, silences: float, rng: np.random.Generator, *, running: bool = False
+    process: str,
+    n_customers: int,
+    silences: float,
+    rng: np.random.Generator,
+    *,
+    running: bool = False,
+    coming: float = 1.0,
 ) -> pd.DataFrame:
     """Return a log of so many customers: customer, time, event.
 
@@ -105,24 +111,29 @@ def simulate(
     n_customers : int
         How many.
     silences : float
-        Length of the log, over which customers come evenly.
+        Length of the log.
     rng : numpy.random.Generator
         Source of chance.
     running : bool
         Customers have come for `BEFORE_SILENCES` already when the log begins; what happened before is cut off.
+    coming : float
+        The first share of the log in which customers come for the first time, evenly. Where it is small, next to all
+        journeys are over when the log ends.
     """
     if not running:
-        return _named(_some(process, n_customers, 0.0, silences, rng), process, rng)
+        return _named(_some(process, n_customers, 0.0, silences, rng, coming), process, rng)
     parts, n_found, first = [], 0, 0
     while n_found < n_customers:
-        part = _some(process, 2 * n_customers, BEFORE_SILENCES, silences, rng)
+        part = _some(process, 2 * n_customers, BEFORE_SILENCES, silences, rng, coming)
         parts.append(part.assign(customer=part["customer"] + first))
         n_found, first = n_found + part["customer"].nunique(), first + 2 * n_customers
     log = pd.concat(parts)
     return _named(log[log["customer"] <= np.sort(log["customer"].unique())[n_customers - 1]], process, rng)
 
 
-def _some(process: str, n_customers: int, before: float, silences: float, rng: np.random.Generator) -> pd.DataFrame:
+def _some(
+    process: str, n_customers: int, before: float, silences: float, rng: np.random.Generator, coming: float
+) -> pd.DataFrame:
     """Return what customers who come so long before the log, or while it goes on, do in it."""
     kinds = kinds_of(process)
     n_each = rng.geometric(1 - COMING_AGAIN, n_customers)
@@ -135,7 +146,7 @@ def _some(process: str, n_customers: int, before: float, silences: float, rng: n
         again = (rng.random(len(customer)) < COPYING) & (number < n_each[head])
         source = np.where(again, begin[head] + number, np.arange(len(customer)))
         path, stay = path[source], stay[source]
-    first = rng.uniform(-before, silences, n_customers) * SILENCE_DAYS
+    first = rng.uniform(-before, coming * silences, n_customers) * SILENCE_DAYS
     began = _begins(path, stay, customer, number, first, rng)
     time = began[:, None] + np.concatenate([np.zeros((len(stay), 1)), np.cumsum(stay, axis=1)], axis=1)[:, :-1]
     there = (path >= 0) & (time >= 0) & (time <= silences * SILENCE_DAYS)

@@ -49,13 +49,14 @@ class Task:
     customers: int
     running: bool
     groups: bool = False
+    coming: float = 1.0
 
 
 def of_task(task: Task) -> dict[str, float]:
     """Simulate one log, with luck of its own, and return p-values by test, NaN where it was not run."""
     at = processes.PROCESSES.index(task.process)
     rng = np.random.default_rng([task.seed, at, round(10 * task.silences), task.customers, task.number])
-    log = processes.simulate(task.process, task.customers, task.silences, rng, running=task.running)
+    log = processes.simulate(task.process, task.customers, task.silences, rng, running=task.running, coming=task.coming)
     settings: dict[str, object] = {"complete_history": not task.running}
     if task.groups:
         side = rng.integers(0, 2, int(log["customer"].max()) + 1)
@@ -117,6 +118,9 @@ def main(argv: Sequence[str] | None = None) -> int:
     parser.add_argument(
         "--running", action="store_true", help="customers came before the log; their past is cut off"
     )
+    parser.add_argument(
+        "--coming", type=float, default=1.0, help="first share of the log in which customers come"
+    )
     parser.add_argument("--groups", action="store_true", help="customers are of two sides that do not differ")
     parser.add_argument("--jobs", type=int, default=2)
     parser.add_argument("--seed", type=int, default=20250201)
@@ -126,14 +130,15 @@ def main(argv: Sequence[str] | None = None) -> int:
             began, rows = time.perf_counter(), {}
             for process in asked.process:
                 tasks = [
-                    Task(asked.seed, process, silences, number, customers, asked.running, asked.groups)
+                    Task(asked.seed, process, silences, number, customers, asked.running, asked.groups, asked.coming)
                     for number in range(asked.logs)
                 ]
                 rows[process] = rejected(list(studied(tasks, asked.jobs)))
+            before = ", running before" if asked.running else ""
+            coming = f", customers coming in the first {asked.coming:.0%}" if asked.coming < 1 else ""
             print(
-                f"\n{asked.logs:,} logs of {customers:,} customers, {silences:g} silences long"
-                f"{', running before' if asked.running else ''}: % below {100 * ALPHA:g} %; "
-                f"{time.perf_counter() - began:.0f} s\n{told(rows)}",
+                f"\n{asked.logs:,} logs of {customers:,} customers, {silences:g} silences long{before}{coming}: "
+                f"% below {100 * ALPHA:g} %; {time.perf_counter() - began:.0f} s\n{told(rows)}",
                 flush=True,
             )
     return 0
