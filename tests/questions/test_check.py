@@ -253,6 +253,8 @@ def test_ties_undecided_and_unsure_are_noted() -> None:
     assert "in an order that only the file knows" in found["ties"]
     assert found["undecided journeys"].startswith("note: ")
     assert found["unsure entries"].startswith("note: where journeys begin is known of only")
+    # whoever has two decided journeys by now did not lapse twice, so they are a choice of customers
+    assert found["journeys of one customer"] == "not run: in a log of under two silences nobody can have lapsed twice"
 
 
 # --- what cannot be run, and what is refused --------------------------------------------------------------
