@@ -116,6 +116,8 @@ class Pass:
         )
         # Merged visits may last longer than the silence, and without one there is no longest stay at all.
         longest = None if rules.repeats == "merge" else rules.silence_us
+        # A customer whose story ended before the log is known to the other road only.
+        compiled = compiled and rules.ended_before is None
         cuts = [part * N_PARTS // n_workers for part in range(n_workers + 1)]
         self._workers = [
             Worker(
