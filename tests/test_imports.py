@@ -126,9 +126,30 @@ def test_kernels_know_only_arrays() -> None:
 def test_public_names() -> None:
     assert journeys.__all__ == PUBLIC
     assert all(hasattr(journeys, name) for name in PUBLIC)
+    assert set(PUBLIC) <= set(dir(journeys))
+    with pytest.raises(AttributeError, match="no attribute 'outcome'"):
+        journeys.outcome  # noqa: B018
+
+
+def test_the_front_names_places_and_nothing_else() -> None:
+    """What type checkers read and what is looked up at run time are one list, and there is no other logic."""
     tree = ast.parse((PACKAGE / "__init__.py").read_text(encoding="utf-8"))
-    kinds = {type(node) for node in tree.body[1:]}
-    assert kinds <= {ast.Import, ast.ImportFrom, ast.Assign}, "the front of the package holds no logic"
+    (choice,) = (node for node in tree.body if isinstance(node, ast.If))
+    others = {type(node) for node in tree.body[1:] if node is not choice}
+    assert others <= {ast.Import, ast.ImportFrom, ast.Assign}
+    assert ast.unparse(choice.test) == "TYPE_CHECKING"
+    read = {}
+    for node in choice.body:
+        assert isinstance(node, ast.ImportFrom)
+        for alias in node.names:
+            assert alias.asname is None
+            inner = f"{node.module}.{alias.name}"
+            read[alias.name] = inner if inner.removeprefix("journeys.") in MODULES else node.module
+    assert read == journeys._PLACES
+    assert [type(node) for node in choice.orelse] == [ast.Assign, ast.FunctionDef, ast.FunctionDef]
+    for name, place in journeys._PLACES.items():
+        thing = getattr(journeys, name)
+        assert thing is sys.modules[place] if name == "plots" else thing.__module__ == place
 
 
 @pytest.mark.parametrize("name", [name for name in PUBLIC if not name.startswith("_")])
@@ -153,11 +174,14 @@ def loaded_after(code: str) -> set[str]:
 
 def test_import_is_light() -> None:
     """What few calls need is imported by those; no extra, and no option, comes with the package."""
-    loaded = loaded_after("import journeys")
+    loaded = loaded_after("import journeys; [getattr(journeys, name) for name in journeys.__all__]")
     assert "journeys.models.fit" in loaded
     extras = {"statsmodels", "matplotlib", "jinja2", "polars", "duckdb", "pyspark", "adbc_driver_manager", "numba"}
     slow = {"pandas", "tqdm", "scipy.stats", "scipy.sparse", "scipy.linalg"}
     assert not loaded & {*extras, *slow, "journeys.show.summary", "journeys.command"}
+    loaded = loaded_after("import journeys")
+    later = ("journeys.models", "journeys.questions", "journeys.show", "pyarrow.compute")
+    assert not [name for name in loaded if name.startswith(later)]
 
 
 @pytest.mark.parametrize("kind", ["parquet", "csv", "arrow", "folder"])
@@ -172,7 +196,7 @@ def test_counting_files_is_light(kind: str, tmp_path: Path) -> None:
     words = ["tally", str(kept_as(kind, tmp_path)), "--rules", str(rules), "--out", str(tmp_path / "tally.parquet")]
     loaded = loaded_after(f"from journeys.command.main import main; assert main({words!r}) == 0")
     assert "journeys.tally.store" in loaded
-    assert not loaded & {"pandas", "scipy.stats", "journeys.show.summary"}
+    assert not loaded & {"pandas", "scipy.stats", "tqdm", "journeys.models", "journeys.questions", "journeys.show"}
     counted = journeys.Tally.load(tmp_path / "tally.parquet")
     expected = journeys.tally(DEMO / "club_log.parquet", journeys.JourneyRules.from_toml(DEMO / "rules.toml"))
     for name in ("moves", "entries", "journeys", "customers"):

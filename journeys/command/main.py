@@ -167,7 +167,8 @@ def _compared(options: argparse.Namespace) -> ThenAndNow | None:
     """Return what a ledger published in a generation, beside its newest; None where none is asked for."""
     if options.generation is None:
         return None
-    from journeys.nightly.then_and_now import is_ledger, then_and_now
+    from journeys.nightly.manifest import is_ledger
+    from journeys.nightly.then_and_now import then_and_now
 
     if not is_ledger(options.log):
         msg = f"--generation {options.generation}: {options.log} is no ledger; wanted the folder that `nightly` keeps"
@@ -176,7 +177,7 @@ def _compared(options: argparse.Namespace) -> ThenAndNow | None:
 
 
 def _audit(options: argparse.Namespace) -> tuple[str, int]:
-    from journeys.nightly.then_and_now import is_ledger
+    from journeys.nightly.manifest import is_ledger
     from journeys.questions.audit import audit
     from journeys.tally.store import is_tally
 
@@ -235,12 +236,12 @@ def _min_customers(options: argparse.Namespace) -> int:
 
 def _counted(options: argparse.Namespace) -> Tally:
     """Return the tally of LOG, or LOG itself where it is a saved one."""
-    from journeys.nightly.then_and_now import is_ledger, tally_of_ledger
+    from journeys.nightly.manifest import is_ledger
     from journeys.tally.store import is_tally, load
 
     ledger = is_ledger(options.log)
     if ledger or is_tally(options.log):
-        tally = tally_of_ledger(options.log, getattr(options, "generation", None)) if ledger else load(options.log)
+        tally = _of_ledger(options) if ledger else load(options.log)
         if options.identity is not None:
             msg = f"--identity: {options.log} is a saved tally, which holds no ids; count the log again"
             raise RulesError(msg)
@@ -254,6 +255,12 @@ def _counted(options: argparse.Namespace) -> Tally:
     from journeys.tally.count import count_log
 
     return count_log(options.log, _rules(options), identity=options.identity, progress=sys.stderr.isatty())
+
+
+def _of_ledger(options: argparse.Namespace) -> Tally:
+    from journeys.nightly.then_and_now import tally_of_ledger
+
+    return tally_of_ledger(options.log, getattr(options, "generation", None))
 
 
 def _rules(options: argparse.Namespace) -> JourneyRules:

@@ -1,7 +1,8 @@
 """Arrow columns brought to a few plain forms: one text type, dictionaries taken apart, numpy arrays out.
 
 Between Arrow and numpy the buffers themselves are handed over: `pyarrow.array`, `pyarrow.scalar` and `to_numpy`
-import pandas when first called, which takes longer than counting a small log.
+import pandas when first called, which takes longer than counting a small log. `pyarrow.compute` takes a tenth of a
+second: it is imported where it is used.
 """
 
 from __future__ import annotations
@@ -11,7 +12,6 @@ from typing import Any
 
 import numpy as np
 import pyarrow as pa
-import pyarrow.compute as pc
 from numpy.typing import NDArray
 
 from journeys.errors import LogError
@@ -41,6 +41,8 @@ def plain(array: pa.Array) -> pa.Array:
     if isinstance(array.type, pa.BaseExtensionType):
         array = array.storage
     if pa.types.is_run_end_encoded(array.type):
+        import pyarrow.compute as pc
+
         array = pc.run_end_decode(array)
     if pa.types.is_dictionary(array.type):
         values = plain(array.dictionary)
@@ -155,6 +157,31 @@ def from_texts(texts: Sequence[str | None]) -> pa.StringArray:
     return pa.StringArray.from_buffers(len(parts), *(pa.py_buffer(one) for one in (ends, b"".join(parts), there)))
 
 
+def text_offsets(array: pa.Array) -> NDArray[Any]:
+    """Byte at which each text begins, and at which the last one ends.
+
+    Parameters
+    ----------
+    array : pyarrow.Array
+        Plain text or bytes.
+
+    Returns
+    -------
+    ndarray of int32 or int64, shape (n_rows + 1,)
+        Those of a null mean nothing.
+
+    Examples
+    --------
+    >>> text_offsets(from_texts(["visit", None, "é"])).tolist()
+    [0, 5, 5, 7]
+    """
+    if not len(array):
+        return np.zeros(1, dtype=np.int64)
+    wide = pa.types.is_large_string(array.type) or pa.types.is_large_binary(array.type)
+    offsets = np.frombuffer(array.buffers()[1], dtype=np.int64 if wide else np.int32)
+    return offsets[array.offset : array.offset + len(array) + 1]
+
+
 def is_missing(array: pa.Array) -> NDArray[np.bool_] | None:
     """Mark nulls, NaN and empty text.
 
@@ -178,7 +205,8 @@ def is_missing(array: pa.Array) -> NDArray[np.bool_] | None:
     else:
         missing = _nulls(array)
         if is_text(array.type):
-            missing |= numbers(pc.binary_length(array)) == 0
+            offsets = text_offsets(array)
+            missing |= offsets[1:] == offsets[:-1]
         elif pa.types.is_floating(array.type):
             missing |= np.isnan(numbers(array))
     return missing if missing.any() else None

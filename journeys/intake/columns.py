@@ -6,7 +6,6 @@ from typing import Any
 
 import numpy as np
 import pyarrow as pa
-import pyarrow.compute as pc
 from numpy.typing import NDArray
 
 from journeys.errors import LogError
@@ -129,6 +128,8 @@ def is_in(array: pa.Array, values: tuple[str | int | bool, ...], column: str) ->
         return np.zeros(len(array), dtype=bool)
     given = pa.string() if isinstance(values[0], str) else pa.bool_() if isinstance(values[0], bool) else pa.int64()
     if is_text(array.type) and is_text(given):
+        import pyarrow.compute as pc
+
         texts = from_texts([str(value) for value in values])
         return numbers(pc.is_in(array, value_set=texts.cast(array.type)))
     both_flags = pa.types.is_boolean(array.type) and pa.types.is_boolean(given)

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import pyarrow as pa
-import pyarrow.compute as pc
 
 from journeys.errors import LogError
 from journeys.intake.arrays import from_texts
@@ -72,6 +71,8 @@ def decoded(array: pa.Array, field: pa.Field) -> pa.Array:
     """
     if _type_of(field) != "numeric":
         return array
+    import pyarrow.compute as pc
+
     text = array.storage if isinstance(array.type, pa.BaseExtensionType) else array
     finite = pc.invert(pc.is_in(pc.utf8_lower(text), value_set=from_texts(_NOT_FINITE)))
     text = pc.if_else(finite, text, pa.nulls(len(text), text.type))

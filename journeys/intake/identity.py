@@ -14,7 +14,7 @@ import pyarrow as pa
 from numpy.typing import NDArray
 
 from journeys.errors import LogError
-from journeys.intake.arrays import indices_of, is_missing, is_text, numbers, plain, whole_numbers
+from journeys.intake.arrays import indices_of, is_missing, is_text, numbers, plain, text_offsets, whole_numbers
 from journeys.intake.id_key import IdKey
 from journeys.kernels import compiled
 
@@ -269,10 +269,7 @@ def _mixed_words(
 
 def _text_buffers(array: pa.Array) -> tuple[NDArray[np.int64], NDArray[np.int64], NDArray[np.uint8]]:
     """Start and length of each text, and the bytes, with eight to spare at the end."""
-    wide = pa.types.is_large_string(array.type) or pa.types.is_large_binary(array.type)
-    _, offset_buffer, data_buffer = array.buffers()
-    offsets = np.frombuffer(offset_buffer, dtype=np.int64 if wide else np.int32)
-    offsets = offsets[array.offset : array.offset + len(array) + 1]
+    offsets, data_buffer = text_offsets(array), array.buffers()[2]
     starts: NDArray[np.int64] = offsets[:-1].astype(np.int64)
     lengths: NDArray[np.int64] = np.diff(offsets).astype(np.int64)
     if array.null_count:

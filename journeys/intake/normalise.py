@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 
 from journeys.checks import DAY_US
 from journeys.errors import LogError
-from journeys.intake.arrays import indices_of, is_missing, numbers, plain, whole_numbers
+from journeys.intake.arrays import is_missing, numbers, plain, whole_numbers
 from journeys.intake.columns import decoded, event_names, is_in, texts_of
 from journeys.intake.findings import Findings
 from journeys.intake.groups import GroupCodes
@@ -137,8 +137,7 @@ class Normaliser:
         kept.drop("missing_time", rules.time, times.missing)
         event = event_names(batch.column(rules.event), rules.event)
         kept.drop("missing_event", rules.event, is_missing(event))
-        self._see(times)
-        self._drop_times(kept, times)
+        self._drop_times(kept, times, self._see(times))
         events = self._codes(event, kept)
         sequence = self._sequence(batch, kept)
         ended = self._ended(batch, kept)
@@ -188,22 +187,26 @@ class Normaliser:
         self.groups.resume(learned["groups"])
         self._found = Findings.from_dict(learned["findings"])
 
-    def _see(self, times: Times) -> None:
-        """Note the first and the last time."""
+    def _see(self, times: Times) -> tuple[int, int] | None:
+        """Note the first and the last time; return those of the batch."""
         plain = times.missing is None and times.out_of_range is None
         us = times.us if plain else times.us[times.usable()]
-        if len(us):
-            ends = int(us.min()), int(us.max())
-            before = self.seen_us or ends
-            self.seen_us = min(before[0], ends[0]), max(before[1], ends[1])
+        if not len(us):
+            return None
+        ends = int(us.min()), int(us.max())
+        before = self.seen_us or ends
+        self.seen_us = min(before[0], ends[0]), max(before[1], ends[1])
+        return ends
 
-    def _drop_times(self, kept: _Kept, times: Times) -> None:
+    def _drop_times(self, kept: _Kept, times: Times, ends: tuple[int, int] | None) -> None:
         """Leave out what lies outside the calendar or outside the log's two dates."""
         column = self.rules.time
         kept.drop("out_of_range_time", column, times.out_of_range)
-        if self._log_start_us is not None:
+        if ends is None:
+            return
+        if self._log_start_us is not None and ends[0] < self._log_start_us:
             kept.drop("before_log_start", column, times.us < self._log_start_us)
-        if self._as_of_us is not None:
+        if self._as_of_us is not None and ends[1] > self._as_of_us:
             kept.drop("after_as_of", column, times.us > self._as_of_us)
 
     def _note_times(self, kept: _Kept, times: Times) -> None:
@@ -216,16 +219,20 @@ class Normaliser:
     def _codes(self, event: pa.DictionaryArray, kept: _Kept) -> NDArray[np.int32]:
         """Codes of the events, those of rows left out being 0; drops what the rules drop."""
         names = texts_of(event.dictionary, self.rules.event)
-        index = indices_of(event)
+        index = numbers(event.indices).astype(np.int32, copy=False)
         if not names:
             return np.zeros(len(index), dtype=np.int32)
-        used = np.bincount(index if kept.mask is None else index[kept.mask], minlength=len(names)) > 0
-        positions = np.flatnonzero(used)
-        codes = np.zeros(len(names), dtype=np.int32)
-        codes[positions] = self.codes.encode([names[i] for i in positions])
+        codes = self.codes.known(names)
+        if codes is None:
+            # Only names that rows have are given a code.
+            used = np.bincount(index if kept.mask is None else index[kept.mask], minlength=len(names)) > 0
+            positions = np.flatnonzero(used)
+            codes = np.zeros(len(names), dtype=np.int32)
+            codes[positions] = self.codes.encode([names[i] for i in positions])
         for name in self.codes.names[len(self.targets) :]:
             self.targets.append(self._target(name))
-        events = codes[index]
+        # Mostly a file has the names in the order in which they turned up.
+        events = index if (codes == np.arange(len(codes))).all() else codes[index]
         dropped = np.array([target is None for target in self.targets], dtype=bool)
         if dropped.any():
             kept.drop("unmapped_event", self.rules.event, dropped[events])

@@ -7,7 +7,6 @@ from collections.abc import Iterator, Mapping, Sequence
 from pathlib import Path
 
 import pyarrow as pa
-import pyarrow.compute as pc
 import pyarrow.csv
 
 from journeys.errors import LogError
@@ -104,6 +103,8 @@ class _Written:
 
     def read(self, batch: pa.RecordBatch) -> pa.RecordBatch:
         """Turn the ids of a batch into numbers where they are."""
+        import pyarrow.compute as pc
+
         for name in sorted(self._numbered):
             place = batch.schema.get_field_index(name)
             ids = pc.utf8_trim_whitespace(batch.column(place))
@@ -126,6 +127,8 @@ class _Written:
 
 def _leading_zeros(ids: pa.StringArray) -> pa.BooleanArray:
     """Mark ids such as 007, 0x7 or -0."""
+    import pyarrow.compute as pc
+
     longer = pc.greater(pc.binary_length(ids), 1)
     return pc.or_(pc.and_(pc.starts_with(ids, "0"), longer), pc.starts_with(ids, "-0"))
 

@@ -122,6 +122,25 @@ class EventCodes:
         """Give the names that are there at the start their codes."""
         self._codes = {name: code for code, name in enumerate(self.names)}
 
+    def known(self, names: Sequence[str]) -> NDArray[np.int32] | None:
+        """Codes of the given names, or None where one is new.
+
+        Parameters
+        ----------
+        names : sequence of str
+
+        Returns
+        -------
+        ndarray of int32, shape (n_names,), or None
+
+        Examples
+        --------
+        >>> EventCodes(["visit", "basket"]).known(["basket"]).tolist()
+        [1]
+        """
+        codes = [self._codes.get(name, -1) for name in names]
+        return None if -1 in codes else np.array(codes, dtype=np.int32)
+
     def encode(self, names: Sequence[str]) -> NDArray[np.int32]:
         """Codes of the given names, new ones being added at the end.
 

@@ -6,7 +6,6 @@ import sys
 
 import numpy as np
 import pyarrow as pa
-import pyarrow.compute as pc
 from numpy.typing import NDArray
 
 from journeys.errors import LogError
@@ -90,6 +89,8 @@ def _of_decimals(array: pa.Array, column: str) -> NDArray[np.int64]:
     """Millionths of decimals; 0 where null."""
     _check_size(np.abs(numbers(array.cast(pa.float64()))) > MOST, column)
     if array.type.scale > 6:
+        import pyarrow.compute as pc
+
         # The widest decimals: others cannot be rounded, or have no room for a digit more.
         array = array.cast(pa.decimal256(76, min(array.type.scale, 60)), safe=False)
         array = pc.round(array, 6, round_mode="half_to_even")

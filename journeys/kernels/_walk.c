@@ -23,6 +23,13 @@
 #define EXPORT __attribute__((visibility("default")))
 #endif
 
+/* What is kept of a customer, as held.py lays it out; the key stands in a column of its own. */
+typedef struct {
+    int64_t time, start, visit, before;
+    int32_t code, first, steps, events, decided, converted;
+    uint8_t sure;
+} Record;
+
 typedef struct {
     int64_t n_rows;
     const uint64_t *key;
@@ -31,18 +38,12 @@ typedef struct {
     int64_t n_buckets;
     const uint64_t *first_keys;
     /* what is carried of the customers seen before */
-    int64_t n_carried;
-    const uint64_t *c_key;
-    int64_t *c_time, *c_start, *c_visit;
-    int32_t *c_code, *c_first, *c_steps, *c_events, *c_decided, *c_converted;
-    int64_t *c_before;
-    uint8_t *c_sure;
+    int64_t n_old, n_young;
+    const uint64_t *o_key, *y_key;
+    Record *o_record, *y_record;
     /* records of new customers */
     uint64_t *f_key;
-    int64_t *f_time, *f_start, *f_visit;
-    int32_t *f_code, *f_first, *f_steps, *f_events, *f_decided, *f_converted;
-    int64_t *f_before;
-    uint8_t *f_sure;
+    Record *f_record;
     /* moves that are not added to the cells, ended journeys, journeys begun, marked rows */
     uint8_t *m_bucket;
     int32_t *m_state, *m_next;
@@ -187,38 +188,47 @@ static void end_journey(Walk *w, int64_t bucket, int64_t first, int64_t outcome,
 EXPORT int64_t journeys_walk(Walk *w)
 {
     const uint64_t *key = w->key;
-    int64_t place, bucket, i = 0;
+    int64_t old, young, bucket, i = 0;
     Queue queue = {.n = 0};
     const int64_t slots = (INT64_C(1) << (SLOT_BITS * w->n_slots)) - 1;
     if (!w->n_rows)
         return IN_ORDER;
-    place = lower_bound(w->c_key, w->n_carried, key[0]);
+    old = lower_bound(w->o_key, w->n_old, key[0]);
+    young = lower_bound(w->y_key, w->n_young, key[0]);
     bucket = lower_bound(w->first_keys, w->n_buckets, key[0]);
     if (bucket == w->n_buckets || w->first_keys[bucket] > key[0])
         bucket--;
     while (i < w->n_rows) {
         uint64_t who = key[i];
-        int64_t last = 0, prev = 0, started = 0, visit = 0, first = 0, steps = 0, events = 0, decided = 0, won = 0;
-        int64_t before = 0;
-        int sure = 0, held;
+        Record *record;
+        int64_t last, prev, started, visit, first, steps, events, before, decided = 0, won = 0;
+        int sure;
         while (bucket + 1 < w->n_buckets && who >= w->first_keys[bucket + 1])
             bucket++;
-        while (place < w->n_carried && w->c_key[place] < who)
-            place++;
-        held = place < w->n_carried && w->c_key[place] == who;
-        if (held) {
-            if (w->time[i] <= w->c_time[place])
+        while (old < w->n_old && w->o_key[old] < who)
+            old++;
+        while (young < w->n_young && w->y_key[young] < who)
+            young++;
+        record = old < w->n_old && w->o_key[old] == who         ? &w->o_record[old]
+                 : young < w->n_young && w->y_key[young] == who ? &w->y_record[young]
+                                                                : NULL;
+        if (record) {
+            if (w->time[i] <= record->time)
                 return OUT_OF_ORDER;
-            last = w->c_time[place];
-            prev = w->c_code[place];
-            started = w->c_start[place];
-            first = w->c_first[place];
-            steps = w->c_steps[place];
-            events = w->c_events[place];
-            sure = w->c_sure[place];
-            before = w->c_before[place];
-            visit = w->merge ? w->c_visit[place] : last;
+        } else {
+            record = &w->f_record[w->n_fresh];
+            memset(record, 0, sizeof *record);
+            w->f_key[w->n_fresh++] = who;
         }
+        last = record->time;
+        prev = record->code;
+        started = record->start;
+        first = record->first;
+        steps = record->steps;
+        events = record->events;
+        sure = record->sure;
+        before = record->before;
+        visit = w->merge ? record->visit : last;
         for (; i < w->n_rows && key[i] == who; i++) {
             int64_t now = w->time[i], what = w->code[i];
             int begins = 1, lapses = 0;
@@ -276,35 +286,17 @@ EXPORT int64_t journeys_walk(Walk *w)
             prev = what;
             last = now;
         }
-        if (held) {
-            w->c_time[place] = last;
-            w->c_start[place] = started;
-            w->c_code[place] = (int32_t)prev;
-            w->c_first[place] = (int32_t)first;
-            w->c_steps[place] = (int32_t)steps;
-            w->c_events[place] = (int32_t)events;
-            w->c_decided[place] += (int32_t)decided;
-            w->c_converted[place] += (int32_t)won;
-            w->c_before[place] = before;
-            w->c_sure[place] = (uint8_t)sure;
-            if (w->merge)
-                w->c_visit[place] = visit;
-        } else {
-            int64_t f = w->n_fresh++;
-            w->f_key[f] = who;
-            w->f_time[f] = last;
-            w->f_start[f] = started;
-            w->f_code[f] = (int32_t)prev;
-            w->f_first[f] = (int32_t)first;
-            w->f_steps[f] = (int32_t)steps;
-            w->f_events[f] = (int32_t)events;
-            w->f_decided[f] = (int32_t)decided;
-            w->f_converted[f] = (int32_t)won;
-            w->f_before[f] = before;
-            w->f_sure[f] = (uint8_t)sure;
-            if (w->merge)
-                w->f_visit[f] = visit;
-        }
+        record->time = last;
+        record->start = started;
+        record->visit = visit;
+        record->before = before;
+        record->code = (int32_t)prev;
+        record->first = (int32_t)first;
+        record->steps = (int32_t)steps;
+        record->events = (int32_t)events;
+        record->decided += (int32_t)decided;
+        record->converted += (int32_t)won;
+        record->sure = (uint8_t)sure;
     }
     add_waiting(w, &queue);
     return IN_ORDER;
@@ -328,19 +320,40 @@ EXPORT int64_t journeys_gather(int64_t n, const int64_t *order, const uint64_t *
     return not_later;
 }
 
-/* Merge new items into a column: new item j goes before the old item at where[j], which does not decrease. */
-EXPORT void journeys_insert(int64_t size, const char *old, int64_t n_old, const int64_t *where, int64_t n_new,
-                            const char *fresh, char *out)
+/* Turn words made of (leading bits of a key, position), which are sorted, into the positions; tell whether keys that
+ * share the leading bits stand in the wrong order. */
+EXPORT int64_t journeys_positions(int64_t n, int64_t bits, const uint64_t *key, uint64_t *packed)
 {
-    int64_t from = 0, j;
-    for (j = 0; j < n_new; j++) {
-        memcpy(out, old + from * size, (size_t)((where[j] - from) * size));
-        out += (where[j] - from) * size;
-        memcpy(out, fresh + j * size, (size_t)size);
-        out += size;
-        from = where[j];
+    const uint64_t mask = (UINT64_C(1) << bits) - 1;
+    uint64_t above = 0, at = 0;
+    int64_t i, wrong = 0;
+    for (i = 0; i < n; i++) {
+        uint64_t leading = packed[i] >> bits, position = packed[i] & mask;
+        if (i && leading == above)
+            wrong |= key[position] < key[at];
+        above = leading;
+        at = position;
+        packed[i] = position;
     }
-    memcpy(out, old + from * size, (size_t)((n_old - from) * size));
+    return wrong;
+}
+
+/* Put records of new customers among those there are, both by key; behind these there is room for the new ones. */
+EXPORT void journeys_insert(int64_t n_old, uint64_t *key, Record *record, int64_t n_new, const uint64_t *new_key,
+                            const Record *new_record)
+{
+    /* From behind, so that nothing is overwritten that is still to be moved. */
+    while (n_new) {
+        uint64_t who = new_key[--n_new];
+        int64_t from = n_old;
+        while (from && key[from - 1] > who)
+            from--;
+        memmove(key + from + n_new + 1, key + from, (size_t)(n_old - from) * sizeof *key);
+        memmove(record + from + n_new + 1, record + from, (size_t)(n_old - from) * sizeof *record);
+        key[from + n_new] = who;
+        record[from + n_new] = new_record[n_new];
+        n_old = from;
+    }
 }
 
 /* The 64-bit keys of customers, as identity.py explains them. */
@@ -384,20 +397,27 @@ EXPORT void journeys_text_keys(int64_t n, const int64_t *start, const int64_t *l
     }
 }
 
-EXPORT void journeys_bucket_major(int64_t n, const uint64_t *key, const uint64_t *first_keys, uint64_t n_buckets,
-                                  uint64_t *out)
+/* Dividing by what the compiler knows is far faster. */
+#define N_BUCKETS UINT64_C(200)
+
+EXPORT void journeys_bucket_major(int64_t n, const uint64_t *key, const uint64_t *first_keys, uint64_t *out)
 {
     int64_t i;
     for (i = 0; i < n; i++) {
-        uint64_t above = key[i] / n_buckets;
-        out[i] = first_keys[key[i] - above * n_buckets] + above;
+        uint64_t above = key[i] / N_BUCKETS;
+        out[i] = first_keys[key[i] - above * N_BUCKETS] + above;
     }
 }
 
-/* How large the struct is that this library was built for, held against that of compiled.py. */
+/* How large the structs are that this library was built for, held against those of compiled.py. */
 EXPORT int64_t journeys_walk_size(void)
 {
     return (int64_t)sizeof(Walk);
+}
+
+EXPORT int64_t journeys_record_size(void)
+{
+    return (int64_t)sizeof(Record);
 }
 
 /* A module without functions: it is there so that the build puts the library where Python finds it. */

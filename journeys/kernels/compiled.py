@@ -10,26 +10,37 @@ import sys
 from dataclasses import dataclass, replace
 from functools import cache
 from importlib.util import find_spec
-from typing import Any, TypeVar
+from typing import TYPE_CHECKING, Any, TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
 
 from journeys.kernels.arrays import IntArray
 from journeys.kernels.bins import lowest_bins
-from journeys.kernels.records import FIRST_OUTCOME, Carried, Cells, Counted, Ends, Entries, Gaps, Moves, Reading
+from journeys.kernels.records import FIRST_OUTCOME, Cells, Counted, Ends, Entries, Gaps, Moves, Reading
+
+if TYPE_CHECKING:
+    from journeys.kernels.held import Held
 
 _OUT_OF_ORDER = 1
 _NO_SILENCE = -1
 
 T = TypeVar("T", Moves, Entries, Ends)
+Rows = tuple[NDArray[np.uint64], IntArray, NDArray[np.int32]]
 
-_CARRIED = ("key", "time", "start", "visit", "code", "first", "steps", "events", "decided", "converted", "before",
-            "sure")  # fmt: skip
+# A customer's record as _walk.c lays it out.
+RECORD = np.dtype(
+    [
+        ("time", np.int64), ("journey_start", np.int64), ("visit_start", np.int64), ("before", np.int64),
+        ("code", np.int32), ("first_code", np.int32), ("steps", np.int32), ("n_events", np.int32),
+        ("decided", np.int32), ("converted", np.int32), ("sure", np.bool_),
+    ],
+    align=True,
+)  # fmt: skip
 # In the order of the struct in _walk.c. What is named in the second list is a number, all else the address of an array.
 _FIELDS = (
     "n_rows", "key", "time", "code", "n_buckets", "first_keys",
-    "n_carried", *(f"c_{name}" for name in _CARRIED), *(f"f_{name}" for name in _CARRIED),
+    "n_old", "n_young", "o_key", "y_key", "o_record", "y_record", "f_key", "f_record",
     "m_bucket", "m_state", "m_next", "m_dwell", "m_before", "m_since", "m_busy",
     "e_bucket", "e_state", "e_outcome", "e_sure", "e_steps", "e_elapsed",
     "b_bucket", "b_state", "b_sure", "g_bucket", "g_outcome", "g_away", "repeated", "bare", "again",
@@ -53,8 +64,8 @@ def _library() -> Any:
     if found is None or found.origin is None:
         return None
     library = ctypes.CDLL(found.origin)
-    size = getattr(library, "journeys_walk_size", None)
-    if size is None or size() != ctypes.sizeof(_Walk):
+    sizes = [getattr(library, f"journeys_{name}_size", None) for name in ("walk", "record")]
+    if [size and size() for size in sizes] != [ctypes.sizeof(_Walk), RECORD.itemsize]:
         # Built from other sources than these: it would write where it must not.
         return None
     library.journeys_walk.argtypes = [ctypes.POINTER(_Walk)]
@@ -62,10 +73,12 @@ def _library() -> Any:
     number, address = ctypes.c_int64, ctypes.c_void_p
     library.journeys_gather.argtypes = [number, *[address] * 8]
     library.journeys_gather.restype = ctypes.c_int64
-    library.journeys_insert.argtypes = [number, address, number, address, number, address, address]
+    library.journeys_positions.argtypes = [number, number, address, address]
+    library.journeys_positions.restype = number
+    library.journeys_insert.argtypes = [number, address, address, number, address, address]
     library.journeys_mix.argtypes = [number, address, address]
     library.journeys_text_keys.argtypes = [number, *[address] * 4]
-    library.journeys_bucket_major.argtypes = [number, address, address, number, address]
+    library.journeys_bucket_major.argtypes = [number, *[address] * 3]
     for name in ("insert", "mix", "text_keys", "bucket_major"):
         getattr(library, f"journeys_{name}").restype = None
     return library
@@ -84,48 +97,51 @@ class Room:
     ----------
     n_rows : int
         For how many rows there is room.
-    moves, ends, begun, gaps, marked, fresh
-        Moves outside the cells, ended journeys, entries, absences, positions of marked rows, records of new customers.
+    rows : tuple of ndarray
+        Customer, time and code of the rows in order.
+    moves, ends, begun, gaps, marked
+        Moves outside the cells, ended journeys, entries, absences, positions of marked rows.
     """
 
     n_rows: int
+    rows: Rows
     moves: Moves
     ends: Ends
     begun: Entries
     gaps: Gaps
     marked: dict[str, IntArray]
-    fresh: Carried
 
     @classmethod
-    def of(cls, n: int, *, merge: bool) -> Room:
-        """Return room for `n` rows; `merge` as in `Reading.merge_repeats`."""
+    def of(cls, n: int) -> Room:
+        """Return room for `n` rows."""
+        rows = np.empty(n, np.uint64), _times(n), _codes(n)
         # A row makes at most one move, and ends at most two journeys: one by its absence, one by itself.
         moves = Moves(_bytes(n), _codes(n), _codes(n), _times(n), _times(n), _times(n), _flags(n))
         ends = Ends(_bytes(2 * n), _codes(2 * n), _codes(2 * n), _flags(2 * n), _times(2 * n), _times(2 * n))
         marked = {"repeated": _times(n), "bare": _times(n), "again": _times(n)}
-        fresh = Carried.zeros(n, ("visit_start",) if merge else ())
         begun, gaps = Entries(_bytes(n), _codes(n), _flags(n)), Gaps(_bytes(n), _codes(n), _times(n), True)
-        return cls(n, moves, ends, begun, gaps, marked, fresh)
+        return cls(n, rows, moves, ends, begun, gaps, marked)
 
 
 def count_in_order(
     key: NDArray[np.uint64],
     time: IntArray,
     code: NDArray[np.int32],
-    carried: Carried,
+    held: Held,
     first_keys: NDArray[np.uint64],
     reading: Reading,
     cells: Cells,
     room: Room,
-) -> tuple[Counted, Carried | None, float] | None:
-    """Return what rows in order add to the tally, and the records of new customers; change the others in place.
+) -> tuple[Counted, float] | None:
+    """Return what rows in order add to the tally, and bring the customers' records up to date.
 
     Parameters
     ----------
     key, time, code : ndarray, shape (n_rows,)
         Customer, microseconds and code, sorted by customer and in order within each; at least one row.
-    carried : Carried
-        Records of the customers seen before, changed in place.
+    held : Held
+        Records of the customers seen before, which are changed, and those of new customers, which are added; of each
+        customer all rows since these were put in place are here.
     first_keys : ndarray of uint64, shape (n_buckets,)
         The smallest key of each bucket.
     reading : Reading
@@ -139,23 +155,24 @@ def count_in_order(
     -------
     counted : Counted
         Moves that are not in the cells, entries and ended journeys; held in `room`, so until the next call.
-    fresh : Carried or None
-        Records of new customers.
     gained : float
         By how much the dwell in the cells grew.
 
-    Or None if a row is not later than one of its customer that was counted before; `carried` is then spoilt.
+    Or None if a row is not later than one of its customer that was counted before; `held` is then spoilt.
     """
     library = _library()
     if library is None:
         msg = "the compiled loop is not built; wanted a C compiler when the package was installed"
         raise ImportError(msg)
     n = len(key)
-    moves, ends, begun, gaps, marked, fresh = room.moves, room.ends, room.begun, room.gaps, room.marked, room.fresh
+    moves, ends, begun, gaps, marked = room.moves, room.ends, room.begun, room.gaps, room.marked
+    old, young, new = held.old, held.young, held.new
+    new.make_room(n)
     guess = lowest_bins(cells.upper.tobytes())
     arrays = {
         "key": key, "time": time, "code": code, "first_keys": first_keys, **marked,
-        **_prefixed("c", carried), **_prefixed("f", fresh),
+        "o_key": old.key, "o_record": old.record, "y_key": young.key, "y_record": young.record,
+        "f_key": new.key, "f_record": new.record,
         "m_bucket": moves.bucket, "m_state": moves.state, "m_next": moves.next_code, "m_dwell": moves.dwell,
         "m_before": moves.before, "m_since": moves.since, "m_busy": moves.busy,
         "e_bucket": ends.bucket, "e_state": ends.state, "e_outcome": ends.outcome,
@@ -164,11 +181,11 @@ def count_in_order(
         "g_away": gaps.away, "cells": cells.cells, "contexts": cells.contexts,
         "lower": cells.lower, "upper": cells.upper, "guess": guess,
     }  # fmt: skip
-    # Held until the loop is done: an array that had to be copied is in no other hands.
-    held = {name: np.ascontiguousarray(array) for name, array in arrays.items()}
+    # Kept until the loop is done: an array that had to be copied is in no other hands.
+    kept = {name: np.ascontiguousarray(array) for name, array in arrays.items()}
     walk = _Walk(
-        **{name: array.ctypes.data for name, array in held.items()},
-        n_rows=n, n_buckets=len(first_keys), n_carried=len(carried.key),
+        **{name: array.ctypes.data for name, array in kept.items()},
+        n_rows=n, n_buckets=len(first_keys), n_old=old.n, n_young=young.n, n_fresh=new.n,
         n_bins=len(cells.upper) if len(cells.cells) else 0,
         first_bucket=cells.first_bucket, n_states=cells.n_states, whole_days=cells.whole_days,
         mature_before=cells.mature_before, n_slots=reading.order,
@@ -179,6 +196,7 @@ def count_in_order(
     )  # fmt: skip
     if library.journeys_walk(ctypes.byref(walk)) == _OUT_OF_ORDER:
         return None
+    new.n = walk.n_fresh
     counted = Counted(
         moves=(_first(moves, walk.n_moves),),
         entries=_first(begun, walk.n_begun),
@@ -191,7 +209,7 @@ def count_in_order(
         again=marked["again"][: walk.n_again],
         unsure_visits=walk.unsure_visits,
     )
-    return counted, fresh.take(np.arange(walk.n_fresh)) if walk.n_fresh else None, walk.gained
+    return counted, walk.gained
 
 
 def gathered(
@@ -200,8 +218,9 @@ def gathered(
     time: IntArray,
     event: NDArray[np.int32],
     code_of_event: NDArray[np.int32],
-) -> tuple[NDArray[np.uint64], IntArray, NDArray[np.int32]] | None:
-    """Return customer, time and code of rows in the given order.
+    room: Room,
+) -> Rows | None:
+    """Return customer, time and code of rows in the given order; held in `room`.
 
     Parameters
     ----------
@@ -211,6 +230,8 @@ def gathered(
         Customer, microseconds and raw event in input order.
     code_of_event : ndarray of int32
         Code of each raw event.
+    room : Room
+        For as many rows at least.
 
     Returns
     -------
@@ -218,7 +239,7 @@ def gathered(
         None if a row is not later than the one before it of the same customer.
     """
     n = len(order)
-    out = np.empty(n, np.uint64), _times(n), _codes(n)
+    out = room.rows[0][:n], room.rows[1][:n], room.rows[2][:n]
     given = [np.ascontiguousarray(array) for array in (order, key, time, event, code_of_event)]
     not_later = _library().journeys_gather(n, *(array.ctypes.data for array in (*given, *out)))
     return None if not_later else out
@@ -244,28 +265,42 @@ def by_bucket(keys: NDArray[np.uint64], first_keys: NDArray[np.uint64]) -> NDArr
     """Return keys renumbered bucket by bucket, as `identity.bucket_major` says."""
     keys = np.ascontiguousarray(keys)
     out = np.empty_like(keys)
-    _library().journeys_bucket_major(
-        len(keys), keys.ctypes.data, first_keys.ctypes.data, len(first_keys), out.ctypes.data
-    )
+    _library().journeys_bucket_major(len(keys), *(array.ctypes.data for array in (keys, first_keys, out)))
     return out
 
 
-def inserted(old: NDArray[Any], where: IntArray, new: NDArray[Any]) -> NDArray[Any]:
-    """Return a column with new items put in, item j before the old one at `where[j]`, which does not decrease."""
-    out = np.empty(len(old) + len(new), old.dtype)
-    old, where, new = np.ascontiguousarray(old), np.ascontiguousarray(where), np.ascontiguousarray(new, old.dtype)
-    _library().journeys_insert(
-        old.itemsize, old.ctypes.data, len(old), where.ctypes.data, len(new), new.ctypes.data, out.ctypes.data
-    )
-    return out
+def positions(packed: NDArray[np.uint64], bits: int, key: NDArray[np.uint64]) -> IntArray | None:
+    """Return the order of keys, given their leading bits and, in the lowest `bits`, their positions, sorted as words.
+
+    Parameters
+    ----------
+    packed : ndarray of uint64, shape (n,)
+        Used up.
+    bits : int
+    key : ndarray of uint64, shape (n,)
+        In input order.
+
+    Returns
+    -------
+    ndarray of int64, shape (n,), or None
+        None if keys that share the leading bits stand in the wrong order.
+    """
+    key = np.ascontiguousarray(key)
+    wrong = _library().journeys_positions(len(key), bits, key.ctypes.data, packed.ctypes.data)
+    return None if wrong else packed.view(np.int64)
 
 
-def _prefixed(letter: str, records: Carried) -> dict[str, NDArray[Any]]:
-    columns: tuple[NDArray[Any], ...] = (
-        records.key, records.time, records.journey_start, records.visit_began, records.code, records.first_code,
-        records.steps, records.n_events, records.decided, records.converted, records.before, records.sure,
-    )  # fmt: skip
-    return {f"{letter}_{name}": column for name, column in zip(_CARRIED, columns, strict=True)}
+def insert(
+    n: int,
+    key: NDArray[np.uint64],
+    record: NDArray[np.void],
+    n_new: int,
+    new_key: NDArray[np.uint64],
+    new_record: NDArray[np.void],
+) -> None:
+    """Put records of `n_new` customers among those of `n` others, behind which there is room for them."""
+    given = n, key.ctypes.data, record.ctypes.data, n_new, new_key.ctypes.data, new_record.ctypes.data
+    _library().journeys_insert(*given)
 
 
 def _first(records: T, n: int) -> T:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Collection
+from collections.abc import Collection
 from dataclasses import MISSING, dataclass, fields
 from typing import Any
 
@@ -16,7 +16,6 @@ from journeys.kernels.grouping import Grouping
 
 # The two numbers of a cell side by side, so that adding to them asks for one place in memory.
 CELL = np.dtype([("n", np.uint32), ("rest", np.int64)])
-PutIn = Callable[[NDArray[Any], Ints, NDArray[Any]], NDArray[Any]]
 
 # Codes of what a row or a move can lead to: these two, then the outcomes, then the states.
 LAPSED = 0
@@ -150,14 +149,14 @@ class Carried:
                 column[at] = values
         return fresh
 
-    def insert(self, fresh: list[Carried], put_in: PutIn = np.insert) -> None:
-        """Add records of new customers, sorted by key; `put_in` puts items into a column before given positions."""
+    def insert(self, fresh: list[Carried]) -> None:
+        """Add records of new customers, sorted by key."""
         if not fresh:
             return
         where = np.searchsorted(self.key, np.concatenate([part.key for part in fresh]))
         for name in self.names:
             new = np.concatenate([getattr(part, name) for part in fresh])
-            setattr(self, name, put_in(getattr(self, name), where, new))
+            setattr(self, name, np.insert(getattr(self, name), where, new))
 
 
 _AMOUNTS = ("value", "total_value")

@@ -174,6 +174,11 @@ class Manifest:
         return f'{{"checksum": "{disk.digest(body.encode())}",\n"ledger": {body}}}\n'.encode()
 
 
+def is_ledger(path: str | Path) -> bool:
+    """Tell whether a path is a ledger."""
+    return (Path(path) / NAME).is_file()
+
+
 def read_manifest(folder: Path) -> Manifest | None:
     """Return a ledger's manifest, None where there is none.
 

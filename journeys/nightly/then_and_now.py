@@ -13,7 +13,7 @@ from journeys.checks import instant_text
 from journeys.errors import LogError, RulesError, StoreError
 from journeys.models.model import JourneyModel
 from journeys.nightly.ledger import Ledger, opened
-from journeys.nightly.manifest import NAME, Generation
+from journeys.nightly.manifest import Generation
 from journeys.questions.plain_count import PlainCount, plain_count
 from journeys.questions.time_to_convert import IN_THE_END, time_to_convert
 from journeys.results import text_table
@@ -53,11 +53,6 @@ class ThenAndNow:
         dates = [("read up to", *(instant_text(one.as_of_us) for one in (self.then, self.now)), "")]
         table = text_table([*head, *dates, *rows], right=[1, 2, 3], width=0)
         return table + "\n\nWhy they differ\n" + "\n".join(f"- {line}" for line in self.why) + "\n"
-
-
-def is_ledger(path: str | Path) -> bool:
-    """Tell whether a path is a ledger."""
-    return (Path(path) / NAME).is_file()
 
 
 def tally_of_ledger(path: str | Path, number: int | None = None) -> Tally:

@@ -13,8 +13,9 @@ from journeys.intake.findings import Findings
 from journeys.intake.identity import FIRST_KEYS, bucket_of_major
 from journeys.intake.rows import Rows
 from journeys.kernels.arrays import BoolArray, IntArray
-from journeys.kernels.compiled import Room, count_in_order, gathered, inserted
+from journeys.kernels.compiled import Room, count_in_order, gathered
 from journeys.kernels.counting import close_log, count_rows
+from journeys.kernels.held import Held
 from journeys.kernels.openers import before_opener
 from journeys.kernels.records import FIRST_OUTCOME, Carried, Counted, Reading
 from journeys.kernels.stories import Block
@@ -83,8 +84,7 @@ class Counter:
             *(["touched", "first_touch", "last_touch"] if reading.touches else []),
             *(["value", "total_value"] if reading.values else []),
         ]
-        self._carried = self._blank(0)
-        self._room = Room.of(0, merge=reading.merge_repeats)
+        self._carried, self._held, self._room = self._blank(0), Held(), Room.of(0)
         self._n_states = 0
         self._touch_of_code: NDArray[np.int8] | None = None
 
@@ -119,10 +119,13 @@ class Counter:
             If the values of a customer's events add up to more than can be held.
         """
         self._n_states, self._touch_of_code = n_states, touch_of_code
-        add = self._add_compiled if self._compiled and rows.ended is None else self._add
-        added = [add(rows, part, code_of_event) for part in chunks(rows.key, order)]
-        fresh = [records for records in added if records is not None]
-        self._carried.insert(fresh, inserted if self._compiled else np.insert)
+        if self._compiled:
+            for part in chunks(rows.key, order):
+                self._add_compiled(rows, part, code_of_event)
+            self._held.settle()
+            return
+        added = [self._add(rows, part, code_of_event) for part in chunks(rows.key, order)]
+        self._carried.insert([records for records in added if records is not None])
 
     def _add(self, block: Rows, order: IntArray, code_of_event: Codes) -> Carried | None:
         """Count one chunk; put its customers' new records in their place and return those of new customers."""
@@ -158,39 +161,39 @@ class Counter:
             latest.time = np.where(latest.story_over, rows.time[last], latest.time)
         return self._carried.put(latest, at)
 
-    def _add_compiled(self, block: Rows, order: IntArray, code_of_event: Codes) -> Carried | None:
+    def _add_compiled(self, block: Rows, order: IntArray, code_of_event: Codes) -> None:
         """Do the same in one compiled loop over the rows."""
-        found = gathered(order, block.key, block.time, block.event, code_of_event)
+        if len(order) > self._room.n_rows:
+            self._room = Room.of(len(order))
+        found = gathered(order, block.key, block.time, block.event, code_of_event, self._room)
         if found is None:
             rows = Ordered.of(block, order)
             rows = self._without_duplicates(rows, rows.starts())
             order, found = rows.order, (rows.key, rows.time, code_of_event[rows.event])
         cells = self._sums.cells(len(order), self._n_states)
-        if len(order) > self._room.n_rows:
-            self._room = Room.of(len(order), merge=self._reading.merge_repeats)
-        result = count_in_order(*found, self._carried, FIRST_KEYS, self._reading, cells, self._room)
+        result = count_in_order(*found, self._held, FIRST_KEYS, self._reading, cells, self._room)
         if result is None:
             raise OutOfOrderError
-        counted, fresh, gained = result
+        counted, gained = result
         self._sums.gained(gained)
         self._note(counted, block, order)
-        return fresh
 
     def close(self) -> None:
         """Close the log: running journeys lapse or stay open, customers are added up."""
-        for begin in range(0, len(self._carried.key), CHUNK_ROWS):
-            carried = self._carried.take(slice(begin, begin + CHUNK_ROWS))
+        whole = self.carried
+        for begin in range(0, len(whole.key), CHUNK_ROWS):
+            carried = whole.take(slice(begin, begin + CHUNK_ROWS))
             bucket = bucket_of_major(carried.key).astype(np.uint8)
             closed = close_log(carried, bucket, self._reading)
             self._sums.close(closed, self._n_states)
             self._findings.add("first_visit_of_unsure_journey", self._leave_out.time, closed.unsure_visits)
             self._sums.add_customers(carried, bucket)
-        self._carried = self._blank(0)
+        self._carried, self._held = self._blank(0), Held()
 
     @property
     def carried(self) -> Carried:
         """One record per customer seen."""
-        return self._carried
+        return self._held.carried(self._also) if self._compiled else self._carried
 
     def resume(self, carried: Carried | None, n_states: int) -> None:
         """Begin with the records of an earlier count; `n_states` states are known by now.
@@ -210,7 +213,9 @@ class Counter:
         if carried is not None and carried.names != blank.names:
             msg = f"carried: got the columns {carried.names}; wanted {blank.names}"
             raise ValueError(msg)
-        self._carried, self._n_states = blank if carried is None else carried, n_states
+        carried = blank if carried is None else carried
+        self._carried, self._held = (blank, Held.of(carried)) if self._compiled else (carried, Held())
+        self._n_states = n_states
 
     def _count(self, rows: Ordered, code: Codes, start: IntArray, at: IntArray) -> Carried:
         """Add up a block and return its customers' new records."""

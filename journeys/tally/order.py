@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from journeys.intake.rows import Rows
 from journeys.kernels.arrays import BoolArray, IntArray
+from journeys.kernels.compiled import is_built, positions
 
 # Rows whose arrays stay in the processor's cache while they are counted.
 CHUNK_ROWS = 1 << 17
@@ -120,10 +121,12 @@ def by_customer(key: NDArray[np.uint64]) -> IntArray:
     packed <<= bits
     packed |= np.arange(n, dtype=np.uint64)
     packed.sort()
-    packed &= (np.uint64(1) << bits) - np.uint64(1)
-    order = packed.view(np.int64)
-    sorted_key = key[order]
-    if (sorted_key[1:] < sorted_key[:-1]).any():
-        # Two customers share the leading bits: sort by the whole key.
-        order = np.argsort(key, kind="stable")
-    return order
+    if is_built():
+        order = positions(packed, int(bits), key)
+    else:
+        packed &= (np.uint64(1) << bits) - np.uint64(1)
+        order = packed.view(np.int64)
+        sorted_key = key[order]
+        order = None if (sorted_key[1:] < sorted_key[:-1]).any() else order
+    # Where two customers share the leading bits: sort by the whole key.
+    return np.argsort(key, kind="stable") if order is None else order

@@ -116,6 +116,8 @@ class Pass:
         )
         # Merged visits may last longer than the silence, and without one there is no longest stay at all.
         longest = None if rules.repeats == "merge" else rules.silence_us
+        # A customer whose story ended before the log is known to the other road only.
+        compiled = compiled and rules.ended_before is None
         cuts = [part * N_PARTS // n_workers for part in range(n_workers + 1)]
         self._workers = [
             Worker(
@@ -161,14 +163,10 @@ class Pass:
         return self._tally(tables)
 
     def _rows(self, log: LogSource | None = None) -> Iterator[Rows]:
-        from tqdm import tqdm
-
         source = self._log if log is None else log
-
-        with tqdm(total=self._look.n_rows, unit=" rows", unit_scale=True, disable=not self._progress) as bar:
-            for batch in source.batches(self._rules.columns):
-                bar.update(batch.num_rows)
-                yield self._normaliser.rows(batch)
+        batches = source.batches(self._rules.columns)
+        for batch in _with_bar(batches, self._look.n_rows) if self._progress else batches:
+            yield self._normaliser.rows(batch)
 
     def _ordered(self) -> Iterator[Block]:
         for rows in cut_between_ties(self._rows()):
@@ -235,6 +233,16 @@ class Pass:
 def _side_by_side(parts: list[Columns]) -> Columns:
     """Join tables of neighbouring buckets, letting go of each column as soon as it is copied."""
     return {column: np.concatenate([part.pop(column) for part in parts]) for column in list(parts[0])}
+
+
+def _with_bar(batches: Iterator[pa.RecordBatch], n_rows: int) -> Iterator[pa.RecordBatch]:
+    """Give batches on, showing how many of the rows have come."""
+    from tqdm import tqdm
+
+    with tqdm(total=n_rows, unit=" rows", unit_scale=True) as bar:
+        for batch in batches:
+            bar.update(batch.num_rows)
+            yield batch
 
 
 def ahead(items: Iterator[T]) -> Iterator[T]:
