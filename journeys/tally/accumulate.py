@@ -123,7 +123,8 @@ def _runs(more: More, n: int) -> list[tuple[tuple[int, ...], int]]:
         first[1:] |= part[1:] != part[:-1]
     start = np.flatnonzero(first)
     values = [part[start].tolist() for part in more.values()]
-    return [(tuple(of), row) for of, row in zip(zip(*values, strict=True) if values else [()], start.tolist(), strict=False)]
+    of = list(zip(*values, strict=True)) if values else [()] * len(start)
+    return list(zip(of, start.tolist(), strict=True))
 
 
 def _places(
