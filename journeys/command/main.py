@@ -148,7 +148,7 @@ def _summary(options: argparse.Namespace) -> tuple[str, int]:
         msg = f"--out {out}: is a file; wanted a folder, new or there already"
         raise RulesError(msg)
     horizons, least = _horizons(options), _min_customers(options)
-    compared = _compared(options)
+    compared = _compared(options, least)
     tally = _counted(options)
     check_limits(tally)
     fit = JourneyModel().fit(tally)
@@ -163,7 +163,7 @@ def _summary(options: argparse.Namespace) -> tuple[str, int]:
     return ("" if compared is None else compared.summary() + "\n") + summary_text(overview), DONE
 
 
-def _compared(options: argparse.Namespace) -> ThenAndNow | None:
+def _compared(options: argparse.Namespace, least: int) -> ThenAndNow | None:
     """Return what a ledger published in a generation, beside its newest; None where none is asked for."""
     if options.generation is None:
         return None
@@ -172,7 +172,7 @@ def _compared(options: argparse.Namespace) -> ThenAndNow | None:
     if not is_ledger(options.log):
         msg = f"--generation {options.generation}: {options.log} is no ledger; wanted the folder that `nightly` keeps"
         raise RulesError(msg)
-    return then_and_now(options.log, options.generation)
+    return then_and_now(options.log, options.generation, least)
 
 
 def _audit(options: argparse.Namespace) -> tuple[str, int]:
