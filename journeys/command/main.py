@@ -12,6 +12,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any, NoReturn
 
 from journeys.command import nightly
+from journeys.command.stop import StoppedError, stoppable
 from journeys.command.words import PrintError, named, one_line, tell
 from journeys.errors import JourneysError, JourneysWarning, LimitError, LogError, RulesError
 
@@ -27,6 +28,8 @@ EXIT_CODES = """exit codes:
   2  wrong usage or settings
   3  the log broke its quality limits, nothing was published
   4  done, and a change alarm tripped (nightly)
+  130  interrupted (Ctrl-C)
+  143  stopped by SIGTERM
 """
 logger = logging.getLogger("journeys")
 
@@ -54,9 +57,13 @@ def main(argv: Sequence[str] | None = None) -> int:
         warnings.showwarning = _log_warning
         warnings.simplefilter("always", JourneysWarning)
         try:
-            answer, code = options.run(options)
-            tell(answer)
+            with stoppable():
+                answer, code = options.run(options)
+                tell(answer)
             return int(code)
+        except (StoppedError, KeyboardInterrupt) as stop:
+            stopped = stop if isinstance(stop, StoppedError) else StoppedError()
+            return _refused(stopped, stopped.code, options.debug)
         except JourneysError as error:
             code = LIMITS if isinstance(error, LimitError) else USAGE if isinstance(error, RulesError) else FAILED
             return _refused(error, code, options.debug)
