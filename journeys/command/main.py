@@ -12,6 +12,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any, NoReturn
 
 from journeys.command import nightly
+from journeys.command.stop import StoppedError, stoppable
 from journeys.command.words import PrintError, named, one_line, tell
 from journeys.errors import JourneysError, JourneysWarning, LimitError, LogError, RulesError
 
@@ -27,6 +28,8 @@ EXIT_CODES = """exit codes:
   2  wrong usage or settings
   3  the log broke its quality limits, nothing was published
   4  done, and a change alarm tripped (nightly)
+  130  interrupted (Ctrl-C)
+  143  stopped by SIGTERM
 """
 logger = logging.getLogger("journeys")
 
@@ -54,9 +57,13 @@ def main(argv: Sequence[str] | None = None) -> int:
         warnings.showwarning = _log_warning
         warnings.simplefilter("always", JourneysWarning)
         try:
-            answer, code = options.run(options)
-            tell(answer)
+            with stoppable():
+                answer, code = options.run(options)
+                tell(answer)
             return int(code)
+        except (StoppedError, KeyboardInterrupt) as stop:
+            stopped = stop if isinstance(stop, StoppedError) else StoppedError()
+            return _refused(stopped, stopped.code, options.debug)
         except JourneysError as error:
             code = LIMITS if isinstance(error, LimitError) else USAGE if isinstance(error, RulesError) else FAILED
             return _refused(error, code, options.debug)
@@ -148,7 +155,7 @@ def _summary(options: argparse.Namespace) -> tuple[str, int]:
         msg = f"--out {out}: is a file; wanted a folder, new or there already"
         raise RulesError(msg)
     horizons, least = _horizons(options), _min_customers(options)
-    compared = _compared(options)
+    compared = _compared(options, least)
     tally = _counted(options)
     check_limits(tally)
     fit = JourneyModel().fit(tally)
@@ -163,7 +170,7 @@ def _summary(options: argparse.Namespace) -> tuple[str, int]:
     return ("" if compared is None else compared.summary() + "\n") + summary_text(overview), DONE
 
 
-def _compared(options: argparse.Namespace) -> ThenAndNow | None:
+def _compared(options: argparse.Namespace, least: int) -> ThenAndNow | None:
     """Return what a ledger published in a generation, beside its newest; None where none is asked for."""
     if options.generation is None:
         return None
@@ -173,7 +180,7 @@ def _compared(options: argparse.Namespace) -> ThenAndNow | None:
     if not is_ledger(options.log):
         msg = f"--generation {options.generation}: {options.log} is no ledger; wanted the folder that `nightly` keeps"
         raise RulesError(msg)
-    return then_and_now(options.log, options.generation)
+    return then_and_now(options.log, options.generation, least)
 
 
 def _audit(options: argparse.Namespace) -> tuple[str, int]:

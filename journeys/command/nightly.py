@@ -9,6 +9,7 @@ import logging
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
+from journeys.command.stop import StoppedError
 from journeys.command.words import named
 from journeys.errors import JourneysError
 
@@ -44,7 +45,7 @@ def nightly(options: argparse.Namespace) -> tuple[str, int]:
     began = dt.datetime.now(dt.UTC)
     try:
         night = run_night(job, rebuild=options.rebuild, dry_run=options.dry_run)
-    except (JourneysError, OSError) as error:
+    except (JourneysError, OSError, StoppedError) as error:
         if not options.dry_run:
             _log_run(job, began, {"error": " ".join(str(error).split())})
         raise

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from journeys.kernels.arrays import FloatArray, IntArray, sum_at
+from journeys.kernels.arrays import FloatArray, IntArray, distinct, sum_at
 
 
 @dataclass(frozen=True, eq=False)
@@ -124,9 +124,9 @@ def table_tests(counts: Counts) -> TableTests:
     width_row, width = _size(counts.row), _size(counts.column)
     row_key, column_key = counts.stratum * width_row + counts.row, counts.stratum * width + counts.column
     cell_key = row_key * width + counts.column
-    cells, cell = np.unique(cell_key, return_inverse=True)
-    rows, row = np.unique(row_key, return_inverse=True)
-    columns, column = np.unique(column_key, return_inverse=True)
+    cells, cell = distinct(cell_key, n_strata * width_row * width)
+    rows, row = distinct(row_key, n_strata * width_row)
+    columns, column = distinct(column_key, n_strata * width)
     total, by_row = sum_at(counts.stratum, counts.n, n_strata), sum_at(row, counts.n, len(rows))
     by_column, o = sum_at(column, counts.n, len(columns)), sum_at(cell, counts.n, len(cells))
     at_row = np.searchsorted(rows, cells // width)
@@ -138,7 +138,7 @@ def table_tests(counts: Counts) -> TableTests:
 
     def squares(place: IntArray, over: FloatArray, of: IntArray) -> FloatArray:
         """Return, by stratum, the sum over buckets of squared counts over what they are counted against."""
-        pairs, pair = np.unique(counts.bucket * len(over) + place, return_inverse=True)
+        pairs, pair = distinct(counts.bucket * len(over) + place, _size(counts.bucket) * len(over))
         held = sum_at(pair, counts.n, len(pairs))
         at = pairs % len(over)
         return sum_at(of[at], held**2 / over[at], n_strata)
@@ -280,12 +280,14 @@ class Histories:
             The states of each stratum.
         """
         last = self.states[:, self.order - order + 1 :]
-        if order == 1:
-            stratum, strata = np.zeros(len(self.n), np.int64), np.zeros((min(len(self.n), 1), 0), self.states.dtype)
-        else:
-            strata, stratum = np.unique(last, axis=0, return_inverse=True)
+        stratum, n_strata = np.zeros(len(self.n), np.int64), 1
+        strata = np.zeros((min(len(self.n), 1), 0), self.states.dtype)
+        for states in last.T:
+            size = _size(states)
+            found, stratum = distinct(stratum * size + states, n_strata * size)
+            strata, n_strata = np.column_stack([strata[found // size], (found % size).astype(states.dtype)]), len(found)
         row = self.states[:, self.order - order].astype(np.int64)
-        return Counts(self.bucket, stratum.reshape(-1), row, self.column, self.n), strata
+        return Counts(self.bucket, stratum, row, self.column, self.n), strata
 
 
 def information(histories: Histories, tests: list[TableTests]) -> FloatArray:

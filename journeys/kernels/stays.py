@@ -6,10 +6,13 @@ from dataclasses import dataclass
 from functools import cached_property
 from typing import TYPE_CHECKING
 
-from journeys.kernels.arrays import FloatArray, IntArray
+from journeys.kernels.arrays import FloatArray, IntArray, sum_at
 
 if TYPE_CHECKING:
     from scipy.sparse import csr_array
+
+# A matrix has a place for each bucket and cell where not many more are empty than filled, and that many at most.
+_FEW, _MOST_PLACES = 4, 8_000_000
 
 
 @dataclass(frozen=True, eq=False)
@@ -127,11 +130,17 @@ class BucketStays:
     survivor_n: FloatArray
 
     @cached_property
-    def by_cell(self) -> csr_array:
-        """Numbers of ended stays, shape (n_buckets, last cell that occurs + 1); kept, since sorting takes its time."""
+    def by_cell(self) -> FloatArray | csr_array:
+        """Numbers of ended stays, shape (n_buckets, last cell that occurs + 1); kept, since sorting takes its time.
+
+        Where nearly every place is filled and all have room, a matrix with a place for each is multiplied quicker.
+        """
         from scipy.sparse import csr_array
 
         shape = (self.n_buckets, int(self.cell.max(initial=-1)) + 1)
+        size = shape[0] * shape[1]
+        if size <= min(_FEW * len(self.n), _MOST_PLACES):
+            return sum_at(self.bucket * shape[1] + self.cell, self.n, size).reshape(shape)
         return csr_array((self.n, (self.bucket, self.cell)), shape=shape)
 
 

@@ -208,14 +208,15 @@ def _one_row(
     n_bins = int(table["bin"][mine].max()) + 1 if mine.any() else 1
     lower, upper = bin_bounds_days(edges, n_bins)
     target = column(table["outcome"][ended].astype(np.int64))
-    cells, cell = np.unique(target * n_bins + table["bin"][ended], return_inverse=True)
+    n_targets = FIRST_OUTCOME + len(rules.outcomes) + 1
+    cells, cell = distinct(target * n_bins + table["bin"][ended], n_targets * n_bins)
     n: FloatArray = table["n"][ended].astype(np.float64)
     days = join_limbs(table, total)[ended] / DAY_US
     zeros, none = np.zeros(int(still.sum()), np.int64), np.zeros(0, np.int64)
     open_n: FloatArray = table["n"][still].astype(np.float64)
     stays = Stays(
         n_states=1,
-        n_targets=FIRST_OUTCOME + len(rules.outcomes) + 1,
+        n_targets=n_targets,
         n_bins=n_bins,
         state=np.zeros(len(cells), np.int64),
         target=cells // n_bins,

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import replace
 from typing import Any
 
@@ -13,6 +13,7 @@ from journeys.checks import duration_text
 from journeys.intake.group_checks import COHORT, PERIOD
 from journeys.intake.rules import JourneyRules
 from journeys.kernels.arrays import IntArray
+from journeys.nightly.few_alarms import Behind, not_told
 from journeys.nightly.job import Alarms
 from journeys.nightly.manifest import Watched
 from journeys.questions.corrected import corrected
@@ -75,24 +76,26 @@ def _ends(starts: IntArray, span: Span, alarms: Alarms) -> tuple[int, int]:
 
 
 def look(
-    pass_: ResumedPass, watch: Watch, watched: Watched, alarms: Alarms, rules: JourneyRules, span: Span
+    pass_: ResumedPass, watch: Watch, watched: Watched, alarms: Alarms, rules: JourneyRules, span: Span, least: int
 ) -> tuple[Watched, list[dict[str, Any]]]:
     """Return what is known of the weeks after a night, and the alarms that tripped.
 
-    Each week is looked at once: for events when it is over, for shares when it was followed for long enough.
+    Each week is looked at once: for events when it is over, for shares when it was followed for long enough. What
+    would tell of fewer than `least` people trips without its numbers.
     """
     by_week = _added(watched.by_week, pass_.events_by_week, watch.first_kept)
+    buckets = _seen(watched.buckets, pass_.buckets_by_week, watch.first_kept)
     first = int(np.searchsorted(watch.starts, max(watched.from_us, span.log_start_us)))
     over, followed = _ends(watch.starts, span, alarms)
     found: list[dict[str, Any]] = []
     for week in range(max(watched.events + 1, first + _FEWEST_WEEKS), over + 1):
         before = range(max(first, week - alarms.weeks), week)
-        found += _events(by_week, before, week, watch.names)
+        found += _events(by_week, buckets, before, week, watch.names, least)
     for week in range(max(watched.shares + 1, first + _FEWEST_WEEKS), followed + 1):
         before = range(max(first, week - alarms.weeks), week)
-        found += _shares(pass_, rules, before, week, alarms, watch.names)
+        found += _shares(pass_, rules, before, week, alarms, watch.names, least)
     after = Watched(
-        watched.within_us, watched.from_us, max(watched.shares, followed), max(watched.events, over), by_week
+        watched.within_us, watched.from_us, max(watched.shares, followed), max(watched.events, over), by_week, buckets
     )
     return after, found
 
@@ -115,34 +118,74 @@ def _added(
     }
 
 
+def _seen(
+    held: Mapping[str, Mapping[str, str]], new: Mapping[str, Mapping[int, int]], first_kept: int
+) -> dict[str, dict[str, str]]:
+    """Return in which buckets of customers events came in each week, as bits of a hexadecimal number."""
+    seen = {event: {week: bits for week, bits in weeks.items() if int(week) >= first_kept}
+            for event, weeks in held.items()}  # fmt: skip
+    for event, weeks in new.items():
+        mine = seen.setdefault(event, {})
+        for week, bits in weeks.items():
+            if week >= first_kept:
+                mine[str(week)] = f"{int(mine.get(str(week), '0'), 16) | bits:x}"
+    return seen
+
+
 def _events(
-    by_week: Mapping[str, Mapping[str, int]], before: range, week: int, names: tuple[str, ...]
+    by_week: Mapping[str, Mapping[str, int]],
+    buckets: Mapping[str, Mapping[str, str]],
+    before: range,
+    week: int,
+    names: tuple[str, ...],
+    least: int,
 ) -> list[dict[str, Any]]:
     counts = {event: {int(at): n for at, n in weeks.items()} for event, weeks in by_week.items()}
     alarms = []
     for event, what, mean, n in event_changes(counts, before, week):
-        alarms.append({
+        said = f"week of {names[week]}: event {event!r} is {what}"
+        alarm = {
             "week": names[week], "by": "", "group": "", "measure": f"event {what}", "state": event, "next_state": "",
             "before": mean, "now": float(n), "difference": n - mean,
-            "said": f"week of {names[week]}: event {event!r} is {what}: {n:,} times, {mean:,.1f} a week before",
-        })  # fmt: skip
+            "said": f"{said}: {n:,} times, {mean:,.1f} a week before",
+        }  # fmt: skip
+        people = (_people(buckets.get(event, {}), weeks) for weeks in (before, [week]))
+        few = any(0 < one < least for one in people)
+        alarms.append(not_told(alarm, said, least) if few else alarm)
     return alarms
 
 
+def _people(buckets: Mapping[str, str], weeks: Iterable[int]) -> int:
+    """Return in how many buckets of customers an event came in some weeks."""
+    seen = 0
+    for week in weeks:
+        seen |= int(buckets.get(str(week), "0"), 16)
+    return seen.bit_count()
+
+
 def _shares(
-    pass_: ResumedPass, rules: JourneyRules, before: range, week: int, alarms: Alarms, names: tuple[str, ...]
+    pass_: ResumedPass,
+    rules: JourneyRules,
+    before: range,
+    week: int,
+    alarms: Alarms,
+    names: tuple[str, ...],
+    least: int,
 ) -> list[dict[str, Any]]:
     """Return the shares of a week that changed: of all customers, and of each group of each column."""
     import pandas as pd
 
     table, states, groups = pass_.named_weeks()
-    frames = []
-    for by, value, keep in _slices(table["group"], rules, groups):
+    frames, slices = [], _slices(table["group"], rules, groups)
+    for by, value, keep in slices:
         frames.append(week_changes(table, states, before, week, keep=keep).assign(by=by, group=value))
     found = pd.concat(frames, ignore_index=True)
     found["p_value_corrected"] = corrected(found.p_value.to_numpy(dtype=float))
     tripped = found[(found.p_value_corrected < LEVEL) & (found.difference.abs() >= alarms.at_least)]
-    return [_alarm(one, names[week], alarms) for one in tripped.to_dict("records")]
+    rows = tripped.to_dict("records")
+    sides = np.isin(table["week"], list(before)), table["week"] == week
+    few = Behind(table, states, sides, {(by, value): keep for by, value, keep in slices}, least).few(rows)
+    return [_alarm(one, names[week], alarms, least if is_few else 0) for one, is_few in zip(rows, few, strict=True)]
 
 
 def _slices(
@@ -158,7 +201,8 @@ def _slices(
     return slices
 
 
-def _alarm(one: Mapping[Any, Any], week: str, alarms: Alarms) -> dict[str, Any]:
+def _alarm(one: Mapping[Any, Any], week: str, alarms: Alarms, least: int) -> dict[str, Any]:
+    """Return an alarm as it is told: without its numbers where fewer than `least` people, unless 0, are behind it."""
     within = duration_text(alarms.within_us)
     what = (
         f"converted within {within}" if one["measure"] == CONVERTED
@@ -166,10 +210,12 @@ def _alarm(one: Mapping[Any, Any], week: str, alarms: Alarms) -> dict[str, Any]:
     )  # fmt: skip
     where = f" ({one['by']} {one['group']})" if one["by"] else ""
     a, b = 100 * one["before"], 100 * one["now"]
+    about = f"week of {week}{where}: {what}"
     said = (
-        f"week of {week}{where}: {what}: {b:.1f} %, {a:.1f} % before; {b - a:+.1f} points "
+        f"{about}: {b:.1f} %, {a:.1f} % before; {b - a:+.1f} points "
         f"({100 * one['low']:+.1f} to {100 * one['high']:+.1f})"
     )
     kept = ("by", "group", "measure", "state", "next_state", "before", "now", "difference", "low", "high",
             "p_value_corrected")  # fmt: skip
-    return {"week": week, **{name: one[name] for name in kept}, "said": said}
+    alarm = {"week": week, **{name: one[name] for name in kept}, "said": said}
+    return not_told(alarm, about, least) if least else alarm

@@ -12,7 +12,7 @@ from journeys.errors import StoreError
 from journeys.nightly import disk
 
 NAME = "manifest.json"
-FORMAT_VERSION = 2
+FORMAT_VERSION = 3
 
 
 @dataclass(frozen=True)
@@ -90,6 +90,8 @@ class Watched:
         The last week looked at for changed shares and for events; -1 where none was.
     by_week : dict of str to dict of str to int
         How often each event came in each week.
+    buckets : dict of str to dict of str to str
+        In which buckets of customers it came in each week, as bits of a hexadecimal number.
     """
 
     within_us: int
@@ -97,6 +99,7 @@ class Watched:
     shares: int = -1
     events: int = -1
     by_week: dict[str, dict[str, int]] = field(default_factory=dict)
+    buckets: dict[str, dict[str, str]] = field(default_factory=dict)
 
 
 @dataclass(frozen=True)

@@ -231,7 +231,9 @@ def _drafted(
         return after, night, None
     alarms: list[dict[str, Any]] = []
     if job.alarms is not None and watched is not None and watch is not None:
-        watched, alarms = look(pass_, watch, watched, job.alarms, job.rules, reach.span)
+        watched, alarms = look(
+            pass_, watch, watched, job.alarms, job.rules, reach.span, job.min_customers
+        )
     newest = _generation(job, after, pass_, reach, draft.tally(number, tally), alarms, now_us)
     return without_old(replace(after, watched=watched), newest), replace(night, alarms=alarms), answers
 

@@ -194,6 +194,9 @@ def _clear(out: Path) -> None:
     for path in out.glob(".part-*"):
         with contextlib.suppress(OSError):
             shutil.rmtree(path)
+    for path in out.glob(f".{HISTORY}-*.part"):
+        with contextlib.suppress(OSError):
+            path.unlink()
 
 
 def _umask() -> int:

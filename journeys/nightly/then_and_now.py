@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Hashable, Mapping
 from dataclasses import dataclass
 from pathlib import Path
@@ -11,10 +12,14 @@ import numpy as np
 
 from journeys.checks import instant_text
 from journeys.errors import LogError, RulesError, StoreError
+from journeys.markup import LEFT_OUT
 from journeys.models.model import JourneyModel
 from journeys.nightly.ledger import Ledger, opened
 from journeys.nightly.manifest import Generation
+from journeys.questions.few_people import HIDDEN, few_in_counts
+from journeys.questions.hidden import shown_counts
 from journeys.questions.plain_count import PlainCount, plain_count
+from journeys.questions.summarise import MIN_CUSTOMERS, few_limit
 from journeys.questions.time_to_convert import IN_THE_END, time_to_convert
 from journeys.results import text_table
 from journeys.tally.tally import Tally
@@ -33,7 +38,8 @@ class ThenAndNow:
     ----------
     then, now : Generation
     lines : DataFrame
-        Columns line, then, then_low, then_high, now, now_low, now_high, difference.
+        Columns line, then, then_low, then_high, now, now_low, now_high, difference, flag: numbers about too few people
+        are NaN, and those of then where the difference to now is about too few; the flag says so.
     why : tuple of str
         What makes the difference, one sentence each.
     """
@@ -52,7 +58,9 @@ class ThenAndNow:
         ]  # fmt: skip
         dates = [("read up to", *(instant_text(one.as_of_us) for one in (self.then, self.now)), "")]
         table = text_table([*head, *dates, *rows], right=[1, 2, 3], width=0)
-        return table + "\n\nWhy they differ\n" + "\n".join(f"- {line}" for line in self.why) + "\n"
+        flags = sorted(set(self.lines.flag) - {""})
+        notes = "".join(f"\n{LEFT_OUT} {flag}" for flag in flags)
+        return table + notes + "\n\nWhy they differ\n" + "\n".join(f"- {line}" for line in self.why) + "\n"
 
 
 def tally_of_ledger(path: str | Path, number: int | None = None) -> Tally:
@@ -63,7 +71,7 @@ def tally_of_ledger(path: str | Path, number: int | None = None) -> Tally:
     return _read(Path(path), newest_or)
 
 
-def then_and_now(path: str | Path, number: int) -> ThenAndNow:
+def then_and_now(path: str | Path, number: int, min_customers: int = MIN_CUSTOMERS) -> ThenAndNow:
     """Compare a generation of a ledger with its newest.
 
     Parameters
@@ -72,6 +80,9 @@ def then_and_now(path: str | Path, number: int) -> ThenAndNow:
         The ledger.
     number : int
         Of a generation that is kept.
+    min_customers : int
+        Numbers about fewer people are left out, and so are differences of fewer, with the number of then that would
+        tell them; 0 leaves none out.
 
     Returns
     -------
@@ -84,29 +95,59 @@ def then_and_now(path: str | Path, number: int) -> ThenAndNow:
     StoreError
         If the ledger is damaged.
     """
-    import pandas as pd
 
     def both(ledger: Ledger) -> list[tuple[Generation, Tally]]:
         return [(one, ledger.tally(one)) for one in (_generation(ledger, number), _generation(ledger, None))]
 
     (then, was), (now, is_) = _read(Path(path), both)
-    tallies = [was, is_]
-    counts = [plain_count(tally) for tally in tallies]
-    read: dict[str, Callable[[PlainCount, Tally], int]] = {
-        "rows read": lambda _, tally: tally.n_rows,
-        "people": lambda plain, _: plain.n_people,
-        "journeys": lambda plain, _: plain.n_journeys,
-        "converted so far": lambda plain, _: plain.n_converted,
-        "undecided yet": lambda plain, _: plain.n_undecided,
-    }
-    rows = []
-    for line, of in read.items():
-        a, b = (float(of(plain, tally)) for plain, tally in zip(counts, tallies, strict=True))
-        rows.append((line, a, np.nan, np.nan, b, np.nan, np.nan, b - a))
-    a3, b3 = (_expected(tally) for tally in tallies)
-    rows.append((_EXPECTED, *a3, *b3, b3[0] - a3[0]))
-    names = ["line", "then", "then_low", "then_high", "now", "now_low", "now_high", "difference"]
-    return ThenAndNow(then, now, pd.DataFrame(rows, columns=names), _why(then, now, *counts))
+    least = few_limit(min_customers)
+    then_, now_ = (_Side.of(tally, least) for tally in (was, is_))
+    lines = _lines(then_, now_, least)
+    return ThenAndNow(then, now, lines, _why(then, now, then_.plain, now_.plain, lines))
+
+
+@dataclass(frozen=True, eq=False)
+class _Side:
+    """What a generation tells, without what is about too few people."""
+
+    n_rows: int
+    plain: PlainCount
+    expected: tuple[float, float, float]
+    expected_hidden: bool
+
+    @classmethod
+    def of(cls, tally: Tally, least: int) -> _Side:
+        plain = plain_count(tally)
+        few = few_in_counts(tally, least) if least > 1 else None
+        hidden = few is not None and (few.log or few.conversion)
+        expected = (np.nan, np.nan, np.nan) if hidden else _expected(tally)
+        return cls(tally.n_rows, plain if few is None else shown_counts(plain, few), expected, hidden)
+
+
+def _lines(then: _Side, now: _Side, least: int) -> pd.DataFrame:
+    """Return the lines of both; of people, no difference is told that is about too few of them."""
+    import pandas as pd
+
+    counts = [[getattr(side.plain, name) for name in COUNTED] for side in (then, now)]
+    # Journeys are those decided and those not: each of these tells of the others.
+    changes = [b - a for a, b in zip(*counts, strict=True)]
+    changes.append(_decided(now.plain) - _decided(then.plain))
+    few = any(0 < abs(change) < least for change in changes)
+    text = f"{HIDDEN}fewer than {least} people here or beside it"
+    n_more = now.n_rows - then.n_rows
+    rows: list[tuple[Any, ...]] = [("rows read", then.n_rows, *_BLANK, now.n_rows, *_BLANK, n_more, "")]
+    for line, a, b in zip(COUNTED.values(), *counts, strict=True):
+        a_ = math.nan if few else float(a)
+        rows.append((line, a_, *_BLANK, float(b), *_BLANK, b - a_, text if math.isnan(b - a_) else ""))
+    hidden = then.expected_hidden or now.expected_hidden
+    change = now.expected[0] - then.expected[0]
+    rows.append((_EXPECTED, *then.expected, *now.expected, change, text if hidden else ""))
+    names = ["line", "then", "then_low", "then_high", "now", "now_low", "now_high", "difference", "flag"]
+    return pd.DataFrame(rows, columns=names)
+
+
+def _decided(plain: PlainCount) -> float:
+    return plain.n_journeys - plain.n_undecided
 
 
 def _read(path: Path, what: Callable[[Ledger], T]) -> T:
@@ -122,6 +163,11 @@ def _read(path: Path, what: Callable[[Ledger], T]) -> T:
 
 
 _EXPECTED = "expected to convert in the end"
+# What is told of the plain counts, and how.
+COUNTED = {
+    "n_people": "people", "n_journeys": "journeys", "n_converted": "converted so far", "n_undecided": "undecided yet",
+}  # fmt: skip
+_BLANK = (math.nan, math.nan)
 
 
 def _generation(ledger: Ledger, number: int | None) -> Generation:
@@ -148,18 +194,26 @@ def _expected(tally: Tally) -> tuple[float, float, float]:
     return float(one.estimate), float(one.low), float(one.high)
 
 
-def _why(then: Generation, now: Generation, was: PlainCount, is_: PlainCount) -> tuple[str, ...]:
-    """Return what has happened between two generations."""
+def _why(
+    then: Generation, now: Generation, was: PlainCount, is_: PlainCount, told: pd.DataFrame
+) -> tuple[str, ...]:
+    """Return what has happened between two generations; numbers that `told` leaves out are left out here too."""
     if then.number == now.number:
         return ("they are the same generation",)
     days = (now.as_of_us - then.as_of_us) / 86_400e6
-    decided = (is_.n_journeys - is_.n_undecided) - (was.n_journeys - was.n_undecided)
+    change = dict(zip(told.line, told.difference, strict=True))
+    begun, converted, undecided = (change[COUNTED[name]] for name in ("n_journeys", "n_converted", "n_undecided"))
     lines = [
         f"{days:,.1f} more days of the log are read: {now.n_rows - then.n_rows:,} more rows",
-        f"{is_.n_journeys - was.n_journeys:,} more journeys have begun",
-        f"{decided:,} journeys have been decided since, {is_.n_converted - was.n_converted:,} of them converted; "
-        f"{was.n_undecided:,} were undecided then",
+        "some journeys have begun since" if math.isnan(begun) else f"{begun:,.0f} more journeys have begun",
     ]
+    if math.isnan(begun - undecided - converted):
+        lines.append("some journeys have been decided since; how many is left out, with numbers about too few people")
+    else:
+        lines.append(
+            f"{begun - undecided:,.0f} journeys have been decided since, {converted:,.0f} of them converted; "
+            f"{was.n_undecided:,} were undecided then"
+        )
     if now.rebuilt != then.rebuilt:
         lines.append(
             f"all inputs were counted anew in generation {now.rebuilt}: rows that had come too late for the ledger "
@@ -177,7 +231,7 @@ def _why(then: Generation, now: Generation, was: PlainCount, is_: PlainCount) ->
 def _said(row: Mapping[Hashable, Any], side: str) -> str:
     value, low, high = (row[f"{side}{bound}"] for bound in ("", "_low", "_high"))
     if not np.isfinite(value):
-        return "cannot be said"
+        return LEFT_OUT if row["flag"] else "cannot be said"
     if row["line"] != _EXPECTED:
         return f"{value:,.0f}"
     return f"{100 * value:.1f} % ({100 * low:.1f}–{100 * high:.1f})"

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from journeys.kernels.arrays import IntArray
+from journeys.kernels.arrays import IntArray, distinct
 from journeys.kernels.small_cells import Line, buckets_of, not_shown
 from journeys.models.fit import JourneyFit
 from journeys.models.memory import chain_of
@@ -28,7 +28,7 @@ def few_moves(
     """
     nodes = fit.nodes
     row, column, bucket, n_buckets = _moves(fit, tally)
-    moves, cell = np.unique(row * nodes.n_nodes + column, return_inverse=True)
+    moves, cell = distinct(row * nodes.n_nodes + column, nodes.n_rows * nodes.n_nodes)
     seen = buckets_of(cell, bucket, np.ones(len(cell)), (len(moves), n_buckets))
     row, column = moves // nodes.n_nodes, moves % nodes.n_nodes
     here = buckets_of(row[cell], bucket, np.ones(len(cell)), (nodes.n_rows, n_buckets)).sum(axis=1)

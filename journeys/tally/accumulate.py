@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from bisect import bisect_left
 from collections.abc import Callable, Mapping
 from typing import NamedTuple
 
@@ -19,6 +20,9 @@ _LIMB = 32
 _FEW = 1 << 15
 _BUCKETS_PER_PART = 4
 _LOW = (1 << _LIMB) - 1
+# So many times as long as what comes in, a table is not sorted anew; nor where further parts of the key differ often.
+_LONGER = 4
+_MOST_RUNS = 256
 
 
 def limbs(values: IntArray, name: str) -> Columns:
@@ -78,6 +82,75 @@ def add_up(key: IntArray, sums: Columns, more: More) -> Keyed:
     else:
         added = dict(sums)
     return Keyed(key, carried_over(added), more)
+
+
+def merged(table: Keyed, new: Keyed) -> Keyed:
+    """Return what two tables add up to, each with distinct keys in order; quick where the second is the shorter one."""
+    old_runs, new_runs = _runs(table.more, len(table.key)), _runs(new.more, len(new.key))
+    if len(table.key) < _LONGER * len(new.key) or len(new_runs) > _MOST_RUNS:
+        return add_up(
+            np.concatenate([table.key, new.key]),
+            {name: np.concatenate([table.sums[name], new.sums[name]]) for name in table.sums},
+            {name: np.concatenate([table.more[name], new.more[name]]) for name in table.more},
+        )
+    at, is_there = _places(table, new, old_runs, new_runs)
+    sums = {}
+    for name, column in table.sums.items():
+        sums[name] = column.copy()
+        sums[name][at[is_there]] += new.sums[name][is_there]
+    if not is_there.all():
+        extra = ~is_there
+        place = at[extra] + np.arange(int(extra.sum()))
+        is_old = np.ones(len(table.key) + len(place), bool)
+        is_old[place] = False
+
+        def woven(old: IntArray, more: IntArray) -> IntArray:
+            both = np.empty(len(is_old), old.dtype)
+            both[is_old], both[place] = old, more[extra]
+            return both
+
+        sums = {name: woven(column, new.sums[name]) for name, column in sums.items()}
+        key, more = woven(table.key, new.key), {name: woven(part, new.more[name]) for name, part in table.more.items()}
+        return Keyed(key, carried_over(sums), more)
+    return Keyed(table.key, carried_over(sums), table.more)
+
+
+def _runs(more: More, n: int) -> list[tuple[tuple[int, ...], int]]:
+    """Return the runs of equal further parts of the key, each with its first row."""
+    first = np.zeros(n, bool)
+    first[:1] = True
+    for part in more.values():
+        first[1:] |= part[1:] != part[:-1]
+    start = np.flatnonzero(first)
+    values = [part[start].tolist() for part in more.values()]
+    of = list(zip(*values, strict=True)) if values else [()] * len(start)
+    return list(zip(of, start.tolist(), strict=True))
+
+
+def _places(
+    table: Keyed, new: Keyed, old_runs: list[tuple[tuple[int, ...], int]], new_runs: list[tuple[tuple[int, ...], int]]
+) -> tuple[IntArray, NDArray[np.bool_]]:
+    """Return where the keys of a table belong in another, and whether they are there."""
+    at, is_there = np.zeros(len(new.key), np.int64), np.zeros(len(new.key), bool)
+    ends = [row for _, row in old_runs[1:]] + [len(table.key)]
+    for (of, first), last in zip(new_runs, [*(row for _, row in new_runs[1:]), len(new.key)], strict=True):
+        run = bisect_left(old_runs, of, key=lambda one: one[0])
+        begin = old_runs[run][1] if run < len(old_runs) else len(table.key)
+        end = ends[run] if run < len(old_runs) and old_runs[run][0] == of else begin
+        held, key = table.key[begin:end], new.key[first:last]
+        place = np.searchsorted(held, key)
+        at[first:last] = begin + place
+        within = place < len(held)
+        is_there[first:last][within] = held[place[within]] == key[within]
+    return at, is_there
+
+
+def is_in_order(table: Keyed) -> bool:
+    """Tell whether the keys of a table are distinct and in order."""
+    rises = table.key[1:] > table.key[:-1]
+    for part in reversed(table.more.values()):
+        rises = (part[1:] > part[:-1]) | ((part[1:] == part[:-1]) & rises)
+    return bool(rises.all())
 
 
 def carried_over(sums: Columns) -> Columns:
@@ -141,7 +214,8 @@ class Accumulator:
         for number, first, last in zip(part[begin].tolist(), begin, [*begin[1:], len(part)], strict=True):
             piece = slice(first, last)
             sums, more = ({name: column[piece] for name, column in of.items()} for of in (table.sums, table.more))
-            self._parts[number] = _Part(self._names, Keyed(table.key[piece], sums, more))
+            held = Keyed(table.key[piece], sums, more)
+            self._parts[number] = _Part(self._names, held if is_in_order(held) else add_up(*held))
 
     def result(self) -> Keyed:
         """Return the distinct keys in order and their sums, and let go of them."""
@@ -177,12 +251,15 @@ class _Part:
                 Keyed(key, columns if expand is None else expand(columns), more)
                 for key, columns, expand, more in self._blocks
             ]
-            blocks += [] if self._settled is None else [self._settled]
             self._blocks = []
+            if self._settled is not None and self._waiting * _LONGER > self._n_settled:
+                blocks.append(self._settled)
+                self._settled = None
             key = np.concatenate([block.key for block in blocks])
             more = {name: np.concatenate([block.more.pop(name) for block in blocks]) for name in list(blocks[0].more)}
             sums = {name: np.concatenate([block.sums.pop(name) for block in blocks]) for name in self._names}
-            self._settled = add_up(key, sums, more)
+            new = add_up(key, sums, more)
+            self._settled = new if self._settled is None else merged(self._settled, new)
             self._n_settled, self._waiting = len(self._settled.key), 0
         if self._settled is None:
             msg = "nothing was added to this part"

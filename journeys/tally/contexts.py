@@ -10,7 +10,7 @@ from journeys.kernels.bins import DAY_US
 from journeys.kernels.grouping import Grouping, unpacked
 from journeys.kernels.histories import earlier, slot
 from journeys.kernels.records import OPEN, Moves, Reading
-from journeys.tally.accumulate import Accumulator, Keyed, More, add_up
+from journeys.tally.accumulate import Accumulator, Keyed, More, add_up, is_in_order, merged
 from journeys.tally.keys import pack
 
 # Cells of all workers together: 4 bytes each.
@@ -96,9 +96,9 @@ class ContextSums:
         waits = day > 0
         mature = waits & ((day - _DAY_0) * DAY_US < self._moments.mature_before[period])
         known = mature | (waits & self._moments.over[period])
-        more = {**table.more, _DAY: np.where(known, 0, day)}
         # The flag is the lowest bit of a packed key.
-        self._sparse.add(table.key | mature, dict(table.sums), None, more)
+        aged = _rows(Keyed(table.key | mature, table.sums, {**table.more, _DAY: np.where(known, 0, day)}), known)
+        self._sparse.resume(_with(_rows(table, ~known), aged))
 
     def result(self) -> Keyed:
         """Return the distinct keys in order and their sums."""
@@ -172,4 +172,18 @@ def without_days(table: Keyed) -> Keyed:
     """Return a table without the days that states were entered on, what differs in these alone added up."""
     if _DAY not in table.more:
         return table
-    return add_up(table.key, dict(table.sums), {name: part for name, part in table.more.items() if name != _DAY})
+    day = table.more[_DAY]
+    without = Keyed(table.key, table.sums, {name: part for name, part in table.more.items() if name != _DAY})
+    return _with(_rows(without, day == 0), _rows(without, day != 0))
+
+
+def _rows(table: Keyed, keep: BoolArray) -> Keyed:
+    """Return some rows of a table."""
+    sums, more = ({name: column[keep] for name, column in of.items()} for of in (table.sums, table.more))
+    return Keyed(table.key[keep], sums, more)
+
+
+def _with(table: Keyed, new: Keyed) -> Keyed:
+    """Return a table with rows in any order added, most of it being in order as it is."""
+    held = table if is_in_order(table) else add_up(*table)
+    return merged(held, add_up(*new)) if len(new.key) else held

@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 
 from journeys.checks import MAX_TIME_US
 from journeys.intake.findings import Findings
-from journeys.intake.identity import from_bucket_major
+from journeys.intake.identity import bucket_of_major, from_bucket_major
 from journeys.intake.look import Look
 from journeys.intake.normalise import Normaliser
 from journeys.intake.people import People
@@ -28,6 +28,7 @@ from journeys.tally.keys import unpack
 from journeys.tally.passes import Pass, ahead
 from journeys.tally.spans import Span
 from journeys.tally.spill import N_PARTS, Spill
+from journeys.tally.tables import N_BUCKETS
 from journeys.tally.tally import Tally
 from journeys.tally.weeks import NAME as WEEKS
 from journeys.tally.weeks import Watch, joined, kept_weeks
@@ -68,6 +69,8 @@ class ResumedPass(Pass):
         Once counted: what happened by week, codes as the count has them.
     events_by_week : dict of str to dict of int to int
         How often each event came in each week, of the rows dealt out to be counted.
+    buckets_by_week : dict of str to dict of int to int
+        In which buckets of customers, a bit for each.
     """
 
     goes_on = True
@@ -86,6 +89,7 @@ class ResumedPass(Pass):
         self.watch, self._people = watch, People.here() if people is None else people
         self.weeks: Keyed | None = None
         self.events_by_week: dict[str, dict[int, int]] = {}
+        self.buckets_by_week: dict[str, dict[int, int]] = {}
         look = Look(span.log_start_us, span.as_of_us, log.n_rows or 0, span.whole_days, 0)
         super().__init__(
             log, rules, look, span, order=1, n_workers=N_PARTS, compiled=compiled, progress=False,
@@ -204,11 +208,18 @@ class ResumedPass(Pass):
         """Count events by week."""
         if self.watch is None or not len(rows):
             return
-        week = self.watch.week_of(rows.time)
-        pair, n = np.unique(np.stack([rows.event.astype(np.int64), week]), axis=1, return_counts=True)
-        for (event, at), count in zip(pair.T.tolist(), n.tolist(), strict=True):
-            weeks = self.events_by_week.setdefault(self._normaliser.codes.names[event], {})
-            weeks[at] = weeks.get(at, 0) + count
+        week, n_weeks = self.watch.week_of(rows.time), len(self.watch.starts)
+        place, bucket = rows.event.astype(np.int64) * n_weeks + week, bucket_of_major(rows.key)
+        triples, n = np.unique(place * N_BUCKETS + bucket, return_counts=True)
+        places, first = np.unique(triples // N_BUCKETS, return_index=True)
+        for at, begin, end in zip(places.tolist(), first, [*first[1:], len(n)], strict=True):
+            name, mine = self._normaliser.codes.names[at // n_weeks], at % n_weeks
+            seen = np.zeros(N_BUCKETS, bool)
+            seen[triples[begin:end] % N_BUCKETS] = True
+            bits = int.from_bytes(np.packbits(seen, bitorder="little").tobytes(), "little")
+            times, buckets = (of.setdefault(name, {}) for of in (self.events_by_week, self.buckets_by_week))
+            times[mine] = times.get(mine, 0) + int(n[begin:end].sum())
+            buckets[mine] = buckets.get(mine, 0) | bits
 
     def _in_time(self, rows: Rows, late_before_us: int | None, now_us: int) -> Rows:
         self._late.add("later_than_now", self._rules.time, rows.row[rows.time > now_us])

@@ -6,6 +6,7 @@ import doctest
 import os
 import re
 import shlex
+import signal
 import subprocess
 import sys
 from dataclasses import fields
@@ -16,6 +17,7 @@ import pytest
 import journeys as jn
 from journeys import errors
 from journeys.command import main as command
+from journeys.command.stop import StoppedError
 from journeys.intake.findings import MESSAGES
 from journeys.intake.rule_checks import LIMITS
 from journeys.models import model, what_if
@@ -168,6 +170,7 @@ def _ignored(path: str) -> bool:
 def test_names_every_exit_code():
     stated = set(table_after("## The commands"))
     known = {command.DONE, command.FAILED, command.USAGE, command.LIMITS, command.ALARM}
+    known |= {StoppedError(number).code for number in (signal.SIGINT, signal.SIGTERM)}
     assert stated == {str(code) for code in known}
     in_docstrings = {
         code

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 from collections import Counter
 from pathlib import Path
 from typing import Any
@@ -13,6 +14,7 @@ from ledgers import DAY_US, START, invented, make_job, newest_tally, one_pass, w
 
 from journeys.command.main import ALARM, DONE, main
 from journeys.nightly.alarms import LEVEL
+from journeys.nightly.few_alarms import NUMBERS, Behind
 from journeys.nightly.job import Job
 from journeys.nightly.ledger import opened
 from journeys.nightly.manifest import Generation
@@ -20,7 +22,7 @@ from journeys.nightly.night import Night, run_night
 from journeys.questions.week_changes import CONVERTED, event_changes, week_changes
 from journeys.tally.resumed import ResumedPass
 from journeys.tally.tally import Tally
-from journeys.tally.weeks import JOURNEY
+from journeys.tally.weeks import JOURNEY, STAY
 
 Published = list[tuple[Generation, Tally]]
 WEEK_US = 7 * DAY_US
@@ -159,6 +161,7 @@ def test_a_change_trips_once_and_is_named(root: Path, published: Published):
     assert events == {("quiz", "event new"), ("price", "event halved")}
     moves = {(one["state"], one["next_state"]) for one in tripped if one["measure"] == "move" and not one["by"]}
     assert {("visit", "price"), ("visit", "quiz")} <= moves
+    assert all(one["before"] is not None for one in tripped if one["group"] != "Hill")
     again = {(one["state"], one["measure"]) for one in nights[7].alarms if one["measure"].startswith("event")}
     assert again == {("price", "event gone")}
     assert newest_tally(job) == one_pass(job, newest_tally(job))
@@ -172,7 +175,8 @@ def test_nothing_trips_where_nothing_changes(root: Path, published: Published):
 def test_exit_code_4_and_again_by_the_run_that_makes_good(
     root: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
 ):
-    job, path = make_job(root, lateness="1d", alarms=ALARMS), str(root / "job.toml")
+    # Each week's 240 people are in fewer than 150 buckets: what trips is told without numbers wherever it is told.
+    job, path = make_job(root, lateness="1d", alarms=ALARMS, min_customers=150), str(root / "job.toml")
     weeks = changing(41, 7, 0.1, 5)
     codes = []
     for number, rows in enumerate(weeks):
@@ -181,7 +185,15 @@ def test_exit_code_4_and_again_by_the_run_that_makes_good(
             codes.append(main(["nightly", path]))
     assert codes == [DONE, DONE, ALARM]
     out = capsys.readouterr().out
-    assert "ALARM week of 2025-02-10: event 'quiz' is new" in out
+    left_out = "has changed; the numbers are left out: fewer than 150 people here or beside it"
+    told = [line for line in out.splitlines() if line.startswith("ALARM")]
+    assert f"ALARM week of 2025-02-10: event 'quiz' is new {left_out}" in told
+    assert all(line.endswith(left_out) for line in told)
+    runs = [json.loads(line) for line in (job.out / "runs.jsonl").read_text().splitlines()]
+    stamp = json.loads((job.out / "latest" / "run.json").read_text())
+    assert runs[-1]["alarms"] == stamp["alarms"]
+    assert len(stamp["alarms"]) == len(told)
+    assert {one[name] for one in stamp["alarms"] for name in NUMBERS if name in one} == {None}
     assert main(["nightly", path]) == DONE
     (job.out / "latest" / "run.json").unlink()
     assert main(["nightly", path]) == ALARM
@@ -230,6 +242,52 @@ def test_difference_of_independent_customers_is_that_of_two_shares():
     assert one.std_error == pytest.approx(spread, rel=0.2)
     assert one.difference == pytest.approx(0.15, abs=3 * spread)
     assert (one.n_before, one.n_now) == (8_000, 4_000)
+
+
+def behind(rows: list[tuple[int, int, int, int, int]], least: int) -> Behind:
+    """Return who is behind the shares of rows (state, next, week, group, people), each row of people of its own."""
+    made = [(bucket, *row[:4]) for row in rows for bucket in range(row[4])]
+    bucket, state, next_code, week, group = (np.array(column) for column in zip(*made, strict=True))
+    flag = np.where(state == 0, JOURNEY, STAY)
+    table = {"bucket": bucket, "state": state, "next": next_code, "flag": flag, "week": week, "group": group,
+             "n": np.ones(len(bucket), np.int64)}  # fmt: skip
+    keep = {("", ""): np.ones(len(bucket), bool)}
+    keep |= {("district", name): group == code for code, name in enumerate(("Hill", "Harbour"))}
+    return Behind(table, ["lapsed", "open", "joined", "visit", "price", "quiz"], (week == 0, week == 1), keep, least)
+
+
+def a_share(measure: str, state: str = "entry", next_state: str = "", group: str = "") -> dict[str, str]:
+    by = "district" if group else ""
+    return {"measure": measure, "by": by, "group": group, "state": state, "next_state": next_state}
+
+
+@pytest.mark.parametrize(
+    ("joined", "least", "few"),
+    [(9, 10, True), (10, 10, False), (0, 10, False), (191, 10, True), (190, 10, False), (1, 1, False), (9, 0, False)],
+)
+def test_shares_of_few_people_are_not_told(joined: int, least: int, few: bool):
+    """Neither those who converted that week, nor those who did not, may be few; of nobody there is nothing to tell."""
+    rows = [(0, 1, 0, 0, 60), (0, 0, 0, 0, 90), (0, 1, 1, 0, joined), (0, 0, 1, 0, 200 - joined)]
+    # People of one row stand in buckets from 0 on, so that those who joined are among the others, and count anyway.
+    assert behind([row for row in rows if row[4]], least).few([a_share(CONVERTED)]) == [few]
+
+
+def test_a_group_is_not_told_where_all_others_are_few():
+    rows = [(0, won, week, 0, 50) for won in (0, 1) for week in (0, 1)]
+    others = [(0, won, week, 1, 30) for won in (0, 1) for week in (0, 1)]
+    hill = [a_share(CONVERTED, group="Hill")]
+    assert behind(rows + others, 10).few(hill) == [False]
+    assert behind(rows + [(*row[:4], 4) for row in others], 10).few(hill) == [True]
+    assert behind(rows + [(*row[:4], 4) for row in others], 10).few([a_share(CONVERTED)]) == [False]
+
+
+def test_moves_that_would_tell_of_another_are_not_told():
+    """All but one of the moves out of a state tell how many made that one."""
+    both = [a_share("move", "visit", "price"), a_share("move", "visit", "quiz")]
+    rows = [(3, 4, week, 0, 40) for week in (0, 1)] + [(3, 5, week, 0, 20) for week in (0, 1)]
+    assert behind(rows, 10).few(both) == [False, False]
+    assert behind([*rows, (3, 2, 1, 0, 4)], 10).few(both) == [False, True]
+    assert behind([*rows, (3, 2, 1, 0, 12)], 10).few(both) == [False, False]
 
 
 def test_few_are_not_compared():

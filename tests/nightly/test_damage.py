@@ -16,6 +16,7 @@ from journeys.errors import LogError, StoreError
 from journeys.nightly.inputs import InputError
 from journeys.nightly.job import Job
 from journeys.nightly.ledger import opened
+from journeys.nightly.manifest import FORMAT_VERSION
 from journeys.nightly.night import run_night
 
 
@@ -54,7 +55,7 @@ def test_a_file_that_is_gone_is_told(job: Job):
 def test_a_manifest_of_another_version(job: Job):
     path = job.ledger / "manifest.json"
     text = path.read_text()
-    path.write_text(text.replace('"format_version": 2', '"format_version": 99'))
+    path.write_text(text.replace(f'"format_version": {FORMAT_VERSION}', '"format_version": 99'))
     with pytest.raises(StoreError, match="has format version 99, this program reads 2; count anew with --rebuild"):
         run_night(job)
     path.write_text(text)

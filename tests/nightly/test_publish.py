@@ -150,6 +150,33 @@ def test_then_and_now(kept: Job, root: Path, capsys: pytest.CaptureFixture[str])
     )
 
 
+def test_then_and_now_tell_nothing_of_few_people(kept: Job, root: Path, capsys: pytest.CaptureFixture[str]):
+    whole = then_and_now(kept.ledger, 3, 0)
+    numbers = ["then", "then_low", "then_high", "now", "now_low", "now_high", "difference"]
+    assert whole.lines.set_index("line")[["then", "now"]].notna().all(axis=None)
+    # All there are, are too few: only how many rows were read is told.
+    none = then_and_now(kept.ledger, 3, 200)
+    hidden = none.lines.set_index("line").drop(index="rows read")
+    assert hidden[numbers].isna().all(axis=None)
+    assert set(hidden.flag) == {"hidden: fewer than 200 people here or beside it"}
+    told = [f"{n:,.0f}" for n in whole.lines.then[1:5]] + ["journeys have begun since"]
+    assert [n in none.summary().split("\n\n", 1)[1] for n in told] == [False] * 4 + [True]
+    words = ["summary", str(kept.ledger), "--generation", "3", "--min-customers", "200", "--out", str(root / "few")]
+    assert main(words) == DONE
+    assert capsys.readouterr().out.startswith(none.summary())
+
+
+def test_then_is_not_told_where_the_difference_is_of_few_people(kept: Job):
+    whole = then_and_now(kept.ledger, 3, 0).lines.set_index("line")
+    counts = ["people", "journeys", "converted so far", "undecided yet"]
+    least = int(min(n for n in whole.loc[counts, "difference"].abs() if n)) + 1
+    found = then_and_now(kept.ledger, 3, least)
+    lines = found.lines.set_index("line")
+    assert lines.loc[counts, ["then", "difference"]].isna().all(axis=None)
+    assert lines.loc[counts, "now"].tolist() == whole.loc[counts, "now"].tolist()
+    assert "some journeys have been decided since; how many is left out" in found.summary()
+
+
 @pytest.mark.parametrize(
     ("words", "told"),
     [
