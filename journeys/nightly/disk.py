@@ -21,8 +21,9 @@ def make_folder(path: Path) -> None:
 
 
 def write(path: Path, data: Any) -> None:
-    """Write bytes to a file and wait until they are on the disk."""
-    with path.open("wb") as file:
+    """Write bytes to a file and wait until they are on the disk; a link that stands there is not followed."""
+    path.unlink(missing_ok=True)
+    with path.open("xb") as file:
         file.write(data)
         file.flush()
         os.fsync(file.fileno())

@@ -3,8 +3,8 @@
 from __future__ import annotations
 
 import difflib
+import os
 import re
-import tomllib
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from pathlib import Path
@@ -13,6 +13,7 @@ from typing import Any
 from journeys.checks import duration_us
 from journeys.errors import RulesError
 from journeys.intake.rules import JourneyRules
+from journeys.intake.settings import read_toml
 from journeys.questions.summarise import MIN_CUSTOMERS, few_limit
 
 # The keys of a job file, and of its table of alarms; the first four must be given.
@@ -97,12 +98,7 @@ class Job:
             If the file cannot be read, or anything it says is wrong.
         """
         file = Path(path)
-        try:
-            settings = tomllib.loads(file.read_text(encoding="utf-8"))
-        except OSError as fault:
-            raise RulesError(f"job file {file}: {fault.strerror or 'cannot be read'}") from None
-        except (tomllib.TOMLDecodeError, UnicodeDecodeError) as fault:
-            raise RulesError(f"job file {file}: not TOML ({fault})") from None
+        settings = read_toml(file, "job file")
         problems = _unknown(settings, KEYS, "")
         problems += [f'{key}: not given; wanted a path, such as {key} = "{key}"' for key in KEYS[:_NEEDED]
                      if key not in settings]  # fmt: skip
@@ -149,7 +145,7 @@ def _unknown(settings: Mapping[str, Any], known: tuple[str, ...], where: str) ->
 
 
 def _text(value: Any, key: str) -> str:
-    if not isinstance(value, str) or not value:
+    if not isinstance(value, str) or not value or "\0" in value:
         msg = f'{key}: got {value!r}; wanted a path, such as {key} = "{key}"'
         raise ValueError(msg)
     return value
@@ -211,10 +207,23 @@ def _weeks(value: Any, _: str) -> int:
 
 
 def _place_faults(paths: Mapping[str, Path]) -> list[str]:
-    """Say where a folder would be taken for another: what is published must not be read as a log."""
-    faults = []
-    folders = {key: paths[key].resolve() for key in ("log", "ledger", "out") if key in paths}
+    """Say where a folder would be taken for another, links followed, or something else stands in its place.
+
+    What is published must not be read as a log, nor a ledger be cleared away with what was published.
+    """
+    faults = [fault for key in ("ledger", "out") if key in paths and (fault := _in_the_way(key, paths[key]))]
+    folders = {key: Path(os.path.realpath(paths[key])) for key in ("log", "ledger", "out") if key in paths}
     for inner, outer in (("ledger", "log"), ("out", "log"), ("out", "ledger"), ("ledger", "out"), ("log", "ledger")):
         if inner in folders and outer in folders and folders[inner].is_relative_to(folders[outer]):
             faults.append(f"{inner}: {paths[inner]} lies in the folder of {outer}; wanted folders of their own")
     return faults
+
+
+def _in_the_way(key: str, path: Path) -> str | None:
+    """Say what is there in the place of a folder, a link to nothing included."""
+    try:
+        if path.is_dir() or not os.path.lexists(path):
+            return None
+    except OSError as fault:
+        return f"{key}: {str(path)[:200]}: {fault.strerror}"
+    return f"{key}: {path} is no folder; wanted a folder, or a path where there is nothing yet"

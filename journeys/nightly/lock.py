@@ -11,7 +11,7 @@ from collections.abc import Iterator
 from pathlib import Path
 from typing import IO
 
-from journeys.errors import JourneysError
+from journeys.errors import JourneysError, StoreError
 
 NAME = "lock"
 
@@ -33,8 +33,12 @@ def held(folder: Path) -> Iterator[None]:
     ------
     LockedError
         Naming who holds it.
+    StoreError
+        If the lock is a link, which would have something else written over.
     """
     path = folder / NAME
+    if path.is_symlink():
+        raise StoreError(f"{path} is a link; wanted a ledger whose files are its own: take the link away")
     with path.open("a+", encoding="utf-8") as file:
         try:
             _lock(file)

@@ -2,17 +2,22 @@
 
 from __future__ import annotations
 
+import functools
 import json
+import re
 from collections.abc import Iterator
-from dataclasses import asdict, dataclass, field
+from dataclasses import asdict, dataclass, field, is_dataclass
 from pathlib import Path
-from typing import Any
+from types import NoneType, UnionType
+from typing import Any, get_args, get_origin, get_type_hints
 
 from journeys.errors import StoreError
 from journeys.nightly import disk
 
 NAME = "manifest.json"
 FORMAT_VERSION = 3
+# What a ledger calls its files: no path, which could lead out of the folder.
+_FILE_NAME = re.compile(r"(part|held|tally)-[\w.-]+")
 
 
 @dataclass(frozen=True)
@@ -201,7 +206,7 @@ def read_manifest(folder: Path) -> Manifest | None:
         body = json.loads(data)["ledger"]
         version = body.pop("format_version")
         found = _from_dict(body) if version == FORMAT_VERSION else None
-    except (KeyError, TypeError, ValueError, AttributeError):
+    except (KeyError, TypeError, ValueError, AttributeError, RecursionError):
         raise StoreError(damaged(path)) from None
     if found is None:
         msg = f"{path} has format version {version}, this program reads {FORMAT_VERSION}; count anew with --rebuild"
@@ -221,7 +226,9 @@ def damaged(path: Path) -> str:
 
 
 def _from_dict(body: dict[str, Any]) -> Manifest:
-    return Manifest(
+    if not _has_form(body, Manifest):
+        raise ValueError(NAME)
+    found = Manifest(
         **body
         | {
             "held": None if body["held"] is None else Stored(**body["held"]),
@@ -231,3 +238,30 @@ def _from_dict(body: dict[str, Any]) -> Manifest:
             "generations": [Generation(**one | {"tally": Stored(**one["tally"])}) for one in body["generations"]],
         }
     )
+    if not all(_FILE_NAME.fullmatch(stored.file) for stored in found.files):
+        raise ValueError(NAME)
+    return found
+
+
+def _has_form(value: Any, kind: Any) -> bool:
+    """Tell whether a value read from JSON is what an annotation says, a dataclass being a dict of its fields."""
+    if kind is Any:
+        return True
+    if is_dataclass(kind):
+        hints = _hints(kind)
+        return isinstance(value, dict) and value.keys() == hints.keys() and all(
+            _has_form(value[name], hint) for name, hint in hints.items()
+        )  # fmt: skip
+    if get_origin(kind) is UnionType:
+        return any(_has_form(value, one) for one in get_args(kind))
+    if get_origin(kind) is list:
+        return isinstance(value, list) and all(_has_form(one, get_args(kind)[0]) for one in value)
+    if get_origin(kind) is dict:
+        return isinstance(value, dict) and all(_has_form(one, get_args(kind)[1]) for one in value.values())
+    # A truth value is no number.
+    return type(value) is kind or (value is None and kind is NoneType)
+
+
+@functools.cache
+def _hints(kind: Any) -> dict[str, Any]:
+    return get_type_hints(kind)

@@ -168,8 +168,10 @@ def _nulls(counts: dict[str, Any]) -> dict[str, Any]:
 
 def _put_in_place(part: Path, target: Path) -> None:
     """Give a folder its name; one that is there was left by a run that got no further, and says the same."""
-    if target.exists():
+    if _is_real_folder(target):
         shutil.rmtree(target)
+    else:
+        target.unlink(missing_ok=True)
     part.rename(target)
 
 
@@ -177,16 +179,27 @@ def _point(out: Path, name: str) -> None:
     """Make `latest` lead to a dated folder."""
     link, part = out / LATEST, out / f".{LATEST}-part"
     part.unlink(missing_ok=True)
-    try:
-        part.symlink_to(name, target_is_directory=True)
-    except OSError:
-        # Where links are not to be had, the files are copied, each of them whole, the stamp last.
-        link.mkdir(exist_ok=True)
-        for path in sorted((out / name).iterdir(), key=lambda path: path.name == STAMP):
-            with written_whole(link / path.name) as copy:
-                shutil.copyfile(path, copy)
+    if not _is_real_folder(link) and _is_linked(part, name):
+        part.replace(link)
         return
-    part.replace(link)
+    # Where links are not to be had, or were lost in copying, the files are copied, each of them whole, the stamp last.
+    link.mkdir(exist_ok=True)
+    for path in sorted((out / name).iterdir(), key=lambda path: path.name == STAMP):
+        with written_whole(link / path.name) as copy:
+            shutil.copyfile(path, copy)
+
+
+def _is_real_folder(path: Path) -> bool:
+    return path.is_dir() and not path.is_symlink()
+
+
+def _is_linked(path: Path, name: str) -> bool:
+    """Make a link to a folder beside it, and tell whether that could be done."""
+    try:
+        path.symlink_to(name, target_is_directory=True)
+    except OSError:
+        return False
+    return True
 
 
 def _clear(out: Path) -> None:

@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager
 from dataclasses import fields
 from typing import Any
 
@@ -23,6 +24,8 @@ Table = dict[str, NDArray[Any]]
 _NAME, _KINDS = b"table", b"kinds"
 _CARRIED, _ROWS = "carried", "rows"
 _SUM, _MORE = "sum ", "more "
+# Kinds of numbers that a table may have, by the names that `_packed` gives them.
+_KINDS_OF_NUMBER = {np.dtype(kind).str: np.dtype(kind) for kind in ("?", *np.typecodes["AllInteger"])}
 
 
 def kept_bytes(kept: Kept) -> pa.Buffer:
@@ -45,15 +48,16 @@ def kept_from(data: bytes) -> Kept:
     StoreError
         If the bytes hold something else.
     """
-    tables = _unpacked(data)
-    known = {field.name for field in fields(Carried)}
-    columns = tables.pop(_CARRIED)
-    if not set(columns) <= known:
-        msg = f"the ledger's records have columns that this program does not know: {sorted(set(columns) - known)}"
-        raise StoreError(msg)
-    keyed = {name: Keyed(table["key"], _those(table, _SUM), _those(table, _MORE)) for name, table in tables.items()}
-    own = {name: values if values.flags.writeable else values.copy() for name, values in columns.items()}
-    return Kept(Carried(**own), keyed)
+    with _as_written():
+        tables = _unpacked(data)
+        known = {field.name for field in fields(Carried)}
+        columns = tables.pop(_CARRIED)
+        if not set(columns) <= known:
+            msg = f"the ledger's records have columns that this program does not know: {sorted(set(columns) - known)}"
+            raise StoreError(msg)
+        keyed = {name: Keyed(table["key"], _those(table, _SUM), _those(table, _MORE)) for name, table in tables.items()}
+        own = {name: values if values.flags.writeable else values.copy() for name, values in columns.items()}
+        return Kept(Carried(**own), keyed)
 
 
 def rows_bytes(rows: Rows) -> pa.Buffer:
@@ -62,8 +66,29 @@ def rows_bytes(rows: Rows) -> pa.Buffer:
 
 
 def rows_from(data: bytes) -> Rows:
-    """Return rows that have waited."""
-    return Rows(**_unpacked(data)[_ROWS])
+    """Return rows that have waited.
+
+    Raises
+    ------
+    StoreError
+        If the bytes hold something else.
+    """
+    with _as_written():
+        return Rows(**_unpacked(data)[_ROWS])
+
+
+@contextmanager
+def _as_written() -> Iterator[None]:
+    """Raise a StoreError where bytes are not those of tables, or not of the tables wanted."""
+    try:
+        yield
+    except (pa.ArrowException, OSError, LookupError, TypeError, ValueError, AttributeError, StopIteration):
+        # Arrow's own words may quote what it read.
+        msg = (
+            "a file of the ledger holds something else than records and sums, though its checksum fits; put the ledger "
+            "back from a copy, or count all inputs anew with --rebuild"
+        )
+        raise StoreError(msg) from None
 
 
 def _those(table: Table, prefix: str) -> Table:
@@ -103,8 +128,9 @@ def _unpacked(data: bytes) -> dict[str, Table]:
         with pa.ipc.open_stream(source) as reader:
             name, kinds = reader.schema.metadata[_NAME].decode(), json.loads(reader.schema.metadata[_KINDS])
             batch = reader.read_next_batch()
+            batch.validate(full=True)
             tables[name] = {
-                column: array.to_numpy(zero_copy_only=True).astype(np.dtype(kinds[column]), copy=False)
+                column: array.to_numpy(zero_copy_only=True).astype(_KINDS_OF_NUMBER[kinds[column]], copy=False)
                 for column, array in zip(batch.schema.names, batch.columns, strict=True)
             }
             # The end of one stream is where the next begins.

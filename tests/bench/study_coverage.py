@@ -1,22 +1,24 @@
-"""How often intervals hold the truth: coverage, width and flagged answers over many simulated logs.
+"""How often 95 % intervals hold the truth: every public question, over many simulated logs.
 
-Logs of two kinds of customers who come back (`tests/simulated.py`) are cut off at 2, 1.5 and 3 silences, so that stays
-are open at the end, and each is asked for conversion, steps, days, curves, single moves and what the log says by
-itself. The truth is the limit of the pooled estimator. Cut off logs of mixed customers have none in closed form, so it
-is the estimate on one log of many more customers; its own error is that of the answers times the root of the sizes'
-ratio, .06 standard errors for 300,000 customers beside 1,000.
+Logs of two kinds of customers who come back are cut off after some silences, while journeys are under way, and are
+asked everything (`coverage_questions.py`). The truth is the limit of each answer. Cut off logs of mixed customers have
+none in closed form, so it is the answer of one log of many more customers; its own error is that of the answers times
+the root of the sizes' ratio, .06 standard errors for 300,000 customers beside 1,000. That it is the limit and not the
+answer of whole journeys leaves out what mixed customers do to a chain, which `study_censoring.py` is about.
 
-Run from the repository: ``python tests/bench/study_coverage.py --logs 2000 --customers 1000 --jobs 2``.
+Run from the repository: ``python tests/bench/study_coverage.py --logs 1000 --customers 1000 --jobs 2 --write``, which
+puts the table into DEVELOPERS.md.
 """
 
 from __future__ import annotations
 
 import argparse
+import contextlib
 import multiprocessing
 import os
+import pickle
 import sys
 import time
-import warnings
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -24,34 +26,17 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 
-sys.path.insert(0, str(Path(__file__).resolve().parents[1]))
+sys.path[:0] = [str(Path(__file__).resolve().parent), str(Path(__file__).resolve().parents[1])]
 
-import simulated  # noqa: E402
+from coverage_questions import Asked, ask  # noqa: E402
 
-import journeys as jn  # noqa: E402
-from journeys.errors import JourneysWarning  # noqa: E402
-from journeys.questions.first_passage import from_entry  # noqa: E402
-from journeys.results import Estimates  # noqa: E402
-
-LEVELS = (0.95, 0.90)
-DAYS = (1.0, 3.0, 10.0, 30.0)
-LENGTHS = (2.0, 1.5, 3.0)
+LENGTHS = (3.0, 6.0)
 TRUTH_SEED = 7  # no log of the study has it
-# What is asked of the moves of a passage from entry, and what it is called in the table.
-STEPS = {"probability": "conversion", "mean": "mean steps", "sd": "sd of steps"}
-TIME = {"mean": "mean days", "sd": "sd of days", "median": "median days", "q90": "q90 days"}
-MOVE = "move "
-
-
-@dataclass(frozen=True)
-class Asked:
-    """Answers to one log: names in rows, numbers in arrays of shape (n,) or, for bounds, (n, n_levels)."""
-
-    names: tuple[tuple[str, str], ...]
-    value: np.ndarray
-    low: np.ndarray
-    high: np.ndarray
-    flagged: np.ndarray
+# The coverage of an answer by itself is told from so many intervals on; below, it is chance.
+ENOUGH = 100
+GUIDE = Path(__file__).resolve().parents[2] / "DEVELOPERS.md"
+BEGIN, END = "<!-- coverage of intervals: begin -->", "<!-- coverage of intervals: end -->"
+KEYS = ["question", "measure"]
 
 
 @dataclass(frozen=True)
@@ -65,176 +50,178 @@ class Task:
     bootstrap: bool
 
 
-def tally_of(customers: int, silences: float, rng: np.random.Generator) -> jn.Tally:
-    """Return the tally of a new log of mixed customers."""
-    log = simulated.simulate(customers, silences, rng, two_classes=True)
-    rules = jn.JourneyRules(
-        "customer", "time", "event", converted=simulated.CONVERTED, silence=f"{simulated.SILENCE_DAYS:g}d",
-        complete_history=True, log_start=simulated.LOG_START, as_of=simulated.log_end(silences),
-        horizons=["10d", "40d"],
-    )
-    return jn.tally(log, rules)
-
-
-def ask(tally: jn.Tally, *, bootstrap: bool) -> Asked:
-    """Return all answers of one log, linearised, and those of a passage by bootstrap too."""
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore", JourneysWarning)
-        fit = jn.JourneyModel().fit(tally)
-    parts: list[tuple[list[tuple[str, str]], Estimates, np.ndarray]] = []
-    for clock, wanted in (("steps", STEPS), ("time", TIME)):
-        parts.append(_rows(from_entry(fit, None, clock, quantiles=clock == "time"), wanted, "linearised"))
-        if bootstrap:
-            drawn = {name: told for name, told in wanted.items() if name not in ("median", "q90")}
-            parts.append(_rows(jn.first_passage(fit, None, clock), drawn, "bootstrap"))
-    curve = jn.passage_curve(fit)
-    for told, one in (("F({:g} d)", curve), ("F({:g} d) of those who convert", curve.given_reached())):
-        names = [("linearised", told.format(day)) for day in DAYS]
-        parts.append((names, *one.estimates(DAYS)))
-    moves = fit.moves()
-    pairs = moves.keys[["state", "next_state"]].itertuples(index=False)
-    parts.append(([("linearised", f"{MOVE}{state} to {after}") for state, after in pairs], moves.estimates, moves.flag))
-    within = jn.time_to_convert(fit)
-    mine = ((within.keys["horizon"] == "10d") & (within.keys["basis"] == "log")).to_numpy()
-    parts.append(([("linearised", "within 10 d, by the log")], within.estimates.take(mine), within.flag[mine]))
-    back = jn.comeback(tally, horizons=["40d"])
-    mine = (back.keys["measure"] == "returned").to_numpy()
-    told_back = [("linearised", f"back, {horizon}") for horizon in back.keys["horizon"][mine]]
-    parts.append((told_back, back.estimates.take(mine), back.flag[mine]))
-    names = tuple(name for part in parts for name in part[0])
-    bounds = [[part[1].bounds(level) for part in parts] for level in LEVELS]
-    low, high = (np.stack([np.concatenate([one[i] for one in at]) for at in bounds], axis=1) for i in (0, 1))
-    flagged = np.concatenate([part[2] for part in parts]) != ""
-    return Asked(names, np.concatenate([part[1].value for part in parts]), low, high, flagged)
-
-
-def _rows(
-    result: jn.FirstPassageResult, wanted: dict[str, str], method: str
-) -> tuple[list[tuple[str, str]], Estimates, np.ndarray]:
-    """Return the wanted rows that start at entry."""
-    keys = result.keys
-    at = [int(np.flatnonzero((keys["start_state"] == "entry") & (keys["measure"] == name))[0]) for name in wanted]
-    return [(method, told) for told in wanted.values()], result.estimates.take(np.array(at)), result.flag[at]
-
-
 def of_task(task: Task) -> Asked:
     """Simulate one log, with luck of its own, and ask."""
     rng = np.random.default_rng([task.seed, round(10 * task.silences), task.number])
-    return ask(tally_of(task.customers, task.silences, rng), bootstrap=task.bootstrap)
+    return ask(task.customers, task.silences, rng, bootstrap=task.bootstrap)
 
 
-def limits(silences: float, customers: int) -> dict[str, float]:
-    """Return the answers of one long log, by name."""
+def limits(silences: float, customers: int) -> dict[tuple[str, str, str], float]:
+    """Return the answers of one large log by name, those from resamples under the names they have too."""
     rng = np.random.default_rng([TRUTH_SEED, round(10 * silences)])
-    found = ask(tally_of(customers, silences, rng), bootstrap=False)
-    return {name: value for (_, name), value in zip(found.names, found.value.tolist(), strict=True)}
+    found = ask(customers, silences, rng, bootstrap=False)
+    truth = dict(zip(found.names, found.value.tolist(), strict=True))
+    again = {(f"{question}, resampled", *rest): value for (question, *rest), value in truth.items()}
+    return truth | again  # type: ignore[return-value]
 
 
-def studied(tasks: Sequence[Task], jobs: int) -> Iterator[Asked]:
-    """Yield the answers of many logs, from processes of their own where there are several jobs."""
-    if jobs == 1:
-        yield from map(of_task, tasks)
-        return
+def studied(tasks: Sequence[Task], jobs: int, kept: Path | None = None) -> Iterator[tuple[Task, Asked]]:
+    """Yield the answers of many logs, from processes of their own where there are several jobs.
+
+    Those that the file `kept` holds are taken from there, the others added to it: a study that was stopped goes on.
+    """
     os.environ["OMP_NUM_THREADS"] = os.environ["OPENBLAS_NUM_THREADS"] = "1"  # one log, one core
-    with multiprocessing.get_context("spawn").Pool(jobs) as pool:
-        yield from pool.imap(of_task, tasks, chunksize=10)
+    done = dict(_read(kept)) if kept and kept.exists() else {}
+    yield from ((task, done[task]) for task in tasks if task in done)
+    rest = [task for task in tasks if task not in done]
+    with contextlib.ExitStack() as stack:
+        note = stack.enter_context(kept.open("ab")) if kept else None
+        found: Iterator[Asked] = map(of_task, rest)
+        if jobs > 1:
+            pool = stack.enter_context(multiprocessing.get_context("spawn").Pool(jobs))
+            found = pool.imap(of_task, rest, chunksize=5)
+        for task, one in zip(rest, found, strict=True):
+            if note:
+                pickle.dump((task, one), note)
+                note.flush()
+            yield task, one
 
 
-def answers(asked: Sequence[Asked], truth: dict[str, float]) -> pd.DataFrame:
-    """Return one row per log, answer and level: whether it was flagged, its width, and whether it holds the truth.
+def _read(kept: Path) -> Iterator[tuple[Task, Asked]]:
+    with kept.open("rb") as file, contextlib.suppress(EOFError):
+        while True:
+            yield pickle.load(file)
 
-    Moves that nobody makes are left out.
+
+def answers(asked: Sequence[Asked], truth: dict[tuple[str, str, str], float]) -> pd.DataFrame:
+    """Return one row per log and answer: its error, whether it was flagged, and whether its interval holds the truth.
+
+    Left out is what has no truth to hold (infinite, or never seen in the large log) and what is known, not estimated.
     """
     parts = []
     for number, one in enumerate(asked):
-        aim = np.array([truth.get(name, 0.0) for _, name in one.names])
-        for i, level in enumerate(LEVELS):
-            parts.append(
-                pd.DataFrame(
-                    {
-                        "log": number,
-                        "method": [method for method, _ in one.names],
-                        "answer": [name for _, name in one.names],
-                        "level": level,
-                        "shown": ~np.isnan(one.low[:, i]),
-                        "flagged": one.flagged | np.isnan(one.low[:, i]),
-                        "width": one.high[:, i] - one.low[:, i],
-                        "held": (one.low[:, i] <= aim) & (aim <= one.high[:, i]),
-                        "error": one.value - aim,
-                    }
-                )
-            )
-    found = pd.concat(parts, ignore_index=True)
-    return found[found["answer"].map(truth).fillna(0.0) > 0]
+        aim = np.array([truth.get(name, np.nan) for name in one.names])
+        # A move that nobody makes is 0 in truth, and so is what hangs on it.
+        kept = np.isfinite(aim) & (aim != 0) & ~one.known
+        shown = np.isfinite(one.low) | np.isfinite(one.high)
+        low, high = np.nan_to_num(one.low, nan=-np.inf), np.nan_to_num(one.high, nan=np.inf)
+        frame = pd.DataFrame(one.names, columns=[*KEYS, "which"]).assign(
+            log=number, truth=aim, value=one.value, shown=shown, flagged=one.flagged | ~shown,
+            held=shown & (low <= aim) & (aim <= high),
+        )[kept]  # fmt: skip
+        parts.append(frame.assign(error=frame["value"].where(np.isfinite(frame["value"])) - frame["truth"]))
+    return pd.concat(parts, ignore_index=True)
 
 
 def coverage(found: pd.DataFrame) -> pd.DataFrame:
-    """Return coverage, its Monte Carlo error, mean width and the flagged share, of each answer and of all moves.
+    """Return one row per question and measure, over all its starts, stages, touchpoints or moves.
 
-    Flagged answers are left out of all but the flagged share and `all %`, the coverage of all that have an interval,
-    flagged or not. The bias is in standard deviations of
-    the answer; where many are flagged, those that are not are a choice of the larger ones.
+    `answers` counts these; `truth` is that of the smallest and the largest; `bias` the error of the mean in standard
+    deviations of the answer, of the answer where it is largest, flagged or not. `coverage` is that of intervals
+    without a flag, `error` its Monte Carlo error, `lowest` and `highest` that of single answers; `flagged` the share
+    that has a flag, `all` the coverage of all that have an interval.
     """
-    moves = found[found["answer"].str.startswith(MOVE)].assign(answer="all moves together")
-    rows = []
-    for key, group in pd.concat([found, moves]).groupby(["method", "answer", "level"], sort=False):
-        kept = group[~group["flagged"]]
-        # cells of one log are not independent: the error is that of the logs' own shares
-        by_log = kept.groupby("log")["held"].agg(["sum", "size"])
-        share = kept["held"].mean()
-        n = len(by_log)
-        spread = np.sqrt(((by_log["sum"] - share * by_log["size"]) ** 2).sum()) / max(len(kept), 1) if n else np.nan
-        sd = kept["error"].std()
-        rows.append(
-            (*key, n, 100 * group["flagged"].mean(), 100 * share, 100 * spread, kept["width"].mean(),
-             kept["error"].mean() / sd if sd > 0 else np.nan, 100 * group.loc[group["shown"], "held"].mean())
-        )  # fmt: skip
-    columns = ["method", "answer", "level", "logs", "flagged %", "coverage %", "MC error", "mean width", "bias in sd"]
-    columns.append("all %")
-    return pd.DataFrame(rows, columns=columns)
+    return pd.DataFrame([_row(key, group) for key, group in found.groupby(KEYS, sort=False)])
 
 
-def told(table: pd.DataFrame) -> str:
-    """Return the table with the levels side by side."""
-    wide = table.pivot_table(
-        index=["method", "answer"], columns="level", values=["coverage %", "MC error", "mean width"], sort=False
-    )
-    at = [(name, level) for level in LEVELS for name in ("coverage %", "MC error", "mean width")]
-    wide = wide.reindex(columns=pd.MultiIndex.from_tuples(at))
-    wide.columns = [f"{name} at {100 * level:g} %" for name, level in at]
-    first = table[table["level"] == LEVELS[0]].set_index(["method", "answer"])
-    first = first[["logs", "flagged %", "bias in sd", "all %"]]
-    return first.join(wide).reset_index().to_string(index=False, float_format="{:.4g}".format)
+def _row(key: tuple[str, str], group: pd.DataFrame) -> dict[str, object]:
+    by_answer = group.groupby("which")["error"].agg(["mean", "std"])
+    bias = (by_answer["mean"] / by_answer["std"].where(by_answer["std"] > 0)).dropna()
+    kept = group[~group["flagged"]]
+    share = kept["held"].mean()
+    # answers of one log are not independent: the error is that of the logs' own shares
+    by_log = kept.groupby("log")["held"].agg(["sum", "size"])
+    spread = np.sqrt(((by_log["sum"] - share * by_log["size"]) ** 2).sum()) / max(len(kept), 1)
+    single = kept.groupby("which")["held"].agg(["mean", "size"])
+    single = single.loc[single["size"] >= ENOUGH, "mean"]
+    return {
+        **dict(zip(KEYS, key, strict=True)), "answers": group["which"].nunique(), "logs": group["log"].nunique(),
+        "truth": (group["truth"].min(), group["truth"].max()),
+        "bias": bias.loc[bias.abs().idxmax()] if len(bias) else np.nan,
+        "coverage": 100 * share, "error": 100 * spread if len(kept) else np.nan,
+        "lowest": 100 * single.min(), "highest": 100 * single.max(),
+        "flagged": 100 * group["flagged"].mean(), "all": 100 * group.loc[group["shown"], "held"].mean(),
+    }  # fmt: skip
 
 
-def study(silences: float, asked: argparse.Namespace) -> pd.DataFrame:
-    """Return the table of one length of log."""
+def told(tables: dict[float, pd.DataFrame]) -> str:
+    """Return the tables as one in Markdown, the lengths of log side by side; the truth is that of the last."""
+    found = {silences: table.set_index(KEYS) for silences, table in tables.items()}
+    *_, last = found.values()
+    head = ["question", "measure", "answers", "logs", "truth"]
+    for silences in found:
+        head += [f"{silences:g} silences: %", "single, %", "flagged, %", "bias, sd"]
+    lines = [head, ["---"] * len(head)]
+    for key in last.index:
+        row = last.loc[key]
+        per_length = [_cells(table.loc[key]) if key in table.index else [""] * 4 for table in found.values()]
+        lines.append([*key, str(row["answers"]), f"{row['logs']:,}", _span(row["truth"]), *sum(per_length, [])])
+    return "\n".join("| " + " | ".join(line) + " |" for line in lines)
+
+
+def _span(values: tuple[float, float]) -> str:
+    return " to ".join(dict.fromkeys(f"{value:.3g}" for value in values)).replace("-", "−")
+
+
+def _cells(row: pd.Series) -> list[str]:
+    if np.isnan(row["coverage"]):
+        judged = "" if np.isnan(row["all"]) else f"({row['all']:.1f})"
+    else:
+        judged = f"{row['coverage']:.1f} ± {row['error']:.1f}"
+    single = "" if np.isnan(row["lowest"]) else f"{row['lowest']:.1f}–{row['highest']:.1f}"
+    bias = "" if np.isnan(row["bias"]) else f"{row['bias']:+.2f}".replace("-", "−")
+    return [judged, single, f"{row['flagged']:.0f}", bias]
+
+
+def write(text: str, path: Path) -> None:
+    """Put the text between the two marks of a file."""
+    whole = path.read_text(encoding="utf-8")
+    before, found, rest = whole.partition(BEGIN)
+    _, ended, after = rest.partition(END)
+    if not found or not ended:
+        raise SystemExit(f"{path}: wanted the marks {BEGIN} and {END}, each once")
+    path.write_text(f"{before}{BEGIN}\n{text}\n{END}{after}", encoding="utf-8")
+
+
+def study(asked: argparse.Namespace) -> dict[float, pd.DataFrame]:
+    """Return the table of each length of log, the logs in turns."""
     tasks = [
-        Task(asked.seed, silences, number, asked.customers, number < asked.bootstrap) for number in range(asked.logs)
+        Task(asked.seed, silences, number, asked.customers, number < asked.bootstrap)
+        for number in range(asked.logs)
+        for silences in asked.lengths
     ]
-    truth = limits(silences, asked.truth_customers)
-    return coverage(answers(list(studied(tasks, asked.jobs)), truth))
+    found: dict[float, list[Asked]] = {silences: [] for silences in asked.lengths}
+    for task, one in studied(tasks, asked.jobs, asked.keep):
+        found[task.silences].append(one)
+    truths = {silences: limits(silences, asked.truth_customers) for silences in asked.lengths}
+    return {silences: coverage(answers(parts, truths[silences])) for silences, parts in found.items()}
 
 
 def main(argv: Sequence[str] | None = None) -> int:
-    """Print a table for each length of log."""
+    """Print the table, and write it into the guide where asked to."""
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0])
-    parser.add_argument("--logs", type=int, default=2_000)
+    parser.add_argument("--logs", type=int, default=1_000)
     parser.add_argument("--customers", type=int, default=1_000)
     parser.add_argument("--jobs", type=int, default=2)
-    parser.add_argument("--bootstrap", type=int, default=1_000, help="of so many of the logs resamples are drawn too")
+    parser.add_argument("--bootstrap", type=int, default=500, help="of so many of the logs resamples are drawn too")
     parser.add_argument("--truth-customers", type=int, default=300_000)
     parser.add_argument("--lengths", type=float, nargs="+", default=list(LENGTHS), help="in silences")
     parser.add_argument("--seed", type=int, default=20250101)
+    parser.add_argument("--keep", type=Path, help="a file for the answers so far, from which a stopped study goes on")
+    parser.add_argument("--write", type=Path, nargs="?", const=GUIDE, help="a file with the two marks; DEVELOPERS.md")
     asked = parser.parse_args(argv)
-    for silences in asked.lengths:
-        began = time.perf_counter()
-        table = study(silences, asked)
-        print(
-            f"\n{asked.logs:,} logs of {asked.customers:,} customers, {silences:g} silences long; truth: one log of "
-            f"{asked.truth_customers:,}; {time.perf_counter() - began:.0f} s\n{told(table)}",
-            flush=True,
-        )
+    began = time.perf_counter()
+    tables = study(asked)
+    for silences, table in tables.items():
+        print(f"{silences:g} silences\n{table.to_string(float_format='{:.4g}'.format)}\n")
+    lengths = " and ".join(f"{silences:g}" for silences in asked.lengths)
+    text = (
+        f"{asked.logs:,} logs of {asked.customers:,} customers of two kinds, {lengths} silences long, cut off while "
+        f"journeys are under way;\ntruth: one log of {asked.truth_customers:,} customers each.\n\n{told(tables)}"
+    )
+    print(f"{text}\n{time.perf_counter() - began:.0f} s")
+    if asked.write:
+        write(text, asked.write)
     return 0
 
 

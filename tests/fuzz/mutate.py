@@ -58,6 +58,17 @@ def inserted(data: bytes, chance: Chance) -> bytes:
     return data[:place] + odd[int(chance.integers(len(odd)))] + data[place:]
 
 
+def retyped(data: bytes, chance: Chance) -> bytes:
+    """Put another letter or digit in the place of one to three: text that can still be read."""
+    out = bytearray(data)
+    places = [place for place, byte in enumerate(out) if chr(byte).isascii() and chr(byte).isalnum()]
+    for _ in range(int(chance.integers(1, 4)) if places else 0):
+        place = places[int(chance.integers(len(places)))]
+        kind = b"0123456789" if chr(out[place]).isdigit() else b"abcdefghijklmnopqrstuvwxyz"
+        out[place] = kind[int(chance.integers(len(kind)))]
+    return bytes(out)
+
+
 def at_the_end(data: bytes, chance: Chance) -> bytes:
     """Flip a bit among the last bytes, where Parquet and Arrow keep what they say of themselves."""
     out = bytearray(data)
@@ -68,6 +79,7 @@ def at_the_end(data: bytes, chance: Chance) -> bytes:
 
 WAYS: Sequence[Callable[[bytes, Chance], bytes]] = (
     random_bytes, flipped, flipped, at_the_end, at_the_end, cut, without, repeated, overwritten, overwritten, inserted,
+    retyped,
 )  # fmt: skip
 
 

@@ -1,7 +1,6 @@
 """What is fuzzed: how sound input of each kind is made, and what must hold whatever has become of it.
 
-A check takes a file and says "read" or "refused". It raises whatever else happens: that is a fault of the package.
-A kind of file that is new (a job, a ledger) is one more entry in `TARGETS`.
+Ledgers and jobs are in `ledger_targets.py`. A kind of file that is new is one more entry in `TARGETS`.
 """
 
 from __future__ import annotations
@@ -9,9 +8,9 @@ from __future__ import annotations
 import contextlib
 import gzip
 import io
+import sys
 import warnings
 from collections.abc import Callable
-from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
@@ -25,7 +24,11 @@ from journeys.command.main import main
 from journeys.errors import JourneysError
 from journeys.tally.count import count_log
 
-READ, REFUSED = "read", "refused"
+sys.path.insert(0, str(Path(__file__).resolve().parent))
+
+from ledger_targets import LEDGER_TARGETS  # noqa: E402
+from target import READ, REFUSED, Target  # noqa: E402
+
 RULES = jn.JourneyRules(
     "who", "when", "what", converted="joined", churned="declined", silence="2d", by="team", value="paid",
     touchpoints="all", complete_history=True,
@@ -48,25 +51,6 @@ spam = false
 [limits]
 unreadable = 0.02
 """
-
-
-@dataclass(frozen=True)
-class Target:
-    """One kind of input.
-
-    Attributes
-    ----------
-    suffix : str
-        How the names of such files end.
-    seeds : callable
-        Gives sound input, given an empty folder.
-    check : callable
-        Gives "read" or "refused" for a file, given a sound one's bytes too.
-    """
-
-    suffix: str
-    seeds: Callable[[Path], list[bytes]]
-    check: Callable[[Path], str]
 
 
 def small_log() -> pa.Table:
@@ -282,4 +266,5 @@ TARGETS: dict[str, Target] = {
     "fit": Target(".fit", fit_seeds, check_fit),
     "rules": Target(".toml", rules_seeds, check_rules),
     "words": Target(".words", words_seeds, check_words),
+    **LEDGER_TARGETS,
 }

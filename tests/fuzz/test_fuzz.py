@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import os
 import subprocess
 import sys
@@ -15,10 +16,13 @@ from hypothesis import strategies as st
 
 import journeys as jn
 from journeys.errors import JourneysError
+from journeys.intake.frozen import toml_text
+from journeys.nightly.job import ALARM_KEYS, KEYS
 
 HERE = Path(__file__).resolve().parent
 sys.path.insert(0, str(HERE))
 
+from ledger_targets import MANIFEST, signed, sound  # noqa: E402
 from mutate import WAYS, mutated  # noqa: E402
 from run_fuzz import KEPT, Tries  # noqa: E402
 from targets import TARGETS, WORDS  # noqa: E402
@@ -85,6 +89,38 @@ def test_any_value_for_any_rule(more: dict[str, object]) -> None:
     except JourneysError:
         return
     assert jn.JourneyRules.from_dict(rules.to_dict()) == rules
+
+
+JOB = {"log": "events", "rules": "rules.toml", "ledger": "ledger", "out": "out", "lateness": "6h", "id_key": "none"}
+
+
+@settings(BRIEF, max_examples=60)
+@given(
+    more=st.dictionaries(st.sampled_from(KEYS), VALUES, max_size=2),
+    alarms=st.none() | st.dictionaries(st.sampled_from(ALARM_KEYS), VALUES),
+)
+def test_any_value_for_any_key_of_a_job(
+    more: dict[str, object], alarms: dict[str, object] | None, tries: dict[str, Tries]
+) -> None:
+    settings = JOB | more | ({} if alarms is None else {"alarms": alarms})
+    try:
+        text = toml_text(settings).encode()
+    except (TypeError, ValueError, AttributeError):
+        return  # what no TOML file can say
+    tries["job"].one(text)
+
+
+@settings(BRIEF, max_examples=60)
+@given(data=st.data())
+def test_any_value_in_a_manifest(data: st.DataObject, tries: dict[str, Tries]) -> None:
+    body = json.loads(sound()[MANIFEST])["ledger"]
+    at = body
+    key = data.draw(st.sampled_from(sorted(at)))
+    while at[key] and isinstance(at[key], dict | list) and data.draw(st.integers(0, 3)):
+        at = at[key]
+        key = data.draw(st.sampled_from(sorted(at) if isinstance(at, dict) else list(range(len(at)))))
+    at[key] = data.draw(st.none() | st.booleans() | st.integers() | st.floats() | st.text(max_size=5) | st.just([{}]))
+    tries["manifest"].one(signed(json.dumps({"ledger": body}).encode()))
 
 
 @settings(BRIEF, max_examples=25)
