@@ -3,9 +3,9 @@
 from __future__ import annotations
 
 import textwrap
-from collections.abc import Callable, Collection, Mapping, Sequence
+from collections.abc import Callable, Collection, Hashable, Mapping, Sequence
 from dataclasses import dataclass, field, fields, replace
-from typing import TYPE_CHECKING, ClassVar
+from typing import TYPE_CHECKING, Any, ClassVar
 
 import numpy as np
 
@@ -90,7 +90,12 @@ class Estimates:
         whole = Estimates(*(np.concatenate([getattr(part, f.name) for part in parts]) for f in fields(Estimates)))
         if all(type(part) is Estimates for part in parts):
             return whole
-        return JoinedEstimates(**vars(whole), parts=tuple(parts), order=np.arange(len(whole.value)))
+        return JoinedEstimates(**vars(whole), **_by_kind(parts))
+
+    @property
+    def kind(self) -> Hashable:
+        """What others share that may be put into one with these; what is read off something else stays apart."""
+        return Estimates if type(self) is Estimates else id(self)
 
     def take(self, index: np.ndarray) -> Estimates:
         """Return those at `index`, positions or a mask."""
@@ -156,13 +161,41 @@ class JoinedEstimates(Estimates):
         return np.concatenate(low)[self.order], np.concatenate(high)[self.order]
 
     def take(self, index: np.ndarray) -> Estimates:
-        """Return those at `index`, positions or a mask."""
-        return JoinedEstimates(**vars(super().take(index)), parts=self.parts, order=self.order[index])
+        """Return those at `index`, positions or a mask; nothing is kept of others, whose bounds would be in vain."""
+        used, place = np.unique(self.order[index], return_inverse=True)
+        ends = np.cumsum([len(part.value) for part in self.parts])
+        cuts = zip(self.parts, np.split(used, np.searchsorted(used, ends[:-1])), ends, strict=True)
+        parts = tuple(part.take(mine - end + len(part.value)) for part, mine, end in cuts)
+        return JoinedEstimates(**vars(super().take(index)), parts=parts, order=place)
 
     def times(self, factor: float) -> Estimates:
         """Return the same numbers in another unit."""
         parts = tuple(part.times(factor) for part in self.parts)
         return replace(self, value=self.value * factor, std_error=self.std_error * factor, parts=parts)
+
+
+def _by_kind(parts: Sequence[Estimates]) -> dict[str, Any]:
+    """Return the parts of several estimates, those of one kind as one, and the place of each number among them."""
+    both = [
+        (one.parts, one.order) if isinstance(one, JoinedEstimates) else ((one,), np.arange(len(one.df)))
+        for one in parts
+    ]
+    held = [sum(len(leaf.value) for leaf in leaves) for leaves, _ in both]
+    order = np.concatenate([one + end - n for (_, one), end, n in zip(both, np.cumsum(held), held, strict=True)])
+    leaves = [leaf for some, _ in both for leaf in some]
+    alike: dict[Hashable, list[int]] = {}
+    for i, leaf in enumerate(leaves):
+        alike.setdefault(leaf.kind, []).append(i)
+    by_kind = [i for some in alike.values() for i in some]
+    sizes, shift = np.array([len(leaf.value) for leaf in leaves]), np.zeros(len(leaves), np.int64)
+    shift[by_kind] = np.cumsum(sizes[by_kind]) - sizes[by_kind]
+    order += np.repeat(shift - np.cumsum(sizes) + sizes, sizes)[order]
+    return {"parts": tuple(_as_one([leaves[i] for i in some]) for some in alike.values()), "order": order}
+
+
+def _as_one(parts: list[Estimates]) -> Estimates:
+    names = [f.name for f in fields(parts[0]) if isinstance(getattr(parts[0], f.name), np.ndarray)]
+    return replace(parts[0], **{name: np.concatenate([getattr(part, name) for part in parts]) for name in names})
 
 
 @dataclass(frozen=True, eq=False)

@@ -158,8 +158,9 @@ def test_another_level_needs_no_other_computation(name: str, monkeypatch: pytest
         raise AssertionError("computed again")
 
     for place in (
-        "questions.outcomes.passage",
-        "questions.first_passage.passage",
+        "questions.outcomes.stepped",
+        "questions.first_passage.stepped",
+        "questions.first_passage.timed",
         "questions.linear.often_visited",
         "questions.bootstrap.Refitter",
         "questions.return_time.quantiles_of_moves",

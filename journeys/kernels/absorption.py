@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import cast
 
 import numpy as np
 
@@ -171,6 +172,14 @@ class Passage:
         >>> walk.changes(one, one, one).mean_given.round(10).tolist()
         [[0.4]]
         """
+        asked = (d_p, d_mean, d_second)
+        last = self.__dict__.get("_last_changes")
+        if last is None or not all(mine is given for mine, given in zip(last[0], asked, strict=True)):
+            last = (asked, self._changed(*asked))
+            self.__dict__["_last_changes"] = last  # most often the same directions are asked for again
+        return cast("Changes", last[1])
+
+    def _changed(self, d_p: FloatArray, d_mean: FloatArray, d_second: FloatArray) -> Changes:
         v = self._moves
         to_h, to_g, to_s = (v.sums(v.over_nodes(x, end)[v.target]) for x, end in self._moments())
         # moves that lead away for good are no part of the way there, known or not

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from functools import cached_property
+from typing import cast
 
 import numpy as np
 import numpy.typing as npt
@@ -15,9 +16,6 @@ from journeys.kernels.graph import can_reach
 ComplexArray = npt.NDArray[np.complex128]
 MassOn = Callable[[float, int], FloatArray]
 
-POINTS = 1024  # fewest of a transform
-DECADES = 6
-_PER_MOVE = 400.0  # points for one move, see `points_for`
 _DAMPING = 1e-8  # what comes round after all points of the grid counts this little; less would let rounding grow
 _BLOCK = 1_000_000  # complex numbers in one batch of systems
 
@@ -112,28 +110,6 @@ class Renewal:
         """Solve for the time to the target from every state, on one grid."""
         return Scale(self, dt, n, self.kernel(dt, n))
 
-    def scales(self, top: float, points: int = POINTS) -> Iterator[tuple[float, bool, Scale]]:
-        """Yield grids for times up to `top`, a tenth of it, … six decades.
-
-        Parameters
-        ----------
-        top : float
-            Longest time.
-        points : int
-            Points of each transform; see `points_for`.
-
-        Yields
-        ------
-        hi : float
-            The grid is for times above hi / 10 and up to hi.
-        is_last : bool
-            Also for all times below.
-        scale : Scale
-        """
-        for decade in range(DECADES):
-            hi = top / 10.0**decade
-            yield hi, decade == DECADES - 1, self.solve(hi / (points - 1), points)
-
 
 @dataclass(frozen=True, eq=False)
 class Scale:
@@ -157,7 +133,10 @@ class Scale:
     @cached_property
     def reach(self) -> ComplexArray:
         """Transform of the density from every open state, shape (n_freq, n_open + 1); the last, the target's, is 1."""
-        return self._solved(None)[0]
+        reach = self._nothing_reached()
+        for part, matrix, right in self._systems():
+            reach[part, :-1] = np.linalg.solve(matrix, right[..., None])[..., 0]
+        return reach
 
     @cached_property
     def cdf(self) -> FloatArray:
@@ -169,9 +148,11 @@ class Scale:
 
     def visits(self, start: int) -> ComplexArray:
         """Return the transform of the densities of visits from one open state, shape (n_freq, n_open)."""
-        reach, visits = self._solved(start)
-        self.__dict__.setdefault("reach", reach)  # found on the way
-        return visits
+        last = self.__dict__.get("_last_visits")
+        if last is None or last[0] != start:
+            last = (start, self._visits_from(start))
+            self.__dict__["_last_visits"] = last  # most often asked for again from the same start
+        return cast("ComplexArray", last[1])
 
     def all_visits(self) -> ComplexArray:
         """Return the same from every open state, shape (n_freq, n_open, n_open)."""
@@ -187,19 +168,23 @@ class Scale:
         values /= _damping(self.n)[:, None]
         return np.cumsum(values, axis=0, out=values)
 
-    def _solved(self, start: int | None) -> tuple[ComplexArray, ComplexArray]:
-        """Solve for the way to the target and, with a start, for the visits from there."""
-        size, n_freq = len(self.walk.open_states), self.n // 2 + 1
-        reach = np.ones((n_freq, size + 1), dtype=np.complex128)
+    def _visits_from(self, start: int) -> ComplexArray:
+        """Solve for the visits from one open state, and for the way to the target while the systems are there."""
+        n_freq, size = self.n // 2 + 1, len(self.walk.open_states)
         visits = np.zeros((n_freq, size), dtype=np.complex128)
+        reach = None if "reach" in self.__dict__ else self._nothing_reached()
         one = np.zeros((size, 1))
-        if start is not None:
-            one[start] = 1.0
+        one[start] = 1.0
         for part, matrix, right in self._systems():
-            reach[part, :size] = np.linalg.solve(matrix, right[..., None])[..., 0]
-            if start is not None:
-                visits[part] = np.linalg.solve(matrix.transpose(0, 2, 1), one)[..., 0]
-        return reach, visits
+            visits[part] = np.linalg.solve(matrix.transpose(0, 2, 1), one)[..., 0]
+            if reach is not None:
+                reach[part, :size] = np.linalg.solve(matrix, right[..., None])[..., 0]
+        if reach is not None:
+            self.__dict__["reach"] = reach
+        return visits
+
+    def _nothing_reached(self) -> ComplexArray:
+        return np.ones((self.n // 2 + 1, len(self.walk.open_states) + 1), dtype=np.complex128)
 
     def _systems(self) -> Iterator[tuple[slice, ComplexArray, ComplexArray]]:
         row, column, values = self._kernel
@@ -271,7 +256,7 @@ def curve(parts: list[tuple[float, bool, Scale]], start: int, at_once: float, li
     Parameters
     ----------
     parts : list
-        From `Renewal.scales`, the largest times first.
+        From `journeys.kernels.grids.Grids.scales`, the largest times first.
     start : int
         Place of the start among the open states.
     at_once : float
@@ -298,21 +283,6 @@ def lattice_curve(scale: Scale, start: int, limit: float) -> Curve:
     """Return the curve of a grid whose points are whole days, exact at each of them."""
     reached = np.clip(np.maximum.accumulate(scale.cdf[:, start]), 0.0, limit)
     return Curve(np.asarray(scale.dt * np.arange(len(reached)), dtype=np.float64), reached, limit, lattice=True)
-
-
-def points_for(moves: float) -> int:
-    """Return the points of a transform for walks of so many moves.
-
-    To split a dwell between two points of a grid adds to its variance, a sixth of the squared distance on
-    average; that adds up over the moves, and finer grids keep the error of the curve well below 1e-4.
-
-    Examples
-    --------
-    >>> points_for(5.0), points_for(10.0), points_for(100.0)
-    (1024, 2048, 4096)
-    """
-    finer = np.ceil(np.log2(_PER_MOVE * np.sqrt(max(moves, 1.0)) / POINTS))
-    return POINTS << int(np.clip(finer, 0, 3))
 
 
 def _damping(n: int) -> FloatArray:

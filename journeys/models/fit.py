@@ -13,6 +13,7 @@ import numpy as np
 from journeys.errors import DeadEndWarning, warn
 from journeys.kernels.arrays import BoolArray, FloatArray, IntArray
 from journeys.kernels.graph import Classes, classify
+from journeys.kernels.kept import Kept
 from journeys.kernels.stays import FittedStays
 from journeys.markup import facts, frame_table, short_name
 from journeys.models.memory import Nodes
@@ -130,6 +131,11 @@ class JourneyFit:
             index=pd.Index(labels[: self.nodes.n_rows], name="state"),
             columns=pd.Index(labels[1:], name="next_state"),
         )
+
+    @cached_property
+    def kept(self) -> Kept:
+        """What questions worked out of this chain and ask for again."""
+        return Kept()
 
     @cached_property
     def classes(self) -> Classes:

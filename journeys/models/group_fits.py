@@ -109,4 +109,5 @@ def rest_fit(fit: JourneyFit, by: str | Sequence[str], without: Group) -> GroupF
         return GroupFit(without, part, None, fault.briefly)
     with warnings.catch_warnings():
         warnings.simplefilter("ignore", JourneysWarning)
-        return GroupFit(without, part, model_of(fit).fit_whatever(part))
+        # of the spread of times no comparison is made
+        return GroupFit(without, part, model_of(fit).fit_whatever(part, n_moments=2))

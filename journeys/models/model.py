@@ -107,16 +107,19 @@ class JourneyModel:
         refuse_without_outcome(tally)
         return self.fit_whatever(tally)
 
-    def fit_whatever(self, tally: Tally) -> JourneyFit:
-        """Fit the chain to a tally whose faults have been looked for (see `fault_of`)."""
+    def fit_whatever(self, tally: Tally, *, n_moments: int = 3) -> JourneyFit:
+        """Fit the chain to a tally whose faults have been looked for (see `fault_of`); as `fit_stays` in moments."""
         chain = chain_of(tally, self.order)
         stays, by_bucket = move_stays(tally, chain, censored=self.open_moves == "censored")
-        return self.fit_stays(tally, chain.nodes(tally), stays, by_bucket)
+        return self.fit_stays(tally, chain.nodes(tally), stays, by_bucket, n_moments=n_moments)
 
     def fit_stays(
         self, tally: Tally, nodes: Nodes, stays: Stays, by_bucket: BucketStays, *, n_moments: int = 3
     ) -> JourneyFit:
-        """Fit the chain to stays that were taken from a tally; with one moment the influence on times is left NaN."""
+        """Fit the chain to stays that were taken from a tally.
+
+        With one moment the influence on times is left NaN, with two that on their squares.
+        """
         weight = 0.0 if tally.whole_days else 0.5
         found = fit_stays(stays, weight)
         row_flags: dict[str, str] = {}

@@ -7,13 +7,13 @@ from dataclasses import replace
 
 import numpy as np
 
-from journeys.kernels.absorption import passage
 from journeys.kernels.intervals import variance_from_buckets
 from journeys.kernels.records import FIRST_OUTCOME, OPEN
 from journeys.models.fit import JourneyFit
 from journeys.models.model import END_NOT_SEEN, JourneyModel
 from journeys.questions.check_rows import FINE, NOTE, CheckRow, not_run
 from journeys.questions.linear import leaning
+from journeys.questions.walks import timed, walk_to
 from journeys.tally.tally import Tally
 
 # From where on a reader should be told; common sense, no source.
@@ -132,9 +132,8 @@ def _busy(fit: JourneyFit, to: str | Collection[str] | None, tally: Tally) -> Ch
 
 
 def _conversion(fit: JourneyFit, to: str | Collection[str] | None) -> tuple[float, np.ndarray]:
-    n, is_target, p = fit.nodes.n_rows, fit.target_mask(to), fit.probability
-    found = passage(n, fit.nodes.n_nodes, fit.move_state, fit.move_target, p, fit.mean, fit.second, is_target)
-    pulls = np.zeros((0, len(p))) if fit.influence is None else fit.influence.probability
+    found = timed(fit, walk_to(fit, to))
+    pulls = np.zeros((0, len(fit.probability))) if fit.influence is None else fit.influence.probability
     return float(found.probability[0]), found.probability_changes(pulls)[:, 0]
 
 

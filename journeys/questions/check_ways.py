@@ -13,10 +13,11 @@ from journeys.kernels.phase_type import DENSE
 from journeys.models.fit import JourneyFit
 from journeys.questions.both_ways import BothCurves
 from journeys.questions.check_rows import CheckRow, beyond_rounding, difference_row, not_run
-from journeys.questions.elapsed import elapsed, walk_to
+from journeys.questions.elapsed import elapsed
 from journeys.questions.ended import Sums, ended, rows_ended
 from journeys.questions.solved_curve import SolvedTime
 from journeys.questions.touch_shares import touched
+from journeys.questions.walks import walk_to
 from journeys.tally.accumulate import join_limbs
 
 DAYS, STEPS, CURVE = "days to convert", "steps to convert", "curve of conversion"

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Hashable
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -60,6 +61,11 @@ class ReadOff(Estimates):
             x = np.exp(left + (known - _STEPS[i]) / (_STEPS[i + 1] - _STEPS[i]) * (right - left))
         x = np.where(np.isnan(t), np.nan, x)
         return (x if self.first is None else up(x + self.first)) * self.unit
+
+    @property
+    def kind(self) -> Hashable:
+        """What others share with whom these may be put into one."""
+        return ReadOff, self.first, self.unit
 
     def take(self, index: np.ndarray) -> Estimates:
         """Return those at `index`, positions or a mask."""

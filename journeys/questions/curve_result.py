@@ -17,13 +17,13 @@ from journeys.markup import frame_table, plain_number, short_name
 from journeys.models.fit import JourneyFit
 from journeys.models.what_if import WhatIf
 from journeys.questions.counted import inverted, shares_about, up
-from journeys.questions.elapsed import Walk
 from journeys.questions.first_passage import UNIT_DAYS
 from journeys.questions.linear import TOO_FEW, leaning, probabilities, starts_counted
 from journeys.questions.observed import converted_by_log
 from journeys.questions.outcomes import UNREACHABLE
 from journeys.questions.quantiles import NOT_IN_REACH, quantiles_of_moves
 from journeys.questions.solved_curve import Solved, limit_influence, telling_times
+from journeys.questions.walks import Walk
 from journeys.results import LOGIT, Estimates, joined_flags, text_table
 
 if TYPE_CHECKING:

@@ -9,7 +9,6 @@ import numpy as np
 
 from journeys import checks
 from journeys.errors import LogError
-from journeys.kernels.absorption import passage
 from journeys.kernels.arrays import BoolArray, FloatArray
 from journeys.kernels.bins import LONGEST_US, elapsed_edges
 from journeys.models.fit import JourneyFit
@@ -19,6 +18,7 @@ from journeys.questions.first_passage import from_entry
 from journeys.questions.linear import TOO_FEW
 from journeys.questions.moves import moves as single_moves
 from journeys.questions.stage_rows import CONVERTED
+from journeys.questions.walks import stepped, timed, walk_to
 from journeys.questions.within import ended_within, followed_short
 from journeys.tally.tables import N_BUCKETS
 from journeys.tally.tally import Tally
@@ -125,11 +125,9 @@ def in_all_buckets(fit: Side, influence: FloatArray) -> FloatArray:
 def _in_the_end(fit: JourneyFit, to: str | Collection[str] | None) -> list[Answer]:
     """Return the probability of the target and the means given that it is reached, from entry."""
     answers = []
-    target, nodes = fit.target_mask(to), fit.nodes
+    walk = walk_to(fit, to)
     for clock, measures in (("steps", ("probability", "mean")), ("time", ("mean",))):
-        p = fit.probability
-        mean, second = (p, p) if clock == "steps" else (fit.mean, fit.second)
-        found = passage(nodes.n_rows, nodes.n_nodes, fit.move_state, fit.move_target, p, mean, second, target)
+        found = (stepped if clock == "steps" else timed)(fit, walk)
         result = from_entry(fit, to, clock, quantiles=False)
         changes = None
         if fit.influence is not None:

@@ -2,106 +2,26 @@
 
 from __future__ import annotations
 
-from collections.abc import Collection, Iterator
+from collections.abc import Iterator
 from dataclasses import dataclass
 from functools import cached_property
 
 import numpy as np
 
-from journeys.kernels.absorption import Passage, passage
+from journeys.kernels.absorption import Passage
 from journeys.kernels.arrays import BoolArray, FloatArray, IntArray, sum_at
 from journeys.kernels.dwell_grid import BinnedDwell, GivenDwell
-from journeys.kernels.renewal import ComplexArray, MassOn, Renewal, Scale, points_for
+from journeys.kernels.grids import DECADES, Grids, Part, points_for
+from journeys.kernels.phase_type import DENSE
+from journeys.kernels.renewal import ComplexArray, MassOn, Renewal, Scale
 from journeys.kernels.reweighted import ReweightedStays
 from journeys.models.fit import JourneyFit
 from journeys.models.what_if import WhatIf
+from journeys.questions.walks import Walk, stepped, timed
 
 NO_DISTRIBUTION = "no distribution of dwell given"
 _TABLES = 8_000_000  # numbers in the value tables worked on at once
 _LONGEST_LATTICE = 2**16  # whole days, 179 years
-
-
-@dataclass(frozen=True, eq=False)
-class Walk:
-    """The moves of a fit as a question walks them: as they are, or rearranged.
-
-    Attributes
-    ----------
-    n_states, n_nodes : int
-        Nodes 0 to n_states - 1 are states, the rest outcomes.
-    state, target : int arrays, shape (n_moves,)
-        Where each move comes from and goes to.
-    origin : int array, shape (n_moves,)
-        Place among the moves of the fit; none comes twice.
-    is_target : bool array, shape (n_nodes,)
-        What is to be reached, at least once.
-    """
-
-    n_states: int
-    n_nodes: int
-    state: IntArray
-    target: IntArray
-    origin: IntArray
-    is_target: BoolArray
-
-
-def walk_to(fit: JourneyFit, to: str | Collection[str] | None) -> Walk:
-    """Return the moves of a fit as they are, with the target that `to` names."""
-    every = np.arange(len(fit.probability))
-    return Walk(
-        fit.nodes.n_rows, fit.nodes.n_nodes, fit.move_state, fit.move_target, every, fit.target_mask(to)
-    )
-
-
-def timed(fit: JourneyFit, walk: Walk) -> Passage:
-    """Return probability and moments of the elapsed time in days to the target of a walk."""
-    at = walk.origin
-    return passage(
-        walk.n_states, walk.n_nodes, walk.state, walk.target,
-        fit.probability[at], fit.mean[at], fit.second[at], walk.is_target,
-    )
-
-
-def reach_gradient(walk: Walk, p: FloatArray, share: FloatArray, starts: IntArray) -> FloatArray:
-    """Differentiate the probability of ever reaching the target by the moves.
-
-    Parameters
-    ----------
-    walk : Walk
-        The moves.
-    p : float array, shape (n_moves,)
-        Their probabilities.
-    share : float array, shape (n_states,)
-        Probability of ever reaching the target.
-    starts : int array, shape (n_starts,)
-        From where.
-
-    Returns
-    -------
-    float array, shape (n_starts, n_moves)
-    """
-    from scipy.sparse import csc_array, eye_array
-    from scipy.sparse.linalg import splu
-
-    is_open = (share > 0) & ~walk.is_target[: walk.n_states]
-    place = np.where(is_open, np.cumsum(is_open) - 1, -1)
-    size = int(is_open.sum())
-    inside = (p > 0) & is_open[walk.state] & (walk.target < walk.n_states)
-    inside[inside] &= is_open[walk.target[inside]]
-    # turned over: visits are solved for from the left
-    inner = csc_array((p[inside], (place[walk.target[inside]], place[walk.state[inside]])), shape=(size, size))
-    found = np.zeros((len(starts), len(p)))
-    who, where = np.unique(starts, return_inverse=True)
-    mine = np.flatnonzero(is_open[who])
-    if not len(mine):
-        return found
-    one = np.zeros((size, len(mine)))
-    one[place[who[mine]], np.arange(len(mine))] = 1.0
-    visits = np.zeros((len(who), walk.n_states))
-    visits[np.ix_(mine, is_open)] = splu(csc_array(eye_array(size) - inner)).solve(one).T
-    gain = np.where(walk.is_target, 1.0, np.concatenate([share, np.zeros(walk.n_nodes - walk.n_states)]))
-    np.multiply(visits[where][:, walk.state], gain[walk.target], out=found)
-    return found
 
 
 @dataclass(frozen=True, eq=False)
@@ -114,8 +34,8 @@ class Elapsed:
         The chain.
     walk : Walk
         Its moves and the target.
-    renewal : Renewal
-        The moves with their dwell.
+    grids : Grids
+        The moves with their dwell, and what was solved of them.
     lattice : bool
         Time is in whole days.
     found : Passage
@@ -124,9 +44,14 @@ class Elapsed:
 
     fit: JourneyFit
     walk: Walk
-    renewal: Renewal
+    grids: Grids
     lattice: bool
     found: Passage
+
+    @property
+    def renewal(self) -> Renewal:
+        """The moves with their dwell."""
+        return self.grids.renewal
 
     @cached_property
     def top(self) -> float:
@@ -138,16 +63,23 @@ class Elapsed:
             longest = max(longest, tally.rules.silence_us / 86_400e6)
         return 20.0 * longest if longest > 0 else 1.0
 
-    def scales(self) -> Iterator[tuple[float, bool, Scale]]:
+    def scales(self) -> Iterator[Part]:
         """Yield the grids of all scales of time, the longest first, fine enough for walks of so many moves."""
-        walk, p = self.walk, self.fit.probability[self.walk.origin]
-        steps = passage(walk.n_states, walk.n_nodes, walk.state, walk.target, p, p, p, walk.is_target).mean_given
-        moves = float(np.max(steps[self.renewal.open_states], initial=1.0))
-        return self.renewal.scales(self.top, points_for(moves))
+        return self.grids.scales(self.top, self._points)
 
     def on_days(self, days: float) -> Scale:
         """Return the grid of whole days up to at least `days`, exact at each (lattice only)."""
-        return self.renewal.solve(1.0, 2 ** int(np.ceil(np.log2(np.clip(days + 2.0, 16.0, _LONGEST_LATTICE)))))
+        return self.grids.solve(1.0, _days_for(days))
+
+    @property
+    def room(self) -> int:
+        """How many numbers all that can be solved for holds, about."""
+        return self.grids.room(_days_for(self.top) // DECADES if self.lattice else self._points)
+
+    @cached_property
+    def _points(self) -> int:
+        steps = stepped(self.fit, self.walk).mean_given
+        return points_for(float(np.max(steps[self.renewal.open_states], initial=1.0)))
 
     @cached_property
     def at_once(self) -> FloatArray:
@@ -254,13 +186,28 @@ def stays_of(fit: JourneyFit) -> ReweightedStays | None:
 
 
 def elapsed(fit: JourneyFit, walk: Walk) -> Elapsed | None:
-    """Return the elapsed time to the target of a walk; None where a dwell on the way has no distribution."""
-    p = fit.probability[walk.origin]
-    mass, lattice, lacking = _masses(fit, walk)
-    renewal = Renewal(walk.n_states, walk.n_nodes, walk.state, walk.target, p > 0, walk.is_target, mass)
-    if lacking[renewal.leading].any():
-        return None
-    return Elapsed(fit, walk, renewal, lattice, timed(fit, walk))
+    """Return the elapsed time to the target of a walk; None where a dwell on the way has no distribution.
+
+    What is solved for it is kept with the fit, for the next question about that target.
+    """
+    found = timed(fit, walk)
+
+    def prepare() -> tuple[Grids, bool] | None:
+        p = fit.probability[walk.origin]
+        mass, lattice, lacking = _masses(fit, walk)
+        renewal = Renewal(walk.n_states, walk.n_nodes, walk.state, walk.target, p > 0, walk.is_target, mass)
+        return None if lacking[renewal.leading].any() else (Grids(renewal), lattice)
+
+    def room(made: tuple[Grids, bool] | None) -> int:
+        return 1 if made is None else Elapsed(fit, walk, *made, found).room
+
+    made = prepare() if walk.n_states > DENSE else fit.kept.get(("elapsed", walk.key), prepare, room)
+    return None if made is None else Elapsed(fit, walk, *made, found)
+
+
+def _days_for(days: float) -> int:
+    """Return how many points the grid of whole days up to at least `days` has."""
+    return 1 << int(np.ceil(np.log2(np.clip(days + 2.0, 16.0, _LONGEST_LATTICE))))
 
 
 def _masses(fit: JourneyFit, walk: Walk) -> tuple[MassOn, bool, BoolArray]:

@@ -22,11 +22,14 @@ class FewInGroups(NamedTuple):
     ----------
     size, conversion, undecided : sets
         How many journeys there are, whether and how soon they convert, how many are under way.
+    within : set
+        What share converts within a time by the log, which is counted on journeys whose start was seen.
     """
 
     size: frozenset[Value]
     conversion: frozenset[Value]
     undecided: frozenset[Value]
+    within: frozenset[Value]
 
 
 def few_in_groups(tally: Tally, column: str, least: int, *, every: bool) -> FewInGroups:
@@ -67,5 +70,8 @@ def few_in_groups(tally: Tally, column: str, least: int, *, every: bool) -> FewI
 
     none = np.zeros(len(values), bool)
     size = closed(none, np.ones(len(cell), bool))
-    found = (size, closed(size | every, won, ~won), closed(size, is_open, ~is_open))
+    # of how many journeys the start was seen is not told by group, so that nothing can be subtracted
+    n_sure = seen(table["sure"] == 1).sum(axis=1)
+    conversion = closed(size | every, won, ~won)
+    found = (size, conversion, closed(size, is_open, ~is_open), conversion | ((n_sure > 0) & (n_sure < least)))
     return FewInGroups(*(frozenset(v for v, one in zip(values, mask, strict=True) if one) for mask in found))

@@ -10,17 +10,16 @@ from typing import ClassVar
 import numpy as np
 
 from journeys import checks
-from journeys.kernels.absorption import passage
 from journeys.kernels.arrays import FloatArray, IntArray
 from journeys.kernels.return_walks import passage_walk
 from journeys.models.fit import JourneyFit
 from journeys.questions.bootstrap import Plan, accelerations, plan, walk_influence
 from journeys.questions.by_group import by_group
-from journeys.questions.elapsed import walk_to
 from journeys.questions.linear import leaning, passage_spread, starts_counted
 from journeys.questions.measures import LEVELS, MEASURES, UNIT_DAYS, Walked, measured
 from journeys.questions.outcomes import UNREACHABLE
 from journeys.questions.quantiles import quantiles_of_moves
+from journeys.questions.walks import stepped, timed, walk_to
 from journeys.results import Estimates, Result
 
 __all__ = ["UNIT_DAYS", "FirstPassageResult", "first_passage"]
@@ -181,10 +180,9 @@ def _walked(
     fit: JourneyFit, to: str | Collection[str] | None, how: Plan, clock: str, at: IntArray, levels: Sequence[float]
 ) -> Walked:
     """Return all that is known of the walks to the target from some starts (resamples: from every start)."""
-    p, n, is_target, steps = fit.probability, fit.nodes.n_rows, fit.target_mask(to), clock == "steps"
+    n, is_target, steps = fit.nodes.n_rows, fit.target_mask(to), clock == "steps"
     walk = passage_walk(n, fit.move_state, fit.move_target, is_target)
-    mean, second = (p, p) if steps else (fit.mean, fit.second)
-    found = passage(n, walk.n_nodes, walk.state, walk.target, p, mean, second, is_target)
+    found = (stepped if steps else timed)(fit, walk_to(fit, to))
     influence = walk_influence(fit, walk, found, steps=steps) if how.method == "bca" else None
     draws = how.draws(fit, lambda state, target: [passage_walk(n, state, target, is_target)], steps=steps)
     return Walked(

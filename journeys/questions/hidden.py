@@ -17,6 +17,7 @@ from journeys.questions.check_ways import CURVE, DAYS, STEPS, TOUCHES
 from journeys.questions.few_people import FewPeople
 from journeys.questions.plain_count import PlainCount
 from journeys.questions.stage_rows import UNDECIDED as OPEN
+from journeys.questions.time_to_convert import SO_FAR
 from journeys.results import KNOWN, Estimates, Result
 
 if TYPE_CHECKING:
@@ -129,7 +130,12 @@ class Hider:
 
     def group(self, column: str, result: R) -> R:
         """Return an answer on the conversion of the groups of a column."""
-        return self._masked(result, result.keys[column].isin(self._few.groups[column].conversion).to_numpy())
+        few, keys = self._few.groups[column], result.keys
+        hidden: BoolArray = keys[column].isin(few.conversion).to_numpy()
+        if "basis" in keys:
+            by_log = keys.basis.eq("log") & keys.horizon.ne(SO_FAR)
+            hidden = hidden | (by_log & keys[column].isin(few.within)).to_numpy()
+        return self._masked(result, hidden)
 
     def checks(self, result: CheckResult) -> CheckResult:
         """Return the checks, without words on few people."""

@@ -10,12 +10,12 @@ from typing import TYPE_CHECKING, ClassVar
 import numpy as np
 
 from journeys import checks
-from journeys.kernels.absorption import passage
 from journeys.kernels.arrays import IntArray
 from journeys.models.fit import JourneyFit
 from journeys.models.group_stack import Stack
 from journeys.questions.by_group import by_stack
 from journeys.questions.linear import DOUBTFUL, TOO_FEW, leaning, probabilities, probability_spread, starts_counted
+from journeys.questions.walks import stepped, walk_until
 from journeys.results import LOGIT, Estimates, Result, joined_flags
 
 if TYPE_CHECKING:
@@ -100,10 +100,9 @@ def _answers(fit: JourneyFit, n_buckets: IntArray | None = None) -> tuple[Estima
     """Return estimates and flags, start by start."""
     nodes, n_outcomes = fit.nodes, len(fit.outcomes)
     parts, unreachable, doubtful = [], [], []
-    p, trials = fit.probability, starts_counted(fit)
+    trials = starts_counted(fit)
     for node in range(nodes.n_rows, nodes.n_nodes):
-        target = np.arange(nodes.n_nodes) == node
-        to = passage(nodes.n_rows, nodes.n_nodes, fit.move_state, fit.move_target, p, p, p, target)
+        to = stepped(fit, walk_until(fit, np.arange(nodes.n_nodes) == node))
         std_error, df = probability_spread(fit, to, n_buckets)
         parts.append(probabilities(fit, to.probability, std_error, df, trials, LOGIT))
         unreachable.append((to.probability == 0) & ~to.doubtful)

@@ -12,10 +12,11 @@ from journeys import checks
 from journeys.kernels.phase_type import DENSE
 from journeys.models.fit import JourneyFit, NotInChainError
 from journeys.questions.curve_result import PassageCurve
-from journeys.questions.elapsed import NO_DISTRIBUTION, Walk, elapsed, timed, walk_to
+from journeys.questions.elapsed import NO_DISTRIBUTION, elapsed
 from journeys.questions.first_passage import UNIT_DAYS
 from journeys.questions.group_curves import GroupCurves, group_curves
 from journeys.questions.solved_curve import Solved, SolvedSteps, SolvedTime
+from journeys.questions.walks import Walk, timed, walk_to
 
 
 @overload

@@ -14,9 +14,10 @@ from journeys.kernels.phase_type import DENSE, Steps
 from journeys.kernels.renewal import Curve, curve, lattice_curve
 from journeys.models.fit import JourneyFit
 from journeys.questions.counted import SIDES, inverted, shares_about, up
-from journeys.questions.elapsed import NO_DISTRIBUTION, Elapsed, Walk, elapsed, reach_gradient, timed, walk_to
+from journeys.questions.elapsed import NO_DISTRIBUTION, Elapsed, elapsed
 from journeys.questions.linear import TOO_FEW, probabilities
 from journeys.questions.outcomes import UNREACHABLE
+from journeys.questions.walks import Walk, reach_gradient, timed, walk_to
 from journeys.results import LOGIT, Estimates, joined_flags
 
 BY_CURVE = "interval only by passage_curve"
@@ -270,15 +271,16 @@ def _of_time(ask: _Ask) -> _Found:
 
 
 def _curves(ask: _Ask, it: Elapsed) -> list[Curve]:
-    """Return the curve from every open state, down to well below the lowest level."""
+    """Return the curve from every open state, from those asked for down to well below the lowest level."""
     share = ask.share[it.renewal.open_states]
     if it.lattice:
         scale = it.on_days(it.top)
         return [lattice_curve(scale, i, share[i]) for i in range(len(share))]
-    parts = []
+    place, parts = it.renewal.place[ask.starts], []
+    asked = place[(place >= 0) & (place < len(share))]
     for hi, _, scale in it.scales():
         parts.append((hi, False, scale))
-        if (scale.cdf[int(hi / 10.0 / scale.dt)] < 0.3 * min(ask.levels) * share).all():
+        if (scale.cdf[int(hi / 10.0 / scale.dt)] < 0.3 * min(ask.levels) * share)[asked].all():
             break
     parts[-1] = (parts[-1][0], True, parts[-1][2])
     return [curve(parts, i, it.at_once[i], share[i]) for i in range(len(share))]
@@ -295,7 +297,7 @@ def _spread_of_time(ask: _Ask, it: Elapsed, who: IntArray, at: FloatArray) -> tu
         octave = np.full(at.shape, np.log2(max(at.max(), 1.0)))
     influence = np.zeros((ask.fit.influence.probability.shape[0], len(who), n_levels))  # type: ignore[union-attr]
     for each in np.unique(octave):
-        scale = it.on_days(at.max()) if it.lattice else it.renewal.solve(2.0**each / (_BAND_POINTS - 1), _BAND_POINTS)
+        scale = it.on_days(at.max()) if it.lattice else it.grids.solve(2.0**each / (_BAND_POINTS - 1), _BAND_POINTS)
         visits = scale.all_visits()
         rows = np.flatnonzero((octave == each).any(axis=1))
         asked = [at[row, octave[row] == each] for row in rows]

@@ -15,12 +15,12 @@ from journeys.kernels.arrays import FloatArray, IntArray
 from journeys.kernels.many_passages import Draws
 from journeys.kernels.return_walks import Walk, return_walk
 from journeys.models.fit import NO_WAY_OUT, JourneyFit
-from journeys.questions import elapsed
 from journeys.questions.bootstrap import MOMENTS, MOST_STATES, Plan, accelerations, linear_spreads, plan, walk_influence
 from journeys.questions.by_group import by_group
 from journeys.questions.linear import leaning, starts_counted
 from journeys.questions.measures import LEVELS, MEASURES, UNIT_DAYS, Walked, measured
 from journeys.questions.quantiles import quantiles_of_moves
+from journeys.questions.walks import Walk as Moves
 from journeys.results import Estimates, Result
 
 NEVER_BACK = "never comes back"
@@ -225,7 +225,7 @@ def _quantiles(
     every = np.arange(len(fit.probability))
     by_state = [
         quantiles_of_moves(
-            fit, elapsed.Walk(walk.n_states, walk.n_nodes, walk.state, walk.target, every, walk.is_target),
+            fit, Moves(walk.n_states, walk.n_nodes, walk.state, walk.target, every, walk.is_target),
             walk.starts, clock=clock, levels=LEVELS, probability=one.probability,
         )
         for walk, one in zip(walks, found, strict=True)

@@ -9,10 +9,12 @@ from typing import Protocol
 import numpy as np
 
 from journeys.kernels.arrays import FloatArray, IntArray
+from journeys.kernels.grids import Part
 from journeys.kernels.phase_type import DENSE, Steps
-from journeys.kernels.renewal import ComplexArray, Curve, Scale, curve, lattice_curve
+from journeys.kernels.renewal import Curve, Scale, curve, lattice_curve
 from journeys.models.fit import JourneyFit
-from journeys.questions.elapsed import Elapsed, Walk, reach_gradient
+from journeys.questions.elapsed import Elapsed
+from journeys.questions.walks import Walk, reach_gradient
 
 N_TIMES = 60
 _STEP_WORK = 1e9
@@ -135,29 +137,25 @@ class SolvedTime:
     def _place(self) -> int:
         return int(self.it.renewal.place[self.start])
 
-    @cached_property
-    def _parts(self) -> list[tuple[float, bool, Scale]]:
+    def parts(self, least: float = 0.0) -> list[Part]:
+        """Return the grids on which times from `least` on are read, the longest first, and the next finer one.
+
+        The curve may not fall where one grid meets the next, so that the finer one has a say in where the other begins.
+        """
         if self.it.lattice:
-            scale = self.it.on_days(self.it.top)
-            self._visits[np.inf] = scale.visits(self._place)
-            return [(np.inf, True, scale)]
-        parts = []
+            return [(np.inf, True, self.it.on_days(self.it.top))]
+        parts: list[Part] = []
         for hi, is_last, scale in self.it.scales():
-            if self.it.fit.influence is not None:
-                self._visits[hi] = scale.visits(self._place)  # and the way to the target with it
+            if parts and parts[-1][0] < least:
+                break
             parts.append((hi, is_last, scale))
             if scale.cdf[int(hi / 10.0 / scale.dt), self._place] < _NOBODY:
                 break
         return [*parts[:-1], (parts[-1][0], True, parts[-1][2])]
 
-    @cached_property
-    def _visits(self) -> dict[float, ComplexArray]:
-        """Visits from the start on each scale, found together with the curve."""
-        return {}
-
     def scale_for(self, time: float) -> Scale:
         """Return the grid on which the curve is read at a time."""
-        for hi, is_last, scale in self._parts:
+        for hi, is_last, scale in self.parts(time):
             if is_last or time > hi / 10.0:
                 return scale
         raise ValueError(f"time: got {time!r}; wanted a number of days")
@@ -165,16 +163,27 @@ class SolvedTime:
     @cached_property
     def curve(self) -> Curve:
         """The distribution function by points."""
+        return self._curve_from(0.0)
+
+    def _curve_from(self, least: float) -> Curve:
+        """Return the distribution function by points that are close enough for times from `least` on."""
         if self.limit <= 0:
             return Curve(np.zeros(1), np.zeros(1), 0.0, self.it.lattice)
+        parts = self.parts(least)
         if self.it.lattice:
-            return lattice_curve(self._parts[0][2], self._place, self.limit)
-        return curve(self._parts, self._place, float(self.it.at_once[self._place]), self.limit)
+            return lattice_curve(parts[0][2], self._place, self.limit)
+        return curve(parts, self._place, float(self.it.at_once[self._place]), self.limit)
 
     def at(self, times: FloatArray) -> FloatArray:
         """Return the probability by each time; 0 where it is less than the error of the solution."""
-        found = self.curve.at(times)
+        found = self._curve_for(times).at(times)
         return np.where(found < _NOISE, 0.0, found)
+
+    def _curve_for(self, times: FloatArray) -> Curve:
+        """Return the curve in which times can be read: all of it only where it is there, or short times are asked."""
+        if "curve" in self.__dict__:
+            return self.curve
+        return self._curve_from(_least(times))
 
     def inverse(self, levels: FloatArray) -> FloatArray:
         """Return where each level is met."""
@@ -189,15 +198,19 @@ class SolvedTime:
             return np.zeros((len(fit.influence.probability), len(times)))
         tables, places = [], []
         times = np.floor(times) if self.whole else times
-        for i, (hi, is_last, scale) in enumerate(self._parts):
+        for i, (hi, is_last, scale) in enumerate(self.parts(_least(times))):
             reached = times > hi / 10.0 if not is_last else np.full(times.shape, True)
             mine = np.flatnonzero(reached & ((times <= hi) | (i == 0)))
             if len(mine):
                 within = np.minimum(times[mine], (scale.n - 1) * scale.dt)
-                tables.append(self.it.values(scale, self._visits[hi], within))
+                tables.append(self.it.values(scale, scale.visits(self._place), within))
                 places.append(mine)
         order = np.argsort(np.concatenate(places))
         return self.it.by_bucket(np.concatenate(tables))[:, order]
+
+
+def _least(times: FloatArray) -> float:
+    return float(np.min(times, initial=np.inf))
 
 
 def limit_influence(fit: JourneyFit, walk: Walk, share: FloatArray, start: int) -> FloatArray | None:

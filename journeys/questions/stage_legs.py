@@ -7,15 +7,17 @@ from functools import cached_property
 
 import numpy as np
 
-from journeys.kernels.absorption import Passage, passage
+from journeys.kernels.absorption import Passage
 from journeys.kernels.arrays import BoolArray, FloatArray
+from journeys.kernels.grids import points_for
 from journeys.kernels.phase_type import DENSE
-from journeys.kernels.renewal import ComplexArray, Scale, points_for
+from journeys.kernels.renewal import ComplexArray, Scale
 from journeys.models.fit import JourneyFit
-from journeys.questions.elapsed import NO_DISTRIBUTION, Elapsed, Walk, elapsed, timed
+from journeys.questions.elapsed import NO_DISTRIBUTION, Elapsed, elapsed
 from journeys.questions.linear import starts_counted
 from journeys.questions.stage_rows import CONVERTED, Share
 from journeys.questions.time_to_convert import NO_CURVE
+from journeys.questions.walks import Walk, stepped, timed
 
 _BEYOND = 1.1  # a grid of times ends a little after the time asked for
 
@@ -56,9 +58,7 @@ class Leg:
     @property
     def mean_moves(self) -> float:
         """Mean number of moves to the next stage given that it is reached."""
-        walk, p = self.walk, self.fit.probability
-        steps = passage(walk.n_states, walk.n_nodes, walk.state, walk.target, p, p, p, walk.is_target)
-        return float(np.nan_to_num(steps.mean_given[self.start]))
+        return float(np.nan_to_num(stepped(self.fit, self.walk).mean_given[self.start]))
 
     def ends_in(self, outcome: str) -> tuple[Share, Passage]:
         """Return the share of those in this stage who end in an outcome without reaching the next one."""
@@ -177,7 +177,7 @@ def _timings(legs: list[Leg], its: list[Elapsed], days: float) -> list[_Timing]:
         scales = [it.on_days(days) for it in its]
     else:
         points = points_for(sum(leg.mean_moves for leg in legs))
-        scales = [it.renewal.solve(_BEYOND * days / (points - 1), points) for it in its]
+        scales = [it.grids.solve(_BEYOND * days / (points - 1), points) for it in its]
     places = [int(it.renewal.place[leg.start]) for leg, it in zip(legs, its, strict=True)]
     return [_Timing(*one) for one in zip(its, scales, places, strict=True)]
 

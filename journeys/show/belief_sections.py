@@ -61,7 +61,8 @@ def _checks(overview: Overview) -> list[Part]:
         name = f"{row['check_name']} ({short_name(row['about'])})" if row["about"] else str(row["check_name"])
         p_value = "" if math.isnan(row["p_value_corrected"]) else f"{row['p_value_corrected']:.2g}"
         rows.append((name, str(row["verdict"]), str(row["compared"]), p_value, str(row["advice"])))
-    return [Table("Checks of the model", ["check", "verdict", "compared", "p, corrected", "what to do"], rows)]
+    columns = ["check", "verdict", "compared", "p, corrected", "what to do"]
+    return [Table("Checks of the model", columns, rows, ours=("what to do",))]
 
 
 def _flag_lines(overview: Overview) -> list[str]:

@@ -9,7 +9,7 @@ import numpy as np
 from journeys.markup import LEFT_OUT, count_text, short_name
 from journeys.questions.overview import Overview
 from journeys.questions.plain_count import PlainCount
-from journeys.questions.time_to_convert import IN_THE_END
+from journeys.questions.time_to_convert import IN_THE_END, SO_FAR
 from journeys.show.parts import Curve, Dot, Dots, Lines, Part, Section, Table, Words
 from journeys.show.rows import (
     Row,
@@ -22,6 +22,11 @@ from journeys.show.rows import (
     time_lines,
 )
 from journeys.show.words import UNDECIDED, listed, outcome_words, percent
+
+LOG_FIRST = (
+    'Log and model differ here by more than their intervals: go by the log as far as it reaches, and see "Whether to '
+    'believe it" below.'
+)
 
 
 def opening(overview: Overview) -> str:
@@ -96,9 +101,22 @@ def how_long(overview: Overview) -> Section:
     columns = ["since entry", "converted, by the log", "by the model", "note"]
     table = Table("Share converted by time since entry", columns, horizon_rows(overview))
     parts: list[Part] = [Lines(time_lines(overview)), table]
+    if _apart(overview):
+        parts.append(Words(LOG_FIRST))
     if (picture := _curve(overview)) is not None:
         parts.append(picture)
     return Section("How long it takes", parts)
+
+
+def _apart(overview: Overview) -> bool:
+    """Tell whether log and model differ in some share by more than their intervals."""
+    frame = overview.conversion.to_frame()
+    shares = frame[(frame.measure == "converted") & (frame.horizon != SO_FAR)].set_index(["horizon", "basis"])
+    both = shares[["low", "high"]].unstack("basis").dropna()
+    if both.empty:
+        return False
+    low, high = both["low"], both["high"]
+    return bool(((low["log"] > high["model"]) | (low["model"] > high["log"])).any())
 
 
 def _curve(overview: Overview) -> Curve | None:

@@ -14,6 +14,7 @@ import sys
 import time
 import warnings
 from collections.abc import Callable, Sequence
+from dataclasses import replace
 from functools import partial
 from pathlib import Path
 
@@ -27,8 +28,9 @@ from scipy import stats  # noqa: E402
 import journeys as jn  # noqa: E402
 from journeys.errors import JourneysWarning  # noqa: E402
 from journeys.questions import quantiles  # noqa: E402
-from journeys.questions.elapsed import elapsed, timed, walk_to  # noqa: E402
+from journeys.questions.elapsed import elapsed  # noqa: E402
 from journeys.questions.solved_curve import SolvedTime  # noqa: E402
+from journeys.questions.walks import timed, walk_to  # noqa: E402
 
 START = pd.Timestamp("2024-01-01T00:00:00Z")
 
@@ -70,7 +72,7 @@ def solves(fit: jn.JourneyFit) -> tuple[float, float]:
         raise TypeError
     total, set_up = 0.0, 0.0
     start = int(it.renewal.place[0])
-    for hi, _, scale in SolvedTime(it, 0)._parts:
+    for hi, _, scale in SolvedTime(it, 0).parts():
         set_up += seconds(partial(it.renewal.solve, hi / (scale.n - 1), scale.n))
         began = time.perf_counter()
         systems = list(scale._systems())
@@ -107,7 +109,7 @@ def main(argv: Sequence[str] | None = None) -> int:
     parser.add_argument("--growth", type=int, nargs="*", default=[10, 20, 40, 80])
     asked = parser.parse_args(argv)
     fit = fit_of(asked.states, asked.customers, np.random.default_rng(1))
-    turns = [(*solves(fit), seconds(lambda: jn.passage_curve(fit).to_frame())) for _ in range(asked.repeats)]
+    turns = [(*solves(fit), seconds(lambda: jn.passage_curve(replace(fit)).to_frame())) for _ in range(asked.repeats)]
     alone, made, whole = (statistics.median(column) for column in zip(*turns, strict=True))
     ratio, other = (statistics.median(turn[2] / turn[i] for turn in turns) for i in (0, 1))
     cells = 0 if fit.fitted_stays is None else len(fit.fitted_stays.found.q)

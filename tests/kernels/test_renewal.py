@@ -7,7 +7,8 @@ import pytest
 from scipy import stats
 
 from journeys.kernels.dwell_grid import BinnedDwell, GivenDwell
-from journeys.kernels.renewal import Curve, Renewal, curve, lattice_curve, points_for
+from journeys.kernels.grids import Grids, points_for
+from journeys.kernels.renewal import Curve, Renewal, curve, lattice_curve
 
 NO, NONE = np.zeros(0, np.int64), np.zeros(0)
 TIMES = np.geomspace(1e-4, 200.0, 400)
@@ -19,7 +20,7 @@ def chain(cells: list[tuple[int, int, float]], n_states: int, n_nodes: int, mass
 
 
 def solved(walk: Renewal, top: float, start: int = 0, limit: float = 1.0, moves: float = 10.0) -> Curve:
-    return curve(list(walk.scales(top, points_for(moves))), start, 0.0, limit)
+    return curve(list(Grids(walk).scales(top, points_for(moves))), start, 0.0, limit)
 
 
 def given(cells: list[tuple[int, int, float]], dwell: list[object]) -> GivenDwell:

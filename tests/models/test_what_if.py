@@ -15,8 +15,9 @@ import journeys as jn
 from journeys.errors import LogError
 from journeys.kernels.sojourn import fit_stays
 from journeys.models.fit import JourneyFit
-from journeys.questions.elapsed import elapsed, walk_to
+from journeys.questions.elapsed import elapsed
 from journeys.questions.solved_curve import SolvedTime
+from journeys.questions.walks import walk_to
 
 DAYS = np.array([0.5, 3.0, 10.0, 40.0, 200.0])
 BETTER = ("basket", "joined", 0.05)

@@ -17,12 +17,13 @@ import journeys as jn
 from journeys.kernels.sojourn import fit_stays
 from journeys.models.fit import JourneyFit
 from journeys.questions.curve_result import NEVER_THAT_MANY, NO_BAND
-from journeys.questions.elapsed import elapsed, walk_to
+from journeys.questions.elapsed import elapsed
 from journeys.questions.linear import TOO_FEW
 from journeys.questions.outcomes import UNREACHABLE
 from journeys.questions.passage_curve import passage_curve
 from journeys.questions.quantiles import NOT_IN_REACH
 from journeys.questions.solved_curve import SolvedTime
+from journeys.questions.walks import walk_to
 
 DAYS = np.array([0.2, 1.0, 5.0, 20.0, 60.0, 150.0])
 

@@ -19,11 +19,12 @@ from journeys.kernels.arrays import FloatArray
 from journeys.models.fit import JourneyFit
 from journeys.models.memory import Nodes
 from journeys.questions import quantiles
-from journeys.questions.elapsed import NO_DISTRIBUTION, Walk, timed, walk_to
+from journeys.questions.elapsed import NO_DISTRIBUTION
 from journeys.questions.linear import TOO_FEW
 from journeys.questions.outcomes import UNREACHABLE
 from journeys.questions.passage_curve import passage_curve
 from journeys.questions.quantiles import BY_CURVE, NOT_IN_REACH, TOO_LARGE, quantile_estimates, quantiles_of_moves
+from journeys.questions.walks import Walk, timed, walk_to
 from journeys.results import Estimates
 
 

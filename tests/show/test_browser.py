@@ -90,6 +90,23 @@ say(new Set(ids).size === ids.length, 'ids twice');
 return faults;
 """
 
+# Parts of words, dates, and numbers with their percent sign that stand on two lines though one would hold them.
+BROKEN = """
+const found = [], one = document.createRange();
+const walker = document.createTreeWalker(document.body, NodeFilter.SHOW_TEXT,
+  text => text.parentElement.closest('svg, pre') ? NodeFilter.FILTER_REJECT : NodeFilter.FILTER_ACCEPT);
+while (walker.nextNode()) {
+  const text = walker.currentNode;
+  const box = text.parentElement.closest('th, td, p, li, dt, dd, h1, h2, caption, figcaption');
+  for (const part of text.data.matchAll(/[\\d,.]+(?:[–-][\\d,.–-]+)+\\)?|[\\d.,]+\\s%|[\\p{L}\\d]+/gu)) {
+    one.setStart(text, part.index); one.setEnd(text, part.index + part[0].length);
+    const lines = [...one.getClientRects()].filter(line => line.width > 0);
+    const width = lines.reduce((sum, line) => sum + line.width, 0);
+    const tops = new Set(lines.map(line => Math.round(line.top)));
+    if (tops.size > 1 && box && width < box.clientWidth - 32) found.push(part[0] + ' in ' + text.data.slice(0, 60)); } }
+return found;
+"""
+
 
 @pytest.fixture(scope="module")
 def browser() -> Iterator[Any]:
@@ -155,6 +172,7 @@ def test_the_page_opens_fits_and_asks_for_nothing(
     assert [url for url in asked if not url.startswith("data:")] == [browser.current_url]
     assert browser.execute_script(TOO_WIDE) == 0
     assert browser.execute_script(OUTSIDE) == []
+    assert browser.execute_script(BROKEN) == []
 
 
 @pytest.mark.parametrize("scheme", ["light", "dark"])
@@ -183,12 +201,14 @@ def test_the_checks_find_what_they_are_for(browser: Any, see: Callable[..., None
     bad = (
         "<!DOCTYPE html><html><body><h2>late</h2><p style='color:#999;background:#fff'>faint</p><svg></svg>"
         "<table><tr><th>x</th></tr></table><div style='width:3000px'>wide</div>"
-        "<img src='missing.png'></body></html>"
+        "<p style='width:8em'>it is now 2025-04-29</p><p style='width:8em;word-break:break-all'>a log of missing "
+        "customers</p><img src='missing.png'></body></html>"
     )
     see(bad, "bad", 360)
     wanted = {"language", "title", "landmarks", "one h1", "skipped: late", "role of a picture", "caption", "scope"}
     assert wanted <= set(browser.execute_script(FAULTS))
     assert len(browser.execute_script(OUTSIDE)) >= 1
+    assert {told.partition(" in ")[0] for told in browser.execute_script(BROKEN)} == {"2025-04-29", "customers"}
     *faint, _ = browser.execute_script(CONTRAST)
     assert ["faint" in found[2] for found in faint] == [True]
     assert any("missing.png" in url for url in requests(browser))

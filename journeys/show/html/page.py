@@ -19,9 +19,14 @@ from journeys.show.sections import sections, title
 # Nothing may be fetched, and nothing run, even if a name got through as markup.
 _POLICY = "default-src 'none'; style-src 'unsafe-inline'; img-src data:"
 _NUMBER = re.compile(r"[+−]?\d[\d,.]*( %)?( \([^()]*\d[^()]*\))?|\d+ of \d+|[\d,]+ of [\d,]+|some never do|·")
-# A long word may be broken after a sign that joins two, or after so many characters.
-_PIECE = re.compile(r"[^_/.:\-]*[_/.:\-]+|[^_/.:\-]+")
+# A long word may be broken where its parts meet, or after so many characters, about as many as a narrow column takes.
+_PIECE = re.compile(r".+?(?:[_/]+(?=.)|[.:\-]+(?=[^\W\d_])|$)", re.DOTALL)
 _SHORT, _UNBROKEN = 9, 18
+# Dates and intervals stay in one piece, and so do a number and its percent sign.
+_SPAN = r"[(+−]*\d[\d,.:]*[–\-][+−]?\d[\d,.:–\-]*"
+_PERCENT = r"[(+−]*\d[\d,.]* %"
+_WHOLE = re.compile(rf"({_SPAN}|{_PERCENT})[);,.:]*")
+_WORDS = re.compile(rf"(?<!\S)({_PERCENT}[);,.:]*)(?!\S)|([ \n]+)")
 _INTERVAL = re.compile(r"(.*\S) (\([^()]*\))")
 # Tables of more numbers than these put intervals below their numbers.
 _WIDE = 5
@@ -59,9 +64,9 @@ def summary_html(overview: Overview, told: Sequence[Section] | None = None) -> s
         element("a", "To the numbers", href="#numbers", class_="skip"),
         element(
             "header",
-            element("h1", element("bdi", title(overview))),
-            element("p", element("bdi", opening(overview)), ".", class_="lead"),
-            element("p", span_words(overview), class_="quiet"),
+            element("h1", _name(title(overview))),
+            element("p", _name(opening(overview)), ".", class_="lead"),
+            element("p", *_pieces(span_words(overview)), class_="quiet"),
         ),
         element("nav", element("ol", *links), aria_label="Contents"),
         element("main", *(_section(section, i) for i, section in enumerate(told)), id="numbers"),
@@ -72,18 +77,18 @@ def summary_html(overview: Overview, told: Sequence[Section] | None = None) -> s
 def _section(section: Section, at: int) -> Markup:
     key = f"part-{at}"
     parts = [_part(part, f"{key}-{i}") for i, part in enumerate(section.parts)]
-    heading = element("h2", element("bdi", section.title), id=key)
+    heading = element("h2", _name(section.title), id=key)
     return Markup(f"\n{element('section', heading, *parts, aria_labelledby=key)}")
 
 
 def _part(part: Part, key: str) -> Markup:
     match part:
         case Words(text):
-            return element("p", element("bdi", text))
+            return element("p", _name(text))
         case Lines(items):
-            return element("ul", *(element("li", element("bdi", item)) for item in items))
+            return element("ul", *(element("li", _name(item)) for item in items))
         case Terms(items):
-            told = (joined([element("dt", term), element("dd", meaning)]) for term, meaning in items)
+            told = (joined([element("dt", term), element("dd", *_pieces(meaning))]) for term, meaning in items)
             return element("dl", *told)
         case Verbatim(text, _):
             return element("pre", element("code", text))
@@ -91,11 +96,11 @@ def _part(part: Part, key: str) -> Markup:
             return _table(part)
         case Dots():
             caption = f"{part.caption}. Dots with intervals{'; hollow: see the note' if any_hollow(part) else ''}."
-            return element("figure", element("figcaption", caption), dots_picture(part, key))
+            return element("figure", element("figcaption", *_pieces(caption)), dots_picture(part, key))
         case Curve():
             band = ", with its interval at each time" if (part.high > part.low).any() else ""
             caption = f"{part.caption}{band}; the triangle marks the median."
-            return element("figure", element("figcaption", caption), curve_picture(part, key))
+            return element("figure", element("figcaption", *_pieces(caption)), curve_picture(part, key))
 
 
 def _table(part: Table) -> Markup:
@@ -117,7 +122,7 @@ def _table(part: Table) -> Markup:
     ]
     table = element(
         "table",
-        element("caption", element("span", part.caption)), element("thead", element("tr", *heads)),
+        element("caption", element("span", *_pieces(part.caption))), element("thead", element("tr", *heads)),
         element("tbody", *rows),
     )  # fmt: skip
     # A box that can be scrolled must be reached by the keyboard, and named.
@@ -138,11 +143,20 @@ def _without_empty(part: Table) -> Table:
 
 
 def _name(text: str) -> Markup:
-    """Return a name from the data, set apart from the text around it, which may be broken where its parts meet."""
-    return element("bdi", *(_breakable(word) if len(word) > _SHORT else word for word in re.split(r"(\s+)", text)))
+    """Return a name from the data, or words with names in them, set apart from the text around it."""
+    return element("bdi", *_pieces(text))
 
 
-def _breakable(word: str) -> Markup:
+def _pieces(text: str) -> list[Markup | str]:
+    """Return text that is broken between its words, or where the parts of a word meet."""
+    return [_word(word) for word in _WORDS.split(text) if word]
+
+
+def _word(word: str) -> Markup | str:
+    if _WHOLE.fullmatch(word):
+        return element("span", word, class_="whole") if len(word) <= _UNBROKEN else word
+    if len(word) <= _SHORT:
+        return word
     pieces = [piece[i : i + _UNBROKEN] for piece in _PIECE.findall(word) for i in range(0, len(piece), _UNBROKEN)]
     return joined(pieces, "<wbr>")
 
@@ -161,4 +175,6 @@ def _with_interval(text: str) -> Markup:
 def _with_code(text: str) -> Markup:
     """Return our own words, what stands between backticks as code."""
     parts = text.split("`")
-    return joined([element("code", part) if i % 2 else part for i, part in enumerate(parts)])
+    return joined([
+        element("code", *_pieces(part)) if i % 2 else joined(_pieces(part)) for i, part in enumerate(parts)
+    ])

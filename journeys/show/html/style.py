@@ -42,6 +42,7 @@ thead th { vertical-align: bottom; color: var(--grey); border-bottom: 1.5px soli
 tbody th, tbody td { border-bottom: 1px solid var(--line); }
 tbody th { background: var(--paper); max-width: 14rem; }
 .number { text-align: right; white-space: nowrap; }
+.whole { white-space: nowrap; }
 thead .number { white-space: normal; }
 .words { min-width: 11rem; max-width: 26rem; }
 .interval { color: var(--grey); }
