@@ -35,13 +35,28 @@ def test_it_is_built_where_a_compiler_is() -> None:
 
 def test_struct_has_the_fields_of_the_c_file() -> None:
     source = (Path(compiled.__file__).parent / "_walk.c").read_text(encoding="utf-8")
-    inside = source[source.index("typedef struct {") : source.index("} Walk;")]
-    names = []
-    for line in inside.splitlines()[1:]:
+    before = source[: source.index("} Walk;")]
+    found = []
+    for line in before[before.rindex("typedef struct {") :].splitlines()[1:]:
         text = line.strip()
         if text and not text.startswith(("/*", "*")):
-            names += [part.split()[-1].lstrip("*") for part in text.rstrip(";").split(",")]
-    assert names == [name for name, _ in compiled._Walk._fields_]
+            found += [part.split()[-1].lstrip("*") for part in text.rstrip(";").split(",")]
+    assert found == [name for name, _ in compiled._Walk._fields_]
+
+
+def test_records_are_laid_out_as_in_the_c_file() -> None:
+    """The short names of the C file are those of the columns, in the same order and of the same size."""
+    long = {"start": "journey_start", "visit": "visit_start", "first": "first_code", "events": "n_events"}
+    source = (Path(compiled.__file__).parent / "_walk.c").read_text(encoding="utf-8")
+    inside = source[: source.index("} Record;")].rpartition("typedef struct {")[2]
+    kinds = {"int64_t": np.int64, "int32_t": np.int32, "uint8_t": np.bool_}
+    laid_out = [
+        (long.get(name.strip(), name.strip()), np.dtype(kinds[line.split()[0]]))
+        for line in filter(None, map(str.strip, inside.split(";")))
+        for name in line.split(maxsplit=1)[1].split(",")
+    ]
+    assert compiled.RECORD.names is not None
+    assert laid_out == [(name, compiled.RECORD[name]) for name in compiled.RECORD.names]
 
 
 def test_without_it_the_answer_is_the_same_and_asking_for_it_is_refused(monkeypatch: pytest.MonkeyPatch) -> None:
