@@ -394,6 +394,20 @@ EXPORT void journeys_insert(int64_t n_old, uint64_t *key, Record *record, int64_
     }
 }
 
+/* Add up values by group: group g is the items of `order` from start[g] up to the start of the next. */
+EXPORT void journeys_group_sums(int64_t n, const int64_t *order, int64_t n_groups, const int64_t *start,
+                                const int64_t *value, int64_t *out)
+{
+    int64_t g, i;
+    for (g = 0; g < n_groups; g++) {
+        const int64_t end = g + 1 < n_groups ? start[g + 1] : n;
+        uint64_t sum = 0;
+        for (i = start[g]; i < end; i++)
+            sum += (uint64_t)value[order[i]];
+        out[g] = (int64_t)sum;
+    }
+}
+
 /* The 64-bit keys of customers, as identity.py explains them. */
 #define GOLDEN UINT64_C(0x9E3779B97F4A7C15)
 

@@ -77,10 +77,11 @@ def _library() -> Any:
     library.journeys_positions.argtypes = [number, number, address, address]
     library.journeys_positions.restype = number
     library.journeys_insert.argtypes = [number, address, address, number, address, address]
+    library.journeys_group_sums.argtypes = [number, address, number, *[address] * 3]
     library.journeys_mix.argtypes = [number, address, address]
     library.journeys_text_keys.argtypes = [number, number, *[address] * 3]
     library.journeys_bucket_major.argtypes = [number, *[address] * 3]
-    for name in ("insert", "pack", "mix", "text_keys", "bucket_major"):
+    for name in ("insert", "pack", "group_sums", "mix", "text_keys", "bucket_major"):
         getattr(library, f"journeys_{name}").restype = None
     return library
 
@@ -291,6 +292,17 @@ def sorted_positions(key: NDArray[np.uint64], bits: int) -> IntArray | None:
     _library().journeys_pack(*given)
     packed.sort()
     return None if _library().journeys_positions(*given) else packed.view(np.int64)
+
+
+def group_sums(values: IntArray, order: IntArray, start: IntArray) -> IntArray:
+    """Return the sum of each group of values; group g is what `order` names from `start[g]` on to the next start."""
+    if not is_built():
+        return np.add.reduceat(values[order], start)
+    out = _times(len(start))
+    values, order, start = (np.ascontiguousarray(array, np.int64) for array in (values, order, start))
+    address, first, given, sums = (array.ctypes.data for array in (order, start, values, out))
+    _library().journeys_group_sums(len(order), address, len(start), first, given, sums)
+    return out
 
 
 def insert(

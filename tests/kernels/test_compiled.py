@@ -14,7 +14,9 @@ import pytest
 from journeys.intake import identity
 from journeys.intake.rules import JourneyRules
 from journeys.kernels import compiled
+from journeys.kernels.held import Held, apart
 from journeys.tally import count_log
+from journeys.tally.order import by_customer
 
 RULES = JourneyRules("member", "happened", "event", converted=["joined"], silence="30d", complete_history=True)
 LOG = pd.DataFrame(
@@ -81,3 +83,43 @@ def test_keys_are_the_same_with_and_without_it(monkeypatch: pytest.MonkeyPatch) 
     without = [identity.bucket_major(identity.customer_keys(column)[0]) for column in columns]
     for one, two in zip(with_it, without, strict=True):
         np.testing.assert_array_equal(one, two)
+
+
+def test_orders_and_sums_are_the_same_with_and_without_it(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Also of customers who share the leading bits of their keys, and come in the wrong order then."""
+    if not compiled.is_built():
+        pytest.skip("optional engine missing: the compiled loop")
+    rng = np.random.default_rng(9)
+    key = rng.integers(0, 2**64, 200, np.uint64)[rng.integers(0, 200, 3_000)]
+    alike = key.copy()
+    alike[::2] ^= np.uint64(1)
+    expected = [np.argsort(one, kind="stable") for one in (key, alike)]
+    assert compiled.sorted_positions(alike, 12) is None
+    start = np.flatnonzero(np.diff(key[expected[0]], prepend=np.uint64(0)))
+    values = rng.integers(-(2**40), 2**40, 3_000)
+    sums = np.add.reduceat(values[expected[0]], start)
+    for _ in ("with it", "without"):
+        for one, order in zip((key, alike), expected, strict=True):
+            np.testing.assert_array_equal(by_customer(one), order)
+        np.testing.assert_array_equal(compiled.group_sums(values, expected[0], start), sums)
+        monkeypatch.setattr(compiled, "_library", lambda: None)
+
+
+def test_new_records_join_the_others_in_the_order_of_their_keys() -> None:
+    if not compiled.is_built():
+        pytest.skip("optional engine missing: the compiled loop")
+    rng = np.random.default_rng(10)
+    keys = rng.permutation(np.arange(5_000, dtype=np.uint64) * np.uint64(3))
+    held = Held()
+    for part in np.split(keys, [1, 2, 900, 950, 951, 2_000, 4_999]):
+        held.new.make_room(len(part))
+        held.new.key[: len(part)] = np.sort(part)
+        held.new.record["time"][: len(part)] = np.sort(part).astype(np.int64) + 7
+        held.new.n = len(part)
+        held.settle()
+        assert held.new.n == 0
+    records = held.carried([])
+    np.testing.assert_array_equal(records.key, np.sort(keys))
+    np.testing.assert_array_equal(records.time, np.sort(keys).astype(np.int64) + 7)
+    again = Held.of(apart(records)).carried(["visit_start"])
+    np.testing.assert_array_equal(again.visit_start, records.time)
