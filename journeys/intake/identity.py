@@ -202,9 +202,10 @@ FIRST_KEYS = _first_of(np.arange(N_BUCKETS, dtype=np.uint64))
 
 def _text_keys(array: pa.Array) -> NDArray[np.uint64]:
     """Keys of plain text or bytes, from the buffers themselves."""
+    offsets, whole = text_offsets(array), array.buffers()[2]
+    if len(array) >= _FEW and compiled.is_built() and whole is not None and whole.size >= offsets[-1]:
+        return compiled.text_keys(offsets, np.frombuffer(whole, dtype=np.uint8))
     starts, lengths, data = _text_buffers(array)
-    if len(lengths) >= _FEW and compiled.is_built():
-        return compiled.text_keys(starts, lengths, data)
     out = np.empty(len(lengths), dtype=np.uint64)
     for start in range(0, len(out), _BLOCK):
         rows = slice(start, start + _BLOCK)

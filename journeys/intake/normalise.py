@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 
 from journeys.checks import DAY_US
 from journeys.errors import LogError
-from journeys.intake.arrays import is_missing, numbers, plain, whole_numbers
+from journeys.intake.arrays import indices_of, is_missing, numbers, plain, whole_numbers
 from journeys.intake.columns import decoded, event_names, is_in, texts_of
 from journeys.intake.findings import Findings
 from journeys.intake.groups import GroupCodes
@@ -219,7 +219,7 @@ class Normaliser:
     def _codes(self, event: pa.DictionaryArray, kept: _Kept) -> NDArray[np.int32]:
         """Codes of the events, those of rows left out being 0; drops what the rules drop."""
         names = texts_of(event.dictionary, self.rules.event)
-        index = numbers(event.indices).astype(np.int32, copy=False)
+        index = numbers(event.indices) if event.indices.type == pa.int32() else indices_of(event)
         if not names:
             return np.zeros(len(index), dtype=np.int32)
         codes = self.codes.known(names)
@@ -231,8 +231,10 @@ class Normaliser:
             codes[positions] = self.codes.encode([names[i] for i in positions])
         for name in self.codes.names[len(self.targets) :]:
             self.targets.append(self._target(name))
-        # Mostly a file has the names in the order in which they turned up.
-        events = index if (codes == np.arange(len(codes))).all() else codes[index]
+        # Mostly a file has the names in the order in which they turned up. What lies outside is not taken as it stands.
+        same = index.dtype == np.int32 and bool((codes == np.arange(len(codes))).all())
+        same = same and index.min(initial=0) >= 0 and index.max(initial=0) < len(codes)
+        events = np.asarray(index if same else codes[index], np.int32)
         dropped = np.array([target is None for target in self.targets], dtype=bool)
         if dropped.any():
             kept.drop("unmapped_event", self.rules.event, dropped[events])

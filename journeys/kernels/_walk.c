@@ -185,16 +185,50 @@ static void end_journey(Walk *w, int64_t bucket, int64_t first, int64_t outcome,
     w->e_elapsed[i] = elapsed;
 }
 
+/* The records of the next customers of the rows, found some time before they are worked on, and called for. */
+#define CUSTOMERS_AHEAD 16
+
+typedef struct {
+    /* Where the search stands: in the rows, and in both tables of records. */
+    int64_t row, old, young;
+    Record *record[CUSTOMERS_AHEAD];
+} Ahead;
+
+static void find_next(const Walk *w, Ahead *ahead)
+{
+    int64_t n = 0;
+    while (n < CUSTOMERS_AHEAD && ahead->row < w->n_rows) {
+        uint64_t who = w->key[ahead->row];
+        Record *record = NULL;
+        while (ahead->old < w->n_old && w->o_key[ahead->old] < who)
+            ahead->old++;
+        while (ahead->young < w->n_young && w->y_key[ahead->young] < who)
+            ahead->young++;
+        if (ahead->old < w->n_old && w->o_key[ahead->old] == who)
+            record = &w->o_record[ahead->old];
+        else if (ahead->young < w->n_young && w->y_key[ahead->young] == who)
+            record = &w->y_record[ahead->young];
+        if (record) {
+            CALL_FOR(record);
+            CALL_FOR((char *)(record + 1) - 1);
+        }
+        ahead->record[n++] = record;
+        while (ahead->row < w->n_rows && w->key[ahead->row] == who)
+            ahead->row++;
+    }
+}
+
 EXPORT int64_t journeys_walk(Walk *w)
 {
     const uint64_t *key = w->key;
-    int64_t old, young, bucket, i = 0;
+    int64_t bucket, customers = 0, i = 0;
     Queue queue = {.n = 0};
+    Ahead ahead = {.row = 0};
     const int64_t slots = (INT64_C(1) << (SLOT_BITS * w->n_slots)) - 1;
     if (!w->n_rows)
         return IN_ORDER;
-    old = lower_bound(w->o_key, w->n_old, key[0]);
-    young = lower_bound(w->y_key, w->n_young, key[0]);
+    ahead.old = lower_bound(w->o_key, w->n_old, key[0]);
+    ahead.young = lower_bound(w->y_key, w->n_young, key[0]);
     bucket = lower_bound(w->first_keys, w->n_buckets, key[0]);
     if (bucket == w->n_buckets || w->first_keys[bucket] > key[0])
         bucket--;
@@ -205,13 +239,9 @@ EXPORT int64_t journeys_walk(Walk *w)
         int sure;
         while (bucket + 1 < w->n_buckets && who >= w->first_keys[bucket + 1])
             bucket++;
-        while (old < w->n_old && w->o_key[old] < who)
-            old++;
-        while (young < w->n_young && w->y_key[young] < who)
-            young++;
-        record = old < w->n_old && w->o_key[old] == who         ? &w->o_record[old]
-                 : young < w->n_young && w->y_key[young] == who ? &w->y_record[young]
-                                                                : NULL;
+        if (customers % CUSTOMERS_AHEAD == 0)
+            find_next(w, &ahead);
+        record = ahead.record[customers++ % CUSTOMERS_AHEAD];
         if (record) {
             if (w->time[i] <= record->time)
                 return OUT_OF_ORDER;
@@ -320,6 +350,14 @@ EXPORT int64_t journeys_gather(int64_t n, const int64_t *order, const uint64_t *
     return not_later;
 }
 
+/* Put the leading bits of each key before its position. */
+EXPORT void journeys_pack(int64_t n, int64_t bits, const uint64_t *key, uint64_t *packed)
+{
+    int64_t i;
+    for (i = 0; i < n; i++)
+        packed[i] = key[i] >> bits << bits | (uint64_t)i;
+}
+
 /* Turn words made of (leading bits of a key, position), which are sorted, into the positions; tell whether keys that
  * share the leading bits stand in the wrong order. */
 EXPORT int64_t journeys_positions(int64_t n, int64_t bits, const uint64_t *key, uint64_t *packed)
@@ -356,6 +394,20 @@ EXPORT void journeys_insert(int64_t n_old, uint64_t *key, Record *record, int64_
     }
 }
 
+/* Add up values by group: group g is the items of `order` from start[g] up to the start of the next. */
+EXPORT void journeys_group_sums(int64_t n, const int64_t *order, int64_t n_groups, const int64_t *start,
+                                const int64_t *value, int64_t *out)
+{
+    int64_t g, i;
+    for (g = 0; g < n_groups; g++) {
+        const int64_t end = g + 1 < n_groups ? start[g + 1] : n;
+        uint64_t sum = 0;
+        for (i = start[g]; i < end; i++)
+            sum += (uint64_t)value[order[i]];
+        out[g] = (int64_t)sum;
+    }
+}
+
 /* The 64-bit keys of customers, as identity.py explains them. */
 #define GOLDEN UINT64_C(0x9E3779B97F4A7C15)
 
@@ -375,15 +427,25 @@ EXPORT void journeys_mix(int64_t n, const uint64_t *in, uint64_t *out)
         out[i] = mix(in[i]);
 }
 
-EXPORT void journeys_text_keys(int64_t n, const int64_t *start, const int64_t *length, const char *data, uint64_t *out)
+/* Text i begins at offset i and ends at the next; the offsets have 64 bits where `wide`, else 32. */
+EXPORT void journeys_text_keys(int64_t n, int64_t wide, const void *offsets, const char *data, uint64_t *out)
 {
-    int64_t i, j;
+    const int64_t *far = offsets;
+    const int32_t *near = offsets;
+    int64_t i, j, end = wide ? far[0] : near[0], known = -1;
+    uint64_t of_length = 0;
     for (i = 0; i < n; i++) {
-        const char *text = data + start[i];
-        uint64_t total = mix((uint64_t)length[i] ^ GOLDEN);
-        for (j = 0; 8 * j < length[i]; j++) {
+        const int64_t start = end, length = (end = wide ? far[i + 1] : near[i + 1]) - start;
+        const char *text = data + start;
+        uint64_t total;
+        if (length != known) {
+            known = length;
+            of_length = mix((uint64_t)length ^ GOLDEN);
+        }
+        total = of_length;
+        for (j = 0; 8 * j < length; j++) {
             uint64_t word = 0;
-            int64_t left = length[i] - 8 * j;
+            int64_t left = length - 8 * j;
             if (left >= 8) {
                 memcpy(&word, text + 8 * j, 8);
             } else {

@@ -73,13 +73,15 @@ def _library() -> Any:
     number, address = ctypes.c_int64, ctypes.c_void_p
     library.journeys_gather.argtypes = [number, *[address] * 8]
     library.journeys_gather.restype = ctypes.c_int64
+    library.journeys_pack.argtypes = [number, number, address, address]
     library.journeys_positions.argtypes = [number, number, address, address]
     library.journeys_positions.restype = number
     library.journeys_insert.argtypes = [number, address, address, number, address, address]
+    library.journeys_group_sums.argtypes = [number, address, number, *[address] * 3]
     library.journeys_mix.argtypes = [number, address, address]
-    library.journeys_text_keys.argtypes = [number, *[address] * 4]
+    library.journeys_text_keys.argtypes = [number, number, *[address] * 3]
     library.journeys_bucket_major.argtypes = [number, *[address] * 3]
-    for name in ("insert", "mix", "text_keys", "bucket_major"):
+    for name in ("insert", "pack", "group_sums", "mix", "text_keys", "bucket_major"):
         getattr(library, f"journeys_{name}").restype = None
     return library
 
@@ -253,11 +255,12 @@ def mixed(words: NDArray[np.uint64]) -> NDArray[np.uint64]:
     return out
 
 
-def text_keys(starts: IntArray, lengths: IntArray, data: NDArray[np.uint8]) -> NDArray[np.uint64]:
-    """Return the key of each text, given where it begins and how many bytes it has (little-endian machines only)."""
-    out = np.empty(len(lengths), np.uint64)
-    given = [np.ascontiguousarray(array) for array in (starts, lengths, data)]
-    _library().journeys_text_keys(len(out), *(array.ctypes.data for array in (*given, out)))
+def text_keys(offsets: NDArray[Any], data: NDArray[np.uint8]) -> NDArray[np.uint64]:
+    """Return the key of each text, given at which byte each begins and the last one ends (`identity` says how)."""
+    out = np.empty(len(offsets) - 1, np.uint64)
+    given = [np.ascontiguousarray(array) for array in (offsets, data)]
+    wide = offsets.dtype == np.int64
+    _library().journeys_text_keys(len(out), wide, *(array.ctypes.data for array in (*given, out)))
     return out
 
 
@@ -269,25 +272,37 @@ def by_bucket(keys: NDArray[np.uint64], first_keys: NDArray[np.uint64]) -> NDArr
     return out
 
 
-def positions(packed: NDArray[np.uint64], bits: int, key: NDArray[np.uint64]) -> IntArray | None:
-    """Return the order of keys, given their leading bits and, in the lowest `bits`, their positions, sorted as words.
+def sorted_positions(key: NDArray[np.uint64], bits: int) -> IntArray | None:
+    """Return the order of keys, found by sorting their leading bits together with their positions.
 
     Parameters
     ----------
-    packed : ndarray of uint64, shape (n,)
-        Used up.
-    bits : int
     key : ndarray of uint64, shape (n,)
-        In input order.
+    bits : int
+        How many a position needs.
 
     Returns
     -------
     ndarray of int64, shape (n,), or None
-        None if keys that share the leading bits stand in the wrong order.
+        None if keys that share the leading bits came to stand in the wrong order.
     """
     key = np.ascontiguousarray(key)
-    wrong = _library().journeys_positions(len(key), bits, key.ctypes.data, packed.ctypes.data)
-    return None if wrong else packed.view(np.int64)
+    packed = np.empty_like(key)
+    given = len(key), bits, key.ctypes.data, packed.ctypes.data
+    _library().journeys_pack(*given)
+    packed.sort()
+    return None if _library().journeys_positions(*given) else packed.view(np.int64)
+
+
+def group_sums(values: IntArray, order: IntArray, start: IntArray) -> IntArray:
+    """Return the sum of each group of values; group g is what `order` names from `start[g]` on to the next start."""
+    if not is_built():
+        return np.add.reduceat(values[order], start)
+    out = _times(len(start))
+    values, order, start = (np.ascontiguousarray(array, np.int64) for array in (values, order, start))
+    address, first, given, sums = (array.ctypes.data for array in (order, start, values, out))
+    _library().journeys_group_sums(len(order), address, len(start), first, given, sums)
+    return out
 
 
 def insert(

@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from journeys.kernels.arrays import FloatArray, IntArray
+from journeys.kernels.compiled import group_sums
 from journeys.tally.keys import bucket_in
 
 Columns = dict[str, NDArray[np.int64]]
@@ -77,7 +78,7 @@ def add_up(key: IntArray, sums: Columns, more: More) -> Keyed:
         for part in more.values():
             first[1:] |= part[1:] != part[:-1]
         start = np.flatnonzero(first)
-        added = {name: np.add.reduceat(sums.pop(name)[order], start) for name in list(sums)}
+        added = {name: group_sums(sums.pop(name), order, start) for name in list(sums)}
         key, more = key[start], {name: part[start] for name, part in more.items()}
     else:
         added = dict(sums)

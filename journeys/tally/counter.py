@@ -15,7 +15,7 @@ from journeys.intake.rows import Rows
 from journeys.kernels.arrays import BoolArray, IntArray
 from journeys.kernels.compiled import Room, count_in_order, gathered
 from journeys.kernels.counting import close_log, count_rows
-from journeys.kernels.held import Held
+from journeys.kernels.held import Held, apart
 from journeys.kernels.openers import before_opener
 from journeys.kernels.records import FIRST_OUTCOME, Carried, Counted, Reading
 from journeys.kernels.stories import Block
@@ -182,7 +182,7 @@ class Counter:
         """Close the log: running journeys lapse or stay open, customers are added up."""
         whole = self.carried
         for begin in range(0, len(whole.key), CHUNK_ROWS):
-            carried = whole.take(slice(begin, begin + CHUNK_ROWS))
+            carried = apart(whole.take(slice(begin, begin + CHUNK_ROWS)))
             bucket = bucket_of_major(carried.key).astype(np.uint8)
             closed = close_log(carried, bucket, self._reading)
             self._sums.close(closed, self._n_states)

@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 
 from journeys.intake.rows import Rows
 from journeys.kernels.arrays import BoolArray, IntArray
-from journeys.kernels.compiled import is_built, positions
+from journeys.kernels.compiled import is_built, sorted_positions
 
 # Rows whose arrays stay in the processor's cache while they are counted.
 CHUNK_ROWS = 1 << 17
@@ -114,19 +114,20 @@ def by_customer(key: NDArray[np.uint64]) -> IntArray:
     -------
     ndarray of int64, shape (n_rows,)
     """
-    n = len(key)
-    bits = np.uint64(max(n - 1, 1).bit_length())
     # Sorting (leading bits of the key, position) as one word is far faster than an indirect sort.
-    packed = key >> bits
-    packed <<= bits
-    packed |= np.arange(n, dtype=np.uint64)
-    packed.sort()
-    if is_built():
-        order = positions(packed, int(bits), key)
-    else:
-        packed &= (np.uint64(1) << bits) - np.uint64(1)
-        order = packed.view(np.int64)
-        sorted_key = key[order]
-        order = None if (sorted_key[1:] < sorted_key[:-1]).any() else order
+    bits = max(len(key) - 1, 1).bit_length()
+    order = sorted_positions(key, bits) if is_built() else _sorted_positions(key, np.uint64(bits))
     # Where two customers share the leading bits: sort by the whole key.
     return np.argsort(key, kind="stable") if order is None else order
+
+
+def _sorted_positions(key: NDArray[np.uint64], bits: np.uint64) -> IntArray | None:
+    """Do what `compiled.sorted_positions` does."""
+    packed = key >> bits
+    packed <<= bits
+    packed |= np.arange(len(key), dtype=np.uint64)
+    packed.sort()
+    packed &= (np.uint64(1) << bits) - np.uint64(1)
+    order = packed.view(np.int64)
+    sorted_key = key[order]
+    return None if (sorted_key[1:] < sorted_key[:-1]).any() else order

@@ -210,11 +210,10 @@ class Sums:
 
     def _add_entries(self, entries: Entries) -> None:
         more, _, _ = self._in_period(entries, np.zeros(len(entries.bucket), np.int64))
-        key = pack(entries.bucket, entries.state, flag=entries.sure)
         if not more:
-            key, n = np.unique(key, return_counts=True)
-            self._tables["entries"].add(key, {"n": n.astype(np.int64, copy=False)})
+            self._tables["entries"].add(*_counted(entries))
             return
+        key = pack(entries.bucket, entries.state, flag=entries.sure)
         self._tables["entries"].add(key, {"n": np.ones(len(key), np.int64)}, None, more)
 
     def _add_gaps(self, gaps: Gaps) -> None:
@@ -248,6 +247,21 @@ class Sums:
             return {}, length, np.zeros(len(length), bool)
         group, length, cut = self._grouping.in_periods(records.group, records.since, length)
         return {"group": group}, length, cut
+
+
+def _counted(entries: Entries) -> tuple[IntArray, Columns]:
+    """Return the keys of entries and how many there are of each."""
+    first, width = int(entries.bucket.min(initial=N_BUCKETS)), int(entries.state.max(initial=0)) + 1
+    place = ((entries.bucket.astype(np.int64) - first) * width + entries.state) * 2 + entries.sure
+    if place.max(initial=0) > len(place):
+        at, n = np.unique(place, return_counts=True)
+    else:
+        # Fewer places than entries: counting needs no sort.
+        count = np.bincount(place)
+        at = np.flatnonzero(count)
+        n = count[at]
+    above = at // 2
+    return pack(above // width + first, above % width, flag=at % 2), {"n": n.astype(np.int64, copy=False)}
 
 
 def _unless(cut: BoolArray, values: NDArray[Any], other: int) -> NDArray[Any]:

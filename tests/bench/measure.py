@@ -39,6 +39,8 @@ class ProcessError(Exception):
 def run(words: Sequence[str]) -> Cost:
     """Run one command from the repository and measure it."""
     env = os.environ | {"PYTHONPATH": str(ROOT), "PYTHONHASHSEED": "0"}
+    # What is installed has its bytecode; ours, run from the repository, would be compiled anew in every process.
+    env.pop("PYTHONDONTWRITEBYTECODE", None)
     with tempfile.TemporaryFile() as said, tempfile.TemporaryFile() as complaints:
         began = time.perf_counter()
         process = subprocess.Popen(words, stdout=said, stderr=complaints, cwd=ROOT, env=env)
