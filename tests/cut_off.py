@@ -87,11 +87,13 @@ class Stage:
         An empty folder.
     n_people : int
         In how many customers' names.
+    rules : dict, optional
+        Rules other than those of all ledgers of the tests.
     """
 
-    def __init__(self, root: Path, n_people: int = 5) -> None:
+    def __init__(self, root: Path, n_people: int = 5, rules: dict[str, object] | None = None) -> None:
         self._root, self._spare = root / "work", root / "spare"
-        self.job = make_job(self._root)
+        self.job = make_job(self._root, rules)
         self._nights = invented(11, 4, 30, n_people=n_people)
         for day in (0, 1):
             write_night(self.job, day, self._nights[day])
@@ -135,23 +137,45 @@ def _night_of(path: str, with_summary: bool) -> None:
             run_night(job)
 
 
-def killer() -> Callable[[Stage, float | None, bool], bool]:
-    """Return what starts a night in a process of its own, kills it after so many seconds, and tells if it got to.
+class Killer:
+    """Starts a night in a process of its own, and kills it when it has worked for so long.
 
-    None: it is left to end.
+    Moments are seconds of its processors where the system tells them, since a busy machine makes all else late: by the
+    clock, most would fall before the night has begun.
     """
-    context = multiprocessing.get_context("forkserver")
-    context.set_forkserver_preload(["cut_off"])
 
-    def kill(stage: Stage, after_s: float | None, with_summary: bool) -> bool:
-        child = context.Process(target=_night_of, args=(str(stage.job.ledger.parent / "job.toml"), with_summary))
+    def __init__(self) -> None:
+        self._context = multiprocessing.get_context("forkserver")
+        # What a night imports on its way is there before it begins, else most moments would fall there.
+        self._context.set_forkserver_preload(["cut_off", "pandas", "pyarrow.dataset", "scipy.special", "scipy.linalg"])
+
+    def whole(self, stage: Stage, with_summary: bool) -> float:
+        """Return how long a night takes that is left to end."""
+        return self._run(stage, None, with_summary)[1]
+
+    def kill(self, stage: Stage, after_s: float, with_summary: bool) -> bool:
+        """Kill a night after so many seconds, and tell whether it had not ended."""
+        return self._run(stage, after_s, with_summary)[0]
+
+    def _run(self, stage: Stage, after_s: float | None, with_summary: bool) -> tuple[bool, float]:
+        words = (str(stage.job.ledger.parent / "job.toml"), with_summary)
+        child = self._context.Process(target=_night_of, args=words)
+        began, busy = time.monotonic(), 0.0
         child.start()
-        if after_s is not None:
-            time.sleep(after_s)
-        alive = after_s is not None and child.is_alive()
+        while child.is_alive() and (after_s is None or busy < after_s):
+            time.sleep(0.002)
+            busy = max(busy, _busy(child.pid, time.monotonic() - began))
+        alive = child.is_alive()
         if alive and child.pid is not None:
             os.kill(child.pid, signal.SIGKILL)
         child.join()
-        return alive
+        return alive, busy
 
-    return kill
+
+def _busy(process: int | None, by_the_clock: float) -> float:
+    """Return the seconds that a process has worked, and by the clock where the system does not tell."""
+    try:
+        told = Path(f"/proc/{process}/stat").read_text().rpartition(")")[2].split()
+    except OSError:
+        return by_the_clock if not Path("/proc/self/stat").exists() else 0.0
+    return (int(told[11]) + int(told[12])) / os.sysconf("SC_CLK_TCK")

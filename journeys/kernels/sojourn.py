@@ -233,9 +233,9 @@ def cell_influence(
     pulled -= (takes + sofar).reshape(k * m, n_values)[stays.bin * m + stays.state]
     found = np.asarray(buckets.by_cell @ pulled[: buckets.by_cell.shape[1]])
     if len(buckets.open_n):
-        at = buckets.open_bin * m + buckets.open_state
-        still = csr_array((buckets.open_n, (buckets.open_bucket, at)), shape=(g, k * m))
-        found += still @ (fit.open_weight * pull - sofar).reshape(k * m, n_values)
+        bins, states = buckets.open_size
+        pulls = fit.open_weight * pull[:bins, :states] - sofar[:bins, :states]
+        found += buckets.open_by_place @ pulls.reshape(bins * states, n_values)
     if len(buckets.survivor_n):
         kept = csr_array((buckets.survivor_n, (buckets.survivor_bucket, buckets.survivor_state)), shape=(g, m))
         found -= kept @ sofar[-1]

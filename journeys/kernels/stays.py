@@ -6,6 +6,8 @@ from dataclasses import dataclass
 from functools import cached_property
 from typing import TYPE_CHECKING
 
+import numpy as np
+
 from journeys.kernels.arrays import FloatArray, IntArray, sum_at
 
 if TYPE_CHECKING:
@@ -131,17 +133,33 @@ class BucketStays:
 
     @cached_property
     def by_cell(self) -> FloatArray | csr_array:
-        """Numbers of ended stays, shape (n_buckets, last cell that occurs + 1); kept, since sorting takes its time.
+        """Numbers of ended stays, shape (n_buckets, last cell that occurs + 1); kept, since sorting takes its time."""
+        return _counted(self.bucket, self.cell, self.n, (self.n_buckets, int(self.cell.max(initial=-1)) + 1))
 
-        Where nearly every place is filled and all have room, a matrix with a place for each is multiplied quicker.
-        """
-        from scipy.sparse import csr_array
+    @cached_property
+    def open_size(self) -> tuple[int, int]:
+        """The last bin and the last state of an open stay, each + 1."""
+        return int(self.open_bin.max(initial=-1)) + 1, int(self.open_state.max(initial=-1)) + 1
 
-        shape = (self.n_buckets, int(self.cell.max(initial=-1)) + 1)
-        size = shape[0] * shape[1]
-        if size <= min(_FEW * len(self.n), _MOST_PLACES):
-            return sum_at(self.bucket * shape[1] + self.cell, self.n, size).reshape(shape)
-        return csr_array((self.n, (self.bucket, self.cell)), shape=shape)
+    @cached_property
+    def open_by_place(self) -> FloatArray | csr_array:
+        """Numbers of open stays by bin and state, shape (n_buckets, product of `open_size`); kept."""
+        bins, states = self.open_size
+        place = self.open_bin.astype(np.int64) * states + self.open_state
+        return _counted(self.open_bucket, place, self.open_n, (self.n_buckets, bins * states))
+
+
+def _counted(bucket: IntArray, place: IntArray, n: FloatArray, shape: tuple[int, int]) -> FloatArray | csr_array:
+    """Return counts as a matrix.
+
+    Where nearly every place is filled and all have room, one with a place for each is multiplied quicker.
+    """
+    from scipy.sparse import csr_array
+
+    size = shape[0] * shape[1]
+    if size <= min(_FEW * len(n), _MOST_PLACES):
+        return sum_at(bucket * shape[1] + place, n, size).reshape(shape)
+    return csr_array((n, (bucket, place)), shape=shape)
 
 
 @dataclass(frozen=True, eq=False)

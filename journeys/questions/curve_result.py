@@ -22,7 +22,7 @@ from journeys.questions.linear import TOO_FEW, leaning, probabilities, starts_co
 from journeys.questions.observed import converted_by_log
 from journeys.questions.outcomes import UNREACHABLE
 from journeys.questions.quantiles import NOT_IN_REACH, quantiles_of_moves
-from journeys.questions.solved_curve import Solved, limit_influence, telling_times
+from journeys.questions.solved_curve import Solved, asked_times, limit_influence, telling_times
 from journeys.questions.walks import Walk
 from journeys.results import LOGIT, Estimates, joined_flags, text_table
 
@@ -106,7 +106,7 @@ class PassageCurve:
         ValueError
             If a time is negative or no number.
         """
-        asked = _times(times)
+        asked = asked_times(times)
         reached = self._solved.at(asked.ravel() * self._per_unit).reshape(asked.shape)
         return reached / (self.probability or np.nan) if self.given else reached
 
@@ -123,7 +123,7 @@ class PassageCurve:
         DataFrame
             time (or steps), estimate, std_error, low, high, confidence_level, flag.
         """
-        asked, estimates, flag = self._shown if times is None else self._estimates(_times(times).ravel())
+        asked, estimates, flag = self._shown if times is None else self._estimates(asked_times(times).ravel())
         return _tidy(self.clock, asked, estimates, self.confidence_level, flag)
 
     def confidence_interval(self, confidence_level: float = 0.95) -> pd.DataFrame:
@@ -151,7 +151,7 @@ class PassageCurve:
         times : array_like, shape (n,)
             As in `at`.
         """
-        _, found, flag = self._estimates(_times(times).ravel())
+        _, found, flag = self._estimates(asked_times(times).ravel())
         return found, flag
 
     def quantile(
@@ -184,6 +184,11 @@ class PassageCurve:
             raise ValueError(msg)
         estimates, flag = self._quantiles(shares)
         return _tidy("share", shares, estimates.times(1.0 / self._per_unit), level, flag)
+
+    @property
+    def last_time(self) -> float:
+        """Time (or steps) by which all but one in a thousand of those who ever reach the target have reached it."""
+        return float(telling_times(self._solved)[-1] / self._per_unit)
 
     def given_reached(self) -> PassageCurve:
         """Return the curve of those who ever reach the target, from the same solution."""
@@ -337,14 +342,3 @@ def _tidy(key: str, asked: FloatArray, estimates: Estimates, level: float, flag:
     low, high = estimates.bounds(level)
     told = {"estimate": estimates.value, "std_error": estimates.std_error, "low": low, "high": high}
     return pd.DataFrame({key: asked, **told, "confidence_level": level, "flag": flag})
-
-
-def _times(times: npt.ArrayLike) -> FloatArray:
-    msg = "times: not all are numbers from 0; wanted times since the start, in the unit of the curve"
-    try:
-        asked = np.asarray(times, dtype=np.float64)
-    except (TypeError, ValueError):
-        raise ValueError(msg) from None
-    if not (asked >= 0).all():
-        raise ValueError(msg)
-    return asked

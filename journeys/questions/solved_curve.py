@@ -7,6 +7,7 @@ from functools import cached_property
 from typing import Protocol
 
 import numpy as np
+import numpy.typing as npt
 
 from journeys.kernels.arrays import FloatArray, IntArray
 from journeys.kernels.grids import Part
@@ -238,3 +239,15 @@ def telling_times(solved: Solved) -> FloatArray:
         return np.arange(low, high + 1, dtype=np.float64)
     spread: IntArray = np.unique(np.rint(np.geomspace(max(low, 1), high, N_TIMES)).astype(np.int64))
     return spread.astype(np.float64)
+
+
+def asked_times(times: npt.ArrayLike) -> FloatArray:
+    """Return times asked for as an array, once they can be times."""
+    msg = "times: not all are numbers from 0; wanted times since the start, in the unit of the curve"
+    try:
+        asked = np.asarray(times, dtype=np.float64)
+    except (TypeError, ValueError):
+        raise ValueError(msg) from None
+    if not (asked >= 0).all():
+        raise ValueError(msg)
+    return asked

@@ -124,7 +124,7 @@ def _curve(overview: Overview) -> Curve | None:
     if curve is None or not curve.probability > 0:
         return None
     # As long as nearly all take: beyond it nothing rises.
-    last = float(curve.to_frame()[curve.clock].iloc[-1])
+    last = curve.last_time
     times = np.linspace(0.0, last, 121)
     frame = curve.to_frame(np.unique(np.floor(times)) if curve.whole else times)
     seen = curve.observed()

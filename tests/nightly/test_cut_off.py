@@ -5,13 +5,12 @@ from __future__ import annotations
 import errno
 import multiprocessing
 import os
-import time
-from collections.abc import Callable, Iterator
+from collections.abc import Iterator
 from pathlib import Path
 
 import numpy as np
 import pytest
-from cut_off import CHANGES, WRITES, CutOffError, Stage, killer, stopped_at, without_summaries
+from cut_off import CHANGES, WRITES, CutOffError, Killer, Stage, stopped_at, without_summaries
 from ledgers import files_of, quick_folder
 
 from journeys.command.main import FAILED, main
@@ -81,36 +80,31 @@ def test_two_runs_at_once(stage: Stage):
 
 
 @pytest.fixture(scope="module")
-def kill() -> Callable[[Stage, float | None, bool], bool]:
+def killer() -> Killer:
     if "forkserver" not in multiprocessing.get_all_start_methods():
         pytest.skip("optional engine missing: processes that can be killed")
-    return killer()
+    return Killer()
 
 
-def test_killed_at_any_moment(stage: Stage, kill: Callable[[Stage, float | None, bool], bool]):
+def test_killed_at_any_moment(stage: Stage, killer: Killer):
     rng = np.random.default_rng(0)
-    kill(stage, None, False)
     stage.again()
-    began = time.monotonic()
-    kill(stage, None, False)
-    whole = time.monotonic() - began
+    whole = killer.whole(stage, False)
     n_killed = 0
-    for moment in rng.random(7):
+    for moment in rng.random(6):
         stage.again()
-        n_killed += kill(stage, float(moment) * whole, False)
+        n_killed += killer.kill(stage, float(moment) * whole, False)
         with without_summaries():
             stage.check(published=False)
     assert n_killed > 2
 
 
-def test_killed_while_it_publishes(kill: Callable[[Stage, float | None, bool], bool]):
+def test_killed_while_it_publishes(killer: Killer):
     with quick_folder() as root:
         stage = Stage(root, n_people=30)
         stage.again()
-        began = time.monotonic()
-        run_night(stage.job)
-        whole = time.monotonic() - began
-        for share in (0.4, 0.9):
+        whole = killer.whole(stage, True)
+        for share in (0.5, 0.9):
             stage.again()
-            kill(stage, share * whole, True)
+            killer.kill(stage, share * whole, True)
             stage.check(published=True)
