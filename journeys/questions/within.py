@@ -100,7 +100,9 @@ class EndedWithin:
         at = int(there[0])
         low, high = self.bounds_us(at)
         before = self.share[at - 1] if at else 0.0
-        part = float(np.clip((share - before) / (self.share[at] - before), 0.0, 1.0)) if high > low else 0.0
+        rise = self.share[at] - before
+        # a share of next to nothing is there before the curve rises
+        part = float(np.clip((share - before) / rise, 0.0, 1.0)) if high > low and rise > 0 else 0.0
         return (low + part * (high - low)) / DAY_US
 
     def time(self, share: float) -> TimeBy:

@@ -56,10 +56,8 @@ def of_task(task: Task) -> Asked:
     return ask(task.customers, task.silences, rng, bootstrap=task.bootstrap)
 
 
-def limits(silences: float, customers: int) -> dict[tuple[str, str, str], float]:
-    """Return the answers of one large log by name, those from resamples under the names they have too."""
-    rng = np.random.default_rng([TRUTH_SEED, round(10 * silences)])
-    found = ask(customers, silences, rng, bootstrap=False)
+def limits(found: Asked) -> dict[tuple[str, str, str], float]:
+    """Return the answers of the large log by name, those from resamples under the names they have too."""
     truth = dict(zip(found.names, found.value.tolist(), strict=True))
     again = {(f"{question}, resampled", *rest): value for (question, *rest), value in truth.items()}
     return truth | again  # type: ignore[return-value]
@@ -185,15 +183,19 @@ def write(text: str, path: Path) -> None:
 
 def study(asked: argparse.Namespace) -> dict[float, pd.DataFrame]:
     """Return the table of each length of log, the logs in turns."""
+    large = [Task(TRUTH_SEED, silences, 0, asked.truth_customers, bootstrap=False) for silences in asked.lengths]
     tasks = [
         Task(asked.seed, silences, number, asked.customers, number < asked.bootstrap)
         for number in range(asked.logs)
         for silences in asked.lengths
     ]
     found: dict[float, list[Asked]] = {silences: [] for silences in asked.lengths}
-    for task, one in studied(tasks, asked.jobs, asked.keep):
-        found[task.silences].append(one)
-    truths = {silences: limits(silences, asked.truth_customers) for silences in asked.lengths}
+    truths = {}
+    for task, one in studied([*large, *tasks], asked.jobs, asked.keep):
+        if task in large:
+            truths[task.silences] = limits(one)
+        else:
+            found[task.silences].append(one)
     return {silences: coverage(answers(parts, truths[silences])) for silences, parts in found.items()}
 
 
