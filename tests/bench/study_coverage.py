@@ -207,6 +207,19 @@ def told(table: pd.DataFrame) -> str:
     return first.join(wide).reset_index().to_string(index=False, float_format="{:.4g}".format)
 
 
+def in_short(silences: float, table: pd.DataFrame) -> str:
+    """Return the range of the coverage of linearised answers of which at most half are flagged, and of single moves."""
+    mine = table[(table["level"] == LEVELS[0]) & (table["method"] == "linearised") & (table["flagged %"] <= 50)]
+    is_move = mine["answer"].str.startswith((MOVE, "all moves"))
+    lines = []
+    for name, some in (("answers", mine[~is_move]), ("single moves", mine[is_move])):
+        if len(some):
+            low, high = some["coverage %"].min(), some["coverage %"].max()
+            held = f"{low:.1f}–{high:.1f} %"
+            lines.append(f"{silences:g} silences: at 95 % {name} that are not flagged are held in {held}")
+    return "\n".join(lines)
+
+
 def study(silences: float, asked: argparse.Namespace) -> pd.DataFrame:
     """Return the table of one length of log."""
     tasks = [
@@ -232,7 +245,8 @@ def main(argv: Sequence[str] | None = None) -> int:
         table = study(silences, asked)
         print(
             f"\n{asked.logs:,} logs of {asked.customers:,} customers, {silences:g} silences long; truth: one log of "
-            f"{asked.truth_customers:,}; {time.perf_counter() - began:.0f} s\n{told(table)}",
+            f"{asked.truth_customers:,}; {time.perf_counter() - began:.0f} s\n{told(table)}\n"
+            f"{in_short(silences, table)}",
             flush=True,
         )
     return 0
