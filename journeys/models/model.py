@@ -24,6 +24,9 @@ FEW_AT_END = "few seen to the end"
 COMPLETED_ONLY = "completed moves only"
 # Below this many stays at risk just before the silence, the share that lapses rests on few (a judgement).
 ENOUGH_AT_END = 20
+# Of merged visits at most this share may last longer than any was followed (a judgement: answers are flagged where as
+# many journeys lean on a flagged row).
+LONGER_THAN_SEEN = 0.01
 
 
 @dataclass(frozen=True)
@@ -177,20 +180,21 @@ class JourneyModel:
         """Flag the rows whose stays were not, or hardly, seen as long as the silence."""
         if self.open_moves == "ignored":
             return
+        merged = tally.rules.repeats == "merge"
         seen_to_end = np.maximum(stays.survivor_n, _lapse_counts(stays))
         unseen = (found.survival_end > 1e-12) & (seen_to_end == 0) & _has_stays(stays)
-        if tally.rules.repeats == "merge":
-            unseen = (found.survival_end > 1e-12) & _has_stays(stays)
+        if merged:
+            # A visit may go on for longer than the silence, and its lapse is an event like any other. What is left
+            # after the longest visit is taken for lapsed; that is hardly ever nothing, as one is always the longest.
+            unseen |= (found.survival_end > LONGER_THAN_SEEN) & _has_stays(stays)
         few = ~unseen & (seen_to_end > 0) & (seen_to_end < ENOUGH_AT_END) & _has_open(stays)
         _flag(row_flags, labels, unseen, END_NOT_SEEN)
         _flag(row_flags, labels, few, FEW_AT_END)
         if unseen.any():
-            _warn_rows(
-                labels,
-                unseen,
-                "no stay in {} was seen as long as the silence: the share that lapses there is an upper bound",
-                EndNotSeenWarning,
-            )
+            plainly = "no stay in {} was seen as long as the silence"
+            of_visits = "visits to {} may last longer than any that was followed"
+            told = f"{of_visits if merged else plainly}: the share that lapses there is an upper bound"
+            _warn_rows(labels, unseen, told, EndNotSeenWarning)
 
 
 @dataclass(frozen=True)

@@ -100,7 +100,7 @@ def _end_not_seen(fit: JourneyFit) -> CheckRow:
     leans = bool(leaning(fit)[END_NOT_SEEN][0])
     shown = ", ".join(names[:5]) + (f" and {len(names) - 5} more" if len(names) > 5 else "")
     return CheckRow(
-        UNSEEN, "", f"no stay in {shown} was seen for a whole silence", float(len(names)), "states",
+        UNSEEN, "", f"stays in {shown} were not seen to their end", float(len(names)), "states",
         verdict=NOTE + ("answers lean on lapses nobody saw" if leans else "hardly any journey gets there"),
         advice="wait for a longer log, or gather rare states in `states`",
     )  # fmt: skip

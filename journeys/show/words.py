@@ -33,7 +33,8 @@ FLAG_MEANINGS = {
     DOUBTFUL: "the number is too small or too large for the computer to tell it from nothing",
     DIFFER: "the chain does not bear out what the journeys show: trust the log's share, and not the model's effect",
     TOO_SHORT: "too many conversions of the chain lie beyond what the log has seen to compare the two",
-    END_NOT_SEEN: "no stay there was followed as long as the silence, so the share that goes quiet is an upper bound",
+    END_NOT_SEEN: "no stay there was followed as long as the silence (or merged visits may last longer than any that "
+    "was followed), so the share that goes quiet is an upper bound",
     FEW_AT_END: f"fewer than {ENOUGH_AT_END} stays there were followed as long as the silence",
     COMPLETED_ONLY: "the longest stay there is still open, so only completed moves count; a silence would mend it",
     NO_WAY_OUT: "taken as never left",

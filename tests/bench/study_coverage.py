@@ -157,6 +157,22 @@ def told(tables: dict[float, pd.DataFrame]) -> str:
     return "\n".join("| " + " | ".join(line) + " |" for line in lines)
 
 
+def in_short(tables: dict[float, pd.DataFrame]) -> str:
+    """Return the range of coverage of the questions, and of single moves, of which at most half are flagged."""
+    lines = []
+    for silences, table in tables.items():
+        mine = table[table["flagged"] <= 50]
+        is_move = mine["question"] == "moves"
+        for name, some, least, most in (
+            ("answers", mine[~is_move], "coverage", "coverage"), ("single moves", mine[is_move], "lowest", "highest")
+        ):  # fmt: skip
+            low, high = some[least].min(), some[most].max()
+            if np.isfinite(low):
+                held = f"{low:.1f}–{high:.1f} %"
+                lines.append(f"{silences:g} silences: at 95 % {name} that are not flagged are held in {held}")
+    return "\n".join(lines)
+
+
 def _span(values: tuple[float, float]) -> str:
     return " to ".join(dict.fromkeys(f"{value:.3g}" for value in values)).replace("-", "−")
 
@@ -221,7 +237,7 @@ def main(argv: Sequence[str] | None = None) -> int:
         f"{asked.logs:,} logs of {asked.customers:,} customers of two kinds, {lengths} silences long, cut off while "
         f"journeys are under way;\ntruth: one log of {asked.truth_customers:,} customers each.\n\n{told(tables)}"
     )
-    print(f"{text}\n{time.perf_counter() - began:.0f} s")
+    print(f"{text}\n{in_short(tables)}\n{time.perf_counter() - began:.0f} s")
     if asked.write:
         write(text, asked.write)
     return 0

@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 import warnings
+from dataclasses import replace
 
 import numpy as np
 import pandas as pd
 import pytest
+from club_log import LOG, RULES, club_fit
 from small_chains import START, log_of_paths, one
 
 import journeys as jn
@@ -135,11 +137,42 @@ def test_end_not_seen_of_merged_visits() -> None:
         [[0, 5, 9, 12], [1], list(range(32, 41))],
     )
     tally = jn.tally(log, rules(repeats="merge", complete_history=True, as_of=at(45)))
-    with pytest.warns(EndNotSeenWarning, match="no stay in visit was seen as long as"):
+    match = "visits to visit may last longer than any that was followed: the share that lapses there is an upper bound"
+    with pytest.warns(EndNotSeenWarning, match=match):
         fit = jn.JourneyModel().fit(tally)
     # One visit of 12 days joined, one of 11 days lapsed, one is still open after 13: 1/3, 1/3, and who knows.
     assert fit.matrix.loc["visit", "joined"] == pytest.approx(1 / 3, abs=1e-12)
     assert fit.matrix.sum(axis=1).to_numpy() == pytest.approx(1.0, abs=1e-12)
+
+
+@pytest.mark.parametrize(("n_open", "flags"), [(1, {}), (40, {"visit": "end not seen"})])
+def test_one_open_visit_among_many_is_no_end_not_seen(n_open: int, flags: dict[str, str]) -> None:
+    """Visits of 12 days that lapse, seen by the dozen; what matters is how many go on for longer than any of them."""
+    paths = [["visit"] * 3] * 60 + [["visit", "joined"]] * 60 + [["visit"] * 20] * n_open
+    days = [[0.0, 1.0, 2.0]] * 60 + [[1.0, 4.0]] * 60 + [[40.0 + i for i in range(20)]] * n_open
+    log = log_of_paths(paths, range(1, len(paths) + 1), days)
+    tally = jn.tally(log, rules(repeats="merge", complete_history=True, as_of=at(60)))
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore" if flags else "error")
+        fit = jn.JourneyModel().fit(tally)
+    assert fit.row_flags == flags
+    # 60 joined after 3 days, the others lapsed after 12, or are still there after 20: all of these are called lapsed
+    assert fit.matrix.loc["visit", "joined"] == pytest.approx(60 / len(paths), abs=1e-12)
+    assert fit.matrix.loc["visit", "lapsed"] == pytest.approx(1 - 60 / len(paths), abs=1e-12)
+
+
+def test_merged_visits_of_the_club_are_seen_to_their_end() -> None:
+    """Each state has hundreds of lapses; in none does one visit in a hundred outlast all that were followed."""
+    merged = jn.tally(LOG, replace(jn.JourneyRules.from_toml(RULES), repeats="merge"))
+    with warnings.catch_warnings():
+        warnings.simplefilter("error")
+        fit = jn.JourneyModel().fit(merged)
+    assert fit.row_flags == {}
+    # whether a visit is one stay or several makes no difference to where journeys end, but for the model's memory
+    ends, plain = (jn.outcomes(one).to_frame().set_index(["start_state", "outcome"]).loc["entry"] for one in (
+        fit, club_fit()))  # fmt: skip
+    assert (ends.flag == "").all()
+    assert ends.estimate.to_numpy() == pytest.approx(plain.estimate.to_numpy(), abs=0.01)
 
 
 def test_longest_stay_open_without_a_silence() -> None:

@@ -18,7 +18,7 @@ from journeys.show.sections import sections, title
 
 # Nothing may be fetched, and nothing run, even if a name got through as markup.
 _POLICY = "default-src 'none'; style-src 'unsafe-inline'; img-src data:"
-_NUMBER = re.compile(r"[+−]?\d[\d,.]*( %)?( \([^()]*\d[^()]*\))?|\d+ of \d+|[\d,]+ of [\d,]+|some never do|·")
+_NUMBER = re.compile(r"[+−]?\d[\d,.]*( %)?( \([^()]*\d[^()]*\))?|\d+ of \d+|[\d,]+ of [\d,]+|some never do|[·–]")
 # A long word may be broken where its parts meet, or after so many characters, about as many as a narrow column takes.
 _PIECE = re.compile(r".+?(?:[_/]+(?=.)|[.:\-]+(?=[^\W\d_])|$)", re.DOTALL)
 _SHORT, _UNBROKEN = 9, 18
@@ -30,6 +30,7 @@ _WORDS = re.compile(rf"(?<!\S)({_PERCENT}[);,.:]*)(?!\S)|([ \n]+)")
 _INTERVAL = re.compile(r"(.*\S) (\([^()]*\))")
 # Tables of more numbers than these put intervals below their numbers.
 _WIDE = 5
+_LONG = 40  # characters of a cell that is a sentence
 
 
 def summary_html(overview: Overview, told: Sequence[Section] | None = None) -> str:
@@ -109,8 +110,8 @@ def _table(part: Table) -> Markup:
     ours = [name in part.ours for name in part.columns]
     lengths = [max((len(row[i]) for row in part.rows), default=0) for i in range(len(part.columns))]
     kinds = [
-        "number" if number else "words" if long > 40 else None
-        for number, long in zip(numeric, lengths, strict=True)
+        "number" if number else ("long" if i < part.n_keys else "words") if long > _LONG else None
+        for i, (number, long) in enumerate(zip(numeric, lengths, strict=True))
     ]
     heads = [
         element("th", _name(name), scope="col", class_="number" if number else None)
@@ -132,7 +133,7 @@ def _table(part: Table) -> Markup:
 
 def _cell(text: str, is_key: bool, kind: str | None, is_ours: bool) -> Markup:
     inside = _with_code(text) if is_ours else _with_interval(text) if kind == "number" else _name(text)
-    return element("th", inside, scope="row") if is_key else element("td", inside, class_=kind)
+    return element("th", inside, scope="row", class_=kind) if is_key else element("td", inside, class_=kind)
 
 
 def _without_empty(part: Table) -> Table:

@@ -45,6 +45,7 @@ tbody th { background: var(--paper); max-width: 14rem; }
 .whole { white-space: nowrap; }
 thead .number { white-space: normal; }
 .words { min-width: 11rem; max-width: 26rem; }
+.long { min-width: 8.5rem; }
 .interval { color: var(--grey); }
 .below .interval { display: block; font-size: 0.8125rem; }
 figure { margin: 1.25rem 0; max-width: 34rem; }
