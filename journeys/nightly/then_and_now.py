@@ -39,7 +39,7 @@ class ThenAndNow:
     then, now : Generation
     lines : DataFrame
         Columns line, then, then_low, then_high, now, now_low, now_high, difference, flag: numbers about too few people
-        are NaN, and those of then where the difference to now is about too few; the flag says so.
+        are NaN, and those of then from which the difference would tell of too few; the flag says so.
     why : tuple of str
         What makes the difference, one sentence each.
     """
@@ -125,20 +125,17 @@ class _Side:
 
 
 def _lines(then: _Side, now: _Side, least: int) -> pd.DataFrame:
-    """Return the lines of both; of people, no difference is told that is about too few of them."""
+    """Return the lines of both, without numbers of then that would tell of too few people beside those of now."""
     import pandas as pd
 
-    counts = [[getattr(side.plain, name) for name in COUNTED] for side in (then, now)]
-    # Journeys are those decided and those not: each of these tells of the others.
-    changes = [b - a for a, b in zip(*counts, strict=True)]
-    changes.append(_decided(now.plain) - _decided(then.plain))
-    few = any(0 < abs(change) < least for change in changes)
+    kept_back = _few_changes(then.plain, now.plain, least)
     text = f"{HIDDEN}fewer than {least} people here or beside it"
     n_more = now.n_rows - then.n_rows
     rows: list[tuple[Any, ...]] = [("rows read", then.n_rows, *_BLANK, now.n_rows, *_BLANK, n_more, "")]
-    for line, a, b in zip(COUNTED.values(), *counts, strict=True):
-        a_ = math.nan if few else float(a)
-        rows.append((line, a_, *_BLANK, float(b), *_BLANK, b - a_, text if math.isnan(b - a_) else ""))
+    for name, line in COUNTED.items():
+        a, b = (float(getattr(side.plain, name)) for side in (then, now))
+        a = math.nan if name in kept_back else a
+        rows.append((line, a, *_BLANK, b, *_BLANK, b - a, text if math.isnan(b - a) else ""))
     hidden = then.expected_hidden or now.expected_hidden
     change = now.expected[0] - then.expected[0]
     rows.append((_EXPECTED, *then.expected, *now.expected, change, text if hidden else ""))
@@ -146,8 +143,23 @@ def _lines(then: _Side, now: _Side, least: int) -> pd.DataFrame:
     return pd.DataFrame(rows, columns=names)
 
 
-def _decided(plain: PlainCount) -> float:
-    return plain.n_journeys - plain.n_undecided
+def _few_changes(then: PlainCount, now: PlainCount, least: int) -> set[str]:
+    """Return the counts of which the number of then would tell, beside that of now, of too few people.
+
+    What adds up for ever, such as journeys begun and decided, has changed by as many as came; how many are undecided
+    may hardly change while many come and go. Journeys are those decided and those not, and conversions are decided.
+    """
+    people, begun, converted, undecided = (getattr(now, name) - getattr(then, name) for name in COUNTED)
+    decided = begun - undecided
+
+    def few(*changes: float) -> bool:
+        return any(0 < change < least for change in changes)
+
+    found = {
+        "n_people": few(people), "n_journeys": few(begun), "n_undecided": few(begun, decided),
+        "n_converted": few(converted, decided, decided - converted),
+    }  # fmt: skip
+    return {name for name, is_few in found.items() if is_few}
 
 
 def _read(path: Path, what: Callable[[Ledger], T]) -> T:
@@ -207,13 +219,12 @@ def _why(
         f"{days:,.1f} more days of the log are read: {now.n_rows - then.n_rows:,} more rows",
         "some journeys have begun since" if math.isnan(begun) else f"{begun:,.0f} more journeys have begun",
     ]
-    if math.isnan(begun - undecided - converted):
+    if math.isnan(begun - undecided):
         lines.append("some journeys have been decided since; how many is left out, with numbers about too few people")
     else:
-        lines.append(
-            f"{begun - undecided:,.0f} journeys have been decided since, {converted:,.0f} of them converted; "
-            f"{was.n_undecided:,} were undecided then"
-        )
+        of_them = "" if math.isnan(converted) else f", {converted:,.0f} of them converted"
+        decided = f"{begun - undecided:,.0f} journeys have been decided since"
+        lines.append(f"{decided}{of_them}; {was.n_undecided:,} were undecided then")
     if now.rebuilt != then.rebuilt:
         lines.append(
             f"all inputs were counted anew in generation {now.rebuilt}: rows that had come too late for the ledger "

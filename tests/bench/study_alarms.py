@@ -76,11 +76,11 @@ def log_of(task: Task) -> pd.DataFrame:
     return log.assign(team=log["customer"] % max(task.groups, 1))
 
 
-def of_task(task: Task, *, weekly: bool = False) -> Found:
-    """Count one log into a ledger and return what tripped.
+def of_task(task: Task, begins: Sequence[int] = (0, 1)) -> Found:
+    """Count one log into a ledger, in nights that begin with some weeks, and return what tripped.
 
-    A night looks at every week that is due: the first week's rows and then all others give what a night for each week
-    gives (`weekly`), in less time.
+    A night looks at every week that is due: the first week's rows and then all others give what more nights give, in
+    less time.
     """
     log = log_of(task)
     week = ((log["time"] - simulated.LOG_START) // pd.Timedelta(days=WEEK_DAYS)).to_numpy()
@@ -88,8 +88,8 @@ def of_task(task: Task, *, weekly: bool = False) -> Found:
     alarms = []
     with quick_folder() as root, without_summaries():
         job = make_job(root, rules, lateness="none", alarms={"within": "14d", "at_least": "0.001 points", "weeks": 8})
-        for number in range(int(week.max()) + 1 if weekly else 2):
-            write_night(job, number, log[week == number if weekly or not number else week > 0])
+        for number in range(len(begins)):
+            write_night(job, number, log[np.searchsorted(begins, week, side="right") == number + 1])
             alarms += run_night(job).alarms
         manifest = opened(job.ledger).manifest
     if manifest is None or manifest.watched is None:
