@@ -76,6 +76,8 @@ class Held:
     def settle(self) -> None:
         """Put the records of new customers among the others."""
         self.young.take_in(self.new)
+        # The first blocks have many new customers, later ones few: their room is not kept.
+        self.new = Table()
         if self.young.n > self.old.n * _YOUNG:
             self.old.take_in(self.young)
 
