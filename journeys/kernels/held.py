@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from journeys.kernels.compiled import RECORD, insert
 from journeys.kernels.records import Carried
@@ -36,9 +37,7 @@ class Table:
         """Make room for `n` records more."""
         if self.n + n > len(self.key):
             size = self.n + n + int(self.n * _TO_SPARE)
-            # In their place, which mostly copies nothing; nobody else holds them.
-            self.key.resize(size, refcheck=False)
-            self.record.resize(size, refcheck=False)
+            self.key, self.record = _longer(self.key, self.n, size), _longer(self.record, self.n, size)
 
     def take_in(self, other: Table) -> None:
         """Take in the records of another table, which has none then."""
@@ -77,6 +76,8 @@ class Held:
     def settle(self) -> None:
         """Put the records of new customers among the others."""
         self.young.take_in(self.new)
+        # The first blocks have many new customers, later ones few: their room is not kept.
+        self.new = Table()
         if self.young.n > self.old.n * _YOUNG:
             self.old.take_in(self.young)
 
@@ -98,6 +99,13 @@ class Held:
         names = [name for name in RECORD.names or () if name != "visit_start" or name in also]
         columns: dict[str, Any] = {name: self.old.record[name][:n] for name in names}
         return Carried(key=self.old.key[:n], story_over=np.zeros(n, np.bool_), **columns)
+
+
+def _longer(column: NDArray[Any], n: int, size: int) -> NDArray[Any]:
+    """Return a column of another size that begins with the same `n` items."""
+    longer = np.empty(size, column.dtype)
+    longer[:n] = column[:n]
+    return longer
 
 
 def apart(records: Carried) -> Carried:
