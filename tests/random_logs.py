@@ -222,6 +222,9 @@ def random_rules(chance: Chance, whole_days: bool, n_ticks: int) -> tuple[dict[s
         rules["touchpoints"] = slow["touchpoints"] = touchpoints
     if once_in(chance, 3):
         rules["value"] = slow["value"] = "amount"
+    if once_in(chance, 3):
+        many = [chance.whole(1, 9) for _ in range(chance.whole(1, 3))]
+        rules["horizons"], slow["horizons_us"] = [f"{n}{letter}" for n in many], tuple(n * unit for n in many)
     slow |= {key: rules[key] for key in names if key in rules}
     return rules, slow
 

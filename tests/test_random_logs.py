@@ -18,12 +18,12 @@ def test_random_logs_bring_every_rule_to_bear() -> None:
     logs = [random_log(np.random.default_rng(seed)) for seed in range(300)]
     findings: Counter[str] = Counter()
     ends: Counter[tuple[str, bool]] = Counter()
-    equal_gaps = negative = 0
+    equal_gaps = negative = cut_at_horizons = 0
     touched: Counter[tuple[str, int]] = Counter()
     for log in logs:
-        tally = read_log(
-            log.rows, **log.slow, bucket_of=lambda _: 0, dwell_bin=hours_of, elapsed_bin=hours_of
-        )
+        settings = {name: value for name, value in log.slow.items() if name != "horizons_us"}  # no edges here
+        tally = read_log(log.rows, **settings, bucket_of=lambda _: 0, dwell_bin=hours_of, elapsed_bin=hours_of)
+        cut_at_horizons += "horizons" in log.rules
         findings.update(tally.findings.keys())
         ends.update((key[2], key[4]) for key in tally.journeys)
         touched.update((key[2], key[5]) for key in tally.touches)
@@ -31,6 +31,7 @@ def test_random_logs_bring_every_rule_to_bear() -> None:
         silence = log.slow["silence_us"]
         longest = {int(key[3] * HOUR_US) for key in tally.moves if key[2] not in ("lapsed", "open")}
         equal_gaps += silence in longest and not log.slow["whole_days"]
+    assert 50 < cut_at_horizons < 200
     assert set(findings) == {
         "excluded",
         "missing_customer",

@@ -247,7 +247,7 @@ def _has_form(value: Any, kind: Any) -> bool:
     """Tell whether a value read from JSON is what an annotation says, a dataclass being a dict of its fields."""
     if kind is Any:
         return True
-    if is_dataclass(kind):
+    if isinstance(kind, type) and is_dataclass(kind):
         hints = _hints(kind)
         return isinstance(value, dict) and value.keys() == hints.keys() and all(
             _has_form(value[name], hint) for name, hint in hints.items()

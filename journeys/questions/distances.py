@@ -10,6 +10,9 @@ from journeys.kernels.arrays import BoolArray, FloatArray
 from journeys.kernels.intervals import t_quantile, variance_from_buckets
 from journeys.results import LOG, LOGIT, PLAIN, Estimates
 
+# So much longer than the interval of the distance, that of the plain difference takes its place.
+_LONGER = 1.1
+
 
 @dataclass(frozen=True, eq=False)
 class Distance:
@@ -76,11 +79,17 @@ class Differences(Estimates):
     lean: FloatArray
 
     def bounds(self, confidence_level: float) -> tuple[FloatArray, FloatArray]:
-        """Return the lower and upper bounds at a level (see `Estimates.bounds`)."""
+        """Return the lower and upper bounds at a level (see `Estimates.bounds`).
+
+        Where both numbers rest on the same moves, as those of a what-if do, their distance is far surer than how large
+        they both are, on which the difference depends as well: then the plain interval is the longer one, and holds.
+        """
         low, high = super().bounds(confidence_level)
-        mine: BoolArray = (self.scale == PLAIN) & ~self.few
         reach = t_quantile(self.spread_df, confidence_level) * self.spread
-        return np.where(mine, self._moved(-reach), low), np.where(mine, self._moved(reach), high)
+        least, most = self._moved(-reach), self._moved(reach)
+        level_counts = (high - low > _LONGER * (most - least)) & (low * high > 0)
+        mine: BoolArray = (self.scale == PLAIN) & ~self.few & ~level_counts
+        return np.where(mine, least, low), np.where(mine, most, high)
 
     def _moved(self, by: FloatArray) -> FloatArray:
         """Return the difference when the distance is larger by so much, both numbers having gone their part."""

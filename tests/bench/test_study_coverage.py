@@ -21,7 +21,7 @@ def one() -> Asked:
 def test_a_tiny_study(capsys: pytest.CaptureFixture[str], tmp_path: Path) -> None:
     guide, kept = tmp_path / "guide.md", tmp_path / "kept"
     guide.write_text(f"before\n{BEGIN}\nold\n{END}\nafter\n")
-    words = ["--customers", "200", "--bootstrap", "1", "--truth-customers", "1000", "--lengths", "2", "--jobs", "1"]
+    words = ["--customers", "200", "--bootstrap", "1", "--truth-customers", "1000", "--lengths", "3", "--jobs", "1"]
     assert main([*words, "--logs", "1", "--keep", str(kept)]) == 0
     first = kept.read_bytes()
     assert main([*words, "--logs", "2", "--keep", str(kept), "--write", str(guide)]) == 0
@@ -29,7 +29,7 @@ def test_a_tiny_study(capsys: pytest.CaptureFixture[str], tmp_path: Path) -> Non
     assert len(kept.read_bytes()) > len(first)
     said = capsys.readouterr().out
     text = guide.read_text()
-    assert text.startswith(f"before\n{BEGIN}\n2 logs of 200 customers of two kinds, 2 silences long")
+    assert text.startswith(f"before\n{BEGIN}\n2 logs of 200 customers of two kinds, 3 silences long")
     assert text.endswith(f"\n{END}\nafter\n")
     assert "old" not in text
     for name in ("| moves |", "| first_passage, time |", "| return_time, restart |", "| comeback |", "| worth |",
@@ -51,7 +51,7 @@ def test_a_file_without_marks_stays_as_it_is(tmp_path: Path) -> None:
 
 
 def test_logs_do_not_depend_on_who_reads_them() -> None:
-    tasks = [Task(1, 2.0, number, 150, bootstrap=number == 0) for number in range(2)]
+    tasks = [Task(1, 3.0, number, 200, bootstrap=number == 0) for number in range(2)]
     apart = [one for _, one in studied(tasks, 2)]
     for one, (_, other) in zip(apart, studied(tasks, 1), strict=True):
         assert one.names == other.names

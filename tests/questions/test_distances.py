@@ -8,6 +8,7 @@ from club_log import club_fit
 from scipy import stats
 
 import journeys as jn
+from journeys.kernels.intervals import t_quantile, variance_from_buckets
 from journeys.questions.distances import Differences, distance
 from journeys.results import KNOWN, PLAIN
 
@@ -78,3 +79,19 @@ def test_an_interval_ends_at_no_difference_where_its_level_is_the_p_value() -> N
         nearer = at["low"] if row["estimate"] > 0 else at["high"]
         assert nearer == pytest.approx(0.0, abs=1e-6)
         assert row["low"] < row["estimate"] < row["high"]
+
+
+def test_of_two_numbers_that_rise_and_fall_together_the_level_counts() -> None:
+    """A share and 1.06 times it: their logits are as far apart whatever the share is, the difference is not."""
+    pull = 0.01 * np.random.default_rng(4).normal(size=200) / np.sqrt(200)
+    pull -= pull.mean()
+    a, b, pull_b = 0.15, 0.159, 1.06 * pull
+    found = distance(a, b, pull, pull_b, is_share=True)
+    variance, df = variance_from_buckets(pull_b - pull)
+    one = [np.array([value]) for value in (b - a, float(np.sqrt(variance)), float(df))]
+    own = [np.array([value]) for value in (a, b, found.scale, found.std_error, found.df, found.lean)]
+    whole = Differences(*one, np.array([PLAIN], dtype=object), np.array([np.nan]), np.array([False]), *own)
+    low, high = whole.bounds(0.95)
+    reach = t_quantile(one[2], 0.95) * one[1]
+    assert found.std_error * 0.15 * 0.85 < 0.5 * one[1][0]
+    np.testing.assert_allclose([low, high], [one[0] - reach, one[0] + reach])

@@ -68,18 +68,22 @@ def bin_from(edges: np.ndarray | None) -> Callable[[int], int]:
 
 
 @cache
-def bins(silence_us: int | None, whole_days: bool) -> tuple[Callable[[int], int], Callable[[int], int]]:
+def bins(
+    silence_us: int | None, whole_days: bool, horizons_us: tuple[int, ...]
+) -> tuple[Callable[[int], int], Callable[[int], int]]:
     """Return the bins of dwell and of elapsed time, each duration worked out once."""
     dwell = bin_from(dwell_edges(silence_us, whole_days))
-    elapsed = bin_from(elapsed_edges(silence_us, whole_days, ()))
+    elapsed = bin_from(elapsed_edges(silence_us, whole_days, horizons_us))
     return cache(dwell), cache(elapsed)
 
 
 def slow_tally(log: RandomLog, memory: int = 1) -> SlowTally:
     """Return the slow reading of a log."""
-    dwell_bin, elapsed_bin = bins(log.slow["silence_us"], log.slow["whole_days"])
+    settings = dict(log.slow)
+    horizons_us = settings.pop("horizons_us", ())
+    dwell_bin, elapsed_bin = bins(settings["silence_us"], settings["whole_days"], horizons_us)
     return read_log(
-        log.rows, **log.slow, bucket_of=bucket_of, dwell_bin=dwell_bin, elapsed_bin=elapsed_bin, memory=memory
+        log.rows, **settings, bucket_of=bucket_of, dwell_bin=dwell_bin, elapsed_bin=elapsed_bin, memory=memory
     )
 
 
