@@ -225,3 +225,11 @@ def kept_as(kind: str, folder: Path) -> Path:
 @pytest.mark.parametrize("module", MODULES)
 def test_modules_are_short(module: str) -> None:
     assert len(MODULES[module].read_text(encoding="utf-8").splitlines()) <= 350
+
+
+def test_the_quick_part_has_every_stage() -> None:
+    tests = PACKAGE.parent / "tests"
+    paths = [tests.parent / line for line in (tests / "quick.txt").read_text(encoding="utf-8").split()]
+    assert [path for path in paths if not path.is_file()] == []
+    folders = {path.parent.name for path in paths}
+    assert [stage for stage in STAGES if (tests / stage).is_dir() and stage not in folders] == []

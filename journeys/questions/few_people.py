@@ -79,7 +79,7 @@ class FewPeople:
     def anything(self) -> bool:
         """Whether there is anything that a summary does not show."""
         sets = (self.outcomes, self.back, self.states, self.moves, self.stages, self.went, self.passed, self.credited)
-        groups = any(one.size or one.conversion for one in self.groups.values())
+        groups = any(one.size or one.within for one in self.groups.values())
         return self.log or self.conversion or self.starts or self.busy or groups or any(sets)
 
 

@@ -147,10 +147,9 @@ class SolvedTime:
             return [(np.inf, True, self.it.on_days(self.it.top))]
         parts: list[Part] = []
         for hi, is_last, scale in self.it.scales():
-            if parts and parts[-1][0] < least:
-                break
             parts.append((hi, is_last, scale))
-            if scale.cdf[int(hi / 10.0 / scale.dt), self._place] < _NOBODY:
+            # before the next one is asked for, which would be solved
+            if hi < least or scale.cdf[int(hi / 10.0 / scale.dt), self._place] < _NOBODY:
                 break
         return [*parts[:-1], (parts[-1][0], True, parts[-1][2])]
 

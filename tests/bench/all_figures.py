@@ -169,8 +169,8 @@ PARTS = (
              Sought(r"wall time: .*ratio ([\d.]+) to the same tally",
                     "fits and outcomes of 200 groups: time against one fit and its outcomes", "≤", 5.0))),
     Part("report", 1, "bench_report.py", "--repeats 5", "--repeats 1", reported),
-    Part("coverage", 240, "study_coverage.py", "--logs 2000 --customers 1000 --jobs 2 --lengths 2",
-         "--logs 2 --customers 150 --jobs 1 --lengths 2 --bootstrap 0 --truth-customers 1000", coverage),
+    Part("coverage", 240, "study_coverage.py", "--logs 2000 --customers 1000 --jobs 2 --lengths 3",
+         "--logs 2 --customers 150 --jobs 1 --lengths 3 --bootstrap 0 --truth-customers 1000", coverage),
     Part("reference", 3, "", _REFERENCES, "pytest -q -p no:cacheprovider tests/kernels/test_agreement.py", passed),
 )  # fmt: skip
 

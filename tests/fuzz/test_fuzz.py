@@ -28,7 +28,7 @@ from run_fuzz import KEPT, Tries  # noqa: E402
 from targets import TARGETS, WORDS  # noqa: E402
 
 BRIEF = settings(
-    max_examples=40, deadline=None, derandomize=True, database=None,
+    max_examples=30, deadline=None, derandomize=True, database=None,
     suppress_health_check=[HealthCheck.too_slow, HealthCheck.function_scoped_fixture],
 )  # fmt: skip
 
@@ -55,7 +55,7 @@ def test_sound_input_is_read(name: str, tries: dict[str, Tries]) -> None:
 
 @pytest.mark.parametrize("name", TARGETS)
 def test_damaged_input_is_read_rightly_or_refused(name: str, tries: dict[str, Tries]) -> None:
-    for number in range(30):
+    for number in range(20):
         tries[name].one(mutated(tries[name].seeds, np.random.default_rng([99, number])))
     assert tries[name].counts["refused"]
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import logging
+from dataclasses import replace
 from functools import cache
 from pathlib import Path
 
@@ -114,10 +115,22 @@ def test_some_is_left_out_and_the_pages_say_so() -> None:
         assert "nan" not in summary_text(overview).lower()
 
 
-def test_nothing_is_left_out_of_the_demo_log_nor_where_that_is_asked_for() -> None:
-    few = club_overview().few
-    assert few is not None
-    assert not few.anything
+def test_of_the_demo_log_only_shares_of_a_cohort_of_few_seen_starts_are_left_out() -> None:
+    """The log begins in September, so that the start of hardly any journey of that month was seen."""
+    overview = club_overview()
+    frame = overview.to_frame()
+    hidden = frame[frame.flag.map(is_hidden)]
+    assert hidden.groupby(["section", "cohort"]).horizon.apply(list).to_dict() == {
+        ("by cohort", "2024-09"): ["14d", "30d", "90d"]
+    }
+    assert (hidden.basis == "log").all()
+    assert hidden[["estimate", "low", "high"]].isna().all(axis=None)
+    assert overview.few is not None
+    assert replace(overview.few, groups={}).anything is False
+    assert f"numbers about fewer than {LEAST} people" in summary_markdown(overview)
+
+
+def test_nothing_is_left_out_where_that_is_asked_for() -> None:
     frame = overview_of(small_log(12)).to_frame()
     assert not frame.flag.map(is_hidden).any()
 
