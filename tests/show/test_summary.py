@@ -202,6 +202,7 @@ def test_nothing_is_explained_that_does_not_occur() -> None:
         "- The log is 8.0 silences of 30 days long.",
         f"- The start of {100 * club_overview().plain.n_sure / club_overview().plain.n_journeys:.1f} % of the "
         "journeys was seen.",
+        "- – stands for numbers about fewer than 10 people, and for others beside them that would tell what they are.",
         "- log and model differ: the chain does not bear out what the journeys show: trust the log's share, and not "
         "the model's effect.",
     ]
