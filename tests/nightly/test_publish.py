@@ -170,13 +170,13 @@ def test_then_and_now_tell_nothing_of_few_people(kept: Job, root: Path, capsys: 
 @pytest.mark.parametrize(
     ("change", "kept_back"),
     [
-        ((40, 60, 30, 20), set()), ((3, 60, 30, 20), {"people"}), ((0, 60, 30, -5), set()),
-        ((40, 60, 4, 20), {"converted so far"}), ((40, 60, 36, 20), {"converted so far"}),
-        ((40, 60, 5, 55), {"converted so far", "undecided yet"}), ((40, 9, 0, -40), {"journeys", "undecided yet"}),
+        ((40, 60, 30, 20), []), ((3, 60, 30, 20), ["people"]), ((0, 60, 30, -5), []),
+        ((40, 60, 4, 20), ["converted so far"]), ((40, 60, 36, 20), ["converted so far"]),
+        ((40, 60, 5, 55), ["converted so far", "undecided yet"]), ((40, 9, 0, -40), ["journeys", "undecided yet"]),
     ],
     ids=str,
 )  # fmt: skip
-def test_then_is_not_told_where_the_difference_is_of_few_people(change: tuple[int, ...], kept_back: set[str]):
+def test_then_is_not_told_where_the_difference_is_of_few_people(change: tuple[int, ...], kept_back: list[str]):
     """Changes of people, journeys, conversions and those undecided: neither these nor what they leave are few."""
     was = (300, 500, 200, 120)
     then, now = (
@@ -186,7 +186,7 @@ def test_then_is_not_told_where_the_difference_is_of_few_people(change: tuple[in
     )  # fmt: skip
     lines = _lines(then, now, 10).set_index("line")
     hidden = lines[lines.flag != ""]
-    assert set(hidden.index) == kept_back
+    assert sorted(hidden.index) == kept_back
     assert hidden[["then", "difference"]].isna().all(axis=None)
     assert lines.now.notna().all()
     assert lines.then[~lines.index.isin(kept_back)].notna().all()
