@@ -29,6 +29,11 @@ def club_fit() -> jn.JourneyFit:
     return jn.JourneyModel().fit(club_tally())
 
 
+def club_states() -> tuple[str, ...]:
+    """Return all states of the demo log, more than its rules name as touchpoints."""
+    return tuple(club_tally().states)
+
+
 @cache
 def club_overview() -> Overview:
     """Return the summary of the demo log."""

@@ -7,7 +7,7 @@ from dataclasses import replace
 import numpy as np
 import pandas as pd
 import pytest
-from club_log import club_fit
+from club_log import club_fit, club_states
 from scipy import stats
 from small_chains import one
 
@@ -149,9 +149,9 @@ def test_every_question_has_intervals() -> None:
         fit.moves(),
         jn.first_passage(fit, method="linearised"),
         jn.return_time(fit, method="linearised"),
-        jn.removal(fit),
-        jn.removal(fit, how="divert"),
-        jn.credit(fit, basis="model"),
+        jn.removal(fit, touchpoints=club_states()),
+        jn.removal(fit, how="divert", touchpoints=club_states()),
+        jn.credit(fit, basis="model", touchpoints=club_states()),
         jn.sensitivity(fit),
     ):
         frame = result.to_frame()

@@ -96,7 +96,7 @@ def touched() -> Overview:
 def test_the_sections_are_those_of_the_markdown_page(club_page: Page) -> None:
     titles = re.findall(r"^## (.*)$", summary_markdown(club_overview()), flags=re.MULTILINE)
     assert club_page.headings == titles
-    assert len(titles) == 16
+    assert len(titles) == 17
     links = [one["href"] for one in of("a", club_page)]
     ids = {one["id"] for _, one in club_page.elements if "id" in one}
     assert {link.removeprefix("#") for link in links if link} <= ids
