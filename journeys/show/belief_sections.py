@@ -9,7 +9,7 @@ from journeys.questions.overview import Overview
 from journeys.show.parts import Lines, Part, Section, Table
 from journeys.show.rows import left_out_words, parts_of, rows_of, tally_of
 from journeys.show.state_sections import FROM_STATE, WIDEST_MATRIX
-from journeys.show.words import FLAG_MEANINGS, length_words, percent
+from journeys.show.words import FLAG_MEANINGS, chance, length_words, percent
 
 # More journeys than this begun after an outcome, and readers should know.
 OFTEN_AGAIN = 0.05
@@ -59,7 +59,7 @@ def _checks(overview: Overview) -> list[Part]:
     rows = []
     for row in rows_of(overview.checks.to_frame()):
         name = f"{row['check_name']} ({short_name(row['about'])})" if row["about"] else str(row["check_name"])
-        p_value = "" if math.isnan(row["p_value_corrected"]) else f"{row['p_value_corrected']:.2g}"
+        p_value = chance(row["p_value_corrected"])
         rows.append((name, str(row["verdict"]), str(row["compared"]), p_value, str(row["advice"])))
     columns = ["check", "verdict", "compared", "p, corrected", "what to do"]
     return [Table("Checks of the model", columns, rows, ours=("what to do",))]

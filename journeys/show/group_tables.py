@@ -13,7 +13,7 @@ from journeys.questions.time_to_convert import IN_THE_END, SO_FAR
 from journeys.show.conversion_sections import share_dot
 from journeys.show.parts import Dot, Dots, Part, Section, Table, Words
 from journeys.show.rows import Row, amount, notes_of, points, rows_of, share, tally_of
-from journeys.show.words import length_words
+from journeys.show.words import chance, length_words
 from journeys.tally.tally import Tally
 
 if TYPE_CHECKING:
@@ -135,7 +135,7 @@ def _group_parts(overview: Overview, column: str) -> list[Part]:
         cells += [_cell(mine, "converted", horizon, "log") for horizon in horizons]
         cells += [_cell(mine, "converted", IN_THE_END, "model"), _cell(mine, "median_days", IN_THE_END, "model")]
         other = differs.get(value)
-        cells += ["", ""] if other is None else [points(other), _p_value(other)]
+        cells += ["", ""] if other is None else [points(other), chance(other["p_value_corrected"])]
         cells.append(_notes(mine))
         rows.append(cells)
         dots.append(_dot(name, mine))
@@ -162,11 +162,6 @@ def _dot(name: str, rows: list[Row]) -> Dot:
 
 def _notes(rows: list[Row]) -> str:
     return notes_of(*(str(row["flag"]) for row in rows))
-
-
-def _p_value(row: Row) -> str:
-    p_value = row["p_value_corrected"]
-    return "" if math.isnan(p_value) else f"{p_value:.2g}"
 
 
 def _cell(rows: list[Row], measure: str, horizon: str, basis: str) -> str:

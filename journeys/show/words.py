@@ -41,6 +41,13 @@ FLAG_MEANINGS = {
 }
 
 
+def chance(p_value: float) -> str:
+    """Return a p-value in two figures, blank where there is none; below a thousandth nobody needs more."""
+    if math.isnan(p_value):
+        return ""
+    return "under 0.001" if p_value < 0.001 else f"{p_value:.2g}"
+
+
 def percent(share: float) -> str:
     """Return a share in percent: one digit after the point, more where it is tiny.
 

@@ -9,6 +9,7 @@ import pytest
 from journeys.intake.rules import JourneyRules
 from journeys.show.words import (
     amount_with_interval,
+    chance,
     length_words,
     listed,
     outcome_words,
@@ -102,3 +103,8 @@ def test_listed(names: tuple[str, ...], words: str) -> None:
 def test_outcome_words(silence: str | None, outcome: str, words: str) -> None:
     rules = JourneyRules("who", "when", "what", converted="joined", churned="declined", silence=silence)
     assert outcome_words(outcome, rules) == words
+
+
+@pytest.mark.parametrize(("p_value", "said"), [(0.41, "0.41"), (0.0012, "0.0012"), (3e-20, "under 0.001"), (NAN, "")])
+def test_chance(p_value: float, said: str) -> None:
+    assert chance(p_value) == said

@@ -31,6 +31,11 @@ nav li, ul li { margin: 0.25rem 0; }
 ul { padding-left: 1.25rem; }
 .box { overflow-x: auto; margin: 1rem 0; }
 @media (min-width: 50rem) { .box { width: max-content; max-width: calc(100% + (100vw - 50rem) / 2); } }
+@media screen and (min-width: 62rem) {
+  :root { --left: max(1rem, (100vw - 72rem) / 2); }
+  header, main, nav { margin-left: var(--left); }
+  .box { max-width: calc(100vw - var(--left) - 3rem); }
+}
 table { border-collapse: collapse; font-size: 0.9375rem; line-height: 1.4; overflow-wrap: break-word;
   font-variant-numeric: lining-nums tabular-nums; }
 caption, figcaption { text-align: left; font-size: 0.9375rem; font-style: italic; padding-bottom: 0.35rem; }
