@@ -255,8 +255,9 @@ def test_checks_stand_on_the_page_as_in_the_frame(club_page: Page) -> None:
     _, *rows = club_page.tables["Checks of the model"]
     assert [row[1] for row in rows] == frame["verdict"].tolist()
     assert [row[2] for row in rows] == frame["compared"].tolist()
-    p_values = ["" if np.isnan(p) else f"{p:.2g}" for p in frame["p_value_corrected"]]
-    assert [row[3] for row in rows] == p_values
+    p_values = frame["p_value_corrected"]
+    told = p_values.map("{:.2g}".format).mask(p_values < 0.001, "under 0.001").mask(p_values.isna(), "")
+    assert [row[3] for row in rows] == told.tolist()
     about = [f" ({one})" if one else "" for one in frame["about"]]
     assert [row[0] for row in rows] == (frame["check_name"] + about).tolist()
 
